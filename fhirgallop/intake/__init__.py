@@ -1,0 +1,1 @@
+"""What the EHR sent, in whatever form, as a LocalRecord: fields with their position, nothing interpreted."""
