@@ -1,0 +1,140 @@
+"""What contradicts itself inside one examination, before anything is coded."""
+
+from __future__ import annotations
+
+from collections.abc import Callable, Iterator
+from typing import Final
+
+from fhirgallop.exam.catalogue import Catalogue
+from fhirgallop.exam.entry import Entry
+from fhirgallop.exam.exam import Exam
+from fhirgallop.exam.presence import Presence
+from fhirgallop.outcome import Issue, Severity
+
+
+def check(exam: Exam, catalogue: Catalogue) -> list[Issue]:
+    """Every contradiction and implausible value inside `exam`; nothing is changed."""
+    return [issue for clause in CLAUSES for issue in clause(exam, catalogue)]
+
+
+def _issue(severity: Severity, rule: str, text: str, *entries: Entry, code: str = "business-rule") -> Issue:
+    fields = dict.fromkeys(field for entry in entries for field in entry.fields)
+    return Issue(severity, code, rule, text, field=", ".join(fields))
+
+
+def present_and_absent(exam: Exam, catalogue: Catalogue) -> Iterator[Issue]:
+    """One finding, same instance, entered as present and as absent."""
+    first: dict[tuple[str, str], Entry] = {}
+    for entry in exam.entries:
+        if entry.withdrawn:
+            continue
+        other = first.setdefault(entry.key, entry)
+        if other is entry:
+            continue
+        label = catalogue.findings[entry.finding].label
+        if other.presence != entry.presence:
+            text = f"{label} is entered as {other.presence} and as {entry.presence}; keep the one that is true."
+            yield _issue("error", "exam-present-and-absent", text, other, entry)
+        elif other.answers != entry.answers or other.measure != entry.measure:
+            text = f"{label} is entered twice with different values; keep one, or map them as two instances."
+            yield _issue("error", "exam-entered-twice", text, other, entry)
+
+
+def kind_present_parent_absent(exam: Exam, catalogue: Catalogue) -> Iterator[Issue]:
+    """A systolic murmur present while 'murmur' as such is absent."""
+    absent = {entry.finding: entry for entry in exam.entries if entry.presence is Presence.ABSENT}
+    for entry in exam.entries:
+        definition = catalogue.findings[entry.finding]
+        whole = absent.get(definition.parent)
+        if whole and entry.presence is Presence.PRESENT and definition.kind == "sign":
+            text = (
+                f"{definition.label} is present, but {catalogue.findings[whole.finding].label} as a whole is "
+                "absent; one of the two needs another look."
+            )
+            yield _issue("error", "exam-kind-present-whole-absent", text, whole, entry)
+
+
+def qualified_but_not_present(exam: Exam, catalogue: Catalogue) -> Iterator[Issue]:
+    """A grade, a site or a quality on a finding that was not heard."""
+    for entry in exam.entries:
+        if entry.presence is Presence.ABSENT:
+            describing = sorted(
+                {q.axis for q in entry.qualifiers if q.axis not in _ALSO_OF_ABSENT}
+                | ({"number"} if entry.measure else set())
+            )
+            if describing:
+                label = catalogue.findings[entry.finding].label
+                text = (
+                    f"{label} is absent but described ({', '.join(describing)}); clear the description or the "
+                    "absence."
+                )
+                yield _issue("error", "exam-absent-but-described", text, entry)
+
+
+def grade_out_of_range(exam: Exam, catalogue: Catalogue) -> Iterator[Issue]:
+    """Grade 7 of 6."""
+    for entry in exam.entries:
+        for qualifier in entry.qualifiers:
+            grade = qualifier.grade
+            if grade and not 1 <= grade.low <= grade.high <= grade.of:
+                label = catalogue.findings[entry.finding].label
+                text = f"{label}: a grade must lie between 1 and {grade.of}, low before high; correct the grade."
+                yield _issue("error", "exam-grade-range", text, entry, code="value")
+
+
+def qualifier_does_not_fit(exam: Exam, catalogue: Catalogue) -> Iterator[Issue]:
+    """A qualifier on a finding that it cannot describe."""
+    for entry in exam.entries:
+        definition = catalogue.findings[entry.finding]
+        for axis in sorted({q.axis for q in entry.qualifiers} - definition.qualifiers):
+            text = f"{definition.label} has no {axis}; map that field to another finding."
+            yield _issue("error", "exam-qualifier-does-not-fit", text, entry)
+
+
+def diastolic_above_systolic(exam: Exam, catalogue: Catalogue) -> Iterator[Issue]:
+    """A diastolic pressure that is not below its systolic one."""
+    systolic = {e.instance: e for e in exam.entries if e.finding == "pressure.systolic" and e.measure}
+    for entry in exam.entries:
+        pair = systolic.get(entry.instance)
+        if entry.finding != "pressure.diastolic" or entry.measure is None or pair is None:
+            continue
+        if pair.measure is not None and entry.measure.value >= pair.measure.value:
+            text = "The diastolic pressure is not below the systolic one; the two may have changed places."
+            yield _issue("error", "exam-diastolic-above-systolic", text, pair, entry, code="value")
+
+
+def implausible_value(exam: Exam, catalogue: Catalogue) -> Iterator[Issue]:
+    """A number outside what is plausible: flagged, and kept as it was entered."""
+    for entry in exam.entries:
+        definition, measure = catalogue.findings[entry.finding], entry.measure
+        if measure is None:
+            continue
+        lowest, highest = measure.value, measure.high if measure.high is not None else measure.value
+        if lowest > highest:
+            yield _issue(
+                "error", "exam-range-reversed", f"{definition.label}: the range ends below its start.", entry
+            )
+        elif (definition.low is not None and lowest < definition.low) or (
+            definition.high is not None and highest > definition.high
+        ):
+            text = (
+                f"{definition.label} lies outside {definition.low} to {definition.high} {definition.unit}; it is "
+                "kept as entered. Check the number and its unit."
+            )
+            yield _issue("warning", "exam-implausible-value", text, entry, code="value")
+
+
+CLAUSES: Final[tuple[Callable[[Exam, Catalogue], Iterator[Issue]], ...]] = (
+    present_and_absent,
+    kind_present_parent_absent,
+    qualified_but_not_present,
+    grade_out_of_range,
+    qualifier_does_not_fit,
+    diastolic_above_systolic,
+    implausible_value,
+)
+
+# Where and how one looked is true of an absent finding too; how it sounded is not.
+_ALSO_OF_ABSENT: Final = frozenset(
+    {"site", "side", "posture", "respiratory-phase", "method", "chamber", "exertion", "cuff-size"}
+)
