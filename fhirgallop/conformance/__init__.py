@@ -1,0 +1,1 @@
+"""Conformance: a judge for FHIR resources by the base specification and profiles."""
