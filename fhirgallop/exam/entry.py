@@ -61,6 +61,7 @@ class Entry:
         withdrawn: the sender took this entry back (it becomes entered-in-error).
         time: the entry's own moment (FHIR dateTime), empty for the examination's.
         fields: names of the local fields it was read from.
+        said: the local wording that was chosen, where the map names a local code system.
     """
 
     finding: str
@@ -75,6 +76,7 @@ class Entry:
     withdrawn: bool = False
     time: str = ""
     fields: tuple[str, ...] = ()
+    said: str = ""
 
     @property
     def key(self) -> tuple[str, str]:

@@ -37,6 +37,7 @@ class Exam:
             ids of all resources, so that the same examination sent twice is the same resources.
         time: when it took place.
         entries: what was said, in the order of the map.
+        local_system: code system of the local field names and wordings, to be kept as codings; else empty.
     """
 
     patient: Party
@@ -49,3 +50,4 @@ class Exam:
     examiner: Party | None = None
     notes: tuple[str, ...] = ()
     map: MapVersion | None = None
+    local_system: str = ""
