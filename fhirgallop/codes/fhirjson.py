@@ -30,7 +30,7 @@ def pretty(value: Any) -> bytes:
     return msgspec.json.format(_encode(value), indent=2)
 
 
-class _Fault(ValueError):
+class _FaultError(ValueError):
     """Carries one issue out of the parser's call-backs."""
 
     def __init__(self, issue: Issue) -> None:
@@ -47,7 +47,7 @@ def read(text: bytes | str, *, max_bytes: int = MAX_BYTES, source: str = "") -> 
     issues: list[Issue] = []
     try:
         return _parse(_decoded(text, max_bytes, issues)), issues
-    except _Fault as fault:
+    except _FaultError as fault:
         issues.append(fault.issue)
     except json.JSONDecodeError as error:
         issues.append(
@@ -56,7 +56,9 @@ def read(text: bytes | str, *, max_bytes: int = MAX_BYTES, source: str = "") -> 
         )  # fmt: skip
     except RecursionError:
         issues.append(
-            Issue("fatal", "too-long", "json-too-deep", "Arrays and objects are nested too deep; flatten them.")
+            Issue(
+                "fatal", "too-long", "json-too-deep", "Arrays and objects are nested too deep; flatten them."
+            )
         )
     if source:
         issues = [_at(issue, source) for issue in issues]
@@ -66,7 +68,7 @@ def read(text: bytes | str, *, max_bytes: int = MAX_BYTES, source: str = "") -> 
 def _decoded(text: bytes | str, max_bytes: int, issues: list[Issue]) -> str:
     if len(text) > max_bytes:
         message = f"The text is larger than {max_bytes:,} bytes; send it in smaller parts."
-        raise _Fault(Issue("fatal", "too-long", "json-too-large", message))
+        raise _FaultError(Issue("fatal", "too-long", "json-too-large", message))
     if isinstance(text, str):
         return text.removeprefix("\ufeff")
     if text.startswith(_BOM):
@@ -78,7 +80,7 @@ def _decoded(text: bytes | str, max_bytes: int, issues: list[Issue]) -> str:
     except UnicodeDecodeError as error:
         message = "The text is not UTF-8; save or send it as UTF-8."
         line = text.count(b"\n", 0, error.start) + 1
-        raise _Fault(Issue("fatal", "structure", "json-not-utf8", message, line=line)) from None
+        raise _FaultError(Issue("fatal", "structure", "json-not-utf8", message, line=line)) from None
 
 
 def _parse(text: str) -> Any:
@@ -89,7 +91,7 @@ def _parse(text: str) -> Any:
             write(value)
         except UnicodeEncodeError:
             message = "A \\u escape names half a character (a lone surrogate); send whole characters."
-            raise _Fault(Issue("fatal", "structure", "json-lone-surrogate", message)) from None
+            raise _FaultError(Issue("fatal", "structure", "json-lone-surrogate", message)) from None
     return value
 
 
@@ -99,13 +101,13 @@ def _object(pairs: list[tuple[str, Any]]) -> dict[str, Any]:
         names = [name for name, _ in pairs]
         twice = next(name for name in names if names.count(name) > 1)
         message = f"The name {twice[:64]!r} occurs twice in one object; keep one of them."
-        raise _Fault(Issue("fatal", "structure", "json-duplicate-key", message, field=twice[:64]))
+        raise _FaultError(Issue("fatal", "structure", "json-duplicate-key", message, field=twice[:64]))
     return found
 
 
 def _constant(name: str) -> Any:
     message = f"{name} is not a JSON number; leave the member out instead."
-    raise _Fault(Issue("fatal", "structure", "json-not-a-number", message))
+    raise _FaultError(Issue("fatal", "structure", "json-not-a-number", message))
 
 
 def _whole(digits: str) -> int:
@@ -121,7 +123,7 @@ def _fraction(digits: str) -> Decimal:
 def _measured(digits: str) -> None:
     if len(digits) > MAX_DIGITS:
         message = f"A number has more than {MAX_DIGITS} characters; send it with fewer digits."
-        raise _Fault(Issue("fatal", "too-long", "json-number-too-long", message))
+        raise _FaultError(Issue("fatal", "too-long", "json-number-too-long", message))
 
 
 _DECODER: Final = json.JSONDecoder(

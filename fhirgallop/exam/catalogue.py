@@ -183,4 +183,6 @@ def _axes() -> dict[str, Axis]:
             heads[axis] = (row["label"], codings)
     if missing := values.keys() - heads.keys():
         raise AssetError(f"qualifiers.csv: no row describes the axis {sorted(missing)[0]} itself")
-    return {axis: Axis(axis, label, codings, values.get(axis, {})) for axis, (label, codings) in heads.items()}
+    return {
+        axis: Axis(axis, label, codings, values.get(axis, {})) for axis, (label, codings) in heads.items()
+    }

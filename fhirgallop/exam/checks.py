@@ -33,7 +33,9 @@ def present_and_absent(exam: Exam, catalogue: Catalogue) -> Iterator[Issue]:
             continue
         label = catalogue.findings[entry.finding].label
         if other.presence != entry.presence:
-            text = f"{label} is entered as {other.presence} and as {entry.presence}; keep the one that is true."
+            text = (
+                f"{label} is entered as {other.presence} and as {entry.presence}; keep the one that is true."
+            )
             yield _issue("error", "exam-present-and-absent", text, other, entry)
         elif other.answers != entry.answers or other.measure != entry.measure:
             text = f"{label} is entered twice with different values; keep one, or map them as two instances."
@@ -65,8 +67,8 @@ def qualified_but_not_present(exam: Exam, catalogue: Catalogue) -> Iterator[Issu
             if describing:
                 label = catalogue.findings[entry.finding].label
                 text = (
-                    f"{label} is absent but described ({', '.join(describing)}); clear the description or the "
-                    "absence."
+                    f"{label} is absent but described ({', '.join(describing)}); clear the "
+                    "description or the absence."
                 )
                 yield _issue("error", "exam-absent-but-described", text, entry)
 
@@ -78,7 +80,9 @@ def grade_out_of_range(exam: Exam, catalogue: Catalogue) -> Iterator[Issue]:
             grade = qualifier.grade
             if grade and not 1 <= grade.low <= grade.high <= grade.of:
                 label = catalogue.findings[entry.finding].label
-                text = f"{label}: a grade must lie between 1 and {grade.of}, low before high; correct the grade."
+                text = (
+                    f"{label}: a grade must lie between 1 and {grade.of}, low before high; correct the grade."
+                )
                 yield _issue("error", "exam-grade-range", text, entry, code="value")
 
 
@@ -91,7 +95,7 @@ def qualifier_does_not_fit(exam: Exam, catalogue: Catalogue) -> Iterator[Issue]:
             yield _issue("error", "exam-qualifier-does-not-fit", text, entry)
 
 
-def diastolic_above_systolic(exam: Exam, catalogue: Catalogue) -> Iterator[Issue]:
+def diastolic_above_systolic(exam: Exam, _catalogue: Catalogue) -> Iterator[Issue]:
     """A diastolic pressure that is not below its systolic one."""
     systolic = {e.instance: e for e in exam.entries if e.finding == "pressure.systolic" and e.measure}
     for entry in exam.entries:
@@ -118,8 +122,8 @@ def implausible_value(exam: Exam, catalogue: Catalogue) -> Iterator[Issue]:
             definition.high is not None and highest > definition.high
         ):
             text = (
-                f"{definition.label} lies outside {definition.low} to {definition.high} {definition.unit}; it is "
-                "kept as entered. Check the number and its unit."
+                f"{definition.label} lies outside {definition.low} to {definition.high} {definition.unit}; it "
+                "is kept as entered. Check the number and its unit."
             )
             yield _issue("warning", "exam-implausible-value", text, entry, code="value")
 

@@ -33,8 +33,8 @@ class Exam:
     """One examination.
 
     Attributes:
-        identifier: the sender's number of it, unique within `identifier_system`; with the patient it makes the
-            ids of all resources, so that the same examination sent twice is the same resources.
+        identifier: the sender's number of it, unique within `identifier_system`; with the patient it makes
+            the ids of all resources, so that the same examination sent twice is the same resources.
         time: when it took place.
         entries: what was said, in the order of the map.
         local_system: code system of the local field names and wordings, to be kept as codings; else empty.

@@ -1,0 +1,1 @@
+"""An Exam as coded FHIR: Observations, panel, DiagnosticReport, Provenance, in a transaction Bundle."""

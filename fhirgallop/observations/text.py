@@ -1,0 +1,35 @@
+"""Words of a record made fit for FHIR strings and for XHTML.
+
+Sources: FHIR R4 data types (string, code, markdown) and "Narrative".
+"""
+
+from __future__ import annotations
+
+import re
+from typing import Final
+
+_CONTROL: Final = re.compile("[\x00-\x08\x0b\x0c\x0e-\x1f\x7f-\x9f\ud800-\udfff\ufffe\uffff]")
+_BLANKS: Final = re.compile(r"\s+")
+_MARKUP: Final = str.maketrans({"&": "&amp;", "<": "&lt;", ">": "&gt;", '"': "&quot;"})
+_DIV: Final = '<div xmlns="http://www.w3.org/1999/xhtml">'
+
+
+def plain(text: str) -> str:
+    """`text` without control characters and blank ends: a FHIR string, or empty."""
+    return _CONTROL.sub("", text).strip()
+
+
+def code(text: str) -> str:
+    """`text` as a FHIR code: single spaces inside, none around."""
+    return _BLANKS.sub(" ", plain(text)).strip()
+
+
+def escaped(text: str) -> str:
+    """`text` for the inside of an XHTML element or attribute."""
+    return text.translate(_MARKUP)
+
+
+def narrative(*paragraphs: str) -> dict[str, str]:
+    """FHIR Narrative of paragraphs that are already escaped."""
+    body = "".join(f"<p>{paragraph}</p>" for paragraph in paragraphs)
+    return {"status": "generated", "div": f"{_DIV}{body}</div>"}
