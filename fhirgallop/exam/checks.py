@@ -122,8 +122,8 @@ def implausible_value(exam: Exam, catalogue: Catalogue) -> Iterator[Issue]:
             definition.high is not None and highest > definition.high
         ):
             text = (
-                f"{definition.label} lies outside {definition.low} to {definition.high} {definition.unit}; it "
-                "is kept as entered. Check the number and its unit."
+                f"{definition.label} lies outside {definition.low} to {definition.high} {definition.unit}; "
+                "it is kept as entered. Check the number and its unit."
             )
             yield _issue("warning", "exam-implausible-value", text, entry, code="value")
 

@@ -4,12 +4,12 @@ from __future__ import annotations
 
 from typing import Any, Final
 
-from fhirgallop import __version__
 from fhirgallop.codes import systems
 from fhirgallop.exam.exam import Exam
 from fhirgallop.observations import text
 from fhirgallop.observations.build import Shared
 from fhirgallop.observations.editions import EditionTraits
+from fhirgallop.version import VERSION
 
 CONVERSION_TAG: Final = systems.BASE + "/CodeSystem/conversion"
 TEMPLATE_MAP: Final = systems.BASE + "/template-map"
@@ -57,7 +57,7 @@ def provenance(
             "profile": [systems.profile("exam-provenance")],
             "tag": [{"system": CONVERSION_TAG, "code": tag.removeprefix("urn:uuid:")}],
         },
-        "text": text.narrative(f"Coded by fhirgallop {text.escaped(__version__)} from the sender's record."),
+        "text": text.narrative(f"Coded by fhirgallop {text.escaped(VERSION)} from the sender's record."),
         "target": [{"reference": target} for target in targets],
     }
     if traits.provenance_names_patient:
@@ -67,7 +67,7 @@ def provenance(
     found["recorded"] = shared.issued
     found["agent"] = [
         {"type": _agent("author", "Author"), "who": shared.performer[0]},
-        {"type": _agent("assembler", "Assembler"), "who": {"display": f"fhirgallop {__version__}"}},
+        {"type": _agent("assembler", "Assembler"), "who": {"display": f"fhirgallop {VERSION}"}},
     ]
     found["entity"] = entities
     return found

@@ -1,0 +1,3 @@
+"""The version of fhirgallop, written once."""
+
+VERSION = "0.1.0"
