@@ -98,20 +98,26 @@ class Temporal:
         return (moved.year, moved.month, moved.day, minutes // 60, minutes % 60, *self.parts[_MINUTE_PARTS:])
 
     def boundary(self, *, high: bool) -> Temporal:
-        """The earliest or latest moment it may stand for (FHIRPath v3.0.0, section "Boundary functions").
+        """The earliest or latest moment it may stand for.
 
-        A dateTime without zone is taken at the zone that makes it earliest (+14:00) or latest (-12:00).
+        Source: FHIRPath v3.0.0, sections "lowBoundary" and "highBoundary". A time of day without zone is taken
+        at the zone that makes it earliest (+14:00) or latest (-12:00); a mere day keeps none, so that two days
+        are compared as days.
         """
+        edge: tuple[Part, ...] = (23, 59, Decimal("59.999")) if high else (0, 0, Decimal("0.000"))
         if self.kind == "time":
-            return Temporal("time", _filled(self.parts, (23, 59, Decimal("59.999")), (0, 0, Decimal(0)), high=high))
-        parts = list(_filled(self.parts[:_DAY_PARTS], (9999, 12, 31), (1, 1, 1), high=high))
-        if high and len(self.parts) < _DAY_PARTS:
-            parts[2] = _last_day(int(parts[0]), int(parts[1]))
+            return Temporal("time", _filled(self.parts, edge, high=high))
+        days = self.parts[:_DAY_PARTS]
+        parts = (*days, *((12, 31) if high else (1, 1))[len(days) - 1 :])
+        if high and len(days) < _DAY_PARTS:
+            parts = (*parts[:2], _last_day(int(parts[0]), int(parts[1])))
         if self.kind == "date":
-            return Temporal("date", tuple(parts))
-        clock = _filled(self.parts[_DAY_PARTS:], (23, 59, Decimal("59.999")), (0, 0, Decimal(0)), high=high)
-        zone = self.zone if self.zone is not None else (-12 * 60 if high else 14 * 60)
-        return Temporal("dateTime", (*parts, *clock), zone)
+            return Temporal("date", parts)
+        clock = self.parts[_DAY_PARTS:]
+        zone = self.zone
+        if clock and zone is None:
+            zone = -12 * 60 if high else 14 * 60
+        return Temporal("dateTime", (*parts, *_filled(clock, edge, high=high)), zone)
 
     def __str__(self) -> str:
         widths = (2, 2, 2) if self.kind == "time" else (4, 2, 2, 2, 2, 2)
@@ -135,12 +141,15 @@ def _shown(part: Part, width: int) -> str:
     return whole + dot + fraction
 
 
-def _filled(parts: tuple[Part, ...], top: tuple[Part, ...], bottom: tuple[Part, ...], *, high: bool) -> tuple[Part, ...]:
-    edge = top if high else bottom
+def _filled(parts: tuple[Part, ...], edge: tuple[Part, ...], *, high: bool) -> tuple[Part, ...]:
+    """A time of day to the millisecond: what is missing is taken from the edge."""
     filled = (*parts, *edge[len(parts) :])
-    if high and len(parts) == len(top) and isinstance(parts[-1], Decimal) and parts[-1] == int(parts[-1]):
-        return (*parts[:-1], parts[-1] + Decimal("0.999"))  # whole seconds stand for the whole second
-    return filled
+    second = Decimal(filled[-1])
+    digits = -int(second.as_tuple().exponent)
+    if digits < 3:
+        step = Decimal("0.999") if digits == 0 else Decimal(10) ** -digits - Decimal("0.001")
+        second = second.quantize(Decimal("0.001")) + (step if high else 0)
+    return (*filled[:-1], second)
 
 
 def _zone(text: str | None) -> int | None:
