@@ -37,6 +37,8 @@ FUNCTIONS: Mapping[str, Function] = {
     **fhir.FUNCTIONS,
 }
 _TYPE_FUNCTIONS = ("is", "as", "ofType")
+# these ask whether an element is there; a primitive that has only an extension is
+_PRESENCE_FUNCTIONS = ("exists", "empty", "count", "hasValue")
 _CONSTANTS = {
     "ucum": "http://unitsofmeasure.org",
     "sct": "http://snomed.info/sct",
@@ -209,7 +211,8 @@ def _variable(name: str) -> Code:
     return unknown
 
 
-def _member(base: Tree | None, name: str) -> Code:
+def _member(base: Tree | None, name: str, *, reads_value: bool = True) -> Code:
+    """The parts of that name; `reads_value` is False where only their presence is asked for."""
     if base is None:
         may_be_type = name[:1].isupper()
 
@@ -217,14 +220,14 @@ def _member(base: Tree | None, name: str) -> Code:
             model = frame.run.model
             if may_be_type and focus and isinstance(focus[0], Item) and model.is_a(focus[0].type_name, name):
                 return focus  # `Patient.name` at a Patient
-            return _members(focus, name, frame.run)
+            return _members(focus, name, frame.run, reads_value)
 
         return start
     source = compile_tree(base)
-    return lambda focus, frame: _members(source(focus, frame), name, frame.run)
+    return lambda focus, frame: _members(source(focus, frame), name, frame.run, reads_value)
 
 
-def _members(items: Collection, name: str, run: Run) -> Collection:
+def _members(items: Collection, name: str, run: Run, reads_value: bool) -> Collection:
     found: Collection = []
     model = run.model
     for item in items:
@@ -233,6 +236,8 @@ def _members(items: Collection, name: str, run: Run) -> Collection:
                 raise CannotJudge("the rule looks into the target of a reference that is not at hand")
             if not member(item, name, model, found):
                 run.incomplete = True
+    if reads_value and not run.incomplete:
+        run.incomplete = any(item.value is None for item in found)
     return found
 
 
@@ -294,7 +299,10 @@ def _type_test(operator: str, operand: Code, name: str) -> Code:
 
 
 def _call(tree: Call) -> Code:
-    base: Code = _focus if tree.base is None else compile_tree(tree.base)
+    if isinstance(tree.base, Member) and tree.name in _PRESENCE_FUNCTIONS and not tree.arguments:
+        base = _member(tree.base.base, tree.base.name, reads_value=False)
+    else:
+        base = _focus if tree.base is None else compile_tree(tree.base)
     if tree.name in _TYPE_FUNCTIONS:
         if len(tree.arguments) != 1:
             raise ExpressionError(f"{tree.name} takes one type")

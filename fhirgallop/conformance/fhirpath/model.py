@@ -60,7 +60,7 @@ def model_of(edition: Edition) -> Model:
 
 
 def member(item: Item, name: str, model: Model, out: Collection) -> bool:
-    """Adds the parts of an element that have a name; False when a required one is missing or has no value."""
+    """Adds the parts of an element that have a name; False when it is required and none is there."""
     value = item.value
     if not isinstance(value, dict):
         _member_of_primitive(item, name, out)
@@ -80,9 +80,7 @@ def member(item: Item, name: str, model: Model, out: Collection) -> bool:
                 _add(item, json_key, type_name, value.get(json_key), companion, out)
         elif json_key in value:
             _add(item, json_key, type_name, value[json_key], None, out)
-    if len(out) == before:
-        return not field.required
-    return all(not isinstance(part, Item) or part.value is not None for part in out[before:])
+    return len(out) > before or not field.required
 
 
 def _member_of_primitive(item: Item, name: str, out: Collection) -> None:
