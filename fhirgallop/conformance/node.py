@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Callable
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 from typing import Any
 
 from fhirgallop.conformance.editions.edition import Edition
@@ -93,8 +93,10 @@ class Scope:
         edition: the definitions.
         root: the resource handed in.
         resolve: target of a reference written at a node, if it is contained or in the same Bundle.
+        memo: what rules have worked out once and look up again while this resource is judged.
     """
 
     edition: Edition
     root: Node
     resolve: Callable[[Node, str], Node | None]
+    memo: dict[Any, Any] = field(default_factory=dict, compare=False, repr=False)

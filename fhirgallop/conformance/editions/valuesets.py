@@ -5,9 +5,11 @@ Source: FHIR ValueSet.compose (include, exclude, concept, filter, valueSet), Cod
 
 from __future__ import annotations
 
-from collections.abc import Iterable, Iterator, Mapping
+from collections.abc import Callable, Iterable, Iterator, Mapping
 from dataclasses import dataclass, field
 from typing import Any
+
+from fhirgallop.conformance.editions.model import ValueSet
 
 Definition = Mapping[str, Any]
 
@@ -24,7 +26,14 @@ class Codes:
 class Expander:
     """Expands value sets over the definitions given, the first place that has one being preferred."""
 
-    def __init__(self, value_sets: Mapping[str, Definition], code_systems: Mapping[str, Definition]) -> None:
+    def __init__(
+        self,
+        value_sets: Mapping[str, Definition],
+        code_systems: Mapping[str, Definition],
+        known: Callable[[str], ValueSet | None] = lambda _: None,
+    ) -> None:
+        """`known` gives value sets that were written out before."""
+        self._known = known
         self._sets = value_sets
         self._systems = code_systems
         self._concepts: dict[str, dict[str, str]] = {}
@@ -41,7 +50,12 @@ class Expander:
     def expand(self, url: str, seen: frozenset[str] = frozenset()) -> Codes | None:
         """The codes of a value set, or None when it is not at hand."""
         definition = self._sets.get(url.partition("|")[0])
-        if definition is None or url in seen:
+        if definition is None:
+            ready = self._known(url.partition("|")[0])
+            if ready is None:
+                return None
+            return Codes({s: set(codes) for s, codes in ready.systems.items()}, unlisted=set(ready.open_systems))
+        if url in seen:
             return None
         compose = definition.get("compose")
         if not isinstance(compose, Mapping):

@@ -1,0 +1,206 @@
+"""The order of a judgement: read, walk every node through the clauses, then profiles, then places in the text.
+
+This page is the one to read first: CLAUSES stand here in order, each in a module of its own.
+"""
+
+from __future__ import annotations
+
+import re
+from collections.abc import Iterator, Mapping, Sequence
+from dataclasses import replace
+from pathlib import Path
+from typing import Any
+
+from fhirgallop.conformance import (
+    bindings,
+    bundles,
+    cardinality,
+    contained,
+    extensions,
+    fast,
+    invariants,
+    primitives,
+    profiles,
+    references,
+    source,
+    structure,
+    vital_signs,
+    xhtml,
+)
+from fhirgallop.conformance.editions import Edition
+from fhirgallop.conformance.node import Node, Scope
+from fhirgallop.conformance.registry import Registry, registry
+from fhirgallop.conformance.source import Source
+from fhirgallop.outcome import Issue, ordered
+
+_STEP = re.compile(r"(\w+)(?:\.ofType\((\w+)\))?(?:\[(\d+)\])?(?:\.|$)", re.ASCII)
+
+
+def validate(
+    resource: bytes | str | Mapping[str, Any],
+    edition: str = "R4",
+    profiles: Sequence[str] = (),
+    packages: Sequence[Path | str] = (),
+) -> list[Issue]:
+    """Everything that is wrong with a resource by the base specification and its profiles.
+
+    Args:
+        resource: JSON as bytes or text, or the parsed object.
+        edition: "R4" (4.0.1), "R4B" (4.3.0) or "R5" (5.0.0).
+        profiles: canonicals the resource must meet beside those in its meta.profile.
+        packages: further FHIR packages (.tgz) with profiles, extensions and value sets.
+
+    Returns:
+        Issues, most severe first; empty when nothing is wrong. Whatever the resource holds, nothing is raised.
+
+    Raises:
+        ValueError: no such edition.
+        PackageError: a package is broken.
+    """
+    known = registry(edition, tuple(Path(p) for p in packages))
+    read = source.read(resource)
+    if read.proved and not profiles:
+        settled = fast.settle(read.value, known, as_text=read.text is not None)
+        if settled is not None:
+            return ordered(settled)
+    return thorough(read, known, profiles)
+
+
+def thorough(read: Source, known: Registry, profiles: Sequence[str] = ()) -> list[Issue]:
+    """The pass that says what is wrong and where; `validate` takes it when the fast pass cannot accept."""
+    text = read.text
+    if text is not None and not read.issues:
+        read = source.exact(text)
+    issues = list(read.issues)
+    if any(issue.severity == "fatal" for issue in issues):
+        return ordered(issues)
+    if isinstance(read.value, Mapping) and source.deeper_than_limit(read.value):
+        return ordered([*issues, source.too_deep()])
+    root = structure.root(read.value, known.edition, issues)
+    if root is None:
+        return ordered(issues)
+    if text is not None:
+        issues.extend(_repeated(text, root, known.edition))
+    issues.extend(judge(root, known, profiles))
+    if text is not None:
+        return ordered(_placed(issues, text, root))
+    return ordered(issues)
+
+
+def judge(root: Node, known: Registry, named: Sequence[str] = ()) -> Iterator[Issue]:
+    """Issues of a resource that has been read: one walk over its nodes, each through all clauses."""
+    edition = known.edition
+    scope = Scope(edition, root, references.resolver(root, edition))
+    by_profile = profiles.Judge(known, scope)
+    stack = [root]
+    while stack:
+        node = stack.pop()
+        issues: list[Issue] = []
+        if isinstance(node.value, Mapping):
+            children = structure.open_node(node, edition, issues)
+            yield from _object_clauses(node, known, scope)
+            if node.resource is node:
+                yield from _resource_clauses(node, scope, by_profile, named if node is root else ())
+        else:
+            children = structure.open_primitive(node, edition, issues)
+            yield from _primitive_clauses(node, known, scope)
+        yield from issues
+        stack.extend(reversed(children))
+
+
+def _object_clauses(node: Node, known: Registry, scope: Scope) -> Iterator[Issue]:
+    edition = known.edition
+    yield from cardinality.check(node, edition)
+    yield from bindings.check(node, known)
+    if node.type_name == "Reference":
+        yield from references.check(node, edition, scope.resolve)
+    elif node.type_name == "Extension":
+        yield from extensions.check(node, known)
+    elif node.type_name == "Bundle.entry":
+        yield from bundles.check(node, edition)
+    yield from invariants.check(node, scope)
+
+
+def _resource_clauses(
+    node: Node, scope: Scope, by_profile: profiles.Judge, named: Sequence[str]
+) -> Iterator[Issue]:
+    yield from contained.check(node)
+    wanted = dict.fromkeys((*named, *profiles.declared(node), *vital_signs.profiles_for(node)))
+    for url in wanted:
+        yield from by_profile.check(node, url)
+
+
+def _primitive_clauses(node: Node, known: Registry, scope: Scope) -> Iterator[Issue]:
+    edition = known.edition
+    faults = list(primitives.check(node, edition))
+    yield from faults
+    if faults:
+        return
+    yield from bindings.check(node, known)
+    if node.type_name == "xhtml" and node.value is not None:
+        yield from xhtml.check(node.value, node.expression)
+    elif node.type_name == "canonical":
+        yield from references.check(node, edition, scope.resolve)
+    yield from invariants.check(node, scope)
+
+
+def _repeated(text: bytes, root: Node, edition: Edition) -> Iterator[Issue]:
+    for path, line, column in source.duplicates(text):
+        said = "The same key stands twice in this object; readers would take different ones. Keep one."
+        at = _expression(path, root, edition)
+        yield Issue("error", "structure", "json-duplicate-key", said, expression=at, line=line, column=column)
+
+
+def _expression(path: source.Path, root: Node, edition: Edition) -> str:
+    """FHIRPath of the nearest node that stands at or above a path of JSON keys."""
+    node = root
+    key = ""
+    for step in path:
+        if isinstance(step, str):
+            key = step
+            held: Any = node.value.get(step) if isinstance(node.value, Mapping) else None
+            index = None
+        else:
+            index = step
+            held = held[step] if isinstance(held, list) and step < len(held) else None
+        place = edition.child(node.type_name, key)
+        if isinstance(held, list) and place is not None and place.element.many:
+            continue
+        if place is None or not isinstance(held, Mapping):
+            break
+        child = node.child(held, None, place, key, index)
+        if child.type_name == "Resource" and held.get("resourceType") in edition.resources:
+            child.as_resource(held["resourceType"])
+        node = child
+    return node.expression
+
+
+def _placed(issues: Sequence[Issue], text: bytes, root: Node) -> Iterator[Issue]:
+    """The issues with line and column of the node that each means."""
+    paths = {issue.expression: _path(issue.expression, root.value) for issue in issues if not issue.line}
+    places = source.locate(text, paths.values()) if paths else {}
+    for issue in issues:
+        if issue.line or issue.expression not in paths:
+            yield issue
+            continue
+        line, column = places.get(paths[issue.expression], (0, 0))
+        yield replace(issue, line=line, column=column)
+
+
+def _path(expression: str, value: Any) -> source.Path:
+    """JSON keys and indices of a FHIRPath made by `Node.expression`."""
+    path: list[str | int] = []
+    _, _, rest = expression.partition(".")
+    for name, kind, index in _STEP.findall(rest):
+        key = name + (kind[:1].upper() + kind[1:])
+        if not isinstance(value, Mapping):
+            break
+        # a primitive that has only extensions stands under its companion key, and so do its extensions
+        found = key if key in value and not isinstance(value[key], str | int | float) else "_" + key
+        key = found if found in value else key
+        value = value.get(key)
+        path.append(key)
+        if index:
+            path.append(int(index))
+            value = value[int(index)] if isinstance(value, list) and int(index) < len(value) else None
+    return tuple(path)
