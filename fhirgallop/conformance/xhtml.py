@@ -1,3 +1,4 @@
+# ruff: noqa: ARG002 - the signatures are those of SAX
 """Narrative: is `Narrative.div` well-formed XHTML of the permitted kind, and does it say anything?
 
 Sources: FHIR R4, Narrative.div, rules txt-1 and txt-2 (the XPath published with them lists elements and
@@ -13,8 +14,8 @@ from __future__ import annotations
 import re
 from collections.abc import Iterator
 from typing import Any
-from xml.sax import SAXException  # noqa: S406 - the exception only; the parser is defusedxml's
-from xml.sax.handler import ContentHandler, feature_namespaces  # noqa: S406 - the interface only
+from xml.sax import SAXException
+from xml.sax.handler import ContentHandler, feature_namespaces
 
 from defusedxml.common import DefusedXmlException
 from defusedxml.expatreader import create_parser
@@ -24,16 +25,19 @@ from fhirgallop.outcome import Issue
 NAMESPACE = "http://www.w3.org/1999/xhtml"
 _XML_NAMESPACE = "http://www.w3.org/XML/1998/namespace"
 
-ELEMENTS = frozenset(
-    """a abbr acronym b big blockquote br caption cite code col colgroup dd dfn div dl dt em h1 h2 h3 h4 h5 h6
-    hr i img li ol p pre q samp small span strong sub sup table tbody td tfoot th thead tr tt ul var""".split()
-)
-ATTRIBUTES = frozenset(
-    """abbr accesskey align alt axis bgcolor border cellhalign cellpadding cellspacing cellvalign char charoff
-    charset cite class colspan compact coords dir frame headers height href hreflang hspace id lang longdesc name
-    nowrap rel rev rowspan rules scope shape span src start style summary tabindex title type valign value vspace
-    width""".split()
-)
+ELEMENTS = frozenset((
+    "a", "abbr", "acronym", "b", "big", "blockquote", "br", "caption", "cite", "code", "col", "colgroup",
+    "dd", "dfn", "div", "dl", "dt", "em", "h1", "h2", "h3", "h4", "h5", "h6", "hr", "i", "img", "li", "ol",
+    "p", "pre", "q", "samp", "small", "span", "strong", "sub", "sup", "table", "tbody", "td", "tfoot",
+    "th", "thead", "tr", "tt", "ul", "var",
+))  # fmt: skip
+ATTRIBUTES = frozenset((
+    "abbr", "accesskey", "align", "alt", "axis", "bgcolor", "border", "cellhalign", "cellpadding",
+    "cellspacing", "cellvalign", "char", "charoff", "charset", "cite", "class", "colspan", "compact",
+    "coords", "dir", "frame", "headers", "height", "href", "hreflang", "hspace", "id", "lang", "longdesc",
+    "name", "nowrap", "rel", "rev", "rowspan", "rules", "scope", "shape", "span", "src", "start", "style",
+    "summary", "tabindex", "title", "type", "valign", "value", "vspace", "width",
+))  # fmt: skip
 
 MAX_DEPTH = 500
 MAX_ISSUES = 20
@@ -73,18 +77,21 @@ class _Handler(ContentHandler):
         namespace, local = name
         self._depth += 1
         if self._depth > MAX_DEPTH:
-            self._faults.add("txt-1", f"The narrative is nested more than {MAX_DEPTH} elements deep. Flatten it.")
+            self._faults.add(
+                "txt-1", f"The narrative is nested more than {MAX_DEPTH} elements deep. Flatten it."
+            )
             raise _Stop
         if self._depth == 1:
             self._root(namespace, local)
         elif namespace != NAMESPACE:
             self._faults.add(
-                "txt-1", "The narrative holds an element outside the XHTML namespace. Take it out or put it in XHTML."
+                "txt-1",
+                "The narrative holds an element outside the XHTML namespace. Take it out or put it in XHTML.",
             )
         elif local not in ELEMENTS:
             self._faults.add("txt-1", f"The narrative may not hold the element {_shown(local)}. Take it out.")
         for (space, attribute), value in attrs.items():
-            self._attribute(local, space, attribute, value)
+            self._attribute(space, attribute, value)
         if local == "img" and attrs.get((None, "src"), "").strip():
             self.says_something = True
 
@@ -102,18 +109,25 @@ class _Handler(ContentHandler):
         if local != "div":
             self._faults.add("txt-1", "The narrative must be one div element. Put all of it into a div.")
         if namespace != NAMESPACE:
-            self._faults.add("txt-1", f'The div of the narrative must stand in the namespace xmlns="{NAMESPACE}".')
+            self._faults.add(
+                "txt-1", f'The div of the narrative must stand in the namespace xmlns="{NAMESPACE}".'
+            )
 
-    def _attribute(self, local: str, space: str | None, name: str, value: str) -> None:
+    def _attribute(self, space: str | None, name: str, value: str) -> None:
         if space == _XML_NAMESPACE and name in ("lang", "space"):
             return
         if space is not None or name not in ATTRIBUTES:
-            self._faults.add("txt-1", f"The narrative may not hold the attribute {_shown(name)}. Take it out.")
+            self._faults.add(
+                "txt-1", f"The narrative may not hold the attribute {_shown(name)}. Take it out."
+            )
         elif name in ("href", "src", "cite", "longdesc") and _ACTIVE_URL.match(value):
-            self._faults.add("txt-1", f"The attribute {name} of the narrative may not run a script. Take it out.")
+            self._faults.add(
+                "txt-1", f"The attribute {name} of the narrative may not run a script. Take it out."
+            )
         elif name == "style" and _ACTIVE_STYLE.search(value):
             self._faults.add(
-                "txt-1", "A style of the narrative may not run a script or import a sheet. Keep plain properties only."
+                "txt-1",
+                "A style of the narrative may not run a script or import a sheet. Keep plain properties.",
             )
 
 
@@ -132,7 +146,9 @@ def check(text: str, expression: str) -> Iterator[Issue]:
     if _DECLARATION.match(text):
         faults.add("txt-1", "The narrative must be one div element: take out the XML declaration before it.")
     elif _read(text, handler, faults) and not handler.says_something:
-        faults.add("txt-2", "The narrative is blank. Write what the resource says, or leave the narrative out.")
+        faults.add(
+            "txt-2", "The narrative is blank. Write what the resource says, or leave the narrative out."
+        )
     yield from faults.issues.values()
 
 
@@ -146,7 +162,9 @@ def _read(text: str, handler: _Handler, faults: _Faults) -> bool:
         parser.feed(text.encode("utf-8"))
         parser.close()
     except UnicodeEncodeError:
-        faults.add("txt-1", "The narrative holds half a character (a lone surrogate). Write the whole character.")
+        faults.add(
+            "txt-1", "The narrative holds half a character (a lone surrogate). Write the whole character."
+        )
     except DefusedXmlException:
         faults.add("txt-1", "The narrative may not hold a DOCTYPE or define entities. Take them out.")
     except SAXException:
@@ -164,7 +182,9 @@ def _not_well_formed(text: str) -> str:
             "The narrative uses a named entity that XML does not know (such as nbsp). "
             "Write the character itself or its number (&#160;)."
         )
-    return "The narrative is not well-formed XML. Close every element, quote every attribute, write & as &amp;."
+    return (
+        "The narrative is not well-formed XML. Close every element, quote every attribute, write & as &amp;."
+    )
 
 
 def _shown(name: str) -> str:

@@ -1,3 +1,4 @@
+# ruff: noqa: ARG001, ARG005 - all compiled code has one signature, whether it looks at everything or not
 """Turns the tree of an expression into a closure over collections.
 
 A part that does not depend on the item at hand (`%resource.descendants().reference`) is worked out once: per
@@ -19,7 +20,6 @@ from fhirgallop.conformance.fhirpath.operators import EMPTY
 from fhirgallop.conformance.fhirpath.syntax import (
     Binary,
     Call,
-    Item as Indexed,
     Literal,
     Member,
     Special,
@@ -27,6 +27,9 @@ from fhirgallop.conformance.fhirpath.syntax import (
     TypeTest,
     Unary,
     Variable,
+)
+from fhirgallop.conformance.fhirpath.syntax import (
+    Item as Indexed,
 )
 from fhirgallop.conformance.fhirpath.tokens import ExpressionError
 
@@ -151,7 +154,7 @@ def _kept(code: Code, variables: frozenset[str]) -> Code:
             frame.run.incomplete = before
         if known[1]:
             frame.run.incomplete = True
-        return known[0]  # type: ignore[no-any-return]
+        return known[0]
 
     return run
 
@@ -162,7 +165,7 @@ def _store(run: Run, variables: frozenset[str], mark: object) -> tuple[dict[Any,
     return run.kept, mark
 
 
-def _compile(tree: Tree) -> Code:
+def _compile(tree: Tree) -> Code:  # noqa: PLR0911 - one return a kind of tree
     match tree:
         case Literal(value):
             constant = EMPTY if value is None else [value]

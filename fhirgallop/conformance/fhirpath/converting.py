@@ -1,3 +1,4 @@
+# ruff: noqa: ARG001 - all compiled code has one signature, whether it looks at everything or not
 """Conversions and mathematics.
 
 Source: FHIRPath N1 (v2.0.0), sections 5.5 and 5.7.
@@ -22,7 +23,9 @@ _TRUE = frozenset(("true", "t", "yes", "y", "1", "1.0"))
 _FALSE = frozenset(("false", "f", "no", "n", "0", "0.0"))
 _INTEGER = re.compile(r"[+-]?[0-9]{1,30}", re.ASCII)
 _DECIMAL = re.compile(r"[+-]?[0-9]{1,500}(\.[0-9]{1,500})?", re.ASCII)
-_QUANTITY = re.compile(r"([+-]?[0-9]{1,100}(?:\.[0-9]{1,100})?)(?: +(?:'([^']{1,100})'|([a-z]{1,20})))?", re.ASCII)
+_QUANTITY = re.compile(
+    r"([+-]?[0-9]{1,100}(?:\.[0-9]{1,100})?)(?: +(?:'([^']{1,100})'|([a-z]{1,20})))?", re.ASCII
+)
 _CONTEXT = decimal.Context(prec=34, traps=[], Emax=10_000, Emin=-10_000)
 _PRINTED_DIGITS = 2_000
 

@@ -1,3 +1,4 @@
+# ruff: noqa: ARG001 - all compiled code has one signature, whether it looks at everything or not
 """Functions that FHIR adds to FHIRPath, boundaries, and what can only be said not to be judged.
 
 Sources: FHIR R4 and R5, fhirpath.html ("Additional functions"); FHIRPath v3.0.0 (lowBoundary, highBoundary,
@@ -23,7 +24,9 @@ from fhirgallop.conformance.fhirpath.temporal import Temporal
 
 Arguments = Sequence[Code]
 
-_TYPED_REFERENCE = re.compile(r"(?:.*/)?([A-Z][A-Za-z]{1,60})(?:/[^/?#]{1,200}(?:/_history/[^/]{1,200})?|\?.*)", re.DOTALL)
+_TYPED_REFERENCE = re.compile(
+    r"(?:.*/)?([A-Z][A-Za-z]{1,60})(?:/[^/?#]{1,200}(?:/_history/[^/]{1,200})?|\?.*)", re.DOTALL
+)
 _MAX_REFERENCE = 2_000
 
 # How many parts a precision keeps, by the number of digits that FHIRPath counts (20140101 -> 8).
@@ -68,7 +71,7 @@ def _resolve(focus: Collection, frame: Frame, args: Arguments) -> Collection:
 
 
 def _target(item: Any, frame: Frame) -> Item | None:
-    """What a Reference, canonical or uri points to: the resource if it is at hand, else a stand-in by its type."""
+    """What a Reference, canonical or uri points to: the resource at hand, else a stand-in of its type."""
     value = item.value if isinstance(item, Item) else item
     stated = value.get("type") if isinstance(value, dict) else None
     reference = value.get("reference") if isinstance(value, dict) else value

@@ -9,8 +9,10 @@ from fhirgallop.conformance.fhirpath.items import CannotJudge, Collection, Item
 from fhirgallop.conformance.fhirpath.model import Model, model_of
 from fhirgallop.conformance.node import Node, Scope
 
-# Steps that one expression may take over all nodes of one validation, so that the time stays bounded.
-MAX_STEPS = 3_000_000
+# Steps that one expression may take over all nodes of one validation, so that the time stays bounded:
+# so many in any case, and so many passes over the longest collection it meets.
+MAX_STEPS = 500_000
+MAX_PASSES = 20
 
 
 class Run:
@@ -24,7 +26,7 @@ class Run:
         kept: results of parts that are the same for every item of this run.
     """
 
-    __slots__ = ("context", "incomplete", "kept", "model", "node", "scope", "steps")
+    __slots__ = ("context", "incomplete", "kept", "longest", "model", "node", "scope", "steps")
 
     def __init__(self, node: Node, scope: Scope, steps: int = 0) -> None:
         self.node = node
@@ -34,16 +36,18 @@ class Run:
         self.incomplete = False
         self.kept: dict[Any, Any] = {}
         self.steps = steps
+        self.longest = 0
 
-    def spend(self, steps: int) -> None:
-        """Counts work done.
+    def spend(self, items: int) -> None:
+        """Counts one pass over so many items.
 
         Raises:
             CannotJudge: the bound is reached.
         """
-        self.steps += steps
-        if self.steps > MAX_STEPS:
-            raise CannotJudge(f"the expression needs more than {MAX_STEPS} steps on this resource")
+        self.steps += items
+        self.longest = max(self.longest, items)
+        if self.steps > MAX_STEPS + MAX_PASSES * self.longest:
+            raise CannotJudge("the rule would take too long on so large a resource")
 
 
 class Frame:
@@ -51,7 +55,9 @@ class Frame:
 
     __slots__ = ("index", "run", "this", "total")
 
-    def __init__(self, run: Run, this: Collection, index: int | None = None, total: Collection | None = None) -> None:
+    def __init__(
+        self, run: Run, this: Collection, index: int | None = None, total: Collection | None = None
+    ) -> None:
         self.run = run
         self.this = this
         self.index = index

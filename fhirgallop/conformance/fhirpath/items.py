@@ -41,7 +41,9 @@ class Item:
 
     __slots__ = ("companion", "owner", "reference", "type_name", "value")
 
-    def __init__(self, value: Any, companion: Any, type_name: str, owner: Node | None, reference: str = "") -> None:
+    def __init__(
+        self, value: Any, companion: Any, type_name: str, owner: Node | None, reference: str = ""
+    ) -> None:
         self.value = value
         self.companion = companion
         self.type_name = type_name
@@ -55,7 +57,7 @@ class Item:
 
 
 def plain(item: Any) -> Any:
-    """The System value of a primitive or Quantity; None for a primitive without value; else the item itself."""
+    """The System value of a primitive or Quantity; None where a primitive has none; else the item itself."""
     if not isinstance(item, Item):
         return item
     value = item.value

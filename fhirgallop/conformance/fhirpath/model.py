@@ -132,7 +132,9 @@ def children(item: Item, model: Model) -> Iterator[Item]:
             _member_of_primitive(item, name, out)
         yield from out
         return
-    types = {key: name for field in (model.fields(item.type_name) or {}).values() for key, name, _ in field.keys}
+    types = {
+        key: name for field in (model.fields(item.type_name) or {}).values() for key, name, _ in field.keys
+    }
     for key in value:
         name = key.removeprefix("_")
         if key == "resourceType" or (key != name and name in value):

@@ -196,7 +196,12 @@ def arithmetic(sign: str, a: Any, b: Any) -> Collection:
     """
     if a is None or b is None:
         return EMPTY
-    if isinstance(a, Quantity) and isinstance(b, Quantity) and (a.unit, a.system) == (b.unit, b.system) and sign in "+-":
+    if (
+        isinstance(a, Quantity)
+        and isinstance(b, Quantity)
+        and (a.unit, a.system) == (b.unit, b.system)
+        and sign in "+-"
+    ):
         return [Quantity(Decimal(value), a.unit, a.system) for value in arithmetic(sign, a.value, b.value)]
     if not is_number(a) or not is_number(b):
         raise CannotJudge(f"`{sign}` is used on values that cannot be reckoned with here")

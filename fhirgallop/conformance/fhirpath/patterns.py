@@ -1,6 +1,6 @@
 """Regular expressions of rules, run in bounded time.
 
-`found` uses an engine whose time is linear in the text whatever the pattern is; what that engine does not take
+`found` uses an engine whose time is linear in the text whatever the pattern; what it does not take
 (look-around, back references) is not judged. Replacement needs Python's engine, so only patterns and texts
 which cannot blow up there are let in.
 Source: FHIRPath N1 (v2.0.0), section 5.6.9 (a match anywhere in the text; `.` matches line ends).

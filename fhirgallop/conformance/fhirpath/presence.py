@@ -1,7 +1,7 @@
 """Decides from the presence of elements alone that a rule holds, before anything is evaluated.
 
-Most invariants say that elements exclude or need one another (`value.empty() or dataAbsentReason.empty()`), or
-begin with such a condition. For these a look at the keys of the JSON object is enough in the usual case.
+Most invariants say that elements exclude or need one another (`value.empty() or dataAbsentReason.empty()`)
+or begin with such a condition. For these a look at the keys of the JSON object is enough in the usual case.
 `surely` is only ever a short cut: where it does not answer True, the compiled expression is asked.
 """
 
@@ -18,10 +18,10 @@ Answer = Callable[[Object], bool | None]
 """True or False when presence alone decides, None otherwise."""
 
 # what these give for an empty collection is known without looking at their arguments
-_EMPTY_STAYS_EMPTY = frozenset(
-    """where select repeat first last tail skip take single ofType as trace resolve extension children descendants
-    distinct intersect exclude""".split()
-)
+_EMPTY_STAYS_EMPTY = frozenset((
+    "as", "children", "descendants", "distinct", "exclude", "extension", "first", "intersect", "last",
+    "ofType", "repeat", "resolve", "select", "single", "skip", "tail", "take", "trace", "where",
+))  # fmt: skip
 _TRUE_FOR_NONE = frozenset(("empty", "all", "allTrue", "allFalse", "isDistinct"))
 _FALSE_FOR_NONE = frozenset(("exists", "anyTrue", "anyFalse", "hasValue"))
 

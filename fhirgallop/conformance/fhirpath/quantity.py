@@ -1,8 +1,8 @@
 """Quantities and their comparison across UCUM units.
 
-Sources: FHIRPath N1 (v2.0.0), sections 6.1 and 6.2 (Quantity); The Unified Code for Units of Measure, version 2.1,
-tables of prefixes, base units and derived units (the part clinical records use). A unit that is not in the
-table compares with itself only; with any other the comparison is undecided.
+Sources: FHIRPath N1 (v2.0.0), sections 6.1 and 6.2 (Quantity); The Unified Code for Units of Measure,
+version 2.1, tables of prefixes, base units and derived units (the part clinical records use). A unit that is
+not in the table compares with itself only; with any other the comparison is undecided.
 """
 
 from __future__ import annotations

@@ -1,3 +1,4 @@
+# ruff: noqa: ARG001, ARG005 - all compiled code has one signature, whether it looks at everything or not
 """Functions on collections: existence, filtering, subsetting, combining, aggregates.
 
 Source: FHIRPath N1 (v2.0.0), sections 5.1 to 5.4, 6.3 and 7.
@@ -62,7 +63,7 @@ def _repeat(focus: Collection, frame: Frame, args: Arguments) -> Collection:
         fresh = []
         for _, result in each(wave, frame, args[0]):
             for part in result:
-                mark = id(part.value) if isinstance(part, Item) and isinstance(part.value, dict) else key(part)
+                mark = key(part)
                 if mark not in found:
                     found[mark] = part
                     fresh.append(part)

@@ -100,9 +100,9 @@ class Temporal:
     def boundary(self, *, high: bool) -> Temporal:
         """The earliest or latest moment it may stand for.
 
-        Source: FHIRPath v3.0.0, sections "lowBoundary" and "highBoundary". A time of day without zone is taken
-        at the zone that makes it earliest (+14:00) or latest (-12:00); a mere day keeps none, so that two days
-        are compared as days.
+        Source: FHIRPath v3.0.0, sections "lowBoundary" and "highBoundary". A time of day without zone is
+        taken at the zone that makes it earliest (+14:00) or latest (-12:00); a mere day keeps none, so that
+        two days are compared as days.
         """
         edge: tuple[Part, ...] = (23, 59, Decimal("59.999")) if high else (0, 0, Decimal("0.000"))
         if self.kind == "time":

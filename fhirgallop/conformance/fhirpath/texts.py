@@ -1,3 +1,4 @@
+# ruff: noqa: ARG001 - all compiled code has one signature, whether it looks at everything or not
 """Functions on texts.
 
 Source: FHIRPath N1 (v2.0.0), section 5.6; `matchesFull`, `trim`, `split`, `join`, `encode`, `decode`,
@@ -129,7 +130,9 @@ FUNCTIONS: Mapping[str, Function] = {
     "lower": Function(_on_text(lambda text: [text.lower()])),
     "replace": Function(_replace, 2, 2),
     "matches": Function(_with_text(lambda text, pattern: boolean(patterns.found(pattern, text))), 1, 1),
-    "matchesFull": Function(_with_text(lambda text, pattern: boolean(patterns.found(f"^(?:{pattern})$", text))), 1, 1),
+    "matchesFull": Function(
+        _with_text(lambda text, pattern: boolean(patterns.found(f"^(?:{pattern})$", text))), 1, 1
+    ),
     "replaceMatches": Function(_replace_matches, 2, 2),
     "length": Function(_on_text(lambda text: [len(text)])),
     "toChars": Function(_on_text(list)),
