@@ -61,7 +61,7 @@ def qualified_but_not_present(exam: Exam, catalogue: Catalogue) -> Iterator[Issu
     for entry in exam.entries:
         if entry.presence is Presence.ABSENT:
             describing = sorted(
-                {q.axis for q in entry.qualifiers if q.axis not in _ALSO_OF_ABSENT}
+                {q.axis for q in entry.qualifiers if q.axis not in ALSO_OF_ABSENT}
                 | ({"number"} if entry.measure else set())
             )
             if describing:
@@ -139,6 +139,6 @@ CLAUSES: Final[tuple[Callable[[Exam, Catalogue], Iterator[Issue]], ...]] = (
 )
 
 # Where and how one looked is true of an absent finding too; how it sounded is not.
-_ALSO_OF_ABSENT: Final = frozenset(
+ALSO_OF_ABSENT: Final = frozenset(
     {"site", "side", "posture", "respiratory-phase", "method", "chamber", "exertion", "cuff-size"}
 )
