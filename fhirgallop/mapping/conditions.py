@@ -1,0 +1,37 @@
+"""Conditions of a map as functions of the record being read."""
+
+from __future__ import annotations
+
+from fhirgallop.mapping.run import Run, Test
+from fhirgallop.mapping.template_map import AllOf, AnyOf, Condition, FieldBlank, FieldIs, Not
+from fhirgallop.mapping.wordings import Blanks, Lookup
+
+
+def test_of(condition: Condition, blanks: Blanks) -> Test:
+    """The function that tells whether `condition` holds."""
+    match condition:
+        case FieldIs(field=name, words=words):
+            return _field_is(name, words, blanks)
+        case FieldBlank(field=name, blank=blank):
+            return lambda run: (not blanks.filled(run.fields.get(name))) is blank
+        case AllOf(parts):
+            tests = [test_of(part, blanks) for part in parts]
+            return lambda run: all(test(run) for test in tests)
+        case AnyOf(parts):
+            tests = [test_of(part, blanks) for part in parts]
+            return lambda run: any(test(run) for test in tests)
+        case Not(part):
+            inner = test_of(part, blanks)
+            return lambda run: not inner(run)
+
+
+def _field_is(name: str, words: tuple[str, ...], blanks: Blanks) -> Test:
+    table = Lookup(dict.fromkeys(words, True))
+
+    def holds(run: Run) -> bool:
+        field = run.fields.get(name)
+        return field is not None and any(
+            not blanks.is_blank(value) and table.find(value) for value in field.values
+        )
+
+    return holds

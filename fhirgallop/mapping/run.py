@@ -1,0 +1,63 @@
+"""Run: one record being read, with everything found so far."""
+
+from __future__ import annotations
+
+from collections.abc import Callable, Mapping
+from dataclasses import dataclass
+
+from fhirgallop.exam.entry import Entry
+from fhirgallop.exam.moment import Moment
+from fhirgallop.intake.record import Field, LocalRecord, Value
+from fhirgallop.mapping.wordings import Blanks, words_of
+from fhirgallop.outcome import Issue, Severity
+
+
+@dataclass(frozen=True, slots=True)
+class UnknownValue:
+    """A value that no line of the map knows; for the sender's own eyes, never for a log."""
+
+    field: str
+    value: str
+
+
+class Run:
+    """One record being read by one map."""
+
+    __slots__ = ("entries", "fields", "issues", "moment", "noted", "notes", "record", "settled", "unknown")
+
+    def __init__(self, record: LocalRecord) -> None:
+        self.record = record
+        self.fields: Mapping[str, Field] = record.fields
+        self.entries: list[Entry] = []
+        self.issues: list[Issue] = []
+        self.unknown: list[UnknownValue] = []
+        self.notes: list[str] = []
+        self.moment: Moment | None = None
+        # Fields whose content has gone into an entry or an issue, and fields whose own remarks have.
+        self.settled: set[str] = set()
+        self.noted: set[str] = set()
+
+    def issue(self, severity: Severity, code: str, rule: str, text: str, name: str) -> None:
+        """Notes an issue about the field `name`."""
+        record, field = self.record, self.fields.get(name)
+        line = (field.line if field else 0) or record.line
+        self.issues.append(
+            Issue(severity, code, rule, text, field=name[:200], source=record.source, line=line)
+        )
+
+    def unknown_value(self, severity: Severity, text: str, name: str, value: Value) -> None:
+        """Notes a value that no line knows."""
+        self.issue(severity, "code-invalid", "map-value-unknown", text, name)
+        self.unknown.append(UnknownValue(name, words_of(value)))
+
+
+LineReading = Callable[[Run], None]
+Test = Callable[[Run], bool]
+
+
+def is_plain(field: Field) -> bool:
+    """True when a field says nothing but its values."""
+    return not (field.status or field.time or field.notes or field.method or field.site or field.performer)
+
+
+__all__ = ["Blanks", "LineReading", "Run", "Test", "UnknownValue", "is_plain"]
