@@ -28,13 +28,15 @@ def murmur_grade(panel: Panel) -> Verdict:
     below = panel.judge("check.murmur.lowest")
     if grade is None:
         return panel.verdict(UNKNOWN)
-    if grade > (panel.number("murmur_scale") or _DEFAULT_SCALE):
+    scale = panel.number("murmur_scale")
+    if grade > (scale or _DEFAULT_SCALE):
         return panel.verdict("broken", notes=("The grade lies above its scale.",))
     if below.met:
-        return panel.verdict("ask", notes=("Grade zero: is it meant as no murmur?",))
+        return panel.verdict("ask", notes=("Below grade one: is it meant as no murmur?",))
+    found, notes = "holds", tuple[str, ...]()
     if grade != grade.to_integral_value():
-        return panel.verdict("ask", notes=("Between two grades: store it as a range.",))
-    return panel.verdict("holds")
+        found, notes = "ask", ("Between two grades: store it as a range.",)
+    return panel.verdict(found, possible=(found,) if scale else (found, "broken"), notes=notes)
 
 
 @classification("check.pulsus-paradoxus")
@@ -48,10 +50,10 @@ def pulsus_paradoxus_possible(panel: Panel) -> Verdict:
     if paradox is not None and systolic is not None and paradox > systolic:
         return panel.verdict("broken", notes=("The fall cannot exceed systolic pressure.",))
     if high.met or above.met:
-        return panel.verdict("ask")
+        return panel.verdict("ask", possible=("ask",) if systolic is not None else ("ask", "broken"))
     if paradox is None or systolic is None:
         return panel.verdict(UNKNOWN)
-    return panel.verdict("holds")
+    return panel.verdict("holds", possible=("holds",) if pulse is not None else ("holds", "ask"))
 
 
 @classification("check.pulse-deficit")
@@ -59,8 +61,12 @@ def pulse_deficit_possible(panel: Panel) -> Verdict:
     """Rate at the wrist above the apex by more than counting error: transposed, or not counted together."""
     apical, radial = panel.number("apical_rate_per_min"), panel.number("radial_rate_per_min")
     excess = None if apical is None or radial is None else radial - apical
-    name = "together" if panel.flag("full_minute_simultaneous") else "apart"
-    return _ask_if_any(panel, [panel.judge(f"check.deficit.{name}", excess)])
+    counted_together = panel.flag("full_minute_simultaneous")
+    apart = panel.judge("check.deficit.apart", excess)
+    together = panel.judge("check.deficit.together", excess)
+    if counted_together is None and together.met and not apart.met:
+        return panel.verdict("holds", possible=("holds", "ask"))
+    return _ask_if_any(panel, [together if counted_together else apart])
 
 
 @classification("check.systolic-above-diastolic")
@@ -122,7 +128,9 @@ def plausible_range(panel: Panel) -> Verdict:
     known = [criterion for criterion in criteria if criterion.state != UNKNOWN]
     if not known:
         return panel.verdict(UNKNOWN)
-    return panel.verdict("ask" if any(c.met for c in known) else "holds")
+    if any(c.met for c in known):
+        return panel.verdict("ask")
+    return panel.verdict("holds", possible=("holds",) if known == criteria else ("holds", "ask"))
 
 
 @classification("check.rvsp-above-right-atrial")

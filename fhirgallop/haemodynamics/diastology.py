@@ -8,12 +8,11 @@ in m/s.
 from __future__ import annotations
 
 from decimal import Decimal
+from itertools import product
 
 from fhirgallop.haemodynamics.classification import Panel, Verdict, classification
 from fhirgallop.haemodynamics.computation import computation
 from fhirgallop.haemodynamics.values import UNKNOWN, State, any_of
-
-_GRADES_OF_RAISED_PRESSURE = ("grade II", "grade III")
 
 
 @computation("diastole.e-over-a")
@@ -72,15 +71,18 @@ def grade(panel: Panel) -> Verdict:
 @classification("diastole.atrial-fibrillation")
 def atrial_fibrillation(panel: Panel) -> Verdict:
     """2025: of four marks three or more say raised, none or one not raised, two undetermined."""
-    pressure = any_of(
-        (panel.judge("diastole-af.tricuspid").state, panel.judge("diastole-af.pulmonary-pressure").state)
-    )
     names = ("diastole-af.e", "diastole-af.septal", "diastole-af.deceleration")
-    states = [pressure, *(panel.judge(name).state for name in names)]
+    states = [panel.judge(name).state for name in names]
+    forms = [panel.judge(f"diastole-af.{name}").state for name in ("tricuspid", "pulmonary-pressure")]
+    grades = _by_count([*states, any_of(_measured(forms))])
+    possible = _by_count([*states, any_of(forms)]) | grades
+    return panel.verdict(grades.pop() if len(grades) == 1 else UNKNOWN, possible=possible)
+
+
+def _by_count(states: list[State]) -> set[str]:
     positive, unknown = states.count("met"), states.count(UNKNOWN)
     steps = ("not raised", "not raised", "undetermined", "raised", "raised")
-    possible = set(steps[positive : positive + unknown + 1])
-    return panel.verdict(possible.pop()) if len(possible) == 1 else panel.verdict(UNKNOWN, possible=possible)
+    return set(steps[positive : positive + unknown + 1])
 
 
 def _screen_grade(positive: int) -> str:
@@ -91,72 +93,83 @@ def _grade_2016(panel: Panel) -> Verdict:
     low, high = panel.judge("diastole.ratio.low"), panel.judge("diastole.ratio.high")
     slow = panel.judge("diastole.e.low")
     names = ("diastole.e-over-e-prime", "diastole.tricuspid", "diastole.atrium")
-    by_marks = _marks_2016([panel.judge(name).state for name in names])
-    if low.state == UNKNOWN:
-        return panel.verdict(UNKNOWN, notes=("E/A is needed first.",))
+    by_marks, open_marks = _marks_2016([panel.judge(name).state for name in names])
     if high.met:
         return panel.verdict("grade III")
+    if low.state == UNKNOWN:
+        return panel.verdict(UNKNOWN, notes=("E/A is needed first.",))
     if low.met and slow.met:
         return panel.verdict("grade I")
-    if low.met and slow.state == UNKNOWN and by_marks != {"grade I"}:
-        return panel.verdict(
-            UNKNOWN, possible={"grade I"} | by_marks, notes=("E is needed beside a low E/A.",)
-        )
-    if len(by_marks) == 1:
-        return panel.verdict(by_marks.pop())
-    return panel.verdict(UNKNOWN, possible=by_marks)
+    if low.met and slow.state == UNKNOWN:
+        possible = {"grade I"} | open_marks
+        note = () if len(possible) == 1 else ("E is needed beside a low E/A.",)
+        return panel.verdict("grade I" if len(possible) == 1 else UNKNOWN, possible=possible, notes=note)
+    return panel.verdict(by_marks, possible=open_marks)
 
 
-def _marks_2016(states: list[State]) -> set[str]:
-    """Two of three decide; one for and one against, with the third missing, is indeterminate."""
+def _marks_2016(states: list[State]) -> tuple[str, set[str]]:
+    """Grade by the three marks, and what the missing ones leave open.
+
+    Two of three decide; one for and one against, with the third missing, is indeterminate as published.
+    """
     positive, negative = states.count("met"), states.count("unmet")
     if positive >= 2:
-        return {"grade II"}
+        return "grade II", {"grade II"}
     if negative >= 2:
-        return {"grade I"}
-    if positive == negative == 1:
-        return {"indeterminate"}
-    return {"grade I", "indeterminate", "grade II"}
+        return "grade I", {"grade I"}
+    is_split = positive == negative == 1
+    return "indeterminate" if is_split else UNKNOWN, {"grade I", "indeterminate", "grade II"}
 
 
 def _grade_2025(panel: Panel) -> Verdict:
-    low, high = panel.judge("diastole.ratio.low"), panel.judge("diastole.ratio.high")
-    relaxation = _any(panel, ("diastole.septal", "diastole.lateral", "diastole.average"))
-    filling = _any(
-        panel,
-        ("diastole.e-over-e-prime", "diastole.e-over-e-prime.septal", "diastole.e-over-e-prime.lateral"),
-    )
-    pressure = _any(panel, ("diastole.tricuspid", "diastole.pulmonary-pressure"))
-    ties = (
-        "diastole.reservoir-strain",
-        "diastole.pulmonary-vein",
-        "diastole.atrium",
-        "diastole.relaxation-time",
-    )
-    tie = any_of(state for state in (panel.judge(name).state for name in ties) if state != UNKNOWN)
-    marks = (relaxation, filling, pressure)
-    if marks.count("met") >= 2:
-        return _by_ratio(panel, high.state)
-    if UNKNOWN in marks:
-        return panel.verdict(UNKNOWN, notes=("e', E/e' and tricuspid velocity are needed.",))
-    if "met" not in marks:
-        return panel.verdict("normal")
-    if relaxation == "met" and low.met:
-        return panel.verdict("grade I")
+    low, high = panel.judge("diastole.ratio.low").state, panel.judge("diastole.ratio.high").state
+    ring = [panel.judge(f"diastole.{name}").state for name in ("septal", "lateral", "average")]
+    ratios = ("diastole.e-over-e-prime", "diastole.e-over-e-prime.septal", "diastole.e-over-e-prime.lateral")
+    filling = [panel.judge(name).state for name in ratios]
+    pressure = [panel.judge(f"diastole.{name}").state for name in ("tricuspid", "pulmonary-pressure")]
+    ties = [
+        panel.judge(f"diastole.{name}").state
+        for name in ("reservoir-strain", "pulmonary-vein", "atrium", "relaxation-time")
+    ]
+    relaxation = any_of(ring if UNKNOWN in ring[:2] and ring[2] == UNKNOWN else _measured(ring))
+    tie = any_of(_measured(ties))
+    by_forms = (low, high, relaxation, any_of(_measured(filling)), any_of(_measured(pressure)))
+    strictly = (low, high, any_of(ring), any_of(filling), any_of(pressure))
+    grades = {_decide_2025(case, tie) for case in _completions(by_forms)}
+    open_ties: tuple[State, ...] = (tie, any_of(ties)) if any_of(ties) != UNKNOWN else (tie, "met", "unmet")
+    possible = {_decide_2025(case, one) for case in _completions(strictly) for one in open_ties} | grades
+    if len(grades) > 1:
+        note = "E/A, e', E/e' and tricuspid velocity or pulmonary pressure are needed."
+        return panel.verdict(UNKNOWN, possible=possible, notes=(note,))
+    grade = grades.pop()
+    note = "One mark only: strain, pulmonary vein, atrial volume or relaxation time would settle it."
+    return panel.verdict(grade, possible=possible, notes=(note,) if grade == "indeterminate" else ())
+
+
+def _decide_2025(case: tuple[State, ...], tie: State) -> str:
+    """The grade when E/A, relaxation, filling and pressure are known; tie-breakers may be missing."""
+    low, high, relaxation, filling, pressure = case
+    marks = (relaxation, filling, pressure).count("met")
+    raised = "grade III" if high == "met" else "grade II"
+    if marks >= 2:
+        return raised
+    if marks == 0:
+        return "normal"
+    if relaxation == "met" and low == "met":
+        return "grade I"
     if tie == UNKNOWN:
-        note = "One mark only: strain, pulmonary vein, atrial volume or relaxation time would settle it."
-        return panel.verdict("indeterminate", notes=(note,))
+        return "indeterminate"
     if tie == "met":
-        return _by_ratio(panel, high.state)
-    return panel.verdict("grade I" if relaxation == "met" else "normal")
+        return raised
+    return "grade I" if relaxation == "met" else "normal"
 
 
-def _by_ratio(panel: Panel, high: State) -> Verdict:
-    if high == UNKNOWN:
-        return panel.verdict(UNKNOWN, possible=_GRADES_OF_RAISED_PRESSURE, notes=("E/A tells II from III.",))
-    return panel.verdict("grade III" if high == "met" else "grade II")
+def _measured(states: list[State]) -> list[State]:
+    """Several forms of one mark: those not measured do not make the mark unknown."""
+    return [state for state in states if state != UNKNOWN]
 
 
-def _any(panel: Panel, names: tuple[str, ...]) -> State:
-    """Any of several forms of one mark; forms that were not measured do not make the mark unknown."""
-    return any_of(state for state in (panel.judge(name).state for name in names) if state != UNKNOWN)
+def _completions(states: tuple[State, ...]) -> list[tuple[State, ...]]:
+    """Every way in which the unknown states could turn out."""
+    both: tuple[State, State] = ("met", "unmet")
+    return list(product(*(both if state == UNKNOWN else (state,) for state in states)))

@@ -18,11 +18,11 @@ def nt_probnp_acute(panel: Panel) -> Verdict:
     """Rule-out below 300 at any age, rule-in by age band, grey between; an unknown age leaves bands open."""
     out = panel.judge("nt-probnp.out")
     bands = {band: panel.judge(f"nt-probnp.in.{band}") for band in ("young", "middle", "old")}
+    young, old = panel.judge("nt-probnp.age.young"), panel.judge("nt-probnp.age.old")
     if out.state == UNKNOWN:
         return panel.verdict(UNKNOWN)
     if out.met:
         return panel.verdict("rule-out range")
-    young, old = panel.judge("nt-probnp.age.young"), panel.judge("nt-probnp.age.old")
     if young.state == UNKNOWN:
         relevant = list(bands.values())
     else:

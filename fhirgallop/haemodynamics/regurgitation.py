@@ -7,11 +7,13 @@ limits were read and which are from memory.
 
 from __future__ import annotations
 
+from dataclasses import replace
 from decimal import Decimal
 
 from fhirgallop.haemodynamics.arithmetic import PI
 from fhirgallop.haemodynamics.classification import Panel, Verdict, classification, graded_by_measures
 from fhirgallop.haemodynamics.computation import Stop, computation
+from fhirgallop.haemodynamics.values import UNKNOWN
 
 _ELLIPTICAL = "mr.orifice.severe-elliptical"
 _LOW_FLOW = "mr.volume.severe-low-flow"
@@ -42,15 +44,21 @@ def regurgitant_fraction(regurgitant_volume_ml: Decimal, stroke_volume_ml: Decim
 
 @classification("mitral-regurgitation.severity")
 def mitral_severity(panel: Panel) -> Verdict:
-    """Severity of mitral regurgitation; ESC/EACTS has lower limits in secondary disease on two conditions."""
+    """Severity of mitral regurgitation.
+
+    ESC/EACTS has lower limits in secondary disease with an elliptical orifice or low flow; where mechanism or
+    condition is not recorded, such a limit stays unknown.
+    """
     special = {_ELLIPTICAL: "elliptical_orifice", _LOW_FLOW: "low_flow"}
     known = {row.id for row in panel.cutoffs.of(panel.scheme.id, panel.scheme.edition)}
-    secondary = panel.choice("mitral_mechanism") == "secondary"
-    extra = [
-        panel.judge(name)
-        for name, flag in special.items()
-        if name in known and secondary and panel.flag(flag)
-    ]
+    mechanism = panel.choice("mitral_mechanism")
+    extra = []
+    for name, condition in special.items():
+        if name not in known or mechanism == "primary" or panel.flag(condition) is False:
+            continue
+        criterion = panel.judge(name)
+        applies = mechanism == "secondary" and panel.flag(condition) is True
+        extra.append(criterion if applies or not criterion.met else replace(criterion, state=UNKNOWN))
     return graded_by_measures(panel, extra, frozenset(special))
 
 

@@ -1,98 +1,162 @@
 """How severe a stenosis is by its measurements: aortic (two editions), aortic calcium, mitral.
 
 The aortic difference between the editions: ACC/AHA 2020 calls a high velocity *or* a high mean gradient
-severe, ESC/EACTS 2021 asks for both and a small area. Area and gradient that disagree are marked, not resolved.
+severe, ESC/EACTS 2021 asks for both and a small area. Area and gradient that disagree are marked, not
+resolved.
 """
 
 from __future__ import annotations
+
+from collections.abc import Iterator
+from dataclasses import dataclass
+from itertools import product
 
 from fhirgallop.haemodynamics.classification import Panel, Verdict, classification
 from fhirgallop.haemodynamics.values import UNKNOWN, Criterion, Given, State, all_of, any_of
 
 _LADDER = ("at risk", "mild", "moderate", "severe", "very severe")
-_STAGES_ABOVE = ("C1", "C2", "D1", "D2", "D3")
+_SEVERE = 3
 _CONFIRM = "Low-gradient severe stenosis by definition of the table: flow and measurements need confirmation."
 _DISAGREE = "Area and gradient disagree: check flow (stroke volume index) and the outflow diameter."
+_PARTLY = "Some, not all, marks of high-gradient severe stenosis are met: look at flow and calcium."
+_NO_GRADIENT = "Velocity and mean gradient are both unknown."
+_BOTH = (True, False)
+_HALF_TIME_DISTURBANCES = (
+    "aortic_regurgitation_significant",
+    "stiff_ventricle",
+    "atrial_septal_defect",
+    "valvotomy_within_72_h",
+)
+
+
+@dataclass(frozen=True, slots=True)
+class _Gradients:
+    """Places on the ladder by velocity (0 to 4) and by mean gradient (1 to 4), None where unknown."""
+
+    velocity: int | None
+    mean: int | None
+    highest: int = _SEVERE + 1
+
+    @property
+    def top(self) -> int | None:
+        """The higher place of those known; a low mean gradient does not lift a normal velocity."""
+        if self.velocity is None or self.mean is None:
+            return self.velocity if self.mean is None else self.mean
+        return 0 if self.velocity == 0 and self.mean == 1 else max(self.velocity, self.mean)
+
+    @property
+    def disagree(self) -> bool:
+        """Both are known and stand on different places."""
+        return None not in (self.velocity, self.mean) and self.top != 0 and self.velocity != self.mean
+
+    def completions(self) -> Iterator[_Gradients]:
+        """Every way in which what is unknown could turn out."""
+        velocities = range(self.highest + 1) if self.velocity is None else (self.velocity,)
+        means = range(1, self.highest + 1) if self.mean is None else (self.mean,)
+        for velocity, mean in product(velocities, means):
+            yield _Gradients(velocity, mean, self.highest)
 
 
 @classification("aortic-stenosis.severity")
 def aortic_severity(panel: Panel) -> Verdict:
     """Severity from velocity, mean gradient and area; flow and ejection fraction settle discord."""
-    velocity = _level(panel, "as.velocity", ("mild", "moderate", "severe", "very-severe"))
-    mean = _mean_level(panel)
-    small = _small_area(panel, "as")
-    low_flow = any_of((panel.judge("as.flow.low").state, panel.judge("as.ejection-fraction.reduced").state))
+    gradients = _Gradients(
+        _level(panel, "as.velocity", ("mild", "moderate", "severe", "very-severe")),
+        _level(panel, "as.mean", ("moderate", "severe", "very-severe"), lowest=1),
+    )
+    small, strictly_small = _small_area(panel, "as")
+    low_flow = any_of(_states(panel, ("as.flow.low", "as.ejection-fraction.reduced")))
     panel.judge("as.dimensionless.severe")
-    levels = [level for level in (velocity, mean) if level is not None]
-    if not levels:
-        return panel.verdict(UNKNOWN, notes=("Velocity and mean gradient are both unknown.",))
-    top = max(levels)
-    apart = len(set(levels)) > 1 and not (velocity == 0 and mean == 1)
-    is_high = top >= _LADDER.index("severe")
-    discordant = apart or (small == "met" and not is_high) or (small == "unmet" and is_high)
-    if "indeterminate" in panel.scheme.grades:
-        return _esc_severity(panel, levels, small, discordant=discordant)
-    notes = (_DISAGREE,) if discordant and small != UNKNOWN else ()
-    if small == "met" and not is_high and len(levels) == 2 and low_flow == "met":
-        return panel.verdict("severe", discordant=True, notes=(_CONFIRM,))
-    possible = {_LADDER[top]}
-    if len(levels) < 2:
-        possible |= set(_LADDER[top:])
-    if small != "unmet" and not is_high and low_flow != "unmet":
-        possible.add("severe")
-    if velocity is None and mean == 1:
-        possible.add("at risk")
-    return panel.verdict(_LADDER[top], possible=possible, discordant=discordant, notes=notes)
+    decide = _severity_esc if "indeterminate" in panel.scheme.grades else _severity_acc
+    possible = {
+        decide(case, is_small, is_low)
+        for case in gradients.completions()
+        for is_small, is_low in product(_either(strictly_small), _either(low_flow))
+    }
+    top = gradients.top
+    if top is None:
+        return panel.verdict(UNKNOWN, possible=possible, notes=(_NO_GRADIENT,))
+    against = (small == "met" and top < _SEVERE) or (small == "unmet" and top >= _SEVERE)
+    found, notes = _known_severity(panel, gradients, small, low_flow)
+    return panel.verdict(
+        found,
+        possible=possible | ({found} - {UNKNOWN}),
+        discordant=against or gradients.disagree,
+        notes=(*((_DISAGREE,) if against else ()), *notes),
+    )
 
 
-def _esc_severity(panel: Panel, levels: list[int], small: State, *, discordant: bool) -> Verdict:
+def _known_severity(
+    panel: Panel, gradients: _Gradients, small: State, low_flow: State
+) -> tuple[str, tuple[str, ...]]:
+    """The grade of what was measured: the highest that a known measurement gives."""
+    top = gradients.top or 0
+    if "indeterminate" not in panel.scheme.grades:
+        is_complete = gradients.velocity is not None and gradients.mean is not None
+        if small == "met" and top < _SEVERE and low_flow == "met" and is_complete:
+            return "severe", (_CONFIRM,)
+        return _LADDER[top], ()
+    levels = (gradients.velocity, gradients.mean)
+    marks: list[State] = [UNKNOWN if n is None else "met" if n >= _SEVERE else "unmet" for n in levels]
+    marks.append(small)
+    if any_of(marks) != "met" or all_of(marks) == "met":
+        return _LADDER[top], ()
+    return (UNKNOWN, ()) if all_of(marks) == UNKNOWN else ("indeterminate", (_PARTLY,))
+
+
+def _severity_acc(gradients: _Gradients, is_small: bool, is_low_flow: bool) -> str:
+    top = gradients.top or 0
+    return "severe" if is_small and is_low_flow and top < _SEVERE else _LADDER[top]
+
+
+def _severity_esc(gradients: _Gradients, is_small: bool, is_low_flow: bool) -> str:  # noqa: ARG001 - one signature
     """High-gradient severe needs velocity, mean gradient and area; some of them only is indeterminate."""
-    marks = (*_states(panel, ("as.velocity.severe", "as.mean.severe")), small)
-    top = max(levels)
-    notes = (_DISAGREE,) if discordant and small != UNKNOWN else ()
-    if all_of(marks) == "met":
-        return panel.verdict(_LADDER[top])
-    if all_of(marks) == UNKNOWN and any_of(marks) == "met":
-        below = _LADDER[min(top, 2)]
-        possible = {below, "indeterminate", "severe", _LADDER[top]}
-        return panel.verdict(UNKNOWN, possible=possible, discordant=discordant, notes=notes)
-    if any_of(marks) == "met":
-        note = "Some, not all, marks of high-gradient severe stenosis are met: look at flow and calcium."
-        return panel.verdict(
-            "indeterminate", possible=("moderate", "indeterminate", "severe"), discordant=True, notes=(note,)
-        )
-    possible = {_LADDER[top]} | ({"indeterminate", "severe"} if UNKNOWN in marks else set())
-    return panel.verdict(_LADDER[top], possible=possible, discordant=discordant, notes=notes)
+    marks = ((gradients.velocity or 0) >= _SEVERE, (gradients.mean or 0) >= _SEVERE, is_small)
+    return "indeterminate" if any(marks) and not all(marks) else _LADDER[gradients.top or 0]
 
 
 @classification("aortic-stenosis.stage")
 def aortic_stage(panel: Panel) -> Verdict:
     """Stage A to D3 of ACC/AHA 2020 from measurements, ejection fraction, flow and symptoms."""
-    marks = (panel.judge("as-stage.velocity.severe").state, panel.judge("as-stage.mean.severe").state)
-    high = any_of(marks)
-    small = _small_area(panel, "as-stage")
-    reduced = panel.judge("as-stage.ejection-fraction.reduced").state
-    low_flow = panel.judge("as-stage.flow.low").state
+    gradients = _Gradients(
+        _level(panel, "as-stage.velocity", ("mild", "moderate", "severe")),
+        _level(panel, "as-stage.mean", ("moderate", "severe"), lowest=1),
+        highest=_SEVERE,
+    )
+    small, strictly_small = _small_area(panel, "as-stage")
     symptoms = panel.flag("symptoms")
-    below = _stage_by_gradient(panel)
-    if high == "met":
-        return _high_gradient_stage(panel, symptoms, reduced)
-    if below is None:
-        return panel.verdict(UNKNOWN, notes=("Velocity and mean gradient are both unknown.",))
-    low_gradient = _low_gradient_stages(symptoms, reduced, low_flow)
-    unknown_high = set(_STAGES_ABOVE) if high == UNKNOWN else set()
-    if small == "unmet":
-        return panel.verdict(below, possible={below} | unknown_high)
-    if small == UNKNOWN:
-        return panel.verdict(below, possible={below} | unknown_high | (low_gradient - {""}))
-    if high == UNKNOWN or len(low_gradient) > 1:
-        possible = (low_gradient - {""}) | unknown_high | {below}
-        return panel.verdict(UNKNOWN, possible=possible, discordant=True, notes=(_DISAGREE,))
-    stage = next(iter(low_gradient))
-    if not stage:
-        return panel.verdict(below, discordant=True, notes=(_DISAGREE,))
-    note = "Stage D2 also asks for confirmation at higher flow (from memory)." if stage == "D2" else _CONFIRM
-    return panel.verdict(stage, discordant=True, notes=(note,))
+    judged = _states(panel, ("as-stage.ejection-fraction.reduced", "as-stage.flow.low"))
+    others = list(product(_BOTH if symptoms is None else (symptoms,), *map(_either, judged)))
+    possible = {
+        _stage(case.top or 0, is_small, *other)
+        for case in gradients.completions()
+        for is_small in _either(strictly_small)
+        for other in others
+    }
+    top = gradients.top
+    if top is None:
+        return panel.verdict(UNKNOWN, possible=possible, notes=(_NO_GRADIENT,))
+    found = {_stage(top, small == "met", *other) for other in others}
+    against = (small == "met" and top < _SEVERE) or (small == "unmet" and top >= _SEVERE)
+    notes = (_DISAGREE,) if against else ()
+    is_complete = gradients.velocity is not None and gradients.mean is not None
+    if len(found) > 1 or (small == "met" and top < _SEVERE and not is_complete):
+        return panel.verdict(UNKNOWN, possible=possible, discordant=against, notes=notes)
+    stage = found.pop()
+    if stage in ("D2", "D3"):
+        notes = (_CONFIRM,)
+    return panel.verdict(
+        stage, possible=possible | {stage}, discordant=against or gradients.disagree, notes=notes
+    )
+
+
+def _stage(top: int, is_small: bool, symptoms: bool, is_reduced: bool, is_low_flow: bool) -> str:
+    """The stage when everything is known."""
+    if top >= _SEVERE:
+        return "D1" if symptoms else "C2" if is_reduced else "C1"
+    if is_small and symptoms and (is_reduced or is_low_flow):
+        return "D2" if is_reduced else "D3"
+    return ("A", "B mild", "B moderate")[top]
 
 
 @classification("aortic-stenosis.calcium")
@@ -103,94 +167,61 @@ def aortic_calcium(panel: Panel) -> Verdict:
     chosen = set(grades.values())
     if len(chosen) == 1:
         return panel.verdict(chosen.pop())
-    return panel.verdict(UNKNOWN, possible=chosen, notes=("The limits depend on sex.",))
+    return panel.verdict(UNKNOWN, possible=chosen - {UNKNOWN}, notes=("The limits depend on sex.",))
 
 
 @classification("mitral-stenosis.severity")
 def mitral_severity(panel: Panel) -> Verdict:
     """Severity from area and pressure half-time; the half-time is left out where it is known to mislead."""
-    disturbances = (
-        "aortic_regurgitation_significant",
-        "stiff_ventricle",
-        "atrial_septal_defect",
-        "valvotomy_within_72_h",
-    )
-    misleading = any(panel.flag(name) for name in disturbances)
+    disturbances = [panel.flag(name) for name in _HALF_TIME_DISTURBANCES]
     by_area = _mitral_level(panel.judge("ms.area.severe"), panel.judge("ms.area.very-severe"))
     by_time = _mitral_level(panel.judge("ms.half-time.severe"), panel.judge("ms.half-time.very-severe"))
     _judge_supporting_gradient(panel)
     notes: tuple[str, ...] = ()
-    if misleading and by_time is not None:
-        by_time, notes = None, ("The half-time is left out: it misleads in the conditions recorded.",)
+    if any(disturbances) and by_time is not None:
+        notes = ("The half-time is left out: it misleads in the conditions recorded.",)
+    used_time = None if any(disturbances) else by_time
     half_time = panel.number("mitral_half_time_ms")
     derived = (Given("mitral_area_by_half_time_cm2", 220 / half_time, "cm2"),) if half_time else ()
-    levels = [level for level in (by_area, by_time) if level is not None]
+    levels = [level for level in (by_area, used_time) if level is not None]
     grades = panel.scheme.grades
     if not levels:
         return panel.verdict(UNKNOWN, derived=derived, notes=notes)
-    top = max(levels)
-    possible = grades[top:] if by_area is None else grades[top : top + 1]
-    discordant = min(levels) != top
-    return panel.verdict(grades[top], possible=possible, discordant=discordant, derived=derived, notes=notes)
+    may_use_time = (False,) if any(disturbances) else _BOTH if None in disturbances else (True,)
+    places = range(len(grades))
+    possible = {
+        grades[max(area, time) if uses_time else area]
+        for area in (places if by_area is None else (by_area,))
+        for time in (places if by_time is None else (by_time,))
+        for uses_time in may_use_time
+    }
+    found, discordant = grades[max(levels)], len(set(levels)) > 1
+    return panel.verdict(found, possible=possible, discordant=discordant, derived=derived, notes=notes)
 
 
 def _states(panel: Panel, names: tuple[str, ...]) -> tuple[State, ...]:
     return tuple(panel.judge(name).state for name in names)
 
 
-def _level(panel: Panel, stem: str, steps: tuple[str, ...]) -> int | None:
-    """Place on the ladder by one measure: 0 when below every step, None when it is unknown."""
+def _level(panel: Panel, stem: str, steps: tuple[str, ...], *, lowest: int = 0) -> int | None:
+    """Place on the ladder by one measure, from `lowest` when below every step; None when it is unknown.
+
+    A low mean gradient alone cannot tell mild stenosis from none: its lowest place is mild.
+    """
     criteria = [panel.judge(f"{stem}.{step}") for step in steps]
     if criteria[0].state == UNKNOWN:
         return None
-    return sum(criterion.met for criterion in criteria)
+    return lowest + sum(criterion.met for criterion in criteria)
 
 
-def _mean_level(panel: Panel) -> int | None:
-    """As `_level`, but a low mean gradient alone cannot tell mild stenosis from none: it counts as mild."""
-    level = _level(panel, "as.mean", ("moderate", "severe", "very-severe"))
-    return None if level is None else level + 1
+def _small_area(panel: Panel, stem: str) -> tuple[State, State]:
+    """Small by area or indexed area: by those measured, and strictly, where a missing one leaves it open."""
+    states = _states(panel, (f"{stem}.area.severe", f"{stem}.area-index.severe"))
+    return any_of(state for state in states if state != UNKNOWN), any_of(states)
 
 
-def _small_area(panel: Panel, stem: str) -> State:
-    return any_of(
-        state
-        for state in _states(panel, (f"{stem}.area.severe", f"{stem}.area-index.severe"))
-        if state != UNKNOWN
-    )
-
-
-def _stage_by_gradient(panel: Panel) -> str | None:
-    moderate = _states(panel, ("as-stage.velocity.moderate", "as-stage.mean.moderate"))
-    mild = panel.judge("as-stage.velocity.mild")
-    if any_of(moderate) == "met":
-        return "B moderate"
-    if mild.state == UNKNOWN:
-        return "B mild" if panel.judge("as-stage.mean.moderate").state == "unmet" else None
-    return "B mild" if mild.met else "A"
-
-
-def _high_gradient_stage(panel: Panel, symptoms: bool | None, reduced: State) -> Verdict:
-    if symptoms:
-        return panel.verdict("D1")
-    without = {"met": ("C2",), "unmet": ("C1",), "unknown": ("C1", "C2")}[reduced]
-    if symptoms is None:
-        return panel.verdict(UNKNOWN, possible=(*without, "D1"), notes=("Symptoms are not recorded.",))
-    if len(without) == 1:
-        return panel.verdict(without[0])
-    return panel.verdict(UNKNOWN, possible=without, notes=("The ejection fraction is not recorded.",))
-
-
-def _low_gradient_stages(symptoms: bool | None, reduced: State, low_flow: State) -> set[str]:
-    """Stages open to a small area with a low gradient; the empty text stands for the stage by gradient."""
-    if symptoms is False:
-        return {""}
-    stages: set[str] = set() if symptoms else {""}
-    if reduced != "unmet":
-        stages.add("D2")
-    if reduced != "met":
-        stages |= {"met": {"D3"}, "unmet": {""}, "unknown": {"D3", ""}}[low_flow]
-    return stages
+def _either(state: State) -> tuple[bool, ...]:
+    return _BOTH if state == UNKNOWN else (state == "met",)
 
 
 def _calcium_grade(panel: Panel, sex: str) -> str:
