@@ -61,7 +61,7 @@ def check(node: Node, edition: Edition) -> Iterator[Issue]:
     elif definition.json == "string":
         yield from _text(node, definition, value, edition)
     elif definition.json == "integer":
-        yield from _range(node, definition.name, value)
+        yield from _range(node, definition.name, int(value))
     elif definition.json == "decimal" and edition.name == "R5":
         yield from _digits(node, value)
 
@@ -76,7 +76,7 @@ def has_json_kind(value: object, definition: TypeDef) -> bool:
     if isinstance(value, bool):
         return False
     if kind == "integer":
-        return isinstance(value, int)
+        return isinstance(value, int) or (isinstance(value, Decimal) and value.as_tuple().exponent == 0)
     return isinstance(value, (int, Decimal)) or (isinstance(value, float) and isfinite(value))
 
 

@@ -9,7 +9,6 @@ from __future__ import annotations
 
 import json
 import re
-from bisect import bisect_right
 from collections.abc import Iterable, Mapping
 from dataclasses import dataclass
 from decimal import Decimal
@@ -142,15 +141,17 @@ def has_lone_surrogate(value: Any) -> bool:
 def duplicates(text: bytes) -> list[tuple[Path, int, int]]:
     """Path of each object that holds a key twice, with line and column of the later key."""
     text = text.removeprefix(_BOM)
-    return [(path, *_position(text, offset)) for path, offset in repeated_keys(text)]
+    found = repeated_keys(text)
+    places = _positions(text, (offset for _, offset in found))
+    return [(path, *places[offset]) for path, offset in found]
 
 
 def locate(text: bytes, paths: Iterable[Path]) -> dict[Path, tuple[int, int]]:
     """Line and column (from 1) of the value at each path, in one pass over the text."""
     text = text.removeprefix(_BOM)
     found = offsets(text, paths)
-    lines = _Lines(text)
-    return {path: lines.position(offset) for path, offset in found.items()}
+    places = _positions(text, found.values())
+    return {path: places[offset] for path, offset in found.items()}
 
 
 def _nothing_lost(text: bytes, value: Any) -> bool:
@@ -178,20 +179,22 @@ def _reason(message: str) -> str:
 
 
 def _position(text: bytes, offset: int) -> tuple[int, int]:
-    return _Lines(text).position(offset)
+    return _positions(text, [offset])[offset]
 
 
-class _Lines:
-    """Turns byte offsets into line and column (in characters); the line ends are found once."""
-
-    def __init__(self, text: bytes) -> None:
-        self._text = text
-        self._starts = [0, *(m.end() for m in re.finditer(b"\n", text))]
-
-    def position(self, offset: int) -> tuple[int, int]:
-        line = bisect_right(self._starts, offset)
-        start = self._starts[line - 1]
-        return line, len(self._text[start:offset].decode(errors="replace")) + 1
+def _positions(text: bytes, offsets: Iterable[int]) -> dict[int, tuple[int, int]]:
+    """Line and column (in characters, from 1) of byte offsets, counted forward once over the text."""
+    found: dict[int, tuple[int, int]] = {}
+    line, at, column = 1, 0, 1
+    for offset in sorted(set(offsets)):
+        line += text.count(b"\n", at, offset)
+        start = text.rfind(b"\n", at, offset) + 1
+        if start:
+            at, column = start, 1
+        column += len(text[at:offset].decode(errors="replace"))
+        at = offset
+        found[offset] = (line, column)
+    return found
 
 
 class _Numbers:

@@ -1,7 +1,4 @@
-"""The order of a judgement: read, walk every node through the clauses, then profiles, then places in the text.
-
-This page is the one to read first: CLAUSES stand here in order, each in a module of its own.
-"""
+"""The order of a judgement: read, fast pass, else the walk through all clauses, then places in the text."""
 
 from __future__ import annotations
 
@@ -11,24 +8,9 @@ from dataclasses import replace
 from pathlib import Path
 from typing import Any
 
-from fhirgallop.conformance import (
-    bindings,
-    bundles,
-    cardinality,
-    contained,
-    extensions,
-    fast,
-    invariants,
-    primitives,
-    profiles,
-    references,
-    source,
-    structure,
-    vital_signs,
-    xhtml,
-)
+from fhirgallop.conformance import fast, source, structure, walk
 from fhirgallop.conformance.editions import Edition
-from fhirgallop.conformance.node import Node, Scope
+from fhirgallop.conformance.node import Node
 from fhirgallop.conformance.registry import Registry, registry
 from fhirgallop.conformance.source import Source
 from fhirgallop.outcome import Issue, ordered
@@ -60,7 +42,7 @@ def validate(
     known = registry(edition, tuple(Path(p) for p in packages))
     read = source.read(resource)
     if read.proved and not profiles:
-        settled = fast.settle(read.value, known, as_text=read.text is not None)
+        settled = fast.settle(read, known)
         if settled is not None:
             return ordered(settled)
     return thorough(read, known, profiles)
@@ -81,67 +63,10 @@ def thorough(read: Source, known: Registry, profiles: Sequence[str] = ()) -> lis
         return ordered(issues)
     if text is not None:
         issues.extend(_repeated(text, root, known.edition))
-    issues.extend(judge(root, known, profiles))
+    issues.extend(walk.judge(root, known, walk.scope_of(root, known), profiles))
     if text is not None:
         return ordered(_placed(issues, text, root))
     return ordered(issues)
-
-
-def judge(root: Node, known: Registry, named: Sequence[str] = ()) -> Iterator[Issue]:
-    """Issues of a resource that has been read: one walk over its nodes, each through all clauses."""
-    edition = known.edition
-    scope = Scope(edition, root, references.resolver(root, edition))
-    by_profile = profiles.Judge(known, scope)
-    stack = [root]
-    while stack:
-        node = stack.pop()
-        issues: list[Issue] = []
-        if isinstance(node.value, Mapping):
-            children = structure.open_node(node, edition, issues)
-            yield from _object_clauses(node, known, scope)
-            if node.resource is node:
-                yield from _resource_clauses(node, scope, by_profile, named if node is root else ())
-        else:
-            children = structure.open_primitive(node, edition, issues)
-            yield from _primitive_clauses(node, known, scope)
-        yield from issues
-        stack.extend(reversed(children))
-
-
-def _object_clauses(node: Node, known: Registry, scope: Scope) -> Iterator[Issue]:
-    edition = known.edition
-    yield from cardinality.check(node, edition)
-    yield from bindings.check(node, known)
-    if node.type_name == "Reference":
-        yield from references.check(node, edition, scope.resolve)
-    elif node.type_name == "Extension":
-        yield from extensions.check(node, known)
-    elif node.type_name == "Bundle.entry":
-        yield from bundles.check(node, edition)
-    yield from invariants.check(node, scope)
-
-
-def _resource_clauses(
-    node: Node, scope: Scope, by_profile: profiles.Judge, named: Sequence[str]
-) -> Iterator[Issue]:
-    yield from contained.check(node)
-    wanted = dict.fromkeys((*named, *profiles.declared(node), *vital_signs.profiles_for(node)))
-    for url in wanted:
-        yield from by_profile.check(node, url)
-
-
-def _primitive_clauses(node: Node, known: Registry, scope: Scope) -> Iterator[Issue]:
-    edition = known.edition
-    faults = list(primitives.check(node, edition))
-    yield from faults
-    if faults:
-        return
-    yield from bindings.check(node, known)
-    if node.type_name == "xhtml" and node.value is not None:
-        yield from xhtml.check(node.value, node.expression)
-    elif node.type_name == "canonical":
-        yield from references.check(node, edition, scope.resolve)
-    yield from invariants.check(node, scope)
 
 
 def _repeated(text: bytes, root: Node, edition: Edition) -> Iterator[Issue]:

@@ -12,6 +12,18 @@ from fhirgallop.conformance.editions.structures import _binding as binding_row
 
 Definition = Mapping[str, Any]
 
+_SD = "http://hl7.org/fhir/StructureDefinition/"
+# Places where the published definitions themselves (and the published examples) use these core extensions
+# against the context they declare: the use is normative text of ElementDefinition or of the artefact pages.
+FURTHER_CONTEXTS: Mapping[str, tuple[str, ...]] = {
+    _SD + "structuredefinition-fhir-type": ("ElementDefinition.type",),
+    _SD + "regex": ("ElementDefinition.type",),
+    _SD + "structuredefinition-normative-version": ("Element",),
+    _SD + "elementdefinition-bindingName": ("OperationDefinition.parameter.binding",),
+    _SD + "translation": ("ValueSet.expansion.contains",),
+    _SD + "valueset-concept-comments": ("CodeSystem.concept",),
+}
+
 
 def extension_rows(structures: Mapping[str, Definition]) -> dict[str, dict[str, Any]]:
     """A row for each extension definition, by canonical."""
@@ -34,7 +46,8 @@ def extension_row(definition: Definition) -> dict[str, Any]:
         if isinstance(c, Mapping)
     ]
     if contexts:
-        row["c"] = contexts
+        further = FURTHER_CONTEXTS.get(str(definition.get("url")), ())
+        row["c"] = contexts + [["element", path] for path in further]
     if elements[0].get("isModifier"):
         row["m"] = 1
     slices: dict[str, tuple[str, int, list[str]]] = {}
