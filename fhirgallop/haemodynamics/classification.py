@@ -143,8 +143,8 @@ class Classification:
         if scheme is None:
             raise SettingsError(f"{self.id} has the editions {', '.join(self.editions)}")
         entries, reasons = admit(self.id, self.accepts, (), given)
-        refused, cautions = weigh(self.conditions, entries)
-        reasons += refused
+        weighed = weigh(self.conditions, entries)
+        reasons += weighed.reasons
         if reasons:
             return Refusal(self.id, scheme.label, tuple(reasons))
         panel = Panel(scheme, entries, cutoffs or load().cutoffs)
@@ -162,7 +162,8 @@ class Classification:
             source=scheme.source,
             access=scheme.access,
             edition=scheme.edition,
-            caveats=(*scheme.cautions, *verdict.notes, *cautions),
+            caveats=(*scheme.cautions, *verdict.notes, *weighed.cautions),
+            unrecorded=weighed.unrecorded,
         )
 
     def __repr__(self) -> str:

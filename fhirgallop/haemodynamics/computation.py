@@ -78,8 +78,8 @@ class Computation:
         """
         spec = self.spec
         entries, reasons = admit(spec.id, self.accepts, spec.needs, given)
-        refused, cautions = weigh(self.conditions, entries)
-        reasons += refused
+        weighed = weigh(self.conditions, entries)
+        reasons += weighed.reasons
         if reasons:
             return Refusal(spec.id, spec.label, tuple(reasons))
         with working_precision():
@@ -98,7 +98,8 @@ class Computation:
             inputs=entries.given(),
             source=spec.source,
             access=spec.access,
-            caveats=(*spec.cautions, *noted.cautions, *cautions),
+            caveats=(*spec.cautions, *noted.cautions, *weighed.cautions),
+            unrecorded=weighed.unrecorded,
         )
 
     def __repr__(self) -> str:

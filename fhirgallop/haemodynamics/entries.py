@@ -115,25 +115,35 @@ def _checked(spec: Input, entry: Entry) -> Decimal | bool | str | Reason:
     return number
 
 
-def weigh(conditions: Iterable[Condition], entries: Entries) -> tuple[list[Reason], list[str]]:
-    """Reasons to refuse, and cautions to print, of the owner's conditions.
+@dataclass(frozen=True, slots=True)
+class Weighed:
+    """What the conditions of a computation or classification say about the entries."""
 
-    A condition that would refuse, on an entry nobody recorded, becomes a caution: unknown is not absent.
+    reasons: tuple[Reason, ...]
+    cautions: tuple[str, ...]
+    unrecorded: tuple[str, ...]
+
+
+def weigh(conditions: Iterable[Condition], entries: Entries) -> Weighed:
+    """Reasons to refuse, cautions to print, and what nobody recorded.
+
+    A condition that would refuse, on an entry nobody recorded, is named as such: unknown is not absent.
     """
     reasons: list[Reason] = []
     cautions: list[str] = []
+    unrecorded: list[str] = []
     for condition in conditions:
         value = entries.values.get(condition.input)
         if value is None or isinstance(value, str):
             if condition.effect == "refuse":
-                cautions.append(f"Not recorded: {load().inputs[condition.input].label}. {condition.text}")
+                unrecorded.append(f"{load().inputs[condition.input].label}: {condition.text}")
         elif on_side(value, condition.comparator, condition.value):
             if condition.effect == "refuse":
                 limit = f"refused when {condition.comparator} {_words(condition.value)}"
                 reasons.append(Reason("not-valid", condition.input, limit, condition.text))
             else:
                 cautions.append(condition.text)
-    return reasons, list(dict.fromkeys(cautions))
+    return Weighed(tuple(reasons), tuple(dict.fromkeys(cautions)), tuple(dict.fromkeys(unrecorded)))
 
 
 def _words(value: Decimal | bool) -> str:

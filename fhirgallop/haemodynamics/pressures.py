@@ -9,6 +9,7 @@ from decimal import Decimal
 
 from fhirgallop.haemodynamics.classification import Panel, Verdict, classification, graded_by_measures
 from fhirgallop.haemodynamics.computation import Noted, Stop, computation
+from fhirgallop.haemodynamics.values import UNKNOWN
 
 _WATER_TO_MERCURY = Decimal("1.35951")
 _STERNAL_ANGLE_CM = 5
@@ -74,3 +75,26 @@ def pulse_deficit(apical_rate_per_min: Decimal, radial_rate_per_min: Decimal) ->
 def pressure_category(panel: Panel) -> Verdict:
     """Category of one office reading; the higher of the systolic and the diastolic category counts."""
     return graded_by_measures(panel)
+
+
+@classification("pressure.pulse-class")
+def pulse_pressure_class(panel: Panel) -> Verdict:
+    """Narrow by its share of systolic, wide by its own size; transposed entries give no class."""
+    systolic, diastolic = panel.number("systolic_mmhg"), panel.number("diastolic_mmhg")
+    pulse = share = None
+    if systolic is not None and diastolic is not None and systolic > diastolic:
+        pulse = systolic - diastolic
+        share = pulse / systolic * 100
+    narrow, wide = panel.judge("pulse-pressure.narrow", share), panel.judge("pulse-pressure.wide", pulse)
+    if pulse is None:
+        return panel.verdict(UNKNOWN)
+    return panel.verdict("narrow" if narrow.met else "wide" if wide.met else "usual")
+
+
+@classification("pressure.end-diastolic")
+def end_diastolic(panel: Panel) -> Verdict:
+    """Left ventricular end-diastolic pressure against the limit of the chosen source (12, 15 or 16 mmHg)."""
+    raised = panel.judge("lvedp.raised")
+    if raised.state == UNKNOWN:
+        return panel.verdict(UNKNOWN)
+    return panel.verdict("raised" if raised.met else "not raised")

@@ -44,7 +44,8 @@ class Result:
         formula: the formula in words and signs.
         inputs: every quantity and condition that was given.
         source: publication; `access` says how it was known (seen, memory, definition, common practice).
-        caveats: limits that hold for this result, also conditions that were not recorded.
+        caveats: limits that hold for this result.
+        unrecorded: conditions under which it would have been refused, had anybody recorded them.
     """
 
     computation: str
@@ -56,8 +57,8 @@ class Result:
     inputs: tuple[Given, ...]
     source: str
     access: str
-    edition: str = ""
     caveats: tuple[str, ...] = ()
+    unrecorded: tuple[str, ...] = ()
 
     def shown(self) -> str:
         """The value rounded half up to the usual places; never use it to compute on."""
@@ -117,6 +118,7 @@ class Grade:
         possible: every grade that the missing measurements still leave open, `grade` among them.
         discordant: two measurements point to different grades; the higher one is reported.
         derived: numbers worked out on the way (a score, an area).
+        unrecorded: conditions under which it would have been refused, had anybody recorded them.
     """
 
     classification: str
@@ -131,6 +133,7 @@ class Grade:
     access: str
     edition: str
     caveats: tuple[str, ...]
+    unrecorded: tuple[str, ...]
 
     @property
     def known(self) -> bool:
@@ -171,7 +174,7 @@ def as_decimal(value: Number) -> Decimal | None:
         raise TypeError(f"a number is needed, not {type(value).__name__}")
     if isinstance(value, int) and value.bit_length() > _EXPONENT_LIMIT * 4:
         return None
-    number = Decimal(repr(value)) if isinstance(value, float) else Decimal(value)
+    number = Decimal(float.__repr__(value)) if isinstance(value, float) else Decimal(value)
     if not number.is_finite() or abs(number.adjusted()) > _EXPONENT_LIMIT:
         return None
     return Context(prec=28).plus(number)
