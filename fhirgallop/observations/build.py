@@ -12,12 +12,12 @@ from functools import cache
 from typing import Any
 
 from fhirgallop.exam.catalogue import Catalogue, load
-from fhirgallop.exam.entry import Entry, Measure
+from fhirgallop.exam.entry import Entry, Measure, Qualifier
 from fhirgallop.exam.exam import Exam, Party
 from fhirgallop.exam.moment import Moment
 from fhirgallop.exam.presence import Presence
 from fhirgallop.observations import absence, text
-from fhirgallop.observations.fragments import Fragments, Frame
+from fhirgallop.observations.fragments import SITE_AXIS, Fragments, Frame
 from fhirgallop.observations.identity import Identities, identifier
 
 
@@ -108,21 +108,25 @@ class ObservationBuilder:
         notes = _notes(entry)
         if notes:
             resource["note"] = notes
-        if frame.body_site:
-            resource["bodySite"] = frame.body_site
+        qualifiers, site = _site_apart(entry, frame)
+        body_site = self._fragments.answers[SITE_AXIS, site].concept if site else frame.body_site
+        if body_site:
+            resource["bodySite"] = body_site
         if frame.method:
             resource["method"] = frame.method
         words = f"{frame.label}: {value_words}"
-        if entry.qualifiers:
+        if site:
+            words = f"{words}, {self._fragments.answers[SITE_AXIS, site].words}"
+        if qualifiers:
             component = self._fragments.component
-            parts = [component(qualifier) for qualifier in entry.qualifiers]
+            parts = [component(qualifier) for qualifier in qualifiers]
             resource["component"] = [part for part, _ in parts]
             words = f"{words} ({'; '.join(said for _, said in parts)})"
         resource["text"] = text.narrative(words)
         return resource
 
     def _head(self, frame: Frame, entry: Entry, shared: Shared, urn: str) -> dict[str, Any]:
-        code = frame.code
+        code = frame.code if entry.presence is Presence.PRESENT else frame.code_unless_present
         if shared.local_system and entry.fields:
             local = {"system": shared.local_system, "code": text.code(entry.fields[0])}
             code = {"coding": [*code["coding"], local], "text": code["text"]}
@@ -214,6 +218,16 @@ def split_answers(entry: Entry) -> list[Entry]:
         replace(entry, answers=(answer,), instance=f"{entry.instance}/{answer}".lstrip("/"))
         for answer in entry.answers
     ]
+
+
+def _site_apart(entry: Entry, frame: Frame) -> tuple[Sequence[Qualifier], str]:
+    """The qualifiers that become components, and the one site that becomes the bodySite (or none)."""
+    if frame.sites_are_components or not entry.qualifiers:
+        return entry.qualifiers, ""
+    sites = [q.value for q in entry.qualifiers if q.axis == SITE_AXIS and q.value]
+    if len(sites) != 1:
+        return entry.qualifiers, ""
+    return [q for q in entry.qualifiers if q.axis != SITE_AXIS], sites[0]
 
 
 def _measured(target: dict[str, Any], frame: Frame, measure: Measure) -> str:

@@ -32,7 +32,8 @@ _PROFILE_OF_KIND: Final = {
     "panel": "exam-panel",
 }
 _METHOD_AXIS: Final = "method"
-_SITE_AXIS: Final = "site"
+SITE_AXIS: Final = "site"
+_MURMUR: Final = "murmur"
 _PRESENCE_AXIS: Final = "presence"
 
 
@@ -45,9 +46,11 @@ class Frame:
     meta: dict[str, Any]
     category: list[dict[str, Any]]
     code: dict[str, Any]
+    code_unless_present: dict[str, Any]
     method: dict[str, Any] | None
     body_site: dict[str, Any] | None
     unit: dict[str, str]
+    sites_are_components: bool
 
 
 @dataclass(frozen=True, slots=True)
@@ -102,9 +105,12 @@ class Fragments:
             {"profile": [systems.profile(profile)]},
             [{"coding": [category]}],
             self.concept(definition.codings, definition.label),
+            self.concept(_true_when_not_present(definition), definition.label),
             self._fixed(_METHOD_AXIS, definition.method),
-            self._fixed(_SITE_AXIS, definition.site),
+            self._fixed(SITE_AXIS, definition.site),
             {"unit": unit.printed, "system": systems.UCUM, "code": unit.code} if unit else {},
+            # the place of a murmur is a LOINC component, the place of anything else its bodySite
+            _MURMUR in (definition.id, definition.parent),
         )
 
     def _fixed(self, axis: str, value: str) -> dict[str, Any] | None:
@@ -140,6 +146,17 @@ class Fragments:
     def presence_said(self, presence: Presence, definition: FindingDefinition) -> tuple[Said, str]:
         """The coded presence and the interpretation code of a sign."""
         return self.presence[presence], absence.interpretation_code(presence, definition.pathological)
+
+
+def _true_when_not_present(definition: FindingDefinition) -> tuple[Coding, ...]:
+    """Codings that still hold when the sign is absent or uncertain.
+
+    A broader code holds of a present sign only: that there is no tumour plop does not mean that there are no
+    abnormal heart sounds.
+    """
+    if definition.kind != "sign":
+        return definition.codings
+    return tuple(coding for coding in definition.codings if coding.fit == "exact")
 
 
 def grade_code(axis: str, grade: Grade) -> str:

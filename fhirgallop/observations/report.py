@@ -12,7 +12,7 @@ from fhirgallop.observations import text
 from fhirgallop.observations.build import Shared
 from fhirgallop.observations.identity import identifier
 
-PANEL_ID: Final = "examination.cardiovascular"
+PANEL_ID: Final = "exam.cardiovascular"
 _REPORT_LABEL: Final = "Heart examination"
 # LOINC 10200-4 "Physical findings of Heart Narrative"
 _REPORT_CODE: Final = {

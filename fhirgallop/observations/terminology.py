@@ -1,4 +1,4 @@
-"""The catalogue as FHIR terminology: our code systems, their value sets, and the maps to SNOMED CT, LOINC and HPO.
+"""The catalogue as FHIR terminology: our code systems, value sets, and maps to SNOMED CT, LOINC and HPO.
 
 `python -m fhirgallop.observations.terminology` writes the files in terminology/codesystem and
 terminology/valuesets anew; a test holds them against the catalogue.
@@ -23,7 +23,8 @@ GRADE_DENOMINATORS: Final = (4, 6)
 _DATE: Final = "2026-12-01"
 _LICENCE: Final = "Apache-2.0"
 _FOREIGN_LICENCE: Final = (
-    "Contains identifiers of SNOMED CT (SNOMED International), LOINC (Regenstrief Institute) and HPO; see NOTICE.md."
+    "Contains identifiers of SNOMED CT (SNOMED International), LOINC (Regenstrief Institute) and HPO; "
+    "see NOTICE.md."
 )
 
 
@@ -97,7 +98,11 @@ def _add_targets(
     for coding in codings:
         if coding.confidence == "own":
             continue
-        target: dict[str, Any] = {"code": coding.code, "display": coding.display, **_relation(coding, edition)}
+        target: dict[str, Any] = {
+            "code": coding.code,
+            "display": coding.display,
+            **_relation(coding, edition),
+        }
         element = {"code": code, "display": label, "target": [target]}
         groups.setdefault((source, coding.system), []).append(element)
 

@@ -29,7 +29,6 @@ def escaped(text: str) -> str:
     return text.translate(_MARKUP)
 
 
-def narrative(*paragraphs: str) -> dict[str, str]:
-    """FHIR Narrative of paragraphs that are already escaped."""
-    body = "".join(f"<p>{paragraph}</p>" for paragraph in paragraphs)
-    return {"status": "generated", "div": f"{_DIV}{body}</div>"}
+def narrative(paragraph: str) -> dict[str, str]:
+    """FHIR Narrative of one paragraph that is already escaped."""
+    return {"status": "generated", "div": f"{_DIV}<p>{paragraph}</p></div>"}
