@@ -9,7 +9,8 @@ from fhirgallop.codes import units
 from fhirgallop.exam.catalogue import Catalogue
 from fhirgallop.exam.exam import Exam
 from fhirgallop.intake.record import LocalRecord
-from fhirgallop.mapping.compiled import Tools, reading_of
+from fhirgallop.mapping.compiled import reading_of
+from fhirgallop.mapping.preparation import Tools
 from fhirgallop.mapping.run import Run, UnknownValue
 from fhirgallop.mapping.template_map import TemplateMap
 from fhirgallop.outcome import Issue

@@ -2,56 +2,28 @@
 
 from __future__ import annotations
 
-from collections.abc import Callable
-from dataclasses import dataclass, replace
+from dataclasses import replace
 
-from fhirgallop.codes.units import UnitTable
-from fhirgallop.exam.catalogue import Catalogue
 from fhirgallop.exam.entry import Entry, Qualifier
 from fhirgallop.exam.presence import Presence
 from fhirgallop.intake.record import Field
 from fhirgallop.mapping import boxes
-from fhirgallop.mapping.boxes import NOTHING, Policy, Says
+from fhirgallop.mapping.boxes import NOTHING, Says
 from fhirgallop.mapping.conditions import test_of
 from fhirgallop.mapping.describing import Describes, constants, describer
-from fhirgallop.mapping.record_reading import RecordReader
+from fhirgallop.mapping.marks import own_notes, own_time
+from fhirgallop.mapping.naming import NamingLine
+from fhirgallop.mapping.preparation import TAKEN_OUT, Tools, when_blank
 from fhirgallop.mapping.run import LineReading, Run, Test, is_plain
-from fhirgallop.mapping.template_map import BlankMeans, Line, TemplateMap
-from fhirgallop.mapping.wordings import Blanks, words_of
-
-_BLANK_PRESENCE = {"absent": Presence.ABSENT, "not-examined": Presence.NOT_EXAMINED}
-# What the sender says of a single box in place of its value (HL7 v2 OBX-11 X and N).
-_TAKEN_OUT = {"cancelled": Presence.NOT_EXAMINABLE, "not-asked": Presence.NOT_EXAMINED}
-
-
-@dataclass(frozen=True, slots=True)
-class Tools:
-    """What all lines of one map share."""
-
-    catalogue: Catalogue
-    units: UnitTable
-    blanks: Blanks
-    policy: Policy
-    record: RecordReader
-    parts: dict[str, int]
-
-    @classmethod
-    def of(cls, template: TemplateMap, catalogue: Catalogue, units: UnitTable) -> Tools:
-        """The tools for one map."""
-        blanks = Blanks(template.blanks)
-        parts: dict[str, int] = {}
-        for line in template.lines:
-            if line.number and line.number.split:
-                parts[line.field] = max(parts.get(line.field, 0), line.number.part)
-        policy = Policy(template.unknown_values == "keep-as-text", bool(template.local_system))
-        return cls(catalogue, units, blanks, policy, RecordReader(template.record, blanks), parts)
+from fhirgallop.mapping.template_map import Line
+from fhirgallop.mapping.wordings import words_of
 
 
 def reading_of(line: Line, tools: Tools) -> LineReading:
     """The function that reads one line."""
     test = test_of(line.when, tools.blanks) if line.when else None
     if line.named:
-        return _guarded(_NamingLine(line, tools).read, test)
+        return _guarded(NamingLine(line, tools).read, test)
     if not line.finding:
         return _guarded(_remark(line, tools), test)
     return _guarded(_FindingLine(line, tools).reading(), test)
@@ -72,14 +44,12 @@ def _guarded(reading: LineReading, test: Test | None) -> LineReading:
 def _remark(line: Line, tools: Tools) -> LineReading:
     def read(run: Run) -> None:
         run.settled.add(line.note)
-        run.notes += [words_of(value) for value in tools.blanks.filled(run.fields.get(line.note))]
+        field = run.fields.get(line.note)
+        if field is not None and field.status not in ("entered-in-error", *TAKEN_OUT):
+            run.notes += [words_of(value) for value in tools.blanks.filled(field)]
+            run.notes += own_notes(run, field)
 
     return read
-
-
-def _when_blank(line: Line, finding: str, means: BlankMeans) -> Entry | None:
-    presence = _BLANK_PRESENCE.get(means)
-    return Entry(finding, presence, instance=line.instance, fields=(line.field,)) if presence else None
 
 
 class _FindingLine:
@@ -88,7 +58,7 @@ class _FindingLine:
     def __init__(self, line: Line, tools: Tools) -> None:
         self._line = line
         self._tools = tools
-        self._blank = _when_blank(line, line.finding, line.blank_means)
+        self._blank = when_blank(line, line.finding, line.blank_means)
         self._constants = constants(line.qualifiers)
         self._describers: list[tuple[str, Describes]] = [
             (source.field, describer(source, tools.policy)) for source in line.qualifiers if source.field
@@ -157,11 +127,13 @@ class _FindingLine:
             self._put(run, entry, field)
         elif len(run.issues) > before:
             run.settled.update(self._details)
+        elif field.notes:
+            run.notes += own_notes(run, field)
 
     def _marked(self, run: Run, field: Field, says: Says) -> None:
         """A box that says more than its values: a status, a time, or remarks of its own."""
         line = self._line
-        presence = _TAKEN_OUT.get(field.status)
+        presence = TAKEN_OUT.get(field.status)
         values = self._tools.blanks.filled(field)
         if presence:
             reason = "" if presence is Presence.NOT_EXAMINED else "Cancelled by the sender."
@@ -177,7 +149,7 @@ class _FindingLine:
         elif self._blank:
             self._put(run, self._blank, field)
         elif field.notes:
-            run.notes += field.notes
+            run.notes += own_notes(run, field)
 
     def _withdrawn(self, run: Run, field: Field, says: Says) -> Entry:
         """What was taken back need not be readable any more."""
@@ -217,8 +189,8 @@ class _FindingLine:
         self._note(run, fields, notes)
         time = ""
         if carrier is not None and not plain:
-            time = _own_time(run, carrier, self._tools.record)
-            notes += _own_notes(run, carrier)
+            time = own_time(run, carrier, self._tools.record)
+            notes += own_notes(run, carrier)
         run.entries.append(
             Entry(
                 base.finding,
@@ -259,7 +231,7 @@ class _FindingLine:
             run.issue("information", "informational", "map-detail-withdrawn", words, name)
             return
         if not is_plain(field):
-            notes += _own_notes(run, field)
+            notes += own_notes(run, field)
         fields.append(name)
         qualifiers += describes(run, values)
 
@@ -270,100 +242,6 @@ class _FindingLine:
             if values := self._tools.blanks.filled(run.fields.get(name)):
                 notes += [words_of(value) for value in values]
                 fields.append(name)
-
-
-class _NamingLine:
-    """A line about a box that names several findings."""
-
-    def __init__(self, line: Line, tools: Tools) -> None:
-        if line.named is None:  # pragma: no cover  (the caller asks only for such lines)
-            raise ValueError(line)
-        self._line = line
-        self._tools = tools
-        self._named = line.named
-        self._table = boxes.lookup(line, line.named, tools.policy)
-        self._message = boxes.unknown_text(line.named, kept=tools.policy.keep_unknown)
-        findings = [finding for finding, _ in line.gives()]
-        self._blank = self._all(findings, line.blank_means)
-        self._unlisted = self._all(findings, line.unlisted)
-
-    def _all(self, findings: list[str], means: BlankMeans) -> list[Entry]:
-        return [entry for finding in findings if (entry := _when_blank(self._line, finding, means))]
-
-    def read(self, run: Run) -> None:
-        """Reads the box."""
-        line, name = self._line, self._line.field
-        run.settled.add(name)
-        field = run.fields.get(name)
-        if field is None and run.record.form == "table":
-            return
-        found = self._found(run, field)
-        notes: tuple[str, ...] = ()
-        if line.note:
-            run.settled.add(line.note)
-            notes = tuple(words_of(value) for value in self._tools.blanks.filled(run.fields.get(line.note)))
-        if field is not None and not is_plain(field):
-            notes += tuple(_own_notes(run, field))
-            time = _own_time(run, field, self._tools.record)
-            withdrawn = field.status == "entered-in-error"
-            found = [replace(entry, time=time, withdrawn=withdrawn) for entry in found]
-        if notes and found:
-            found[0] = replace(found[0], notes=notes)
-        else:
-            run.notes += notes
-        run.entries += found
-
-    def _found(self, run: Run, field: Field | None) -> list[Entry]:
-        if field is not None and field.status in _TAKEN_OUT:
-            means: Callable[[str], Entry] = lambda finding: Entry(  # noqa: E731 - one expression, used once
-                finding, _TAKEN_OUT[field.status], instance=self._line.instance, fields=(self._line.field,)
-            )
-            return [means(finding) for finding, _ in self._line.gives()]
-        values = self._tools.blanks.filled(field)
-        if not values:
-            return list(self._blank)
-        found: dict[Entry, None] = {}
-        for token in boxes.tokens(values, self._named.separator):
-            entry = self._table.find(token)
-            if isinstance(entry, Entry):
-                found[entry] = None
-            elif entry is None:
-                self._unknown(run, token)
-        named = {entry.finding for entry in found}
-        return [*found, *(entry for entry in self._unlisted if entry.finding not in named)]
-
-    def _unknown(self, run: Run, token: object) -> None:
-        keep = self._tools.policy.keep_unknown
-        run.unknown_value("warning" if keep else "error", self._message, self._line.field, token)  # type: ignore[arg-type]
-        if keep:
-            run.notes.append(f"{self._line.field}: {words_of(token)}")  # type: ignore[arg-type]
-
-
-def _own_time(run: Run, field: Field, record: RecordReader) -> str:
-    """The box's own time where it differs from the examination's."""
-    if not field.time.strip():
-        return ""
-    moment = record.moment(run, field.time, field.name)
-    return "" if moment is None or moment == run.moment else moment.start
-
-
-def _own_notes(run: Run, field: Field) -> list[str]:
-    """Remarks of the box, once in the whole examination; method and site travel in words."""
-    if field.name in run.noted:
-        return []
-    run.noted.add(field.name)
-    notes = [note for note in field.notes if note.strip()]
-    if field.method.strip():
-        notes.append(f"Method as sent: {field.method.strip()}")
-    if field.site.strip():
-        notes.append(f"Body site as sent: {field.site.strip()}")
-    if field.performer.strip() and field.performer.strip() != run.record.header.examiner:
-        words = (
-            "This entry names an examiner of its own, which was not kept; name the examiner "
-            "of the examination."
-        )
-        run.issue("information", "informational", "map-performer-unread", words, field.name)
-    return notes
 
 
 def _in_order(qualifiers: list[Qualifier]) -> tuple[Qualifier, ...]:

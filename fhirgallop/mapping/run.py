@@ -8,7 +8,7 @@ from dataclasses import dataclass
 from fhirgallop.exam.entry import Entry
 from fhirgallop.exam.moment import Moment
 from fhirgallop.intake.record import Field, LocalRecord, Value
-from fhirgallop.mapping.wordings import Blanks, words_of
+from fhirgallop.mapping.wordings import words_of
 from fhirgallop.outcome import Issue, Severity
 
 
@@ -58,6 +58,3 @@ Test = Callable[[Run], bool]
 def is_plain(field: Field) -> bool:
     """True when a field says nothing but its values."""
     return not (field.status or field.time or field.notes or field.method or field.site or field.performer)
-
-
-__all__ = ["Blanks", "LineReading", "Run", "Test", "UnknownValue", "is_plain"]
