@@ -1,0 +1,66 @@
+"""How the benchmarks measure: candidates interleaved, a ratio a round, the median over rounds.
+
+The machines are noisy: only ratios within one run mean anything.
+"""
+
+from __future__ import annotations
+
+import gc
+import statistics
+import time
+from collections.abc import Callable, Mapping
+from dataclasses import dataclass
+
+
+@dataclass(frozen=True)
+class Row:
+    """One line of the table: what was measured, the figure, and the goal it is held against."""
+
+    what: str
+    figure: float
+    unit: str
+    goal: str
+    holds: bool
+
+    def __str__(self) -> str:
+        return (
+            f"| {self.what} | {self.figure:.3g} {self.unit} | {self.goal} | {'yes' if self.holds else 'NO'} |"
+        )
+
+
+def interleaved(
+    candidates: Mapping[str, Callable[[], object]], *, rounds: int = 15, calls: int = 100
+) -> dict[str, list[float]]:
+    """Seconds a call of every candidate, once a round, in turn."""
+    times: dict[str, list[float]] = {name: [] for name in candidates}
+    for candidate in candidates.values():
+        candidate()
+    was_enabled = gc.isenabled()
+    gc.disable()
+    try:
+        for _ in range(rounds):
+            for name, candidate in candidates.items():
+                start = time.perf_counter()
+                for _ in range(calls):
+                    candidate()
+                times[name].append((time.perf_counter() - start) / calls)
+            gc.collect()
+    finally:
+        if was_enabled:
+            gc.enable()
+    return times
+
+
+def ratio(times: Mapping[str, list[float]], above: str, below: str) -> float:
+    """Median over rounds of `above` / `below`."""
+    return statistics.median(a / b for a, b in zip(times[above], times[below], strict=True))
+
+
+def at_most(what: str, figure: float, limit: float, unit: str = "x") -> Row:
+    """A row whose goal is an upper limit."""
+    return Row(what, figure, unit, f"at most {limit:g}", figure <= limit)
+
+
+def at_least(what: str, figure: float, limit: float, unit: str = "x") -> Row:
+    """A row whose goal is a lower limit."""
+    return Row(what, figure, unit, f"at least {limit:g}", figure >= limit)
