@@ -133,6 +133,9 @@ class _Flattener:
             if not isinstance(key, str) or not key or len(name) > self._limits.name:
                 text = f"A name is empty or longer than {self._limits.name} characters; name each field."
                 self._fault("structure", "record-bad-name", text, str(name)[:64])
+            elif type(inner) is str and len(inner) <= self._limits.text and name not in self.fields:
+                # the common case, without the detours of the others
+                self.fields[name] = Field(name, (inner,) if inner and not inner.isspace() else ())
             else:
                 self._entry(name, inner, depth)
 
