@@ -22,6 +22,13 @@ def _issue(severity: Severity, rule: str, text: str, *entries: Entry, code: str 
     return Issue(severity, code, rule, text, field=", ".join(fields))
 
 
+def nothing_entered(exam: Exam, _catalogue: Catalogue) -> Iterator[Issue]:
+    """An examination in which nothing was recorded."""
+    if not exam.entries:
+        text = "No finding is recorded in this examination; only an empty report is written."
+        yield _issue("warning", "exam-without-entries", text)
+
+
 def present_and_absent(exam: Exam, catalogue: Catalogue) -> Iterator[Issue]:
     """One finding, same instance, entered as present and as absent."""
     first: dict[tuple[str, str], Entry] = {}
@@ -129,6 +136,7 @@ def implausible_value(exam: Exam, catalogue: Catalogue) -> Iterator[Issue]:
 
 
 CLAUSES: Final[tuple[Callable[[Exam, Catalogue], Iterator[Issue]], ...]] = (
+    nothing_entered,
     present_and_absent,
     kind_present_parent_absent,
     qualified_but_not_present,

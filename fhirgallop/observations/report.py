@@ -40,8 +40,9 @@ def panel(
         "code": {"coding": codings, "text": definition.label},
         **_common(shared),
         "performer": shared.performer,
-        "hasMember": [{"reference": member} for member in members],
     }
+    if members:
+        resource["hasMember"] = [{"reference": member} for member in members]
     return urn, resource
 
 
