@@ -1,0 +1,98 @@
+"""Contradictions inside one examination are found, and plain examinations are left in peace."""
+
+from __future__ import annotations
+
+from decimal import Decimal
+
+import pytest
+
+from fhirgallop.exam.catalogue import load
+from fhirgallop.exam.checks import check
+from fhirgallop.exam.entry import Entry, Grade, Measure, Qualifier
+from fhirgallop.exam.exam import Exam, Party
+from fhirgallop.exam.moment import Moment
+from fhirgallop.exam.presence import Presence
+
+CATALOGUE = load()
+
+
+def pressure(finding, value, instance=""):
+    return Entry(finding, measure=Measure(Decimal(value), "mm[Hg]"), instance=instance)
+
+
+def rules(*entries):
+    exam = Exam(Party("P-1"), "E-1", "", Moment("2026-11-30"), entries)
+    return [issue.rule for issue in check(exam, CATALOGUE)]
+
+
+grade_3 = Qualifier("grade", grade=Grade(3, 3, 6))
+
+FAULTS = [
+    ((), ["exam-without-entries"]),
+    (
+        (Entry("heart-sound.s4"), Entry("heart-sound.s4", Presence.ABSENT)),
+        ["exam-present-and-absent"],
+    ),
+    ((Entry("murmur", Presence.ABSENT), Entry("murmur.systolic")), ["exam-kind-present-whole-absent"]),
+    (
+        (Entry("murmur.systolic", Presence.ABSENT, qualifiers=(grade_3,)),),
+        ["exam-absent-but-described"],
+    ),
+    (
+        (Entry("murmur.systolic", qualifiers=(Qualifier("grade", grade=Grade(7, 7, 6)),)),),
+        ["exam-grade-range"],
+    ),
+    (
+        (Entry("murmur.systolic", qualifiers=(Qualifier("grade", grade=Grade(3, 2, 6)),)),),
+        ["exam-grade-range"],
+    ),
+    ((Entry("heart-sound.s4", qualifiers=(grade_3,)),), ["exam-qualifier-does-not-fit"]),
+    (
+        (pressure("pressure.systolic", 80), pressure("pressure.diastolic", 120)),
+        ["exam-diastolic-above-systolic"],
+    ),
+    ((pressure("pressure.systolic", 1280),), ["exam-implausible-value"]),
+    ((pressure("pressure.systolic", 120), pressure("pressure.systolic", 130)), ["exam-entered-twice"]),
+]
+
+
+@pytest.mark.parametrize(("entries", "expected"), FAULTS)
+def test_a_contradiction_is_found(entries, expected):
+    assert rules(*entries) == expected
+
+
+PLAIN = [
+    (Entry("heart-sound.s4"), Entry("heart-sound.s3", Presence.ABSENT)),
+    (
+        Entry("murmur"),
+        Entry("murmur.systolic", qualifiers=(grade_3,)),
+        Entry("murmur.diastolic", Presence.ABSENT),
+    ),
+    (Entry("murmur", Presence.ABSENT), Entry("murmur.systolic", Presence.NOT_EXAMINED)),
+    (Entry("heart-sound.s4", Presence.ABSENT, qualifiers=(Qualifier("chamber", "left"),)),),
+    (pressure("pressure.systolic", 120), pressure("pressure.diastolic", 80)),
+    (pressure("pressure.systolic", 120, "left"), pressure("pressure.systolic", 130, "right")),
+    (Entry("murmur.systolic", instance="1"), Entry("murmur.systolic", Presence.ABSENT, instance="2")),
+]
+
+
+@pytest.mark.parametrize("entries", PLAIN)
+def test_a_plain_examination_is_left_in_peace(entries):
+    assert rules(*entries) == []
+
+
+def test_an_implausible_value_is_only_a_warning_and_names_no_number():
+    exam = Exam(Party("P-1"), "E-1", "", Moment("2026"), (pressure("pressure.systolic", 1280),))
+    (issue,) = check(exam, CATALOGUE)
+    assert issue.severity == "warning"
+    assert "1280" not in issue.text
+
+
+def test_the_local_fields_are_named():
+    entries = (
+        Entry("heart-sound.s4", fields=("s4_box",)),
+        Entry("heart-sound.s4", Presence.ABSENT, fields=("gallop",)),
+    )
+    exam = Exam(Party("P-1"), "E-1", "", Moment("2026"), entries)
+    (issue,) = check(exam, CATALOGUE)
+    assert issue.field == "s4_box, gallop"
