@@ -133,9 +133,19 @@ _ROWS = (
         "a missing maximum, which is allowed, gives an empty result",
     ),
     Correction(
+        "binding.empty() or type.code.empty() or type.select((code = 'code') or (code = 'Coding') or (code='CodeableConcept') or (code = 'Quantity') or (code = 'string') or (code = 'uri')).exists()",
+        "binding.empty() or type.code.empty() or type.where(code = 'code' or code = 'Coding' or code = 'CodeableConcept' or code = 'CodeableReference' or code = 'Quantity' or code = 'Duration' or code = 'string' or code = 'uri').exists()",
+        "select() keeps the comparisons that are false, so that the rule never bites; CodeableReference, which is bound too, is not named",
+    ),
+    Correction(
+        "binding.empty() or type.code.empty() or type.select((code = 'code') or (code = 'Coding') or (code='CodeableConcept') or (code = 'Quantity') or (code = 'string') or (code = 'uri') or (code = 'Duration')).exists()",
+        "binding.empty() or type.code.empty() or type.where(code = 'code' or code = 'Coding' or code = 'CodeableConcept' or code = 'CodeableReference' or code = 'Quantity' or code = 'Duration' or code = 'string' or code = 'uri').exists()",
+        "select() keeps the comparisons that are false, so that the rule never bites; CodeableReference, which is bound too, is not named",
+    ),
+    Correction(
         "binding.empty() or type.code.empty() or type.code.contains(\":\") or type.select((code = 'code') or (code = 'Coding') or (code='CodeableConcept') or (code = 'Quantity') or (code = 'string') or (code = 'uri') or (code = 'Duration')).exists()",
-        "binding.empty() or type.code.empty() or type.code.where(contains(':')).exists() or type.select((code = 'code') or (code = 'Coding') or (code='CodeableConcept') or (code = 'Quantity') or (code = 'string') or (code = 'uri') or (code = 'Duration')).exists()",
-        "double quotes make no string, and contains() takes one text while there may be several types",
+        "binding.empty() or type.code.empty() or type.code.where(contains(':')).exists() or type.where(code = 'code' or code = 'Coding' or code = 'CodeableConcept' or code = 'CodeableReference' or code = 'Quantity' or code = 'Duration' or code = 'string' or code = 'uri').exists()",
+        "double quotes make no string, contains() takes one text; select() keeps the comparisons that are false, so that the rule never bites; CodeableReference, which is bound too, is not named",
     ),
     Correction(
         "mustHaveValue.value implies valueAlternatives.empty()",
@@ -179,7 +189,7 @@ _ROWS = (
     ),
     Correction(
         "composition.exists() implies (composition.resolve().section.entry.reference.where(resolve() is Observation) in (result.reference|result.reference.resolve().hasMember.reference))",
-        "composition.exists() implies composition.resolve().section.entry.reference.where(resolve() is Observation).subsetOf(result.reference|result.reference.resolve().hasMember.reference)",
+        "composition.exists() implies composition.resolve().section.entry.reference.where(resolve() is Observation).all($this in %context.result.reference or $this in %context.result.reference.resolve().hasMember.reference)",
         "`in` takes one value, a composition refers to several",
     ),
     Correction(
@@ -211,6 +221,11 @@ _ROWS = (
         "($this as dateTime).toString().length() >= 8",
         "$this is dateTime implies ($this.hasValue().not() or $this.toString().length() >= 8)",
         "a Period, which is allowed, gives an empty result",
+    ),
+    Correction(
+        "($this is Citation or $this is Evidence or $this is EvidenceReport or $this is EvidenceVariable or $this is MedicinalProductDefinition or $this is PackagedProductDefinition or $this is AdministrableProductDefinition or $this is Ingredient or $this is ClinicalUseDefinition or $this is RegulatedAuthorization or $this is SubstanceDefinition or $this is SubscriptionStatus or $this is SubscriptionTopic) implies (%resource is Citation or %resource is Evidence or %resource is EvidenceReport or %resource is EvidenceVariable or %resource is MedicinalProductDefinition or %resource is PackagedProductDefinition or %resource is AdministrableProductDefinition or %resource is Ingredient or %resource is ClinicalUseDefinition or %resource is RegulatedAuthorization or %resource is SubstanceDefinition or %resource is SubscriptionStatus or %resource is SubscriptionTopic)",
+        "($this is Citation or $this is Evidence or $this is EvidenceReport or $this is EvidenceVariable or $this is MedicinalProductDefinition or $this is PackagedProductDefinition or $this is AdministrableProductDefinition or $this is Ingredient or $this is ClinicalUseDefinition or $this is RegulatedAuthorization or $this is SubstanceDefinition or $this is SubscriptionStatus or $this is SubscriptionTopic) implies (%rootResource is Citation or %rootResource is Evidence or %rootResource is EvidenceReport or %rootResource is EvidenceVariable or %rootResource is MedicinalProductDefinition or %rootResource is PackagedProductDefinition or %rootResource is AdministrableProductDefinition or %rootResource is Ingredient or %rootResource is ClinicalUseDefinition or %rootResource is RegulatedAuthorization or %rootResource is SubstanceDefinition or %rootResource is SubscriptionStatus or %rootResource is SubscriptionTopic)",
+        "inside a contained resource %resource is that resource; the container is meant",
     ),
 )
 

@@ -94,8 +94,8 @@ def _member_of_primitive(item: Item, name: str, out: Collection) -> None:
 def _add(owner: Item, key: str, type_name: str, value: Any, companion: Any, out: Collection) -> None:
     """Adds one value, or each one of an array with its companion."""
     if isinstance(value, list) or isinstance(companion, list):
-        values = value if isinstance(value, list) else []
-        companions = companion if isinstance(companion, list) else []
+        values = value if isinstance(value, list) else [value]
+        companions = companion if isinstance(companion, list) else [companion]
         for index in range(max(len(values), len(companions))):
             part = values[index] if index < len(values) else None
             beside = companions[index] if index < len(companions) else None
