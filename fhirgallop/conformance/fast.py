@@ -8,7 +8,7 @@ issues returned, as the thorough pass would say; whatever is refused may still b
 from __future__ import annotations
 
 import re
-from collections.abc import Iterator, Mapping
+from collections.abc import Mapping
 from functools import lru_cache
 from typing import Any
 
@@ -19,7 +19,7 @@ from fhirgallop.conformance.fast_invariants import REFUSED
 from fhirgallop.conformance.fast_schema import ID, UUID, SchemaBuilder
 from fhirgallop.conformance.node import Node
 from fhirgallop.conformance.registry import Registry
-from fhirgallop.conformance.source import Source, exact
+from fhirgallop.conformance.source import exact
 from fhirgallop.outcome import Issue
 
 MAX_ALTERNATIVES = 12
@@ -28,44 +28,50 @@ _DOM_6 = "dom-6"
 _LONG = re.compile(rb"[0-9.]{17}")
 
 
-def settle(read: Source, known: Registry) -> list[Issue] | None:
+def settle(value: Any, known: Registry, text: bytes | None = None, *, same: bool = False) -> list[Issue] | None:
     """All issues of a resource that is plainly right (only missing narratives, then); None when in doubt.
 
     Args:
-        read: what was read, proved to have no key twice.
+        value: the parsed resource, in which it is proved that no key stood twice.
         known: the definitions.
+        text: the text it was read from, if it was.
+        same: whether that text is the value written again, byte for byte.
     """
-    value = read.value
-    if not isinstance(value, dict):
+    kind = value.get("resourceType") if type(value) is dict else None
+    if type(kind) is not str:
         return None
-    kind = value.get("resourceType")
-    if not isinstance(kind, str):
-        return None
-    if read.text is not None and known.edition.name == "R5" and not _short_numbers(read.text):
-        return None
+    if text is not None and not same and known.edition.name == "R5" and _LONG.search(text):
+        return None  # R5 limits the digits of a number, which a float has lost
     if kind == "Bundle":
-        missing = _bundle(read, value, known)
+        missing = _bundle(value, known, text)
     else:
-        validator = _resource(known, kind)
-        missing = [] if validator is not None and _valid(validator, value) else None
-        if missing is not None and "text" not in value and kind not in _no_narrative(known):
-            missing = [kind]
-    if missing is None:
-        return None
+        validator = _fitting(known, kind, tuple(value))
+        if validator is None or not _valid(validator, value):
+            return None
+        missing = [] if "text" in value or kind in _no_narrative(known) else [kind]
     if not missing:
-        return []
-    if read.text is not None:
-        return None  # the place in the text has to be found
-    return _without_narrative(value, missing, known)
+        return missing
+    # the place of a missing narrative in a text has to be found
+    return _without_narrative(value, missing, known) if text is None else None
 
 
-def accepts(value: Mapping[str, Any], known: Registry) -> bool:
-    """Whether the schema of its type takes a single resource."""
-    validator = _resource(known, str(value.get("resourceType")))
-    return validator is not None and _valid(validator, value)
+@lru_cache(maxsize=4096)
+def _fitting(known: Registry, kind: str, keys: tuple[str, ...]) -> Draft4Validator | None:
+    """The validator of a resource type, if these keys may stand together at its root.
+
+    That is settled once for each set of keys; None too for a type that no schema can settle.
+    """
+    presence = _presence(known, kind)
+    return _resource(known, kind) if presence is not None and _valid(presence, dict.fromkeys(keys)) else None
 
 
-def _bundle(read: Source, value: dict[str, Any], known: Registry) -> list[str] | None:
+@lru_cache(maxsize=512)
+def _presence(known: Registry, kind: str) -> Draft4Validator | None:
+    schema = SchemaBuilder(known).presence(kind) if kind in known.edition.resources else REFUSED
+    return None if schema is REFUSED else _compiled(schema)
+
+
+def _bundle(value: dict[str, Any], known: Registry, text: bytes | None) -> list[str] | None:
     """Expressions of the resources without narrative; None when something in the Bundle is in doubt."""
     asks = _KINDS.get(value.get("type", "")) if isinstance(value.get("type"), str) else None
     entries = value.get("entry")
@@ -90,18 +96,17 @@ def _bundle(read: Source, value: dict[str, Any], known: Registry) -> list[str] |
             return None
         doubtful = found
     skip = frozenset(doubtful)
+    missing: list[str] = []
     for index, (entry, resource, kind) in enumerate(zip(entries, resources, kinds, strict=True)):
         if not _consistent(entry, resource, kind):
             return None
-        if index not in skip and not _targets_right(resource, kind, urls, known):
+        if index in skip:
+            continue
+        if _fitting(known, kind, tuple(resource)) is None or not _targets_right(resource, _plan(known, kind), urls):
             return None
-    if doubtful and not _judged_well(read, doubtful, known):
-        return None
-    return [
-        f"Bundle.entry[{index}].resource"
-        for index, resource in enumerate(resources)
-        if "text" not in resource and index not in skip and kinds[index] not in _no_narrative(known)
-    ]
+        if "text" not in resource and kind not in _no_narrative(known):
+            missing.append(f"Bundle.entry[{index}].resource")
+    return missing if not doubtful or _judged_well(value, text, doubtful, known) else None
 
 
 def _doubtful(
@@ -111,7 +116,7 @@ def _doubtful(
     places = [
         index
         for index, (resource, kind) in enumerate(zip(resources, kinds, strict=True))
-        if (validator := _resource(known, kind)) is None or not _valid(validator, resource)
+        if (validator := _fitting(known, kind, tuple(resource))) is None or not _valid(validator, resource)
     ]
     if not places or len(places) > max(4, len(resources) // 4):
         return None
@@ -122,10 +127,9 @@ def _doubtful(
     return places if outline is not None and _valid(outline, {**value, "entry": emptied}) else None
 
 
-def _judged_well(read: Source, places: list[int], known: Registry) -> bool:
+def _judged_well(value: dict[str, Any], text: bytes | None, places: list[int], known: Registry) -> bool:
     """Whether the walk finds nothing wrong with the resources of these entries."""
-    value = read.value if read.text is None else exact(read.text).value
-    root = Node(value, "Bundle")
+    root = Node(value if text is None else exact(text).value, "Bundle")
     scope = walk.scope_of(root, known)
     issues: list[Issue] = []
     entries = [n for n in structure.open_node(root, known.edition, issues) if n.key == "entry"]
@@ -146,28 +150,19 @@ def _consistent(entry: Mapping[str, Any], resource: Mapping[str, Any], kind: str
     return request is None or request["method"] != "PUT" or request["url"] == f"{kind}/{ident}"
 
 
-def _targets_right(
-    resource: Mapping[str, Any], kind: str, urls: Mapping[str, str], known: Registry
-) -> bool:
-    """Whether every urn:uuid reference of a resource that is in the Bundle leads to a type allowed."""
-    return all(
-        reference not in urls or not allowed or urls[reference] in allowed
-        for reference, allowed in _urns(resource, _plan(known, kind))
-    )
-
-
-def _urns(held: Mapping[str, Any], plan: Mapping[str, Any]) -> Iterator[tuple[str, frozenset[str]]]:
+def _targets_right(held: Mapping[str, Any], plan: Mapping[str, Any], urls: Mapping[str, str]) -> bool:
+    """Whether every urn:uuid reference that is a full URL of the Bundle leads to a type allowed."""
     for key, value in held.items():
         step = plan.get(key)
         if step is None:
             continue
-        for item in value if isinstance(value, list) else (value,):
-            if isinstance(step, Mapping):
-                yield from _urns(item, step)
-            else:
-                reference = item.get("reference")
-                if reference is not None and reference.startswith("urn:"):
-                    yield reference, step
+        for item in value if type(value) is list else (value,):
+            if type(step) is dict:
+                if not _targets_right(item, step, urls):
+                    return False
+            elif (kind := urls.get(item.get("reference"))) is not None and kind not in step:
+                return False
+    return True
 
 
 def _without_narrative(value: dict[str, Any], places: list[str], known: Registry) -> list[Issue] | None:
@@ -198,11 +193,6 @@ def _valid(validator: Draft4Validator, value: object) -> bool:
         return validator.is_valid(value)
     except (ValueError, TypeError, OverflowError, RecursionError):
         return False
-
-
-def _short_numbers(text: bytes) -> bool:
-    """Whether no number has more digits than R5 allows (a long run of digits in a text counts too)."""
-    return _LONG.search(text) is None
 
 
 @lru_cache(maxsize=512)
@@ -283,25 +273,25 @@ def _compiled(schema: Mapping[str, Any]) -> Draft4Validator:
 
 
 @lru_cache(maxsize=512)
-def _plan(known: Registry, kind: str, depth: int = 0) -> Mapping[str, Any]:
-    """Where references stand in a type: key -> types allowed (empty: any), or the same of a nested type."""
+def _plan(known: Registry, name: str, inside: frozenset[str] = frozenset()) -> Mapping[str, Any]:
+    """Where references stand in a resource: key -> types allowed, or the same of a nested type.
+
+    Data types, and a nested type inside itself, are left out: the schema lets no urn into the first and
+    refuses the second.
+    """
     edition = known.edition
-    definition = edition.type(kind)
+    definition = edition.type(name)
     plan: dict[str, Any] = {}
     for key, child in definition.keys.items() if definition else ():
-        if child.companion or child.primitive or key in ("extension", "modifierExtension", "contained"):
-            continue
+        nested = edition.type(child.type_name)
         if child.type_name == "Reference":
             targets = child.type.targets
-            plan[key] = (
-                frozenset(r for r in edition.resources if any(edition.is_a(r, t) for t in targets))
-                if targets
-                else frozenset()
-            )
-        elif depth < 4:
-            nested = _plan(known, child.type_name, depth + 1)
-            if nested:
-                plan[key] = nested
+            if targets:
+                plan[key] = frozenset(r for r in edition.resources if any(edition.is_a(r, t) for t in targets))
+        elif nested is not None and nested.kind == "nested" and nested.name not in inside:
+            deeper = _plan(known, nested.name, inside | {nested.name})
+            if deeper:
+                plan[key] = deeper
     return plan
 
 

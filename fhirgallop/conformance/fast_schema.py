@@ -33,7 +33,7 @@ _DIV = (
 )
 _PATTERNS = {
     "id": f"^{ID}$",
-    "code": "^[!-~]+( [!-~]+)*$",
+    "code": "^[!-~]+$",
     "uri": "^[!-~]+$",
     "url": "^[!-~]+$",
     "canonical": '^[!"$-~][!-~]*$',
@@ -48,6 +48,7 @@ _PATTERNS = {
 }
 _LEFT_OUT = frozenset({"extension", "modifierExtension", "contained"})
 _MAX_CODES = 2000
+_PRESENCE = frozenset({"required", "dependencies", "allOf"})
 _LIMIT = 10**15
 
 
@@ -60,7 +61,19 @@ class SchemaBuilder:
         self.definitions: dict[str, Schema] = {}
 
     def resource(self, name: str) -> Schema:
-        """The schema of a resource type; `REFUSED` when it has rules that no schema can hold."""
+        """The schema of a resource type but for `presence`; `REFUSED` when no schema can hold its rules."""
+        schema = self._root(name)
+        return REFUSED if schema is REFUSED else {k: v for k, v in schema.items() if k not in _PRESENCE}
+
+    def presence(self, name: str) -> Schema:
+        """What must and must not stand together at the root of a resource type: it looks at keys only."""
+        schema = self._root(name)
+        if schema is REFUSED:
+            return schema
+        held: dict[str, Any] = {k: v for k, v in schema.items() if k in _PRESENCE}
+        return {"type": "object", "properties": dict.fromkeys(schema["properties"], {}), **held}
+
+    def _root(self, name: str) -> Schema:
         definition = self._edition.type(name)
         if definition is None:
             return REFUSED
@@ -69,7 +82,7 @@ class SchemaBuilder:
             return schema
         properties = {"resourceType": {"enum": [name]}, **schema["properties"]}
         if name == "Observation":
-            properties["code"] = {"allOf": [properties["code"], _NO_VITAL_SIGN]}
+            properties["code"] = self._without_vital_signs()
         return {**schema, "properties": properties, "required": ["resourceType", *schema.get("required", ())]}
 
     def bundle_head(self) -> dict[str, Any]:
@@ -104,7 +117,7 @@ class SchemaBuilder:
         for key, child in definition.keys.items():
             if child.companion or key in left_out or (key == "id" and not root):
                 continue
-            schema = self._element(child)
+            schema = self._element(child, urn=definition.kind in ("resource", "nested"))
             if schema is not REFUSED:
                 properties[key] = schema
         needs: list[Schema] = []
@@ -132,13 +145,14 @@ class SchemaBuilder:
             schema["allOf"] = needs
         return schema
 
-    def _element(self, child: Child) -> Schema:
+    def _element(self, child: Child, *, urn: bool) -> Schema:
+        # a urn may lead to another entry, which is looked up for resources and their nested types only
         element = child.element
         if any(fragment(i.key, i.expression) is None for i in element.invariants):
             return REFUSED
         if element.max == 0 or (element.binding is not None and element.binding.maximum):
             return REFUSED
-        schema = self._value(child, element)
+        schema = self._value(child, element, urn=urn)
         if schema is REFUSED or not element.many:
             return schema
         array: dict[str, Any] = {"type": "array", "minItems": max(1, element.min), "items": schema}
@@ -146,13 +160,13 @@ class SchemaBuilder:
             array["maxItems"] = element.max
         return array
 
-    def _value(self, child: Child, element: Element) -> Schema:
+    def _value(self, child: Child, element: Element, *, urn: bool) -> Schema:
         name = child.type_name
         if child.primitive:
             schema = self._primitive(name, element)
             return schema if element.binding is None else self._bound_code(schema, element.binding)
         if name == "Reference":
-            return self._reference(child.type.targets)
+            return self._reference(child.type.targets, urn=urn)
         if self._edition.is_a(name, "Resource"):
             return REFUSED
         if name == "CodeableReference":
@@ -160,7 +174,7 @@ class SchemaBuilder:
         schema = self._type(name)
         if schema is REFUSED or element.binding is None:
             return schema
-        return self._bound(schema, name, element.binding)
+        return self._bound(name, element.binding)
 
     def _primitive(self, name: str, element: Element) -> Schema:
         definition = self._edition.type(name)
@@ -192,50 +206,62 @@ class SchemaBuilder:
             return REFUSED
         return {"enum": sorted({code for codes in systems.values() for code in codes})}
 
-    def _bound(self, schema: Schema, name: str, binding: Binding) -> Schema:
+    def _bound(self, name: str, binding: Binding) -> Schema:
+        """A Coding or CodeableConcept that holds a code of the value set (no allOf: each key is looked at once)."""
         systems = self._codes(binding)
         if systems is None or name not in ("Coding", "CodeableConcept"):
             return REFUSED
-        coded: Schema = {
-            "anyOf": [
-                {
-                    "properties": {"system": {"enum": [system]}, "code": {"enum": sorted(codes)}},
-                    "required": ["system", "code"],
-                }
-                for system, codes in sorted(systems.items())
-                if codes
-            ]
-        }
+        coded: list[Schema] = [
+            {
+                "properties": {"system": {"enum": [system]}, "code": {"enum": sorted(codes)}},
+                "required": ["system", "code"],
+            }
+            for system, codes in sorted(systems.items())
+            if codes
+        ]
+        some: Schema = coded[0] if len(coded) == 1 else {"anyOf": coded}
         if name == "Coding":
-            return {"allOf": [schema, coded]}
-        some = {"properties": {"coding": {"not": {"items": {"not": coded}}}}}
-        needs: dict[str, Any] = dict(some)
+            return {"allOf": [self._type(name), some]}
+        concept = self._copy(name)
+        if concept is REFUSED:
+            return REFUSED
+        concept["properties"]["coding"] = {**concept["properties"]["coding"], "not": {"items": {"not": some}}}
         if binding.strength == "required":
-            needs["required"] = ["coding"]
-        return {"allOf": [schema, needs]}
+            concept["required"] = ["coding"]
+        return concept
 
-    def _reference(self, targets: tuple[str, ...]) -> Schema:
+    def _copy(self, name: str) -> Any:
+        """A type's own schema, open to be narrowed for one place."""
+        if self._type(name) is REFUSED:
+            return REFUSED
+        schema = self.definitions[name]
+        return {**schema, "properties": dict(schema["properties"])}
+
+    def _reference(self, targets: tuple[str, ...], *, urn: bool) -> Schema:
         if any("/" in t for t in targets):
             return REFUSED
+        schema = self._copy("Reference")
+        if schema is not REFUSED:
+            schema["properties"].pop("type", None)
+            schema["properties"]["reference"] = {
+                "type": "string",
+                "pattern": f"^({self._literal(targets)}|{UUID})$" if urn else f"^{self._literal(targets)}$",
+            }
+        return schema
+
+    def _literal(self, targets: tuple[str, ...]) -> str:
         edition = self._edition
         kinds = sorted(r for r in edition.resources if not targets or any(edition.is_a(r, t) for t in targets))
-        literal = rf'(https?://[!"$->@-~]+/)?({"|".join(kinds)})/{ID}'
-        base = self._type("Reference")
-        if base is REFUSED:
+        return rf'(https?://[!"$->@-~]+/)?({"|".join(kinds)})/{ID}'
+
+    def _without_vital_signs(self) -> Schema:
+        """Observation.code: a vital sign has a profile to meet, and goes the thorough way."""
+        concept, coding = self._copy("CodeableConcept"), self._copy("Coding")
+        if concept is REFUSED or coding is REFUSED:
             return REFUSED
-        return {
-            "allOf": [
-                base,
-                {"properties": {"type": REFUSED, "reference": {"pattern": f"^({literal}|{UUID})$"}}},
-            ]
-        }
-
-
-_NO_VITAL_SIGN: Schema = {
-    "properties": {
-        "coding": {"items": {"not": {"properties": {"code": {"enum": sorted(VITAL_SIGNS)}}, "required": ["code"]}}}
-    }
-}
+        coding["properties"]["code"] = {**coding["properties"]["code"], "not": {"enum": sorted(VITAL_SIGNS)}}
+        concept["properties"]["coding"] = {**concept["properties"]["coding"], "items": coding}
+        return concept  # type: ignore[no-any-return]
 
 
 def _choices(definition: TypeDef, properties: Mapping[str, Schema]) -> dict[str, Any]:

@@ -10,9 +10,8 @@ from __future__ import annotations
 import json
 import re
 from collections.abc import Iterable, Mapping
-from dataclasses import dataclass
 from decimal import Decimal
-from typing import Any
+from typing import Any, NamedTuple
 
 import orjson
 
@@ -28,34 +27,35 @@ _LONE = re.compile("[\ud800-\udfff]")
 _CURE_JSON = "Send one JSON object as UTF-8 text (RFC 8259)."
 
 
-@dataclass(frozen=True, slots=True)
-class Source:
+class Source(NamedTuple):
     """What was read.
 
     Attributes:
         value: the parsed JSON; None when it could not be read at all.
         text: the text it was read from; None when it came parsed.
         proved: True when it is certain that no key stands twice.
+        same: True when the text is byte for byte the value written again, so that no digit was lost either.
         issues: what is wrong with the text itself; fatal ones mean there is no value.
     """
 
     value: Any
     text: bytes | None
     proved: bool
+    same: bool = False
     issues: tuple[Issue, ...] = ()
 
 
 def read(resource: bytes | str | Mapping[str, Any]) -> Source:
     """Reads at full speed; decimals are floats. Never raises for what the resource holds."""
-    if isinstance(resource, Mapping):
-        return Source(resource, None, proved=True)
-    if isinstance(resource, str):
+    if isinstance(resource, (bytes, bytearray, memoryview)):
+        text = bytes(resource)
+    elif isinstance(resource, (dict, Mapping)):
+        return Source(resource, None, True)
+    elif isinstance(resource, str):
         try:
             text = resource.encode()
         except UnicodeEncodeError:
             return _unreadable("json-surrogate", "The text holds half of a surrogate pair. " + _CURE_JSON)
-    elif isinstance(resource, (bytes, bytearray, memoryview)):
-        text = bytes(resource)
     else:
         return _unreadable("json-object", "The resource is neither bytes, text nor an object. " + _CURE_JSON)
     if len(text) > MAX_BYTES:
@@ -64,7 +64,8 @@ def read(resource: bytes | str | Mapping[str, Any]) -> Source:
         value = orjson.loads(text)
     except ValueError:
         return exact(text)
-    return Source(value, text, proved=_nothing_lost(text, value))
+    proved, same = _nothing_lost(text, value)
+    return Source(value, text, proved, same)
 
 
 def exact(text: bytes) -> Source:
@@ -154,15 +155,17 @@ def locate(text: bytes, paths: Iterable[Path]) -> dict[Path, tuple[int, int]]:
     return {path: places[offset] for path, offset in found.items()}
 
 
-def _nothing_lost(text: bytes, value: Any) -> bool:
-    """True when the text cannot hold a key that the parsed value has lost.
+def _nothing_lost(text: bytes, value: Any) -> tuple[bool, bool]:
+    """Whether it is proved that no key was lost in reading, and whether the text is the value written again.
 
-    A lost key takes at least two quotation marks with it, so as many marks in the text as in the value
-    written again means that none is lost; `\\u0022` could hide a mark and ends the proof.
+    A text that equals its value written again has lost nothing. Else: a lost key takes at least two quotation
+    marks with it, so as many marks in the text as in the value written again means that none is lost;
+    `\\u0022` could hide a mark and ends the proof.
     """
-    if b"\\u" in text:
-        return False
-    return text.count(b'"') == orjson.dumps(value).count(b'"')
+    again = orjson.dumps(value)
+    if again == text:
+        return True, True
+    return b"\\u" not in text and text.count(b'"') == again.count(b'"'), False
 
 
 def _unreadable(rule: str, said: str) -> Source:

@@ -39,12 +39,12 @@ def validate(
         ValueError: no such edition.
         PackageError: a package is broken.
     """
-    known = registry(edition, tuple(Path(p) for p in packages))
+    known = registry(edition, tuple(map(Path, packages))) if packages else registry(edition)
     read = source.read(resource)
     if read.proved and not profiles:
-        settled = fast.settle(read, known)
+        settled = fast.settle(read.value, known, read.text, same=read.same)
         if settled is not None:
-            return ordered(settled)
+            return ordered(settled) if settled else settled
     return thorough(read, known, profiles)
 
 
