@@ -66,7 +66,7 @@ Read = tuple[Value | None, Fault | None]
 
 
 def reader(value_type: str) -> Callable[[str, str, Message], Read] | None:
-    """The function that reads a repetition (raw text, unit, message) of OBX-5; None for a type not carried."""
+    """The function that reads a repetition of OBX-5 (raw text, unit, message); None for other types."""
     return _READERS.get(value_type)
 
 
