@@ -149,7 +149,9 @@ def kinds() -> Mapping[str, Kind]:
     """Every id a rule may name: the catalogue's findings and the chart's facts."""
     known = catalogue.load()
     found = {
-        f.id: Kind(f.id, f.label, f.kind, f.unit, f.low, f.high, frozenset(known.answers(f)), f.qualifiers, f.parent)
+        f.id: Kind(
+            f.id, f.label, f.kind, f.unit, f.low, f.high, frozenset(known.answers(f)), f.qualifiers, f.parent
+        )
         for f in known.findings.values()
     }
     for d in context.definitions().values():
