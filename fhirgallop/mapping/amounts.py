@@ -9,7 +9,7 @@ import re
 from collections.abc import Callable
 from dataclasses import dataclass
 from decimal import Decimal
-from typing import Final
+from typing import Final, NamedTuple
 
 from fhirgallop.codes.units import Unit, UnitTable, convert
 from fhirgallop.exam.entry import Measure
@@ -50,10 +50,12 @@ Measured = Measure | NumberFault
 _NOT_A_NUMBER: Final = NumberFault(
     "map-number-unreadable", "value", "it is not a number; send digits, and words in a field of their own"
 )
+_UNUSABLE: Final = NumberFault(
+    "map-number-unusable", "value", "it is too large, or has too many digits, to be measured"
+)
 
 
-@dataclass(frozen=True, slots=True)
-class _Sent:
+class _Sent(NamedTuple):
     """A number as sent, before its unit is looked at."""
 
     low: Decimal
@@ -160,17 +162,11 @@ def _decimal(digits: str | None, form: NumberForm) -> Decimal | None:
 
 
 def _bounded(sent: _Sent) -> _Sent | NumberFault:
-    for number in (sent.low, sent.high):
-        if number is not None and not (
-            number.is_finite()
-            and (number.is_zero() or abs(number.adjusted()) <= _WIDEST)
-            and abs(int(number.as_tuple().exponent)) <= _WIDEST
-            and len(number.as_tuple().digits) <= 2 * _WIDEST
-        ):
-            return NumberFault(
-                "map-number-unusable", "value", "it is too large, or has too many digits, to be measured"
-            )
-    return sent
+    return sent if _measurable(sent.low) and (sent.high is None or _measurable(sent.high)) else _UNUSABLE
+
+
+def _measurable(number: Decimal) -> bool:
+    return number.is_finite() and -_WIDEST <= number.adjusted() <= _WIDEST and len(str(number)) <= 2 * _WIDEST
 
 
 def _measure(sent: _Sent, default: Unit | None, target: Unit, units: UnitTable) -> Measured:

@@ -54,6 +54,7 @@ class CompiledMap:
         self._always = frozenset(line.field for line in template.lines if line.field and not line.when)
         self._contingent = self._contingent_fields()
         self._ignored = frozenset(i.pattern for i in template.ignored if "*" not in i.pattern)
+        self._known = self.reads | self._ignored
         self._patterns = [i for i in template.ignored if "*" in i.pattern]
 
     def _contingent_fields(self) -> list[str]:
@@ -100,7 +101,8 @@ class CompiledMap:
     def _unread(self, run: Run) -> tuple[str, ...]:
         """Names, and notes, everything that no line has read."""
         found = []
-        left = [name for name in run.fields if name not in self.reads]
+        # Most records hold nothing unknown, which one comparison of sets tells.
+        left = [] if run.fields.keys() <= self._known else [n for n in run.fields if n not in self._known]
         for name in left:
             if not self.ignores(name):
                 words = "No line of the map reads this field; add a line, or ignore it with a reason."

@@ -6,7 +6,7 @@ from dataclasses import replace
 
 from fhirgallop.exam.entry import Entry, Qualifier
 from fhirgallop.exam.presence import Presence
-from fhirgallop.intake.record import Field
+from fhirgallop.intake.record import Field, Value
 from fhirgallop.mapping import boxes
 from fhirgallop.mapping.boxes import NOTHING, Says
 from fhirgallop.mapping.conditions import test_of
@@ -116,13 +116,13 @@ class _FindingLine:
                 if blank:
                     self._put(run, blank, field)
                 return
-            self._read(run, field, says)
+            self._read(run, field, values, says)
 
         return read
 
-    def _read(self, run: Run, field: Field, says: Says) -> None:
+    def _read(self, run: Run, field: Field, values: tuple[Value, ...], says: Says) -> None:
         before = len(run.issues)
-        entry = says(run, self._tools.blanks.filled(field))
+        entry = says(run, values)
         if entry:
             self._put(run, entry, field)
         elif len(run.issues) > before:
@@ -145,7 +145,7 @@ class _FindingLine:
         elif field.status == "entered-in-error":
             self._put(run, self._withdrawn(run, field, says), field)
         elif values:
-            self._read(run, field, says)
+            self._read(run, field, values, says)
         elif self._blank:
             self._put(run, self._blank, field)
         elif field.notes:

@@ -29,9 +29,6 @@ def _field_is(name: str, words: tuple[str, ...], blanks: Blanks) -> Test:
     table = Lookup(dict.fromkeys(words, True))
 
     def holds(run: Run) -> bool:
-        field = run.fields.get(name)
-        return field is not None and any(
-            not blanks.is_blank(value) and table.find(value) for value in field.values
-        )
+        return any(table.find(value) for value in blanks.filled(run.fields.get(name)))
 
     return holds

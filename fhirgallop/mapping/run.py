@@ -57,4 +57,6 @@ Test = Callable[[Run], bool]
 
 def is_plain(field: Field) -> bool:
     """True when a field says nothing but its values."""
-    return not (field.status or field.time or field.notes or field.method or field.site or field.performer)
+    return field.status in ("", "final") and not (
+        field.time or field.notes or field.method or field.site or field.performer
+    )

@@ -51,12 +51,12 @@ class Lookup(Generic[T]):
 
     def find(self, value: Value) -> T | None:
         """What the value means, or None when no wording of the list is like it."""
-        texts = wordings(value)
+        texts = (value,) if type(value) is str else wordings(value)
         for text in texts:
             if (found := self.exact.get(text)) is not None:
                 return found
         for text in texts:
-            if (found := self._folded.get(_fold(text))) is not None:
+            if (found := self._folded.get(text.strip().casefold())) is not None:
                 return found
         return None
 
@@ -75,7 +75,11 @@ class Blanks:
             return ()
         values = field.values
         if len(values) == 1:
-            return () if self.is_blank(values[0]) else values
+            value = values[0]
+            # Nearly every box holds one text; the general question is asked of the others only.
+            if type(value) is str:
+                return () if value.strip().casefold() in self._folded else values
+            return () if self.is_blank(value) else values
         return tuple(value for value in values if not self.is_blank(value))
 
     def is_blank(self, value: Value) -> bool:
