@@ -69,9 +69,15 @@ def plain(item: Any) -> Any:
         return item
     if value is None:
         return item if item.reference else None
-    if isinstance(value, float):
-        return Decimal(repr(value))
+    if isinstance(value, float | Decimal):
+        return _number(value)
     return item if isinstance(value, list) else value
+
+
+def _number(value: float | Decimal) -> Decimal | None:
+    """The exact number; None for NaN and infinity, which JSON does not have and other rules report."""
+    number = Decimal(repr(value)) if isinstance(value, float) else value
+    return number if number.is_finite() else None
 
 
 def _typed_text(text: str, type_name: str) -> Any:
@@ -89,8 +95,8 @@ def _typed_text(text: str, type_name: str) -> Any:
 
 def _quantity(item: Item, value: dict[str, Any]) -> Any:
     number = value.get("value")
-    if isinstance(number, float):
-        number = Decimal(repr(number))
+    if isinstance(number, float | Decimal):
+        number = _number(number)
     if isinstance(number, bool) or not isinstance(number, int | Decimal):
         return item
     code, system, unit = value.get("code"), value.get("system"), value.get("unit")
@@ -191,8 +197,8 @@ def _json_key(value: Any) -> Any:
         return ("array", tuple(_json_key(part) for part in value))
     if isinstance(value, bool):
         return ("boolean", value)
-    if isinstance(value, float):
-        return Decimal(repr(value))
+    if isinstance(value, float | Decimal):
+        return _number(value)
     return value
 
 

@@ -159,7 +159,10 @@ def union(left: Collection, right: Collection) -> Collection:
 
 def distinct(items: Collection) -> Collection:
     """The items without doubles, in order."""
-    return list({key(item): item for item in reversed(items)}.values())[::-1] if len(items) > 1 else items
+    found: dict[Any, Any] = {}
+    for item in items:
+        found.setdefault(key(item), item)
+    return list(found.values())
 
 
 def _text(items: Collection) -> str:
