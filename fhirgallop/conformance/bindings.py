@@ -18,7 +18,18 @@ from fhirgallop.conformance.wording import canonical
 from fhirgallop.outcome import Issue
 
 CODED = frozenset(
-    {"code", "string", "uri", "url", "canonical", "id", "Coding", "CodeableConcept", "CodeableReference", "Quantity"}
+    {
+        "code",
+        "string",
+        "uri",
+        "url",
+        "canonical",
+        "id",
+        "Coding",
+        "CodeableConcept",
+        "CodeableReference",
+        "Quantity",
+    }
 )
 _SYSTEMLESS = frozenset({"code", "string", "uri", "url", "canonical", "id"})
 
@@ -56,7 +67,9 @@ def _judge(
         said = f"A code of the value set {canonical(url)} is required here, and there is none. {cure}"
         yield Issue("error", "code-invalid", "binding-required", said, expression=at)
     elif strength == "extensible":
-        said = f"None of the codes is in the value set {canonical(url)}. {cure}, if one fits.".replace("system.,", "system,")
+        said = f"None of the codes is in the value set {canonical(url)}. {cure}, if one fits.".replace(
+            "system.,", "system,"
+        )
         yield Issue("warning", "code-invalid", "binding-extensible", said, expression=at)
     else:
         said = f"The code is not in the value set {canonical(url)}, which is binding here. {cure}"

@@ -14,7 +14,9 @@ from fhirgallop.conformance.node import Node
 from fhirgallop.outcome import Issue
 
 _REST = re.compile(r"https?://\S+?/([A-Z][A-Za-z]{1,63})/([A-Za-z0-9.-]{1,64})", re.ASCII)
-_REQUEST = re.compile(r"(?:https?://[^\s?]*/)?([A-Z][A-Za-z]{1,63})(?:/([A-Za-z0-9.-]{1,64}))?(?:\?\S*)?", re.ASCII)
+_REQUEST = re.compile(
+    r"(?:https?://[^\s?]*/)?([A-Z][A-Za-z]{1,63})(?:/([A-Za-z0-9.-]{1,64}))?(?:\?\S*)?", re.ASCII
+)
 
 
 def check(node: Node, edition: Edition) -> Iterator[Issue]:

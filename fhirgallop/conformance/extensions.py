@@ -46,7 +46,9 @@ def _place(node: Node, definition: ExtensionDef, edition: Edition) -> Iterator[I
         right = "modifierExtension" if definition.modifier else "extension"
         said = f"The extension {canonical(definition.url)} may stand in '{right}' only. Move it there."
         yield Issue("error", "structure", "extension-modifier", said, expression=node.expression)
-    if definition.contexts and not any(_in_context(node, kind, path, edition) for kind, path in definition.contexts):
+    if definition.contexts and not any(
+        _in_context(node, kind, path, edition) for kind, path in definition.contexts
+    ):
         places = one_of(path for _, path in definition.contexts)
         said = f"The extension {canonical(definition.url)} may stand in {places} only. Move or remove it."
         yield Issue("error", "structure", "extension-context", said, expression=node.expression)
@@ -97,7 +99,9 @@ def _content(node: Node, definition: ExtensionDef, registry: Registry) -> Iterat
         text = f"The value of the extension {name} must be of type {one_of(definition.types)}. Use that type."
         yield Issue("error", "structure", "extension-value-type", text, expression=at)
     elif definition.types and not definition.parts and "extension" in value and not said:
-        text = f"The extension {name} needs a value, not nested extensions. Use type {one_of(definition.types)}."
+        text = (
+            f"The extension {name} needs a value, not nested extensions. Use type {one_of(definition.types)}."
+        )
         yield Issue("error", "structure", "extension-value-type", text, expression=at)
     if definition.parts:
         yield from _parts(node, definition)
@@ -133,7 +137,9 @@ def _parts(node: Node, definition: ExtensionDef) -> Iterator[Issue]:
                 yield Issue("error", "structure", "extension-part", text, expression=at)
             continue
         types = definition.parts[url]
-        keys = [k.removeprefix("_").removeprefix("value") for k in part if k.removeprefix("_").startswith("value")]
+        keys = [
+            k.removeprefix("_").removeprefix("value") for k in part if k.removeprefix("_").startswith("value")
+        ]
         if types and any(key.lower() not in {t.lower() for t in types} for key in keys):
             text = f"The value of this part must be of type {one_of(types)}. Use that type."
             yield Issue("error", "structure", "extension-value-type", text, expression=at)

@@ -8,21 +8,23 @@ issues returned, as the thorough pass would say; whatever is refused may still b
 from __future__ import annotations
 
 import re
-from collections.abc import Mapping
+from collections.abc import Callable, Mapping
+from dataclasses import dataclass
 from functools import lru_cache
 from typing import Any
 
-from jsonschema_rs import Draft4Validator, RegexOptions
+from jsonschema_rs import Draft202012Validator, RegexOptions
 
-from fhirgallop.conformance import structure, walk
-from fhirgallop.conformance.fast_invariants import REFUSED
-from fhirgallop.conformance.fast_schema import ID, UUID, SchemaBuilder
+from fhirgallop.conformance import fast_profiles, invariants, structure, walk
+from fhirgallop.conformance.fast_formats import ID, UUID
+from fhirgallop.conformance.fast_schema import Form, Schema, SchemaBuilder
 from fhirgallop.conformance.node import Node
 from fhirgallop.conformance.registry import Registry
 from fhirgallop.conformance.source import exact
+from fhirgallop.conformance.vital_signs import PROFILES as VITAL_SIGNS
+from fhirgallop.conformance.vital_signs import profiles_for
 from fhirgallop.outcome import Issue
 
-MAX_ALTERNATIVES = 12
 _KINDS = {"transaction": True, "batch": True, "collection": False}
 _DOM_6 = "dom-6"
 _LONG = re.compile(rb"[0-9.]{17}")
@@ -44,87 +46,105 @@ def settle(value: Any, known: Registry, text: bytes | None = None, *, same: bool
         return None  # R5 limits the digits of a number, which a float has lost
     if kind == "Bundle":
         missing = _bundle(value, known, text)
+    elif _accepted(value, kind, known) is None:
+        return None
     else:
-        validator = _fitting(known, kind, tuple(value))
-        if validator is None or not _valid(validator, value):
-            return None
         missing = [] if "text" in value or kind in _no_narrative(known) else [kind]
+    if missing is None:
+        return None
     if not missing:
-        return missing
+        return []
     # the place of a missing narrative in a text has to be found
     return _without_narrative(value, missing, known) if text is None else None
 
 
-@lru_cache(maxsize=4096)
-def _fitting(known: Registry, kind: str, keys: tuple[str, ...]) -> Draft4Validator | None:
-    """The validator of a resource type, if these keys may stand together at its root.
+def _implied(observation: dict[str, Any]) -> tuple[str, ...]:
+    """The profiles that vital-signs codes ask for; mostly there are none, which is quick to see."""
+    for coding in observation["code"].get("coding", ()):
+        if coding.get("code") in VITAL_SIGNS:
+            return tuple(profiles_for(observation))
+    return ()
 
-    That is settled once for each set of keys; None too for a type that no schema can settle.
+
+@dataclass(frozen=True, slots=True)
+class _Ready:
+    """A compiled form: validator, keys with whole numbers, targets of references."""
+
+    is_valid: Callable[[object], bool]
+    integers: tuple[str, ...]
+    targets: Mapping[str, Any]
+
+
+def _accepted(resource: dict[str, Any], kind: str, known: Registry) -> _Ready | None:
+    """The form that a single resource was found to have; None when it is in doubt."""
+    try:
+        meta = resource.get("meta")
+        declared = tuple(meta.get("profile", ())) if meta else ()
+        implied = _implied(resource) if kind == "Observation" else ()
+        ready = _fitting(known, kind, declared, implied, tuple(resource))
+        if ready is None or not ready.is_valid(resource):
+            return None
+    except (ValueError, TypeError, AttributeError, KeyError, OverflowError, RecursionError):
+        return None  # not what JSON can hold, or of the wrong shape: the walk says what it is
+    for key in ready.integers:
+        if type(resource[key]) is not int:
+            return None
+    return ready
+
+
+@lru_cache(maxsize=4096)
+def _fitting(
+    known: Registry, kind: str, declared: tuple[str, ...], implied: tuple[str, ...], keys: tuple[str, ...]
+) -> _Ready | None:
+    """The form of a resource, if these keys may stand together at its root: settled once for a set of keys.
+
+    None too for a type, or a profile, that no schema can settle.
     """
-    presence = _presence(known, kind)
-    return _resource(known, kind) if presence is not None and _valid(presence, dict.fromkeys(keys)) else None
+    found = _form(known, kind, declared, implied)
+    if found is None or not found[0].is_valid(dict.fromkeys(keys)):
+        return None
+    _, validator, form = found
+    return _Ready(validator.is_valid, tuple(k for k in keys if k in form.integers), form.targets)
 
 
 @lru_cache(maxsize=512)
-def _presence(known: Registry, kind: str) -> Draft4Validator | None:
-    schema = SchemaBuilder(known).presence(kind) if kind in known.edition.resources else REFUSED
-    return None if schema is REFUSED else _compiled(schema)
+def _form(
+    known: Registry, kind: str, declared: tuple[str, ...], implied: tuple[str, ...]
+) -> tuple[Draft202012Validator, Draft202012Validator, Form] | None:
+    builder = SchemaBuilder(known)
+    form = fast_profiles.form(builder, kind, declared, implied)
+    if form is None:
+        return None
+    return _compiled(form.presence), _compiled({**form.schema, "$defs": builder.definitions}), form
 
 
 def _bundle(value: dict[str, Any], known: Registry, text: bytes | None) -> list[str] | None:
     """Expressions of the resources without narrative; None when something in the Bundle is in doubt."""
-    asks = _KINDS.get(value.get("type", "")) if isinstance(value.get("type"), str) else None
-    entries = value.get("entry")
-    if asks is None or not isinstance(entries, list):
+    kind = value.get("type")
+    asks = _KINDS.get(kind) if type(kind) is str else None
+    if asks is None or not _valid(_envelope(known, asks), value):
         return None
-    try:
-        resources = [entry["resource"] for entry in entries]
-        kinds = [resource["resourceType"] for resource in resources]
-        urls = {entry["fullUrl"]: kind for entry, kind in zip(entries, kinds, strict=True)}
-        names = frozenset(kinds)
-    except (TypeError, KeyError):
-        return None
-    if len(urls) != len(entries) or len(names) > MAX_ALTERNATIVES or not all(isinstance(n, str) for n in names):
-        return None
-    validator = _envelope(known, names, asks)
-    if validator is None:
+    entries = value["entry"]
+    urls = {entry["fullUrl"]: entry["resource"].get("resourceType") for entry in entries}
+    if len(urls) != len(entries):
         return None
     doubtful: list[int] = []
-    if not _valid(validator, value):
-        found = _doubtful(value, resources, kinds, known, asks)
-        if found is None:
-            return None
-        doubtful = found
-    skip = frozenset(doubtful)
     missing: list[str] = []
-    for index, (entry, resource, kind) in enumerate(zip(entries, resources, kinds, strict=True)):
-        if not _consistent(entry, resource, kind):
+    for index, entry in enumerate(entries):
+        resource = entry["resource"]
+        kind = resource.get("resourceType")
+        if type(kind) is not str or not _consistent(entry, resource, kind):
             return None
-        if index in skip:
-            continue
-        if _fitting(known, kind, tuple(resource)) is None or not _targets_right(resource, _plan(known, kind), urls):
+        ready = _accepted(resource, kind, known)
+        if ready is None:
+            doubtful.append(index)
+            if len(doubtful) > max(4, len(entries) // 4):
+                return None
+        elif not _targets_right(resource, ready.targets, urls):
             return None
-        if "text" not in resource and kind not in _no_narrative(known):
+        elif "text" not in resource and kind not in _no_narrative(known):
             missing.append(f"Bundle.entry[{index}].resource")
     return missing if not doubtful or _judged_well(value, text, doubtful, known) else None
-
-
-def _doubtful(
-    value: dict[str, Any], resources: list[Any], kinds: list[str], known: Registry, asks: bool
-) -> list[int] | None:
-    """Places of the entries whose resources are in doubt, if all else of the Bundle is plainly right."""
-    places = [
-        index
-        for index, (resource, kind) in enumerate(zip(resources, kinds, strict=True))
-        if (validator := _fitting(known, kind, tuple(resource))) is None or not _valid(validator, resource)
-    ]
-    if not places or len(places) > max(4, len(resources) // 4):
-        return None
-    emptied = [dict(entry) for entry in value["entry"]]
-    for entry in emptied:
-        entry["resource"] = {"resourceType": entry["resource"]["resourceType"]}
-    outline = _outline(known, frozenset(kinds), asks)
-    return places if outline is not None and _valid(outline, {**value, "entry": emptied}) else None
 
 
 def _judged_well(value: dict[str, Any], text: bytes | None, places: list[int], known: Registry) -> bool:
@@ -141,13 +161,15 @@ def _judged_well(value: dict[str, Any], text: bytes | None, places: list[int], k
 
 
 def _consistent(entry: Mapping[str, Any], resource: Mapping[str, Any], kind: str) -> bool:
-    """Whether fullUrl and request agree with the resource's id, as the bundles clause asks."""
+    """Whether fullUrl and request agree with the resource's type and id, as the bundles clause asks."""
     url = entry["fullUrl"]
     ident = resource.get("id")
     if not url.startswith("urn:uuid:") and (ident is None or not url.endswith(f"/{kind}/{ident}")):
         return False
     request = entry.get("request")
-    return request is None or request["method"] != "PUT" or request["url"] == f"{kind}/{ident}"
+    if request is None:
+        return True
+    return bool(request["url"] == (kind if request["method"] == "POST" else f"{kind}/{ident}"))
 
 
 def _targets_right(held: Mapping[str, Any], plan: Mapping[str, Any], urls: Mapping[str, str]) -> bool:
@@ -182,12 +204,12 @@ def _without_narrative(value: dict[str, Any], places: list[str], known: Registry
     wanted = frozenset(places)
     for node in nodes:
         if node.expression in wanted:
-            found = [i for i in walk.invariants.check(node, scope) if i.rule == _DOM_6]
+            found = [i for i in invariants.check(node, scope) if i.rule == _DOM_6]
             issues.extend(found)
     return issues
 
 
-def _valid(validator: Draft4Validator, value: object) -> bool:
+def _valid(validator: Draft202012Validator, value: object) -> bool:
     """False also for what JSON cannot hold: the thorough pass says what that is."""
     try:
         return validator.is_valid(value)
@@ -195,104 +217,38 @@ def _valid(validator: Draft4Validator, value: object) -> bool:
         return False
 
 
-@lru_cache(maxsize=512)
-def _resource(known: Registry, kind: str) -> Draft4Validator | None:
+@lru_cache(maxsize=16)
+def _envelope(known: Registry, asks: bool) -> Draft202012Validator:  # noqa: FBT001 - a key of the cache
+    """The validator of a Bundle but for its resources; `asks`: each entry carries a request."""
     builder = SchemaBuilder(known)
-    if kind not in known.edition.resources:
-        return None
-    schema = builder.resource(kind)
-    if schema is REFUSED:
-        return None
-    return _compiled({**schema, "definitions": builder.definitions})
-
-
-@lru_cache(maxsize=128)
-def _envelope(known: Registry, kinds: frozenset[str], asks: bool) -> Draft4Validator | None:
-    """The validator of a whole Bundle that holds resources of these types."""
-    builder = SchemaBuilder(known)
-    schemas = {}
-    for kind in sorted(kinds):
-        schema = builder.resource(kind) if kind in known.edition.resources else REFUSED
-        # a type that no schema can settle is only outlined here, and judged entry by entry
-        schemas[kind] = REFUSED if schema is REFUSED else schema
-    return _bundle_schema(schemas, builder, asks)
-
-
-@lru_cache(maxsize=128)
-def _outline(known: Registry, kinds: frozenset[str], asks: bool) -> Draft4Validator | None:
-    """The validator of a Bundle whose resources are looked at apart."""
-    if not kinds <= known.edition.resources:
-        return None
-    schemas = {kind: {"properties": {"resourceType": {"enum": [kind]}}} for kind in sorted(kinds)}
-    return _bundle_schema(schemas, SchemaBuilder(known), asks)
-
-
-def _bundle_schema(schemas: Mapping[str, Any], builder: SchemaBuilder, asks: bool) -> Draft4Validator | None:
     bundle = builder.bundle_head()
-    entry = {"anyOf": [_entry(kind, schema, asks) for kind, schema in schemas.items()]}
-    bundle["properties"]["entry"] = {"type": "array", "minItems": 1, "items": entry}
-    return _compiled({**bundle, "definitions": builder.definitions})
-
-
-def _entry(kind: str, resource: Mapping[str, Any], asks: bool) -> dict[str, Any]:
-    properties: dict[str, Any] = {
-        "resource": resource,
-        "fullUrl": {"type": "string", "pattern": rf'^({UUID}|https?://[!"$->@-~]+/{kind}/{ID})$'},
+    properties: Schema = {
+        "resource": {"type": "object"},
+        "fullUrl": {"type": "string", "pattern": rf'^({UUID}|https?://[!"$->@-~]+/[A-Z][A-Za-z]+/{ID})$'},
     }
     if asks:
         properties["request"] = {
-            "anyOf": [
-                {
-                    "type": "object",
-                    "properties": {
-                        "method": {"enum": ["POST"]},
-                        "url": {"enum": [kind]},
-                        "ifNoneExist": {"type": "string", "pattern": "^[!-~]+$"},
-                    },
-                    "required": ["method", "url"],
-                    "additionalProperties": False,
-                },
-                {
-                    "type": "object",
-                    "properties": {"method": {"enum": ["PUT"]}, "url": {"type": "string", "pattern": f"^{kind}/{ID}$"}},
-                    "required": ["method", "url"],
-                    "additionalProperties": False,
-                },
-            ]
+            "type": "object",
+            "properties": {
+                "method": {"enum": ["POST", "PUT"]},
+                "url": {"type": "string", "pattern": "^[!-~]+$"},
+                "ifNoneExist": {"type": "string", "pattern": "^[!-~]+$"},
+            },
+            "required": ["method", "url"],
+            "additionalProperties": False,
         }
-    return {
+    entry = {
         "type": "object",
         "properties": properties,
         "required": sorted(properties),
         "additionalProperties": False,
     }
+    bundle["properties"]["entry"] = {"type": "array", "minItems": 1, "items": entry}
+    return _compiled({**bundle, "$defs": builder.definitions})
 
 
-def _compiled(schema: Mapping[str, Any]) -> Draft4Validator:
-    return Draft4Validator(schema, pattern_options=RegexOptions())
-
-
-@lru_cache(maxsize=512)
-def _plan(known: Registry, name: str, inside: frozenset[str] = frozenset()) -> Mapping[str, Any]:
-    """Where references stand in a resource: key -> types allowed, or the same of a nested type.
-
-    Data types, and a nested type inside itself, are left out: the schema lets no urn into the first and
-    refuses the second.
-    """
-    edition = known.edition
-    definition = edition.type(name)
-    plan: dict[str, Any] = {}
-    for key, child in definition.keys.items() if definition else ():
-        nested = edition.type(child.type_name)
-        if child.type_name == "Reference":
-            targets = child.type.targets
-            if targets:
-                plan[key] = frozenset(r for r in edition.resources if any(edition.is_a(r, t) for t in targets))
-        elif nested is not None and nested.kind == "nested" and nested.name not in inside:
-            deeper = _plan(known, nested.name, inside | {nested.name})
-            if deeper:
-                plan[key] = deeper
-    return plan
+def _compiled(schema: Schema) -> Draft202012Validator:
+    return Draft202012Validator(schema, pattern_options=RegexOptions())
 
 
 @lru_cache(maxsize=8)

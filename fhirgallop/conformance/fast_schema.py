@@ -1,152 +1,209 @@
 """Writes the JSON Schema of the fast pass: what it accepts has no issue; what is rare or doubtful it refuses.
 
 No companions, extensions, contained resources or element ids; formats a little narrower than FHIR's.
-Draft 4, because its "integer" refuses 1.0 as FHIR does. Generated from the definitions of an edition.
+Generated from the definitions of an edition, and narrowed by profiles in `fast_profiles`.
+JSON Schema 2020-12. It takes 1.0 for an integer and FHIR does not, so whole numbers stand only at a
+resource's root, where `Form.integers` names them to be looked at apart.
 """
 
 from __future__ import annotations
 
 from collections.abc import Iterable, Mapping
+from copy import deepcopy
+from dataclasses import dataclass, field
 from typing import Any
 
 from fhirgallop.conformance.editions.model import Binding, Child, Element, TypeDef
+from fhirgallop.conformance.fast_formats import ID, PATTERNS, TEXT, UUID
 from fhirgallop.conformance.fast_invariants import REFUSED, fragment
 from fhirgallop.conformance.primitives import RANGES
 from fhirgallop.conformance.registry import Registry
-from fhirgallop.conformance.vital_signs import PROFILES as VITAL_SIGNS
 
-Schema = Mapping[str, Any]
+Schema = dict[str, Any]
 
-UUID = "urn:uuid:[0-9a-f]{8}-[0-9a-f]{4}-[0-9a-f]{4}-[0-9a-f]{4}-[0-9a-f]{12}"
-ID = r"[A-Za-z0-9\-.]{1,64}"
-_DAY = "((0[1-9]|1[0-2])-(0[1-9]|1[0-9]|2[0-8])|(0[13-9]|1[0-2])-(29|30)|(0[13578]|1[02])-31)"
-_TIME = r"([01][0-9]|2[0-3]):[0-5][0-9]:[0-5][0-9](\.[0-9]{1,9})?"
-_ZONE = r"(Z|[+-](0[0-9]|1[0-3]):[0-5][0-9])"
-_TEXT = r"[^\x00-\x08\x0B\x0C\x0E-\x1F]"
-_SAID = r"[^<>&\x00-\x08\x0B\x0C\x0E-\x1F\x7F-\x9F\uFFFE\uFFFF]"
-_INLINE = f"({_SAID}|<b>{_SAID}*</b>|<i>{_SAID}*</i>|<br/>)"
-_BLOCK = f"(<p>{_INLINE}*</p>|<ul>(<li>{_INLINE}*</li>)+</ul>)"
-_DIV = (
-    r'^<div xmlns="http://www\.w3\.org/1999/xhtml">'
-    f"([A-Za-z0-9(]{_INLINE}*|<p>[A-Za-z0-9(]{_INLINE}*</p>{_BLOCK}*|<ul><li>[A-Za-z0-9(]{_INLINE}*</li>"
-    f"(<li>{_INLINE}*</li>)*</ul>{_BLOCK}*)</div>$"
-)
-_PATTERNS = {
-    "id": f"^{ID}$",
-    "code": "^[!-~]+$",
-    "uri": "^[!-~]+$",
-    "url": "^[!-~]+$",
-    "canonical": '^[!"$-~][!-~]*$',
-    "oid": r"^urn:oid:[0-2](\.(0|[1-9][0-9]*))+$",
-    "uuid": f"^{UUID}$",
-    "date": f"^[1-9][0-9]{{3}}(-(0[1-9]|1[0-2]|{_DAY}))?$",
-    "dateTime": f"^[1-9][0-9]{{3}}(-(0[1-9]|1[0-2]|{_DAY}(T{_TIME}{_ZONE})?))?$",
-    "instant": f"^[1-9][0-9]{{3}}-{_DAY}T{_TIME}{_ZONE}$",
-    "time": f"^{_TIME}$",
-    "base64Binary": "^([A-Za-z0-9+/]{4})+([A-Za-z0-9+/]{2}==|[A-Za-z0-9+/]{3}=)?$",
-    "xhtml": _DIV,
-}
 _LEFT_OUT = frozenset({"extension", "modifierExtension", "contained"})
 _MAX_CODES = 2000
-_PRESENCE = frozenset({"required", "dependencies", "allOf"})
 _LIMIT = 10**15
+_PRESENCE = ("required", "dependentRequired", "dependentSchemas", "allOf")
+
+
+@dataclass(slots=True)
+class Form:
+    """How a resource of one type, with certain profiles, may look to be accepted.
+
+    Attributes:
+        schema: its schema, but for what must and must not stand together at its root.
+        presence: a schema of the keys at the root.
+        integers: keys at the root that hold whole numbers.
+        targets: key -> resource types that a reference there may lead to, or the same of a nested type.
+    """
+
+    schema: Schema
+    presence: Schema
+    integers: frozenset[str]
+    targets: dict[str, Any] = field(default_factory=dict)
 
 
 class SchemaBuilder:
-    """Builds schemas of resource types of one edition; data types stand once, under "definitions"."""
+    """Builds schemas of resource types of one edition; data types stand once, under "$defs"."""
 
     def __init__(self, registry: Registry) -> None:
-        self._registry = registry
-        self._edition = registry.edition
+        self.registry = registry
+        self.edition = registry.edition
         self.definitions: dict[str, Schema] = {}
 
     def resource(self, name: str) -> Schema:
-        """The schema of a resource type but for `presence`; `REFUSED` when no schema can hold its rules."""
-        schema = self._root(name)
-        return REFUSED if schema is REFUSED else {k: v for k, v in schema.items() if k not in _PRESENCE}
-
-    def presence(self, name: str) -> Schema:
-        """What must and must not stand together at the root of a resource type: it looks at keys only."""
-        schema = self._root(name)
-        if schema is REFUSED:
-            return schema
-        held: dict[str, Any] = {k: v for k, v in schema.items() if k in _PRESENCE}
-        return {"type": "object", "properties": dict.fromkeys(schema["properties"], {}), **held}
-
-    def _root(self, name: str) -> Schema:
-        definition = self._edition.type(name)
-        if definition is None:
+        """The whole schema of a resource type; `REFUSED` when it has rules that no schema can hold."""
+        definition = self.edition.type(name)
+        if definition is None or definition.kind != "resource":
             return REFUSED
         schema = self._object(definition, root=True)
-        if schema is REFUSED:
-            return schema
-        properties = {"resourceType": {"enum": [name]}, **schema["properties"]}
-        if name == "Observation":
-            properties["code"] = self._without_vital_signs()
-        return {**schema, "properties": properties, "required": ["resourceType", *schema.get("required", ())]}
+        if schema is not REFUSED:
+            schema["properties"]["resourceType"] = {"enum": [name]}
+            schema.setdefault("required", []).append("resourceType")
+        return schema
 
-    def bundle_head(self) -> dict[str, Any]:
+    def form(self, name: str, schema: Schema) -> Form:
+        """A finished schema, parted into what is settled by keys and what is not."""
+        definition = self.edition.type(name)
+        keys = definition.keys if definition else {}
+        return Form(
+            schema={k: v for k, v in schema.items() if k not in _PRESENCE},
+            presence={k: schema[k] for k in ("type", "additionalProperties", *_PRESENCE) if k in schema}
+            | {"properties": {k: True for k in schema["properties"]}},
+            integers=frozenset(k for k in schema["properties"] if k in keys and self._is_integer(keys[k])),
+            targets=self.targets(name),
+        )
+
+    def bundle_head(self) -> Schema:
         """The schema of a Bundle (transaction, batch or collection) but for its entries."""
         return {
             "type": "object",
             "properties": {
                 "resourceType": {"enum": ["Bundle"]},
-                "id": {"type": "string", "pattern": _PATTERNS["id"]},
-                "meta": self._type("Meta"),
+                "id": {"type": "string", "pattern": PATTERNS["id"]},
+                "meta": self.type("Meta"),
                 "type": {"enum": ["transaction", "batch", "collection"]},
-                "timestamp": {"type": "string", "pattern": _PATTERNS["instant"]},
+                "timestamp": {"type": "string", "pattern": PATTERNS["instant"]},
             },
             "required": ["resourceType", "type", "entry"],
             "additionalProperties": False,
         }
 
-    def _type(self, name: str) -> Schema:
+    def targets(self, name: str, inside: frozenset[str] = frozenset()) -> dict[str, Any]:
+        """Where references stand in a resource: key -> types allowed, or the same of a nested type.
+
+        Data types, and a nested type inside itself, are left out: the schema lets no urn into the first
+        and refuses the second.
+        """
+        definition = self.edition.type(name)
+        plan: dict[str, Any] = {}
+        for key, child in definition.keys.items() if definition else ():
+            nested = self.edition.type(child.type_name)
+            if child.type_name == "Reference":
+                if child.type.targets:
+                    plan[key] = frozenset(self.kinds(child.type.targets))
+            elif nested is not None and nested.kind == "nested" and nested.name not in inside:
+                deeper = self.targets(nested.name, inside | {nested.name})
+                if deeper:
+                    plan[key] = deeper
+        return plan
+
+    def kinds(self, targets: Iterable[str]) -> list[str]:
+        """The resource types that references to these targets may lead to."""
+        wanted = tuple(targets)
+        edition = self.edition
+        return sorted(r for r in edition.resources if not wanted or any(edition.is_a(r, t) for t in wanted))
+
+    def reference(self, targets: tuple[str, ...], *, urn: bool) -> Schema:
+        """A Reference to one of these types, as far as the text of the reference says it."""
+        if any("/" in t for t in targets):
+            return REFUSED
+        schema = self.copy("Reference")
+        if schema is not REFUSED:
+            schema["properties"].pop("type", None)
+            literal = rf'(https?://[!"$->@-~]+/)?({"|".join(self.kinds(targets))})/{ID}'
+            pattern = f"^({literal}|{UUID})$" if urn else f"^{literal}$"
+            schema["properties"]["reference"] = {"type": "string", "pattern": pattern}
+        return schema
+
+    def type(self, name: str) -> Schema:
+        """A reference to the schema of a data type or nested type, which is built at first use."""
         if name not in self.definitions:
             self.definitions[name] = REFUSED  # while it is built: a type inside itself is refused
-            definition = self._edition.type(name)
+            definition = self.edition.type(name)
             self.definitions[name] = REFUSED if definition is None else self._object(definition, root=False)
-        found = self.definitions[name]
-        return REFUSED if found is REFUSED else {"$ref": f"#/definitions/{name}"}
+        return REFUSED if self.definitions[name] is REFUSED else {"$ref": f"#/$defs/{name}"}
+
+    def copy(self, name: str) -> Schema:
+        """A type's own schema, open to be narrowed for one place."""
+        if self.type(name) is REFUSED:
+            return REFUSED
+        return deepcopy(self.definitions[name])
+
+    def coded(self, binding: Binding) -> Schema:
+        """A Coding with a code of the value set; `REFUSED` where the set is not written out."""
+        systems = self._codes(binding)
+        if systems is None:
+            return REFUSED
+        options: list[Schema] = [
+            {
+                "properties": {"system": {"enum": [system]}, "code": {"enum": sorted(codes)}},
+                "required": ["system", "code"],
+            }
+            for system, codes in sorted(systems.items())
+            if codes
+        ]
+        return options[0] if len(options) == 1 else {"anyOf": options}
+
+    def codes(self, binding: Binding) -> Schema:
+        """A code of the value set, whatever its system."""
+        systems = self._codes(binding)
+        if systems is None:
+            return REFUSED
+        return {"enum": sorted({code for codes in systems.values() for code in codes})}
+
+    def _codes(self, binding: Binding) -> Mapping[str, Iterable[str]] | None:
+        found = self.registry.value_set(binding.value_set)
+        if found is None or not found.systems or sum(map(len, found.systems.values())) > _MAX_CODES:
+            return None
+        return found.systems
 
     def _object(self, definition: TypeDef, *, root: bool) -> Schema:
         additions = [fragment(i.key, i.expression) for i in definition.invariants]
-        if any(a is None for a in additions):
+        properties = self._properties(definition, root=root)
+        schema: Schema = {"type": "object", "properties": properties, "additionalProperties": False}
+        if not root:
+            schema["minProperties"] = 1
+        if any(addition is None for addition in additions):
             return REFUSED
-        left_out = _LEFT_OUT if definition.name != "Meta" else _LEFT_OUT | {"profile"}
+        for element in definition.elements.values():
+            if element.min and not require(schema, definition, element.name):
+                return REFUSED
+        _exclude_choices(schema, definition)
+        for addition in additions:
+            add_fragment(schema, definition, addition or {})
+        return schema
+
+    def _properties(self, definition: TypeDef, *, root: bool) -> dict[str, Schema]:
+        left_out = _LEFT_OUT | ({"profile"} if definition.name == "Meta" else set())
         properties: dict[str, Schema] = {}
         for key, child in definition.keys.items():
             if child.companion or key in left_out or (key == "id" and not root):
                 continue
+            if self._is_integer(child) and (not root or child.element.many):
+                continue
+            # a urn may lead to another entry, which is looked up for resources and their nested types only
             schema = self._element(child, urn=definition.kind in ("resource", "nested"))
             if schema is not REFUSED:
                 properties[key] = schema
-        needs: list[Schema] = []
-        required: list[str] = []
-        for element in definition.elements.values():
-            if element.min:
-                keys = [k for k, c in definition.keys.items() if c.element is element and k in properties]
-                if not keys:
-                    return REFUSED
-                if element.is_choice:
-                    needs.append({"anyOf": [{"required": [k]} for k in keys]})
-                else:
-                    required.append(keys[0])
-        dependencies = _choices(definition, properties)
-        for addition in additions:
-            _add(addition or {}, definition, properties, required, needs, dependencies)
-        schema: dict[str, Any] = {"type": "object", "properties": properties, "additionalProperties": False}
-        if not root:
-            schema["minProperties"] = 1
-        if required:
-            schema["required"] = sorted(set(required))
-        if dependencies:
-            schema["dependencies"] = dependencies
-        if needs:
-            schema["allOf"] = needs
-        return schema
+        return properties
+
+    def _is_integer(self, child: Child) -> bool:
+        definition = self.edition.type(child.type_name)
+        return definition is not None and definition.json == "integer"
 
     def _element(self, child: Child, *, urn: bool) -> Schema:
-        # a urn may lead to another entry, which is looked up for resources and their nested types only
         element = child.element
         if any(fragment(i.key, i.expression) is None for i in element.invariants):
             return REFUSED
@@ -155,29 +212,37 @@ class SchemaBuilder:
         schema = self._value(child, element, urn=urn)
         if schema is REFUSED or not element.many:
             return schema
-        array: dict[str, Any] = {"type": "array", "minItems": max(1, element.min), "items": schema}
+        array: Schema = {"type": "array", "minItems": max(1, element.min), "items": schema}
         if element.max is not None:
             array["maxItems"] = element.max
         return array
 
     def _value(self, child: Child, element: Element, *, urn: bool) -> Schema:
-        name = child.type_name
+        name, binding = child.type_name, element.binding
         if child.primitive:
-            schema = self._primitive(name, element)
-            return schema if element.binding is None else self._bound_code(schema, element.binding)
+            bound = binding is not None and binding.strength in ("required", "extensible")
+            return self.codes(binding) if bound and binding is not None else self._primitive(name)
         if name == "Reference":
-            return self._reference(child.type.targets, urn=urn)
-        if self._edition.is_a(name, "Resource"):
+            return self.reference(child.type.targets, urn=urn)
+        if name == "CodeableReference" or self.edition.is_a(name, "Resource"):
             return REFUSED
-        if name == "CodeableReference":
-            return REFUSED
-        schema = self._type(name)
-        if schema is REFUSED or element.binding is None:
-            return schema
-        return self._bound(name, element.binding)
+        return self.type(name) if binding is None else self.bound(name, binding)
 
-    def _primitive(self, name: str, element: Element) -> Schema:
-        definition = self._edition.type(name)
+    def bound(self, name: str, binding: Binding) -> Schema:
+        """A Coding or CodeableConcept with a code of the value set."""
+        some = self.coded(binding)
+        schema = self.copy(name) if name in ("Coding", "CodeableConcept") else REFUSED
+        if some is REFUSED or schema is REFUSED:
+            return REFUSED
+        if name == "Coding":
+            return {"allOf": [schema, some]}
+        schema["properties"]["coding"] = {**schema["properties"]["coding"], "contains": some}
+        if binding.strength == "required":
+            schema["required"] = ["coding"]
+        return schema
+
+    def _primitive(self, name: str) -> Schema:
+        definition = self.edition.type(name)
         if definition is None or name == "integer64":
             return REFUSED
         if definition.json == "boolean":
@@ -187,118 +252,56 @@ class SchemaBuilder:
             return {"type": "integer", "minimum": low, "maximum": high}
         if definition.json == "decimal":
             return {"type": "number", "minimum": -_LIMIT, "maximum": _LIMIT}
-        pattern = _PATTERNS.get(name)
-        if pattern is not None:
-            return {"type": "string", "pattern": pattern}
-        return {"type": "string", "pattern": f"^{_TEXT}+$", "maxLength": 1024 * 1024}
-
-    def _codes(self, binding: Binding) -> Mapping[str, Iterable[str]] | None:
-        found = self._registry.value_set(binding.value_set)
-        if found is None or not found.systems or sum(map(len, found.systems.values())) > _MAX_CODES:
-            return None
-        return found.systems
-
-    def _bound_code(self, schema: Schema, binding: Binding) -> Schema:
-        if binding.strength not in ("required", "extensible"):
-            return schema
-        systems = self._codes(binding)
-        if systems is None:
-            return REFUSED
-        return {"enum": sorted({code for codes in systems.values() for code in codes})}
-
-    def _bound(self, name: str, binding: Binding) -> Schema:
-        """A Coding or CodeableConcept that holds a code of the value set (no allOf: each key is looked at once)."""
-        systems = self._codes(binding)
-        if systems is None or name not in ("Coding", "CodeableConcept"):
-            return REFUSED
-        coded: list[Schema] = [
-            {
-                "properties": {"system": {"enum": [system]}, "code": {"enum": sorted(codes)}},
-                "required": ["system", "code"],
-            }
-            for system, codes in sorted(systems.items())
-            if codes
-        ]
-        some: Schema = coded[0] if len(coded) == 1 else {"anyOf": coded}
-        if name == "Coding":
-            return {"allOf": [self._type(name), some]}
-        concept = self._copy(name)
-        if concept is REFUSED:
-            return REFUSED
-        concept["properties"]["coding"] = {**concept["properties"]["coding"], "not": {"items": {"not": some}}}
-        if binding.strength == "required":
-            concept["required"] = ["coding"]
-        return concept
-
-    def _copy(self, name: str) -> Any:
-        """A type's own schema, open to be narrowed for one place."""
-        if self._type(name) is REFUSED:
-            return REFUSED
-        schema = self.definitions[name]
-        return {**schema, "properties": dict(schema["properties"])}
-
-    def _reference(self, targets: tuple[str, ...], *, urn: bool) -> Schema:
-        if any("/" in t for t in targets):
-            return REFUSED
-        schema = self._copy("Reference")
-        if schema is not REFUSED:
-            schema["properties"].pop("type", None)
-            schema["properties"]["reference"] = {
-                "type": "string",
-                "pattern": f"^({self._literal(targets)}|{UUID})$" if urn else f"^{self._literal(targets)}$",
-            }
-        return schema
-
-    def _literal(self, targets: tuple[str, ...]) -> str:
-        edition = self._edition
-        kinds = sorted(r for r in edition.resources if not targets or any(edition.is_a(r, t) for t in targets))
-        return rf'(https?://[!"$->@-~]+/)?({"|".join(kinds)})/{ID}'
-
-    def _without_vital_signs(self) -> Schema:
-        """Observation.code: a vital sign has a profile to meet, and goes the thorough way."""
-        concept, coding = self._copy("CodeableConcept"), self._copy("Coding")
-        if concept is REFUSED or coding is REFUSED:
-            return REFUSED
-        coding["properties"]["code"] = {**coding["properties"]["code"], "not": {"enum": sorted(VITAL_SIGNS)}}
-        concept["properties"]["coding"] = {**concept["properties"]["coding"], "items": coding}
-        return concept  # type: ignore[no-any-return]
+        pattern = PATTERNS.get(name, TEXT)
+        return {"type": "string", "pattern": pattern} | ({"maxLength": 2**20} if pattern == TEXT else {})
 
 
-def _choices(definition: TypeDef, properties: Mapping[str, Schema]) -> dict[str, Any]:
-    """Each key of a choice rules out the other keys of it."""
-    groups: dict[str, list[str]] = {}
-    for key, child in definition.keys.items():
-        if child.element.is_choice and key in properties:
-            groups.setdefault(child.element.name, []).append(key)
-    return {
-        key: {"properties": {other: REFUSED for other in keys if other != key}}
-        for keys in groups.values()
-        for key in keys
-        if len(keys) > 1
-    }
+def keys_of(definition: TypeDef, name: str, schema: Schema) -> list[str]:
+    """The JSON keys of an element that the schema lets in."""
+    return [
+        key
+        for key, child in definition.keys.items()
+        if child.element.name == name and not child.companion and key in schema["properties"]
+    ]
 
 
-def _add(  # noqa: PLR0913 - the parts of one schema under construction
-    addition: Mapping[str, Any],
-    definition: TypeDef,
-    properties: dict[str, Schema],
-    required: list[str],
-    needs: list[Schema],
-    dependencies: dict[str, Any],
-) -> None:
+def require(schema: Schema, definition: TypeDef, name: str) -> bool:
+    """Asks for an element; False when the schema lets none of its keys in."""
+    keys = keys_of(definition, name, schema)
+    if not keys:
+        return False
+    if len(keys) == 1:
+        schema.setdefault("required", []).append(keys[0])
+    else:
+        schema.setdefault("allOf", []).append({"anyOf": [{"required": [key]} for key in keys]})
+    return True
+
+
+def add_fragment(schema: Schema, definition: TypeDef, addition: Mapping[str, Any]) -> None:
     """Merges one invariant's fragment into the schema of its type."""
-    for key, value in addition.get("properties", {}).items():
-        if value is REFUSED:
-            properties.pop(key, None)
-    required.extend(addition.get("required", ()))
-    if "anyOf" in addition:
-        needs.append({"anyOf": addition["anyOf"]})
-    for key, others in addition.get("dependencies", {}).items():
-        if key in properties:
-            dependencies[key] = [*dependencies.get(key, ()), *others]
-    if "choice_excludes" in addition:
-        choice, other = addition["choice_excludes"]
-        for key, child in definition.keys.items():
-            if child.element.name == choice and key in properties:
-                rule = dependencies.setdefault(key, {"properties": {}})
-                rule["properties"][other] = REFUSED
+    for key in addition.get("absent", ()):
+        schema["properties"].pop(key, None)
+    schema.setdefault("required", []).extend(addition.get("required", ()))
+    some = [key for name in addition.get("any", ()) for key in keys_of(definition, name, schema)]
+    if "any" in addition:
+        schema.setdefault("allOf", []).append({"anyOf": [{"required": [key]} for key in some]})
+    for key, others in addition.get("needs", {}).items():
+        schema.setdefault("dependentRequired", {}).setdefault(key, []).extend(others)
+    for name, other in addition.get("excludes", ()):
+        for key in keys_of(definition, name, schema):
+            _exclude(schema, key, other)
+
+
+def _exclude_choices(schema: Schema, definition: TypeDef) -> None:
+    """Each key of a choice rules out the other keys of it."""
+    for name, element in definition.elements.items():
+        keys = keys_of(definition, name, schema) if element.is_choice else []
+        for key in keys:
+            for other in keys:
+                if other != key:
+                    _exclude(schema, key, other)
+
+
+def _exclude(schema: Schema, key: str, other: str) -> None:
+    rule = schema.setdefault("dependentSchemas", {}).setdefault(key, {"properties": {}})
+    rule["properties"][other] = False

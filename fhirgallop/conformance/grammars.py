@@ -1,4 +1,6 @@
-"""Codes of systems that no table enumerates but a published grammar describes: languages, media types, countries.
+"""Codes of systems that no table enumerates but a published grammar describes.
+
+Languages, media types, countries, currencies, units, time zones.
 
 Sources: BCP 47 (languages), BCP 13 / RFC 6838 (media types), ISO 4217 (currencies, form only),
 ISO 3166 and UN M49 (countries, form only), UCUM (characters only), IANA time zones (form only).
@@ -9,11 +11,11 @@ from __future__ import annotations
 import re
 from collections.abc import Iterable
 
-_TOKEN = r"[A-Za-z0-9!#$&^_.+-]{1,127}"
+_WORD = r"[A-Za-z0-9!#$&^_.+-]{1,127}"
 _GRAMMARS = {
     "urn:ietf:bcp:47": r"([A-Za-z]{2,8}|[ixIX])(-[A-Za-z0-9]{1,8})*",
     # FHIR's own short names stand beside media types where a format is asked for (R4 2.1.0.6)
-    "urn:ietf:bcp:13": rf"{_TOKEN}/{_TOKEN}( *;[ -~]*)?|xml|json|ttl|html",
+    "urn:ietf:bcp:13": rf"{_WORD}/{_WORD}( *;[ -~]*)?|xml|json|ttl|html",
     "urn:iso:std:iso:4217": r"[A-Z]{3}",
     "urn:iso:std:iso:3166": r"[A-Z]{2,3}|[0-9]{3}",
     "urn:iso:std:iso:3166:-2": r"[A-Z]{2}-[A-Z0-9]{1,3}",

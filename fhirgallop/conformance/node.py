@@ -59,7 +59,9 @@ class Node:
         node.companion = companion
         node.element = place.element
         node.parent = self
-        node.step = f"{place.element.stem}.ofType({place.code})" if place.element.is_choice else place.element.name
+        node.step = (
+            f"{place.element.stem}.ofType({place.code})" if place.element.is_choice else place.element.name
+        )
         node.key = key
         node.index = index
         node.resource = self.resource

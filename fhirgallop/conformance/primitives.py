@@ -1,7 +1,7 @@
-"""Clause: the format of primitive values: JSON kind, regular expression, calendar, length, range.
+r"""Clause: the format of primitive values: JSON kind, regular expression, calendar, length, range.
 
 Source: FHIR data types, primitive types (R4, R4B, R5); the expressions are those of the definitions,
-matched whole and with ASCII classes (their `\\S` holds every character beyond ASCII).
+matched whole and with ASCII classes (their `\S` holds every character beyond ASCII).
 """
 
 from __future__ import annotations
@@ -148,7 +148,7 @@ def _range(node: Node, name: str, value: int) -> Iterator[Issue]:
         yield Issue("error", "value", "primitive-range", said, expression=node.expression)
 
 
-def _digits(node: Node, value: int | float | Decimal) -> Iterator[Issue]:
+def _digits(node: Node, value: float | Decimal) -> Iterator[Issue]:
     """R5 limits a decimal to 18 digits before and 17 behind the point (an exponent apart)."""
     digits = Decimal(repr(value) if isinstance(value, float) else value).as_tuple()
     exponent = digits.exponent if isinstance(digits.exponent, int) else 0

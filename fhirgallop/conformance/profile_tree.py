@@ -9,7 +9,7 @@ from __future__ import annotations
 
 from collections.abc import Mapping
 from dataclasses import dataclass, field
-from typing import Any
+from typing import Any, Literal
 
 from fhirgallop.conformance.editions.model import Binding, Invariant, TypeRef
 from fhirgallop.conformance.registry import Registry
@@ -80,7 +80,9 @@ def _read(url: str, registry: Registry, seen: frozenset[str]) -> Profile | None:
 
 def _elements(definition: Definition, view: str) -> list[Definition]:
     elements = definition.get(view, {}).get("element") if isinstance(definition.get(view), Mapping) else None
-    return [e for e in elements if isinstance(e, Mapping) and isinstance(e.get("path"), str)] if elements else []
+    return (
+        [e for e in elements if isinstance(e, Mapping) and isinstance(e.get("path"), str)] if elements else []
+    )
 
 
 def _grow(root: Rule, elements: list[Definition], registry: Registry, kind: str) -> Rule:
@@ -163,9 +165,11 @@ def _fill(rule: Rule, element: Definition) -> None:
     held = {i.key for i in rule.invariants}
     for constraint in element.get("constraint", ()):
         if constraint.get("expression") and constraint.get("key") not in held:
-            severity = "warning" if constraint.get("severity") == "warning" else "error"
+            severity: Literal["error", "warning"] = "warning" if constraint.get("severity") == "warning" else "error"
             rule.invariants.append(
-                Invariant(constraint["key"], severity, constraint["expression"], str(constraint.get("human", "")))
+                Invariant(
+                    constraint["key"], severity, constraint["expression"], str(constraint.get("human", ""))
+                )
             )
     slicing = element.get("slicing")
     if isinstance(slicing, Mapping):

@@ -42,10 +42,14 @@ class Judge:
                 said = f"The profile {canonical(plain)} is for another type than this {node.type_name}. Correct it."
                 yield Issue("error", "structure", "profile-type", said, expression=node.expression)
                 return
-            said = f"The profile {canonical(plain)} is not known here, so it was not judged. Load its package."
+            said = (
+                f"The profile {canonical(plain)} is not known here, so it was not judged. Load its package."
+            )
             yield Issue("warning", "not-found", "profile-unknown", said, expression=node.expression)
         elif not self._registry.edition.is_a(node.type_name, profile.type):
-            said = f"The profile {canonical(plain)} is for {profile.type}, not for {node.type_name}. Correct it."
+            said = (
+                f"The profile {canonical(plain)} is for {profile.type}, not for {node.type_name}. Correct it."
+            )
             yield Issue("error", "structure", "profile-type", said, expression=node.expression)
         else:
             yield from self._value(node, profile.root, canonical(plain))
@@ -89,7 +93,9 @@ class Judge:
 
     def _members(self, node: Node, rule: Rule, nodes: Sequence[Node], profile: str) -> Iterator[Issue]:
         members: list[tuple[Node, str | None]] = []
-        slicer = slicing.Slicer(rule, self._registry, self._scope.resolve, self.conforms) if rule.slices else None
+        slicer = (
+            slicing.Slicer(rule, self._registry, self._scope.resolve, self.conforms) if rule.slices else None
+        )
         if slicer is not None and not slicer.judgeable():
             said = f"Profile {profile} tells slices of '{rule.name}' apart in a way not judged here."
             yield Issue("warning", "not-supported", "slice-not-judged", said, expression=node.expression)
@@ -115,7 +121,9 @@ class Judge:
             said = f"Profile {profile} fixes the value of this element, and another stands here. Use the fixed one."
             yield Issue("error", "value", "fixed-value", said, expression=at)
         elif value is not None and rule.pattern is not None and not contains(value, rule.pattern):
-            said = f"Profile {profile} asks for a pattern that this element lacks. Add what the pattern holds."
+            said = (
+                f"Profile {profile} asks for a pattern that this element lacks. Add what the pattern holds."
+            )
             yield Issue("error", "value", "pattern-value", said, expression=at)
         if rule.binding is not None:
             yield from bindings.check_binding(node, rule.binding, self._registry)

@@ -54,7 +54,9 @@ class _Index:
                 found = self._find(around, entry, reference)
                 if found is not None:
                     return found
-            entry, around = (around, around.parent) if around.type_name == "Bundle.entry" else (entry, around.parent)
+            entry, around = (
+                (around, around.parent) if around.type_name == "Bundle.entry" else (entry, around.parent)
+            )
         return self._find(self._root, None, reference) if self._root.type_name == "Bundle" else None
 
     def _find(self, bundle: Node, entry: Node | None, reference: str) -> Node | None:
@@ -63,7 +65,12 @@ class _Index:
         for candidate in (plain, _VERSION.sub("", plain)):
             if candidate in entries:
                 return entries[candidate]
-        if entry is not None and entry.type_name == "Bundle.entry" and "://" not in plain and not plain.startswith("urn:"):
+        if (
+            entry is not None
+            and entry.type_name == "Bundle.entry"
+            and "://" not in plain
+            and not plain.startswith("urn:")
+        ):
             base = _BASE.fullmatch(str(entry.value.get("fullUrl", "")))
             if base:
                 return entries.get(f"{base.group(1)}/{_VERSION.sub('', plain)}")
@@ -86,7 +93,11 @@ class _Index:
             place = self._edition.child("Bundle", "entry")
             entries = bundle.value.get("entry")
             for index, entry in enumerate(entries if isinstance(entries, list) else ()):
-                if place is None or not isinstance(entry, Mapping) or not isinstance(entry.get("fullUrl"), str):
+                if (
+                    place is None
+                    or not isinstance(entry, Mapping)
+                    or not isinstance(entry.get("fullUrl"), str)
+                ):
                     continue
                 holder = bundle.child(entry, None, place, "entry", index)
                 for child in self._resources(holder, "resource", [entry.get("resource")], many=False):
@@ -116,7 +127,9 @@ def check(node: Node, edition: Edition, resolve: Resolve) -> Iterator[Issue]:
             yield _wrong_target(node, targets, "the type that this reference names")
     elif node.type_name == "canonical" and isinstance(node.value, str) and node.value.startswith("#"):
         target = resolve(node, node.value)
-        targets = next((t.targets for t in node.element.types if t.code == "canonical"), ()) if node.element else ()
+        targets = (
+            next((t.targets for t in node.element.types if t.code == "canonical"), ()) if node.element else ()
+        )
         if target is not None and not allowed(target.type_name, targets, edition):
             yield _wrong_target(node, targets, "the contained resource meant here")
 
@@ -168,8 +181,15 @@ def _targets(node: Node, edition: Edition) -> tuple[str, ...]:
     if element is None:
         return ()
     own = tuple(t for ref in element.types if ref.code == "Reference" for t in ref.targets)
-    if not own and node.parent is not None and node.parent.type_name == "CodeableReference" and node.parent.element:
-        own = tuple(t for ref in node.parent.element.types if ref.code == "CodeableReference" for t in ref.targets)
+    if (
+        not own
+        and node.parent is not None
+        and node.parent.type_name == "CodeableReference"
+        and node.parent.element
+    ):
+        own = tuple(
+            t for ref in node.parent.element.types if ref.code == "CodeableReference" for t in ref.targets
+        )
     return own
 
 

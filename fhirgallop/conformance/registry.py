@@ -63,7 +63,9 @@ class Registry:
         """A value set written out, or None when it is not known."""
         url = canonical.partition("|")[0]
         if url not in self._value_sets:
-            self._value_sets[url] = self._expand(url) if url in self._loaded_sets else self.edition.value_set(url)
+            self._value_sets[url] = (
+                self._expand(url) if url in self._loaded_sets else self.edition.value_set(url)
+            )
         return self._value_sets[url]
 
     def _expand(self, url: str) -> ValueSet | None:

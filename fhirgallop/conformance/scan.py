@@ -1,4 +1,4 @@
-"""Walks JSON text token by token, for what a parser does not keep: where values stand, and keys written twice.
+"""Walks JSON text token by token, for what a parser does not keep: places, and keys written twice.
 
 The text has been parsed before, so it is known to be well-formed. One pass, no recursion.
 """

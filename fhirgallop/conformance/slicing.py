@@ -40,7 +40,9 @@ class Slicer:
     def slice_of(self, node: Node) -> str | None:
         """Name of the slice the node belongs to, or None."""
         for name, rule in self._rule.slices.items():
-            if self.discriminators and all(self._fits(node, name, rule, k, p) for k, p in self.discriminators):
+            if self.discriminators and all(
+                self._fits(node, name, rule, k, p) for k, p in self.discriminators
+            ):
                 return name
         return None
 
@@ -50,6 +52,14 @@ class Slicer:
             kind in ("value", "pattern", "type", "exists", "profile") and _supported(path)
             for kind, path in self.discriminators
         )
+
+    @staticmethod
+    def expected(rule: Rule, path: str) -> list[tuple[str, Any]]:
+        """What a slice asks for at a discriminator's path: ("fixed" | "pattern" | "binding", value) pairs."""
+        found = list(_expected(rule, [] if path == "$this" else _STEP.split(path)))
+        if not found and path == "url":
+            found = [("fixed", p) for t in rule.types for p in t.profiles]
+        return found
 
     def _fits(self, node: Node, name: str, rule: Rule, kind: str, path: str) -> bool:
         if kind == "type":
@@ -67,9 +77,7 @@ class Slicer:
         return self._fits_value(values, rule, path)
 
     def _fits_value(self, values: Sequence[Any], rule: Rule, path: str) -> bool:
-        expected = list(_expected(rule, [] if path == "$this" else _STEP.split(path)))
-        if not expected and path == "url":
-            expected = [("fixed", p) for t in rule.types for p in t.profiles]
+        expected = list(self.expected(rule, path))
         if not expected:
             return False
         for how, want in expected:
@@ -85,7 +93,9 @@ class Slicer:
     def _fits_type(self, node: Node, name: str, rule: Rule, path: str) -> bool:
         wanted = {t.code for r in _rules_at(rule, path) for t in r.types}
         if "resolve()" in path:
-            wanted = {t.rpartition("/")[2] for r in _rules_at(rule, path) for ref in r.types for t in ref.targets} or wanted
+            wanted = {
+                t.rpartition("/")[2] for r in _rules_at(rule, path) for ref in r.types for t in ref.targets
+            } or wanted
             return any(n.type_name in wanted for n in _nodes_at(node, path, self._resolve))
         if path != "$this":
             return any(_type_of(value) in wanted for value in _values_at(node.value, path))
@@ -110,10 +120,14 @@ def check(
     for name, count in counts.items():
         part = rule.slices[name]
         if count < part.min:
-            said = f"Profile {profile} asks for at least {part.min} '{rule.name}' of the slice {name}. Add it."
+            said = (
+                f"Profile {profile} asks for at least {part.min} '{rule.name}' of the slice {name}. Add it."
+            )
             yield Issue("error", "required", "slice-min", said, expression=node.expression)
         elif part.max is not None and count > part.max:
-            said = f"Profile {profile} takes at most {part.max} '{rule.name}' of the slice {name}. Remove some."
+            said = (
+                f"Profile {profile} takes at most {part.max} '{rule.name}' of the slice {name}. Remove some."
+            )
             yield Issue("error", "structure", "slice-max", said, expression=node.expression)
     if slicing is not None:
         yield from _order(rule, members, profile)
@@ -140,7 +154,11 @@ def _order(rule: Rule, members: Sequence[tuple[Node, str | None]], profile: str)
 
 def _supported(path: str) -> bool:
     return all(
-        step == "$this" or step.isidentifier() or step == "resolve()" or _OF_TYPE.fullmatch(step) or _EXTENSION.fullmatch(step)
+        step == "$this"
+        or step.isidentifier()
+        or step == "resolve()"
+        or _OF_TYPE.fullmatch(step)
+        or _EXTENSION.fullmatch(step)
         for step in _STEP.split(path)
     )
 
@@ -172,7 +190,12 @@ def _step(item: Any, step: str) -> list[Any]:
     if found is None:
         size = len(step)
         found = next(
-            (v for k, v in item.items() if isinstance(k, str) and k.startswith(step) and k[size : size + 1].isupper()), None
+            (
+                v
+                for k, v in item.items()
+                if isinstance(k, str) and k.startswith(step) and k[size : size + 1].isupper()
+            ),
+            None,
         )
     if found is None:
         return []
@@ -220,7 +243,12 @@ def _expected(rule: Rule, steps: Sequence[str]) -> Iterator[tuple[str, Any]]:
             for value in _values_at(want, ".".join(steps) or "$this"):
                 yield how if isinstance(value, (Mapping, list)) or how == "fixed" else "fixed", value
     if not steps:
-        if rule.binding is not None and rule.binding.strength == "required" and rule.fixed is None and rule.pattern is None:
+        if (
+            rule.binding is not None
+            and rule.binding.strength == "required"
+            and rule.fixed is None
+            and rule.pattern is None
+        ):
             yield "binding", rule.binding.value_set
         return
     if steps[0] in ("resolve()", "$this") or _OF_TYPE.fullmatch(steps[0]):
@@ -236,11 +264,11 @@ def _codes(value: Any) -> list[tuple[str | None, str]]:
     if not isinstance(value, Mapping):
         return []
     held = value.get("coding")
-    found = []
-    for coding in held if isinstance(held, list) else [value]:
-        if isinstance(coding, Mapping) and isinstance(coding.get("code"), str):
-            found.append((str(coding.get("system", "")), coding["code"]))
-    return found
+    return [
+        (str(coding.get("system", "")), coding["code"])
+        for coding in (held if isinstance(held, list) else [value])
+        if isinstance(coding, Mapping) and isinstance(coding.get("code"), str)
+    ]
 
 
 def _type_of(value: Any) -> str:

@@ -59,7 +59,9 @@ def read(resource: bytes | str | Mapping[str, Any]) -> Source:
     else:
         return _unreadable("json-object", "The resource is neither bytes, text nor an object. " + _CURE_JSON)
     if len(text) > MAX_BYTES:
-        return _unreadable("size-limit", f"The text is longer than {MAX_BYTES // 2**20} MB. Send it in parts.")
+        return _unreadable(
+            "size-limit", f"The text is longer than {MAX_BYTES // 2**20} MB. Send it in parts."
+        )
     try:
         value = orjson.loads(text)
     except ValueError:
@@ -74,7 +76,14 @@ def exact(text: bytes) -> Source:
     if text.startswith(_BOM):
         text = text[len(_BOM) :]
         issues.append(
-            Issue("error", "structure", "json-bom", "The text starts with a byte order mark. Remove it.", line=1, column=1)
+            Issue(
+                "error",
+                "structure",
+                "json-bom",
+                "The text starts with a byte order mark. Remove it.",
+                line=1,
+                column=1,
+            )
         )
     try:
         decoded = text.decode()
@@ -102,7 +111,9 @@ def exact(text: bytes) -> Source:
 
 def too_deep() -> Issue:
     """The issue for nesting beyond what is judged."""
-    return _fatal("depth-limit", f"The resource is nested deeper than {MAX_DEPTH} levels. Make it flatter.", 0, 0)
+    return _fatal(
+        "depth-limit", f"The resource is nested deeper than {MAX_DEPTH} levels. Make it flatter.", 0, 0
+    )
 
 
 def deeper_than_limit(value: Any) -> bool:
@@ -156,11 +167,11 @@ def locate(text: bytes, paths: Iterable[Path]) -> dict[Path, tuple[int, int]]:
 
 
 def _nothing_lost(text: bytes, value: Any) -> tuple[bool, bool]:
-    """Whether it is proved that no key was lost in reading, and whether the text is the value written again.
+    r"""Whether it is proved that no key was lost in reading, and whether the text is the value written again.
 
     A text that equals its value written again has lost nothing. Else: a lost key takes at least two quotation
     marks with it, so as many marks in the text as in the value written again means that none is lost;
-    `\\u0022` could hide a mark and ends the proof.
+    `\u0022` could hide a mark and ends the proof.
     """
     again = orjson.dumps(value)
     if again == text:
@@ -223,4 +234,3 @@ class _Numbers:
         said = f"A number has more than {MAX_NUMBER} characters. Write it shorter."
         self.issues.append(Issue("error", "value", "json-number", said))
         return True
-

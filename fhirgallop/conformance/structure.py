@@ -169,7 +169,9 @@ def _resolved(child: Node, edition: Edition, issues: list[Issue]) -> bool:
     missing = not isinstance(kind, str)
     rule = "resource-type-missing" if missing else "resource-type-unknown"
     said = "says no resourceType" if missing else f"has a resourceType that is none of {edition.name}"
-    issues.append(_issue(child, "structure", rule, f"The resource here {said}. Give a resource type of {edition.name}."))
+    issues.append(
+        _issue(child, "structure", rule, f"The resource here {said}. Give a resource type of {edition.name}.")
+    )
     return False
 
 
@@ -186,7 +188,13 @@ def _null(node: Node, key: str) -> Issue:
 def _wrong_kind(node: Node, key: str, item: Any, wanted: str, issues: list[Issue]) -> None:
     kinds = {list: "an array", bool: "a boolean", str: "a text", type(None): "null"}
     got = "an object" if isinstance(item, Mapping) else kinds.get(type(item), "a number")
-    rule = "array-expected" if wanted == "an array" else "object-expected" if "object" in wanted else "primitive-expected"
+    rule = (
+        "array-expected"
+        if wanted == "an array"
+        else "object-expected"
+        if "object" in wanted
+        else "primitive-expected"
+    )
     said = f"{name(key)} must be {wanted}, but {got} stands there. Write it as {wanted}."
     issues.append(_issue(node, "structure", rule, said))
 

@@ -12,6 +12,7 @@ from fhirgallop.conformance import fast, source, structure, walk
 from fhirgallop.conformance.editions import Edition
 from fhirgallop.conformance.node import Node
 from fhirgallop.conformance.registry import Registry, registry
+from fhirgallop.conformance.scan import Path as JsonPath
 from fhirgallop.conformance.source import Source
 from fhirgallop.outcome import Issue, ordered
 
@@ -76,7 +77,7 @@ def _repeated(text: bytes, root: Node, edition: Edition) -> Iterator[Issue]:
         yield Issue("error", "structure", "json-duplicate-key", said, expression=at, line=line, column=column)
 
 
-def _expression(path: source.Path, root: Node, edition: Edition) -> str:
+def _expression(path: JsonPath, root: Node, edition: Edition) -> str:
     """FHIRPath of the nearest node that stands at or above a path of JSON keys."""
     node = root
     key = ""
@@ -112,7 +113,7 @@ def _placed(issues: Sequence[Issue], text: bytes, root: Node) -> Iterator[Issue]
         yield replace(issue, line=line, column=column)
 
 
-def _path(expression: str, value: Any) -> source.Path:
+def _path(expression: str, value: Any) -> JsonPath:
     """JSON keys and indices of a FHIRPath made by `Node.expression`."""
     path: list[str | int] = []
     _, _, rest = expression.partition(".")

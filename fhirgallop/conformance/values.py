@@ -29,7 +29,9 @@ def equal(value: Any, wanted: Any) -> bool:
 def contains(value: Any, wanted: Any) -> bool:
     """Whether the value holds all that the pattern says; each item of a list must be found in any place."""
     if isinstance(wanted, Mapping):
-        return isinstance(value, Mapping) and all(k in value and contains(value[k], w) for k, w in wanted.items())
+        return isinstance(value, Mapping) and all(
+            k in value and contains(value[k], w) for k, w in wanted.items()
+        )
     if isinstance(wanted, list):
         return isinstance(value, list) and all(any(contains(v, w) for v in value) for w in wanted)
     return equal(value, wanted)

@@ -1,6 +1,7 @@
 """Clause: an Observation with a vital-signs code must meet the core's profile for it, named or not.
 
-Source: FHIR R4 "Observation vital signs profile" and its table of codes (LOINC); the same codes in R4B and R5.
+Source: FHIR R4 "Observation vital signs profile" and its table of codes (LOINC); 
+the codes are the same in R4B and R5.
 """
 
 from __future__ import annotations
@@ -8,7 +9,6 @@ from __future__ import annotations
 from collections.abc import Iterator, Mapping
 from typing import Any
 
-from fhirgallop.conformance.node import Node
 from fhirgallop.conformance.profile_tree import SD
 
 LOINC = "http://loinc.org"
@@ -26,11 +26,9 @@ PROFILES: Mapping[str, str] = {
 }
 
 
-def profiles_for(node: Node) -> Iterator[str]:
+def profiles_for(observation: Mapping[Any, Any]) -> Iterator[str]:
     """Canonicals of the profiles that the codes of an Observation ask for."""
-    if node.type_name != "Observation":
-        return
-    code: Any = node.value.get("code")
+    code: Any = observation.get("code")
     codings = code.get("coding") if isinstance(code, Mapping) else None
     for coding in codings if isinstance(codings, list) else ():
         if isinstance(coding, Mapping) and coding.get("system") == LOINC:

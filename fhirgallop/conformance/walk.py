@@ -44,7 +44,7 @@ def judge(start: Node, known: Registry, scope: Scope, named: Sequence[str] = ())
             children = structure.open_node(node, edition, issues)
             yield from _object_clauses(node, known, scope)
             if node.resource is node:
-                yield from _resource_clauses(node, scope, by_profile, named if node is start else ())
+                yield from _resource_clauses(node, by_profile, named if node is start else ())
         else:
             children = structure.open_primitive(node, edition, issues)
             yield from _primitive_clauses(node, known, scope)
@@ -65,12 +65,10 @@ def _object_clauses(node: Node, known: Registry, scope: Scope) -> Iterator[Issue
     yield from invariants.check(node, scope)
 
 
-def _resource_clauses(
-    node: Node, scope: Scope, by_profile: profiles.Judge, named: Sequence[str]
-) -> Iterator[Issue]:
+def _resource_clauses(node: Node, by_profile: profiles.Judge, named: Sequence[str]) -> Iterator[Issue]:
     yield from contained.check(node)
-    wanted = dict.fromkeys((*named, *profiles.declared(node), *vital_signs.profiles_for(node)))
-    for url in wanted:
+    implied = vital_signs.profiles_for(node.value) if node.type_name == "Observation" else ()
+    for url in dict.fromkeys((*named, *profiles.declared(node), *implied)):
         yield from by_profile.check(node, url)
 
 
@@ -86,5 +84,3 @@ def _primitive_clauses(node: Node, known: Registry, scope: Scope) -> Iterator[Is
     elif node.type_name == "canonical":
         yield from references.check(node, edition, scope.resolve)
     yield from invariants.check(node, scope)
-
-

@@ -37,7 +37,9 @@ def compile_edition(name: str, packages: Sequence[Package]) -> bytes:
             value_sets.setdefault(url, definition)
         for url, definition in package.code_systems.items():
             known = code_systems.get(url)
-            if known is None or (known.get("content") != "complete" and definition.get("content") == "complete"):
+            if known is None or (
+                known.get("content") != "complete" and definition.get("content") == "complete"
+            ):
                 code_systems[url] = definition
     types = TypeTable(name, core.structures)
     for profile in TYPE_PROFILES:

@@ -167,7 +167,8 @@ class Edition:
         for ref in element.types or (TypeRef("Element"),):
             primitive = self._rows.get(ref.code, {}).get("k") == "primitive"
             named = element.nested or next(
-                (p[len(SD) :] for p in ref.profiles if p.startswith(SD) and p[len(SD) :] in self._rows), ref.code
+                (p[len(SD) :] for p in ref.profiles if p.startswith(SD) and p[len(SD) :] in self._rows),
+                ref.code,
             )
             key = element.stem + (ref.code[0].upper() + ref.code[1:] if element.is_choice else "")
             keys.append((key, Child(element, ref, named, ref.code, primitive)))

@@ -55,7 +55,12 @@ class Invariants:
             expression = constraint.get("expression")
             if not expression:
                 continue
-            row = (constraint["key"], constraint["severity"], expression, " ".join(constraint["human"].split()))
+            row = (
+                constraint["key"],
+                constraint["severity"],
+                expression,
+                " ".join(constraint["human"].split()),
+            )
             if row not in self._index:
                 self._index[row] = len(self.rows)
                 self.rows.append(list(row))
@@ -162,12 +167,16 @@ class TypeTable:
                 del row["e"]
 
     def _element_invariants(self, element: Row) -> None:
-        names = [element["s"]] if "s" in element else [t if isinstance(t, str) else t[0] for t in element["t"]]
+        names = (
+            [element["s"]] if "s" in element else [t if isinstance(t, str) else t[0] for t in element["t"]]
+        )
         held: list[set[str]] = [
             set().union(*(self._held.get(step, set()) for step in self._line(name))) for name in names
         ]
         common = set.intersection(*held) if held else set()
-        indices = self.invariants.indices(c for c in element.pop("constraints") if _constraint_id(c) not in common)
+        indices = self.invariants.indices(
+            c for c in element.pop("constraints") if _constraint_id(c) not in common
+        )
         if indices:
             element["i"] = indices
 
@@ -235,7 +244,8 @@ def _binding(binding: Definition | None) -> list[str] | None:
 def _primitive(edition: str, name: str, parts: list[Definition]) -> Row:
     value = next(e for e in parts if e["path"] == f"{name}.value")
     published = next(
-        (e.get("valueString") for t in value["type"] for e in t.get("extension", ()) if e["url"] == _REGEX), None
+        (e.get("valueString") for t in value["type"] for e in t.get("extension", ()) if e["url"] == _REGEX),
+        None,
     )
     row: Row = {"j": JSON_KINDS.get(name, "string")}
     pattern = PATTERNS.get((edition, name), published)

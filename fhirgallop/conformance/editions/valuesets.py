@@ -54,7 +54,9 @@ class Expander:
             ready = self._known(url.partition("|")[0])
             if ready is None:
                 return None
-            return Codes({s: set(codes) for s, codes in ready.systems.items()}, unlisted=set(ready.open_systems))
+            return Codes(
+                {s: set(codes) for s, codes in ready.systems.items()}, unlisted=set(ready.open_systems)
+            )
         if url in seen:
             return None
         compose = definition.get("compose")
