@@ -132,6 +132,7 @@ EXAMPLES: dict[str, list[tuple[str, list[Any]]]] = {
         ("12.toString()", ["12"]),
         ("true.toString()", ["true"]),
         ("@2014-01-25T14:30.toString()", ["2014-01-25T14:30"]),
+        ("@2014-01T.toString()", ["2014-01"]),
         ("4 'mg'.toString()", ["4 'mg'"]),
     ],
     "5.6 strings": [

@@ -125,7 +125,7 @@ class Temporal:
         if self.kind == "time":
             return ":".join(shown)
         text = "-".join(shown[:_DAY_PARTS])
-        if self.kind == "date":
+        if len(shown) <= _DAY_PARTS:
             return text
         text += "T" + ":".join(shown[_DAY_PARTS:])
         if self.zone is None:
