@@ -56,11 +56,16 @@ class Items:
 
 @dataclass(frozen=True, slots=True)
 class Pairs:
-    """Keys with their values, in the order written."""
+    """Keys with their values, in the order written.
+
+    `refused` are the keys that were written but left out, because their values do not conform: whoever misses
+    one of them need not say so again.
+    """
 
     items: tuple[tuple[Scalar, Node], ...]
     line: int
     column: int
+    refused: frozenset[str] = frozenset()
 
     def get(self, key: str) -> Node | None:
         """The value of `key`."""
@@ -119,9 +124,9 @@ def _cure(problem: str) -> str:
     if "\\t" in problem or "tab" in problem:
         return "Indent with spaces, not with tabs."
     return (
-        "Look at the indentation and the closing brackets here and in the line before; "
-        "put a text that starts "
-        "with one of & * ? | > % @ ! [ { or holds a colon between double quotes."
+        "Look at the indentation and the closing brackets here and in the line before. A text that starts "
+        "with one of & * ? | > % @ ! or holds a colon, a comma or a bracket, such as mm[Hg], stands between "
+        "double quotes."
     )
 
 

@@ -96,7 +96,7 @@ class LineReader:
         group = node.get("findings")
         if not isinstance(group, Pairs):
             return None
-        if not text(node, "field"):
+        if not text(node, "field") and not node.refused:
             self._missing(node, "field", "a box that names several findings needs the field that holds it")
         named = choice_list(group, self._meanings.of_names(group.get("values")), several=True)
         return Line(
@@ -147,6 +147,8 @@ class LineReader:
     def _check_ways(self, node: Pairs, definition: FindingDefinition) -> None:
         ways = frozenset(way for way in _WAYS if node.get(way))
         field, presence = node.get("field"), node.get("presence")
+        if node.refused:
+            return
         advice = f"{definition.id} is a {definition.kind}: {_ADVICE[definition.kind]}."
         if field and presence:
             words = "A line has a field and a constant presence; keep the field with choice, or the constant."
@@ -175,7 +177,7 @@ class LineReader:
         if not isinstance(node, Pairs):
             return None
         split, part = text(node, "split"), text(node, "part")
-        if bool(split) != bool(part):
+        if bool(split) != bool(part) and not node.refused:
             self._missing(
                 node,
                 "part" if split else "split",
@@ -222,6 +224,8 @@ class LineReader:
     def _qualifier(self, axis: str, node: Pairs) -> QualifierSource | None:
         ways = [way for way in ("constant", "choice", "choices", "grade", "text") if node.get(way)]
         field, constant, grade = text(node, "field"), node.get("constant"), node.get("grade")
+        if node.refused:
+            return None
         if len(ways) != 1 or bool(field) == bool(constant):
             words = (
                 f"The qualifier {axis} needs either a constant, or a field with one of "
@@ -299,6 +303,8 @@ def condition(node: Node | None, faults: Faults) -> Condition | None:
     if not isinstance(node, Pairs):
         return None
     ways = [key.text for key, _ in node.items if key.text in ("field", "all", "any", "not")]
+    if node.refused and not ways:
+        return None
     if len(ways) != 1:
         words = (
             "A condition is one of: a field with is or blank; all; any; not. Put several below all or any."
@@ -318,6 +324,8 @@ def condition(node: Node | None, faults: Faults) -> Condition | None:
 
 def _field_condition(node: Pairs, faults: Faults) -> Condition | None:
     words, blank = texts(node.get("is")), text(node, "blank")
+    if node.refused:
+        return None
     if bool(words) == bool(blank):
         faults.add(
             node.line,

@@ -90,6 +90,7 @@ def _group(node: Node, shape: Group, name: str, faults: Faults) -> Node | None:
         _wrong_kind(node, name, f"a group with the keys {', '.join(keys)}", faults)
         return None
     kept = []
+    refused = set()
     for key, value in node.items:
         known = shape.key(key.text)
         if known is None:
@@ -98,8 +99,11 @@ def _group(node: Node, shape: Group, name: str, faults: Faults) -> Node | None:
                 f"{faults.near(key.text, keys, count=1)}"
             )
             faults.add(key.line, "map-unknown-key", text, column=key.column)
+            refused.add(key.text)
         elif good := conforming(value, known.shape, known.name, faults):
             kept.append((key, good))
+        else:
+            refused.add(key.text)
     written = {key.text for key, _ in node.items}
     for known in shape.keys:
         if known.required and known.name not in written:
@@ -108,7 +112,7 @@ def _group(node: Node, shape: Group, name: str, faults: Faults) -> Node | None:
     if shape.one_of and written.isdisjoint(shape.one_of):
         text = f"{name} needs one of the keys {', '.join(shape.one_of)}; add one of them."
         faults.add(node.line, "map-missing-key", text, code="required", column=node.column)
-    return Pairs(tuple(kept), node.line, node.column)
+    return Pairs(tuple(kept), node.line, node.column, frozenset(refused))
 
 
 def _about(shape: Shape) -> str:
@@ -118,5 +122,8 @@ def _about(shape: Shape) -> str:
 
 def _wrong_kind(node: Node, name: str, wanted: str, faults: Faults) -> None:
     found = {Scalar: "a single text", Items: "a list", Pairs: "a group of keys"}[type(node)]
-    text = f"{name} must be {wanted}, but {found} stands here."
+    cure = ""
+    if isinstance(node, Scalar) and re.search(r":\S", node.text):
+        cure = " Write a blank after each colon, as in 'field: s4'."
+    text = f"{name} must be {wanted}, but {found} stands here.{cure}"
     faults.add(node.line, "map-wrong-kind", text, column=node.column)

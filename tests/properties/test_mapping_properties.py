@@ -114,6 +114,7 @@ def cases(draw):
     return template, draw(records(template))
 
 
+@settings(deadline=None)
 @given(cases())
 def test_no_record_raises_and_checks_run_over_what_came_out(case):
     template, record = case
@@ -128,6 +129,7 @@ def test_no_record_raises_and_checks_run_over_what_came_out(case):
         assert entry.measure is None or entry.measure.unit == definition.unit
 
 
+@settings(deadline=None)
 @given(cases())
 def test_every_field_is_read_or_ignored_or_reported(case):
     template, record = case
@@ -149,6 +151,7 @@ def test_every_field_is_read_or_ignored_or_reported(case):
             assert line.field in used | reported
 
 
+@settings(deadline=None)
 @given(cases(), st.randoms(use_true_random=False))
 def test_the_order_of_lines_does_not_matter_to_the_issues(case, shuffle: random.Random):
     template, record = case
@@ -162,6 +165,7 @@ def test_the_order_of_lines_does_not_matter_to_the_issues(case, shuffle: random.
         assert {entry.key for entry in one.exam.entries} == {entry.key for entry in two.exam.entries}
 
 
+@settings(deadline=None)
 @given(st.text(max_size=400) | st.binary(max_size=400))
 @example("name: \x00")
 @example("? [a, b]\n: c")
@@ -176,7 +180,7 @@ def test_no_text_raises(text):
     assert issues
 
 
-@settings(max_examples=60)
+@settings(max_examples=60, deadline=None)
 @given(st.data())
 def test_a_damaged_map_never_raises(data):
     text = data.draw(st.sampled_from([path.read_text("utf-8") for path in MAPS]))
