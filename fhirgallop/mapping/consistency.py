@@ -3,7 +3,9 @@
 from __future__ import annotations
 
 from collections.abc import Iterator
+from typing import Final
 
+from fhirgallop.exam.presence import Presence
 from fhirgallop.mapping.document import clip
 from fhirgallop.mapping.faults import Faults
 from fhirgallop.mapping.template_map import (
@@ -17,6 +19,8 @@ from fhirgallop.mapping.template_map import (
     TemplateMap,
 )
 
+_SAID: Final = (Presence.PRESENT, Presence.ABSENT, Presence.UNCERTAIN)
+
 
 def check(template: TemplateMap, faults: Faults) -> None:
     """Notes every contradiction between lines."""
@@ -24,6 +28,12 @@ def check(template: TemplateMap, faults: Faults) -> None:
     _given_twice(template, faults)
     _blank_wordings(template, faults)
     for line in template.lines:
+        if line.presence in _SAID and not line.when:
+            words = (
+                f"This line would say {line.presence} in every record; add when, so that something in the "
+                "record says it."
+            )
+            faults.add(line.line, "map-constant-without-condition", words, code="business-rule")
         if line.when and not _can_hold(line.when):
             words = (
                 "This line can never apply: its condition contradicts itself. Correct when, "

@@ -204,7 +204,10 @@ LINE: Final = Group(
         Key("section", Word("Name of a section below `sections`.")),
         Key("when", Ref("condition")),
         Key("field", _FIELD),
-        Key("presence", Word("Constant presence, for a finding that has no box of its own.")),
+        Key(
+            "presence",
+            Word("Constant presence, for a finding without a box; a box is read by field and choice."),
+        ),
         Key("choice", _CHOICE),
         Key("choices", _CHOICES),
         Key("number", _NUMBER),

@@ -33,7 +33,7 @@ def conforming(node: Node, shape: Shape, name: str, faults: Faults) -> Node | No
 
 def _word(node: Node, shape: Word, name: str, faults: Faults) -> Node | None:
     if not isinstance(node, Scalar):
-        _wrong_kind(node, name, "a single text", faults)
+        _wrong_kind(node, name, "a single text", faults, shape.about)
         return None
     if node.is_empty or not node.text.strip():
         text = f"{name} is empty; write its value after the colon, or remove the key."
@@ -120,9 +120,9 @@ def _about(shape: Shape) -> str:
     return f" {about}" if about else ""
 
 
-def _wrong_kind(node: Node, name: str, wanted: str, faults: Faults) -> None:
+def _wrong_kind(node: Node, name: str, wanted: str, faults: Faults, about: str = "") -> None:
     found = {Scalar: "a single text", Items: "a list", Pairs: "a group of keys"}[type(node)]
-    cure = ""
+    cure = f" {about}" if about else ""
     if isinstance(node, Scalar) and re.search(r":\S", node.text):
         cure = " Write a blank after each colon, as in 'field: s4'."
     text = f"{name} must be {wanted}, but {found} stands here.{cure}"
