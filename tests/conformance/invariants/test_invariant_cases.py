@@ -2,8 +2,9 @@
 
 `cases.jsonl` has one line a case: the rule's key, the editions, the type of the root, the type the rule
 stands at (and the JSON key, where it stands on an element), a value that holds and the nearest one that
-fails. The verdicts were compared with an independent FHIRPath evaluator when the file was made; what it
-cannot evaluate (resolve, memberOf, %rootResource, patterns with needless escapes) was read by hand.
+fails. When the file was made an independent FHIRPath evaluator agreed on 1,475 of 1,581 verdicts. It cannot
+evaluate 102 (resolve, memberOf, %context, patterns with needless escapes), which rest on ours alone, and it
+differs on 4: three compare quantities without a unit, one stands deeper than it was asked to look.
 """
 
 from __future__ import annotations
