@@ -13,7 +13,15 @@ from typing import Any
 
 from fhirgallop.conformance.editions.model import Binding, Child, TypeDef, TypeRef
 from fhirgallop.conformance.fast_invariants import REFUSED, fragment
-from fhirgallop.conformance.fast_schema import Form, Schema, SchemaBuilder, add_fragment, keys_of, require
+from fhirgallop.conformance.fast_schema import (
+    Form,
+    Schema,
+    SchemaBuilder,
+    add_fragment,
+    ask,
+    keys_of,
+    require,
+)
 from fhirgallop.conformance.profile_tree import SD, Profile, Rule, read_profile
 from fhirgallop.conformance.slicing import Slicer
 
@@ -52,7 +60,7 @@ def form(
         meta["properties"]["profile"] = {"enum": [list(declared)]}
         meta["required"] = ["profile"]
         schema["properties"]["meta"] = meta
-        schema.setdefault("required", []).append("meta")
+        ask(schema, ("meta",))
     found = builder.form(name, schema)
     found.targets = targets
     return found
@@ -108,8 +116,6 @@ class _Narrowing:
                 del properties[key]
             else:
                 properties[key] = found
-        if rule.slices and any(s.min and name not in properties for name, s in rule.slices.items() if not _many(definition, rule)):
-            raise Unsupported
         if rule.min or any(s.min for s in rule.slices.values()):
             if not require(schema, definition, name):
                 raise Unsupported
@@ -126,7 +132,8 @@ class _Narrowing:
         if rule.max is not None:
             array["maxItems"] = rule.max
         if rule.slices:
-            array["allOf"] = [*array.get("allOf", ()), *self._slices(items, rule, child.type_name, urn=urn)]
+            slices = list(self._slices(items, rule, child.type_name, urn=urn))
+            array["allOf"] = [*array.get("allOf", ()), *slices]
         return array
 
     def _value(self, schema: Schema, rule: Rule, type_name: str, *, urn: bool) -> Schema:
@@ -172,7 +179,8 @@ class _Narrowing:
         """The object schema behind a `$ref`, as a copy of its own."""
         if "$ref" in schema:
             opened = self._builder.copy(schema["$ref"].removeprefix("#/$defs/"))
-            return {**opened, "allOf": [*opened.get("allOf", ()), *schema.get("allOf", ())]}
+            more = [*opened.get("allOf", ()), *schema.get("allOf", ())]
+            return {**opened, "allOf": more} if more else opened
         if "properties" not in schema:
             raise Unsupported
         return deepcopy(schema)
@@ -238,11 +246,6 @@ class _Narrowing:
                     raise Unsupported
                 found.append(name)
         return tuple(found)
-
-
-def _many(definition: TypeDef, rule: Rule) -> bool:
-    element = definition.elements.get(rule.name)
-    return element is not None and element.many
 
 
 def containing(wanted: Any) -> Schema:

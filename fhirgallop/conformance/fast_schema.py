@@ -60,7 +60,7 @@ class SchemaBuilder:
         schema = self._object(definition, root=True)
         if schema is not REFUSED:
             schema["properties"]["resourceType"] = {"enum": [name]}
-            schema.setdefault("required", []).append("resourceType")
+            ask(schema, ("resourceType",))
         return schema
 
     def form(self, name: str, schema: Schema) -> Form:
@@ -226,16 +226,18 @@ class SchemaBuilder:
             return self.reference(child.type.targets, urn=urn)
         if name == "CodeableReference" or self.edition.is_a(name, "Resource"):
             return REFUSED
-        return self.type(name) if binding is None else self.bound(name, binding)
+        if binding is None or binding.strength not in ("required", "extensible"):
+            return self.type(name)
+        return self.bound(name, binding)
 
     def bound(self, name: str, binding: Binding) -> Schema:
-        """A Coding or CodeableConcept with a code of the value set."""
+        """A Coding, CodeableConcept or Quantity with a code of the value set."""
         some = self.coded(binding)
-        schema = self.copy(name) if name in ("Coding", "CodeableConcept") else REFUSED
+        schema = self.copy(name) if name in ("Coding", "CodeableConcept", "Quantity", "SimpleQuantity") else REFUSED
         if some is REFUSED or schema is REFUSED:
             return REFUSED
-        if name == "Coding":
-            return {"allOf": [schema, some]}
+        if name != "CodeableConcept":
+            return {**schema, "allOf": [*schema.get("allOf", ()), some]}
         schema["properties"]["coding"] = {**schema["properties"]["coding"], "contains": some}
         if binding.strength == "required":
             schema["required"] = ["coding"]
@@ -265,13 +267,20 @@ def keys_of(definition: TypeDef, name: str, schema: Schema) -> list[str]:
     ]
 
 
+def ask(schema: Schema, keys: Iterable[str]) -> None:
+    """Adds keys to those required."""
+    wanted = sorted({*schema.get("required", ()), *keys})
+    if wanted:
+        schema["required"] = wanted
+
+
 def require(schema: Schema, definition: TypeDef, name: str) -> bool:
     """Asks for an element; False when the schema lets none of its keys in."""
     keys = keys_of(definition, name, schema)
     if not keys:
         return False
     if len(keys) == 1:
-        schema.setdefault("required", []).append(keys[0])
+        ask(schema, keys)
     else:
         schema.setdefault("allOf", []).append({"anyOf": [{"required": [key]} for key in keys]})
     return True
@@ -281,15 +290,20 @@ def add_fragment(schema: Schema, definition: TypeDef, addition: Mapping[str, Any
     """Merges one invariant's fragment into the schema of its type."""
     for key in addition.get("absent", ()):
         schema["properties"].pop(key, None)
-    schema.setdefault("required", []).extend(addition.get("required", ()))
+    ask(schema, addition.get("required", ()))
     some = [key for name in addition.get("any", ()) for key in keys_of(definition, name, schema)]
     if "any" in addition:
         schema.setdefault("allOf", []).append({"anyOf": [{"required": [key]} for key in some]})
     for key, others in addition.get("needs", {}).items():
-        schema.setdefault("dependentRequired", {}).setdefault(key, []).extend(others)
+        schema.setdefault("dependentRequired", {})[key] = sorted(others)
     for name, other in addition.get("excludes", ()):
         for key in keys_of(definition, name, schema):
             _exclude(schema, key, other)
+
+    for key, more in addition.get("also", {}).items():
+        if key in schema["properties"]:
+            held = schema["properties"][key]
+            schema["properties"][key] = {**held, "allOf": [*held.get("allOf", ()), more]}
 
 
 def _exclude_choices(schema: Schema, definition: TypeDef) -> None:

@@ -101,11 +101,16 @@ class Judge:
             yield Issue("warning", "not-supported", "slice-not-judged", said, expression=node.expression)
             slicer = None
         for member in nodes:
+            wrong = list(self._types(member, rule.types, profile))
+            yield from wrong
+            if wrong:
+                continue  # of a type that is not allowed: nothing else is asked of it
             yield from self._value(member, rule, profile)
             yield from self._children(member, rule, profile)
             name = slicer.slice_of(member) if slicer else None
             members.append((member, name))
             if name is not None:
+                yield from self._types(member, rule.slices[name].types, profile)
                 yield from self._value(member, rule.slices[name], profile)
                 yield from self._children(member, rule.slices[name], profile)
                 if rule.slices[name].slices:
@@ -115,8 +120,6 @@ class Judge:
 
     def _value(self, node: Node, rule: Rule, profile: str) -> Iterator[Issue]:
         value, at = node.value, node.expression
-        if rule.types and node.element is not None:
-            yield from self._types(node, rule.types, profile)
         if value is not None and rule.fixed is not None and not equal(value, rule.fixed):
             said = f"Profile {profile} fixes the value of this element, and another stands here. Use the fixed one."
             yield Issue("error", "value", "fixed-value", said, expression=at)
@@ -136,6 +139,8 @@ class Judge:
                 yield from invariants.check_one(node, invariant, self._scope)
 
     def _types(self, node: Node, types: Sequence[TypeRef], profile: str) -> Iterator[Issue]:
+        if not types:
+            return
         code = node.step.partition("ofType(")[2].rstrip(")")
         if code and all(t.code != code for t in types):
             said = f"Profile {profile} takes {one_of({t.code for t in types})} here only. Use one of these types."

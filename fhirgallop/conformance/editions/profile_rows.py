@@ -5,6 +5,8 @@ from __future__ import annotations
 from collections.abc import Mapping
 from typing import Any
 
+from fhirgallop.conformance.editions.structures import SD
+
 Definition = Mapping[str, Any]
 
 KEPT = (
@@ -23,7 +25,7 @@ _CONSTRAINT_KEPT = ("key", "severity", "human", "expression")
 def profile_rows(structures: Mapping[str, Definition], types: Mapping[str, Any]) -> dict[str, Definition]:
     """A cut StructureDefinition for each core profile on a resource, by canonical."""
     return {
-        url: cut_profile(definition)
+        url: cut_profile(definition, types)
         for url, definition in structures.items()
         if definition.get("kind") == "resource"
         and definition.get("derivation") == "constraint"
@@ -32,9 +34,9 @@ def profile_rows(structures: Mapping[str, Definition], types: Mapping[str, Any])
     }
 
 
-def cut_profile(definition: Definition) -> Definition:
+def cut_profile(definition: Definition, types: Mapping[str, Any]) -> Definition:
     """The definition with only what is judged; elements that say nothing of their own are gone."""
-    elements = [_cut(e) for e in definition["snapshot"]["element"]]
+    elements = [_cut(e, types) for e in definition["snapshot"]["element"]]
     told = {e["id"] for e in elements if _tells(e)}
     needed = {step for ident in told for step in _line(ident)}
     return {
@@ -53,11 +55,9 @@ def _line(ident: str) -> list[str]:
     return [".".join(parts[: i + 1]) for i in range(len(parts))]
 
 
-def _cut(element: Definition) -> dict[str, Any]:
+def _cut(element: Definition, types: Mapping[str, Any]) -> dict[str, Any]:
     row = {key: element[key] for key in KEPT if key in element}
-    for key, value in element.items():
-        if key.startswith(("fixed", "pattern", "minValue", "maxValue")):
-            row[key] = value
+    row.update((k, v) for k, v in element.items() if k.startswith(("fixed", "pattern")))
     if "type" in element:
         row["type"] = [{k: t[k] for k in _TYPE_KEPT if k in t} for t in element["type"]]
     if "binding" in element and element["binding"].get("strength") in ("required", "extensible"):
@@ -69,7 +69,7 @@ def _cut(element: Definition) -> dict[str, Any]:
     own = [
         {k: c[k] for k in _CONSTRAINT_KEPT if k in c}
         for c in element.get("constraint", ())
-        if c.get("key") not in ("ele-1", "ext-1") and not str(c.get("key")).startswith("dom-")
+        if str(c.get("source", "")).removeprefix(SD) not in types
     ]
     if own:
         row["constraint"] = own
@@ -85,6 +85,7 @@ def _tells(element: Mapping[str, Any]) -> bool:
     return (
         bounds
         or slicing
-        or ":" in element["id"]
-        or any(key.startswith(("fixed", "pattern", "minValue", "maxValue")) for key in element)
+        or "constraint" in element
+        or ":" in element["id"].rpartition(".")[2]
+        or any(key.startswith(("fixed", "pattern")) for key in element)
     )
