@@ -29,15 +29,7 @@ _ANSWERS: Final[Mapping[str, tuple[str, ...]]] = {
     "open-choice": _OPTIONS,
     "coding": ("valueCoding", "valueString"),
 }
-_ANY: Final = (
-    *_OPTIONS,
-    "valueBoolean",
-    "valueDecimal",
-    "valueDateTime",
-    "valueUri",
-    "valueQuantity",
-    "valueAttachment",
-)
+_ANY: Final = tuple({answer for answers in _ANSWERS.values() for answer in answers})
 
 
 @dataclass(frozen=True, slots=True)
@@ -68,7 +60,7 @@ class Form:
 
 
 def index(questionnaire: Mapping[str, Any], limits: Limits = DEFAULT) -> Form:
-    """The items of a Questionnaire by linkId; what has none, or lies deeper than the limit, is passed over."""
+    """The items of a Questionnaire by linkId; one without, or deeper than the limit, is passed over."""
     items: dict[str, Item] = {}
     waiting: list[tuple[Any, str, bool, int]] = [(questionnaire.get("item"), "", False, 1)]
     while waiting:

@@ -121,7 +121,7 @@ def parse(
         if not _is_name(name) or whole[3:4] not in ("", marks.field):
             fault(
                 "error", "hl7-broken-segment",
-                f"The line does not start with a segment name and {marks.field!r}; write line ends inside "
+                f"The line does not start with a segment name and {marks.field!r}; write line ends in "
                 "text as \\.br\\ and use the separators that MSH declares.", number,
             )  # fmt: skip
             continue

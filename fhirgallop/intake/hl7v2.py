@@ -59,7 +59,7 @@ def read_message(data: bytes | str, *, line: int = 1, source: str = "", limits: 
     message, issues = parse(data, line=line, source=source, limits=limits)
     if message is None:
         return Reading(issues=tuple(issues))
-    notes = _Notes(source, issues)
+    notes = _Notes(source, issues, line)
     kind = message.components(message.segments[0].field(9))
     if [part.upper() for part in kind[:2]] != ["ORU", "R01"]:
         notes.add(
@@ -132,15 +132,17 @@ def _messages(stream: BinaryIO, limits: Limits) -> Iterator[tuple[int, bytes]]:
 class _Notes:
     """Gathers issues of one message or record."""
 
-    def __init__(self, source: str, issues: list[Issue]) -> None:
+    def __init__(self, source: str, issues: list[Issue], line: int) -> None:
         self.issues = issues
         self._source = source
+        self._line = line
 
     def add(
         self, severity: Severity, code: str, rule: str, text: str, field: str = "", line: int = 0
     ) -> None:
-        """One more issue."""
-        self.issues.append(Issue(severity, code, rule, text, field=field, source=self._source, line=line))
+        """One more issue, at the line where the message or its OBR starts if at no other."""
+        at = line or self._line
+        self.issues.append(Issue(severity, code, rule, text, field=field, source=self._source, line=at))
 
 
 @dataclass(slots=True)
@@ -187,7 +189,7 @@ def _groups(message: Message, notes: _Notes) -> list[_Group]:
 
 
 def _record(message: Message, group: _Group, place: int, source: str) -> LocalRecord:
-    notes = _Notes(source, [])
+    notes = _Notes(source, [], group.order.line)
     fields = _fields(message, group, notes)
     header = _header(message, group, place, fields.values(), notes)
     if group.notes:

@@ -1,7 +1,7 @@
 """FHIR QuestionnaireResponse: each answered item is one field named by its linkId.
 
-Source: FHIR R4, R4B and R5 QuestionnaireResponse and Questionnaire. The editions agree on what is read here, but
-for R5 having several identifiers and the item types `coding` and `question`.
+Source: FHIR R4, R4B and R5 QuestionnaireResponse and Questionnaire. The editions agree on what is read here,
+but for R5 having several identifiers and the item types `coding` and `question`.
 """
 
 from __future__ import annotations
@@ -140,7 +140,7 @@ class _Reader:
             return
         if answers or "item" not in item:
             values = tuple(self._values(answers, link))
-            if values:
+            if answers:
                 self._answered.add(link)
             if values or not any(key in answer for answer in answers for key in _NOT_CARRIED):
                 self._add(link, places, values)

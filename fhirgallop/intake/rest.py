@@ -118,15 +118,14 @@ class _Flattener:
         self.issues: list[Issue] = []
         self._source = source
         self._limits = limits
+        self._full = False
 
     def members(self, value: Mapping[Any, Any], prefix: str, depth: int) -> None:
         """Every member of an object; `depth` counts the objects and lists around it, itself included."""
         if depth > self._limits.depth:
             self._too_deep(prefix)
             return
-        if len(self.fields) + len(value) > self._limits.fields:
-            text = f"The record has more than {self._limits.fields:,} fields; send one examination a record."
-            self._fault("too-long", "record-too-many-fields", text, "")
+        if self._overfull(len(value)):
             return
         for key, inner in value.items():
             name = f"{prefix}.{key}" if prefix else key
@@ -156,15 +155,11 @@ class _Flattener:
     def _list(self, name: str, value: Sequence[Any], depth: int) -> None:
         if depth > self._limits.depth:
             self._too_deep(name)
-        elif len(value) > self._limits.fields:
-            text = f"The list has more than {self._limits.fields:,} entries; send fewer."
-            self._fault("too-long", "record-too-many-fields", text, name)
+        elif self._overfull(len(value)):
+            return
         elif any(isinstance(item, (Mapping, list, tuple)) for item in value):
             for place, item in enumerate(value):
                 self._entry(f"{name}[{place}]", item, depth)
-                if len(self.fields) > self._limits.fields:
-                    self.members({}, "", 1)
-                    return
         else:
             values: list[Value] = []
             for item in value:
@@ -198,6 +193,14 @@ class _Flattener:
             text = "Two entries come out under the same dotted name; rename one of them."
             self._fault("structure", "record-name-twice", text, name)
         self.fields[name] = Field(name, values)
+
+    def _overfull(self, more: int) -> bool:
+        """Whether `more` entries are too many, which is said once."""
+        if not self._full and len(self.fields) + more > self._limits.fields:
+            self._full = True
+            text = f"The record has more than {self._limits.fields:,} fields; send one examination a record."
+            self._fault("too-long", "record-too-many-fields", text, "")
+        return self._full
 
     def _too_deep(self, name: str) -> None:
         text = f"Objects and lists are nested more than {self._limits.depth} deep; flatten them."
