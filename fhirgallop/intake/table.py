@@ -35,14 +35,12 @@ def read_csv(
     """
     text = _Text(stream, limits, source)
     try:
-        first = next(text, "")
-        while first and not first.strip():
-            first = next(text, "")
+        first = _first_filled(text)
+        if first.startswith("sep=") and len(first.rstrip("\r\n")) == 5 and first[4] in DELIMITERS:
+            delimiter, first = first[4], _first_filled(text)
     except _RefusedError as refusal:
         yield refusal.rejected
         return
-    if first.startswith("sep=") and len(first.strip("\r\n")) == 5:
-        delimiter, first = first[4], next(text, "")
     delimiter = delimiter or _most_frequent(first)
     text.push_back(first)
     yield from read_rows(
@@ -276,6 +274,11 @@ def _rows(text: _Text, delimiter: str) -> Iterator[tuple[int, list[Value] | Reje
         else:
             yield start, list(row)
         start = text.line + 1
+
+
+def _first_filled(text: Iterator[str]) -> str:
+    """The next line that is not blank; empty at the end."""
+    return next((line for line in text if line.strip()), "")
 
 
 def _most_frequent(header: str) -> str:

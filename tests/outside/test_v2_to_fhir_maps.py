@@ -15,8 +15,10 @@ from fhirgallop.intake.hl7v2 import ENTRY_STATUS, REPORT_STATUS, read_message
 from fhirgallop.intake.record import Amount, Coded, Span
 
 TABLE_0085 = {
-    "A": "amended", "B": "", "C": "corrected", "D": "entered-in-error", "F": "final", "I": "", "N": "",
-    "O": "", "P": "preliminary", "R": "", "S": "", "V": "", "X": "cancelled", "U": "", "W": "entered-in-error",
+    "A": "amended", "B": "", "C": "corrected", "D": "entered-in-error",
+    "F": "final", "I": "", "N": "",
+    "O": "", "P": "preliminary", "R": "", "S": "", "V": "", "X": "cancelled", "U": "",
+    "W": "entered-in-error",
 }  # fmt: skip
 TABLE_0123 = {
     "O": "registered", "I": "registered", "S": "registered", "A": "", "P": "preliminary",

@@ -42,8 +42,8 @@ segments = st.lists(
     max_size=25,
 ).map(b"".join)  # fmt: skip
 tables = st.lists(
-    st.sampled_from([b"a,b\n", b"1,2\n", b'"', b",", b";", b"\n", b"\r", b"\xfc", b"\xc3\xbc", b"\0", b"sep=;\n",
-         b"x" * 60]),
+    st.sampled_from([b"a,b\n", b"1,2\n", b'"', b",", b";", b"\n", b"\r", b"\xfc", b"\xc3\xbc", b"\0",
+         b"sep=;\n", b"x" * 60]),
     max_size=25,
 ).map(b"".join)  # fmt: skip
 texts = st.binary(max_size=400) | segments | tables
