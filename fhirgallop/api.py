@@ -1,0 +1,93 @@
+"""The Python face: a record and a map in, a coded Bundle out."""
+
+from __future__ import annotations
+
+from collections.abc import Iterator, Mapping
+from datetime import UTC, datetime
+from pathlib import Path
+from typing import Any
+
+from fhirgallop.intake.detect import open_records
+from fhirgallop.intake.questionnaire import read_response
+from fhirgallop.intake.reading import Read
+from fhirgallop.intake.record import LocalRecord
+from fhirgallop.intake.rest import read_json
+from fhirgallop.mapping.reading import load_map
+from fhirgallop.mapping.template_map import TemplateMap
+from fhirgallop.observations.editions import Edition
+from fhirgallop.outcome import Issue
+from fhirgallop.pipeline import Result
+from fhirgallop.pipeline import process as run
+
+
+def read_map(path: Path | str) -> TemplateMap:
+    """The template map in the file at `path`.
+
+    Raises:
+        MapError: the map has faults; the exception carries all of them, each with its line and cure.
+        OSError: the file cannot be opened.
+    """
+    return load_map(Path(path))
+
+
+def read_records(path: Path | str) -> Iterator[Read]:
+    """Every examination of a JSON, NDJSON, CSV, Excel or HL7 v2 file, one by one.
+
+    What cannot be read comes out in its place as `Rejected`, with line and reason.
+
+    Raises:
+        OSError: the file cannot be opened.
+    """
+    return open_records(Path(path))
+
+
+def process(
+    record: LocalRecord | Mapping[str, Any] | bytes | str,
+    template_map: TemplateMap | Path | str,
+    edition: Edition = "R4",
+    *,
+    recorded: datetime | None = None,
+    snomed: bool = True,
+    earlier: dict[str, Any] | None = None,
+) -> Result:
+    """One examination, coded and checked.
+
+    Args:
+        record: a LocalRecord, a JSON object, or its text.
+        template_map: the map, or the path of its file.
+        edition: "R4", "R4B" or "R5".
+        recorded: the moment of conversion, with a zone; now when left out.
+        snomed: write SNOMED CT codings; without them our own code system carries the meaning.
+        earlier: the Bundle that this examination gave before, when it is sent again.
+
+    Raises:
+        MapError: the map has faults.
+        OSError: the map's file cannot be opened.
+    """
+    template = template_map if isinstance(template_map, TemplateMap) else read_map(template_map)
+    one, issues = _one(record)
+    if one is None:
+        return Result(None, None, issues)
+    moment = recorded or datetime.now(tz=UTC)
+    return run(one, template, recorded=moment, edition=edition, snomed=snomed, earlier=earlier)
+
+
+def _one(
+    record: LocalRecord | Mapping[str, Any] | bytes | str,
+) -> tuple[LocalRecord | None, tuple[Issue, ...]]:
+    if isinstance(record, LocalRecord):
+        return record, ()
+    if isinstance(record, Mapping):
+        form = record.get("resourceType") == "QuestionnaireResponse"
+        reading = read_response(record) if form else read_json(record)
+        read: list[Read] = [*reading.stream()]
+    else:
+        text = record.encode() if isinstance(record, str) else record
+        read = [*open_records(text, content_type="application/json")]
+    if len(read) > 1:
+        several = "These are several examinations; use read_records, or send them one by one."
+        return None, (Issue("error", "structure", "record-several", several),)
+    if not read:
+        return None, (Issue("error", "required", "record-none", "There is no examination here; send one."),)
+    (one,) = read
+    return (one, ()) if isinstance(one, LocalRecord) else (None, one.issues)
