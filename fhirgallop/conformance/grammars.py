@@ -13,7 +13,7 @@ from collections.abc import Iterable
 
 _WORD = r"[A-Za-z0-9!#$&^_.+-]{1,127}"
 _GRAMMARS = {
-    "urn:ietf:bcp:47": r"([A-Za-z]{2,8}|[ixIX])(-[A-Za-z0-9]{1,8})*",
+    "urn:ietf:bcp:47": r"[A-Za-z]{2,8}(-[A-Za-z0-9]{1,8})*|[ixIX](-[A-Za-z0-9]{1,8})+",
     # FHIR's own short names stand beside media types where a format is asked for (R4 2.1.0.6)
     "urn:ietf:bcp:13": rf"{_WORD}/{_WORD}( *;[ -~]*)?|xml|json|ttl|html",
     "urn:iso:std:iso:4217": r"[A-Z]{3}",

@@ -88,8 +88,10 @@ class Judge:
             if not nodes and _holds(node, name, definition.keys):
                 continue  # there, but of the wrong shape: said by the structure clause
             base = definition.elements[name]
-            yield from _bounds(node, part, len(nodes), base.min, base.max, profile)
-            yield from self._members(node, part, nodes, profile)
+            found = list(self._members(node, part, nodes, profile))
+            if not any(issue.rule == "slice-min" for issue in found):  # which says more exactly what is missing
+                yield from _bounds(node, part, len(nodes), base.min, base.max, profile)
+            yield from found
 
     def _members(self, node: Node, rule: Rule, nodes: Sequence[Node], profile: str) -> Iterator[Issue]:
         members: list[tuple[Node, str | None]] = []

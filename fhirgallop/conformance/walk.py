@@ -62,7 +62,10 @@ def _object_clauses(node: Node, known: Registry, scope: Scope) -> Iterator[Issue
         yield from extensions.check(node, known)
     elif node.type_name == "Bundle.entry":
         yield from bundles.check(node, edition)
-    yield from invariants.check(node, scope)
+    for issue in invariants.check(node, scope):
+        # a contained resource is told in its container's narrative (FHIR, "Contained resources")
+        if issue.rule != "dom-6" or node.key != "contained":
+            yield issue
 
 
 def _resource_clauses(node: Node, by_profile: profiles.Judge, named: Sequence[str]) -> Iterator[Issue]:
