@@ -1,0 +1,80 @@
+"""Codes an examination, keeps it, and tells a repetition from a change."""
+
+from __future__ import annotations
+
+import hashlib
+from collections.abc import Callable
+from dataclasses import dataclass
+from datetime import datetime
+from typing import Any, Final
+
+from fhirgallop.codes import fhirjson
+from fhirgallop.exam.exam import Exam
+from fhirgallop.intake.record import LocalRecord
+from fhirgallop.mapping.template_map import TemplateMap
+from fhirgallop.observations.bundle import instant
+from fhirgallop.observations.editions import Edition
+from fhirgallop.observations.identity import Identities
+from fhirgallop.pipeline import Result, process
+from fhirgallop.storage.submissions import Submission, Submissions
+
+_TRIES: Final = 5
+
+
+class BusyError(Exception):
+    """The same examination is being changed by too many requests at once."""
+
+
+@dataclass(frozen=True, slots=True)
+class Coded:
+    """The result of one record, with the Bundle as it was kept."""
+
+    result: Result
+    bundle: bytes | None
+
+
+class Examinations:
+    """Codes and keeps examinations.
+
+    The same examination sent twice is answered with the very same Bundle; a changed one is given its earlier
+    Bundle, so that what changed is amended and what is gone is entered in error.
+    """
+
+    def __init__(self, store: Submissions, clock: Callable[[], datetime]) -> None:
+        self._store = store
+        self._clock = clock
+
+    def code(self, record: LocalRecord, template: TemplateMap, edition: Edition, *, snomed: bool) -> Coded:
+        """One record through the pipeline and into the store.
+
+        Raises:
+            BusyError: other requests kept changing the same examination.
+        """
+        now = self._clock()
+        for _ in range(_TRIES):
+            result = process(record, template, recorded=now, edition=edition, snomed=snomed)
+            if result.exam is None or result.bundle is None:
+                return Coded(result, None)
+            exam = Identities(result.exam).of("examination")
+            meant = _fingerprint(result.exam, edition, snomed=snomed)
+            before = self._store.latest(exam)
+            if before and before.record_hash == meant:
+                return Coded(result, before.bundle)
+            if before:
+                earlier: dict[str, Any] = fhirjson.read(before.bundle)[0]
+                result = process(
+                    record, template, recorded=now, edition=edition, snomed=snomed, earlier=earlier
+                )
+            text = fhirjson.write(result.bundle)
+            version = before.version + 1 if before else 1
+            row = Submission(
+                exam, version, template.name, template.version, edition, meant, instant(now), text
+            )
+            if self._store.add(row):
+                return Coded(result, text)
+        raise BusyError
+
+
+def _fingerprint(exam: Exam, edition: Edition, *, snomed: bool) -> str:
+    """The same for the same meaning, whichever form it came in."""
+    return hashlib.sha256(repr((exam, edition, snomed)).encode("utf-8", "replace")).hexdigest()

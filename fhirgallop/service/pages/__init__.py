@@ -1,0 +1,1 @@
+"""Pages for people: templates and style apart from code."""

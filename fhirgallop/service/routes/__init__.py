@@ -1,0 +1,1 @@
+"""Addresses of the service, one file a family."""

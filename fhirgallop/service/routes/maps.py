@@ -1,0 +1,42 @@
+"""GET /maps: which template maps there are, and what each reads."""
+
+from __future__ import annotations
+
+from typing import Any
+
+from fastapi import APIRouter, Request
+from starlette.responses import Response
+
+from fhirgallop.mapping.template_map import TemplateMap
+from fhirgallop.service import answers
+
+router = APIRouter(tags=["template maps"])
+
+
+@router.get("/maps", summary="List the template maps")
+def list_maps(request: Request) -> Response:
+    """Name, version and title of every map."""
+    shelf = request.app.state.shelf
+    return answers.json_answer({"maps": [_head(template) for template in shelf.values()]})
+
+
+@router.get("/maps/{name}", summary="One template map", responses={404: {"description": "No such map."}})
+def one_map(name: str, request: Request) -> Response:
+    """What one map reads, and what of the catalogue it can say."""
+    template = request.app.state.shelf.get(name)
+    if template is None:
+        raise answers.refusal(404, "not-found", "http-unknown-map", "There is no template map of that name.")
+    return answers.json_answer(
+        {**_head(template), "fields": sorted(template.reads()), "findings": _findings(template)}
+    )
+
+
+def _findings(template: TemplateMap) -> list[str]:
+    named = {
+        m.finding for line in template.lines if line.named for m in line.named.meanings.values() if m.finding
+    }
+    return sorted(named | {line.finding for line in template.lines if line.finding})
+
+
+def _head(template: TemplateMap) -> dict[str, Any]:
+    return {"name": template.name, "version": template.version, "title": template.title}

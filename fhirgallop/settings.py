@@ -1,0 +1,69 @@
+"""Settings of the service, from the environment (`FHIRGALLOP_...`), checked before anything starts."""
+
+from __future__ import annotations
+
+import ipaddress
+from pathlib import Path
+from typing import Final, Literal, Self
+
+from pydantic import Field, ValidationError, model_validator
+from pydantic_settings import BaseSettings, SettingsConfigDict
+
+from fhirgallop.errors import SettingsError
+
+PREFIX: Final = "FHIRGALLOP_"
+
+
+class Settings(BaseSettings):
+    """Every setting, with its meaning; the README's table is held against these descriptions by a test."""
+
+    model_config = SettingsConfigDict(env_prefix=PREFIX, frozen=True, extra="forbid")
+
+    host: str = Field(
+        "127.0.0.1", description="Address to listen on; only this machine's own may be given yet."
+    )
+    port: int = Field(8470, ge=0, le=65535, description="Port to listen on; 0 takes a free one.")
+    maps: Path = Field(Path("maps"), description="Folder with the published template maps (*.yaml).")
+    database: str = Field(
+        "sqlite:///fhirgallop.sqlite3", description="Where examinations are kept (an SQLAlchemy address)."
+    )
+    edition: Literal["R4", "R4B", "R5"] = Field("R4", description="FHIR edition when a request names none.")
+    snomed: bool = Field(
+        default=True, description="Write SNOMED CT codings; needs the licence that applies where you are."
+    )
+    max_body: int = Field(
+        8 * 1024 * 1024, ge=1024, le=64 * 1024 * 1024, description="Largest request body in bytes."
+    )
+
+    @model_validator(mode="after")
+    def _stays_at_home(self) -> Self:
+        """Without authorisation nothing but this machine may reach patient data."""
+        home = self.host == "localhost"
+        if not home:
+            try:
+                home = ipaddress.ip_address(self.host).is_loopback
+            except ValueError:
+                home = False
+        if not home:
+            message = (
+                "host must be a loopback address (127.0.0.1, ::1, localhost): there is no authorisation yet, "
+                "so no other machine may reach the service. Put an authorising proxy in front of it."
+            )
+            raise ValueError(message)
+        return self
+
+
+def load(**given: object) -> Settings:
+    """Settings from the environment, with `given` ones on top.
+
+    Raises:
+        SettingsError: names every setting that cannot be used, and why.
+    """
+    try:
+        return Settings(**{name: value for name, value in given.items() if value is not None})  # type: ignore[arg-type]
+    except ValidationError as error:
+        faults = [
+            f"{PREFIX}{'_'.join(map(str, fault['loc'])).upper() or 'HOST'}: {fault['msg']}"
+            for fault in error.errors(include_input=False, include_url=False)
+        ]
+        raise SettingsError("; ".join(faults)) from None
