@@ -74,17 +74,18 @@ class Message:
         return raw.split(self.delimiters.repetition)
 
     def components(self, raw: str) -> list[str]:
-        """The components of one repetition, unescaped; of sub-components the first."""
-        marks = self.delimiters
-        return [
-            self.text(part.partition(marks.subcomponent)[0] if marks.subcomponent else part)
-            for part in raw.split(marks.component)
-        ]
+        """The components of one repetition, unescaped; sub-components stay together as written."""
+        return [self.text(part) for part in raw.split(self.delimiters.component)]
 
     def component(self, raw: str, number: int = 1) -> str:
         """Component `number` of the first repetition of a raw field, unescaped."""
         parts = self.components(self.repetitions(raw)[0])
         return "" if number > len(parts) or parts[number - 1] == DELETE else parts[number - 1].strip()
+
+    def subcomponent(self, raw: str) -> str:
+        """The first sub-component of the first component of the first repetition, unescaped."""
+        first = self.repetitions(raw)[0].partition(self.delimiters.component)[0]
+        return self.component(first.partition(self.delimiters.subcomponent)[0])
 
     def text(self, raw: str) -> str:
         """Raw text with its escape sequences resolved."""

@@ -216,7 +216,7 @@ def _header(message: Message, group: _Group, place: int, fields: Iterable[Field]
     if not identifier and (control := message.component(message.segments[0].field(10))):
         identifier = control if place == 1 else f"{control}/{place}"
     # OBR-32 is a person (NDL) whose identifier is the first sub-component
-    examiner = message.component(order.field(32))
+    examiner = message.subcomponent(order.field(32))
     performers = {field.performer for field in fields if field.performer}
     if not examiner and len(performers) == 1:
         examiner = performers.pop()

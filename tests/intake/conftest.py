@@ -13,7 +13,11 @@ ORU = [
     "MSH|^~\\&|FORM|FERNWOOD|CODER|FERNWOOD|20260314||ORU^R01^ORU_R01|M-1|P|2.5.1||||||UNICODE UTF-8",
     "PID|1||P-17^^^FERNWOOD^MR",
     "PV1|1|O|||||||||||||||||V-9",
-    "OBR|1|PL-1|FI-1|HEART^Heart examination^L|||20260314093000+0100" + "|" * 18 + "F" + "|" * 7 + "EX-1",
+    "OBR|1|PL-1|FI-1|HEART^Heart examination^L|||20260314093000+0100"
+    + "|" * 18
+    + "F"
+    + "|" * 7
+    + "EX-1&Doe&J",
     "OBX|1|CWE|S4^Fourth sound^L||Y^yes^L||||||F",
     "OBX|2|NM|HR^Heart rate^L||72|/min^^UCUM|||||F",
 ]

@@ -187,7 +187,7 @@ BODY_WEIGHT = [{"system": LOINC, "code": code} for code in ("29463-7", "3141-9",
     ],
 )
 def test_flags_on_codes_choose_among_them(form, response, flags, codes):
-    """The guide's own example: body weight, measured, dry; only tagged Codings propagate when any is tagged."""
+    """The guide's example of three body weights: when any Coding is tagged, only those are used."""
     item = question("w", "", "quantity")
     item["code"] = [
         dict(code, **({} if value is None else {"extension": [flag(value)]}))
@@ -364,20 +364,61 @@ def test_no_answer_is_ever_told(form, response):
     assert "4711" not in str(extract(response, form)[1])
 
 
+NAMES = [
+    "item",
+    "answer",
+    "linkId",
+    "valueDecimal",
+    "valueQuantity",
+    "valueCoding",
+    "extension",
+    "url",
+    "code",
+    "valueBoolean",
+    "valueCode",
+    "text",
+    "reference",
+    "type",
+]
+plain = st.none() | st.booleans() | st.integers() | st.text(max_size=9) | st.sampled_from(["a", "component"])
 anything = st.recursive(
-    st.none() | st.booleans() | st.integers() | st.text(max_size=9) | st.sampled_from(["/8352-7", "component"]),
-    lambda inner: st.lists(inner, max_size=3)
-    | st.dictionaries(
-        st.sampled_from(["item", "answer", "linkId", "valueDecimal", "valueQuantity", "valueCoding", "extension",
-                         "url", "code", "valueBoolean", "valueCode", "text", "reference", "type"]), inner, max_size=4),
+    plain,
+    lambda inner: st.lists(inner, max_size=3) | st.dictionaries(st.sampled_from(NAMES), inner, max_size=4),
     max_leaves=25,
-)  # fmt: skip
+)
+items = st.recursive(
+    st.just([]),
+    lambda inner: st.lists(
+        st.fixed_dictionaries(
+            {"linkId": st.sampled_from(["a", "b"])},
+            optional={
+                "item": inner,
+                "answer": st.lists(st.dictionaries(st.sampled_from(NAMES), anything, max_size=2), max_size=2),
+                "code": st.just([{"code": "1"}]) | anything,
+                "extension": st.lists(
+                    st.sampled_from([flag("component"), flag(False), flag("member")]), max_size=1
+                ),
+            },
+        ),
+        max_size=3,
+    ),
+    max_leaves=6,
+)
 
 
-@given(anything, anything, anything)
+@given(items | anything, items | anything, anything)
 def test_no_content_ever_raises(response_items, form_items, rest):
-    response = {"resourceType": "QuestionnaireResponse", "status": "completed",
-                "subject": {"reference": "Patient/1"}, "item": response_items, "author": rest, "identifier": rest, "partOf": rest}  # fmt: skip
+    response = {
+        "resourceType": "QuestionnaireResponse",
+        "status": "completed",
+        "subject": {"reference": "Patient/1"},
+        "item": response_items,
+        "author": rest,
+        "identifier": rest,
+        "partOf": rest,
+    }
     form = {"extension": [flag(True)], "item": form_items}
     found, issues = extract(response, form)
     assert found or issues
+    for observation in found:
+        assert observation["code"]["coding"]
