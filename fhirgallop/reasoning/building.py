@@ -8,7 +8,18 @@ from typing import Final
 from fhirgallop.exam import catalogue
 from fhirgallop.exam.context import Source
 from fhirgallop.reasoning.block import Block, quantity
-from fhirgallop.reasoning.conditions import All, Any, Atom, Bound, Condition, First, Having, Not, OfSubject
+from fhirgallop.reasoning.conditions import (
+    All,
+    Any,
+    Atom,
+    Bound,
+    Condition,
+    Count,
+    First,
+    Having,
+    Not,
+    OfSubject,
+)
 from fhirgallop.reasoning.defining import Vocabulary
 from fhirgallop.reasoning.faults import Faults
 from fhirgallop.reasoning.measuring import MEASURED_KEYS, computed, judged
@@ -29,6 +40,7 @@ class Builder:
         self.faults = faults
         self._named: dict[str, Condition] = {}
         self._open: list[str] = []
+        self._atoms: dict[tuple[object, ...], Atom] = {}
 
     def all_named(self) -> None:
         """Builds every named condition, so that faults in unused ones are found too."""
@@ -49,16 +61,27 @@ class Builder:
             block = Block(tree, "A condition", MEASURED_KEYS, self.faults)
             bounds = self._bounds(block, None)
             return judged(block, self.words) if "judge" in keys else computed(block, bounds, self.words)
+        if "count" in keys:
+            return self._count(tree)
         if "entry" in keys:
             block = Block(tree, "A condition", ("entry", "with"), self.faults)
             block.one_of("entry", ("subject",))
             return OfSubject(self._having(block, None))
         return self._group(tree)
 
+    def _count(self, tree: Pairs) -> Condition:
+        block = Block(tree, "A condition", ("count", "of"), self.faults)
+        least, listed = block.number("count") or 0, block.tree("of")
+        parts = tuple(self.condition(item) for item in listed.items) if isinstance(listed, Items) else ()
+        if not 1 <= least <= len(parts):
+            block.fault("rules-unreachable", f"There cannot be {least} of {len(parts)} conditions.")
+            return _NEVER
+        return Count(least, parts)
+
     def _group(self, tree: Pairs) -> Condition:
         block = Block(tree, "A condition", ("all", "any", "first", "not", "use"), self.faults)
         if len(tree.items) != 1:
-            block.fault("rules-condition", "A condition has exactly one of all, any, first, not, use, fact, entry, "
+            block.fault("rules-condition", "A condition has exactly one of all, any, first, count, not, use, fact, entry, "
                         "judge or compute.")  # fmt: skip
             return _NEVER
         key, value = tree.items[0]
@@ -127,7 +150,7 @@ class Builder:
         if answers & against:
             block.fault("rules-unreachable", f"{fact}: an answer cannot count for and against.")
         default = "present" if kind.kind == "sign" or answers or bounds else "recorded"
-        return Atom(
+        atom = Atom(
             fact,
             window,
             want=block.one_of("is", _WANTS, default=default),
@@ -139,6 +162,8 @@ class Builder:
             matching=self._matching(block, kind),
             slack=3600 if window.same_encounter else 86400,
         )
+        # The same question is asked by many rules; one object is judged once.
+        return self._atoms.setdefault(_key(atom), atom)
 
     def _window(self, block: Block, fact: str) -> Window:
         name = block.text("window")
@@ -281,3 +306,10 @@ class Builder:
 
 def _own_unit(text: str) -> str:
     return text.strip().partition(" ")[2].strip()
+
+
+def _key(atom: Atom) -> tuple[object, ...]:
+    return (
+        atom.fact, atom.window, atom.want, atom.answers, atom.against, atom.bounds, atom.having, atom.sources,
+        atom.matching,
+    )  # fmt: skip

@@ -9,7 +9,7 @@ from __future__ import annotations
 from collections.abc import Iterable, Iterator, Mapping
 from dataclasses import dataclass, field
 from decimal import Decimal
-from itertools import product
+from itertools import combinations, islice, product
 from typing import Final, Protocol
 
 from fhirgallop.exam.context import Source, State
@@ -146,6 +146,12 @@ class Atom:
     matching: tuple[str, ...] = ()
     slack: int = 3600
 
+    @property
+    def plain(self) -> bool:
+        """True when it only asks whether a sign is present."""
+        further = self.having or self.answers or self.bounds or self.sources or self.matching
+        return self.want == "present" and not further
+
     def judge(self, view: View) -> Truth:
         """True, false or unknown."""
         truth = self._decide(view)[0]
@@ -190,13 +196,13 @@ class Atom:
             return Truth.TRUE if item.state is State.ABSENT else Truth.FALSE
         elif item.state is State.ABSENT:
             return Truth.FALSE
-        truth = all_of(having.holds(item) for having in self.having)
+        found = [having.holds(item) for having in self.having]
         if self.answers:
-            truth = all_of((truth, self._answered(item)))
+            found.append(self._answered(item))
         if self.bounds:
-            held = (b.holds(item.measure) for b in self.bounds) if item.measure else (Truth.UNKNOWN,)
-            truth = all_of((truth, *held))
-        return truth
+            measure = item.measure
+            found += (bound.holds(measure) if measure else Truth.UNKNOWN for bound in self.bounds)
+        return all_of(found)
 
     def _answered(self, item: Item) -> Truth:
         if not self.answers.isdisjoint(item.answers):
@@ -226,8 +232,14 @@ class Atom:
         return found
 
     def _weigh(self, view: View) -> tuple[Truth, tuple[Support, ...]]:
+        grounds = self.grounds(view)
+        if len(grounds) == 1:
+            said = self.test(grounds[0].item, view.subject)
+            if said is None or said is Truth.UNKNOWN:
+                return Truth.UNKNOWN, ()
+            return said, (frozenset(grounds),)
         saying: dict[Truth, list[Ground]] = {Truth.TRUE: [], Truth.FALSE: [], Truth.UNKNOWN: []}
-        for ground in self.grounds(view):
+        for ground in grounds:
             said = self.test(ground.item, view.subject)
             if said is not None:
                 saying[said].append(ground)
@@ -367,6 +379,39 @@ class First:
         if self.judge(view) is Truth.UNKNOWN:
             for part in self.parts:
                 yield from part.unknowns(view)
+
+    def atoms(self) -> Iterator[Condition]:
+        """Every elementary condition in it."""
+        for part in self.parts:
+            yield from part.atoms()
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class Count:
+    """True when at least `least` of the parts are."""
+
+    least: int
+    parts: tuple[Condition, ...]
+
+    def judge(self, view: View) -> Truth:
+        """True, false or unknown."""
+        judged = [part.judge(view) for part in self.parts]
+        certain = judged.count(Truth.TRUE)
+        if certain >= self.least:
+            return Truth.TRUE
+        return Truth.FALSE if certain + judged.count(Truth.UNKNOWN) < self.least else Truth.UNKNOWN
+
+    def supports(self, view: View, truth: Truth) -> tuple[Support, ...]:
+        """Smallest sets of grounds that make it `truth`."""
+        each = [part.supports(view, truth) for part in self.parts if part.judge(view) is truth]
+        size = self.least if truth is Truth.TRUE else len(self.parts) - self.least + 1
+        chosen = islice(combinations(each, size), MAX_SUPPORTS)
+        return smallest(support for group in chosen for support in joined(group))
+
+    def unknowns(self, view: View) -> Iterator[str]:
+        """The data that are unknown here."""
+        for part in self.parts:
+            yield from part.unknowns(view)
 
     def atoms(self) -> Iterator[Condition]:
         """Every elementary condition in it."""

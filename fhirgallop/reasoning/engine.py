@@ -2,37 +2,26 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterator, Mapping
+from collections.abc import Iterator
 from dataclasses import dataclass, replace
-from types import MappingProxyType
 from typing import Final
 
 from fhirgallop.reasoning.conclusion import CONFLICTING, FIRED, Conclusion, Outcome
 from fhirgallop.reasoning.conditions import Support, View, joined, smallest, steps
 from fhirgallop.reasoning.items import Ground, ItemTable
 from fhirgallop.reasoning.logic import Truth
+from fhirgallop.reasoning.program import Saying
 from fhirgallop.reasoning.rule import Rule
 from fhirgallop.reasoning.rulebook import Rulebook
 from fhirgallop.reasoning.vocabulary import CEILING, Relation, Tier
 
-_T, _F, _U = Truth.TRUE, Truth.FALSE, Truth.UNKNOWN
-_OUTCOMES: Final[Mapping[Relation, Mapping[Truth, Outcome]]] = MappingProxyType(
-    {
-        Relation.REQUIRES: {_T: Outcome.MET, _F: Outcome.UNMET, _U: Outcome.OPEN},
-        Relation.CONTRADICTS: {_T: Outcome.CONFLICT, _U: Outcome.OPEN},
-        Relation.CHECK: {_T: Outcome.CONFLICT, _U: Outcome.OPEN},
-        Relation.EXPECTS: {_T: Outcome.CONFIRMED, _F: Outcome.MISSING, _U: Outcome.NOT_LOOKED_FOR},
-        Relation.SUGGESTS: {_T: Outcome.EXPLAINS},
-        Relation.FOLLOWS: {_T: Outcome.EXPLAINS},
-        Relation.GUARD: {_T: Outcome.NOTE},
-    }
-)
 _NO_SUPPORT: Final[tuple[Support, ...]] = (frozenset(),)
+_SETTLED: Final = FIRED | {Outcome.MET, Outcome.CONFIRMED}
 
 
 @dataclass(frozen=True, slots=True)
 class Concluded:
-    """Everything the rules gave, and the guards in force."""
+    """Everything the rules gave, the guards in force, and the view it was judged on."""
 
     conclusions: tuple[Conclusion, ...]
     guards: tuple[Conclusion, ...]
@@ -42,73 +31,62 @@ class Concluded:
 def conclude(book: Rulebook, table: ItemTable) -> Concluded:
     """Judge all rules of the recorded findings, in a fixed order whatever the order of the entries."""
     view = View(table)
-    guards = tuple(_judge_all(book.guards, table, view))
-    found = [_guarded(conclusion, guards) for conclusion in _judge_all(book.by_finding, table, view)]
-    found = list(_merged(found))
-    notes = tuple(_notes(guards, found))
-    return Concluded((*found, *notes), guards, view)
+    guards = tuple(_grounded(book.guards.decide(view), view))
+    found = [_guarded(conclusion, guards) for conclusion in _grounded(book.program.decide(view), view)]
+    found = _merged(found)
+    return Concluded((*found, *_notes(guards, found)), guards, view)
 
 
-def _judge_all(index: Mapping[str, tuple[Rule, ...]], table: ItemTable, view: View) -> Iterator[Conclusion]:
-    for finding in sorted(table.by_id.keys() & index.keys()):
-        for rule in index[finding]:
-            yield from judge(rule, view)
-
-
-def judge(rule: Rule, view: View) -> Iterator[Conclusion]:
-    """One rule on every entry it is about."""
-    for truth, supports in _subjects(rule, view):
-        about = view.about(min(supports[0], key=lambda g: g.item.key).item if supports[0] else None)
-        conclusion = _judge_one(rule, truth, supports, about)
+def _grounded(sayings: list[Saying], view: View) -> Iterator[Conclusion]:
+    for saying in sayings:
+        conclusion = grounded(saying, view)
         if conclusion is not None:
             yield conclusion
 
 
-def _subjects(rule: Rule, view: View) -> Iterator[tuple[Truth, tuple[Support, ...]]]:
-    of_exam = False
-    doubtful: list[Ground] = []
-    for ground in rule.subject.grounds(view):
-        if not ground.item.of_exam:
-            continue
-        said = rule.subject.test(ground.item)
-        if said is Truth.TRUE:
-            of_exam = True
-            yield Truth.TRUE, (frozenset((ground,)),)
-        elif said is Truth.UNKNOWN:
-            doubtful.append(ground)
-    if of_exam:
-        return
-    if rule.subject.judge(view) is Truth.TRUE:
-        yield Truth.TRUE, rule.subject.supports(view, Truth.TRUE)
-    elif doubtful:
-        yield Truth.UNKNOWN, (frozenset(doubtful[:1]),)
+def grounded(saying: Saying, view: View) -> Conclusion | None:
+    """What a rule says, judged again with its grounds; None when its very subject keeps it silent."""
+    rule = saying.rule
+    about = view.about(min(saying.subject, key=lambda g: g.item.key).item if saying.subject else None)
+    when = rule.when.judge(about) if rule.when is not None else Truth.TRUE
+    if when is Truth.FALSE or (rule.unless is not None and rule.unless.judge(about) is Truth.TRUE):
+        return None
+    other = rule.other.judge(about) if rule.other is not None else Truth.TRUE
+    outcome = outcome_of(rule, saying.subject_truth, when, other)
+    if outcome in _SETTLED:
+        return _founded(rule, outcome, saying, other, about)
+    if outcome is None:
+        return None
+    subject = tuple(sorted(saying.subject, key=_ground_key))
+    unknown = _unknowns(rule, saying.subject_truth, when, other, about)
+    return Conclusion(rule, outcome, rule.strength, Tier.T0, subject, unknown=unknown)
 
 
-def _judge_one(rule: Rule, subject: Truth, supports: tuple[Support, ...], view: View) -> Conclusion | None:
-    when = rule.when.judge(view) if rule.when is not None else Truth.TRUE
-    if when is Truth.FALSE or (rule.unless is not None and rule.unless.judge(view) is Truth.TRUE):
-        return None
-    other = rule.other.judge(view) if rule.other is not None else Truth.TRUE
-    outcome = _OUTCOMES[rule.relation].get(other)
-    if subject is Truth.TRUE and when is Truth.TRUE:
-        if outcome in FIRED or outcome in (Outcome.MET, Outcome.CONFIRMED):
-            return _founded(rule, outcome, supports, other, view)
-    elif outcome not in FIRED and outcome is not Outcome.OPEN:
-        return None
-    if outcome is None and not (rule.tier is Tier.U and other is Truth.UNKNOWN):
-        return None
-    if rule.relation in (Relation.GUARD, Relation.SUGGESTS, Relation.FOLLOWS) and rule.tier is not Tier.U:
-        return None
-    if outcome is not Outcome.NOT_LOOKED_FOR:
-        outcome = Outcome.OPEN
-    return Conclusion(
-        rule, outcome, rule.strength, Tier.T0, _ordered(supports), unknown=_unknowns(rule, subject, view)
-    )
+def outcome_of(rule: Rule, subject: Truth, when: Truth, other: Truth) -> Outcome | None:
+    """How a rule comes out; None when it has nothing to say. Unknown never fires."""
+    applies = subject is Truth.TRUE and when is Truth.TRUE
+    match rule.relation:
+        case Relation.REQUIRES:
+            if other is Truth.TRUE:
+                return Outcome.MET if applies else None
+            return Outcome.UNMET if applies and other is Truth.FALSE else Outcome.OPEN
+        case Relation.CONTRADICTS | Relation.CHECK:
+            if other is Truth.FALSE:
+                return None
+            return Outcome.CONFLICT if applies and other is Truth.TRUE else Outcome.OPEN
+        case Relation.EXPECTS:
+            if other is Truth.UNKNOWN:
+                return Outcome.NOT_LOOKED_FOR
+            if not applies:
+                return Outcome.OPEN if other is Truth.FALSE else None
+            return Outcome.CONFIRMED if other is Truth.TRUE else Outcome.MISSING
+    if applies and other is Truth.TRUE:
+        return Outcome.NOTE if rule.relation is Relation.GUARD else Outcome.EXPLAINS
+    return Outcome.OPEN if rule.tier is Tier.U and other is not Truth.FALSE else None
 
 
-def _founded(
-    rule: Rule, outcome: Outcome, subject: tuple[Support, ...], other: Truth, view: View
-) -> Conclusion | None:
+def _founded(rule: Rule, outcome: Outcome, saying: Saying, other: Truth, view: View) -> Conclusion | None:
+    subject = tuple(frozenset((ground,)) for ground in saying.subject)
     parts = []
     if rule.when is not None:
         parts.append(rule.when.supports(view, Truth.TRUE))
@@ -133,21 +111,26 @@ def _founded(
     return Conclusion(rule, outcome, strength, tier, _ordered(subject), _ordered(rest), sets)
 
 
-def _unknowns(rule: Rule, subject: Truth, view: View) -> tuple[str, ...]:
+def _unknowns(rule: Rule, subject: Truth, when: Truth, other: Truth, view: View) -> tuple[str, ...]:
     found: dict[str, None] = {}
     if subject is Truth.UNKNOWN and view.subject is not None:
         for having in rule.subject.having:
             if having.holds(view.subject) is Truth.UNKNOWN:
                 found[f"{rule.finding}#{having.axis}"] = None
-    for condition in (rule.when, rule.other):
-        if condition is not None and condition.judge(view) is Truth.UNKNOWN:
-            found.update(dict.fromkeys(condition.unknowns(view)))
+    if rule.when is not None and when is Truth.UNKNOWN:
+        found.update(dict.fromkeys(rule.when.unknowns(view)))
+    if rule.other is not None and other is Truth.UNKNOWN:
+        found.update(dict.fromkeys(rule.other.unknowns(view)))
     return tuple(found)
 
 
 def _ordered(supports: tuple[Support, ...]) -> tuple[Ground, ...]:
     grounds = {ground for support in supports for ground in support}
-    return tuple(sorted(grounds, key=lambda g: (g.item.key, g.steps)))
+    return tuple(sorted(grounds, key=_ground_key))
+
+
+def _ground_key(ground: Ground) -> tuple[str, int]:
+    return ground.item.key, ground.steps
 
 
 def _guarded(conclusion: Conclusion, guards: tuple[Conclusion, ...]) -> Conclusion:
@@ -163,14 +146,16 @@ def _guarded(conclusion: Conclusion, guards: tuple[Conclusion, ...]) -> Conclusi
     return conclusion
 
 
-def _merged(found: list[Conclusion]) -> Iterator[Conclusion]:
+def _merged(found: list[Conclusion]) -> list[Conclusion]:
     speaking = {c.rule.id for c in found if c.fired}
+    result = []
     for conclusion in found:
         louder = next((name for name in conclusion.rule.yields_to if name in speaking), "")
         if louder and conclusion.outcome in FIRED:
-            yield replace(conclusion, tier=Tier.T0, merged_into=louder)
+            result.append(replace(conclusion, tier=Tier.T0, merged_into=louder))
         else:
-            yield conclusion
+            result.append(conclusion)
+    return result
 
 
 def _notes(guards: tuple[Conclusion, ...], found: list[Conclusion]) -> Iterator[Conclusion]:

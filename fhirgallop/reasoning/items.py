@@ -26,6 +26,7 @@ class Item:
         clock: its time names a time of day, or it belongs to the examination.
         encounter: True in the same encounter, False in another, None unknown.
         place: local fields or chart reference, for the reader.
+        of_exam: it is an entry of today's examination.
     """
 
     key: str
@@ -42,11 +43,7 @@ class Item:
     encounter: bool | None
     low_trust: bool
     place: str
-
-    @property
-    def of_exam(self) -> bool:
-        """True for an entry of today's examination."""
-        return self.source is Source.EXAM and self.age == 0
+    of_exam: bool
 
     def values(self, axis: str) -> tuple[str, ...]:
         """The values recorded on an axis."""
@@ -81,7 +78,6 @@ class ItemTable:
 
     by_id: Mapping[str, tuple[Item, ...]]
     unusable: tuple[Item, ...]
-    looked_for: frozenset[str]
 
 
 def collect(exam: Exam, context: Context) -> ItemTable:
@@ -89,54 +85,62 @@ def collect(exam: Exam, context: Context) -> ItemTable:
     reference = moment(exam.time.start) if exam.time.precise_to_day else None
     now = context.now.timestamp()
     origin = reference if reference is not None else now
-    found: dict[str, dict[str, Item]] = {}
-    unusable: dict[str, Item] = {}
-    looked: set[str] = set()
-    for entry in exam.entries:
-        if entry.withdrawn or exam.status == "entered-in-error":
-            continue
-        if entry.presence.looked_for:
-            looked.add(entry.finding)
-        if entry.presence in _STATES:
-            _put(_of_entry(entry, exam), found, unusable)
+    found: dict[str, list[Item]] = {}
+    unusable: list[Item] = []
+    entries = exam.entries if exam.status != "entered-in-error" else ()
+    for entry in entries:
+        state = _STATES.get(entry.presence)
+        if state is not None and not entry.withdrawn:
+            _put(_of_entry(entry, state, exam.time.start), found, unusable)
     encounter = exam.encounter.value if exam.encounter else ""
     for fact in context.facts:
         item = _of_fact(fact, origin, encounter)
         if item.age is not None and origin - item.age > now:
-            unusable[item.key] = item
+            unusable.append(item)
         else:
             _put(item, found, unusable)
-    by_id = {id_: tuple(item for _, item in sorted(items.items())) for id_, items in found.items()}
-    return ItemTable(by_id, tuple(item for _, item in sorted(unusable.items())), frozenset(looked))
+    by_id = {id_: (items[0],) if len(items) == 1 else _distinct(items) for id_, items in found.items()}
+    return ItemTable(by_id, _distinct(unusable))
 
 
-def _put(item: Item, found: dict[str, dict[str, Item]], unusable: dict[str, Item]) -> None:
-    kind = kinds().get(item.id)
-    if kind is None or (item.measure is not None and item.measure.unit != kind.unit):
-        unusable[item.key] = item
+def _distinct(items: list[Item]) -> tuple[Item, ...]:
+    """Each item once, in the order of the keys."""
+    by_key = {item.key: item for item in items}
+    return tuple(by_key[key] for key in sorted(by_key))
+
+
+def _put(item: Item, found: dict[str, list[Item]], unusable: list[Item]) -> None:
+    id_, measure = item.id, item.measure
+    kind = kinds().get(id_)
+    if kind is None or (measure is not None and measure.unit != kind.unit):
+        unusable.append(item)
         return
-    found.setdefault(item.id, {})[item.key] = item
+    found.setdefault(id_, []).append(item)
     if item.state is State.PRESENT:
-        for parent in ancestors().get(item.id, ()):
-            found.setdefault(parent, {})[item.key] = item
+        for parent in ancestors().get(id_, ()):
+            found.setdefault(parent, []).append(item)
 
 
-def _of_entry(entry: Entry, exam: Exam) -> Item:
+def _of_entry(entry: Entry, state: State, time: str) -> Item:
+    described = ""
+    if entry.answers or entry.measure is not None or entry.qualifiers:
+        described = _said(entry.answers, entry.measure, entry.qualifiers)
     return Item(
-        key=f"{entry.finding}|exam|{entry.instance}|{_said(entry.answers, entry.measure, entry.qualifiers)}|{entry.presence}",
+        key=f"{entry.finding}|exam|{entry.instance}|{described}|{state}",
         id=entry.finding,
-        state=_STATES[entry.presence],
+        state=state,
         source=Source.EXAM,
         answers=entry.answers,
         measure=entry.measure,
         qualifiers=entry.qualifiers,
         instance=entry.instance,
-        time=entry.time or exam.time.start,
+        time=entry.time or time,
         age=0,
         clock=True,
         encounter=True,
         low_trust=False,
         place=", ".join(entry.fields),
+        of_exam=True,
     )
 
 
@@ -158,6 +162,7 @@ def _of_fact(fact: Fact, origin: float, encounter: str) -> Item:
         encounter=fact.encounter == encounter if fact.encounter and encounter else None,
         low_trust=fact.low_trust,
         place=fact.reference,
+        of_exam=False,
     )
 
 

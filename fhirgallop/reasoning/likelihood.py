@@ -137,11 +137,14 @@ def _apply(row: LikelihoodRow, is_present: bool, ratio: Ratio, pretest: Pretest)
         return Likelihood(
             row, is_present, ratio, refused="The ratio is below 0.1; a number would pretend certainty."
         )
+    before = pretest.probability
     return Likelihood(
         row,
         is_present,
         ratio,
-        *(_after(pretest.probability, r) for r in (ratio.value, ratio.low, ratio.high)),
+        probability=_after(before, ratio.value),
+        low=_after(before, ratio.low),
+        high=_after(before, ratio.high),
     )
 
 

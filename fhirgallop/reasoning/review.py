@@ -118,7 +118,14 @@ def review(
         context: the same patient's chart, with the moment of the review.
         rules: a site's rules; the shipped ones when None.
         settings: pretest probabilities given by the user.
+
+    Raises:
+        ValueError: the chart is known to be another patient's.
     """
+    ours, theirs = exam.patient, context.patient
+    if theirs is not None and (ours.system, ours.is_fhir_id) == (theirs.system, theirs.is_fhir_id):
+        if ours.value != theirs.value:
+            raise ValueError("the chart belongs to another patient than the examination")
     book = rules or load()
     table = collect(exam, context)
     concluded = conclude(book, table)

@@ -22,6 +22,7 @@ from fhirgallop.reasoning.checking import check_references, check_retuned
 from fhirgallop.reasoning.defining import SITE_KEYS, TOP_KEYS, choices_of, read_vocabulary
 from fhirgallop.reasoning.faults import Faults
 from fhirgallop.reasoning.likelihood import LikelihoodRow, read_likelihoods
+from fhirgallop.reasoning.program import Program
 from fhirgallop.reasoning.reading import read_rules
 from fhirgallop.reasoning.rule import Rule
 from fhirgallop.reasoning.vocabulary import Cutoff, Family, Recheck, Relation, Strength, Tier, Window
@@ -37,8 +38,8 @@ class Rulebook:
 
     Attributes:
         rules: by id, in the order of the files.
-        by_finding: subject id -> rules that look at it, guards apart.
-        guards: subject id -> guards that look at it.
+        program: the rules in force, guards apart, ready to be decided.
+        guards: the guards in force.
         rechecks: what looking again costs, first match wins.
         silenced: rules that the site switched off.
         left_out: rows of the evidence that are no rule, each with the reason.
@@ -46,8 +47,8 @@ class Rulebook:
     """
 
     rules: Mapping[str, Rule]
-    by_finding: Mapping[str, tuple[Rule, ...]]
-    guards: Mapping[str, tuple[Rule, ...]]
+    program: Program
+    guards: Program
     families: Mapping[str, Family]
     cutoffs: Mapping[str, Cutoff]
     windows: Mapping[str, Window]
@@ -119,11 +120,11 @@ def build(trees: Mapping[str, Tree], site: tuple[str, Tree] | None) -> tuple[Rul
     issues = ordered(faults.issues)
     if has_errors(issues):
         return None, issues
-    index, guards = _index(rules, silenced)
+    in_force = [rule for rule in rules.values() if rule.id not in silenced]
     book = Rulebook(
         rules=MappingProxyType(rules),
-        by_finding=index,
-        guards=guards,
+        program=Program(rule for rule in in_force if rule.relation is not Relation.GUARD),
+        guards=Program(rule for rule in in_force if rule.relation is Relation.GUARD),
         families=MappingProxyType(words.families),
         cutoffs=MappingProxyType(words.cutoffs),
         windows=MappingProxyType(words.windows),
@@ -142,21 +143,6 @@ def _likelihoods(trees: Mapping[str, Tree], builder: Builder, faults: Faults) ->
         faults.source = name
         found += read_likelihoods(Block(tree, "A rule file", (*TOP_KEYS, *SITE_KEYS), Faults(name)), builder)
     return tuple(found)
-
-
-def _index(
-    rules: Mapping[str, Rule], silenced: frozenset[str]
-) -> tuple[Mapping[str, tuple[Rule, ...]], Mapping[str, tuple[Rule, ...]]]:
-    index: dict[str, list[Rule]] = {}
-    guards: dict[str, list[Rule]] = {}
-    for rule in rules.values():
-        if rule.id not in silenced:
-            target = guards if rule.relation is Relation.GUARD else index
-            target.setdefault(rule.finding, []).append(rule)
-    return (
-        MappingProxyType({finding: tuple(found) for finding, found in index.items()}),
-        MappingProxyType({finding: tuple(found) for finding, found in guards.items()}),
-    )
 
 
 def _apply_site(tree: Tree, rules: dict[str, Rule], faults: Faults) -> tuple[frozenset[str], dict[str, Rule]]:
