@@ -101,7 +101,9 @@ def _progress(count: int, name: str) -> None:
 def _files(paths: Iterable[Path]) -> Iterator[Path]:
     for path in paths:
         if path.is_dir():
-            yield from sorted(f for f in path.rglob("*") if f.suffix.lower() in (".json", ".ndjson") and f.is_file())
+            yield from sorted(
+                f for f in path.rglob("*") if f.suffix.lower() in (".json", ".ndjson") and f.is_file()
+            )
         else:
             yield path
 

@@ -94,7 +94,7 @@ def among(url: str, codes: list[tuple[str | None, str]], registry: Registry) -> 
 
 
 def _codes(node: Node, edition: Edition) -> list[tuple[str | None, str]] | None:
-    """System and code of what the node says; None when there is nothing to judge (absent, or the wrong shape)."""
+    """System and code of what the node says; None when there is nothing to judge."""
     value = node.value
     for kind in edition.ancestors(node.type_name):
         if kind in _SYSTEMLESS:

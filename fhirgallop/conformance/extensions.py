@@ -33,7 +33,7 @@ def check(node: Node, registry: Registry) -> Iterator[Issue]:
         return
     definition = registry.extension(url)
     if definition is None:
-        said = f"The extension {canonical(url)} is not known here, so it was not judged. Load the package it is from."
+        said = f"The extension {canonical(url)} is not known here, so it was not judged. Load its package."
         yield Issue("warning", "not-found", "extension-unknown", said, expression=node.expression)
         return
     yield from _place(node, definition, registry.edition)

@@ -30,7 +30,9 @@ _DOM_6 = "dom-6"
 _LONG = re.compile(rb"[0-9.]{17}")
 
 
-def settle(value: Any, known: Registry, text: bytes | None = None, *, same: bool = False) -> list[Issue] | None:
+def settle(
+    value: Any, known: Registry, text: bytes | None = None, *, same: bool = False
+) -> list[Issue] | None:
     """All issues of a resource that is plainly right (only missing narratives, then); None when in doubt.
 
     Args:
@@ -218,7 +220,7 @@ def _valid(validator: Draft202012Validator, value: object) -> bool:
 
 
 @lru_cache(maxsize=16)
-def _envelope(known: Registry, asks: bool) -> Draft202012Validator:  # noqa: FBT001 - a key of the cache
+def _envelope(known: Registry, asks: bool) -> Draft202012Validator:
     """The validator of a Bundle but for its resources; `asks`: each entry carries a request."""
     builder = SchemaBuilder(known)
     bundle = builder.bundle_head()

@@ -25,7 +25,6 @@ from fhirgallop.conformance.fast_schema import (
 from fhirgallop.conformance.profile_tree import SD, Profile, Rule, read_profile
 from fhirgallop.conformance.slicing import Slicer
 
-
 MAX_PROFILES = 3
 
 
@@ -36,7 +35,7 @@ class Unsupported(Exception):  # noqa: N818 - a signal: this profile is for the 
 def form(
     builder: SchemaBuilder, name: str, declared: tuple[str, ...] = (), implied: tuple[str, ...] = ()
 ) -> Form | None:
-    """How a resource of the type may look that declares profiles and is to meet others; None: no schema can say."""
+    """How a resource may look that declares profiles and is to meet others; None: no schema can say."""
     if len(declared) > MAX_PROFILES or any(builder.registry.profile(url) is None for url in declared):
         return None
     schema = builder.resource(name)
@@ -72,9 +71,7 @@ class _Narrowing:
     def __init__(self, builder: SchemaBuilder) -> None:
         self._builder = builder
 
-    def root(
-        self, schema: Schema, profile: Profile, definition: TypeDef, targets: dict[str, Any]
-    ) -> None:
+    def root(self, schema: Schema, profile: Profile, definition: TypeDef, targets: dict[str, Any]) -> None:
         """Narrows a resource's schema, and the types its references may lead to inside a Bundle."""
         self._object(schema, profile.root, definition, urn=True)
         for name, rule in profile.root.children.items():
@@ -106,7 +103,9 @@ class _Narrowing:
         for key in keys_of(definition, name, schema):
             child = definition.keys[key]
             choice = child.element.is_choice
-            if rule.max == 0 or (choice and ((codes and child.code not in codes) or (closed and key not in rule.slices))):
+            if rule.max == 0 or (
+                choice and ((codes and child.code not in codes) or (closed and key not in rule.slices))
+            ):
                 del properties[key]
                 continue
             found = self._key(properties[key], rule, child, urn=urn)
@@ -116,9 +115,9 @@ class _Narrowing:
                 del properties[key]
             else:
                 properties[key] = found
-        if rule.min or any(s.min for s in rule.slices.values()):
-            if not require(schema, definition, name):
-                raise Unsupported
+        needed = rule.min or any(s.min for s in rule.slices.values())
+        if needed and not require(schema, definition, name):
+            raise Unsupported
 
     def _key(self, schema: Schema, rule: Rule, child: Child, *, urn: bool) -> Schema:
         if not child.element.many:

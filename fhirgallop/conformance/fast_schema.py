@@ -70,7 +70,7 @@ class SchemaBuilder:
         return Form(
             schema={k: v for k, v in schema.items() if k not in _PRESENCE},
             presence={k: schema[k] for k in ("type", "additionalProperties", *_PRESENCE) if k in schema}
-            | {"properties": {k: True for k in schema["properties"]}},
+            | {"properties": dict.fromkeys(schema["properties"], True)},
             integers=frozenset(k for k in schema["properties"] if k in keys and self._is_integer(keys[k])),
             targets=self.targets(name),
         )
@@ -233,7 +233,11 @@ class SchemaBuilder:
     def bound(self, name: str, binding: Binding) -> Schema:
         """A Coding, CodeableConcept or Quantity with a code of the value set."""
         some = self.coded(binding)
-        schema = self.copy(name) if name in ("Coding", "CodeableConcept", "Quantity", "SimpleQuantity") else REFUSED
+        schema = (
+            self.copy(name)
+            if name in ("Coding", "CodeableConcept", "Quantity", "SimpleQuantity")
+            else REFUSED
+        )
         if some is REFUSED or schema is REFUSED:
             return REFUSED
         if name != "CodeableConcept":

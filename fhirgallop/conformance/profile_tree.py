@@ -162,15 +162,7 @@ def _fill(rule: Rule, element: Definition) -> None:
             rule.binding = Binding(strength, str(binding["valueSet"]).partition("|")[0])
     if isinstance(element.get("maxLength"), int):
         rule.max_length = element["maxLength"]
-    held = {i.key for i in rule.invariants}
-    for constraint in element.get("constraint", ()):
-        if constraint.get("expression") and constraint.get("key") not in held:
-            severity: Literal["error", "warning"] = "warning" if constraint.get("severity") == "warning" else "error"
-            rule.invariants.append(
-                Invariant(
-                    constraint["key"], severity, constraint["expression"], str(constraint.get("human", ""))
-                )
-            )
+    _fill_invariants(rule, element)
     slicing = element.get("slicing")
     if isinstance(slicing, Mapping):
         rule.slicing = Slicing(
@@ -178,3 +170,17 @@ def _fill(rule: Rule, element: Definition) -> None:
             str(slicing.get("rules", "open")),
             bool(slicing.get("ordered")),
         )
+
+
+def _fill_invariants(rule: Rule, element: Definition) -> None:
+    held = {i.key for i in rule.invariants}
+    for constraint in element.get("constraint", ()):
+        if constraint.get("expression") and constraint.get("key") not in held:
+            severity: Literal["error", "warning"] = (
+                "warning" if constraint.get("severity") == "warning" else "error"
+            )
+            rule.invariants.append(
+                Invariant(
+                    constraint["key"], severity, constraint["expression"], str(constraint.get("human", ""))
+                )
+            )

@@ -39,7 +39,7 @@ class Judge:
         profile = self._profiles[plain]
         if profile is None:
             if plain.startswith(SD) and plain.removeprefix(SD) in self._registry.edition.types:
-                said = f"The profile {canonical(plain)} is for another type than this {node.type_name}. Correct it."
+                said = f"The profile {canonical(plain)} is not for {node.type_name}. Correct it."
                 yield Issue("error", "structure", "profile-type", said, expression=node.expression)
                 return
             said = (
@@ -89,7 +89,9 @@ class Judge:
                 continue  # there, but of the wrong shape: said by the structure clause
             base = definition.elements[name]
             found = list(self._members(node, part, nodes, profile))
-            if not any(issue.rule == "slice-min" for issue in found):  # which says more exactly what is missing
+            if not any(
+                issue.rule == "slice-min" for issue in found
+            ):  # which says more exactly what is missing
                 yield from _bounds(node, part, len(nodes), base.min, base.max, profile)
             yield from found
 
@@ -123,7 +125,9 @@ class Judge:
     def _value(self, node: Node, rule: Rule, profile: str) -> Iterator[Issue]:
         value, at = node.value, node.expression
         if value is not None and rule.fixed is not None and not equal(value, rule.fixed):
-            said = f"Profile {profile} fixes the value of this element, and another stands here. Use the fixed one."
+            said = (
+                f"Profile {profile} fixes the value of this element, and this is another. Use the fixed one."
+            )
             yield Issue("error", "value", "fixed-value", said, expression=at)
         elif value is not None and rule.pattern is not None and not contains(value, rule.pattern):
             said = (
@@ -145,7 +149,8 @@ class Judge:
             return
         code = node.step.partition("ofType(")[2].rstrip(")")
         if code and all(t.code != code for t in types):
-            said = f"Profile {profile} takes {one_of({t.code for t in types})} here only. Use one of these types."
+            allowed = one_of({t.code for t in types})
+            said = f"Profile {profile} takes {allowed} here only. Use one of these types."
             yield Issue("error", "structure", "type-not-allowed", said, expression=node.expression)
             return
         if node.type_name == "Reference" and isinstance(node.value, Mapping):
@@ -156,7 +161,8 @@ class Judge:
         profiles = [p for ref in types if ref.code == (code or node.type_name) for p in ref.profiles]
         known = [p for p in profiles if self._registry.profile(p) is not None]
         if known and len(known) == len(profiles) and not any(self.conforms(node, p) for p in known):
-            said = f"Profile {profile} asks that this meets {one_of(canonical(p) for p in known)}. Make it meet one."
+            names = one_of(canonical(p) for p in known)
+            said = f"Profile {profile} asks that this meets {names}. Make it meet one."
             yield Issue("error", "structure", "profile-of-element", said, expression=node.expression)
 
     def _target(self, node: Node, targets: Sequence[str], profile: str) -> Iterator[Issue]:
@@ -166,7 +172,7 @@ class Judge:
         found = references.target_type(node, reference, self._registry.edition, self._scope.resolve)
         wanted = {self._target_type(t) for t in targets}
         if found and "" not in wanted and not any(self._registry.edition.is_a(found, w) for w in wanted):
-            said = f"Profile {profile} lets this reference point to {one_of(wanted)} only. Point to one of these."
+            said = f"Profile {profile} lets this reference point to {one_of(wanted)} only. Correct it."
             yield Issue("error", "structure", "reference-target", said, expression=node.expression)
 
     def _target_type(self, url: str) -> str:

@@ -118,7 +118,7 @@ class _Index:
 def check(node: Node, edition: Edition, resolve: Resolve) -> Iterator[Issue]:
     """Issues of one Reference, or of one canonical that points to a contained resource."""
     if node.type_name == "Reference":
-        targets = _targets(node, edition)
+        targets = _targets(node)
         reference = node.value.get("reference")
         if isinstance(reference, str) and reference:
             yield from _literal(node, reference, targets, edition, resolve)
@@ -135,7 +135,7 @@ def check(node: Node, edition: Edition, resolve: Resolve) -> Iterator[Issue]:
 
 
 def target_type(node: Node, reference: str, edition: Edition, resolve: Resolve) -> str:
-    """Type of the resource meant: the target's own where it can be reached, else as written; "" if unknown."""
+    """Type of the resource meant: the target's own if within reach, else as written; "" if unknown."""
     target = resolve(node, reference)
     if target is not None:
         return target.type_name
@@ -176,7 +176,7 @@ def _is_search(reference: str) -> bool:
     return "?" in reference
 
 
-def _targets(node: Node, edition: Edition) -> tuple[str, ...]:
+def _targets(node: Node) -> tuple[str, ...]:
     element = node.element
     if element is None:
         return ()

@@ -146,7 +146,9 @@ def _order(rule: Rule, members: Sequence[tuple[Node, str | None]], profile: str)
         wrong = slicing.ordered and place[name] < reached
         wrong = wrong or (slicing.rules == "openAtEnd" and strangers)
         if wrong:
-            said = f"Profile {profile} fixes the order of '{rule.name}', and this one stands too late. Move it up."
+            said = (
+                f"Profile {profile} fixes the order of '{rule.name}', and this stands too late. Move it up."
+            )
             yield Issue("error", "structure", "slice-order", said, expression=member.expression)
             return
         reached = max(reached, place[name])

@@ -45,7 +45,7 @@ class Source(NamedTuple):
     issues: tuple[Issue, ...] = ()
 
 
-def read(resource: bytes | str | Mapping[str, Any]) -> Source:
+def read(resource: object) -> Source:
     """Reads at full speed; decimals are floats. Never raises for what the resource holds."""
     if isinstance(resource, (bytes, bytearray, memoryview)):
         text = bytes(resource)

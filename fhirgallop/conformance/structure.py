@@ -181,7 +181,7 @@ def _unknown(node: Node, key: Any, edition: Edition) -> Issue:
 
 
 def _null(node: Node, key: str) -> Issue:
-    said = f"{name(key)} holds null where a value must stand. Leave the element out when there is nothing to say."
+    said = f"{name(key)} holds null where a value must stand. Leave out what has nothing to say."
     return _issue(node, "structure", "json-null", said)
 
 

@@ -34,7 +34,7 @@ def validate(
         packages: further FHIR packages (.tgz) with profiles, extensions and value sets.
 
     Returns:
-        Issues, most severe first; empty when nothing is wrong. Whatever the resource holds, nothing is raised.
+        Issues, most severe first; empty when nothing is wrong. Nothing a resource holds is raised.
 
     Raises:
         ValueError: no such edition.

@@ -1,6 +1,6 @@
 """Clause: an Observation with a vital-signs code must meet the core's profile for it, named or not.
 
-Source: FHIR R4 "Observation vital signs profile" and its table of codes (LOINC); 
+Source: FHIR R4 "Observation vital signs profile" and its table of codes (LOINC);
 the codes are the same in R4B and R5.
 """
 

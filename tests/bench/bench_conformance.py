@@ -40,7 +40,10 @@ def observation(source: random.Random) -> dict[str, Any]:
         "resourceType": "Observation",
         "id": f"exam-{word}",
         "meta": {"lastUpdated": "2026-03-04T10:15:00+01:00"},
-        "text": {"status": "generated", "div": DIV.format(f"Heart murmur {word}: grade 3 of 6, at the apex.")},
+        "text": {
+            "status": "generated",
+            "div": DIV.format(f"Heart murmur {word}: grade 3 of 6, at the apex."),
+        },
         "identifier": [{"system": "https://clinic.example/exam", "value": word}],
         "status": "final",
         "category": [
@@ -62,21 +65,36 @@ def observation(source: random.Random) -> dict[str, Any]:
         "effectiveDateTime": "2026-03-04T10:00:00+01:00",
         "issued": "2026-03-04T10:05:00+01:00",
         "performer": [{"reference": f"Practitioner/{word}", "display": f"Dr. {word}"}],
-        "bodySite": {"coding": [{"system": "http://snomed.info/sct", "code": "62403005"}], "text": f"apex {word}"},
-        "method": {"coding": [{"system": "http://snomed.info/sct", "code": "37931006"}], "text": "auscultation"},
+        "bodySite": {
+            "coding": [{"system": "http://snomed.info/sct", "code": "62403005"}],
+            "text": f"apex {word}",
+        },
+        "method": {
+            "coding": [{"system": "http://snomed.info/sct", "code": "37931006"}],
+            "text": "auscultation",
+        },
         "component": [
             {
-                "code": {"coding": [{"system": "http://snomed.info/sct", "code": "246112005"}], "text": "grade"},
+                "code": {
+                    "coding": [{"system": "http://snomed.info/sct", "code": "246112005"}],
+                    "text": "grade",
+                },
                 "valueQuantity": {
-                    "value": 3, "unit": "1", "system": "http://unitsofmeasure.org", "code": "1"
+                    "value": 3,
+                    "unit": "1",
+                    "system": "http://unitsofmeasure.org",
+                    "code": "1",
                 },
             },
             {
-                "code": {"coding": [{"system": "http://snomed.info/sct", "code": "260864003"}], "text": "timing"},
+                "code": {
+                    "coding": [{"system": "http://snomed.info/sct", "code": "260864003"}],
+                    "text": "timing",
+                },
                 "valueCodeableConcept": {"text": f"systolic {word}"},
             },
         ],
-    }  # fmt: skip
+    }
 
 
 def bundle(source: random.Random, count: int = 26) -> dict[str, Any]:
@@ -148,7 +166,8 @@ def main() -> int:
     over = 0
     source = random.Random(1)
     print(
-        f"observation {len(orjson.dumps(observation(source)))} bytes, bundle {len(orjson.dumps(bundle(source)))} bytes"
+        f"observation {len(orjson.dumps(observation(source)))} bytes, "
+        f"bundle {len(orjson.dumps(bundle(source)))} bytes"
     )
     for edition in ("R4", "R4B", "R5"):
         for name, ratio in measure(edition).items():

@@ -24,13 +24,12 @@ OBSERVATION = {
     "identifier": [{"system": "https://clinic.example/exam", "value": "e1-s3"}],
     "status": "final",
     "category": [
-        {
-            "coding": [
-                {"system": "http://terminology.hl7.org/CodeSystem/observation-category", "code": "exam"}
-            ]
-        }
+        {"coding": [{"system": "http://terminology.hl7.org/CodeSystem/observation-category", "code": "exam"}]}
     ],
-    "code": {"coding": [{"system": "http://snomed.info/sct", "code": "277455002"}], "text": "Third heart sound"},
+    "code": {
+        "coding": [{"system": "http://snomed.info/sct", "code": "277455002"}],
+        "text": "Third heart sound",
+    },
     "subject": {"reference": "Patient/p1"},
     "effectiveDateTime": "2026-03-04T09:50:00+01:00",
     "performer": [{"reference": "Practitioner/d1", "display": "Examiner"}],
@@ -69,6 +68,10 @@ def errors(judged: Callable[..., list[tuple[str, str, str]]]) -> Callable[..., l
     """Rule and expression of every error."""
 
     def run(resource: Any, edition: str = "R4", **options: Any) -> list[tuple[str, str]]:
-        return [(r, e) for severity, r, e in judged(resource, edition, **options) if severity in ("error", "fatal")]
+        return [
+            (r, e)
+            for severity, r, e in judged(resource, edition, **options)
+            if severity in ("error", "fatal")
+        ]
 
     return run

@@ -49,7 +49,12 @@ def test_the_three_editions_take_less_than_a_megabyte_and_carry_no_time_stamp() 
     for file in files:
         assert file.read_bytes()[4:8] == b"\0\0\0\0"
         text = gzip.decompress(file.read_bytes())
-        assert text == json.dumps(json.loads(text), sort_keys=True, separators=(",", ":"), ensure_ascii=False).encode()
+        assert (
+            text
+            == json.dumps(
+                json.loads(text), sort_keys=True, separators=(",", ":"), ensure_ascii=False
+            ).encode()
+        )
 
 
 @pytest.mark.parametrize("name", NAMES)
@@ -157,7 +162,9 @@ def test_a_broken_package_is_refused_with_file_and_reason(
         registry("R4", (path,))
 
 
-@pytest.mark.parametrize("data", [b"", b"not a package", gzip.compress(b"not a tar"), gzip.compress(b"x" * 5000)[:40]])
+@pytest.mark.parametrize(
+    "data", [b"", b"not a package", gzip.compress(b"not a tar"), gzip.compress(b"x" * 5000)[:40]]
+)
 def test_what_is_no_archive_is_refused(tmp_path: Path, data: bytes) -> None:
     path = tmp_path / "broken.tgz"
     path.write_bytes(data)
@@ -221,7 +228,9 @@ def test_compiling_gives_the_same_bytes_whatever_the_order_in_the_package(tmp_pa
     assert set(json.loads(gzip.decompress(one))["types"]) == {"Quantity", "SimpleQuantity", "MoneyQuantity"}
 
 
-def test_the_rebuild_command_says_what_it_cannot_use(tmp_path: Path, capsys: pytest.CaptureFixture[str]) -> None:
+def test_the_rebuild_command_says_what_it_cannot_use(
+    tmp_path: Path, capsys: pytest.CaptureFixture[str]
+) -> None:
     path = _pack(tmp_path / "site.tgz", _files())
     assert main([str(path)]) == 1
     assert "clinic.example is none of the packages" in capsys.readouterr().err

@@ -31,16 +31,31 @@ OBSERVATION: dict[str, Any] = {
     "text": {"status": "generated", "div": DIV.format("<p>Heart rate</p>")},
     "identifier": [{"system": "https://x.example", "value": "1", "period": {"start": "2026"}}],
     "status": "final",
-    "category": [{"coding": [{"system": "http://terminology.hl7.org/CodeSystem/observation-category", "code": "vital-signs"}]}],
+    "category": [
+        {
+            "coding": [
+                {
+                    "system": "http://terminology.hl7.org/CodeSystem/observation-category",
+                    "code": "vital-signs",
+                }
+            ]
+        }
+    ],
     "code": {"coding": [{"system": LOINC, "code": "8867-4", "display": "Heart rate"}], "text": "Heart rate"},
     "subject": {"reference": "Patient/1"},
     "effectiveDateTime": "2026-03-04",
     "issued": "2026-03-04T10:00:00+01:00",
     "performer": [{"reference": "Practitioner/2", "display": "X"}],
     "valueQuantity": {"value": 72, "unit": "/min", "system": UCUM, "code": "/min"},
-    "interpretation": [{"coding": [{"system": "http://terminology.hl7.org/CodeSystem/v3-ObservationInterpretation", "code": "N"}]}],
+    "interpretation": [
+        {
+            "coding": [
+                {"system": "http://terminology.hl7.org/CodeSystem/v3-ObservationInterpretation", "code": "N"}
+            ]
+        }
+    ],
     "referenceRange": [{"low": {"value": 60, "unit": "/min"}, "text": "adults"}],
-}  # fmt: skip
+}
 URN = "urn:uuid:0f8fad5b-d9cb-469f-a165-70867728950{}"
 
 
@@ -97,18 +112,92 @@ def test_every_form_of_a_resource_type_compiles(edition: str) -> None:
 
 
 SCALARS: list[Any] = [
-    None, True, 0, 1, 1.0, -1, 2**31, 1e300, 0.1, "", " ", "x", "a b", "2026", "2026-02-29", "2026-03-04T10:00:00Z",
-    "2026-03-04T10:00:00", "Patient/1", "Medication/1", "#p", URN.format("0"), URN.format("9"), "final", "N", LOINC,
-    "\x07", "é", "8867-4", "29463-7", "/min", "kg", [], {}, [None], ["x"], {"id": "x"}, {"text": "x"}, {"value": 1},
-    {"extension": [{"url": "https://x.example", "valueCode": "a"}]}, DIV.format(" "), DIV.format("<p>x</p>"),
-    DIV.format("<script>x</script>"), {"reference": "Patient/1"}, {"reference": URN.format("0")}, ("x",),
-]  # fmt: skip
+    None,
+    True,
+    0,
+    1,
+    1.0,
+    -1,
+    2**31,
+    1e300,
+    0.1,
+    "",
+    " ",
+    "x",
+    "a b",
+    "2026",
+    "2026-02-29",
+    "2026-03-04T10:00:00Z",
+    "2026-03-04T10:00:00",
+    "Patient/1",
+    "Medication/1",
+    "#p",
+    URN.format("0"),
+    URN.format("9"),
+    "final",
+    "N",
+    LOINC,
+    "\x07",
+    "é",
+    "8867-4",
+    "29463-7",
+    "/min",
+    "kg",
+    [],
+    {},
+    [None],
+    ["x"],
+    {"id": "x"},
+    {"text": "x"},
+    {"value": 1},
+    {"extension": [{"url": "https://x.example", "valueCode": "a"}]},
+    DIV.format(" "),
+    DIV.format("<p>x</p>"),
+    DIV.format("<script>x</script>"),
+    {"reference": "Patient/1"},
+    {"reference": URN.format("0")},
+    ("x",),
+]
 KEYS = [
-    "valueString", "valueInteger", "valueBoolean", "valueCodeableConcept", "dataAbsentReason", "component", "bodySite",
-    "bodyStructure", "hasMember", "encounter", "note", "method", "extension", "contained", "language", "id", "period",
-    "end", "comparator", "_status", "code", "system", "type", "profile", "high", "assigner", "value", "unknown", "url",
-    "fullUrl", "request", "resource", "effectivePeriod", "specimen", "derivedFrom", "versionId", "identifier", "text",
-]  # fmt: skip
+    "valueString",
+    "valueInteger",
+    "valueBoolean",
+    "valueCodeableConcept",
+    "dataAbsentReason",
+    "component",
+    "bodySite",
+    "bodyStructure",
+    "hasMember",
+    "encounter",
+    "note",
+    "method",
+    "extension",
+    "contained",
+    "language",
+    "id",
+    "period",
+    "end",
+    "comparator",
+    "_status",
+    "code",
+    "system",
+    "type",
+    "profile",
+    "high",
+    "assigner",
+    "value",
+    "unknown",
+    "url",
+    "fullUrl",
+    "request",
+    "resource",
+    "effectivePeriod",
+    "specimen",
+    "derivedFrom",
+    "versionId",
+    "identifier",
+    "text",
+]
 
 
 def _places(value: Any, found: list[tuple[Any, Any]]) -> list[tuple[Any, Any]]:

@@ -42,7 +42,11 @@ HOSTILE: list[Any] = [
     {"resourceType": "Observation", "valueQuantity": {"value": float("nan")}},
     collections.ChainMap({"resourceType": "Patient"}),
     {"resourceType": ["Patient"]},
-    {"resourceType": "Bundle", "type": "transaction", "entry": [None, 1, [], {}, {"resource": 1}, {"fullUrl": []}]},
+    {
+        "resourceType": "Bundle",
+        "type": "transaction",
+        "entry": [None, 1, [], {}, {"resource": 1}, {"fullUrl": []}],
+    },
     {"resourceType": "Bundle", "type": [], "entry": {}},
     {"resourceType": "Bundle", "type": "batch", "entry": [{"fullUrl": 1, "resource": {}, "request": []}]},
     {"resourceType": "Observation", "meta": {"profile": [1, None, {}, "", "x" * 10**6]}},
@@ -55,9 +59,15 @@ HOSTILE: list[Any] = [
     {"resourceType": "Observation", "implicitRules": "x" * 10**6 + " "},
     {"resourceType": "Observation", "code": {"coding": [{"code": "a " * 10**6}]}},
     {"resourceType": "Patient", "extension": "x", "_active": [], "name": [{"_given": {}}]},
-    {"resourceType": "Patient", "contained": [{"resourceType": "Patient", "id": "a", "link": [{"other": {"reference": "#a"}}]}]},
-    {"resourceType": "Patient", "contained": [{"resourceType": "Patient", "contained": [{"resourceType": "Patient"}]}]},
-]  # fmt: skip
+    {
+        "resourceType": "Patient",
+        "contained": [{"resourceType": "Patient", "id": "a", "link": [{"other": {"reference": "#a"}}]}],
+    },
+    {
+        "resourceType": "Patient",
+        "contained": [{"resourceType": "Patient", "contained": [{"resourceType": "Patient"}]}],
+    },
+]
 
 
 @pytest.mark.parametrize("edition", ["R4", "R5"])
@@ -89,12 +99,18 @@ def test_hostile_texts(text: bytes) -> None:
 
 
 def test_a_narrative_of_many_megabytes() -> None:
-    patient = {"resourceType": "Patient", "text": {"status": "generated", "div": DIV.format("<p>x</p>" * 600_000)}}
+    patient = {
+        "resourceType": "Patient",
+        "text": {"status": "generated", "div": DIV.format("<p>x</p>" * 600_000)},
+    }
     assert validate(patient) == []
 
 
 def test_a_bundle_of_very_many_entries_with_faults_in_all() -> None:
-    entry = {"fullUrl": "urn:uuid:x", "resource": {"resourceType": "Basic", "code": {"text": "x"}, "author": {"reference": "#"}}}
+    entry = {
+        "fullUrl": "urn:uuid:x",
+        "resource": {"resourceType": "Basic", "code": {"text": "x"}, "author": {"reference": "#"}},
+    }
     bundle = {"resourceType": "Bundle", "type": "collection", "entry": [dict(entry) for _ in range(8_000)]}
     issues = validate(bundle)
     assert "bdl-7" in {issue.rule for issue in issues}
@@ -109,24 +125,51 @@ def test_very_many_faults_in_one_line_of_text() -> None:
 
 JSON = st.recursive(
     st.none() | st.booleans() | st.integers() | st.floats() | st.text(max_size=8),
-    lambda inner: st.lists(inner, max_size=3)
-    | st.dictionaries(
-        st.sampled_from(["resourceType", "id", "meta", "entry", "type", "contained", "extension", "url", "code", "text", "div"])
-        | st.text(max_size=5),
-        inner,
-        max_size=4,
+    lambda inner: (
+        st.lists(inner, max_size=3)
+        | st.dictionaries(
+            st.sampled_from(
+                [
+                    "resourceType",
+                    "id",
+                    "meta",
+                    "entry",
+                    "type",
+                    "contained",
+                    "extension",
+                    "url",
+                    "code",
+                    "text",
+                    "div",
+                ]
+            )
+            | st.text(max_size=5),
+            inner,
+            max_size=4,
+        )
     ),
     max_leaves=20,
-)  # fmt: skip
+)
 
 
-@given(JSON, st.sampled_from(["Patient", "Observation", "Bundle", "Parameters", "Heart"]), st.sampled_from(["R4", "R4B", "R5"]))
+@given(
+    JSON,
+    st.sampled_from(["Patient", "Observation", "Bundle", "Parameters", "Heart"]),
+    st.sampled_from(["R4", "R4B", "R5"]),
+)
 @settings(max_examples=300, deadline=None)
 def test_any_json_is_judged(value: Any, kind: str, edition: str) -> None:
     validate(value, edition)
     if isinstance(value, dict):
         validate({"resourceType": kind, **value}, edition)
-        validate({"resourceType": "Bundle", "type": "transaction", "entry": [{"resource": {**value, "resourceType": kind}}]}, edition)
+        validate(
+            {
+                "resourceType": "Bundle",
+                "type": "transaction",
+                "entry": [{"resource": {**value, "resourceType": kind}}],
+            },
+            edition,
+        )
 
 
 @given(st.binary(max_size=200))

@@ -36,9 +36,7 @@ def _profile(elements: list[dict[str, Any]], url: str = URL, base: str = BASE, *
 
 
 def _judge(resource: dict[str, Any], *profiles: dict[str, Any], value_sets: Any = ()) -> Found:
-    package = Package(
-        "test", "1", (), {p["url"]: p for p in profiles}, {v["url"]: v for v in value_sets}, {}
-    )
+    package = Package("test", "1", (), {p["url"]: p for p in profiles}, {v["url"]: v for v in value_sets}, {})
     issues = thorough(read(resource), Registry(load("R4"), [package]), [profiles[0]["url"]])
     return [(i.rule, i.expression) for i in issues if i.severity != "information"]
 
@@ -51,25 +49,50 @@ ELEMENTS: list[tuple[dict[str, Any], Found]] = [
     (_element("Observation.method", min=1), [("cardinality-min", "Observation")]),
     (_element("Observation.performer", max="0"), [("cardinality-max", "Observation")]),
     (_element("Observation.category", min=2), [("cardinality-min", "Observation")]),
-    (_element("Observation.value[x]", type=[{"code": "Quantity"}]),
-     [("type-not-allowed", "Observation.value.ofType(CodeableConcept)")]),
+    (
+        _element("Observation.value[x]", type=[{"code": "Quantity"}]),
+        [("type-not-allowed", "Observation.value.ofType(CodeableConcept)")],
+    ),
     (_element("Observation.value[x]", type=[{"code": "CodeableConcept"}]), []),
     (_element("Observation.status", fixedCode="amended"), [("fixed-value", "Observation.status")]),
     (_element("Observation.status", fixedCode="final"), []),
     (_element("Observation.code", patternCodeableConcept={"coding": [{"system": SNOMED}]}), []),
-    (_element("Observation.code", patternCodeableConcept={"coding": [{"system": "https://loinc.org"}]}),
-     [("pattern-value", "Observation.code")]),
-    (_element("Observation.code", fixedCodeableConcept={"coding": [{"system": SNOMED}]}),
-     [("fixed-value", "Observation.code")]),
-    (_element("Observation.subject", type=[{"code": "Reference", "targetProfile": ["http://hl7.org/fhir/StructureDefinition/Group"]}]),
-     [("reference-target", "Observation.subject")]),
+    (
+        _element("Observation.code", patternCodeableConcept={"coding": [{"system": "https://loinc.org"}]}),
+        [("pattern-value", "Observation.code")],
+    ),
+    (
+        _element("Observation.code", fixedCodeableConcept={"coding": [{"system": SNOMED}]}),
+        [("fixed-value", "Observation.code")],
+    ),
+    (
+        _element(
+            "Observation.subject",
+            type=[{"code": "Reference", "targetProfile": ["http://hl7.org/fhir/StructureDefinition/Group"]}],
+        ),
+        [("reference-target", "Observation.subject")],
+    ),
     (_element("Observation.code.text", maxLength=3), [("primitive-length", "Observation.code.text")]),
     (_element("Observation.code.coding.display", min=1), [("cardinality-min", "Observation.code.coding[0]")]),
-    (_element("Observation", constraint=[{"key": "x-1", "severity": "error", "human": "A method is said", "expression": "method.exists()"}]),
-     [("x-1", "Observation")]),
-    (_element("Observation.valueCodeableConcept.text", min=1),
-     [("cardinality-min", "Observation.value.ofType(CodeableConcept)")]),
-]  # fmt: skip
+    (
+        _element(
+            "Observation",
+            constraint=[
+                {
+                    "key": "x-1",
+                    "severity": "error",
+                    "human": "A method is said",
+                    "expression": "method.exists()",
+                }
+            ],
+        ),
+        [("x-1", "Observation")],
+    ),
+    (
+        _element("Observation.valueCodeableConcept.text", min=1),
+        [("cardinality-min", "Observation.value.ofType(CodeableConcept)")],
+    ),
+]
 
 
 @pytest.mark.parametrize("view", ["differential", "snapshot"])
@@ -102,7 +125,9 @@ def test_a_differential_is_laid_over_the_profile_it_derives_from(observation: di
 
 
 def test_a_profile_of_another_type(observation: dict[str, Any]) -> None:
-    assert _judge(observation, _profile([], type="Patient", base=BASE.replace("Observation", "Patient"))) == [("profile-type", "Observation")]
+    assert _judge(observation, _profile([], type="Patient", base=BASE.replace("Observation", "Patient"))) == [
+        ("profile-type", "Observation")
+    ]
 
 
 def _sliced(kind: str, path: str, slices: list[dict[str, Any]], **slicing: Any) -> dict[str, Any]:
@@ -163,10 +188,18 @@ def test_slices_by_pattern(
 def test_slices_by_a_value_below(observation: dict[str, Any]) -> None:
     slices = _slice("grade", minimum=1)
     slices.append(
-        _element("Observation.component.code.coding.code", id="Observation.component:grade.code.coding.code", fixedCode="1")
+        _element(
+            "Observation.component.code.coding.code",
+            id="Observation.component:grade.code.coding.code",
+            fixedCode="1",
+        )
     )
     slices.append(
-        _element("Observation.component.value[x]", id="Observation.component:grade.value[x]", type=[{"code": "integer"}])
+        _element(
+            "Observation.component.value[x]",
+            id="Observation.component:grade.value[x]",
+            type=[{"code": "integer"}],
+        )
     )
     profile = _sliced("value", "code.coding.code", slices)
     assert _judge(_components(dict(observation), GRADE), profile) == []
@@ -180,12 +213,20 @@ def test_slices_by_a_value_below(observation: dict[str, Any]) -> None:
 def test_slices_by_type_and_by_existence(observation: dict[str, Any]) -> None:
     value = _profile(
         [
-            _element("Observation.value[x]", slicing={"discriminator": [{"type": "type", "path": "$this"}], "rules": "open"}),
-            _element("Observation.value[x]", id="Observation.value[x]:valueCodeableConcept", sliceName="valueCodeableConcept",
-                     type=[{"code": "CodeableConcept"}], min=1),
+            _element(
+                "Observation.value[x]",
+                slicing={"discriminator": [{"type": "type", "path": "$this"}], "rules": "open"},
+            ),
+            _element(
+                "Observation.value[x]",
+                id="Observation.value[x]:valueCodeableConcept",
+                sliceName="valueCodeableConcept",
+                type=[{"code": "CodeableConcept"}],
+                min=1,
+            ),
             _element("Observation.value[x].text", id="Observation.value[x]:valueCodeableConcept.text", min=1),
         ]
-    )  # fmt: skip
+    )
     assert _judge(observation, value) == [("cardinality-min", "Observation.value.ofType(CodeableConcept)")]
     exists = _sliced(
         "exists",
@@ -201,11 +242,19 @@ def test_slices_by_profile_of_a_target(observation: dict[str, Any]) -> None:
     member = _profile([_element("Observation.method", min=1)], url=URL + "-member")
     profile = _profile(
         [
-            _element("Observation.hasMember", slicing={"discriminator": [{"type": "profile", "path": "resolve()"}], "rules": "open"}),
-            _element("Observation.hasMember", id="Observation.hasMember:m", sliceName="m", min=1,
-                     type=[{"code": "Reference", "targetProfile": [URL + "-member"]}]),
+            _element(
+                "Observation.hasMember",
+                slicing={"discriminator": [{"type": "profile", "path": "resolve()"}], "rules": "open"},
+            ),
+            _element(
+                "Observation.hasMember",
+                id="Observation.hasMember:m",
+                sliceName="m",
+                min=1,
+                type=[{"code": "Reference", "targetProfile": [URL + "-member"]}],
+            ),
         ]
-    )  # fmt: skip
+    )
     inner = {"resourceType": "Observation", "id": "m", "status": "final", "code": {"text": "m"}}
     observation["hasMember"] = [{"reference": "#m"}]
     assert _judge({**observation, "contained": [inner]}, profile, member) == [("slice-min", "Observation")]
@@ -225,7 +274,10 @@ VITAL = {
     "category": [
         {
             "coding": [
-                {"system": "http://terminology.hl7.org/CodeSystem/observation-category", "code": "vital-signs"}
+                {
+                    "system": "http://terminology.hl7.org/CodeSystem/observation-category",
+                    "code": "vital-signs",
+                }
             ]
         }
     ],
@@ -247,7 +299,10 @@ VITAL = {
         ({"subject": {"reference": "Group/1"}}, "reference-target"),
         ({"valueQuantity": None}, "vs-2"),
         ({"valueQuantity": {**VITAL["valueQuantity"], "code": "/min{beats}"}}, "fixed-value"),
-        ({"valueQuantity": {"value": 72, "system": "http://unitsofmeasure.org", "code": "/min"}}, "cardinality-min"),
+        (
+            {"valueQuantity": {"value": 72, "system": "http://unitsofmeasure.org", "code": "/min"}},
+            "cardinality-min",
+        ),
     ],
 )
 def test_a_vital_sign_meets_the_core_profile_without_naming_it(
@@ -267,10 +322,14 @@ def test_blood_pressure_with_a_missing_diastolic_says_why(errors: Callable[..., 
     )
     resource = {**VITAL, "code": {"coding": [{"system": "http://loinc.org", "code": "85354-9"}]}}
     del resource["valueQuantity"]
-    reason = {"coding": [{"system": "http://terminology.hl7.org/CodeSystem/data-absent-reason", "code": "unknown"}]}
+    reason = {
+        "coding": [{"system": "http://terminology.hl7.org/CodeSystem/data-absent-reason", "code": "unknown"}]
+    }
     assert errors({**resource, "component": [systolic, component("8462-4", dataAbsentReason=reason)]}) == []
     assert errors({**resource, "component": [systolic]}) == [("slice-min", "Observation")]
-    assert errors({**resource, "component": [systolic, component("8462-4")]}) == [("vs-3", "Observation.component[1]")]
+    assert errors({**resource, "component": [systolic, component("8462-4")]}) == [
+        ("vs-3", "Observation.component[1]")
+    ]
 
 
 def test_every_core_and_own_profile_can_be_read(known: Callable[[str], Registry]) -> None:

@@ -49,7 +49,7 @@ class Invariants:
         self._index: dict[tuple[str, ...], int] = {}
 
     def indices(self, constraints: Any) -> list[int]:
-        """Row numbers of an element's constraints; those without an expression cannot be judged and are left."""
+        """Row numbers of an element's constraints; those without an expression are left."""
         found = []
         for constraint in constraints or ():
             expression = constraint.get("expression")
@@ -188,7 +188,7 @@ class TypeTable:
         return line
 
     def add_type_profile(self, definition: Definition) -> None:
-        """A core profile on a data type that elements ask for (SimpleQuantity): its base, plus its constraints."""
+        """A core profile on a data type that elements ask for: its base, plus its constraints."""
         name, base = definition["id"], definition["type"]
         held = set().union(*(self._held.get(step, set()) for step in self._line(base)))
         root = definition["snapshot"]["element"][0]

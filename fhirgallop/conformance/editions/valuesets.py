@@ -16,7 +16,7 @@ Definition = Mapping[str, Any]
 
 @dataclass(slots=True)
 class Codes:
-    """Codes by system while a set is put together; `whole` are systems taken entire, `unlisted` not enumerable."""
+    """Codes by system while a set is put together; `whole` systems are taken entire, `unlisted` unknown."""
 
     listed: dict[str, set[str]] = field(default_factory=dict)
     whole: set[str] = field(default_factory=set)
