@@ -48,7 +48,7 @@ class Wish:
         "The body is one examination (JSON object, HL7 v2 ORU^R01, FHIR QuestionnaireResponse) or several "
         "(JSON list, NDJSON, CSV, spreadsheet). One is answered with `{bundle, outcome, unread, unknown}`, "
         "or with the bare transaction Bundle where `Accept: application/fhir+json` is sent; several with one "
-        "such object each, in order, and counts. The same examination sent twice gets the very same Bundle; a "
+        "such object each, in order, and counts. The same examination sent twice gets the same Bundle; a "
         "changed one amends its resources."
     ),
     openapi_extra={"requestBody": {"required": True, "content": _BODIES}},

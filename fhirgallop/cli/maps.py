@@ -1,0 +1,96 @@
+"""`fhirgallop map ...`: checks a template map, alone or against records; prints the format's JSON Schema."""
+
+from __future__ import annotations
+
+from pathlib import Path
+from typing import TYPE_CHECKING, Annotated
+
+import typer
+
+from fhirgallop.cli.shared import Exit
+
+if TYPE_CHECKING:
+    from fhirgallop.mapping.coverage import Coverage
+    from fhirgallop.mapping.template_map import TemplateMap
+
+app = typer.Typer(help="Template maps: check one, or print the schema of the format.", no_args_is_help=True)
+
+
+@app.command("check")
+def check(
+    map_: Annotated[Path, typer.Argument(metavar="MAP", help="The template map (YAML).")],
+    records: Annotated[
+        list[Path] | None, typer.Option("--with", help="Records to try it on; may be given several times.")
+    ] = None,
+) -> None:
+    """Tell every fault of a map with its line and cure; with records, also what it leaves open in them.
+
+    Exit codes: 0 nothing is wrong; 1 the records hold fields or values the map does not know, or that are
+    refused; 3 the map has faults.
+    """
+    from fhirgallop import api  # noqa: PLC0415 - heavy; --help stays quick
+
+    template = api.read_map(map_)
+    typer.echo(
+        f"{map_}: map {template.name}, version {template.version}: no fault, {len(template.lines)} lines"
+    )
+    if records:
+        _try(template, records)
+
+
+def _try(template: TemplateMap, paths: list[Path]) -> None:
+    from fhirgallop.exam import catalogue, checks  # noqa: PLC0415
+    from fhirgallop.intake.detect import open_records  # noqa: PLC0415
+    from fhirgallop.intake.record import LocalRecord  # noqa: PLC0415
+    from fhirgallop.mapping.apply import apply  # noqa: PLC0415
+    from fhirgallop.mapping.coverage import Coverage  # noqa: PLC0415
+
+    known = catalogue.load()
+    coverage = Coverage(template, known)
+    refused = unreadable = 0
+    for path in paths:
+        for read in open_records(path, name=str(path)):
+            if not isinstance(read, LocalRecord):
+                unreadable += 1
+                for issue in read.issues:
+                    typer.echo(str(issue))
+                continue
+            mapped = apply(read, template, known)
+            coverage.add(read, mapped)
+            found = [*mapped.issues, *(checks.check(mapped.exam, known) if mapped.exam else ())]
+            refused += any(issue.is_error for issue in found)
+    _print(coverage, refused, unreadable)
+    still_open = coverage.unknown() or any(
+        count.use == "unread" and count.filled for count in coverage.fields()
+    )
+    raise typer.Exit(Exit.REFUSED if refused or unreadable or still_open else Exit.WELL)
+
+
+def _print(coverage: Coverage, refused: int, unreadable: int) -> None:
+    from rich.console import Console  # noqa: PLC0415
+    from rich.table import Table  # noqa: PLC0415
+
+    console = Console(highlight=False)
+    console.print(
+        f"{coverage.records:,} records: {refused:,} would be refused; {unreadable:,} could not be read"
+    )
+    fields = Table("field", "the map", "filled", "blank", box=None)
+    for count in coverage.fields():
+        fields.add_row(count.name, count.use, f"{count.filled:,}", f"{count.blank:,}")
+    console.print(fields)
+    if coverage.unknown():
+        values = Table("field", "value the map does not know", "times", box=None)
+        for value, times in coverage.unknown():
+            values.add_row(value.field, value.value, f"{times:,}")
+        console.print(values)
+    for issue in coverage.issues():
+        console.print(str(issue), markup=False)
+
+
+@app.command("schema")
+def schema() -> None:
+    """Print the JSON Schema of the map format, for editors that complete and check as you type."""
+    from fhirgallop.codes import fhirjson  # noqa: PLC0415
+    from fhirgallop.mapping.schema import schema as described  # noqa: PLC0415
+
+    typer.echo(fhirjson.pretty(described()).decode())

@@ -1,0 +1,59 @@
+"""What the commands share: exit codes, where people are spoken to, files that appear whole or not at all."""
+
+from __future__ import annotations
+
+import os
+import sys
+import tempfile
+from collections.abc import Iterator
+from contextlib import contextmanager
+from enum import IntEnum, StrEnum
+from pathlib import Path
+from typing import IO
+
+from rich.console import Console
+
+
+class Exit(IntEnum):
+    """Exit codes, as every --help says."""
+
+    WELL = 0
+    REFUSED = 1
+    USAGE = 2
+    FAULTY = 3
+    UNUSABLE = 4
+
+
+class EditionName(StrEnum):
+    """The FHIR editions, for the command line."""
+
+    R4 = "R4"
+    R4B = "R4B"
+    R5 = "R5"
+
+
+def people() -> Console:
+    """The console for tables and progress: standard error, so that standard output holds data alone."""
+    return Console(stderr=True, highlight=False)
+
+
+def complain(text: str) -> None:
+    """One line for the operator."""
+    print(text, file=sys.stderr)
+
+
+@contextmanager
+def whole_file(path: Path) -> Iterator[IO[bytes]]:
+    """A file to write that appears at `path` when the block ends well, and not at all otherwise."""
+    handle, name = tempfile.mkstemp(prefix=f".{path.name}.", dir=path.parent)
+    temporary = Path(name)
+    try:
+        with os.fdopen(handle, "wb") as file:
+            yield file
+            file.flush()
+            os.fsync(file.fileno())
+        temporary.chmod(0o640)
+        temporary.replace(path)
+    except BaseException:
+        temporary.unlink(missing_ok=True)
+        raise
