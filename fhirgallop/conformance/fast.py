@@ -17,6 +17,7 @@ from jsonschema_rs import Draft202012Validator, RegexOptions
 
 from fhirgallop.conformance import fast_profiles, invariants, structure, walk
 from fhirgallop.conformance.fast_formats import ID, UUID
+from fhirgallop.conformance.fast_residue import Check, codes_apart
 from fhirgallop.conformance.fast_schema import Form, Schema, SchemaBuilder
 from fhirgallop.conformance.node import Node
 from fhirgallop.conformance.registry import Registry
@@ -70,10 +71,11 @@ def _implied(observation: dict[str, Any]) -> tuple[str, ...]:
 
 @dataclass(frozen=True, slots=True)
 class _Ready:
-    """A compiled form: validator, keys with whole numbers, targets of references."""
+    """A compiled form: validator, values and codes to be looked at apart, targets of references."""
 
     is_valid: Callable[[object], bool]
-    integers: tuple[str, ...]
+    checks: tuple[tuple[str, Check], ...]
+    components: bool
     targets: Mapping[str, Any]
 
 
@@ -86,11 +88,13 @@ def _accepted(resource: dict[str, Any], kind: str, known: Registry) -> _Ready | 
         ready = _fitting(known, kind, declared, implied, tuple(resource))
         if ready is None or not ready.is_valid(resource):
             return None
+        if ready.components and not codes_apart(resource):
+            return None
+        for key, check in ready.checks:
+            if not check(resource[key]):
+                return None
     except (ValueError, TypeError, AttributeError, KeyError, OverflowError, RecursionError):
         return None  # not what JSON can hold, or of the wrong shape: the walk says what it is
-    for key in ready.integers:
-        if type(resource[key]) is not int:
-            return None
     return ready
 
 
@@ -106,7 +110,9 @@ def _fitting(
     if found is None or not found[0].is_valid(dict.fromkeys(keys)):
         return None
     _, validator, form = found
-    return _Ready(validator.is_valid, tuple(k for k in keys if k in form.integers), form.targets)
+    checks = tuple((k, form.checks[k]) for k in keys if k in form.checks)
+    components = "component" in keys and any(k.startswith("value") for k in keys)
+    return _Ready(validator.is_valid, checks, components, form.targets)
 
 
 @lru_cache(maxsize=512)
@@ -171,7 +177,9 @@ def _consistent(entry: Mapping[str, Any], resource: Mapping[str, Any], kind: str
     request = entry.get("request")
     if request is None:
         return True
-    return bool(request["url"] == (kind if request["method"] == "POST" else f"{kind}/{ident}"))
+    if request["method"] == "POST":
+        return bool(request["url"] == kind)
+    return bool(request["url"] == f"{kind}/{ident}" or request["url"].startswith(f"{kind}?"))
 
 
 def _targets_right(held: Mapping[str, Any], plan: Mapping[str, Any], urls: Mapping[str, str]) -> bool:

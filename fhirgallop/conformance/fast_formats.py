@@ -15,7 +15,7 @@ _ZONE = r"(Z|[+-](0[0-9]|1[0-3]):[0-5][0-9])"
 TEXT = r"^[^\x00-\x08\x0B\x0C\x0E-\x1F]+$"
 
 # narrative of plain blocks without attributes, which the narrative clause takes as it is
-_SAID = r"[^<>&\x00-\x08\x0B\x0C\x0E-\x1F\x7F-\x9F\uFFFE\uFFFF]"
+_SAID = r"([^<>&\x00-\x08\x0B\x0C\x0E-\x1F\x7F-\x9F\uFFFE\uFFFF]|&(amp|lt|gt|quot|apos);)"
 _INLINE = f"({_SAID}|<b>{_SAID}*</b>|<i>{_SAID}*</i>|<br/>)"
 _BLOCK = f"(<p>{_INLINE}*</p>|<ul>(<li>{_INLINE}*</li>)+</ul>)"
 _FIRST = f"[A-Za-z0-9(]{_INLINE}*"

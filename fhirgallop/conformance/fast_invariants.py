@@ -4,8 +4,8 @@ A type that carries an invariant not in this table is refused whole by the fast 
 expression it was written for: another wording under the same key (in another edition) is another row.
 
 Additions: `absent` keys, `required` keys, `any` of some elements, `needs` (a key asks for others),
-`excludes` (an element rules out a key), `text` (of a primitive), `also` (more asked
-of an element).
+`excludes` (an element rules out a key), `apart` (codes of components are looked at by `fast_residue`),
+`text` (of a primitive), `also` (more asked of an element).
 """
 
 from __future__ import annotations
@@ -44,7 +44,7 @@ _ROWS: tuple[tuple[Fragment, str], ...] = (
     # Observation
     ({"excludes": (("value[x]", "dataAbsentReason"),)}, "dataAbsentReason.empty() or value.empty()"),
     (
-        {"excludes": (("value[x]", "component"),)},
+        {"apart": True},
         "value.empty() or component.code.where(coding.intersect(%resource.code.coding).exists()).empty()",
     ),
     ({"absent": ("bodyStructure",)}, "bodySite.exists() implies bodyStructure.empty()"),

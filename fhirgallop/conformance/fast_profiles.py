@@ -10,6 +10,7 @@ from collections.abc import Iterator, Mapping, Sequence
 from copy import deepcopy
 from itertools import combinations
 from typing import Any
+from urllib.parse import unquote
 
 from fhirgallop.conformance.editions.model import Binding, Child, TypeDef, TypeRef
 from fhirgallop.conformance.fast_invariants import REFUSED, fragment
@@ -76,8 +77,8 @@ class _Narrowing:
         self._object(schema, profile.root, definition, urn=True)
         for name, rule in profile.root.children.items():
             wanted = self._targets(rule.types)
-            if wanted:
-                for key in keys_of(definition, name, schema):
+            for key in keys_of(definition, name, schema) if wanted else ():
+                if definition.keys[key].type_name == "Reference":
                     targets[key] = frozenset(self._builder.kinds(wanted))
 
     def _object(self, schema: Schema, rule: Rule, definition: TypeDef, *, urn: bool) -> None:
@@ -142,6 +143,8 @@ class _Narrowing:
         targets = self._targets(rule.types)
         if type_name == "Reference" and targets:
             schema = self._builder.reference(targets, urn=urn)
+            if schema is REFUSED:
+                return REFUSED
         extra: list[Schema] = []
         if rule.fixed is not None:
             extra.append({"enum": [rule.fixed]})
@@ -152,11 +155,8 @@ class _Narrowing:
         if rule.binding is not None:
             extra.append(self._bound(rule.binding, type_name, definition))
         if definition.kind == "primitive":
-            for invariant in rule.invariants:
-                addition = fragment(invariant.key, invariant.expression)
-                if addition is None or "text" not in addition:
-                    return REFUSED
-                extra.append(addition["text"])
+            additions = [fragment(i.key, i.expression) for i in rule.invariants]
+            extra.extend((addition or {}).get("text", REFUSED) for addition in additions)
         elif rule.children or rule.invariants:
             schema = self._opened(schema)
             try:
@@ -177,7 +177,7 @@ class _Narrowing:
     def _opened(self, schema: Schema) -> Schema:
         """The object schema behind a `$ref`, as a copy of its own."""
         if "$ref" in schema:
-            opened = self._builder.copy(schema["$ref"].removeprefix("#/$defs/"))
+            opened = deepcopy(self._builder.definitions[unquote(schema["$ref"].removeprefix("#/$defs/"))])
             more = [*opened.get("allOf", ()), *schema.get("allOf", ())]
             return {**opened, "allOf": more} if more else opened
         if "properties" not in schema:

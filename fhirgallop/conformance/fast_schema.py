@@ -3,7 +3,7 @@
 No companions, extensions, contained resources or element ids; formats a little narrower than FHIR's.
 Generated from the definitions of an edition, and narrowed by profiles in `fast_profiles`.
 JSON Schema 2020-12. It takes 1.0 for an integer and FHIR does not, so whole numbers stand only at a
-resource's root, where `Form.integers` names them to be looked at apart.
+resource's root, where they are looked at apart (`fast_residue`), as are ranges and periods.
 """
 
 from __future__ import annotations
@@ -16,6 +16,7 @@ from typing import Any
 from fhirgallop.conformance.editions.model import Binding, Child, Element, TypeDef
 from fhirgallop.conformance.fast_formats import ID, PATTERNS, TEXT, UUID
 from fhirgallop.conformance.fast_invariants import REFUSED, fragment
+from fhirgallop.conformance.fast_residue import CHECKS, Check
 from fhirgallop.conformance.primitives import RANGES
 from fhirgallop.conformance.registry import Registry
 
@@ -34,13 +35,13 @@ class Form:
     Attributes:
         schema: its schema, but for what must and must not stand together at its root.
         presence: a schema of the keys at the root.
-        integers: keys at the root that hold whole numbers.
+        checks: keys at the root whose values are looked at apart, with the check.
         targets: key -> resource types that a reference there may lead to, or the same of a nested type.
     """
 
     schema: Schema
     presence: Schema
-    integers: frozenset[str]
+    checks: dict[str, Check]
     targets: dict[str, Any] = field(default_factory=dict)
 
 
@@ -51,6 +52,8 @@ class SchemaBuilder:
         self.registry = registry
         self.edition = registry.edition
         self.definitions: dict[str, Schema] = {}
+        # Reference and Identifier hold one another: built in this order, only the assigner is refused
+        self.type("Reference")
 
     def resource(self, name: str) -> Schema:
         """The whole schema of a resource type; `REFUSED` when it has rules that no schema can hold."""
@@ -71,7 +74,9 @@ class SchemaBuilder:
             schema={k: v for k, v in schema.items() if k not in _PRESENCE},
             presence={k: schema[k] for k in ("type", "additionalProperties", *_PRESENCE) if k in schema}
             | {"properties": dict.fromkeys(schema["properties"], True)},
-            integers=frozenset(k for k in schema["properties"] if k in keys and self._is_integer(keys[k])),
+            checks={
+                k: CHECKS[keys[k].type_name][0] for k in schema["properties"] if k in keys and _apart(keys[k])
+            },
             targets=self.targets(name),
         )
 
@@ -121,7 +126,8 @@ class SchemaBuilder:
             return REFUSED
         schema = self.copy("Reference")
         if schema is not REFUSED:
-            schema["properties"].pop("type", None)
+            schema["properties"]["type"] = {"enum": self.kinds(targets)}
+            schema.setdefault("dependentSchemas", {})["type"] = {"properties": {"reference": False}}
             literal = rf'(https?://[!"$->@-~]+/)?({"|".join(self.kinds(targets))})/{ID}'
             pattern = f"^({literal}|{UUID})$" if urn else f"^{literal}$"
             schema["properties"]["reference"] = {"type": "string", "pattern": pattern}
@@ -169,8 +175,8 @@ class SchemaBuilder:
             return None
         return found.systems
 
-    def _object(self, definition: TypeDef, *, root: bool) -> Schema:
-        additions = [fragment(i.key, i.expression) for i in definition.invariants]
+    def _object(self, definition: TypeDef, *, root: bool, answered: frozenset[str] = frozenset()) -> Schema:
+        additions = [fragment(i.key, i.expression) for i in definition.invariants if i.key not in answered]
         properties = self._properties(definition, root=root)
         schema: Schema = {"type": "object", "properties": properties, "additionalProperties": False}
         if not root:
@@ -191,13 +197,24 @@ class SchemaBuilder:
         for key, child in definition.keys.items():
             if child.companion or key in left_out or (key == "id" and not root):
                 continue
-            if self._is_integer(child) and (not root or child.element.many):
+            if self._is_integer(child) and not (root and _apart(child)):
+                continue
+            if root and _apart(child) and not child.primitive:
+                properties[key] = self._looked_at_apart(child.type_name)
                 continue
             # a urn may lead to another entry, which is looked up for resources and their nested types only
             schema = self._element(child, urn=definition.kind in ("resource", "nested"))
             if schema is not REFUSED:
                 properties[key] = schema
         return properties
+
+    def _looked_at_apart(self, name: str) -> Schema:
+        """A type without the invariants that its check answers for."""
+        key = f"{name} apart"
+        definition = self.edition.type(name)
+        if key not in self.definitions and definition is not None:
+            self.definitions[key] = self._object(definition, root=False, answered=CHECKS[name][1])
+        return {"$ref": f"#/$defs/{name}%20apart"}
 
     def _is_integer(self, child: Child) -> bool:
         definition = self.edition.type(child.type_name)
@@ -260,6 +277,10 @@ class SchemaBuilder:
             return {"type": "number", "minimum": -_LIMIT, "maximum": _LIMIT}
         pattern = PATTERNS.get(name, TEXT)
         return {"type": "string", "pattern": pattern} | ({"maxLength": 2**20} if pattern == TEXT else {})
+
+
+def _apart(child: Child) -> bool:
+    return child.type_name in CHECKS and not child.element.many
 
 
 def keys_of(definition: TypeDef, name: str, schema: Schema) -> list[str]:

@@ -56,6 +56,24 @@ OBSERVATION: dict[str, Any] = {
     ],
     "referenceRange": [{"low": {"value": 60, "unit": "/min"}, "text": "adults"}],
 }
+FINDING: dict[str, Any] = {
+    "resourceType": "Observation",
+    "text": {"status": "generated", "div": DIV.format("<p>Murmur &gt; 3</p><ul><li>loud</li></ul>")},
+    "identifier": [{"system": "https://x.example", "value": "2", "use": "official"}],
+    "status": "final",
+    "code": {"coding": [{"system": "http://snomed.info/sct", "code": "88610006"}]},
+    "subject": {"identifier": {"system": "https://x.example", "value": "p"}, "type": "Patient"},
+    "effectivePeriod": {"start": "2026-03-04T10:00:00Z", "end": "2026-03-04T10:10:00Z"},
+    "performer": [{"type": "Practitioner", "identifier": {"value": "d"}}],
+    "valueRange": {"low": {"value": 1, "unit": "cm"}, "high": {"value": 2.5, "unit": "cm"}},
+    "component": [
+        {
+            "code": {"coding": [{"system": "http://snomed.info/sct", "code": "1"}]},
+            "valueQuantity": {"value": 3},
+        },
+        {"code": {"text": "pitch"}, "valueString": "low"},
+    ],
+}
 URN = "urn:uuid:0f8fad5b-d9cb-469f-a165-70867728950{}"
 
 
@@ -88,6 +106,7 @@ def _agrees(resource: Any, known: Registry) -> bool:
 @pytest.mark.parametrize("edition", EDITIONS)
 def test_the_plain_resources_are_settled(edition: str) -> None:
     assert _agrees(deepcopy(OBSERVATION), registry(edition))
+    assert _agrees(deepcopy(FINDING), registry(edition))
     assert _agrees(_bundle(), registry(edition))
     without = deepcopy(OBSERVATION)
     del without["text"]
@@ -153,6 +172,12 @@ SCALARS: list[Any] = [
     {"extension": [{"url": "https://x.example", "valueCode": "a"}]},
     DIV.format(" "),
     DIV.format("<p>x</p>"),
+    {"coding": [{"system": "http://snomed.info/sct", "code": "88610006"}]},
+    {"low": {"value": 3}, "high": {"value": 2}},
+    {"start": "2026-03-05", "end": "2026-03-04"},
+    {"start": "2026-03-04", "end": "2026-03-04"},
+    "Observation?identifier=1",
+    "88610006",
     DIV.format("<script>x</script>"),
     {"reference": "Patient/1"},
     {"reference": URN.format("0")},
@@ -197,6 +222,11 @@ KEYS = [
     "versionId",
     "identifier",
     "text",
+    "low",
+    "start",
+    "coding",
+    "reference",
+    "ifNoneExist",
 ]
 
 
@@ -211,7 +241,7 @@ def _places(value: Any, found: list[tuple[Any, Any]]) -> list[tuple[Any, Any]]:
 @st.composite
 def changed(draw: st.DrawFn) -> Any:
     """A plain resource or Bundle with one to three changes at any place."""
-    resource = draw(st.sampled_from([OBSERVATION, _bundle()]))
+    resource = draw(st.sampled_from([OBSERVATION, FINDING, _bundle()]))
     resource = deepcopy(resource)
     for _ in range(draw(st.integers(1, 3))):
         places = _places(resource, [])

@@ -1,0 +1,65 @@
+"""What a schema cannot say of an accepted resource, looked at in plain Python: numbers, order, equality.
+
+Each check is for a value at a resource's root, and true only if the walk would find nothing there.
+"""
+
+from __future__ import annotations
+
+import re
+from collections.abc import Callable, Mapping
+from typing import Any
+
+Check = Callable[[Any], bool]
+
+_DAY = re.compile(r"[0-9]{4}-[0-9]{2}-[0-9]{2}", re.ASCII)
+
+
+def is_whole(value: Any) -> bool:
+    """An integer as FHIR writes it: JSON Schema takes 1.0 as well."""
+    return type(value) is int
+
+
+def in_order(value: Any) -> bool:
+    """A Range whose ends have one unit and are in order (rng-2)."""
+    low, high = value.get("low"), value.get("high")
+    if low is None or high is None:
+        return True
+    same = all(low.get(key) == high.get(key) for key in ("unit", "system", "code"))
+    return bool(same and "value" in low and "value" in high and low["value"] <= high["value"])
+
+
+def one_after_the_other(value: Any) -> bool:
+    """A Period whose ends are written alike and are in order (per-1)."""
+    start, end = value.get("start"), value.get("end")
+    if start is None or end is None:
+        return True
+    if len(start) != len(end):
+        return False
+    if _DAY.fullmatch(start):
+        return bool(start <= end)
+    # of one length and in one zone, texts of moments are ordered as the moments are
+    return bool(len(start) >= 20 and _zone(start) == _zone(end) and start <= end)
+
+
+def _zone(moment: str) -> str:
+    return "Z" if moment.endswith("Z") else moment[-6:]
+
+
+def codes_apart(resource: Mapping[str, Any]) -> bool:
+    """No component has a code of the Observation itself, if that has a value (obs-7)."""
+    own = {coding.get("code") for coding in resource["code"].get("coding", ())}
+    return all(
+        coding.get("code") not in own
+        for component in resource["component"]
+        for coding in component["code"].get("coding", ())
+    )
+
+
+# type of a root element -> its check, and the invariants which that check answers for
+CHECKS: Mapping[str, tuple[Check, frozenset[str]]] = {
+    "integer": (is_whole, frozenset()),
+    "positiveInt": (is_whole, frozenset()),
+    "unsignedInt": (is_whole, frozenset()),
+    "Range": (in_order, frozenset({"rng-2"})),
+    "Period": (one_after_the_other, frozenset({"per-1"})),
+}
