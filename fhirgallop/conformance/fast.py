@@ -22,7 +22,6 @@ from fhirgallop.conformance.fast_schema import Form, Schema, SchemaBuilder
 from fhirgallop.conformance.node import Node
 from fhirgallop.conformance.registry import Registry
 from fhirgallop.conformance.source import exact
-from fhirgallop.conformance.vital_signs import PROFILES as VITAL_SIGNS
 from fhirgallop.conformance.vital_signs import profiles_for
 from fhirgallop.outcome import Issue
 
@@ -61,14 +60,6 @@ def settle(
     return _without_narrative(value, missing, known) if text is None else None
 
 
-def _implied(observation: dict[str, Any]) -> tuple[str, ...]:
-    """The profiles that vital-signs codes ask for; mostly there are none, which is quick to see."""
-    for coding in observation["code"].get("coding", ()):
-        if coding.get("code") in VITAL_SIGNS:
-            return tuple(profiles_for(observation))
-    return ()
-
-
 @dataclass(frozen=True, slots=True)
 class _Ready:
     """A compiled form: validator, values and codes to be looked at apart, targets of references."""
@@ -83,19 +74,23 @@ def _accepted(resource: dict[str, Any], kind: str, known: Registry) -> _Ready | 
     """The form that a single resource was found to have; None when it is in doubt."""
     try:
         meta = resource.get("meta")
-        declared = tuple(meta.get("profile", ())) if meta else ()
-        implied = _implied(resource) if kind == "Observation" else ()
-        ready = _fitting(known, kind, declared, implied, tuple(resource))
-        if ready is None or not ready.is_valid(resource):
-            return None
-        if ready.components and not codes_apart(resource):
-            return None
-        for key, check in ready.checks:
-            if not check(resource[key]):
-                return None
+        declared = tuple(meta["profile"]) if meta and "profile" in meta else ()
+        keys = tuple(resource)
+        ready = _fitting(known, kind, declared, (), keys)
+        if ready is not None and _has_form(resource, ready):
+            return ready
+        # a vital-signs code asks for a profile more: it was refused above, so the others pay nothing
+        implied = tuple(profiles_for(resource)) if kind == "Observation" else ()
+        ready = _fitting(known, kind, declared, implied, keys) if implied else None
+        return ready if ready is not None and _has_form(resource, ready) else None
     except (ValueError, TypeError, AttributeError, KeyError, OverflowError, RecursionError):
         return None  # not what JSON can hold, or of the wrong shape: the walk says what it is
-    return ready
+
+
+def _has_form(resource: dict[str, Any], ready: _Ready) -> bool:
+    if not ready.is_valid(resource) or (ready.components and not codes_apart(resource)):
+        return False
+    return not ready.checks or all(check(resource[key]) for key, check in ready.checks)
 
 
 @lru_cache(maxsize=4096)

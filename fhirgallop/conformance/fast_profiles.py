@@ -53,6 +53,8 @@ def form(
             narrowing.root(schema, profile, definition, targets)
     except Unsupported:
         return None
+    if name == "Observation" and not implied:
+        builder.without_vital_signs(schema)
     if declared:
         meta = builder.copy("Meta")
         if meta is REFUSED:
