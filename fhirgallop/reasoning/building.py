@@ -7,19 +7,9 @@ from typing import Final
 
 from fhirgallop.exam import catalogue
 from fhirgallop.exam.context import Source
+from fhirgallop.reasoning.atoms import Atom, Bound, Having, OfSubject
 from fhirgallop.reasoning.block import Block, quantity
-from fhirgallop.reasoning.conditions import (
-    All,
-    Any,
-    Atom,
-    Bound,
-    Condition,
-    Count,
-    First,
-    Having,
-    Not,
-    OfSubject,
-)
+from fhirgallop.reasoning.conditions import All, Any, Condition, Count, First, Not
 from fhirgallop.reasoning.defining import Vocabulary
 from fhirgallop.reasoning.faults import Faults
 from fhirgallop.reasoning.measuring import MEASURED_KEYS, computed, judged
@@ -81,8 +71,8 @@ class Builder:
     def _group(self, tree: Pairs) -> Condition:
         block = Block(tree, "A condition", ("all", "any", "first", "not", "use"), self.faults)
         if len(tree.items) != 1:
-            block.fault("rules-condition", "A condition has exactly one of all, any, first, count, not, use, fact, entry, "
-                        "judge or compute.")  # fmt: skip
+            block.fault("rules-condition", "A condition has exactly one of all, any, first, count, not, use, "
+                        "fact, entry, judge or compute.")  # fmt: skip
             return _NEVER
         key, value = tree.items[0]
         if key.text == "use":

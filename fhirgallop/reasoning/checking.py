@@ -78,8 +78,8 @@ def _refuse_circles(leads: Mapping[str, tuple[str, ...]], rules: Mapping[str, Ru
 def check_retuned(rule: Rule, tier: Tier, strength: Strength, line: int, faults: Faults) -> None:
     """A site may soften a rule; it may not make one interrupt, nor show an urgent one in its own words."""
     if tier is not rule.tier and (tier in (Tier.U, Tier.T1) or rule.tier is Tier.U):
-        faults.add(line, "rules-retune", f"{rule.id} cannot be retuned from {rule.tier} to {tier}; a rule may be "
-                   "made quieter, and an urgent one only silenced.")  # fmt: skip
+        faults.add(line, "rules-retune", f"{rule.id} cannot be retuned from {rule.tier} to {tier}; "
+                   "a rule may be made quieter, and an urgent one only silenced.")  # fmt: skip
     elif tier is not tier.at_most(CEILING[strength]) and tier is not Tier.U:
         faults.add(
             line, "rules-retune", f"{rule.id}: strength {strength} bears at most tier {CEILING[strength]}."

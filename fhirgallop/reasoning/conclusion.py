@@ -6,7 +6,7 @@ from dataclasses import dataclass
 from enum import StrEnum
 from typing import Any, Final
 
-from fhirgallop.reasoning.conditions import Atom
+from fhirgallop.reasoning.atoms import Atom
 from fhirgallop.reasoning.items import Ground, Item
 from fhirgallop.reasoning.rule import Rule
 from fhirgallop.reasoning.vocabulary import URGENT_PHRASE, Cutoff, Strength, Tier, kinds

@@ -14,7 +14,8 @@ from fhirgallop.reasoning.vocabulary import Cutoff, Family, Recheck, Window
 from fhirgallop.reasoning.yaml_tree import Items, Pairs, Text, Tree
 
 TOP_KEYS: Final = (
-    "cutoffs", "windows", "defaults", "conditions", "families", "rechecks", "rules", "likelihoods", "left-out",
+    "cutoffs", "windows", "defaults", "conditions", "families", "rechecks", "rules", "likelihoods",
+    "left-out",
 )  # fmt: skip
 EVERYTHING_ELSE: Final = "everything-else"
 SITE_KEYS: Final = ("silence", "retune", "choose")
@@ -23,9 +24,19 @@ SEEN: Final = ("excerpt", "memory", "practice", "definition")
 _FOREVER: Final = Window("permanent", None)
 
 
+@dataclass(frozen=True, slots=True)
+class Choice:
+    """A site's value for a cut-off, with its source where it is the site's own, and where it is written."""
+
+    value: str
+    source: str
+    file: str
+    line: int
+
+
 @dataclass(slots=True)
 class Vocabulary:
-    """The words defined so far; `defaults` maps an id's prefix to the window it has unless a rule says else."""
+    """The words defined so far; `defaults` maps an id's prefix to its window unless a rule says else."""
 
     cutoffs: dict[str, Cutoff] = field(default_factory=dict)
     windows: dict[str, Window] = field(default_factory=lambda: {"permanent": _FOREVER})
@@ -41,9 +52,7 @@ class Vocabulary:
         return self.windows.get(self.defaults.get(best, ""), _FOREVER)
 
 
-def read_vocabulary(
-    trees: Mapping[str, Tree], choices: Mapping[str, tuple[str, str]], faults: Faults
-) -> Vocabulary:
+def read_vocabulary(trees: Mapping[str, Tree], choices: Mapping[str, Choice], faults: Faults) -> Vocabulary:
     """All definitions of all files together.
 
     Args:
@@ -107,7 +116,7 @@ def _window(name: str, tree: Tree, faults: Faults) -> Window:
     return Window(name, length, drops, block.flag("same-encounter"), tuple(lengths))
 
 
-def _cutoff(name: str, tree: Tree, choice: tuple[str, str] | None, faults: Faults) -> Cutoff:
+def _cutoff(name: str, tree: Tree, choice: Choice | None, faults: Faults) -> Cutoff:
     block = Block(tree, f"Cut-off {name}", ("value", "source", "seen", "alternatives", "note"), faults)
     text, source = block.text("value", needed=True), block.text("source", needed=True)
     unit = written_unit(text)
@@ -125,12 +134,11 @@ def _cutoff(name: str, tree: Tree, choice: tuple[str, str] | None, faults: Fault
         else:
             others.append((other, why.text))
     if choice:
-        chosen = quantity(choice[0], unit)
-        source = choice[1] or next((why for other, why in others if other == chosen), "")
+        chosen = quantity(choice.value, unit)
+        source = choice.source or next((why for other, why in others if other == chosen), "")
         if isinstance(chosen, str) or not source:
-            faults.add(
-                0, "rules-choice", f"Cut-off {name}: choose one of its values, or give value and source."
-            )
+            text = f"Cut-off {name}: choose one of its values, or give value and source."
+            faults.add(choice.line, "rules-choice", text, source=choice.file)
         else:
             value = chosen
     rest = tuple((other, why) for other, why in others if other != value)
@@ -163,14 +171,16 @@ def _rechecks(block: Block, faults: Faults) -> list[Recheck]:
     return found
 
 
-def choices_of(tree: Tree, faults: Faults) -> dict[str, tuple[str, str]]:
+def choices_of(tree: Tree, faults: Faults) -> dict[str, Choice]:
     """The cut-offs a site file chooses: name -> value and, where it is its own value, source."""
     block = Block(tree, "A site file", (*TOP_KEYS, *SITE_KEYS), faults)
     found = {}
     for key, value in block.pairs("choose"):
         if isinstance(value, Pairs):
             own = Block(value, f"Choice {key.text}", ("value", "source"), faults)
-            found[key.text] = (own.text("value", needed=True), own.text("source", needed=True))
+            found[key.text] = Choice(
+                own.text("value", needed=True), own.text("source", needed=True), faults.source, key.line
+            )
         elif isinstance(value, Text):
-            found[key.text] = (value.text, "")
+            found[key.text] = Choice(value.text, "", faults.source, key.line)
     return found

@@ -24,7 +24,8 @@ if TYPE_CHECKING:
     from fhirgallop.reasoning.rulebook import Rulebook
 
 _KEYS: Final = (
-    "id", "finding", "label", "target", "population", "method", "present", "absent", "source", "seen", "caution",
+    "id", "finding", "label", "target", "population", "method", "present", "absent",
+    "source", "seen", "caution",
 )  # fmt: skip
 _METHODS: Final = ("auscultation", "phonocardiogram", "bedside", "laboratory", "ecg", "history")
 _NUMBER: Final = r"[0-9]{1,4}(?:\.[0-9]{1,3})?"

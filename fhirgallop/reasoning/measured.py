@@ -9,7 +9,8 @@ from decimal import Decimal
 from fhirgallop.exam.context import Source, State
 from fhirgallop.exam.entry import Measure
 from fhirgallop.haemodynamics import CLASSIFICATIONS, COMPUTATIONS, Grade, Refusal
-from fhirgallop.reasoning.conditions import Bound, Condition, Support, View
+from fhirgallop.reasoning.atoms import Bound
+from fhirgallop.reasoning.conditions import Condition, Support, View
 from fhirgallop.reasoning.items import Ground, Item, place
 from fhirgallop.reasoning.logic import Truth, all_of
 from fhirgallop.reasoning.vocabulary import Window
@@ -19,7 +20,7 @@ Value = Decimal | bool | str
 
 @dataclass(frozen=True, slots=True)
 class Given:
-    """One input: from a fact (its number, its answer, or present/absent), the subject's grade, or a constant."""
+    """One input: from a fact (number, answer, or present/absent), the subject's grade, or a constant."""
 
     name: str
     fact: str
@@ -84,7 +85,7 @@ def _inputs(given: tuple[Given, ...], view: View) -> tuple[dict[str, Value], Sup
 
 @dataclass(frozen=True, slots=True, eq=False)
 class Judged:
-    """A classification of haemodynamics that gives one of `answers`; the edition is its default when empty."""
+    """A classification of haemodynamics that gives one of `answers`; default edition when empty."""
 
     classification: str
     given: tuple[Given, ...]

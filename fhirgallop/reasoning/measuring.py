@@ -7,8 +7,9 @@ from typing import Final
 
 from fhirgallop.haemodynamics import CLASSIFICATIONS, COMPUTATIONS
 from fhirgallop.haemodynamics.tables import Input
+from fhirgallop.reasoning.atoms import Bound
 from fhirgallop.reasoning.block import Block
-from fhirgallop.reasoning.conditions import Any, Bound, Condition
+from fhirgallop.reasoning.conditions import Any, Condition
 from fhirgallop.reasoning.defining import Vocabulary
 from fhirgallop.reasoning.measured import Computed, Given, Judged, Value
 from fhirgallop.reasoning.vocabulary import Window, kinds

@@ -13,8 +13,9 @@ from dataclasses import dataclass
 from typing import Final
 
 from fhirgallop.exam.context import State
+from fhirgallop.reasoning.atoms import Atom
 from fhirgallop.reasoning.conclusion import Outcome
-from fhirgallop.reasoning.conditions import All, Any, Atom, Condition, Count, First, Not, View
+from fhirgallop.reasoning.conditions import All, Any, Condition, Count, First, Not, View
 from fhirgallop.reasoning.items import Ground, ItemTable
 from fhirgallop.reasoning.logic import Truth
 from fhirgallop.reasoning.rule import Rule

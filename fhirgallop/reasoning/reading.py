@@ -158,16 +158,16 @@ def _check(rule: Rule, block: Block, builder: Builder) -> None:
 def _check_tier(rule: Rule, block: Block) -> None:
     if rule.tier is Tier.U:
         if rule.relation is not Relation.SUGGESTS or rule.wording:
-            block.fault("rules-urgent", f"{block.what}: an urgent rule has the relation suggests and no wording, "
-                        "for it is shown as the fixed phrase only.")  # fmt: skip
+            block.fault("rules-urgent", f"{block.what}: an urgent rule has the relation suggests and "
+                        "no wording, for it is shown as the fixed phrase only.")  # fmt: skip
         for atom in rule.atoms():
             window = getattr(atom, "window", None)
             if window is not None and window.within is not None and not window.drops:
-                block.fault("rules-urgent", f"{block.what}: every part of an urgent combination needs a window "
-                            "outside of which it is unknown.")  # fmt: skip
+                block.fault("rules-urgent", f"{block.what}: every part of an urgent combination needs a "
+                            "window outside of which it is unknown.")  # fmt: skip
                 break
     elif rule.tier is not rule.tier.at_most(CEILING[rule.strength]):
-        block.fault("rules-tier", f"{block.what}: strength {rule.strength} bears at most tier {CEILING[rule.strength]}.",
+        block.fault("rules-tier", f"{block.what}: {rule.strength} bears at most {CEILING[rule.strength]}.",
                     line=block.line_of("tier"))  # fmt: skip
 
 

@@ -25,8 +25,8 @@ from fhirgallop.reasoning.rulebook import Rulebook, load
 from fhirgallop.reasoning.vocabulary import Relation, Tier
 
 NOTICE: Final = (
-    "Supports and does not replace clinical judgement. Local protocols come first. Not validated prospectively. "
-    "That nothing is shown is no reassurance. Bedside findings have poor observer agreement."
+    "Supports and does not replace clinical judgement. Local protocols come first. Not validated "
+    "prospectively. That nothing is shown is no reassurance. Bedside findings have poor observer agreement."
 )
 
 
@@ -123,9 +123,9 @@ def review(
         ValueError: the chart is known to be another patient's.
     """
     ours, theirs = exam.patient, context.patient
-    if theirs is not None and (ours.system, ours.is_fhir_id) == (theirs.system, theirs.is_fhir_id):
-        if ours.value != theirs.value:
-            raise ValueError("the chart belongs to another patient than the examination")
+    comparable = theirs is not None and (ours.system, ours.is_fhir_id) == (theirs.system, theirs.is_fhir_id)
+    if comparable and theirs != ours:
+        raise ValueError("the chart belongs to another patient than the examination")
     book = rules or load()
     table = collect(exam, context)
     concluded = conclude(book, table)

@@ -5,7 +5,8 @@ from __future__ import annotations
 from collections.abc import Iterator
 from dataclasses import dataclass
 
-from fhirgallop.reasoning.conditions import Atom, Condition
+from fhirgallop.reasoning.atoms import Atom
+from fhirgallop.reasoning.conditions import Condition
 from fhirgallop.reasoning.vocabulary import Relation, Strength, Tier
 
 

@@ -19,7 +19,7 @@ from fhirgallop.outcome import Issue, has_errors, ordered
 from fhirgallop.reasoning.block import Block
 from fhirgallop.reasoning.building import Builder
 from fhirgallop.reasoning.checking import check_references, check_retuned
-from fhirgallop.reasoning.defining import SITE_KEYS, TOP_KEYS, choices_of, read_vocabulary
+from fhirgallop.reasoning.defining import SITE_KEYS, TOP_KEYS, Choice, choices_of, read_vocabulary
 from fhirgallop.reasoning.faults import Faults
 from fhirgallop.reasoning.likelihood import LikelihoodRow, read_likelihoods
 from fhirgallop.reasoning.program import Program
@@ -99,7 +99,7 @@ def build(trees: Mapping[str, Tree], site: tuple[str, Tree] | None) -> tuple[Rul
     """The rulebook of some files, or None, with all issues."""
     faults = Faults()
     everything = dict(trees)
-    choices: dict[str, tuple[str, str]] = {}
+    choices: dict[str, Choice] = {}
     if site:
         faults.source = site[0]
         everything[site[0]] = site[1]
@@ -111,8 +111,12 @@ def build(trees: Mapping[str, Tree], site: tuple[str, Tree] | None) -> tuple[Rul
     ratios = _likelihoods(everything, builder, faults)
     if site:
         faults.source = site[0]
-        for name in choices.keys() - words.cutoffs.keys():
-            faults.add(0, "rules-choice", f"There is no cut-off {name}.{faults.near(name, words.cutoffs)}")
+        for name in sorted(choices.keys() - words.cutoffs.keys()):
+            faults.add(
+                choices[name].line,
+                "rules-choice",
+                f"There is no cut-off {name}.{faults.near(name, words.cutoffs)}",
+            )
         silenced, rules = _apply_site(site[1], rules, faults)
     else:
         silenced = frozenset()

@@ -28,7 +28,9 @@ CASES = _cases()
 
 
 @pytest.mark.parametrize(("prefix", "case"), CASES)
-def test_raises_exactly_what_its_row_says(prefix: str, case: dict[str, Any], made: Callable[..., Any]) -> None:
+def test_raises_exactly_what_its_row_says(
+    prefix: str, case: dict[str, Any], made: Callable[..., Any]
+) -> None:
     found = made(case.get("exam", []), case.get("chart", [])).review()
     raised: dict[str, list[str]] = {}
     for conclusion in found.raised:
@@ -41,14 +43,16 @@ def test_raises_exactly_what_its_row_says(prefix: str, case: dict[str, Any], mad
     assert set(case.get("open", [])) <= {c.rule.id for c in found.open}
 
 
-def test_interruptive_cards_by_case_set(record_property: Callable[[str, object], None], made: Callable[..., Any]) -> None:
+def test_interruptive_cards_by_case_set(
+    record_property: Callable[[str, object], None], made: Callable[..., Any]
+) -> None:
     """A table of interruptive cards by case set; a case interrupts at most once for one family."""
     table: Counter[tuple[str, int]] = Counter()
     for param in CASES:
         _prefix, case = param.values
-        interrupting = {c.rule.family or c.rule.id for c in made(case.get("exam", []), case.get("chart", [])).review().raised
-                        if c.tier.value in ("U", "T1")}  # fmt: skip
-        table[str(param.id).partition(":")[0], len(interrupting)] += 1
+        found = made(case.get("exam", []), case.get("chart", [])).review()
+        loud = {c.rule.family or c.rule.id for c in found.raised if c.tier.value in ("U", "T1")}
+        table[str(param.id).partition(":")[0], len(loud)] += 1
     lines = ["case set                       interruptive cards: cases"]
     for (name, cards), count in sorted(table.items()):
         lines.append(f"{name:<30} {cards:>18}: {count}")
