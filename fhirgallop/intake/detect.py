@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import io
 from collections.abc import Iterator, Mapping
+from dataclasses import replace
 from pathlib import Path
 from typing import Any, BinaryIO, Final, Literal
 
@@ -12,11 +13,12 @@ from fhirgallop.intake.hl7v2 import read_hl7
 from fhirgallop.intake.limits import DEFAULT, Limits
 from fhirgallop.intake.questionnaire import read_response
 from fhirgallop.intake.reading import Read, Reading, refused, remarked
+from fhirgallop.intake.record import LocalRecord
 from fhirgallop.intake.repeats import flag_repeats
-from fhirgallop.intake.rest import read_ndjson, records_of
+from fhirgallop.intake.rest import Convert, read_ndjson, records_of
 from fhirgallop.intake.table import read_csv
 from fhirgallop.intake.workbook import read_workbook
-from fhirgallop.outcome import has_errors
+from fhirgallop.outcome import Issue, has_errors
 
 Kind = Literal["json", "ndjson", "csv", "tsv", "workbook", "hl7"]
 
@@ -93,6 +95,24 @@ def open_records(
             stream.close()
 
 
+def _each(values: list[Any], name: str, limits: Limits, convert: Convert) -> Iterator[Read]:
+    """One read a place of a list, in order; what is refused names its place."""
+    for place, value in enumerate(values):
+        if isinstance(value, list):
+            text = "This place of the list holds another list; put each record into it directly."
+            fault = Issue("error", "structure", "json-not-a-record", text, source=name)
+            reading = Reading(issues=(fault,))
+        else:
+            reading = convert(value, name, limits)
+        for read in reading.stream(name):
+            if isinstance(read, LocalRecord):
+                yield read
+            else:
+                at = f"[{place}]"
+                named = (replace(i, field=f"{at}.{i.field}" if i.field else at) for i in read.issues)
+                yield replace(read, issues=tuple(named))
+
+
 def _read(
     kind: Kind,
     stream: BinaryIO,
@@ -112,6 +132,8 @@ def _read(
             value, issues = fhirjson.read(text, max_bytes=limits.record_bytes, source=name)
             if has_errors(issues):
                 return Reading(issues=tuple(issues)).stream(name)
+            if isinstance(value, list) and value:
+                return remarked(issues, _each(value, name, limits, convert), name)
             return remarked(issues, convert(value, name, limits).stream(name), name)
         case "ndjson":
             return read_ndjson(stream, source=name, limits=limits, convert=convert)

@@ -267,9 +267,8 @@ def _rows(text: _Text, delimiter: str) -> Iterator[tuple[int, list[Value] | Reje
         except _RefusedError as refusal:
             yield text.line, refusal.rejected
         except csv.Error:
-            words = (
-                "The row cannot be read; close each quotation mark, and double those inside a quoted cell."
-            )
+            lines = f" (lines {start} to {text.line})" if text.line > start else ""
+            words = f"The row{lines} cannot be read; close each quotation mark, double those in quoted cells."
             yield start, refused(text.source, start, "error", "csv-quoting", words)
         else:
             yield start, list(row)

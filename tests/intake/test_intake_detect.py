@@ -114,3 +114,10 @@ def test_lines_are_the_same_however_the_bytes_arrive(size):
     expected = [(1, b"one\r\n"), (2, b"two\r"), (3, b"three\n"), (4, b"\n"), (5, None), (6, b"last")]
     assert list(numbered(Drip(data), 8)) == expected
     assert list(numbered(io.BytesIO(data), 8)) == expected
+
+
+def test_a_long_line_costs_no_more_time_than_its_length():
+    """A minute-long run would show a scan that starts again at each byte."""
+    data = b"x" * 8_000_000
+    assert list(numbered(io.BytesIO(data + b"\nlast"), 10)) == [(1, None), (2, b"last")]
+    assert list(numbered(io.BytesIO(data), len(data))) == [(1, data)]
