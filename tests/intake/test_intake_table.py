@@ -107,7 +107,7 @@ def test_limits():
 
 
 def test_a_quotation_mark_never_closed_does_not_eat_memory():
-    reads = csv('a,b\n"' + "x,1\n" * 200_000)
+    reads = csv('a,b\n"' + "x,1\n" * 40_000)
     assert "lines 2 to " in reads[0].issues[0].text, "what was swallowed is named"
     assert {rule for read in reads for rule in (i.rule for i in read.issues)} <= {
         "csv-quoting",
