@@ -1,4 +1,4 @@
-"""The way of the data on one page: record -> exam -> coded, checked Bundle.
+"""The way of the data on one page: record -> exam -> coded Bundle, judged before it leaves.
 
 Pure: no I/O, and no clock but the one handed in. The service, the command line and worker processes all call
 `process`.
@@ -10,6 +10,7 @@ from dataclasses import dataclass
 from datetime import datetime
 from typing import Any
 
+from fhirgallop.conformance.validator import validate
 from fhirgallop.exam import catalogue, checks
 from fhirgallop.exam.exam import Exam
 from fhirgallop.intake.record import LocalRecord
@@ -75,7 +76,8 @@ def process(
     bundle = encode(
         exam, form=record.form, recorded=recorded, edition=edition, snomed=snomed, earlier=earlier
     )
-    return _result(exam, bundle, issues, mapped)
+    issues += validate(bundle, edition)
+    return _result(exam, None if has_errors(issues) else bundle, issues, mapped)
 
 
 def _result(
