@@ -3,11 +3,13 @@
 from __future__ import annotations
 
 import ipaddress
+import os
 from pathlib import Path
 from typing import Final, Literal, Self
 
 from pydantic import Field, ValidationError, model_validator
 from pydantic_settings import BaseSettings, SettingsConfigDict
+from pydantic_settings import SettingsError as SourceError
 
 from fhirgallop.errors import SettingsError
 
@@ -35,6 +37,20 @@ class Settings(BaseSettings):
         8 * 1024 * 1024, ge=1024, le=64 * 1024 * 1024, description="Largest request body in bytes."
     )
 
+    max_records: int = Field(
+        1000,
+        ge=1,
+        le=100_000,
+        description="Most examinations in one request; the command line has no such limit.",
+    )
+    max_depth: int = Field(
+        32, ge=4, le=200, description="Deepest nesting of objects and lists in a JSON record."
+    )
+    names: frozenset[str] = Field(
+        frozenset({"127.0.0.1", "::1", "localhost"}),
+        description='Host names it may be called by (a JSON list); add that of a proxy: ["gallop.example"].',
+    )
+
     @model_validator(mode="after")
     def _stays_at_home(self) -> Self:
         """Without authorisation nothing but this machine may reach patient data."""
@@ -59,8 +75,15 @@ def load(**given: object) -> Settings:
     Raises:
         SettingsError: names every setting that cannot be used, and why.
     """
+    known = {f"{PREFIX}{name}".upper() for name in Settings.model_fields}
+    if strange := sorted(
+        name for name in os.environ if name.upper().startswith(PREFIX) and name.upper() not in known
+    ):
+        raise SettingsError(f"{', '.join(strange)}: no such setting; there are {', '.join(sorted(known))}")
     try:
         return Settings(**{name: value for name, value in given.items() if value is not None})  # type: ignore[arg-type]
+    except SourceError as error:
+        raise SettingsError(str(error)) from None
     except ValidationError as error:
         faults = [
             f"{PREFIX}{'_'.join(map(str, fault['loc'])).upper() or 'HOST'}: {fault['msg']}"

@@ -191,14 +191,15 @@ class Tally:
             self.rules[issue.severity, issue.rule, issue.field] += 1
 
     def to_say(self) -> Iterator[Issue]:
-        """The newest errors, as long as they can still be read by a person."""
+        """The newest errors, and whatever is new in kind, as long as a person can still read it."""
         for issue in self.newest:
-            if issue.is_error:
+            first = self.rules[issue.severity, issue.rule, issue.field] == 1
+            if issue.is_error or first:
                 self._said += 1
                 if self._said <= _SHOWN:
                     yield issue
                 if self._said == _SHOWN:
-                    complain("... more errors are counted below and written with --issues FILE")
+                    complain("... more is counted below and written with --issues FILE")
 
     @property
     def all_coded(self) -> bool:

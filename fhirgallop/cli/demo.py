@@ -76,9 +76,13 @@ def _running(folder: Path) -> Iterator[str]:
         host="127.0.0.1", port=0, maps=assets.path("examples", "informatician"),
         database=f"sqlite:///{folder / 'demo.sqlite3'}",
     )  # fmt: skip
-    app = create_app(chosen)
     config = uvicorn.Config(
-        app, host=chosen.host, port=chosen.port, access_log=False, log_level="warning", server_header=False
+        create_app(chosen),
+        host=chosen.host,
+        port=chosen.port,
+        access_log=False,
+        log_level="warning",
+        server_header=False,
     )
     server = uvicorn.Server(config)
     thread = threading.Thread(target=server.run, daemon=True)
@@ -88,7 +92,6 @@ def _running(folder: Path) -> Iterator[str]:
     finally:
         server.should_exit = True
         thread.join(_PATIENCE)
-        app.state.engine.dispose()
 
 
 def _port(server: uvicorn.Server) -> int:

@@ -22,6 +22,17 @@ SAFE_HEADERS: Final = {
 }
 
 
+def told(meaning: str) -> dict[str, Any]:
+    """How the OpenAPI description says that a status comes with an OperationOutcome."""
+    return {"description": f"{meaning} An OperationOutcome says what and where.", "content": {FHIR_JSON: {}}}
+
+
+REFUSALS: Final[dict[int | str, dict[str, Any]]] = {
+    "4XX": told("The request cannot be served."),
+    "5XX": told("The service failed."),
+}
+
+
 class RefusalError(Exception):
     """A request that cannot be served: an HTTP status and the issues that say why."""
 

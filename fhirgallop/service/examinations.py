@@ -49,6 +49,7 @@ class Examinations:
 
         Raises:
             BusyError: other requests kept changing the same examination.
+            StorageError: the database failed; nothing of this record was kept.
         """
         now = self._clock()
         for _ in range(_TRIES):
@@ -56,8 +57,8 @@ class Examinations:
             if result.exam is None or result.bundle is None:
                 return Coded(result, None)
             exam = Identities(result.exam).of("examination")
-            meant = _fingerprint(result.exam, edition, snomed=snomed)
-            before = self._store.latest(exam)
+            meant = _fingerprint(result.exam)
+            before = self._store.latest(exam, edition, snomed=snomed)
             if before and before.record_hash == meant:
                 return Coded(result, before.bundle)
             if before:
@@ -68,13 +69,13 @@ class Examinations:
             text = fhirjson.write(result.bundle)
             version = before.version + 1 if before else 1
             row = Submission(
-                exam, version, template.name, template.version, edition, meant, instant(now), text
+                exam, edition, snomed, version, template.name, template.version, meant, instant(now), text
             )
             if self._store.add(row):
                 return Coded(result, text)
         raise BusyError
 
 
-def _fingerprint(exam: Exam, edition: Edition, *, snomed: bool) -> str:
+def _fingerprint(exam: Exam) -> str:
     """The same for the same meaning, whichever form it came in."""
-    return hashlib.sha256(repr((exam, edition, snomed)).encode("utf-8", "replace")).hexdigest()
+    return hashlib.sha256(repr(exam).encode("utf-8", "replace")).hexdigest()

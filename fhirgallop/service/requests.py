@@ -2,30 +2,49 @@
 
 from __future__ import annotations
 
+import asyncio
+import re
+from collections.abc import Iterable
 from typing import Final, get_args
 
-from starlette.requests import Request
+from starlette.requests import ClientDisconnect, Request
 
 from fhirgallop.intake.detect import BY_CONTENT_TYPE
 from fhirgallop.observations.editions import Edition
 from fhirgallop.service.answers import FHIR_JSON, PLAIN_JSON, refusal
 
 _ANY: Final = ("*/*", "application/*")
+_PATIENCE: Final = 60.0  # seconds for a whole body
+_QUALITY: Final = re.compile(r"q=(0(?:\.\d{0,3})?|1(?:\.0{0,3})?)")  # RFC 9110, 12.4.2
 
 
 async def body(request: Request, most: int) -> bytes:
-    """The body, read no further than `most` bytes."""
+    """The body, read no further than `most` bytes, and no longer than a minute."""
     announced = request.headers.get("content-length", "")
     if announced.isdigit() and int(announced) > most:
         raise _too_large(most)
     parts: list[bytes] = []
     size = 0
-    async for part in request.stream():
-        size += len(part)
-        if size > most:
-            raise _too_large(most)
-        parts.append(part)
+    try:
+        async with asyncio.timeout(_PATIENCE):
+            async for part in request.stream():
+                size += len(part)
+                if size > most:
+                    raise _too_large(most)
+                parts.append(part)
+    except TimeoutError:
+        text = "The body took too long to arrive; send it again, in smaller parts."
+        raise refusal(408, "timeout", "http-too-slow", text) from None
+    except ClientDisconnect:
+        raise refusal(400, "incomplete", "http-body-cut", "The body ended before its time.") from None
     return b"".join(parts)
+
+
+def only_known(request: Request, known: Iterable[str]) -> None:
+    """Refuses a request with a parameter that has no meaning here: a misspelt one may not pass in silence."""
+    if request.query_params.keys() - set(known):
+        text = f"A parameter of this request has no meaning here; known are {', '.join(known)}."
+        raise refusal(400, "not-supported", "http-unknown-parameter", text)
 
 
 def content_type(request: Request) -> str:
@@ -42,13 +61,15 @@ def content_type(request: Request) -> str:
 
 def wants_fhir(request: Request) -> bool:
     """True when the bare Bundle is asked for, False for the envelope around it."""
-    wanted = [
-        part.partition(";")[0].strip().lower() for part in request.headers.get("accept", "*/*").split(",")
-    ]
-    for one in wanted:
-        if one == FHIR_JSON:
+    wanted: list[tuple[float, str]] = []
+    for part in request.headers.get("accept", "*/*").lower().split(","):
+        kind, *parameters = (piece.strip() for piece in part.split(";"))
+        given = [found[1] for piece in parameters if (found := _QUALITY.fullmatch(piece))]
+        wanted.append((float(given[0]) if given else 1.0, kind))
+    for quality, kind in sorted(wanted, key=lambda one: -one[0]):
+        if quality and kind == FHIR_JSON:
             return True
-        if one == PLAIN_JSON or one in _ANY or not one:
+        if quality and (kind == PLAIN_JSON or kind in _ANY or not kind):
             return False
     text = f"Nothing acceptable can be answered; ask for {PLAIN_JSON} or {FHIR_JSON}."
     raise refusal(406, "not-supported", "http-accept", text)

@@ -2,37 +2,49 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from collections.abc import Iterator
+from contextlib import contextmanager
+from dataclasses import dataclass, fields
 
-from sqlalchemy import Connection, Engine, insert, select
-from sqlalchemy.exc import IntegrityError
+from sqlalchemy import Engine, insert, select
+from sqlalchemy.exc import IntegrityError, SQLAlchemyError
 
 from fhirgallop.storage.tables import submissions
 
 
+class StorageError(Exception):
+    """The database could not do what was asked and kept nothing of it; the text names the kind of failure."""
+
+
 @dataclass(frozen=True, slots=True)
 class Submission:
-    """One accepted version of an examination.
+    """One accepted version of an examination, in one way of writing it.
 
     Attributes:
         exam: identity of the examination (`urn:uuid:...`).
+        edition: FHIR edition of the Bundle.
+        snomed: whether the Bundle has SNOMED CT codings.
         version: from 1.
         map_name: template map it was read by.
         map_version: its version.
-        edition: FHIR edition of the Bundle.
         record_hash: SHA-256 of what the sender meant, to tell a repetition from a change.
         received: FHIR instant.
         bundle: the Bundle's bytes as answered.
     """
 
     exam: str
+    edition: str
+    snomed: bool
     version: int
     map_name: str
     map_version: str
-    edition: str
     record_hash: str
     received: str
     bundle: bytes
+
+
+_NAMES = tuple(field.name for field in fields(Submission))
+_COLUMNS = [submissions.c[name] for name in _NAMES]
 
 
 class Submissions:
@@ -41,24 +53,39 @@ class Submissions:
     def __init__(self, engine: Engine) -> None:
         self._engine = engine
 
-    def latest(self, exam: str) -> Submission | None:
-        """The newest version of an examination."""
-        with self._engine.connect() as connection:
-            return _latest(connection, exam)
+    def latest(self, exam: str, edition: str, *, snomed: bool) -> Submission | None:
+        """The newest version of an examination, as it is written in that edition.
+
+        Raises:
+            StorageError: the database failed.
+        """
+        same = (submissions.c.exam == exam, submissions.c.edition == edition, submissions.c.snomed == snomed)
+        query = select(*_COLUMNS).where(*same).order_by(submissions.c.version.desc()).limit(1)
+        with _told(), self._engine.connect() as connection:
+            row = connection.execute(query).one_or_none()
+        return Submission(*row) if row else None
 
     def add(self, submission: Submission) -> bool:
-        """Stores one version; False when another request stored that version first."""
-        values = {name: getattr(submission, name) for name in submission.__dataclass_fields__}
+        """Stores one version; False when another request stored that version first.
+
+        Raises:
+            StorageError: the database failed; nothing of the submission was kept.
+        """
+        values = {name: getattr(submission, name) for name in _NAMES}
         try:
-            with self._engine.begin() as connection:
+            with _told(), self._engine.begin() as connection:
                 connection.execute(insert(submissions).values(**values))
         except IntegrityError:
             return False
         return True
 
 
-def _latest(connection: Connection, exam: str) -> Submission | None:
-    wanted = [submissions.c[name] for name in Submission.__dataclass_fields__]
-    query = select(*wanted).where(submissions.c.exam == exam).order_by(submissions.c.version.desc()).limit(1)
-    row = connection.execute(query).one_or_none()
-    return Submission(**row._mapping) if row else None  # noqa: SLF001 - the documented way to a row's names
+@contextmanager
+def _told() -> Iterator[None]:
+    """A failure of the database as a StorageError, without the statement and what it held."""
+    try:
+        yield
+    except IntegrityError:
+        raise
+    except SQLAlchemyError as error:
+        raise StorageError(type(getattr(error, "orig", None) or error).__name__) from None

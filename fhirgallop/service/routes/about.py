@@ -17,7 +17,7 @@ router = APIRouter(tags=["service"])
 _STYLE: Final = resources.files("fhirgallop.service.pages").joinpath("style.css").read_text(encoding="utf-8")
 
 
-@router.get("/health", summary="Is the service up?")
+@router.get("/health", summary="Is the service up?", responses=answers.REFUSALS)
 def health() -> Response:
     """Says that the service answers, and its version."""
     return answers.json_answer({"status": "up", "version": VERSION})

@@ -7,27 +7,32 @@ from typing import Any
 from fastapi import APIRouter, Request
 from starlette.responses import Response
 
+from fhirgallop.exam import catalogue
 from fhirgallop.mapping.template_map import TemplateMap
-from fhirgallop.service import answers
+from fhirgallop.service import answers, requests
 
 router = APIRouter(tags=["template maps"])
 
 
-@router.get("/maps", summary="List the template maps")
+@router.get("/maps", summary="List the template maps", responses=answers.REFUSALS)
 def list_maps(request: Request) -> Response:
     """Name, version and title of every map."""
+    requests.only_known(request, ())
     shelf = request.app.state.shelf
     return answers.json_answer({"maps": [_head(template) for template in shelf.values()]})
 
 
-@router.get("/maps/{name}", summary="One template map", responses={404: {"description": "No such map."}})
+@router.get("/maps/{name}", summary="One template map", responses=answers.REFUSALS)
 def one_map(name: str, request: Request) -> Response:
-    """What one map reads, and what of the catalogue it can say."""
+    """Fields that the map reads, the findings it can give, and how many of the catalogue's these are."""
+    requests.only_known(request, ())
     template = request.app.state.shelf.get(name)
     if template is None:
         raise answers.refusal(404, "not-found", "http-unknown-map", "There is no template map of that name.")
+    findings = _findings(template)
+    coverage = {"findings": len(findings), "of": len(catalogue.load().findings)}
     return answers.json_answer(
-        {**_head(template), "fields": sorted(template.reads()), "findings": _findings(template)}
+        {**_head(template), "coverage": coverage, "fields": sorted(template.reads()), "findings": findings}
     )
 
 
