@@ -10,6 +10,8 @@ import csv
 from collections import Counter
 
 import pytest
+from fhir.resources.bundle import Bundle as BundleR5
+from fhir.resources.R4B.bundle import Bundle as BundleR4B
 
 from fhirgallop.codes import fhirjson
 from fhirgallop.intake.detect import open_records
@@ -122,3 +124,14 @@ def test_two_runs_give_the_same_bytes(results, table, root, moment):
 def test_identities_are_unique_over_the_table(results):
     urls = Counter(e["fullUrl"] for r in results for e in r.bundle["entry"])
     assert max(urls.values()) == 1
+
+
+@pytest.mark.parametrize("edition", ["R4B", "R5"])
+def test_the_model_library_accepts_the_bundles(table, root, moment, edition):
+    """Every tenth examination, and all that have a murmur in diastole."""
+    model = {"R4B": BundleR4B, "R5": BundleR5}[edition]
+    template = load_map(root / "examples" / "informatician" / "circor-2022.yaml")
+    for number, record in enumerate(open_records(table)):
+        if number % 10 == 0 or record.fields["Diastolic murmur timing"].values != ("nan",):
+            result = process(record, template, recorded=moment, edition=edition)
+            model.model_validate_json(fhirjson.write(result.bundle))
