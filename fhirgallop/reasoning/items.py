@@ -16,9 +16,9 @@ from fhirgallop.reasoning.vocabulary import Window, ancestors, kinds
 _STATES: Mapping[Presence, State] = {Presence.PRESENT: State.PRESENT, Presence.ABSENT: State.ABSENT}
 
 
-@dataclass(frozen=True, slots=True)
+@dataclass(frozen=True, slots=True, eq=False)
 class Item:
-    """One entry or fact.
+    """One entry or fact; there is one object of each in a table, so identity is equality.
 
     Attributes:
         key: what it says and where, as text: the same for the same content, whatever the order.

@@ -10,7 +10,7 @@ from __future__ import annotations
 
 from collections.abc import Callable, Iterable, Mapping
 from dataclasses import dataclass
-from typing import Final
+from typing import Final, NamedTuple
 
 from fhirgallop.exam.context import State
 from fhirgallop.reasoning.atoms import Atom
@@ -66,12 +66,12 @@ class Group:
     """The rules of one finding that share their subject, and the bits they look at."""
 
     subject: Atom
+    plain: bool
     steps: tuple[Step, ...]
     needs: int
 
 
-@dataclass(frozen=True, slots=True)
-class Saying:
+class Saying(NamedTuple):
     """A rule with something to say about one subject."""
 
     rule: Rule
@@ -95,7 +95,7 @@ class Program:
             steps.append(step)
             groups[id(rule.subject)] = (subject, steps, so_far | needs)
         self.groups: Mapping[str, tuple[Group, ...]] = {
-            finding: tuple(Group(s, tuple(steps), needs) for s, steps, needs in groups.values())
+            finding: tuple(Group(s, s.plain, tuple(steps), needs) for s, steps, needs in groups.values())
             for finding, groups in grouped.items()
         }
 
@@ -160,13 +160,18 @@ class Program:
                 needs |= group.needs
         yes, no = self._known(needs, view.table, view)
         said: list[Saying] = []
+        by_id = view.table.by_id
         for finding in recorded:
+            items = by_id[finding]
+            # By far the most frequent: one entry of today, of a rule that asks whether it is present.
+            only_absent = len(items) == 1 and items[0].of_exam and items[0].state is not _PRESENT
             for group in groups[finding]:
+                if only_absent and group.plain:
+                    continue
                 speaking = _speaking(group.steps, yes, no)
                 if speaking:
-                    subjects = subjects_of(group.subject, view)
-                    if subjects:
-                        _say(speaking, subjects, said)
+                    for truth, grounds in subjects_of(group.subject, view):
+                        _say(speaking, truth, grounds, said)
         return said
 
     def _known(self, needs: int, table: ItemTable, view: View) -> tuple[int, int]:
@@ -232,27 +237,20 @@ def _unknown(_yes: int, _no: int) -> int:
 
 
 def _say(
-    speaking: list[tuple[Step, bool, Outcome]],
-    subjects: list[tuple[Truth, tuple[Ground, ...]]],
-    said: list[Saying],
+    speaking: list[tuple[Step, bool, Outcome]], truth: Truth, grounds: tuple[Ground, ...], said: list[Saying]
 ) -> None:
     for step, applies, outcome in speaking:
-        for truth, grounds in subjects:
-            if (applies and truth is _TRUE) or not step.exact:
-                said.append(Saying(step.rule, truth, grounds, outcome))
-            elif outcome in _WHILE_UNKNOWN or step.rule.tier is Tier.U:
-                said.append(Saying(step.rule, truth, grounds, _WHILE_UNKNOWN.get(outcome, Outcome.OPEN)))
+        if (applies and truth is _TRUE) or not step.exact:
+            said.append(Saying(step.rule, truth, grounds, outcome))
+        elif outcome in _WHILE_UNKNOWN or step.rule.tier is Tier.U:
+            said.append(Saying(step.rule, truth, grounds, _WHILE_UNKNOWN.get(outcome, Outcome.OPEN)))
 
 
 def subjects_of(subject: Atom, view: View) -> list[tuple[Truth, tuple[Ground, ...]]]:
     """What a rule is about: each entry of the examination by itself, else what the chart says as one."""
     items = view.table.by_id[subject.fact]
-    if len(items) == 1 and items[0].of_exam and not subject.sources:
-        # By far the most frequent: one entry of today.
-        if subject.plain and items[0].state is _PRESENT:
-            return [(_TRUE, (Ground(items[0]),))]
-        truth = subject.test(items[0])
-        return [] if truth is None or truth is Truth.FALSE else [(truth, (Ground(items[0]),))]
+    if len(items) == 1 and items[0].of_exam and subject.plain:
+        return [(_TRUE, (Ground(items[0]),))] if items[0].state is _PRESENT else []
     found: list[tuple[Truth, tuple[Ground, ...]]] = []
     doubtful: Ground | None = None
     for ground in subject.grounds(view):
