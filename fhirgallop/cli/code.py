@@ -63,7 +63,7 @@ def command(  # noqa: PLR0913, PLR0917 - one argument an option
     console = people()
     with ExitStack() as stack:
         sink = Sink(stack.enter_context(whole_file(out)) if out else sys.stdout.buffer, out)
-        trail = stack.enter_context(whole_file(issues)) if issues else None
+        trail = stack.enter_context(whole_file(issues, may_be_empty=True)) if issues else None
         for read in _with_progress(_all(records), console):
             if isinstance(read, LocalRecord):
                 result = api.process(
@@ -82,6 +82,8 @@ def command(  # noqa: PLR0913, PLR0917 - one argument an option
             complain("--amends goes with exactly one examination")
             raise typer.Exit(Exit.USAGE)
         sink.close()
+    if not tally.count:
+        complain("there is no examination in what was given; name record files, or folders that hold some")
     tally.print(console)
     raise typer.Exit(Exit.WELL if tally.all_coded else Exit.REFUSED)
 

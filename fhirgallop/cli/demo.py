@@ -27,7 +27,10 @@ _WIDTH: Final = 132
 def command(
     once: Annotated[bool, typer.Option("--once", help="End after the demonstration.")] = False,
 ) -> None:
-    """Start the service here with an embedded database, send it an examination, show the answer."""
+    """Start the service here with an embedded database, send it an examination, show the answer.
+
+    Exit codes: 0 shown; 1 the service refused the examination; 4 the service did not start.
+    """
     import httpx  # noqa: PLC0415 - heavy together; --help stays quick
     from rich.console import Console  # noqa: PLC0415
 

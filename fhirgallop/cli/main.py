@@ -2,7 +2,9 @@
 
 from __future__ import annotations
 
+import signal
 import sys
+from types import FrameType
 from typing import Annotated
 
 import typer
@@ -42,8 +44,14 @@ def _root(
     """See the help text of the application."""
 
 
+def _ended(_number: int, _frame: FrameType | None) -> None:
+    """Leaves by the ordinary way, so that what is half-written is cleared away."""
+    sys.exit(Exit.ENDED)
+
+
 def main() -> None:
     """Entry point: runs the command and turns an operator's mistake into a sentence and an exit code."""
+    signal.signal(signal.SIGTERM, _ended)
     try:
         app()
     except MapError as error:
@@ -57,5 +65,6 @@ def main() -> None:
         complain(str(error))
         sys.exit(Exit.UNUSABLE)
     except OSError as error:
-        complain(f"{error.filename or 'a file'}: {error.strerror or type(error).__name__}")
+        said = error.strerror or type(error).__name__
+        complain(f"{error.filename or 'a file'}: {said}; check its name, its place and your rights")
         sys.exit(Exit.UNUSABLE)

@@ -84,7 +84,7 @@ def _print(coverage: Coverage, refused: int, unreadable: int) -> None:
             values.add_row(value.field, value.value, f"{times:,}")
         console.print(values)
     for issue in coverage.issues():
-        console.print(str(issue), markup=False)
+        console.print(str(issue), markup=False, soft_wrap=True)
 
 
 @app.command("schema")

@@ -7,6 +7,8 @@ from typing import Annotated
 
 import typer
 
+from fhirgallop.cli.shared import Exit, complain
+
 
 def command(
     host: Annotated[str | None, typer.Option(help="Address to listen on (this machine only).")] = None,
@@ -14,7 +16,10 @@ def command(
     maps: Annotated[Path | None, typer.Option(help="Folder with template maps.")] = None,
     database: Annotated[str | None, typer.Option(help="Database address.")] = None,
 ) -> None:
-    """Start the service. Settings come from FHIRGALLOP_... variables; options go before them."""
+    """Start the service. Settings come from FHIRGALLOP_... variables; options go before them.
+
+    Exit codes: 0 ended when asked to; 3 a setting or a map has faults; 4 the address could not be used.
+    """
     import logging  # noqa: PLC0415 - heavy together; --help stays quick
 
     import uvicorn  # noqa: PLC0415
@@ -24,7 +29,14 @@ def command(
 
     chosen = settings.load(host=host, port=port, maps=maps, database=database)
     logging.basicConfig(level=logging.INFO, format="%(asctime)s %(levelname)s %(name)s %(message)s")
-    uvicorn.run(
-        create_app(chosen), host=chosen.host, port=chosen.port, access_log=False, server_header=False,
-        log_config=None,
-    )  # fmt: skip
+    app = create_app(chosen)
+    try:
+        uvicorn.run(
+            app, host=chosen.host, port=chosen.port, access_log=False, server_header=False, log_config=None
+        )
+    except KeyboardInterrupt:
+        return
+    except SystemExit as ended:  # what uvicorn says to an address that is taken, and what SIGTERM ends in
+        if ended.code != Exit.ENDED:
+            complain(f"port {chosen.port} of {chosen.host} cannot be used; name another with --port")
+            raise typer.Exit(Exit.UNUSABLE) from None

@@ -22,6 +22,7 @@ class Exit(IntEnum):
     USAGE = 2
     FAULTY = 3
     UNUSABLE = 4
+    ENDED = 143  # 128 and the number of SIGTERM, as shells say it
 
 
 class EditionName(StrEnum):
@@ -43,17 +44,32 @@ def complain(text: str) -> None:
 
 
 @contextmanager
-def whole_file(path: Path) -> Iterator[IO[bytes]]:
-    """A file to write that appears at `path` when the block ends well, and not at all otherwise."""
-    handle, name = tempfile.mkstemp(prefix=f".{path.name}.", dir=path.parent)
+def whole_file(path: Path, *, may_be_empty: bool = False) -> Iterator[IO[bytes]]:
+    """A file to write that appears at `path` when the block ends well, and not at all otherwise.
+
+    Nothing appears either where nothing was written, unless the file `may_be_empty`.
+    """
+    with _named(path):
+        handle, name = tempfile.mkstemp(prefix=f".{path.name}.", dir=path.parent)
     temporary = Path(name)
     try:
         with os.fdopen(handle, "wb") as file:
             yield file
             file.flush()
+            size = file.tell()
             os.fsync(file.fileno())
-        temporary.chmod(0o640)
-        temporary.replace(path)
-    except BaseException:
+        if size or may_be_empty:
+            temporary.chmod(0o640)
+            with _named(path):
+                temporary.replace(path)
+    finally:
         temporary.unlink(missing_ok=True)
-        raise
+
+
+@contextmanager
+def _named(path: Path) -> Iterator[None]:
+    """An error of the file system under the name that the operator gave."""
+    try:
+        yield
+    except OSError as error:
+        raise OSError(error.errno, error.strerror, str(path)) from None

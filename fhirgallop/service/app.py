@@ -41,6 +41,7 @@ def create_app(settings: Settings, clock: Callable[[], datetime] = now) -> FastA
     Raises:
         SettingsError: maps or database cannot be used; the message says why.
     """
+    shelf = load_shelf(settings.maps)  # before the database: what cannot start leaves nothing behind
     engine = open_database(settings.database)
 
     @asynccontextmanager
@@ -57,7 +58,7 @@ def create_app(settings: Settings, clock: Callable[[], datetime] = now) -> FastA
         lifespan=lifespan,
     )
     app.state.settings = settings
-    app.state.shelf = load_shelf(settings.maps)
+    app.state.shelf = shelf
     app.state.examinations = Examinations(Submissions(engine), clock)
     for router in (exams.router, maps.router, about.router):
         app.include_router(router)
