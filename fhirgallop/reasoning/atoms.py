@@ -12,7 +12,7 @@ from typing import Final
 
 from fhirgallop.exam.context import Source, State
 from fhirgallop.exam.entry import Measure
-from fhirgallop.reasoning.conditions import Condition, Support, View
+from fhirgallop.reasoning.conditions import MAX_SUPPORTS, Condition, Support, View
 from fhirgallop.reasoning.items import Ground, Item, newest, place
 from fhirgallop.reasoning.logic import Truth, all_of
 from fhirgallop.reasoning.vocabulary import Cutoff, Window
@@ -198,29 +198,31 @@ class Atom:
             if said is None or said is Truth.UNKNOWN:
                 return Truth.UNKNOWN, ()
             return said, (frozenset(grounds),)
-        saying: dict[Truth, list[Ground]] = {Truth.TRUE: [], Truth.FALSE: [], Truth.UNKNOWN: []}
+        decided: list[tuple[Ground, Truth]] = []
+        doubtful_here = False
         for ground in grounds:
             said = self.test(ground.item, view.subject)
-            if said is not None:
-                saying[said].append(ground)
-        yes, no = saying[Truth.TRUE], saying[Truth.FALSE]
-        latest = list(newest(yes + no, self.slack))
-        yes = [g for g in latest if g in yes]
-        no = [g for g in latest if g in no]
-        if yes and no and not all(g.item.of_exam for g in latest):
-            view.disagreements[self.fact] = view.disagreements.get(self.fact, frozenset()) | {
-                g.item for g in latest
-            }
+            if said is Truth.UNKNOWN:
+                doubtful_here = doubtful_here or ground.item.of_exam
+            elif said is not None:
+                decided.append((ground, said))
+        latest = {id(ground) for ground in newest([ground for ground, _ in decided], self.slack)}
+        yes = [g for g, said in decided if said is Truth.TRUE and id(g) in latest]
+        no = [g for g, said in decided if said is Truth.FALSE and id(g) in latest]
+        if yes and no and not all(g.item.of_exam for g in (*yes, *no)):
+            self._note_disagreement(view, yes, no)
             return Truth.UNKNOWN, ()
         if yes:
-            return Truth.TRUE, tuple(frozenset((g,)) for g in yes)
-        if no and any(g.item.of_exam for g in saying[Truth.UNKNOWN]):
+            return Truth.TRUE, tuple(frozenset((g,)) for g in yes[:MAX_SUPPORTS])
+        if not no or doubtful_here:
             return Truth.UNKNOWN, ()
-        if no:
-            together = frozenset(g for g in no if g.item.of_exam)
-            alone = tuple(frozenset((g,)) for g in no if not g.item.of_exam)
-            return Truth.FALSE, ((together, *alone) if together else alone)
-        return Truth.UNKNOWN, ()
+        together = frozenset(g for g in no if g.item.of_exam)
+        alone = tuple(frozenset((g,)) for g in no[:MAX_SUPPORTS] if not g.item.of_exam)
+        return Truth.FALSE, ((together, *alone) if together else alone)
+
+    def _note_disagreement(self, view: View, yes: list[Ground], no: list[Ground]) -> None:
+        said = {g.item for g in (*yes[:MAX_SUPPORTS], *no[:MAX_SUPPORTS])}
+        view.disagreements[self.fact] = view.disagreements.get(self.fact, frozenset()) | said
 
     def _missing_axis(self, view: View) -> str:
         for ground in self.grounds(view):

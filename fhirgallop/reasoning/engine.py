@@ -85,7 +85,7 @@ def outcome_of(rule: Rule, subject: Truth, when: Truth, other: Truth) -> Outcome
     return Outcome.OPEN if rule.tier is Tier.U and other is not Truth.FALSE else None
 
 
-def _founded(rule: Rule, outcome: Outcome, saying: Saying, other: Truth, view: View) -> Conclusion | None:
+def _founded(rule: Rule, outcome: Outcome, saying: Saying, other: Truth, view: View) -> Conclusion:
     subject = tuple(frozenset((ground,)) for ground in saying.subject)
     parts = []
     if rule.when is not None:
@@ -99,7 +99,10 @@ def _founded(rule: Rule, outcome: Outcome, saying: Saying, other: Truth, view: V
     if lost:
         if tier is Tier.U:
             # An urgent combination needs every part present and timed within the encounter.
-            return None
+            doubtful = dict.fromkeys(g.item.id for g in _ordered(whole[:1]) if g.steps)
+            return Conclusion(
+                rule, Outcome.OPEN, rule.strength, Tier.T0, _ordered(subject), unknown=tuple(doubtful)
+            )
         tier = tier.at_most(CEILING[strength])
         if any(ground.stale for ground in whole[0]):
             tier = tier.at_most(Tier.T2)

@@ -13,7 +13,7 @@ from fhirgallop.reasoning.atoms import Bound
 from fhirgallop.reasoning.conditions import Condition, Support, View
 from fhirgallop.reasoning.items import Ground, Item, place
 from fhirgallop.reasoning.logic import Truth, all_of
-from fhirgallop.reasoning.vocabulary import Window
+from fhirgallop.reasoning.vocabulary import Window, kinds
 
 Value = Decimal | bool | str
 
@@ -54,7 +54,7 @@ class Given:
             return item.measure.value if exact else None
         if item.answers:
             return item.answers[0] if len(item.answers) == 1 else None
-        return item.state is State.PRESENT
+        return item.state is State.PRESENT if kinds()[item.id].kind == "sign" else None
 
 
 def _age(ground: Ground) -> tuple[float, str]:

@@ -85,9 +85,15 @@ def _given(block: Block, inputs: dict[str, Input], words: Vocabulary) -> tuple[G
 
 def _check_unit(block: Block, line: int, entry: Input, fact: str) -> None:
     kind = kinds()[fact]
+    wanted = {"number": "quantity", "flag": "sign", "choice": "choice"}[entry.kind]
+    if kind.kind != wanted:
+        block.fault(
+            "rules-wrong-kind", f"{entry.name} is a {entry.kind}, {fact} is a {kind.kind}.", line=line
+        )
+        return
     same = entry.unit == kind.unit or {entry.unit, kind.unit} <= {"1", "{ratio}", "{score}", ""}
-    if entry.kind == "number" and (kind.kind != "quantity" or not same):
-        text = f"{entry.name} is in {entry.unit or '1'}, {fact} is {kind.unit or 'not a number'}."
+    if entry.kind == "number" and not same:
+        text = f"{entry.name} is in {entry.unit or '1'}, {fact} in {kind.unit}."
         block.fault("rules-unit", text, line=line)
 
 

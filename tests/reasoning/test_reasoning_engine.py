@@ -137,6 +137,18 @@ def test_sources_that_disagree_are_both_said_and_neither_used(made: Make) -> Non
     assert [[item.source.value for item in group] for group in found.disagreements] == [["ecg", "monitor"]]
 
 
+def test_ten_thousand_facts_of_one_id(made: Make) -> None:
+    many = [{**AF_ECG, "age": f"{n % 50} min"} for n in range(5000)]
+    other = {"id": "rhythm.diagnosis", "answer": "sinus-rhythm", "from": "monitor"}
+    many += [{**other, "age": f"{n % 50} min", "encounter": "e-1"} for n in range(5000)]
+    found = made([S4], many).review()
+    assert found.raised == ()
+    assert found.disagreements
+    found = made([S4], many[:5000]).review()
+    assert [c.rule.id for c in found.raised] == ["s4.in-atrial-fibrillation"]
+    assert [look.item.id for look in found.repair.looks] == ["heart-sound.s4"]
+
+
 def test_a_future_fact_and_a_number_in_another_unit_are_unusable(made: Make) -> None:
     chart = [
         {**AF_ECG, "time": "2027-01-01T10:00:00+01:00", "age": "0 h"},
@@ -213,6 +225,13 @@ rules:
     assert [c.text for c in found.urgent] == ["urgent clinical review"]
     assert "diagnosis" not in shown
     assert "84" in shown
+    # A machine-read part is not enough, but it is asked for.
+    doubtful = {**VEINS, "from": "monitor", "age": "1 h", "low-trust": True}
+    found = made([low], [doubtful]).review(rules=book)
+    assert found.urgent == ()
+    assert ("site.low-pressure-and-raised-veins", ("jvp.level",)) in [
+        (c.rule.id, c.unknown) for c in found.open
+    ]
     # One part unknown, or only said in the chart of yesterday: nothing is shown, but it is asked for.
     found = made([low], [{**VEINS, "from": "report", "age": "30 h"}]).review(rules=book)
     assert found.urgent == ()
