@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import ipaddress
+import json
 import os
 from pathlib import Path
 from typing import Final, Literal, Self
@@ -90,3 +91,13 @@ def load(**given: object) -> Settings:
             for fault in error.errors(include_input=False, include_url=False)
         ]
         raise SettingsError("; ".join(faults)) from None
+
+
+def table() -> str:
+    """Every setting as a table in Markdown, as it stands in the README."""
+    lines = ["| setting | default | meaning |", "|---|---|---|"]
+    for name, field in Settings.model_fields.items():
+        default = field.default
+        shown = json.dumps(sorted(default)) if isinstance(default, frozenset) else str(default)
+        lines.append(f"| `{PREFIX}{name.upper()}` | `{shown}` | {field.description} |")
+    return "\n".join(lines)

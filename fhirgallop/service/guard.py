@@ -43,16 +43,22 @@ def _misled(request: Request) -> Response | None:
     foreign page, or by a foreign name that points to this machine, may not.
     """
     host = request.headers.get("host", "")
-    if urlsplit(f"//{host}").hostname not in request.app.state.settings.names:
+    if _name(f"//{host}") not in request.app.state.settings.names:
         text = "The service is not known by this name; call it by one of those in its settings."
         return answers.outcome_answer(421, [Issue("error", "forbidden", "http-host", text)])
     origin = request.headers.get("origin")
-    if (origin is not None and urlsplit(origin).netloc != host) or (
-        request.headers.get("sec-fetch-site") in ("cross-site", "same-site")
-    ):
+    foreign = origin is not None and origin.partition("://")[2] != host
+    if foreign or request.headers.get("sec-fetch-site") in ("cross-site", "same-site"):
         text = "Pages of other sites may not use this service."
         return answers.outcome_answer(403, [Issue("error", "forbidden", "http-origin", text)])
     return None
+
+
+def _name(address: str) -> str | None:
+    try:
+        return urlsplit(address).hostname
+    except ValueError:
+        return None
 
 
 async def _answered(request: Request, call_next: Callable[[Request], Awaitable[Response]]) -> Response:
