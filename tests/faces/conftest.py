@@ -1,13 +1,10 @@
-"""A real server for the tests of both faces, the command line, and sound records in every form."""
+"""A real server for the tests of both faces, and sound records in every form."""
 
 from __future__ import annotations
 
 import json
 import logging
-import os
 import shutil
-import subprocess
-import sys
 import threading
 import time
 from collections.abc import Callable, Iterator, Mapping
@@ -19,20 +16,7 @@ import pytest
 import uvicorn
 
 from fhirgallop import settings
-from fhirgallop.cli.main import main
 from fhirgallop.service.app import create_app
-
-Run = Callable[..., subprocess.CompletedProcess[bytes]]
-
-
-@dataclass(frozen=True)
-class Done:
-    """What a call of the command line left behind."""
-
-    returncode: int
-    stdout: bytes
-    stderr: str
-
 
 # The same examination in every form; the cases change it.
 FIELDS: Mapping[str, object] = {
@@ -75,7 +59,7 @@ class _Lines(logging.Handler):
 def maps(tmp_path_factory: pytest.TempPathFactory, root: Path) -> Path:
     """A folder with the tests' map and those of the examples."""
     folder = tmp_path_factory.mktemp("maps")
-    shutil.copy(root / "tests/cases/faces/bedside.yaml", folder)
+    shutil.copy(root / "tests/cases/faces/maps/bedside.yaml", folder)
     for path in (root / "examples/informatician").glob("*.yaml"):
         shutil.copy(path, folder)
     return folder
@@ -105,36 +89,6 @@ def server(tmp_path: Path, maps: Path) -> Iterator[Server]:
         thread.join(30)
         root_log.removeHandler(handler)
         root_log.setLevel(level)
-
-
-@pytest.fixture
-def call(monkeypatch: pytest.MonkeyPatch, capsysbinary: pytest.CaptureFixture[bytes]) -> Callable[..., Done]:
-    """Calls the command line in this process, which is quicker."""
-
-    def start(*words: str | Path) -> Done:
-        monkeypatch.setattr(sys, "argv", ["fhirgallop", *map(str, words)])
-        with pytest.raises(SystemExit) as ended:
-            main()
-        captured = capsysbinary.readouterr()
-        return Done(int(ended.value.code or 0), captured.out, captured.err.decode())
-
-    return start
-
-
-@pytest.fixture(scope="session")
-def run() -> Run:
-    """Runs the command line in a process of its own, with standard output and error in pipes."""
-
-    def start(*words: str | Path, **env: str) -> subprocess.CompletedProcess[bytes]:
-        return subprocess.run(
-            [sys.executable, "-W", "error", "-m", "fhirgallop", *map(str, words)],
-            capture_output=True,
-            check=False,
-            timeout=120,
-            env={**os.environ, "NO_COLOR": "1", **env},
-        )
-
-    return start
 
 
 @pytest.fixture(scope="session")
