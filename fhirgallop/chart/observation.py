@@ -76,12 +76,14 @@ def read_observation(found: Found, reading: Reading) -> None:
     head = codes(observation.get("code"))
     components = tuple(elements(observation.get("component")))
     known_code = _read(Part(head, observation, components, found.place), frame, reading)
+    properties = tuple(c for c in components if _is_property(c, reading))
     for index, component in enumerate(components):
         place = f"{found.place}.component[{index}]"
         if modified(component):
             reading.log.add("warning", "not-supported", "chart-modifier", _MODIFIED, place)
         elif not _is_property(component, reading):
-            known_code |= _read(Part(codes(component.get("code")), component, (), place), frame, reading)
+            part = Part(codes(component.get("code")), component, properties, place)
+            known_code |= _read(part, frame, reading)
     if not known_code and len(reading.facts) == before:
         reading.unknown += 1
 
@@ -225,8 +227,9 @@ def _source(id_: str, part: Part, frame: Frame, reading: Reading) -> Source:
     return (
         reading.source("Observation", "method", frame.methods)
         or reading.source("Observation", "code", (*part.head, *part.value))
-        or reading.source("Observation", "id", prefix)
         or (reading.source("Observation", "own-category", categories) if frame.ours else None)
+        or (reading.source("Observation", "own-id", prefix) if frame.ours else None)
+        or reading.source("Observation", "id", prefix)
         or reading.source("Observation", "category", categories)
         or Source.OTHER
     )

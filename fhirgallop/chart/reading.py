@@ -92,7 +92,8 @@ class Reading:
         for axis in sorted(known.qualifiers):
             for code in (code for concept in concepts for code in concept):
                 value = self.tables.axis_values.get((axis, code))
-                if value is not None:
+                # what the finding itself fixes (heard by auscultation) is no property of this one
+                if value is not None and (axis, value) != ("method", known.method):
                     found[axis, value] = Qualifier(axis, value)
         return list(found.values())
 

@@ -9,7 +9,7 @@ from typing import Annotated
 
 import typer
 
-from fhirgallop.cli import code, demo, maps, serve, validate
+from fhirgallop.cli import code, demo, maps, review, rules, serve, validate
 from fhirgallop.cli.shared import Exit, complain
 from fhirgallop.errors import FhirgallopError, MapError, SettingsError
 from fhirgallop.version import VERSION
@@ -24,9 +24,11 @@ app = typer.Typer(
 )
 app.command("code")(code.command)
 app.command("validate")(validate.command)
+app.command("review")(review.command)
 app.command("demo")(demo.command)
 app.command("serve")(serve.command)
 app.add_typer(maps.app, name="map")
+app.add_typer(rules.app, name="rules")
 
 
 def _version(wanted: bool) -> None:

@@ -1,0 +1,1 @@
+"""From a review to the few lines a clinician sees: the alert policy, its memory, and the printed sheets."""

@@ -1,0 +1,142 @@
+"""The review as a sheet to read: first what is asked, then finding by finding what each needs and has."""
+
+from __future__ import annotations
+
+from collections import Counter
+from collections.abc import Iterable, Iterator
+from textwrap import wrap
+from typing import Final
+
+from fhirgallop.cards import words
+from fhirgallop.cards.card import Card
+from fhirgallop.cards.policy import Decision
+from fhirgallop.cards.safety import SAFETY_TEXTS
+from fhirgallop.exam.exam import Exam
+from fhirgallop.reasoning.conclusion import Conclusion, Outcome
+from fhirgallop.reasoning.review import Review
+from fhirgallop.reasoning.vocabulary import Tier
+
+WIDTH: Final = 96
+_HEADINGS: Final = {"urgent": "NOW", "interruptive": "ONE QUESTION", "advisory": "TO CONSIDER"}
+_OUTCOMES: Final = {
+    Outcome.MET: "has what it needs",
+    Outcome.UNMET: "needs, and the record says otherwise",
+    Outcome.CONFLICT: "does not usually go with",
+    Outcome.CONFIRMED: "is borne out by",
+    Outcome.MISSING: "often comes with, not found here",
+    Outcome.NOT_LOOKED_FOR: "often comes with, nobody looked for",
+    Outcome.EXPLAINS: "could be explained by",
+    Outcome.NOTE: "note",
+    Outcome.OPEN: "not recorded, would matter",
+}
+_ORDER: Final = tuple(_OUTCOMES)
+_UNKNOWN: Final = (Outcome.NOT_LOOKED_FOR, Outcome.OPEN)
+MAX_UNKNOWN: Final = 6
+
+
+def sheet(exam: Exam, review: Review, decision: Decision) -> str:
+    """The whole sheet as plain text."""
+    lines = [f"Review of the examination of {exam.time.start}, with rules {review.rules_version}", ""]
+    for card in decision.cards:
+        lines += [*_card(card), ""]
+    if not decision.cards:
+        lines += ["Nothing to raise. That is no reassurance; see the end of this sheet.", ""]
+    if decision.folded:
+        lines += ["FURTHER, FOLDED", *(f"  {card.title}" for card in decision.folded), ""]
+    if decision.ask:
+        lines += [*_filled(decision.ask.text, ""), ""]
+    lines += _findings(review)
+    lines += _block(
+        "LOOK AGAIN, CHEAPEST FIRST", (f"{words.said(k.item)}: {k.action}" for k in review.repair.looks)
+    )
+    lines += _block(
+        "CHANGED SINCE THE LAST EXAMINATION",
+        (
+            f"{words.said(c.now)}; before: {words.said(c.before)} [{words.origin(c.before)}]"
+            for c in review.changes
+        ),
+    )
+    lines += _block(
+        "SOURCES THAT DISAGREE (BOTH KEPT, NEITHER USED)",
+        ("; ".join(words.entry(item) for item in group) for group in review.disagreements),
+    )
+    lines += _block("COULD NOT BE USED", (words.entry(item) for item in review.unusable))
+    lines += _block("PLEASE NOTE", SAFETY_TEXTS)
+    return "\n".join(lines).rstrip() + "\n"
+
+
+def _card(card: Card) -> Iterator[str]:
+    yield f"{_HEADINGS[card.level]}: {card.title}"
+    if card.level != "urgent":
+        for number, section in enumerate(card.sections):
+            if number:
+                yield f"  Also: {section.title}"
+            for conclusion in section.conclusions:
+                yield from _filled(conclusion.text, "  ")
+            if section.question:
+                yield from _filled(section.question, "  ")
+    for item in card.entries:
+        yield from _filled(words.entry(item), "  - ")
+    for look in card.looks:
+        yield from _filled(f"Look again: {words.label(look.item.id)}: {look.action}", "  ")
+    for source in dict.fromkeys(_source(c) for c in card.conclusions if card.level != "urgent"):
+        yield from _filled(source, "  ")
+    yield f"  Answer: {' | '.join(answer.value.replace('-', ' ') for answer in card.answers)}"
+
+
+def _source(conclusion: Conclusion) -> str:
+    return f"Source: {conclusion.rule.source} ({conclusion.rule.seen}; {conclusion.rule.id})"
+
+
+def _findings(review: Review) -> list[str]:
+    """Every finding of today, with what each rule about it found; what a guard silenced is left out."""
+    groups = (
+        *review.prerequisites, *review.contradictions, *review.companions, *review.explanations,
+        *review.notes, *review.open,
+    )  # fmt: skip
+    by_subject: dict[str, dict[Conclusion, None]] = {}
+    for conclusion in groups:
+        silent = conclusion.silenced_by or conclusion.merged_into or conclusion.rule.tier is Tier.U
+        if conclusion.subject and not silent:
+            by_subject.setdefault(words.said(conclusion.subject[0].item), {})[conclusion] = None
+    if not by_subject:
+        return []
+    lines = ["FINDING BY FINDING"]
+    for subject in sorted(by_subject):
+        lines += _filled(subject, "  ")
+        ordered = sorted(by_subject[subject], key=lambda c: (_ORDER.index(c.outcome), c.rule.id))
+        for line in dict.fromkeys(_known(c) for c in ordered if c.outcome not in _UNKNOWN):
+            lines += _filled(line, "    ")
+        for outcome in _UNKNOWN:
+            lines += _unknown(outcome, [c for c in ordered if c.outcome is outcome])
+    return [*lines, ""]
+
+
+def _known(conclusion: Conclusion) -> str:
+    """What a rule found, and what it rests on."""
+    if conclusion.outcome is Outcome.NOTE:
+        return f"note: {conclusion.text}"
+    basis = "; ".join(words.ground(g) for g in conclusion.grounds)
+    return f"{_OUTCOMES[conclusion.outcome]}: {basis or conclusion.text}"
+
+
+def _unknown(outcome: Outcome, conclusions: Iterable[Conclusion]) -> list[str]:
+    """The data nobody recorded, named once, those that most rules ask for first."""
+    asked = Counter(words.label(id_) for c in conclusions for id_ in c.unknown)
+    if not asked:
+        return []
+    named = [label for label, _ in asked.most_common()]
+    more = f"; and {len(named) - MAX_UNKNOWN} more" if len(named) > MAX_UNKNOWN else ""
+    return _filled(f"{_OUTCOMES[outcome]}: {'; '.join(named[:MAX_UNKNOWN])}{more}", "    ")
+
+
+def _block(heading: str, texts: Iterable[str]) -> list[str]:
+    lines = [line for text in texts for line in _filled(text, "  - ")]
+    return [heading, *lines, ""] if lines else []
+
+
+def _filled(text: str, indent: str) -> list[str]:
+    """Wrapped to the width; later lines stand under the first word."""
+    return wrap(text, WIDTH, initial_indent=indent, subsequent_indent=" " * (len(indent) + 2)) or [
+        indent.rstrip()
+    ]
