@@ -114,6 +114,17 @@ def diastolic_above_systolic(exam: Exam, _catalogue: Catalogue) -> Iterator[Issu
             yield _issue("error", "exam-diastolic-above-systolic", text, pair, entry, code="value")
 
 
+def vital_sign_without_its_number(exam: Exam, catalogue: Catalogue) -> Iterator[Issue]:
+    """A range, or a bare present or absent, where the core vital-sign profile takes one number."""
+    for entry in exam.entries:
+        definition, measure = catalogue.findings[entry.finding], entry.measure
+        if definition.category != "vital-signs" or definition.kind != "quantity":
+            continue
+        if measure.high is not None if measure else entry.presence.looked_for:
+            text = f"{definition.label} is a vital sign: enter one number, or say that it was not examined."
+            yield _issue("error", "exam-vital-sign-number", text, entry, code="value")
+
+
 def implausible_value(exam: Exam, catalogue: Catalogue) -> Iterator[Issue]:
     """A number outside what is plausible: flagged, and kept as it was entered."""
     for entry in exam.entries:
@@ -143,6 +154,7 @@ CLAUSES: Final[tuple[Callable[[Exam, Catalogue], Iterator[Issue]], ...]] = (
     grade_out_of_range,
     qualifier_does_not_fit,
     diastolic_above_systolic,
+    vital_sign_without_its_number,
     implausible_value,
 )
 

@@ -34,6 +34,7 @@ _PROFILE_OF_KIND: Final = {
 _METHOD_AXIS: Final = "method"
 SITE_AXIS: Final = "site"
 _MURMUR: Final = "murmur"
+_BMI: Final = "vital.bmi"
 _PRESENCE_AXIS: Final = "presence"
 
 
@@ -154,6 +155,9 @@ def _true_when_not_present(definition: FindingDefinition) -> tuple[Coding, ...]:
     A broader code holds of a present sign only: that there is no tumour plop does not mean that there are no
     abnormal heart sounds.
     """
+    if definition.id == _BMI:
+        # R4's core profile of this LOINC code demands a number, so one that was not taken must not carry it
+        return tuple(coding for coding in definition.codings if coding.system != systems.LOINC)
     if definition.kind != "sign":
         return definition.codings
     return tuple(coding for coding in definition.codings if coding.fit == "exact")

@@ -53,6 +53,11 @@ FAULTS = [
     ),
     ((pressure("pressure.systolic", 1280),), ["exam-implausible-value"]),
     ((pressure("pressure.systolic", 120), pressure("pressure.systolic", 130)), ["exam-entered-twice"]),
+    (
+        (Entry("vital.heart-rate", measure=Measure(Decimal(70), "/min", high=Decimal(80))),),
+        ["exam-vital-sign-number"],
+    ),
+    ((Entry("vital.heart-rate", Presence.ABSENT),), ["exam-vital-sign-number"]),
 ]
 
 
@@ -72,6 +77,7 @@ PLAIN = [
     (Entry("heart-sound.s4", Presence.ABSENT, qualifiers=(Qualifier("chamber", "left"),)),),
     (pressure("pressure.systolic", 120), pressure("pressure.diastolic", 80)),
     (pressure("pressure.systolic", 120, "left"), pressure("pressure.systolic", 130, "right")),
+    (Entry("vital.heart-rate", Presence.NOT_EXAMINED), Entry("rhythm.pulse-deficit", Presence.ABSENT)),
     (Entry("murmur.systolic", instance="1"), Entry("murmur.systolic", Presence.ABSENT, instance="2")),
 ]
 

@@ -50,6 +50,9 @@ def qualifiers(draw, definition):
 def entries(draw):
     definition = draw(st.sampled_from(FINDINGS))
     presence = draw(st.sampled_from(Presence))
+    vital = definition.category == "vital-signs" and definition.kind == "quantity"
+    if vital and presence.looked_for:
+        presence = Presence.PRESENT
     made = {
         "finding": definition.id,
         "presence": presence,
@@ -64,7 +67,8 @@ def entries(draw):
         made["qualifiers"] = draw(qualifiers(definition))
     if definition.kind == "quantity" and presence is Presence.PRESENT:
         value = draw(numbers)
-        high = draw(st.none() | st.just(value + 1))
+        # a vital sign takes one number; exam.checks refuses anything else before it is coded
+        high = None if vital else draw(st.none() | st.just(value + 1))
         comparator = draw(st.sampled_from(["", "<", ">="])) if high is None else ""
         made["measure"] = Measure(value, definition.unit, comparator, high)
     if definition.kind == "choice":
