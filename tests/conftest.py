@@ -15,16 +15,15 @@ import pytest
 from fhirgallop.cli.main import main
 
 ROOT = Path(__file__).resolve().parent.parent
-Run = Callable[..., subprocess.CompletedProcess[bytes]]
 
 
 @dataclass(frozen=True)
 class Done:
-    """What a call of the command line left behind."""
+    """What a call left behind."""
 
-    returncode: int
-    stdout: bytes
-    stderr: str
+    code: int
+    out: bytes
+    err: str
 
 
 @pytest.fixture(scope="session")
@@ -50,10 +49,11 @@ def moment() -> datetime:
 
 @pytest.fixture
 def call(monkeypatch: pytest.MonkeyPatch, capsysbinary: pytest.CaptureFixture[bytes]) -> Callable[..., Done]:
-    """Calls the command line in this process, which is quicker."""
+    """Calls the command line in this process, which is quicker than starting another."""
 
     def start(*words: str | Path) -> Done:
         monkeypatch.setattr(sys, "argv", ["fhirgallop", *map(str, words)])
+        monkeypatch.setattr("fhirgallop.cli.main.signal.signal", lambda *_: None)
         with pytest.raises(SystemExit) as ended:
             main()
         captured = capsysbinary.readouterr()
@@ -63,16 +63,17 @@ def call(monkeypatch: pytest.MonkeyPatch, capsysbinary: pytest.CaptureFixture[by
 
 
 @pytest.fixture(scope="session")
-def run() -> Run:
-    """Runs the command line in a process of its own, with standard output and error in pipes."""
+def run() -> Callable[..., subprocess.CompletedProcess[str]]:
+    """Runs the command line in a process of its own, with its output in pipes."""
 
-    def start(*words: str | Path, **env: str) -> subprocess.CompletedProcess[bytes]:
+    def start(*words: str | Path, **env: str) -> subprocess.CompletedProcess[str]:
         return subprocess.run(
             [sys.executable, "-W", "error", "-m", "fhirgallop", *map(str, words)],
             capture_output=True,
             check=False,
+            text=True,
             timeout=120,
-            env={**os.environ, "NO_COLOR": "1", **env},
+            env={**os.environ, **env},
         )
 
     return start

@@ -161,8 +161,8 @@ def test_on_the_command_line(case: Case, call: Any, sound: Any, maps: Path, tmp_
     record.write_bytes(_body(case, sound))
     out = tmp_path / "out.ndjson"
     done = call("code", record, "--map", maps / f"{case.get('map', 'bedside')}.yaml", "--out", out)
-    said = done.stderr
-    assert done.returncode == case["exit"], said
+    said = done.err
+    assert done.code == case["exit"], said
     assert "Traceback" not in said
     for rule in _rules(case, "cli"):
         (line, *_) = [line for line in said.splitlines() if f"[{rule}]" in line]
