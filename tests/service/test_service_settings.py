@@ -65,7 +65,7 @@ def test_the_readme_lists_every_setting(root: Path) -> None:
 def test_a_shelf_needs_a_folder_and_sound_maps(tmp_path: Path, root: Path) -> None:
     with pytest.raises(SettingsError, match="does not exist"):
         load_shelf(tmp_path / "nowhere")
-    bedside = root / "tests/cases/faces/bedside.yaml"
+    bedside = root / "tests/cases/faces/maps/bedside.yaml"
     for name in ("a.yaml", "b.yaml"):
         (tmp_path / name).write_bytes(bedside.read_bytes())
     with pytest.raises(SettingsError, match="two maps"):

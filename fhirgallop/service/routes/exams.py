@@ -77,7 +77,7 @@ class Wish:
 async def post_exams(
     request: Request,
     map: Annotated[str, Query(description="Name of a published template map.", max_length=200)],  # noqa: A002
-    edition: Annotated[str | None, Query(description="R4, R4B or R5; R4 unless set otherwise.")] = None,
+    edition: Annotated[Edition | None, Query(description="FHIR edition; R4 unless set otherwise.")] = None,
     snomed: Annotated[bool | None, Query(description="Write SNOMED CT codings.")] = None,
 ) -> Response:
     """Codes what the body holds."""
@@ -89,7 +89,7 @@ async def post_exams(
     settings: Settings = request.app.state.settings
     wish = Wish(
         template,
-        requests.edition(edition, settings.edition),
+        edition or settings.edition,
         settings.snomed if snomed is None else snomed,
         requests.wants_fhir(request),
     )
