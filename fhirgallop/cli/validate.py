@@ -14,7 +14,6 @@ import typer
 
 from fhirgallop.conformance.registry import registry
 from fhirgallop.conformance.validator import validate as judge
-from fhirgallop.errors import FhirgallopError
 from fhirgallop.outcome import Issue, operation_outcome, ordered
 
 MAX_LINE = 64 * 1024 * 1024
@@ -71,19 +70,15 @@ def command(
     """Check FHIR resources by the base specification and their profiles. Exit code 1: an error was found."""
     issues: list[Issue] = []
     count = faulty = 0
-    try:
-        for name, found in check(files, edition.value, package or (), profile or ()):
-            count += 1
-            faulty += any(issue.is_error for issue in found)
-            if output is Format.TEXT:
-                for issue in found:
-                    typer.echo(str(issue))
-            else:
-                issues.extend(found)
-            _progress(count, name)
-    except FhirgallopError as error:
-        typer.echo(str(error), err=True)
-        raise typer.Exit(2) from error
+    for name, found in check(files, edition.value, package or (), profile or ()):
+        count += 1
+        faulty += any(issue.is_error for issue in found)
+        if output is Format.TEXT:
+            for issue in found:
+                typer.echo(str(issue))
+        else:
+            issues.extend(found)
+        _progress(count, name)
     if output is Format.OUTCOME:
         typer.echo(orjson.dumps(operation_outcome(ordered(issues)), option=orjson.OPT_INDENT_2).decode())
     resources = "1 resource" if count == 1 else f"{count} resources"

@@ -15,7 +15,7 @@ from typing import Any
 
 from jsonschema_rs import Draft202012Validator, RegexOptions
 
-from fhirgallop.conformance import fast_profiles, invariants, structure, walk
+from fhirgallop.conformance import fast_profiles, invariants, references, structure, walk
 from fhirgallop.conformance.fast_formats import ID, UUID
 from fhirgallop.conformance.fast_residue import Check, codes_apart
 from fhirgallop.conformance.fast_schema import Form, Schema, SchemaBuilder
@@ -80,7 +80,7 @@ def _accepted(resource: dict[str, Any], kind: str, known: Registry) -> _Ready | 
         if ready is not None and _has_form(resource, ready):
             return ready
         # a vital-signs code asks for a profile more: it was refused above, so the others pay nothing
-        implied = tuple(profiles_for(resource)) if kind == "Observation" else ()
+        implied = tuple(dict.fromkeys(profiles_for(resource))) if kind == "Observation" else ()
         ready = _fitting(known, kind, declared, implied, keys) if implied else None
         return ready if ready is not None and _has_form(resource, ready) else None
     except (ValueError, TypeError, AttributeError, KeyError, OverflowError, RecursionError):
@@ -153,7 +153,7 @@ def _bundle(value: dict[str, Any], known: Registry, text: bytes | None) -> list[
 def _judged_well(value: dict[str, Any], text: bytes | None, places: list[int], known: Registry) -> bool:
     """Whether the walk finds nothing wrong with the resources of these entries."""
     root = Node(value if text is None else exact(text).value, "Bundle")
-    scope = walk.scope_of(root, known)
+    scope = references.scope_of(root, known.edition)
     issues: list[Issue] = []
     entries = [n for n in structure.open_node(root, known.edition, issues) if n.key == "entry"]
     for place in places:
@@ -195,7 +195,7 @@ def _targets_right(held: Mapping[str, Any], plan: Mapping[str, Any], urls: Mappi
 def _without_narrative(value: dict[str, Any], places: list[str], known: Registry) -> list[Issue] | None:
     """The issues of the missing narratives, each as the walk words it."""
     root = Node(value, str(value["resourceType"]))
-    scope = walk.scope_of(root, known)
+    scope = references.scope_of(root, known.edition)
     issues: list[Issue] = []
     nodes = [root]
     if root.type_name == "Bundle":

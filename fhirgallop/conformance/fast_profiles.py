@@ -37,7 +37,8 @@ def form(
     builder: SchemaBuilder, name: str, declared: tuple[str, ...] = (), implied: tuple[str, ...] = ()
 ) -> Form | None:
     """How a resource may look that declares profiles and is to meet others; None: no schema can say."""
-    if len(declared) > MAX_PROFILES or any(builder.registry.profile(url) is None for url in declared):
+    asked = dict.fromkeys((*declared, *implied))
+    if len(asked) > MAX_PROFILES or any(builder.registry.profile(url) is None for url in asked):
         return None
     schema = builder.resource(name)
     if schema is REFUSED:
@@ -46,7 +47,7 @@ def form(
     narrowing = _Narrowing(builder)
     targets = builder.targets(name)
     try:
-        for url in (*declared, *implied):
+        for url in asked:
             profile = read_profile(url, builder.registry)
             if profile is None or profile.type != name or definition is None:
                 return None

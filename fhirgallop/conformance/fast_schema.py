@@ -68,7 +68,7 @@ class SchemaBuilder:
         return schema
 
     def without_vital_signs(self, schema: Schema) -> None:
-        """Refuses vital-signs codes in Observation.code, where no profile for them is laid over the schema."""
+        """Refuses vital-signs codes in Observation.code, where no such profile is laid over the schema."""
         code = deepcopy(schema["properties"]["code"])
         code = self.copy("CodeableConcept") if code.keys() == {"$ref"} else code
         coding = self.copy("Coding")

@@ -21,6 +21,7 @@ from fhirgallop.conformance.fhirpath.model import model_of
 from fhirgallop.conformance.fhirpath.parser import parse
 from fhirgallop.conformance.fhirpath.presence import Answer, surely
 from fhirgallop.conformance.fhirpath.tokens import ExpressionError
+from fhirgallop.conformance.indexed_rules import verdict_by_index
 from fhirgallop.conformance.node import Node, Scope
 from fhirgallop.outcome import Issue
 
@@ -54,7 +55,7 @@ class Rule:
             verdict = self.expression.verdict(node, scope)
         except CannotJudge as reason:
             return _not_judged(node, self.invariant, str(reason))
-        return _broken(node, self.invariant) if verdict in ("false", "empty") else None
+        return broken(node, self.invariant) if verdict in ("false", "empty") else None
 
 
 def check(node: Node, scope: Scope) -> Iterator[Issue]:
@@ -66,7 +67,10 @@ def check(node: Node, scope: Scope) -> Iterator[Issue]:
     for rule in rules:
         if value is not None and rule.surely is not None and rule.surely(value):
             continue
-        issue = rule.check(node, scope)
+        verdict = verdict_by_index(rule.invariant.key, node, scope)
+        issue = rule.check(node, scope) if verdict is None else None
+        if verdict is False:
+            issue = broken(node, rule.invariant)
         if issue is not None:
             yield issue
 
@@ -102,7 +106,8 @@ def _rule(edition: Edition, type_name: str, invariant: Invariant) -> Rule:
         return Rule(invariant, None, None, str(error))
 
 
-def _broken(node: Node, invariant: Invariant) -> Issue:
+def broken(node: Node, invariant: Invariant) -> Issue:
+    """The issue of an invariant that does not hold at a node, however that was found."""
     human = " ".join(invariant.human.split()).rstrip(".") or f"Rule {invariant.key} does not hold"
     return Issue(
         invariant.severity,

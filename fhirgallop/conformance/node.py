@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Callable
+from collections.abc import Callable, Mapping
 from dataclasses import dataclass, field
 from typing import Any
 
@@ -87,6 +87,15 @@ class Node:
         return ".".join(reversed(steps))
 
 
+def contained_ids(container: Node) -> frozenset[str]:
+    """The ids of the resources contained in one."""
+    contained = container.value.get("contained")
+    found = (
+        r.get("id") for r in (contained if isinstance(contained, list) else ()) if isinstance(r, Mapping)
+    )
+    return frozenset(ident for ident in found if isinstance(ident, str))
+
+
 @dataclass(frozen=True, slots=True)
 class Scope:
     """What a rule may ask beside its node.
@@ -95,10 +104,12 @@ class Scope:
         edition: the definitions.
         root: the resource handed in.
         resolve: target of a reference written at a node, if it is contained or in the same Bundle.
+        contained_ids: the ids of the resources contained in one.
         memo: what rules have worked out once and look up again while this resource is judged.
     """
 
     edition: Edition
     root: Node
     resolve: Callable[[Node, str], Node | None]
+    contained_ids: Callable[[Node], frozenset[str]] = contained_ids
     memo: dict[Any, Any] = field(default_factory=dict, compare=False, repr=False)

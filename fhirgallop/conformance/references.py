@@ -12,7 +12,7 @@ from collections.abc import Callable, Iterator, Mapping
 from typing import Any
 
 from fhirgallop.conformance.editions import Edition
-from fhirgallop.conformance.node import Node
+from fhirgallop.conformance.node import Node, Scope, contained_ids
 from fhirgallop.conformance.wording import one_of
 from fhirgallop.outcome import Issue
 
@@ -28,8 +28,13 @@ Resolve = Callable[[Node, str], Node | None]
 
 def resolver(root: Node, edition: Edition) -> Resolve:
     """Looks references up among contained resources and the entries of the Bundle, built at first use."""
+    return _Index(root, edition).resolve
+
+
+def scope_of(root: Node, edition: Edition) -> Scope:
+    """What rules may ask about the resource handed in; its indices are built at first use."""
     index = _Index(root, edition)
-    return index.resolve
+    return Scope(edition, root, index.resolve, index.contained_ids)
 
 
 class _Index:
@@ -39,6 +44,7 @@ class _Index:
         self._root = root
         self._edition = edition
         self._contained: dict[int, dict[str, Node]] = {}
+        self._ids: dict[int, frozenset[str]] = {}
         self._entries: dict[int, dict[str, Node]] = {}
 
     def resolve(self, node: Node, reference: str) -> Node | None:
@@ -58,6 +64,12 @@ class _Index:
                 (around, around.parent) if around.type_name == "Bundle.entry" else (entry, around.parent)
             )
         return self._find(self._root, None, reference) if self._root.type_name == "Bundle" else None
+
+    def contained_ids(self, container: Node) -> frozenset[str]:
+        found = self._ids.get(id(container.value))
+        if found is None:
+            found = self._ids[id(container.value)] = contained_ids(container)
+        return found
 
     def _find(self, bundle: Node, entry: Node | None, reference: str) -> Node | None:
         entries = self._entries_of(bundle)

@@ -8,7 +8,7 @@ from dataclasses import replace
 from pathlib import Path
 from typing import Any
 
-from fhirgallop.conformance import fast, source, structure, walk
+from fhirgallop.conformance import fast, references, source, structure, walk
 from fhirgallop.conformance.editions import Edition
 from fhirgallop.conformance.node import Node
 from fhirgallop.conformance.registry import Registry, registry
@@ -64,7 +64,7 @@ def thorough(read: Source, known: Registry, profiles: Sequence[str] = ()) -> lis
         return ordered(issues)
     if text is not None:
         issues.extend(_repeated(text, root, known.edition))
-    issues.extend(walk.judge(root, known, walk.scope_of(root, known), profiles))
+    issues.extend(walk.judge(root, known, references.scope_of(root, known.edition), profiles))
     if text is not None:
         return ordered(_placed(issues, text, root))
     return ordered(issues)

@@ -27,11 +27,6 @@ from fhirgallop.conformance.registry import Registry
 from fhirgallop.outcome import Issue
 
 
-def scope_of(root: Node, known: Registry) -> Scope:
-    """What rules may ask about the resource handed in."""
-    return Scope(known.edition, root, references.resolver(root, known.edition))
-
-
 def judge(start: Node, known: Registry, scope: Scope, named: Sequence[str] = ()) -> Iterator[Issue]:
     """Issues of a node and all below it; `named` are profiles it must meet beside those it declares."""
     edition = known.edition

@@ -116,6 +116,17 @@ def test_a_bundle_of_very_many_entries_with_faults_in_all() -> None:
     assert "bdl-7" in {issue.rule for issue in issues}
 
 
+def test_very_many_contained_resources_that_refer_to_one_another() -> None:
+    count = 4_000
+    links = [[{"type": "seealso", "other": {"reference": f"#c{(i + 1) % count}"}}] for i in range(count)]
+    contained = [{"resourceType": "Patient", "id": f"c{i}", "link": link} for i, link in enumerate(links)]
+    patient = {"resourceType": "Patient", "contained": contained, "link": links[0]}
+    assert [issue.rule for issue in validate(patient)] == ["dom-6"]
+    for resource in contained:
+        resource["id"] += "x"
+    assert {"ref-1"} <= {issue.rule for issue in validate(patient)}
+
+
 def test_very_many_faults_in_one_line_of_text() -> None:
     text = b'{"resourceType":"Patient","name":[' + b",".join([b'{"x":1}'] * 20_000) + b"]}"
     issues = [i for i in validate(text) if i.rule == "unknown-element"]
