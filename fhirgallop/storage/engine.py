@@ -23,6 +23,8 @@ def open_database(address: str) -> Engine:
     try:
         url = make_url(address)
         sqlite = url.get_backend_name() == "sqlite"
+        if sqlite and url.database in (None, "", ":memory:"):
+            raise SettingsError("database names no file; what is kept in memory is gone with the program")
         engine = create_engine(url, connect_args={"timeout": _BUSY_SECONDS} if sqlite else {})
         if sqlite:
             event.listen(engine, "connect", _durable_sqlite)
@@ -34,6 +36,8 @@ def open_database(address: str) -> Engine:
                 found = SCHEMA_VERSION
     except ArgumentError:
         raise SettingsError("database is not an address such as sqlite:///fhirgallop.sqlite3") from None
+    except ModuleNotFoundError as error:
+        raise SettingsError(f"that kind of database needs {error.name}, which is not installed") from None
     except SQLAlchemyError as error:
         reason = type(getattr(error, "orig", None) or error).__name__
         raise SettingsError(

@@ -117,6 +117,8 @@ def test_the_page_shows_every_address_and_asks_no_other_host(client: Any) -> Non
         assert path in page
     assert re.findall(r'(?:src|href)="([^"]*)"', page) == ["/style.css", "/openapi.json"]
     assert "<script" not in page
+    assert "<code>Accept: application/fhir+json</code>" in page
+    assert "http://localhost:8470/exams?map=NAME" in page
     assert "url(" not in client.get("/style.css").text
 
 

@@ -160,6 +160,11 @@ def test_a_database_that_cannot_be_opened_is_told(tmp_path: Path) -> None:
     ):
         with pytest.raises(SettingsError, match="cannot be opened"):
             open_database(address)
+    for address in ("sqlite://", "sqlite:///:memory:"):
+        with pytest.raises(SettingsError, match="no file"):
+            open_database(address)
+    with pytest.raises(SettingsError, match="needs cx_Oracle, which is not installed"):
+        open_database("oracle+cx_oracle://host/name")
     with pytest.raises(SettingsError, match="not an address"):
         open_database("nonsense")
     with pytest.raises(SettingsError, match="database"):

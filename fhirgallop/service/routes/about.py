@@ -15,6 +15,7 @@ from fhirgallop.version import VERSION
 router = APIRouter(tags=["service"])
 
 _STYLE: Final = resources.files("fhirgallop.service.pages").joinpath("style.css").read_text(encoding="utf-8")
+_EXAMPLE: Final = "curl -H 'Content-Type: application/json' --data-binary @exam.json '{base}exams?map=NAME'"
 
 
 @router.get("/health", summary="Is the service up?", responses=answers.REFUSALS)
@@ -43,9 +44,16 @@ def page(request: Request) -> HTMLResponse:
         f'<!doctype html><html lang="en"><head><meta charset="utf-8"><title>{title}</title>'
         '<meta name="viewport" content="width=device-width"><link rel="stylesheet" href="/style.css"></head>'
         f"<body><main><h1>{title}</h1><p>{escape(described['info']['description'])}</p>"
-        '<p>The same as data: <a href="/openapi.json">openapi.json</a></p>'
+        '<p>The same as data: <a href="/openapi.json">openapi.json</a>. For example:</p>'
+        f"<pre><code>{escape(_EXAMPLE.format(base=request.base_url))}</code></pre>"
         f"{''.join(parts)}</main></body></html>"
     )
+
+
+def _worded(text: str) -> str:
+    """Text as HTML; what stands between backticks is code."""
+    parts = escape(text).split("`")
+    return "".join(f"<code>{part}</code>" if at % 2 else part for at, part in enumerate(parts))
 
 
 def _operation(path: str, method: str, operation: dict[str, Any]) -> str:
@@ -55,17 +63,17 @@ def _operation(path: str, method: str, operation: dict[str, Any]) -> str:
     ]
     kinds = list(operation.get("requestBody", {}).get("content", {}))
     cells = "".join(
-        f"<tr><th><code>{escape(name)}</code></th><td>{escape(text)}</td><td>{needed}</td></tr>"
+        f"<tr><th scope='row'><code>{escape(name)}</code></th><td>{escape(text)}</td><td>{needed}</td></tr>"
         for name, text, needed in rows
     )
     answered = "".join(
-        f"<tr><th><code>{escape(status)}</code></th><td>{escape(answer['description'])}</td></tr>"
+        f"<tr><th scope='row'><code>{escape(status)}</code></th><td>{escape(answer['description'])}</td></tr>"
         for status, answer in operation["responses"].items()
     )
     address = f"<code>{method.upper()} {escape(path)}</code>"
     return (
         f"<section><h2>{address} {escape(operation.get('summary', ''))}</h2>"
-        f"<p>{escape(operation.get('description', ''))}</p>"
+        f"<p>{_worded(operation.get('description', ''))}</p>"
         + (f"<table>{cells}</table>" if cells else "")
         + (f"<p>Bodies: {', '.join(f'<code>{escape(kind)}</code>' for kind in kinds)}</p>" if kinds else "")
         + f"<table>{answered}</table></section>"
