@@ -15,7 +15,7 @@ from fhirgallop.intake.rest import read_json
 from fhirgallop.mapping.reading import load_map
 from fhirgallop.mapping.template_map import TemplateMap
 from fhirgallop.observations.editions import Edition
-from fhirgallop.outcome import Issue
+from fhirgallop.outcome import Issue, has_errors
 from fhirgallop.pipeline import Result
 from fhirgallop.pipeline import process as run
 
@@ -87,7 +87,10 @@ def _one(
     if len(read) > 1:
         several = "These are several examinations; use read_records, or send them one by one."
         return None, (Issue("error", "structure", "record-several", several),)
-    if not read:
-        return None, (Issue("error", "required", "record-none", "There is no examination here; send one."),)
-    (one,) = read
-    return (one, ()) if isinstance(one, LocalRecord) else (None, one.issues)
+    for one in read:
+        if isinstance(one, LocalRecord):
+            return one, ()
+        if has_errors(one.issues):
+            return None, one.issues
+    none = Issue("error", "required", "record-none", "There is no examination here; send one.")
+    return None, (none, *(issue for one in read for issue in one.issues))

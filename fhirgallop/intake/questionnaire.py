@@ -6,6 +6,7 @@ but for R5 having several identifiers and the item types `coding` and `question`
 
 from __future__ import annotations
 
+import math
 from collections import Counter
 from collections.abc import Iterator, Mapping
 from decimal import Decimal
@@ -185,8 +186,8 @@ class _Reader:
         match key, value:
             case "valueBoolean", bool():
                 return value
-            case (("valueDecimal" | "valueInteger"), int() | Decimal()) if not isinstance(value, bool):
-                return Decimal(value)
+            case (("valueDecimal" | "valueInteger"), _) if (number := _number(value)) is not None:
+                return number
             case "valueQuantity", Mapping():
                 return self._quantity(value, link)
             case "valueCoding", Mapping():
@@ -204,10 +205,10 @@ class _Reader:
         return None
 
     def _quantity(self, value: Mapping[str, Any], link: str) -> Value | None:
-        number, comparator = value.get("value"), value.get("comparator", "")
+        number, comparator = _number(value.get("value")), value.get("comparator", "")
         ucum = value.get("system") == systems.UCUM and value.get("code")
         unit = ucum or value.get("unit") or value.get("code") or ""
-        if isinstance(number, bool) or not isinstance(number, (int, Decimal)):
+        if number is None:
             text = "A quantity has no number; send its value as a JSON number."
             self._note("error", "value", "form-answer-invalid", text, link)
             return None
@@ -215,7 +216,7 @@ class _Reader:
             text = "A quantity's unit is no text, or its comparator none of < <= >= >; correct it."
             self._note("error", "value", "form-answer-invalid", text, link)
             return None
-        return Amount(Decimal(number), unit, comparator)
+        return Amount(number, unit, comparator)
 
     def judge(self, response: Mapping[str, Any], form: Form) -> None:
         """What the form demands of the whole response."""
@@ -255,3 +256,10 @@ def _identifier(response: Mapping[str, Any]) -> str:
     value = first.get("value") if isinstance(first, Mapping) else None
     own = value or response.get("id")
     return own if isinstance(own, str) else ""
+
+
+def _number(value: object) -> Decimal | None:
+    """A number as it was written, None for what is none; a float comes from a program, not our reader."""
+    if isinstance(value, float):
+        return Decimal(repr(value)) if math.isfinite(value) else None
+    return Decimal(value) if isinstance(value, (int, Decimal)) and not isinstance(value, bool) else None
