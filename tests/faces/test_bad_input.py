@@ -4,7 +4,9 @@ from __future__ import annotations
 
 import io
 import json
+import sqlite3
 from collections.abc import Callable, Iterator, Mapping
+from contextlib import closing
 from pathlib import Path
 from typing import Any
 
@@ -133,7 +135,7 @@ def _outcomes(answer: Any) -> Iterator[dict[str, Any]]:
 
 
 @pytest.mark.parametrize("case", CASES, ids=lambda case: case["name"])
-def test_over_rest(case: Case, server: Any, sound: Any) -> None:
+def test_over_rest(case: Case, server: Any, sound: Any, tmp_path: Path) -> None:
     kind, _ = KINDS[case["form"]]
     answer = server.post(_body(case, sound), kind, map_=case.get("map", "bedside"))
     assert answer.status_code == case["status"], answer.text[:2000]
@@ -144,6 +146,7 @@ def test_over_rest(case: Case, server: Any, sound: Any) -> None:
     assert all(len(issue["details"]["text"]) > 20 for issue in issues if issue["details"].get("coding"))
     bundles = [one["bundle"] for one in told.get("results", [told]) if "bundle" in one]
     assert len(bundles) == case.get("coded", 0)
+    assert _stored(tmp_path / "faces.sqlite3") == len({json.dumps(bundle) for bundle in bundles})
     if answer.status_code >= 400:
         assert answer.headers["content-type"] == "application/fhir+json"
         assert told["resourceType"] == "OperationOutcome"
@@ -176,6 +179,13 @@ def test_on_the_command_line(case: Case, call: Any, sound: Any, maps: Path, tmp_
     for text in case.get("expect", ()):
         assert text in out.read_text("utf-8")
     _keeps_secrets(case, said)
+
+
+def _stored(database: Path) -> int:
+    """How many examinations lie in the store: as many as came out, a repeated one once."""
+    with closing(sqlite3.connect(database)) as other:
+        (count,) = other.execute("SELECT count(*) FROM submissions").fetchone()
+    return int(count)
 
 
 def _keeps_secrets(case: Case, text: str) -> None:
