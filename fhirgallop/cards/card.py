@@ -10,7 +10,7 @@ from typing import Any, Final, Literal
 from fhirgallop.cards import words
 from fhirgallop.cards.memory import Answer
 from fhirgallop.cards.safety import SHORT
-from fhirgallop.reasoning.conclusion import Conclusion
+from fhirgallop.reasoning.conclusion import Conclusion, cutoffs_of
 from fhirgallop.reasoning.conflicts import Look
 from fhirgallop.reasoning.items import Item
 from fhirgallop.reasoning.vocabulary import URGENT_PHRASE, Strength, Tier
@@ -94,6 +94,7 @@ def _section(section: Section) -> dict[str, Any]:
             {
                 "text": c.text,
                 "rule": c.rule.id,
+                "cutoffs": [words.cutoff(one) for one in cutoffs_of(c.rule)],
                 "strength": c.strength.value,
                 "source": c.rule.source,
                 "seen": c.rule.seen,

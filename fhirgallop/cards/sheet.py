@@ -12,7 +12,7 @@ from fhirgallop.cards.card import Card
 from fhirgallop.cards.policy import Decision
 from fhirgallop.cards.safety import SAFETY_TEXTS
 from fhirgallop.exam.exam import Exam
-from fhirgallop.reasoning.conclusion import Conclusion, Outcome
+from fhirgallop.reasoning.conclusion import Conclusion, Outcome, cutoffs_of
 from fhirgallop.reasoning.review import Review
 from fhirgallop.reasoning.vocabulary import Tier
 
@@ -79,8 +79,13 @@ def _card(card: Card) -> Iterator[str]:
         yield from _filled(words.entry(item), "  - ")
     for look in card.looks:
         yield from _filled(f"Look again: {words.label(look.item.id)}: {look.action}", "  ")
-    for source in dict.fromkeys(_source(c) for c in card.conclusions if card.level != "urgent"):
-        yield from _filled(source, "  ")
+    if card.level != "urgent":
+        cutoffs = dict.fromkeys(words.cutoff(one) for c in card.conclusions for one in cutoffs_of(c.rule))
+        for basis in (
+            *dict.fromkeys(map(_source, card.conclusions)),
+            *(f"Cut-off: {text}" for text in cutoffs),
+        ):
+            yield from _filled(basis, "  ")
     yield f"  Answer: {' | '.join(answer.value.replace('-', ' ') for answer in card.answers)}"
 
 
@@ -137,6 +142,5 @@ def _block(heading: str, texts: Iterable[str]) -> list[str]:
 
 def _filled(text: str, indent: str) -> list[str]:
     """Wrapped to the width; later lines stand under the first word."""
-    return wrap(text, WIDTH, initial_indent=indent, subsequent_indent=" " * (len(indent) + 2)) or [
-        indent.rstrip()
-    ]
+    later = " " * (len(indent) + 2)
+    return wrap(text, WIDTH, initial_indent=indent, subsequent_indent=later, break_on_hyphens=False)

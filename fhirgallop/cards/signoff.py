@@ -6,7 +6,7 @@ before it is shown to anybody.
 
 from __future__ import annotations
 
-from collections.abc import Iterable, Iterator
+from collections.abc import Iterator
 from typing import Final
 
 from fhirgallop.cards import words
@@ -53,7 +53,7 @@ def rule_text(rule: Rule, book: Rulebook) -> str:
 def _lines(book: Rulebook) -> Iterator[str]:
     yield "# Rules for local review before use"
     yield ""
-    yield f"Rules {book.version}. Sign each one before it is shown to anybody, or silence or soften it on site."
+    yield f"Rules {book.version}. Sign each before it is shown to anybody, or silence or soften it on site."
     yield ""
     yield from (f"- {text}" for text in SAFETY_TEXTS)
     for tier, title, meaning in _TIERS:
@@ -81,7 +81,7 @@ def _rule(rule: Rule, book: Rulebook) -> Iterator[str]:
         ("How it was seen", _SEEN[rule.seen]),
         ("Second reading", _READING.get(rule.reading, rule.reading)),
         ("Confidence", rule.confidence),
-        ("Cut-offs", "; ".join(_cutoffs(rule))),
+        ("Cut-offs", "; ".join(words.cutoff(cutoff) for cutoff in cutoffs_of(rule))),
         ("Note", rule.note),
         ("Rows of the evidence", ", ".join(rule.rows)),
     )
@@ -89,13 +89,6 @@ def _rule(rule: Rule, book: Rulebook) -> Iterator[str]:
     yield "|---|---|"
     yield from (f"| {name} | {_cell(text)} |" for name, text in rows if text)
     yield "| Signed, date | |"
-
-
-def _cutoffs(rule: Rule) -> Iterable[str]:
-    for cutoff in cutoffs_of(rule):
-        others = ", ".join(f"{value:f} ({source})" for value, source in cutoff.alternatives)
-        also = f"; also published: {others}" if others else ""
-        yield f"{cutoff.name} {cutoff.value:f} {cutoff.unit} ({cutoff.source}{also})"
 
 
 def _cell(text: str) -> str:

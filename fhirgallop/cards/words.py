@@ -10,7 +10,7 @@ from fhirgallop.exam import catalogue
 from fhirgallop.exam.context import Source, State
 from fhirgallop.exam.entry import Measure, Qualifier
 from fhirgallop.reasoning.items import Ground, Item
-from fhirgallop.reasoning.vocabulary import kinds
+from fhirgallop.reasoning.vocabulary import Cutoff, kinds
 
 _SOURCES: Final = {
     Source.EXAM: "this examination",
@@ -116,6 +116,13 @@ def entry(item: Item) -> str:
 def ground(one: Ground) -> str:
     """The same, with what weakens it in this use."""
     return f"{entry(one.item)}{' - out of date for this' if one.stale else ''}"
+
+
+def cutoff(used: Cutoff) -> str:
+    """A cut-off in force, with its source and the other published values."""
+    others = ", ".join(f"{value:f} ({source})" for value, source in used.alternatives)
+    also = f"; also published: {others}" if others else ""
+    return f"{used.name} {used.value:f} {used.unit} ({used.source}{also})"
 
 
 def age(seconds: int | None, *, clock: bool = True) -> str:
