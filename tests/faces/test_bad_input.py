@@ -169,7 +169,9 @@ def test_on_the_command_line(case: Case, call: Any, sound: Any, maps: Path, tmp_
     assert "Traceback" not in said
     for rule in _rules(case, "cli"):
         (line, *_) = [line for line in said.splitlines() if f"[{rule}]" in line]
-        assert "record" in line or "nowhere.yaml" in line, "the message names the file"
+        assert str(record) in line or "nowhere.yaml" in line, "the message names the file"
+        if len(changed := case.get("set", {})) == 1:
+            assert f"field {next(iter(changed))}" in line, "the message names the field"
     written = out.read_bytes().splitlines() if out.exists() else []
     assert len(written) == case.get("coded", 0)
     assert all(json.loads(line)["resourceType"] == "Bundle" for line in written)
