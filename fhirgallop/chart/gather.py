@@ -106,7 +106,7 @@ def _resource(value: Element, place: str, url: str, depth: int, log: Log) -> Ite
 
 
 def _bundle(bundle: Element, place: str, depth: int, log: Log) -> Iterator[Found]:
-    if bundle.get("type") in _REFUSED_BUNDLES:
+    if text(bundle.get("type")) in _REFUSED_BUNDLES:
         words = "A history holds outdated versions; send a collection or the answer of a search."
         log.add("error", "not-supported", "chart-bundle-type", words, place)
         return

@@ -116,7 +116,7 @@ _MODIFIED: Final = "An extension may turn the meaning of this round; nothing at 
 
 def _frame(found: Found, reading: Reading, stem: str) -> Frame | None:
     resource, log = found.resource, reading.log
-    status = resource.get("status")
+    status = text(resource.get("status"))
     if status in _WITHDRAWN:
         return None
     if status not in _DONE and status not in _EARLY:

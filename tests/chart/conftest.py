@@ -5,6 +5,7 @@ from __future__ import annotations
 from collections.abc import Callable
 from datetime import datetime
 from decimal import Decimal
+from types import SimpleNamespace
 from typing import Any
 
 import pytest
@@ -132,6 +133,12 @@ def chart_of() -> Callable[..., Chart]:
         return read_chart(bundle(resources), EXAM, NOW, **keywords)
 
     return made
+
+
+@pytest.fixture(scope="session")
+def short() -> SimpleNamespace:
+    """What the short forms are made of: `resource`, `patient`, `exam`, `now`."""
+    return SimpleNamespace(resource=resource, patient=PATIENT, exam=EXAM, now=NOW)
 
 
 @pytest.fixture(scope="session")
