@@ -26,6 +26,7 @@ RANGES = {
 _CONTROL = re.compile("[\x00-\x08\x0b\x0c\x0e-\x1f]")
 _BASE64 = re.compile(r"[A-Za-z0-9+/]*={0,2}", re.ASCII)
 _SPACE = re.compile(r"\s+", re.ASCII)
+_BREAK = re.compile("[\t-\r]")
 _DATES = ("date", "dateTime", "instant")
 _CURES = {
     "boolean": "Write true or false without quotation marks.",
@@ -126,6 +127,8 @@ def _matches(definition: TypeDef, value: str) -> bool:
         return True
     if definition.name == "integer64" and len(value) > 20:
         return False
+    if definition.name == "code" and _BREAK.search(value):
+        return False  # "no whitespace other than single spaces": the expression of R4 and R4B takes any
     return _pattern(definition.pattern).fullmatch(value) is not None
 
 

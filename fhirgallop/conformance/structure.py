@@ -33,6 +33,8 @@ def open_node(node: Node, edition: Edition, issues: list[Issue]) -> list[Node]:
         elif place.companion:
             if key[1:] not in value:
                 children.extend(_primitive(node, key[1:], place, None, item, issues))
+            elif item is None:
+                issues.append(_null(node, key))
         elif place.primitive:
             children.extend(_primitive(node, key, place, item, value.get("_" + key), issues))
         else:

@@ -117,16 +117,24 @@ def _path(expression: str, value: Any) -> JsonPath:
     """JSON keys and indices of a FHIRPath made by `Node.expression`."""
     path: list[str | int] = []
     _, _, rest = expression.partition(".")
-    for name, kind, index in _STEP.findall(rest):
-        key = name + (kind[:1].upper() + kind[1:])
+    steps = _STEP.findall(rest)
+    for number, (name, kind, index) in enumerate(steps, 1):
         if not isinstance(value, Mapping):
             break
+        key = name + (kind[:1].upper() + kind[1:])
+        place = int(index) if index else None
+        held = _item(value.get(key), place)
         # a primitive that has only extensions stands under its companion key, and so do its extensions
-        found = key if key in value and not isinstance(value[key], str | int | float) else "_" + key
-        key = found if found in value else key
-        value = value.get(key)
-        path.append(key)
-        if index:
-            path.append(int(index))
-            value = value[int(index)] if isinstance(value, list) and int(index) < len(value) else None
+        if not isinstance(held, Mapping | list) and (held is None or number < len(steps)):
+            beside = _item(value.get("_" + key), place)
+            key, held = ("_" + key, beside) if beside is not None else (key, held)
+        path += [key] if place is None else [key, place]
+        value = held
     return tuple(path)
+
+
+def _item(held: Any, index: int | None) -> Any:
+    """What is held, or the item of that index; None when there is none."""
+    if index is None:
+        return held
+    return held[index] if isinstance(held, list) and index < len(held) else None

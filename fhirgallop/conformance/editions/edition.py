@@ -29,6 +29,8 @@ from fhirgallop.errors import AssetError
 NAMES = ("R4", "R4B", "R5")
 VERSIONS = {"R4": "4.0.1", "R4B": "4.3.0", "R5": "5.0.0"}
 SD = "http://hl7.org/fhir/StructureDefinition/"
+# R4 names the media types by the address of the RFC, R4B by that of the value set
+_SAME_SETS = {"http://www.rfc-editor.org/bcp/bcp13.txt": "http://hl7.org/fhir/ValueSet/mimetypes"}
 
 
 class Edition:
@@ -93,7 +95,7 @@ class Edition:
         """The enumerated value set, or None when it is not loaded or cannot be enumerated."""
         url = canonical.partition("|")[0]
         if url not in self._value_sets:
-            row = self._sets.get(url)
+            row = self._sets.get(_SAME_SETS.get(url, url))
             self._value_sets[url] = None if row is None else self._expand(url, row)
         return self._value_sets[url]
 
