@@ -59,6 +59,12 @@ def venous_from_jugular(jugular_height_cm: Decimal) -> Decimal:
     return (jugular_height_cm + _STERNAL_ANGLE_CM) / _WATER_TO_MERCURY
 
 
+@computation("pressure.end-diastolic-step")
+def end_diastolic_step(lv_end_diastolic_mmhg: Decimal, wedge_mmhg: Decimal) -> Decimal:
+    """Left ventricular end-diastolic pressure less the mean wedge pressure (definition); may be negative."""
+    return lv_end_diastolic_mmhg - wedge_mmhg
+
+
 @computation("pulse.deficit")
 def pulse_deficit(apical_rate_per_min: Decimal, radial_rate_per_min: Decimal) -> Decimal | Stop | Noted:
     """Beats a minute that do not reach the wrist; slightly negative counts are counting error."""

@@ -52,3 +52,9 @@ def right_atrial_by_ivc(ivc_diameter_cm: Decimal, ivc_collapse_percent: Decimal)
 def mean_pulmonary(pasp_mmhg: Decimal) -> Decimal:
     """Mean pulmonary pressure estimated from the systolic one (Chemla, Chest 2004; from memory)."""
     return Decimal("0.61") * pasp_mmhg + 2
+
+
+@computation("right-heart.diastolic-gradient")
+def diastolic_gradient(pa_diastolic_mmhg: Decimal, wedge_mmhg: Decimal) -> Decimal:
+    """Pulmonary artery diastolic pressure less the wedge pressure (definition); may be negative."""
+    return pa_diastolic_mmhg - wedge_mmhg

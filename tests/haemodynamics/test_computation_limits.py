@@ -25,6 +25,8 @@ def _examples() -> dict[str, dict[str, Decimal]]:
         "pulse.deficit": {"apical_rate_per_min": Decimal(96), "radial_rate_per_min": Decimal(82)},
         "gradient.peak-to-peak": {"lv_systolic_mmhg": Decimal(180), "aortic_systolic_mmhg": Decimal(120)},
         "right-heart.pasp": {"rvsp_mmhg": Decimal(45), "pulmonary_valve_gradient_mmhg": Decimal(10)},
+        "right-heart.diastolic-gradient": {"pa_diastolic_mmhg": Decimal(18), "wedge_mmhg": Decimal(22)},
+        "pressure.end-diastolic-step": {"lv_end_diastolic_mmhg": Decimal(20), "wedge_mmhg": Decimal(14)},
         "area.aortic-indexed": {"aortic_area_cm2": Decimal(1), "body_surface_m2": Decimal(2)},
         "flow.cardiac-output": {"stroke_volume_ml": Decimal(70), "heart_rate_per_min": Decimal(70)},
         "flow.cardiac-index": {"cardiac_output_l_per_min": Decimal(5), "body_surface_m2": Decimal(2)},
