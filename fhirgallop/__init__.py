@@ -12,6 +12,7 @@ from fhirgallop.version import VERSION as __version__
 
 if TYPE_CHECKING:
     from fhirgallop.api import process, read_map, read_records
+    from fhirgallop.conformance.validator import validate
     from fhirgallop.exam.exam import Exam
     from fhirgallop.intake.record import LocalRecord
     from fhirgallop.mapping.template_map import TemplateMap
@@ -27,6 +28,7 @@ _HOMES = {
     "process": "fhirgallop.api",
     "read_map": "fhirgallop.api",
     "read_records": "fhirgallop.api",
+    "validate": "fhirgallop.conformance.validator",
 }
 
 __all__ = [
@@ -39,6 +41,7 @@ __all__ = [
     "process",
     "read_map",
     "read_records",
+    "validate",
 ]
 
 

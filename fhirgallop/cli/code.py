@@ -13,7 +13,7 @@ from typing import IO, TYPE_CHECKING, Annotated, Any, Final
 
 import typer
 
-from fhirgallop.cli.shared import EditionName, Exit, complain, people, whole_file
+from fhirgallop.cli.shared import EditionName, Exit, complain, people, resource, whole_file
 
 if TYPE_CHECKING:
     from rich.console import Console
@@ -45,6 +45,10 @@ def command(  # noqa: PLR0913, PLR0917 - one argument an option
         Path | None, typer.Option(help="The Bundle that this one examination gave before it was changed.")
     ] = None,
     snomed: Annotated[bool, typer.Option(help="Write SNOMED CT codings.")] = True,
+    form: Annotated[
+        Path | None,
+        typer.Option("--form", help="The Questionnaire (JSON) that QuestionnaireResponses are judged by."),
+    ] = None,
 ) -> None:
     """Code examinations. One gives a Bundle as JSON, several give NDJSON, a Bundle a line.
 
@@ -58,13 +62,14 @@ def command(  # noqa: PLR0913, PLR0917 - one argument an option
 
     template = api.read_map(map_)
     moment = _moment(recorded)
-    earlier = _earlier(amends)
+    earlier = resource(amends, "Bundle", "--amends") if amends else None
+    questionnaire = resource(form, "Questionnaire", "--form") if form else None
     tally = Tally()
     console = people()
     with ExitStack() as stack:
         sink = Sink(stack.enter_context(whole_file(out)) if out else sys.stdout.buffer, out)
         trail = stack.enter_context(whole_file(issues, may_be_empty=True)) if issues else None
-        for read in _with_progress(_all(records), console):
+        for read in _with_progress(_all(records, questionnaire), console):
             if isinstance(read, LocalRecord):
                 result = api.process(
                     read, template, edition.value, recorded=moment, snomed=snomed, earlier=earlier
@@ -102,26 +107,15 @@ def _moment(text: str | None) -> datetime:
     return moment
 
 
-def _earlier(path: Path | None) -> dict[str, Any] | None:
-    from fhirgallop.codes import fhirjson  # noqa: PLC0415
-
-    if path is None:
-        return None
-    value, _ = fhirjson.read(path.read_bytes())
-    if not isinstance(value, dict) or value.get("resourceType") != "Bundle":
-        raise typer.BadParameter("this file holds no Bundle", param_hint="--amends")
-    return value
-
-
-def _all(paths: list[Path]) -> Iterator[Read]:
+def _all(paths: list[Path], questionnaire: dict[str, Any] | None) -> Iterator[Read]:
     from fhirgallop.intake.detect import kind_of, open_records  # noqa: PLC0415
 
     for path in paths:
+        found = [path]
         if path.is_dir():
-            for inner in sorted(p for p in path.rglob("*") if p.is_file() and kind_of(name=p.name)):
-                yield from open_records(inner, name=str(inner))
-        else:
-            yield from open_records(path, name=str(path))
+            found = sorted(p for p in path.rglob("*") if p.is_file() and kind_of(name=p.name))
+        for file in found:
+            yield from open_records(file, name=str(file), questionnaire=questionnaire)
 
 
 def _with_progress(reads: Iterator[Read], console: Console) -> Iterator[Read]:

@@ -9,7 +9,7 @@ from typing import Annotated
 
 import typer
 
-from fhirgallop.cli import code, demo, maps, review, rules, serve, validate
+from fhirgallop.cli import code, demo, extract, maps, review, rules, serve, validate
 from fhirgallop.cli.shared import Exit, complain
 from fhirgallop.errors import FhirgallopError, MapError, SettingsError
 from fhirgallop.version import VERSION
@@ -23,6 +23,7 @@ app = typer.Typer(
     "setting has faults; 4 a file or an address could not be used.",
 )
 app.command("code")(code.command)
+app.command("extract")(extract.command)
 app.command("validate")(validate.command)
 app.command("review")(review.command)
 app.command("demo")(demo.command)

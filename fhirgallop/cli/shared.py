@@ -9,8 +9,9 @@ from collections.abc import Iterator
 from contextlib import contextmanager
 from enum import IntEnum, StrEnum
 from pathlib import Path
-from typing import IO
+from typing import IO, Any
 
+import typer
 from rich.console import Console
 
 
@@ -73,3 +74,14 @@ def _named(path: Path) -> Iterator[None]:
         yield
     except OSError as error:
         raise OSError(error.errno, error.strerror, str(path)) from None
+
+
+def resource(path: Path, kind: str, option: str) -> dict[str, Any]:
+    """The FHIR resource of one kind in a file that an argument or option names."""
+    from fhirgallop.codes import fhirjson  # noqa: PLC0415 - heavy; --help stays quick
+
+    value, issues = fhirjson.read(path.read_bytes(), source=str(path))
+    if not isinstance(value, dict) or value.get("resourceType") != kind:
+        why = f": {issues[0].text}" if issues else ""
+        raise typer.BadParameter(f"this file holds no {kind}{why}", param_hint=option)
+    return value

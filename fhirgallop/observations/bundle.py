@@ -51,18 +51,24 @@ def encode(
         resources = revise(resources, earlier, exam.status)
     tag = shared.identities.of("conversion", _fingerprint(resources) if earlier else edition)
     trail = provenance(exam, form, shared, list(resources), EDITIONS[edition], tag)
-    entries = [
-        {"fullUrl": urn, "resource": resource, "request": conditional_update(resource["resourceType"], urn)}
-        for urn, resource in resources.items()
-    ]
+    bundle = transaction(resources)
     once = f"_tag={CONVERSION_TAG}|{tag.removeprefix('urn:uuid:')}"
-    entries.append(
+    bundle["entry"].append(
         {
             "fullUrl": tag,
             "resource": trail,
             "request": {"method": "POST", "url": "Provenance", "ifNoneExist": once},
         }
     )
+    return bundle
+
+
+def transaction(resources: Resources) -> dict[str, Any]:
+    """Transaction Bundle that creates each resource once, by its identity, and updates it ever after."""
+    entries = [
+        {"fullUrl": urn, "resource": resource, "request": conditional_update(resource["resourceType"], urn)}
+        for urn, resource in resources.items()
+    ]
     return {"resourceType": "Bundle", "type": "transaction", "entry": entries}
 
 
