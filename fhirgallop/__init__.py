@@ -8,7 +8,7 @@ from __future__ import annotations
 from importlib import import_module
 from typing import TYPE_CHECKING, Any
 
-from fhirgallop.version import VERSION as __version__
+from fhirgallop.version import VERSION as __version__  # noqa: N811 - as every package calls it
 
 if TYPE_CHECKING:
     from fhirgallop.api import process, read_map, read_records
