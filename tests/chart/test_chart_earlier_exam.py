@@ -1,4 +1,4 @@
-"""Examinations that fhirgallop wrote, read again: what was absent or not looked for stays so, in every edition."""
+"""Examinations that fhirgallop wrote, read again: absent and not examined stay so, in every edition."""
 
 from __future__ import annotations
 

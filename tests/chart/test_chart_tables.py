@@ -81,15 +81,15 @@ def test_a_broader_code_identifies_nothing() -> None:
 
 def test_every_source_is_named_by_the_table() -> None:
     named = {source for found in tables.shipped().sources.values() for source in found.values()}
-    # what is of today's examination never comes from a chart; a monitor is named by a site's own method code
-    assert set(Source) - named == {Source.EXAM, Source.MONITOR}
+    # what is of today's examination never comes from a chart
+    assert set(Source) - named == {Source.EXAM}
 
 
 def test_a_site_adds_codes_and_replaces_ours() -> None:
     site, issues = tables.with_site(
         HEAD
         + "https://clinic.example/codes,CV1,Cardioversion,procedure,procedure.cardioversion,present,,,\n"
-        + "snomed,25510005,Cardiac valve prosthesis,device,device.prosthetic-valve,present,mechanical,valve:mitral,\n",
+        + "snomed,25510005,Prosthesis,device,device.prosthetic-valve,present,mechanical,valve:mitral,\n",
         "site.csv",
     )
     assert not issues
