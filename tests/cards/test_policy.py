@@ -222,7 +222,7 @@ def test_the_log_names_every_raised_conclusion_once(bedside: Any) -> None:
         assert Counter(line.rule for line in decision.log) == Counter(c.rule.id for c in review.raised)
 
 
-def test_the_order_of_entries_does_not_matter(bedside: Any, _book: Any) -> None:
+def test_the_order_of_entries_does_not_matter(bedside: Any) -> None:
     present = (*FIRST, *SECOND, *QUIET)
     one = replace(bedside, memory=Memory("p")).see(*present)
     other = replace(bedside, memory=Memory("p")).see(*reversed(present))
