@@ -128,6 +128,16 @@ _ROWS = (
         "hasValue() is false for every Quantity, so that the rule never bites",
     ),
     Correction(
+        "min.empty() or max.empty() or (max = '*') or iif(max != '*', min <= max.toInteger())",
+        "min.empty() or max.empty() or (max = '*') or max.toInteger().empty() or (min <= max.toInteger())",
+        "a maximum that is no number gives an empty result; eld-3 says that it is none",
+    ),
+    Correction(
+        "start.exists() implies start <= end",
+        "(start.exists() and end.exists()) implies start <= end",
+        "an appointment without an end gives an empty result; app-2 asks for the end",
+    ),
+    Correction(
         "max='*' or (max.toInteger() > 0)",
         "max.empty() or max='*' or (max.toInteger() > 0)",
         "a missing maximum, which is allowed, gives an empty result",

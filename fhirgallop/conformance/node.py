@@ -9,6 +9,9 @@ from typing import Any
 from fhirgallop.conformance.editions.edition import Edition
 from fhirgallop.conformance.editions.model import Child, Element
 
+# names of elements that are words of FHIRPath itself
+_ESCAPED = {"div": "`div`"}
+
 
 class Node:
     """One element: its value, its type by the definitions, and its place.
@@ -60,7 +63,9 @@ class Node:
         node.element = place.element
         node.parent = self
         node.step = (
-            f"{place.element.stem}.ofType({place.code})" if place.element.is_choice else place.element.name
+            f"{place.element.stem}.ofType({place.code})"
+            if place.element.is_choice
+            else _ESCAPED.get(place.element.name, place.element.name)
         )
         node.key = key
         node.index = index
@@ -88,8 +93,9 @@ class Node:
 
 
 def contained_ids(container: Node) -> frozenset[str]:
-    """The ids of the resources contained in one."""
+    """The ids of the resources contained in one; one that stands without its array counts."""
     contained = container.value.get("contained")
+    contained = [contained] if isinstance(contained, Mapping) else contained
     found = (
         r.get("id") for r in (contained if isinstance(contained, list) else ()) if isinstance(r, Mapping)
     )

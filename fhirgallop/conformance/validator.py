@@ -16,7 +16,7 @@ from fhirgallop.conformance.scan import Path as JsonPath
 from fhirgallop.conformance.source import Source
 from fhirgallop.outcome import Issue, ordered
 
-_STEP = re.compile(r"(\w+)(?:\.ofType\((\w+)\))?(?:\[(\d+)\])?(?:\.|$)", re.ASCII)
+_STEP = re.compile(r"`?(\w+)`?(?:\.ofType\((\w+)\))?(?:\[(\d+)\])?(?:\.|$)", re.ASCII)
 
 
 def validate(

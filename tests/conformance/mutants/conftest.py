@@ -55,7 +55,7 @@ def _step(value: Any, key: str) -> Any:
 
 def change(resource: dict[str, Any], row: dict[str, Any]) -> dict[str, Any]:
     """A copy with the row's `remove` and `set` done; a path that leads nowhere raises."""
-    changed = deepcopy(resource)
+    changed: dict[str, Any] = json.loads(json.dumps(resource))  # YAML's anchors are one object: undo that
     for path in row.get("remove", ()):
         *way, last = path.split(".")
         holder = functools.reduce(_step, way, changed)
@@ -135,9 +135,7 @@ def sound() -> list[Mutant]:
             found[key] = Mutant("", key[1], name, resource, text, None, profiles)
     for (name, edition), resource in bases().items():
         text = json.dumps(resource).encode()
-        found.setdefault(
-            (name, edition, ()), Mutant("", edition, f"{name}-{edition}", resource, text, None)
-        )
+        found.setdefault((name, edition, ()), Mutant("", edition, f"{name}-{edition}", resource, text, None))
     return list(found.values())
 
 
