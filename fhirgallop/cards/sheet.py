@@ -141,6 +141,7 @@ def _block(heading: str, texts: Iterable[str]) -> list[str]:
 
 
 def _filled(text: str, indent: str) -> list[str]:
-    """Wrapped to the width; later lines stand under the first word."""
+    """Wrapped to the width, later lines under the first word; no control characters, for a terminal obeys."""
+    text = "".join(letter if letter.isprintable() else " " for letter in text)
     later = " " * (len(indent) + 2)
     return wrap(text, WIDTH, initial_indent=indent, subsequent_indent=later, break_on_hyphens=False)

@@ -65,6 +65,8 @@ def read_devices(devices: Iterable[Found], uses: Iterable[Found], reading: Readi
         holder = target.resource if target is not None else {"type": concept}
         status = use.resource.get("status")
         word = next(iter(code_words(status)), "") if isinstance(status, dict) else text(status)
+        if word == "not-done":
+            continue
         _device(holder, _USE.get(word, State.UNCERTAIN), use, "timing", reading)
     for device in devices:
         if id(device.resource) not in stated and device.resource:

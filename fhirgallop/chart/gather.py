@@ -37,8 +37,9 @@ class Found:
 
     @property
     def id(self) -> str:
-        """Its logical id; empty when it has none."""
-        return text(self.resource.get("id"))
+        """Its logical id; empty when it has none that could be printed in one word."""
+        id_ = text(self.resource.get("id"))
+        return id_ if id_.isprintable() and " " not in id_ else ""
 
     @property
     def name(self) -> str:
@@ -126,7 +127,8 @@ def _bundle(bundle: Element, place: str, depth: int, log: Log) -> Iterator[Found
         inner = f"{place}.entry[{index}].resource"
         resource = held["resource"]
         if isinstance(resource, dict) and "resourceType" in resource:
-            yield from _walk(resource, inner, text(held.get("fullUrl")), depth + 1, log)
+            url = text(held.get("fullUrl"))
+            yield from _walk(resource, inner, url if url.isprintable() else "", depth + 1, log)
         else:
             log.add(
                 "error", "structure", "chart-shape", "Here stands no resource; send FHIR resources.", inner

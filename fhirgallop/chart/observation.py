@@ -22,7 +22,7 @@ from fhirgallop.exam.context import Fact, Source, State
 from fhirgallop.exam.entry import Grade, Measure, Qualifier
 
 _DONE: Final = frozenset({"final", "amended", "corrected", "appended"})
-_EARLY: Final = frozenset({"preliminary", "partial"})
+_EARLY: Final = frozenset({"preliminary", "partial", "modified"})  # modified: R5, before it is final
 _WITHDRAWN: Final = frozenset({"cancelled", "entered-in-error"})
 # "Assertion": the value is the finding (HL7 v3 ActCode, used so by FHIR R4 Observation 10.1.4.4.3)
 _ASSERTION: Final = Code("http://terminology.hl7.org/CodeSystem/v3-ActCode", "ASSERTION")

@@ -50,11 +50,18 @@ class Reading:
             for inner in elements(found.resource.get("contained")):
                 if text(inner.get("id")) == literal[1:]:
                     return Found(text(inner.get("resourceType")), inner, found.place, "")
-        target = self.places.get(f"{found.base}/{literal}") or self.places.get(literal)
+        target = self._at(literal, found)
         if target is None and literal:
             words = "The reference points at nothing in this chart; what stands there stays unknown."
             self.log.add("information", "not-found", "chart-reference", words, found.place)
         return target
+
+    def _at(self, literal: str, found: Found) -> Found | None:
+        """The resource at a full address, or at a relative one on the server of `found`."""
+        if found.base and ":" not in literal:
+            target = self.places.get(f"{found.base}/{literal}") or self.places.get(literal)
+            return target if target is not None and target.base in ("", found.base) else None
+        return self.places.get(literal)
 
     def encounter(self, found: Found) -> str:
         """The encounter of a resource, comparable with the examination's; empty when unknown."""
@@ -66,7 +73,7 @@ class Reading:
         literal = reference(held).partition("/_history/")[0]
         if ours is not None and not ours.is_fhir_id:
             if not logical and literal:
-                target = self.places.get(f"{found.base}/{literal}") or self.places.get(literal)
+                target = self._at(literal, found)
                 logical = identifiers(target.resource.get("identifier")) if target else frozenset()
             if (ours.system, ours.value) in logical:
                 return ours.value

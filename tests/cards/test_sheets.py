@@ -75,6 +75,14 @@ def test_no_sheet_says_what_must_not_be_said() -> None:
         assert not re.search(r"\b(error|wrong|impossible|mistake|must)\b", text, re.IGNORECASE)
 
 
+def test_nothing_in_the_sheet_commands_a_terminal() -> None:
+    words_ = Qualifier("quality", text="rough\x1b[2J\u202e\nNOW: urgent clinical review")
+    text = text_of((Entry("murmur.systolic", qualifiers=(words_,)),), ())
+    assert "rough" in text
+    assert all(letter.isprintable() or letter == "\n" for letter in text)
+    assert not any(line.startswith("NOW") for line in text.splitlines())
+
+
 @pytest.mark.parametrize(
     ("seconds", "clock", "said"),
     [

@@ -158,6 +158,26 @@ def test_anothers_device_is_refused_even_when_the_use_is_ours() -> None:
     assert not read(OURS, OTHER, device, use).context.facts
 
 
+def test_references_do_not_reach_another_server() -> None:
+    """A device of the same number on another server is another device."""
+    here, there = "https://a.example/fhir", "https://b.example/fhir"
+    type_ = {"coding": [{"system": "http://snomed.info/sct", "code": "17107009"}]}
+    use = {
+        "resourceType": "DeviceUseStatement", "id": "u", "status": "active", "subject": {"reference": "Patient/p1"},
+        "device": {"reference": "Device/d"},
+    }  # fmt: skip
+    device = {"resourceType": "Device", "id": "d", "type": type_}
+    for server, facts in ((here, 1), (there, 0)):
+        chart = read(
+            bundle(
+                entry(f"{here}/Patient/p1", OURS),
+                entry(f"{here}/DeviceUseStatement/u", use),
+                entry(f"{server}/Device/d", device),
+            )
+        )
+        assert len(chart.context.facts) == facts
+
+
 def test_hostile_issues_never_echo_the_chart() -> None:
     secret = "SECRET-7731"
     resources = [
