@@ -5,7 +5,7 @@
 1. Urgent combinations show the fixed phrase and the entries that raised them, once in an encounter for the
    same entries, and displace everything else.
 2. At most one interruption an encounter; what else would interrupt is collapsed into the same card.
-3. One card for a family, and one for a root cause: what the same look-again would settle is listed together.
+3. One card for a family, and one for a root cause: conflicts that one entry accounts for are listed together.
 4. What was answered is silent for the encounter; what is true in this patient, for twelve months, unless it
    is urgent or a matter of definition. What was shown comes again only when an entry changes.
 5. At most three advisory cards in view, the rest folded.
@@ -18,6 +18,7 @@ JMIR Med Inform 2020;8:e15653; acceptance falls with each repeat, BMC Med Inform
 
 from __future__ import annotations
 
+from collections import Counter
 from collections.abc import Iterable, Sequence
 from dataclasses import dataclass
 from datetime import datetime
@@ -28,7 +29,7 @@ from fhirgallop.cards.card import Card, Section, combination_digest, digest, ent
 from fhirgallop.cards.memory import Answer, Memory
 from fhirgallop.cards.safety import SAFETY_TEXTS
 from fhirgallop.reasoning.conclusion import Conclusion
-from fhirgallop.reasoning.conflicts import Look
+from fhirgallop.reasoning.conflicts import HittingSet, Look
 from fhirgallop.reasoning.review import Review
 from fhirgallop.reasoning.rulebook import Rulebook, load
 from fhirgallop.reasoning.vocabulary import Relation, Strength, Tier
@@ -254,34 +255,38 @@ def _rank(group: _Group) -> tuple[bool, int, int, int, str]:
 
 
 def _groups(speaking: Sequence[Conclusion], review: Review, book: Rulebook) -> list[_Group]:
-    """Families, joined where the same look-again would settle conflicts of several."""
+    """Families, joined where one entry is the root cause of conflicts of several."""
     by_family: dict[str, list[Conclusion]] = {}
     for conclusion in speaking:
         by_family.setdefault(conclusion.rule.family or conclusion.rule.id, []).append(conclusion)
     leader = {name: name for name in by_family}
-    looks: dict[str, list[Look]] = {name: [] for name in by_family}
-    for look in review.repair.looks:
-        touched = [name for name, held in by_family.items() if any(_touches(look, c) for c in held)]
+    for root in _roots(speaking):
+        touched = [name for name, held in by_family.items() if any(_touches(root, c) for c in held)]
         for name in touched:
-            looks[name].append(look)
             _join(leader, touched[0], name)
     joined: dict[str, list[str]] = {}
     for name in by_family:
         joined.setdefault(_top(leader, name), []).append(name)
-    return [
-        _Group(
-            tuple(
-                _section(name, by_family[name], book)
-                for name in sorted(names, key=lambda n: _loudest(by_family[n]))
-            ),
-            tuple(dict.fromkeys(look for name in names for look in looks[name])),
-        )
-        for names in joined.values()
-    ]
+    groups = []
+    for names in joined.values():
+        names.sort(key=lambda name: _loudest(by_family[name]))
+        held = [c for name in names for c in by_family[name]]
+        looks = (look for look in review.repair.looks if any(_touches(look.item.key, c) for c in held))
+        sections = tuple(_section(name, by_family[name], book) for name in names)
+        groups.append(_Group(sections, tuple(looks)))
+    return groups
 
 
-def _touches(look: Look, conclusion: Conclusion) -> bool:
-    return any(look.item.key in keys for keys in conclusion.sets)
+def _roots(speaking: Sequence[Conclusion]) -> tuple[str, ...]:
+    """The fewest entries that touch every conflict in view: each is one root cause."""
+    groups = list(dict.fromkeys(keys for c in speaking for keys in c.sets))
+    counts = Counter(key for keys in groups for key in keys)
+    ties = {key: (-count, 0.0, 0, key) for key, count in counts.items()}
+    return HittingSet(groups, dict.fromkeys(counts, 1), ties).best()
+
+
+def _touches(key: str, conclusion: Conclusion) -> bool:
+    return any(key in keys for keys in conclusion.sets)
 
 
 def _join(leader: dict[str, str], one: str, other: str) -> None:

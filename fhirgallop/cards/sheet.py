@@ -104,17 +104,17 @@ def _findings(review: Review) -> list[str]:
         silent = conclusion.silenced_by or conclusion.merged_into or conclusion.rule.tier is Tier.U
         if conclusion.subject and not silent:
             by_subject.setdefault(words.said(conclusion.subject[0].item), {})[conclusion] = None
-    if not by_subject:
-        return []
-    lines = ["FINDING BY FINDING"]
+    lines = []
     for subject in sorted(by_subject):
-        lines += _filled(subject, "  ")
         ordered = sorted(by_subject[subject], key=lambda c: (_ORDER.index(c.outcome), c.rule.id))
+        about: list[str] = []
         for line in dict.fromkeys(_known(c) for c in ordered if c.outcome not in _UNKNOWN):
-            lines += _filled(line, "    ")
+            about += _filled(line, "    ")
         for outcome in _UNKNOWN:
-            lines += _unknown(outcome, [c for c in ordered if c.outcome is outcome])
-    return [*lines, ""]
+            about += _unknown(outcome, [c for c in ordered if c.outcome is outcome])
+        if about:
+            lines += [*_filled(subject, "  "), *about]
+    return ["FINDING BY FINDING", *lines, ""] if lines else []
 
 
 def _known(conclusion: Conclusion) -> str:

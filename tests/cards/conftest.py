@@ -77,14 +77,14 @@ DEFAULT = "".join(
             strength="hard",
         ),
         *(
-            rule(f"d{n}.quiet", "murmur.systolic", f"{{fact: {fact}}}", tier="T2", strength="moderate")
-            for n, fact in enumerate(
+            rule(f"d{n}.quiet", subject, f"{{fact: {fact}}}", tier="T2", strength="moderate")
+            for n, (subject, fact) in enumerate(
                 (
-                    "general.pallor",
-                    "general.jaundice",
-                    "general.ascites",
-                    "general.clubbing",
-                    "general.hepatomegaly",
+                    ("murmur.systolic", "general.pallor"),
+                    ("bruit.carotid", "general.jaundice"),
+                    ("lung.crackles", "general.ascites"),
+                    ("oedema.sacral", "general.clubbing"),
+                    ("jvp.kussmaul", "general.hepatomegaly"),
                 )
             )
         ),

@@ -19,8 +19,8 @@ SECOND = ("heart-sound.opening-snap", "heart-sound.ejection-click")
 THIRD = ("heart-sound.opening-snap", "heart-sound.venous-hum")
 URGENT = ("murmur.diastolic", "symptom.syncope")
 QUIET = (
-    "murmur.systolic", "general.pallor", "general.jaundice", "general.ascites", "general.clubbing",
-    "general.hepatomegaly",
+    "murmur.systolic", "general.pallor", "bruit.carotid", "general.jaundice", "lung.crackles",
+    "general.ascites", "oedema.sacral", "general.clubbing", "jvp.kussmaul", "general.hepatomegaly",
 )  # fmt: skip
 
 
@@ -60,11 +60,24 @@ def test_what_else_would_interrupt_is_collapsed_into_the_one_card(bedside: Any) 
 
 
 def test_one_root_cause_is_one_card(bedside: Any) -> None:
-    """Second and third family both hang on the opening snap: one look settles both."""
+    """Second and third family both hang on the opening snap, which accounts for both."""
     decision = bedside.see(*SECOND, "heart-sound.venous-hum")
     (card,) = decision.cards
     assert {s.title for s in card.sections} == {"Second family", "Third family"}
     assert [look.item.id for look in card.looks] == ["heart-sound.opening-snap"]
+
+
+def test_a_root_cause_joins_the_quiet_to_the_loud(
+    made_up: Any, one_rule: Callable[..., str], bedside: Any
+) -> None:
+    """One entry that disputes with a loud and a quiet family gives one card, the loud family first."""
+    book = made_up(
+        one_rule("x.quiet", "thrill", "{fact: heart-sound.s4}", family="one", tier="T2", strength="moderate"),
+        one_rule("y.loud", "heart-sound.s3", "{fact: heart-sound.s4}", family="two"),
+    )
+    decision = replace(bedside, book=book).see("heart-sound.s4", "heart-sound.s3", "thrill")
+    assert levels(decision) == ["interruptive"]
+    assert [s.title for s in decision.cards[0].sections] == ["Second family", "First family"]
 
 
 def test_the_budget_is_one_interruption_an_encounter(bedside: Any) -> None:

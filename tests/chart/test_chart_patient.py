@@ -163,8 +163,8 @@ def test_references_do_not_reach_another_server() -> None:
     here, there = "https://a.example/fhir", "https://b.example/fhir"
     type_ = {"coding": [{"system": "http://snomed.info/sct", "code": "17107009"}]}
     use = {
-        "resourceType": "DeviceUseStatement", "id": "u", "status": "active", "subject": {"reference": "Patient/p1"},
-        "device": {"reference": "Device/d"},
+        "resourceType": "DeviceUseStatement", "id": "u", "status": "active",
+        "subject": {"reference": "Patient/p1"}, "device": {"reference": "Device/d"},
     }  # fmt: skip
     device = {"resourceType": "Device", "id": "d", "type": type_}
     for server, facts in ((here, 1), (there, 0)):
