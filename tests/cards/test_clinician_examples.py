@@ -54,6 +54,13 @@ def test_the_cards_of_a_chart(chart: str, levels: list[str], rules: list[str], r
     assert found["folded"] == []
 
 
+@pytest.mark.parametrize("chart", [*(chart for chart, _, _ in CHARTS), "urgent-combination"])
+def test_the_printed_cards_are_those_of_today(chart: str, root: Path) -> None:
+    """The file beside each chart holds `cards` of `fhirgallop review ... --format json`."""
+    printed = (root / f"examples/clinician/{chart}.cards.json").read_text(encoding="utf-8")
+    assert json.loads(printed) == reviewed(root, chart)["cards"]
+
+
 def test_an_urgent_combination_shows_the_phrase_and_its_entries(root: Path) -> None:
     found = reviewed(root, "urgent-combination")
     (card,) = found["cards"]
@@ -76,9 +83,10 @@ def test_every_example_chart_is_conformant_and_read_whole(chart: str, root: Path
     assert read.unknown == 0
 
 
-def test_every_example_chart_is_run_here() -> None:
-    named = {f"{chart}.chart.json" for chart, _, _ in CHARTS} | {"urgent-combination.chart.json"}
-    assert {p.name for p in (Path(__file__).parents[2] / "examples/clinician").glob("*.json")} == named
+def test_every_example_chart_is_run_here(root: Path) -> None:
+    charts = [*(chart for chart, _, _ in CHARTS), "urgent-combination"]
+    named = {f"{chart}.{kind}.json" for chart in charts for kind in ("chart", "cards")}
+    assert {p.name for p in (root / "examples/clinician").iterdir()} == named
 
 
 def test_the_sheet_is_text_on_standard_output(root: Path) -> None:
