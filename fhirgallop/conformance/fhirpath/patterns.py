@@ -39,9 +39,31 @@ def _validator(pattern: str) -> Any:
         raise CannotJudge("a regular expression of the rule is too long")
     options = jsonschema_rs.RegexOptions(size_limit=_SIZE_LIMIT, dfa_size_limit=_SIZE_LIMIT)
     try:
-        return jsonschema_rs.validator_for({"pattern": f"(?s){pattern}"}, pattern_options=options)
+        return jsonschema_rs.validator_for({"pattern": _dots_match_line_ends(pattern)}, pattern_options=options)
     except (ValueError, UnicodeError) as error:
         raise CannotJudge("a regular expression of the rule cannot be run here") from error
+
+
+def _dots_match_line_ends(pattern: str) -> str:
+    """The pattern with every `.` that stands for a character written so that it takes line ends too.
+
+    The engine reads patterns as JSON Schema does, where a dot stops at a line end whatever the flags say.
+    """
+    written = []
+    inside = escaped = False
+    for sign in pattern:
+        if escaped:
+            escaped = False
+        elif sign == "\\":
+            escaped = True
+        elif sign == "[":
+            inside = True
+        elif sign == "]":
+            inside = False
+        elif sign == "." and not inside:
+            sign = "[\\s\\S]"  # noqa: PLW2901 - the sign as the engine wants it
+        written.append(sign)
+    return "".join(written)
 
 
 def replace(pattern: str, text: str, new: str) -> str:
