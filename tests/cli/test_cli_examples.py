@@ -3,11 +3,6 @@
 from __future__ import annotations
 
 import json
-import os
-import signal
-import subprocess
-import sys
-import time
 from pathlib import Path
 from typing import Any
 
@@ -108,25 +103,3 @@ def test_the_result_is_not_for_everybody(call: Any, ehr: Path, fernwood: Path, t
     out = tmp_path / "out.json"
     assert call("code", ehr / "fernwood-exam.json", "--map", fernwood, "--out", out).code == 0
     assert out.stat().st_mode & 0o007 == 0
-
-
-def test_sudden_death_leaves_no_result(ehr: Path, fernwood: Path, tmp_path: Path) -> None:
-    """SIGKILL while records still come in: no file under the name of the result, not even the sound part."""
-    pipe, out = tmp_path / "records.ndjson", tmp_path / "out.ndjson"
-    os.mkfifo(pipe)
-    words = [sys.executable, "-m", "fhirgallop", "code", pipe, "--map", fernwood, "--out", out]
-    running = subprocess.Popen(words, stderr=subprocess.DEVNULL)
-    line = json.dumps(json.loads((ehr / "fernwood-exam.json").read_bytes())).encode() + b"\n"
-    try:
-        with pipe.open("wb", buffering=0) as feed:
-            feed.write(line * 8)
-            deadline = time.monotonic() + 60
-            while not list(tmp_path.glob(".out.ndjson.*")):
-                assert running.poll() is None
-                assert time.monotonic() < deadline
-                time.sleep(0.02)
-            running.send_signal(signal.SIGKILL)
-            assert running.wait(60) == -signal.SIGKILL
-    finally:
-        running.kill()
-    assert not out.exists()
