@@ -91,7 +91,10 @@ def _qualifier(qualifier: Qualifier) -> str:
         return f"grade {qualifier.grade}"
     value = axis.values.get(qualifier.value) if axis else None
     if value is not None:
-        return value.label
+        # "softer" alone says nothing without the manoeuvre
+        return (
+            f"{axis.label}: {value.label}" if axis and qualifier.axis.startswith("response.") else value.label
+        )
     return qualifier.value or qualifier.text
 
 
