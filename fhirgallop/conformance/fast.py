@@ -8,7 +8,7 @@ issues returned, as the thorough pass would say; whatever is refused may still b
 from __future__ import annotations
 
 import re
-from collections.abc import Callable, Mapping
+from collections.abc import Callable, Iterable, Mapping
 from dataclasses import dataclass
 from functools import lru_cache
 from typing import Any
@@ -22,6 +22,7 @@ from fhirgallop.conformance.fast_schema import Form, Schema, SchemaBuilder
 from fhirgallop.conformance.node import Node
 from fhirgallop.conformance.registry import Registry
 from fhirgallop.conformance.source import exact
+from fhirgallop.conformance.vital_signs import PROFILES as VITAL_SIGNS
 from fhirgallop.conformance.vital_signs import profiles_for
 from fhirgallop.outcome import Issue
 
@@ -62,35 +63,46 @@ def settle(
 
 @dataclass(frozen=True, slots=True)
 class _Ready:
-    """A compiled form: validator, values and codes to be looked at apart, targets of references."""
+    """A compiled form for resources with certain keys.
+
+    Attributes:
+        is_valid: the validator.
+        checks: keys whose values are looked at apart, with the check.
+        components: whether codes of components are to be compared with the resource's own.
+        targets: keys with a single reference, and the resource types it may lead to.
+        deeper: keys with many references, or with nested types that hold some; the same of each.
+    """
 
     is_valid: Callable[[object], bool]
     checks: tuple[tuple[str, Check], ...]
     components: bool
-    targets: Mapping[str, Any]
+    targets: tuple[tuple[str, frozenset[str]], ...]
+    deeper: tuple[tuple[str, Any], ...]
 
 
 def _accepted(resource: dict[str, Any], kind: str, known: Registry) -> _Ready | None:
     """The form that a single resource was found to have; None when it is in doubt."""
     try:
-        meta = resource.get("meta")
-        declared = tuple(meta["profile"]) if meta and "profile" in meta else ()
-        keys = tuple(resource)
-        ready = _fitting(known, kind, declared, (), keys)
-        if ready is not None and _has_form(resource, ready):
-            return ready
-        # a vital-signs code asks for a profile more: it was refused above, so the others pay nothing
-        implied = tuple(dict.fromkeys(profiles_for(resource))) if kind == "Observation" else ()
-        ready = _fitting(known, kind, declared, implied, keys) if implied else None
-        return ready if ready is not None and _has_form(resource, ready) else None
+        declared: tuple[str, ...] = ()
+        if "meta" in resource and "profile" in resource["meta"]:
+            declared = tuple(resource["meta"]["profile"])
+        implied = _implied(resource) if kind == "Observation" else ()
+        ready = _fitting(known, kind, declared, implied, tuple(resource))
+        if ready is None or not ready.is_valid(resource):
+            return None
+        if ready.components and not codes_apart(resource):
+            return None
+        return None if ready.checks and not all(c(resource[key]) for key, c in ready.checks) else ready
     except (ValueError, TypeError, AttributeError, KeyError, OverflowError, RecursionError):
         return None  # not what JSON can hold, or of the wrong shape: the walk says what it is
 
 
-def _has_form(resource: dict[str, Any], ready: _Ready) -> bool:
-    if not ready.is_valid(resource) or (ready.components and not codes_apart(resource)):
-        return False
-    return not ready.checks or all(check(resource[key]) for key, check in ready.checks)
+def _implied(observation: dict[str, Any]) -> tuple[str, ...]:
+    """The profiles that vital-signs codes ask for."""
+    for coding in observation["code"].get("coding", ()):
+        if coding.get("code") in VITAL_SIGNS:
+            return tuple(dict.fromkeys(profiles_for(observation)))
+    return ()
 
 
 @lru_cache(maxsize=4096)
@@ -105,9 +117,16 @@ def _fitting(
     if found is None or not found[0].is_valid(dict.fromkeys(keys)):
         return None
     _, validator, form = found
-    checks = tuple((k, form.checks[k]) for k in keys if k in form.checks)
-    components = "component" in keys and any(k.startswith("value") for k in keys)
-    return _Ready(validator.is_valid, checks, components, form.targets)
+    children = {key: known.edition.child(kind, key) for key in form.targets}
+    single = {k for k, c in children.items() if c and c.type_name == "Reference" and not c.element.many}
+    targets = {key: form.targets[key] for key in keys if key in form.targets}
+    return _Ready(
+        validator.is_valid,
+        checks=tuple((k, form.checks[k]) for k in keys if k in form.checks),
+        components="component" in keys and any(k.startswith("value") for k in keys),
+        targets=tuple((k, step) for k, step in targets.items() if k in single),
+        deeper=tuple((k, step) for k, step in targets.items() if k not in single),
+    )
 
 
 @lru_cache(maxsize=512)
@@ -133,9 +152,8 @@ def _bundle(value: dict[str, Any], known: Registry, text: bytes | None) -> list[
         return None
     doubtful: list[int] = []
     missing: list[str] = []
-    for index, entry in enumerate(entries):
+    for index, (entry, kind) in enumerate(zip(entries, urls.values(), strict=True)):
         resource = entry["resource"]
-        kind = resource.get("resourceType")
         if type(kind) is not str or not _consistent(entry, resource, kind):
             return None
         ready = _accepted(resource, kind, known)
@@ -143,9 +161,14 @@ def _bundle(value: dict[str, Any], known: Registry, text: bytes | None) -> list[
             doubtful.append(index)
             if len(doubtful) > max(4, len(entries) // 4):
                 return None
-        elif not _targets_right(resource, ready.targets, urls):
+            continue
+        for key, allowed in ready.targets:
+            led = urls.get(resource[key].get("reference"))
+            if led is not None and led not in allowed:
+                return None
+        if ready.deeper and not _targets_right(resource, ready.deeper, urls):
             return None
-        elif "text" not in resource and kind not in _no_narrative(known):
+        if "text" not in resource and kind not in _no_narrative(known):
             missing.append(f"Bundle.entry[{index}].resource")
     return missing if not doubtful or _judged_well(value, text, doubtful, known) else None
 
@@ -166,28 +189,27 @@ def _judged_well(value: dict[str, Any], text: bytes | None, places: list[int], k
 def _consistent(entry: Mapping[str, Any], resource: Mapping[str, Any], kind: str) -> bool:
     """Whether fullUrl and request agree with the resource's type and id, as the bundles clause asks."""
     url = entry["fullUrl"]
-    ident = resource.get("id")
-    if not url.startswith("urn:uuid:") and (ident is None or not url.endswith(f"/{kind}/{ident}")):
+    if not url.startswith("urn:uuid:") and (
+        "id" not in resource or not url.endswith(f"/{kind}/{resource['id']}")
+    ):
         return False
-    request = entry.get("request")
-    if request is None:
+    if "request" not in entry:
         return True
-    if request["method"] == "POST":
-        return bool(request["url"] == kind)
-    return bool(request["url"] == f"{kind}/{ident}" or request["url"].startswith(f"{kind}?"))
+    asked = entry["request"]["url"]
+    if entry["request"]["method"] == "POST":
+        return bool(asked == kind)
+    return bool(asked.startswith(f"{kind}?") or ("id" in resource and asked == f"{kind}/{resource['id']}"))
 
 
-def _targets_right(held: Mapping[str, Any], plan: Mapping[str, Any], urls: Mapping[str, str]) -> bool:
+def _targets_right(held: Mapping[str, Any], plan: Iterable[tuple[str, Any]], urls: Mapping[str, str]) -> bool:
     """Whether every urn:uuid reference that is a full URL of the Bundle leads to a type allowed."""
-    for key, value in held.items():
-        step = plan.get(key)
-        if step is None:
-            continue
+    for key, step in plan:
+        value = held.get(key, ())
         for item in value if type(value) is list else (value,):
             if type(step) is dict:
-                if not _targets_right(item, step, urls):
+                if item and not _targets_right(item, step.items(), urls):
                     return False
-            elif (kind := urls.get(item.get("reference"))) is not None and kind not in step:
+            elif item and (led := urls.get(item.get("reference"))) is not None and led not in step:
                 return False
     return True
 

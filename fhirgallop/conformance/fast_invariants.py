@@ -28,8 +28,8 @@ COUNTED = frozenset({"dom-6"})
 
 _NO_COMPOSITION: Fragment = {"absent": ("composition",)}
 _NO_ON_BEHALF_OF: Fragment = {"absent": ("onBehalfOf",)}
-_NO_END: Fragment = {"absent": ("end",)}
-_NO_HIGH: Fragment = {"absent": ("high",)}
+_ONE_END: Fragment = {"excludes": (("start", "end"),)}
+_LOW_OR_HIGH: Fragment = {"excludes": (("low", "high"),)}
 _BOTH: Fragment = {"required": ("numerator", "denominator")}
 
 
@@ -101,16 +101,16 @@ _ROWS: tuple[tuple[Fragment, str], ...] = (
     ({"needs": {"code": ("system",)}}, "code.empty() or system.exists()"),
     ({"absent": ("comparator",)}, "comparator.empty()"),
     # Range and Period: two ends would have to be compared
-    (_NO_HIGH, "low.empty() or high.empty() or (low <= high)"),
+    (_LOW_OR_HIGH, "low.empty() or high.empty() or (low <= high)"),
     (
-        _NO_HIGH,
+        _LOW_OR_HIGH,
         """low.value.empty() or high.value.empty() or
         low.lowBoundary().comparable(high.highBoundary()).not() or
         (low.lowBoundary() <= high.highBoundary())""",
     ),
-    (_NO_END, "start.hasValue().not() or end.hasValue().not() or (start <= end)"),
+    (_ONE_END, "start.hasValue().not() or end.hasValue().not() or (start <= end)"),
     (
-        _NO_END,
+        _ONE_END,
         "start.hasValue().not() or end.hasValue().not() or (start.lowBoundary() <= end.highBoundary())",
     ),
     # Ratio

@@ -6,7 +6,7 @@ pass judges such resources. Every step may refuse too much, never too little.
 
 from __future__ import annotations
 
-from collections.abc import Iterator, Mapping, Sequence
+from collections.abc import Mapping, Sequence
 from copy import deepcopy
 from itertools import combinations
 from typing import Any
@@ -14,6 +14,7 @@ from urllib.parse import unquote
 
 from fhirgallop.conformance.editions.model import Binding, Child, TypeDef, TypeRef
 from fhirgallop.conformance.fast_invariants import REFUSED, fragment
+from fhirgallop.conformance.fast_logic import beyond, containing, never_both
 from fhirgallop.conformance.fast_schema import (
     Form,
     Schema,
@@ -54,8 +55,6 @@ def form(
             narrowing.root(schema, profile, definition, targets)
     except Unsupported:
         return None
-    if name == "Observation" and not implied:
-        builder.without_vital_signs(schema)
     if declared:
         meta = builder.copy("Meta")
         if meta is REFUSED:
@@ -135,8 +134,7 @@ class _Narrowing:
         if rule.max is not None:
             array["maxItems"] = rule.max
         if rule.slices:
-            slices = list(self._slices(items, rule, child.type_name, urn=urn))
-            array["allOf"] = [*array.get("allOf", ()), *slices]
+            self._slices(array, rule, child.type_name, urn=urn)
         return array
 
     def _value(self, schema: Schema, rule: Rule, type_name: str, *, urn: bool) -> Schema:
@@ -187,25 +185,36 @@ class _Narrowing:
             raise Unsupported
         return deepcopy(schema)
 
-    def _slices(self, items: Schema, rule: Rule, type_name: str, *, urn: bool) -> Iterator[Schema]:
+    def _slices(self, array: Schema, rule: Rule, type_name: str, *, urn: bool) -> None:
         """Each slice as what its members must be, and how many may be; no item may be in two of them."""
         slicing = rule.slicing
         if slicing is None or slicing.ordered or slicing.rules == "openAtEnd":
             raise Unsupported
+        items = self._opened(array["items"])
         matches = {name: self._match(rule, part, type_name) for name, part in rule.slices.items()}
-        for one, other in combinations(matches.values(), 2):
-            yield {"items": {"not": {"allOf": [one, other]}}}
+        each: list[Schema] = [
+            {"not": {"allOf": [one, other]}}
+            for one, other in combinations(matches.values(), 2)
+            if not never_both(one, other)
+        ]
+        counts: list[Schema] = []
         for name, part in rule.slices.items():
             if part.slices:
                 raise Unsupported
-            member = self._value(items, part, type_name, urn=urn)
-            yield {"items": {"anyOf": [{"not": matches[name]}, member]}}
-            if part.min:
-                yield {"contains": matches[name], "minContains": part.min}
-            if part.max is not None:
-                yield {"contains": matches[name], "minContains": 0, "maxContains": part.max}
+            match = matches[name]
+            member = beyond(self._value(array["items"], part, type_name, urn=urn), [items, match])
+            if type_name == "Coding":
+                ask(items, member.pop("required", ()))  # of all alike: few codings have no code
+            if member:
+                each.append({"if": match, "then": member})
+            if part.min or part.max is not None:
+                most = {} if part.max is None else {"maxContains": part.max}
+                counts.append({"contains": match, "minContains": part.min, **most})
         if slicing.rules == "closed":
-            yield {"items": {"anyOf": list(matches.values())}}
+            each.append({"anyOf": list(matches.values())})
+        array["items"] = {**items, "allOf": [*items.get("allOf", ()), *each]} if each else items
+        if counts:
+            array["allOf"] = [*array.get("allOf", ()), *counts]
 
     def _match(self, rule: Rule, part: Rule, type_name: str) -> Schema:
         """What an item must be to belong to a slice: one value at one path for each discriminator."""
@@ -220,7 +229,7 @@ class _Narrowing:
             needs.append(self._at(path.split("."), type_name, {"enum": [want]}))
         if not needs:
             raise Unsupported
-        return {"allOf": needs}
+        return needs[0] if len(needs) == 1 else {"allOf": needs}
 
     def _at(self, steps: Sequence[str], type_name: str, inner: Schema) -> Schema:
         """A schema that asks for a value at a path, in any place where there are many."""
@@ -248,15 +257,3 @@ class _Narrowing:
                     raise Unsupported
                 found.append(name)
         return tuple(found)
-
-
-def containing(wanted: Any) -> Schema:
-    """What holds at least the pattern."""
-    if isinstance(wanted, Mapping):
-        return {
-            "properties": {key: containing(value) for key, value in wanted.items()},
-            "required": sorted(wanted),
-        }
-    if isinstance(wanted, list):
-        return {"allOf": [{"contains": containing(item)} for item in wanted]} if wanted else {}
-    return {"enum": [wanted]}

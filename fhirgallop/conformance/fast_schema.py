@@ -19,7 +19,6 @@ from fhirgallop.conformance.fast_invariants import REFUSED, fragment
 from fhirgallop.conformance.fast_residue import CHECKS, Check
 from fhirgallop.conformance.primitives import RANGES
 from fhirgallop.conformance.registry import Registry
-from fhirgallop.conformance.vital_signs import PROFILES as VITAL_SIGNS
 
 Schema = dict[str, Any]
 
@@ -66,23 +65,6 @@ class SchemaBuilder:
             schema["properties"]["resourceType"] = {"enum": [name]}
             ask(schema, ("resourceType",))
         return schema
-
-    def without_vital_signs(self, schema: Schema) -> None:
-        """Refuses vital-signs codes in Observation.code, where no such profile is laid over the schema."""
-        code = deepcopy(schema["properties"]["code"])
-        code = self.copy("CodeableConcept") if code.keys() == {"$ref"} else code
-        coding = self.copy("Coding")
-        coding["properties"]["code"] = {**coding["properties"]["code"], "not": {"enum": sorted(VITAL_SIGNS)}}
-        held = code["properties"]["coding"]
-        # slices of a profile stand beside the items, which are replaced only where they are plain codings
-        if held["items"].keys() == {"$ref"}:
-            code["properties"]["coding"] = {**held, "items": coding}
-        else:
-            code["properties"]["coding"] = {
-                **held,
-                "allOf": [*held.get("allOf", ()), {"items": _NO_VITAL_SIGN}],
-            }
-        schema["properties"]["code"] = code
 
     def form(self, name: str, schema: Schema) -> Form:
         """A finished schema, parted into what is settled by keys and what is not."""
@@ -295,11 +277,6 @@ class SchemaBuilder:
             return {"type": "number", "minimum": -_LIMIT, "maximum": _LIMIT}
         pattern = PATTERNS.get(name, TEXT)
         return {"type": "string", "pattern": pattern} | ({"maxLength": 2**20} if pattern == TEXT else {})
-
-
-_NO_VITAL_SIGN: Schema = {
-    "not": {"properties": {"code": {"enum": sorted(VITAL_SIGNS)}}, "required": ["code"]}
-}
 
 
 def _apart(child: Child) -> bool:
