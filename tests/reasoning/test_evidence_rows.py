@@ -10,7 +10,7 @@ import pytest
 from fhirgallop.reasoning.rulebook import load
 
 # Families of rows that have been written; a family is added here with its rule file.
-FAMILIES = ("S4",)
+FAMILIES = ("S4", "JV", "PU", "BP", "AP", "EC", "RH", "UR")
 
 
 @pytest.fixture(scope="module")
