@@ -39,7 +39,9 @@ def _validator(pattern: str) -> Any:
         raise CannotJudge("a regular expression of the rule is too long")
     options = jsonschema_rs.RegexOptions(size_limit=_SIZE_LIMIT, dfa_size_limit=_SIZE_LIMIT)
     try:
-        return jsonschema_rs.validator_for({"pattern": _dots_match_line_ends(pattern)}, pattern_options=options)
+        return jsonschema_rs.validator_for(
+            {"pattern": _dots_match_line_ends(pattern)}, pattern_options=options
+        )
     except (ValueError, UnicodeError) as error:
         raise CannotJudge("a regular expression of the rule cannot be run here") from error
 
