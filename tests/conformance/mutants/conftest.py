@@ -127,7 +127,8 @@ def sound() -> list[Mutant]:
     """The bases themselves, and with each profile that a row asks of them."""
     found = {}
     for mutant in all_mutants():
-        for profiles in {(), mutant.profiles}:
+        # what cannot be judged is the profile's fault, which no base can cure
+        for profiles in dict.fromkeys(((), () if mutant.clause == "not judged" else mutant.profiles)):
             key = (mutant.row["base"], mutant.edition, profiles)
             resource = bases()[key[0], key[1]]
             name = "-".join((key[0], key[1], *(p.removeprefix(CANONICAL) for p in profiles)))
