@@ -11,13 +11,14 @@ from typing import TYPE_CHECKING, Any
 from fhirgallop.version import VERSION as __version__  # noqa: N811 - as every package calls it
 
 if TYPE_CHECKING:
-    from fhirgallop.api import process, read_map, read_records
+    from fhirgallop.api import process, read_map, read_records, review
     from fhirgallop.conformance.validator import validate
     from fhirgallop.exam.exam import Exam
     from fhirgallop.intake.record import LocalRecord
     from fhirgallop.mapping.template_map import TemplateMap
     from fhirgallop.outcome import Issue
     from fhirgallop.pipeline import Result
+    from fhirgallop.reasoning.review import Review
 
 _HOMES = {
     "Exam": "fhirgallop.exam.exam",
@@ -25,9 +26,11 @@ _HOMES = {
     "LocalRecord": "fhirgallop.intake.record",
     "Result": "fhirgallop.pipeline",
     "TemplateMap": "fhirgallop.mapping.template_map",
+    "Review": "fhirgallop.reasoning.review",
     "process": "fhirgallop.api",
     "read_map": "fhirgallop.api",
     "read_records": "fhirgallop.api",
+    "review": "fhirgallop.api",
     "validate": "fhirgallop.conformance.validator",
 }
 
@@ -36,11 +39,13 @@ __all__ = [
     "Issue",
     "LocalRecord",
     "Result",
+    "Review",
     "TemplateMap",
     "__version__",
     "process",
     "read_map",
     "read_records",
+    "review",
     "validate",
 ]
 

@@ -1,12 +1,15 @@
-"""The Python face: a record and a map in, a coded Bundle out."""
+"""The Python face: a record and a map in, a coded Bundle out; an examination and a chart in, a review out."""
 
 from __future__ import annotations
 
-from collections.abc import Iterator, Mapping
+from collections.abc import Iterator, Mapping, Sequence
 from datetime import UTC, datetime
 from pathlib import Path
 from typing import Any
 
+from fhirgallop.chart.read import read_chart
+from fhirgallop.exam.context import Context
+from fhirgallop.exam.exam import Exam
 from fhirgallop.intake.detect import open_records
 from fhirgallop.intake.questionnaire import read_response
 from fhirgallop.intake.reading import Read
@@ -18,6 +21,8 @@ from fhirgallop.observations.editions import Edition
 from fhirgallop.outcome import Issue, has_errors
 from fhirgallop.pipeline import Result
 from fhirgallop.pipeline import process as run
+from fhirgallop.reasoning.review import Review
+from fhirgallop.reasoning.review import review as conclude
 
 
 def read_map(path: Path | str) -> TemplateMap:
@@ -70,6 +75,27 @@ def process(
         return Result(None, None, issues)
     moment = recorded or datetime.now(tz=UTC)
     return run(one, template, recorded=moment, edition=edition, snomed=snomed, earlier=earlier)
+
+
+def review(
+    exam: Exam, context: Context | Mapping[str, Any] | Sequence[Any], now: datetime | None = None
+) -> Review:
+    """An examination held against the chart: what each finding needs, and what does not go together.
+
+    Supports clinical judgement and does not replace it; that nothing is raised is no reassurance.
+
+    Args:
+        exam: today's examination (`Result.exam`).
+        context: the same patient's chart: FHIR resources (a Bundle, a list, a CDS Hooks prefetch), or what
+            `fhirgallop.chart` read of them.
+        now: the moment of the review, with a zone; this moment when left out. A Context has its own.
+
+    Raises:
+        ValueError: the chart is known to be another patient's.
+    """
+    if not isinstance(context, Context):
+        context = read_chart(context, exam, now or datetime.now(tz=UTC)).context
+    return conclude(exam, context)
 
 
 def _one(
