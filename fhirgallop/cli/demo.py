@@ -7,6 +7,7 @@ import threading
 import time
 from collections.abc import Iterator
 from contextlib import contextmanager
+from datetime import UTC, datetime
 from pathlib import Path
 from typing import TYPE_CHECKING, Annotated, Any, Final
 
@@ -19,6 +20,9 @@ if TYPE_CHECKING:
     from rich.console import Console
 
 MAP: Final = "fernwood-heart-form"
+CHART: Final = "atrial-fibrillation-today.chart.json"
+# half an hour after the example examination
+REVIEWED: Final = datetime(2026, 3, 14, 9, 0, tzinfo=UTC)
 _LOCAL: Final = "https://fernwood.example/heart-form"
 _PATIENCE: Final = 30.0
 _WIDTH: Final = 132
@@ -53,6 +57,7 @@ def command(
             complain(f"the service answered {answer.status_code}: {answer.text[:2000]}")
             raise typer.Exit(Exit.REFUSED)
         _show(console, answer.json())
+        _review(console)
         if once:
             return
         console.print("\nSend it yourself:", style="bold")
@@ -65,6 +70,29 @@ def command(
             threading.Event().wait()
         except KeyboardInterrupt:
             console.print("ended")
+
+
+def _review(console: Console) -> None:
+    """The same examination held against an example chart."""
+    from fhirgallop import api, assets  # noqa: PLC0415
+    from fhirgallop.cards.memory import Memory  # noqa: PLC0415
+    from fhirgallop.cards.policy import decide  # noqa: PLC0415
+    from fhirgallop.cards.sheet import sheet  # noqa: PLC0415
+    from fhirgallop.chart.read import read_chart  # noqa: PLC0415
+    from fhirgallop.codes import fhirjson  # noqa: PLC0415
+
+    record = assets.path("examples", "ehr", "fernwood-exam.json").read_bytes()
+    exam = api.process(record, assets.path("examples", "informatician", f"{MAP}.yaml")).exam
+    chart, _ = fhirjson.read(assets.path("examples", "clinician", CHART).read_bytes())
+    if exam is None:
+        return
+    read = read_chart(chart, exam, REVIEWED)
+    found = api.review(exam, read.context)
+    decision = decide(found, Memory(exam.patient.value), encounter=exam.identifier, now=REVIEWED)
+    console.print(
+        "\nThe same examination against a chart with atrial fibrillation on today's ECG:", style="bold"
+    )
+    console.print(sheet(exam, found, decision), markup=False, soft_wrap=True)
 
 
 @contextmanager
