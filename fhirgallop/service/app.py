@@ -16,7 +16,7 @@ from fhirgallop.outcome import Issue
 from fhirgallop.service import answers
 from fhirgallop.service.examinations import Examinations
 from fhirgallop.service.guard import guard
-from fhirgallop.service.routes import about, exams, maps
+from fhirgallop.service.routes import about, exams, maps, validation
 from fhirgallop.service.shelf import load_shelf
 from fhirgallop.settings import Settings
 from fhirgallop.storage.engine import open_database
@@ -60,7 +60,7 @@ def create_app(settings: Settings, clock: Callable[[], datetime] = now) -> FastA
     app.state.settings = settings
     app.state.shelf = shelf
     app.state.examinations = Examinations(Submissions(engine), clock)
-    for router in (exams.router, maps.router, about.router):
+    for router in (exams.router, validation.router, maps.router, about.router):
         app.include_router(router)
     app.middleware("http")(guard)
     app.exception_handler(answers.RefusalError)(_refused)

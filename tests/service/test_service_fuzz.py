@@ -32,6 +32,8 @@ def fuzzed(tmp_path_factory: pytest.TempPathFactory, root: Path) -> Iterator[Tes
         ("POST /exams", FITTING),
         ("POST /exams", UNFITTING),
         ("GET /maps/{name}", FITTING),
+        ("POST /fhir/{edition}/$validate", FITTING),
+        ("POST /fhir/{edition}/{resource_type}/$validate", FITTING),
         ("GET /maps", FITTING),
         ("GET /health", FITTING),
     ],
