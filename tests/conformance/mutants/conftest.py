@@ -7,7 +7,7 @@ import io
 import json
 import re
 import tarfile
-from collections.abc import Iterator
+from collections.abc import Callable, Iterator
 from copy import deepcopy
 from dataclasses import dataclass, field
 from pathlib import Path
@@ -182,3 +182,56 @@ _URL = re.compile(r"https?://[A-Za-z0-9./_|:-]+", re.ASCII)
 def plain_url() -> re.Pattern[str]:
     """Addresses of definitions, which an issue may name."""
     return _URL
+
+
+@dataclass(frozen=True, slots=True)
+class Found:
+    """A node that an expression leads to.
+
+    Attributes:
+        value: its JSON value; None when a primitive has only an `_x`.
+        companion: that `_x`, or None.
+        beside: whether the way leads through an `_x`, or ends at one that has no value.
+    """
+
+    value: Any
+    companion: Any
+    beside: bool
+
+
+_STEP = re.compile(r"\.(`?)(\w+)\1(?:\.ofType\((\w+)\))?(?:\[(\d+)\])?")
+
+
+@pytest.fixture(scope="session")
+def nodes_at() -> Callable[[dict[str, Any], str], list[Found]]:
+    """A reading of its own of the expressions an issue may hold, as an evaluator misses the `_x` of lists."""
+
+    def find(resource: dict[str, Any], expression: str) -> list[Found]:
+        kind, _, _ = expression.partition(".")
+        assert resource["resourceType"] == kind
+        assert _STEP.sub("", expression[len(kind) :]) == "", expression
+        held: list[tuple[Any, Any, bool]] = [(resource, None, False)]
+        for _, name, of_type, index in _STEP.findall(expression[len(kind) :]):
+            key = name + of_type[:1].upper() + of_type[1:]
+            held = [found for node in held for found in _below(node, key, int(index) if index else None)]
+        return [Found(*node) for node in held]
+
+    return find
+
+
+def _below(node: tuple[Any, Any, bool], key: str, index: int | None) -> Iterator[tuple[Any, Any, bool]]:
+    value, companion, beside = node
+    for place, way in ((value, beside), (companion, True)):
+        if not isinstance(place, dict) or not {key, "_" + key} & place.keys():
+            continue
+        plain, under = place.get(key), place.get("_" + key)
+        if isinstance(plain, list) or isinstance(under, list):
+            assert index is not None, f"{key} is a list"
+            plain, under = _item(plain, index), _item(under, index)
+            if plain is None and under is None:
+                continue
+        yield plain, under, way or plain is None
+
+
+def _item(held: Any, index: int) -> Any:
+    return held[index] if isinstance(held, list) and index < len(held) else None

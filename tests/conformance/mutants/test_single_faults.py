@@ -5,7 +5,6 @@ The tables stand in tests/cases/conformance/mutants; `conftest.py` reads them. A
 
 from __future__ import annotations
 
-import re
 import warnings
 from collections import Counter
 from collections.abc import Iterator
@@ -76,7 +75,9 @@ def test_base_is_accepted(base: Any, packages: tuple[Path, ...]) -> None:
         assert _judged(base, form, packages) == []
 
 
-def test_one_fault_gives_one_issue(mutant: Any, packages: tuple[Path, ...], plain_url: Any) -> None:
+def test_one_fault_gives_one_issue(
+    mutant: Any, packages: tuple[Path, ...], plain_url: Any, nodes_at: Any
+) -> None:
     issues = _judged(mutant, mutant.text, packages)
     assert [(i.severity, i.rule, i.expression) for i in issues] == [mutant.expected]
     (issue,) = issues
@@ -84,7 +85,7 @@ def test_one_fault_gives_one_issue(mutant: Any, packages: tuple[Path, ...], plai
     assert issue.text.endswith(".")
     _same_in_every_form_and_pass(mutant, issues, packages)
     _same_when_the_resource_names_the_profile(mutant, packages)
-    _one_node(mutant, issue)
+    _one_node(mutant, issue, nodes_at)
     _no_patient_data(mutant, issue, plain_url)
 
 
@@ -104,15 +105,15 @@ def _same_when_the_resource_names_the_profile(mutant: Any, packages: tuple[Path,
         assert [(i.severity, i.rule, i.expression) for i in issues] == [mutant.expected]
 
 
-def _one_node(mutant: Any, issue: Issue) -> None:
+def _one_node(mutant: Any, issue: Issue, nodes_at: Any) -> None:
     if mutant.resource is None or not issue.expression:
         assert {"text", "write"} & mutant.row.keys() or issue.severity == "fatal"
         return
     assert issue.line >= 1
     assert issue.column >= 1
-    nodes = list(_nodes(mutant.resource, issue.expression))
+    nodes = nodes_at(mutant.resource, issue.expression)
     assert len(nodes) == 1
-    if "companion" not in nodes[0]:
+    if not nodes[0].beside:
         with warnings.catch_warnings():
             warnings.simplefilter("ignore")
             found = evaluate(mutant.resource, issue.expression, model=MODELS[mutant.edition])
@@ -127,40 +128,6 @@ def _no_patient_data(mutant: Any, issue: Issue, plain_url: Any) -> None:
         if "quill" in leaf.lower() or (len(leaf) > 1 and any(c.isdigit() for c in leaf)):
             assert leaf not in said
     assert "quill" not in said.lower()
-
-
-STEP = re.compile(r"\.(`?)(\w+)\1(?:\.ofType\((\w+)\))?(?:\[(\d+)\])?")
-
-
-def _nodes(resource: dict[str, Any], expression: str) -> Iterator[set[str]]:
-    """For each node meant, what was met on the way there: "companion" where it leads through an `_x`.
-
-    A reading of its own of the expressions an issue may hold, since the evaluator misses the `_x` of lists.
-    """
-    kind, _, _ = expression.partition(".")
-    assert resource["resourceType"] == kind
-    held: list[tuple[Any, Any, set[str]]] = [(resource, None, set())]
-    assert STEP.sub("", expression[len(kind) :]) == "", expression
-    for _, name, of_type, index in STEP.findall(expression[len(kind) :]):
-        key = name + of_type[:1].upper() + of_type[1:]
-        below = []
-        for value, beside, met in held:
-            for place, way in ((value, met), (beside, met | {"companion"})):
-                if isinstance(place, dict) and (key in place or "_" + key in place):
-                    plain, under = place.get(key), place.get("_" + key)
-                    many = isinstance(plain, list) or isinstance(under, list)
-                    plains, unders = (plain or [], under or []) if many else ([plain], [under])
-                    size = max(len(plains), len(unders))
-                    pairs = [(_at(plains, i), _at(unders, i)) for i in range(size)]
-                    assert many == bool(index), expression
-                    chosen = pairs[int(index) : int(index) + 1] if index else pairs
-                    below += [(a, b, way | ({"companion"} if a is None else set())) for a, b in chosen]
-        held = below
-    yield from (met for _, _, met in held)
-
-
-def _at(items: list[Any], index: int) -> Any:
-    return items[index] if index < len(items) else None
 
 
 def test_enough_mutants_in_every_clause_and_edition(
