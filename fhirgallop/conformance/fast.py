@@ -17,6 +17,7 @@ from jsonschema_rs import Draft202012Validator, RegexOptions
 
 from fhirgallop.conformance import fast_profiles, invariants, references, structure, walk
 from fhirgallop.conformance.fast_formats import ID, UUID
+from fhirgallop.conformance.fast_logic import Logic
 from fhirgallop.conformance.fast_residue import Check, codes_apart
 from fhirgallop.conformance.fast_schema import Form, Schema, SchemaBuilder
 from fhirgallop.conformance.node import Node
@@ -137,7 +138,9 @@ def _form(
     form = fast_profiles.form(builder, kind, declared, implied)
     if form is None:
         return None
-    return _compiled(form.presence), _compiled({**form.schema, "$defs": builder.definitions}), form
+    logic = Logic(builder.definitions)
+    definitions = {key: logic.tidy(schema) for key, schema in builder.definitions.items()}
+    return _compiled(form.presence), _compiled({**logic.tidy(form.schema), "$defs": definitions}), form
 
 
 def _bundle(value: dict[str, Any], known: Registry, text: bytes | None) -> list[str] | None:

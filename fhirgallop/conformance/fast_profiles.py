@@ -14,7 +14,7 @@ from urllib.parse import unquote
 
 from fhirgallop.conformance.editions.model import Binding, Child, TypeDef, TypeRef
 from fhirgallop.conformance.fast_invariants import REFUSED, fragment
-from fhirgallop.conformance.fast_logic import beyond, containing, never_both
+from fhirgallop.conformance.fast_logic import Logic, containing, never_both
 from fhirgallop.conformance.fast_schema import (
     Form,
     Schema,
@@ -73,6 +73,7 @@ class _Narrowing:
 
     def __init__(self, builder: SchemaBuilder) -> None:
         self._builder = builder
+        self._logic = Logic(builder.definitions)
 
     def root(self, schema: Schema, profile: Profile, definition: TypeDef, targets: dict[str, Any]) -> None:
         """Narrows a resource's schema, and the types its references may lead to inside a Bundle."""
@@ -202,7 +203,7 @@ class _Narrowing:
             if part.slices:
                 raise Unsupported
             match = matches[name]
-            member = beyond(self._value(array["items"], part, type_name, urn=urn), [items, match])
+            member = self._logic.beyond(self._value(array["items"], part, type_name, urn=urn), [items, match])
             if type_name == "Coding":
                 ask(items, member.pop("required", ()))  # of all alike: few codings have no code
             if member:
