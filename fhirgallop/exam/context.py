@@ -156,8 +156,6 @@ def _codings(row: Mapping[str, str]) -> tuple[Coding, ...]:
     for column, system in (("snomed", systems.SNOMED), ("loinc", systems.LOINC)):
         if row[column]:
             fit: Literal["exact", "broader"] = "broader" if row.get(f"{column}_fit") == "broader" else "exact"
-            sure: Literal["high", "medium"] = (
-                "medium" if row[f"{column}_confidence"] == "medium" else "high"
-            )
+            sure: Literal["high", "medium"] = "medium" if row[f"{column}_confidence"] == "medium" else "high"
             found.append(Coding(system, row[column], row[f"{column}_display"], fit, sure))
     return (*found, Coding(systems.FINDINGS, row["id"], row["label"], "exact", "own"))
