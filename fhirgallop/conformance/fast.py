@@ -278,7 +278,7 @@ def _envelope(known: Registry, asks: bool) -> Draft202012Validator:
 
 
 def _compiled(schema: Schema) -> Draft202012Validator:
-    return Draft202012Validator(schema, pattern_options=RegexOptions())
+    return Draft202012Validator(schema, pattern_options=RegexOptions(), validate_formats=True)
 
 
 @lru_cache(maxsize=8)

@@ -167,11 +167,16 @@ def _group(word: str) -> tuple[str, ...]:
 
 
 def _without_idle(schema: Schema) -> Schema:
-    """Without the form of a text where the texts are listed, if all of them have it."""
+    """Without what follows from the rest: the form of listed texts, and that there is at least one."""
+    idle: set[str] = set()
     form = {word: said for word, said in schema.items() if word in _FORM}
     if "enum" in schema and form and all(is_valid(form, value) for value in schema["enum"]):
-        return {word: said for word, said in schema.items() if word not in form}
-    return schema
+        idle |= form.keys()
+    if schema.get("minProperties") == 1 and schema.get("required"):
+        idle.add("minProperties")
+    if schema.get("minItems") == 1 and "contains" in schema and schema.get("minContains", 1) >= 1:
+        idle.add("minItems")
+    return {word: said for word, said in schema.items() if word not in idle}
 
 
 def never_both(one: Schema, other: Schema) -> bool:

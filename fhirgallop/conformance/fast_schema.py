@@ -14,7 +14,7 @@ from dataclasses import dataclass, field
 from typing import Any
 
 from fhirgallop.conformance.editions.model import Binding, Child, Element, TypeDef
-from fhirgallop.conformance.fast_formats import ID, PATTERNS, TEXT, UUID
+from fhirgallop.conformance.fast_formats import ID, UUID, text
 from fhirgallop.conformance.fast_invariants import REFUSED, fragment
 from fhirgallop.conformance.fast_residue import CHECKS, Check
 from fhirgallop.conformance.primitives import RANGES
@@ -86,10 +86,10 @@ class SchemaBuilder:
             "type": "object",
             "properties": {
                 "resourceType": {"enum": ["Bundle"]},
-                "id": {"type": "string", "pattern": PATTERNS["id"]},
+                "id": text("id"),
                 "meta": self.type("Meta"),
                 "type": {"enum": ["transaction", "batch", "collection"]},
-                "timestamp": {"type": "string", "pattern": PATTERNS["instant"]},
+                "timestamp": text("instant"),
             },
             "required": ["resourceType", "type", "entry"],
             "additionalProperties": False,
@@ -275,8 +275,7 @@ class SchemaBuilder:
             return {"type": "integer", "minimum": low, "maximum": high}
         if definition.json == "decimal":
             return {"type": "number", "minimum": -_LIMIT, "maximum": _LIMIT}
-        pattern = PATTERNS.get(name, TEXT)
-        return {"type": "string", "pattern": pattern} | ({"maxLength": 2**20} if pattern == TEXT else {})
+        return text(name)
 
 
 def _apart(child: Child) -> bool:
