@@ -128,6 +128,16 @@ _ROWS = (
         "hasValue() is false for every Quantity, so that the rule never bites",
     ),
     Correction(
+        "contained.where((('#'+id in (%resource.descendants().reference | %resource.descendants().as(canonical) | %resource.descendants().as(uri) | %resource.descendants().as(url))) or descendants().where(reference = '#').exists() or descendants().where(as(canonical) = '#').exists() or descendants().where(as(canonical) = '#').exists()).not()).trace('unmatched', id).empty()",
+        "contained.where(((id.exists() and ('#'+id in (%resource.descendants().reference | %resource.descendants().as(canonical) | %resource.descendants().as(uri) | %resource.descendants().as(url)))) or descendants().where(reference = '#').exists() or descendants().where(as(canonical) = '#').exists() or descendants().where(as(uri) = '#').exists()).not()).trace('unmatched', id).empty()",
+        "a contained resource without an id gives an empty result (R4B asks for the id)",
+    ),
+    Correction(
+        "contained.where((('#'+id in (%resource.descendants().reference | %resource.descendants().ofType(canonical) | %resource.descendants().ofType(uri) | %resource.descendants().ofType(url))) or descendants().where(reference = '#').exists() or descendants().where(ofType(canonical) = '#').exists() or descendants().where(ofType(canonical) = '#').exists()).not()).trace('unmatched', id).empty()",
+        "contained.where(((id.exists() and ('#'+id in (%resource.descendants().reference | %resource.descendants().ofType(canonical) | %resource.descendants().ofType(uri) | %resource.descendants().ofType(url)))) or descendants().where(reference = '#').exists() or descendants().where(ofType(canonical) = '#').exists() or descendants().where(ofType(canonical) = '#').exists()).not()).trace('unmatched', id).empty()",
+        "a contained resource without an id gives an empty result (R4B asks for the id)",
+    ),
+    Correction(
         "min.empty() or max.empty() or (max = '*') or iif(max != '*', min <= max.toInteger())",
         "min.empty() or max.empty() or (max = '*') or max.toInteger().empty() or (min <= max.toInteger())",
         "a maximum that is no number gives an empty result; eld-3 says that it is none",

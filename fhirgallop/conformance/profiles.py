@@ -187,7 +187,8 @@ def declared(node: Node) -> list[str]:
     """The profiles that a resource says it meets."""
     meta = node.value.get("meta") if isinstance(node.value, Mapping) else None
     named = meta.get("profile") if isinstance(meta, Mapping) else None
-    return [p for p in named if isinstance(p, str) and p] if isinstance(named, list) else []
+    # one with white space is no canonical, which the primitives clause says
+    return [p for p in named if isinstance(p, str) and p.split() == [p]] if isinstance(named, list) else []
 
 
 def _as_sliced(rule: Rule) -> Rule:

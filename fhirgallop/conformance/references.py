@@ -139,6 +139,9 @@ def check(node: Node, edition: Edition, resolve: Resolve) -> Iterator[Issue]:
             yield _wrong_target(node, targets, "the type that this reference names")
     elif node.type_name == "canonical" and isinstance(node.value, str) and node.value.startswith("#"):
         target = resolve(node, node.value)
+        if target is None:
+            said = "No contained resource has the id that stands behind '#'. Add it, or correct the id."
+            yield Issue("error", "not-found", "canonical-contained", said, expression=node.expression)
         targets = (
             next((t.targets for t in node.element.types if t.code == "canonical"), ()) if node.element else ()
         )

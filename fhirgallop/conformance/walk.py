@@ -53,6 +53,7 @@ def _object_clauses(node: Node, known: Registry, scope: Scope) -> Iterator[Issue
     yield from bindings.check(node, known)
     if node.type_name == "Reference":
         yield from references.check(node, edition, scope.resolve)
+        yield from bundles.check_reference(node, scope.resolve)
     elif node.type_name == "Extension":
         yield from extensions.check(node, known)
     elif node.type_name == "Bundle.entry":

@@ -16,7 +16,7 @@ def name(key: object) -> str:
 
 def canonical(url: object) -> str:
     """A canonical address as the text may show it."""
-    return url if isinstance(url, str) and _CANONICAL.fullmatch(url) else "an address"
+    return url if isinstance(url, str) and _CANONICAL.fullmatch(url) else "(address not shown)"
 
 
 def one_of(names: Iterable[str], limit: int = 8) -> str:

@@ -288,7 +288,9 @@ def test_contained_resources(observation: dict[str, Any], errors: Errors) -> Non
     assert errors({**observation, "contained": [patient, patient]}) == [
         ("contained-id", "Observation.contained[1]")
     ]
-    assert errors({**observation, "contained": [patient, {"resourceType": "Heart"}]}) == [
+    heart = {"resourceType": "Heart", "id": "h"}
+    device = {"device": {"reference": "#h"}}
+    assert errors({**observation, **device, "contained": [patient, heart]}) == [
         ("resource-type-unknown", "Observation.contained[1]")
     ]
     assert ("dom-3", "Observation") in errors({**observation, "contained": [patient, {**patient, "id": "q"}]})
