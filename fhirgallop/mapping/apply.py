@@ -74,12 +74,14 @@ class CompiledMap:
     def apply(self, record: LocalRecord) -> Mapped:
         """Reads one record."""
         run, reader = Run(record), self._record
+        strangers = self._strangers(record)
+        run.strangers = any(self.blanks.filled(record.fields[name]) for name in strangers)
         patient, identifier = reader.patient(run), reader.identifier(run)
         moment = run.moment = reader.time(run)
         status, encounter, examiner = reader.status(run), reader.encounter(run), reader.examiner(run)
         for reading in self._readings:
             reading(run)
-        unread = self._unread(run)
+        unread = self._unread(run, strangers)
         exam = None
         if patient and identifier and moment:
             template = self.template
@@ -98,16 +100,19 @@ class CompiledMap:
             )
         return Mapped(exam, tuple(run.issues), unread, tuple(run.unknown))
 
-    def _unread(self, run: Run) -> tuple[str, ...]:
-        """Names, and notes, everything that no line has read."""
-        found = []
+    def _strangers(self, record: LocalRecord) -> list[str]:
+        """Fields that the map neither reads nor ignores."""
         # Most records hold nothing unknown, which one comparison of sets tells.
-        left = [] if run.fields.keys() <= self._known else [n for n in run.fields if n not in self._known]
-        for name in left:
-            if not self.ignores(name):
-                words = "No line of the map reads this field; add a line, or ignore it with a reason."
-                run.issue("warning", "incomplete", "map-field-unread", words, name)
-                found.append(name)
+        if record.fields.keys() <= self._known:
+            return []
+        return [name for name in record.fields if name not in self._known and not self.ignores(name)]
+
+    def _unread(self, run: Run, strangers: list[str]) -> tuple[str, ...]:
+        """Names, and notes, everything that no line has read."""
+        found = list(strangers)
+        for name in strangers:
+            words = "No line of the map reads this field; add a line, or ignore it with a reason."
+            run.issue("warning", "incomplete", "map-field-unread", words, name)
         for name in self._contingent:
             if name not in run.settled and self.blanks.filled(run.fields.get(name)):
                 words = (

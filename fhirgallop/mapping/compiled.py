@@ -99,8 +99,7 @@ class _FindingLine:
             if conditional:
                 run.settled.add(name)
             if field is None:
-                # A missing column is not a blank box; forms that omit blanks are not tables.
-                if blank and run.record.form != "table":
+                if blank and run.blank_for_missing(name):
                     self._put(run, blank, None)
                 return
             if not is_plain(field):

@@ -37,9 +37,10 @@ class NamingLine:
         line, name = self._line, self._line.field
         run.settled.add(name)
         field = run.fields.get(name)
-        if field is None and run.record.form == "table":
-            return
-        found = self._found(run, field)
+        if field is None:
+            found = list(self._blank) if self._blank and run.blank_for_missing(name) else []
+        else:
+            found = self._found(run, field)
         notes: tuple[str, ...] = ()
         if line.note:
             run.settled.add(line.note)
@@ -55,8 +56,8 @@ class NamingLine:
             run.notes += notes
         run.entries += found
 
-    def _found(self, run: Run, field: Field | None) -> list[Entry]:
-        if field is not None and (presence := TAKEN_OUT.get(field.status)):
+    def _found(self, run: Run, field: Field) -> list[Entry]:
+        if presence := TAKEN_OUT.get(field.status):
             fields = (self._line.field,)
             return [
                 Entry(finding, presence, instance=instance, fields=fields)
@@ -66,12 +67,17 @@ class NamingLine:
         if not values:
             return list(self._blank)
         found: dict[Entry, None] = {}
+        unknown = False
         for token in boxes.tokens(values, self._named.separator):
             entry = self._table.find(token)
             if isinstance(entry, Entry):
                 found[entry] = None
             elif entry is None:
+                unknown = True
                 self._unknown(run, token)
+        if unknown:
+            # The unknown wording may be any of those that were not named.
+            return list(found)
         named = {entry.finding for entry in found}
         return [*found, *(entry for entry in self._unlisted if entry.finding not in named)]
 

@@ -23,7 +23,18 @@ class UnknownValue:
 class Run:
     """One record being read by one map."""
 
-    __slots__ = ("entries", "fields", "issues", "moment", "noted", "notes", "record", "settled", "unknown")
+    __slots__ = (
+        "entries",
+        "fields",
+        "issues",
+        "moment",
+        "noted",
+        "notes",
+        "record",
+        "settled",
+        "strangers",
+        "unknown",
+    )
 
     def __init__(self, record: LocalRecord) -> None:
         self.record = record
@@ -33,6 +44,8 @@ class Run:
         self.unknown: list[UnknownValue] = []
         self.notes: list[str] = []
         self.moment: Moment | None = None
+        # Whether fields that the map does not know are filled in: a missing box may be one of them.
+        self.strangers = False
         # Fields whose content has gone into an entry or an issue, and fields whose own remarks have.
         self.settled: set[str] = set()
         self.noted: set[str] = set()
@@ -44,6 +57,22 @@ class Run:
         self.issues.append(
             Issue(severity, code, rule, text, field=name[:200], source=record.source, line=line)
         )
+
+    def blank_for_missing(self, name: str) -> bool:
+        """Whether a box that is not in the record may count as an empty one.
+
+        Forms that leave blanks out are not tables; and beside filled fields that nobody reads, the box may be
+        there under another name, so that nothing is said of it.
+        """
+        if self.record.form == "table":
+            return False
+        if self.strangers:
+            words = (
+                "The record lacks this field and holds others that no line reads; one of them may be it, so "
+                "blank-means was not applied and nothing is said. Name it in the map, or ignore the others."
+            )
+            self.issue("warning", "incomplete", "map-blank-not-applied", words, name)
+        return not self.strangers
 
     def unknown_value(self, severity: Severity, text: str, name: str, value: Value) -> None:
         """Notes a value that no line knows."""
