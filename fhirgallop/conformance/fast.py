@@ -8,7 +8,7 @@ issues returned, as the thorough pass would say; whatever is refused may still b
 from __future__ import annotations
 
 import re
-from collections.abc import Callable, Iterable, Mapping
+from collections.abc import Callable, Mapping
 from dataclasses import dataclass
 from functools import lru_cache
 from typing import Any
@@ -70,15 +70,17 @@ class _Ready:
         is_valid: the validator.
         checks: keys whose values are looked at apart, with the check.
         components: whether codes of components are to be compared with the resource's own.
-        targets: keys with a single reference, and the resource types it may lead to.
-        deeper: keys with many references, or with nested types that hold some; the same of each.
+        single: keys with a single reference, and the resource types it may lead to.
+        many: keys with a list of references, likewise.
+        deeper: keys of nested types that hold references, and where in them.
     """
 
     is_valid: Callable[[object], bool]
     checks: tuple[tuple[str, Check], ...]
     components: bool
-    targets: tuple[tuple[str, frozenset[str]], ...]
-    deeper: tuple[tuple[str, Any], ...]
+    single: tuple[tuple[str, frozenset[str]], ...]
+    many: tuple[tuple[str, frozenset[str]], ...]
+    deeper: tuple[tuple[str, Mapping[str, Any]], ...]
 
 
 def _accepted(resource: dict[str, Any], kind: str, known: Registry) -> _Ready | None:
@@ -118,15 +120,16 @@ def _fitting(
     if found is None or not found[0].is_valid(dict.fromkeys(keys)):
         return None
     _, validator, form = found
-    children = {key: known.edition.child(kind, key) for key in form.targets}
-    single = {k for k, c in children.items() if c and c.type_name == "Reference" and not c.element.many}
-    targets = {key: form.targets[key] for key in keys if key in form.targets}
+    targets = tuple((key, form.targets[key]) for key in keys if key in form.targets)
+    children = {key: known.edition.child(kind, key) for key, _ in targets}
+    lists = {key for key, child in children.items() if child is not None and child.element.many}
     return _Ready(
         validator.is_valid,
-        checks=tuple((k, form.checks[k]) for k in keys if k in form.checks),
-        components="component" in keys and any(k.startswith("value") for k in keys),
-        targets=tuple((k, step) for k, step in targets.items() if k in single),
-        deeper=tuple((k, step) for k, step in targets.items() if k not in single),
+        checks=tuple((key, form.checks[key]) for key in keys if key in form.checks),
+        components="component" in keys and any(key.startswith("value") for key in keys),
+        single=tuple((k, step) for k, step in targets if isinstance(step, frozenset) and k not in lists),
+        many=tuple((k, step) for k, step in targets if isinstance(step, frozenset) and k in lists),
+        deeper=tuple((k, step) for k, step in targets if not isinstance(step, frozenset)),
     )
 
 
@@ -164,14 +167,9 @@ def _bundle(value: dict[str, Any], known: Registry, text: bytes | None) -> list[
             doubtful.append(index)
             if len(doubtful) > max(4, len(entries) // 4):
                 return None
-            continue
-        for key, allowed in ready.targets:
-            led = urls.get(resource[key].get("reference"))
-            if led is not None and led not in allowed:
-                return None
-        if ready.deeper and not _targets_right(resource, ready.deeper, urls):
+        elif not _targets_right(resource, ready, urls):
             return None
-        if "text" not in resource and kind not in _no_narrative(known):
+        elif "text" not in resource and kind not in _no_narrative(known):
             missing.append(f"Bundle.entry[{index}].resource")
     return missing if not doubtful or _judged_well(value, text, doubtful, known) else None
 
@@ -191,29 +189,46 @@ def _judged_well(value: dict[str, Any], text: bytes | None, places: list[int], k
 
 def _consistent(entry: Mapping[str, Any], resource: Mapping[str, Any], kind: str) -> bool:
     """Whether fullUrl and request agree with the resource's type and id, as the bundles clause asks."""
+    place = f"{kind}/{resource['id']}" if "id" in resource else None
     url = entry["fullUrl"]
-    if not url.startswith("urn:uuid:") and (
-        "id" not in resource or not url.endswith(f"/{kind}/{resource['id']}")
-    ):
+    if url[:9] != "urn:uuid:" and (place is None or not url.endswith(f"/{place}")):
         return False
     if "request" not in entry:
         return True
-    asked = entry["request"]["url"]
-    if entry["request"]["method"] == "POST":
+    request = entry["request"]
+    asked = request["url"]
+    if request["method"] == "POST":
         return bool(asked == kind)
-    return bool(asked.startswith(f"{kind}?") or ("id" in resource and asked == f"{kind}/{resource['id']}"))
+    return bool(asked == place or asked.partition("?")[0] == kind != asked)
 
 
-def _targets_right(held: Mapping[str, Any], plan: Iterable[tuple[str, Any]], urls: Mapping[str, str]) -> bool:
+def _targets_right(resource: Mapping[str, Any], ready: _Ready, urls: Mapping[str, str]) -> bool:
     """Whether every urn:uuid reference that is a full URL of the Bundle leads to a type allowed."""
-    for key, step in plan:
-        value = held.get(key, ())
-        for item in value if type(value) is list else (value,):
-            if type(step) is dict:
-                if item and not _targets_right(item, step.items(), urls):
-                    return False
-            elif item and (led := urls.get(item.get("reference"))) is not None and led not in step:
+    for key, allowed in ready.single:
+        held = resource[key]
+        if "reference" in held and (led := urls.get(held["reference"])) and led not in allowed:
+            return False
+    for key, allowed in ready.many:
+        for held in resource[key]:
+            if "reference" in held and (led := urls.get(held["reference"])) and led not in allowed:
                 return False
+    return not ready.deeper or all(_led_right(resource[key], plan, urls) for key, plan in ready.deeper)
+
+
+def _led_right(value: Any, plan: Mapping[str, Any], urls: Mapping[str, str]) -> bool:
+    """The same of a nested type."""
+    for held in value if type(value) is list else (value,):
+        for key, step in plan.items():
+            if key not in held:
+                continue
+            if type(step) is dict:
+                if not _led_right(held[key], step, urls):
+                    return False
+                continue
+            for item in held[key] if type(held[key]) is list else (held[key],):
+                led = urls.get(item.get("reference"))
+                if led is not None and led not in step:
+                    return False
     return True
 
 

@@ -8,6 +8,7 @@ from __future__ import annotations
 
 from collections.abc import Mapping, Sequence
 from copy import deepcopy
+from dataclasses import replace
 from itertools import combinations
 from typing import Any
 from urllib.parse import unquote
@@ -162,7 +163,7 @@ class _Narrowing:
         elif rule.children or rule.invariants:
             schema = self._opened(schema)
             try:
-                self._object(schema, rule, definition, urn=False)
+                self._object(schema, _of_objects(rule), definition, urn=False)
             except Unsupported:
                 return REFUSED
         return {**schema, "allOf": [*schema.get("allOf", ()), *extra]} if extra else schema
@@ -258,3 +259,11 @@ class _Narrowing:
                     raise Unsupported
                 found.append(name)
         return tuple(found)
+
+
+def _of_objects(rule: Rule) -> Rule:
+    """The rule without invariants of a moment's precision, which hold of any other type of value."""
+    return replace(
+        rule,
+        invariants=[i for i in rule.invariants if "text" not in (fragment(i.key, i.expression) or ())],
+    )

@@ -41,8 +41,12 @@ def validate(
         PackageError: a package is broken.
     """
     known = registry(edition, tuple(map(Path, packages))) if packages else registry(edition)
+    if type(resource) is dict and not profiles:  # nothing has to be read first
+        settled = fast.settle(resource, known)
+        if settled is not None:
+            return ordered(settled) if settled else settled
     read = source.read(resource)
-    if read.proved and not profiles:
+    if read.text is not None and read.proved and not profiles:
         settled = fast.settle(read.value, known, read.text, same=read.same)
         if settled is not None:
             return ordered(settled) if settled else settled
@@ -63,11 +67,27 @@ def thorough(read: Source, known: Registry, profiles: Sequence[str] = ()) -> lis
     if root is None:
         return ordered(issues)
     if text is not None:
-        issues.extend(_repeated(text, root, known.edition))
+        issues = [
+            *(
+                placed
+                for issue in dict.fromkeys(issues)
+                for placed in _of_text(issue, text, root, known.edition)
+            ),
+            *_repeated(text, root, known.edition),
+        ]
     issues.extend(walk.judge(root, known, references.scope_of(root, known.edition), profiles))
     if text is not None:
         return ordered(_placed(issues, text, root))
     return ordered(issues)
+
+
+def _of_text(issue: Issue, text: bytes, root: Node, edition: Edition) -> Iterator[Issue]:
+    """An issue of the text itself, at each value that gives it, or at the root."""
+    places = source.odd(text, issue.rule) if issue.rule in ("json-number", "json-surrogate") else []
+    for path, line, column in places:
+        yield replace(issue, expression=_expression(path, root, edition), line=line, column=column)
+    if not places:
+        yield replace(issue, expression=root.expression)
 
 
 def _repeated(text: bytes, root: Node, edition: Edition) -> Iterator[Issue]:
@@ -92,6 +112,8 @@ def _expression(path: JsonPath, root: Node, edition: Edition) -> str:
         place = edition.child(node.type_name, key)
         if isinstance(held, list) and place is not None and place.element.many:
             continue
+        if place is not None and place.primitive and not isinstance(held, Mapping | list):
+            return node.child(held, None, place, key, index).expression
         if place is None or not isinstance(held, Mapping):
             break
         child = node.child(held, None, place, key, index)
