@@ -6,7 +6,7 @@ The text has been parsed before, so it is known to be well-formed. One pass, no 
 from __future__ import annotations
 
 import re
-from collections.abc import Iterable, Iterator
+from collections.abc import Callable, Iterable, Iterator
 from typing import Any
 
 import orjson
@@ -74,6 +74,33 @@ def repeated_keys(text: bytes) -> list[tuple[Path, int]]:
             if stack:
                 path.append(step)
             stack.append(set() if kind == "object" else 0)
+    return found
+
+
+def odd_values(text: bytes, is_odd: Callable[[bytes], bool]) -> list[tuple[Path, int]]:
+    """Path and offset of each text, number or word, as written, that is odd; in the order of the text."""
+    found: list[tuple[Path, int]] = []
+    path: list[str | int] = []
+    # one entry an open object (-1) or array (index of the next item)
+    inside: list[int] = []
+    step: str | int = ""
+    for kind, offset, key in _values(text):
+        if kind == "close":
+            inside.pop()
+            if path:
+                path.pop()
+            continue
+        if inside:
+            step = key if inside[-1] < 0 else inside[-1]
+            inside[-1] += inside[-1] >= 0
+        if kind == "plain":
+            token = _TOKEN.match(text, offset)
+            if token is not None and is_odd(token.group()):
+                found.append(((*path, step) if inside else (), offset))
+            continue
+        if inside:
+            path.append(step)
+        inside.append(-1 if kind == "object" else 0)
     return found
 
 

@@ -15,7 +15,7 @@ from typing import Any, NamedTuple
 
 import orjson
 
-from fhirgallop.conformance.scan import Path, offsets, repeated_keys
+from fhirgallop.conformance.scan import Path, odd_values, offsets, repeated_keys
 from fhirgallop.outcome import Issue
 
 MAX_BYTES = 256 * 1024 * 1024
@@ -102,7 +102,9 @@ def exact(text: bytes) -> Source:
         return Source(None, text, proved=False, issues=(*issues, _fatal("json-syntax", said, line, column)))
     except RecursionError:
         return Source(None, text, proved=False, issues=(*issues, too_deep()))
-    issues.extend(numbers.issues)
+    if numbers.odd:
+        said = f"No JSON number: NaN, an infinity or over {MAX_NUMBER} characters. Write a shorter one."
+        issues.append(Issue("error", "value", "json-number", said))
     if r"\u" in decoded and has_lone_surrogate(value):
         said = "A text holds half of a surrogate pair. Write whole characters."
         issues.append(Issue("error", "value", "json-surrogate", said))
@@ -156,6 +158,22 @@ def duplicates(text: bytes) -> list[tuple[Path, int, int]]:
     found = repeated_keys(text)
     places = _positions(text, (offset for _, offset in found))
     return [(path, *places[offset]) for path, offset in found]
+
+
+def odd(text: bytes, rule: str) -> list[tuple[Path, int, int]]:
+    """Path, line and column of each value with an issue of the text itself: a number, half a surrogate."""
+    text = text.removeprefix(_BOM)
+    found = odd_values(text, _is_odd_number if rule == "json-number" else _is_half_a_pair)
+    places = _positions(text, (offset for _, offset in found))
+    return [(path, *places[offset]) for path, offset in found]
+
+
+def _is_odd_number(token: bytes) -> bool:
+    return token in (b"NaN", b"Infinity", b"-Infinity") or (token[:1] != b'"' and len(token) > MAX_NUMBER)
+
+
+def _is_half_a_pair(token: bytes) -> bool:
+    return b"\\u" in token and _LONE.search(json.loads(token)) is not None
 
 
 def locate(text: bytes, paths: Iterable[Path]) -> dict[Path, tuple[int, int]]:
@@ -215,10 +233,10 @@ def _positions(text: bytes, offsets: Iterable[int]) -> dict[int, tuple[int, int]
 
 
 class _Numbers:
-    """Reads numbers exactly and notes those that are no JSON numbers or beyond all reason."""
+    """Reads numbers exactly and notes whether any is no JSON number or beyond all reason."""
 
     def __init__(self) -> None:
-        self.issues: list[Issue] = []
+        self.odd = False
 
     def decimal(self, digits: str) -> Decimal:
         return Decimal(0) if self._too_long(digits) else Decimal(digits)
@@ -226,14 +244,10 @@ class _Numbers:
     def integer(self, digits: str) -> int:
         return 0 if self._too_long(digits) else int(digits)
 
-    def constant(self, word: str) -> Decimal:
-        said = f"{word} is no JSON number. Leave the element out and say why by an extension."
-        self.issues.append(Issue("error", "value", "json-number", said))
+    def constant(self, _word: str) -> Decimal:
+        self.odd = True
         return Decimal(0)
 
     def _too_long(self, digits: str) -> bool:
-        if len(digits) <= MAX_NUMBER:
-            return False
-        said = f"A number has more than {MAX_NUMBER} characters. Write it shorter."
-        self.issues.append(Issue("error", "value", "json-number", said))
-        return True
+        self.odd |= len(digits) > MAX_NUMBER
+        return len(digits) > MAX_NUMBER
