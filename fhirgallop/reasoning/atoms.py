@@ -19,6 +19,10 @@ from fhirgallop.reasoning.vocabulary import Cutoff, Window
 
 # What is said of another valve, side or site is not said of this one.
 IDENTITY: Final = frozenset({"valve", "side", "chamber", "site", "bp-site", "method", "posture", "exertion"})
+# "Not heard" without a place is said of every place, but not of every way of listening.
+_METHOD: Final = frozenset({"method"})
+# Names that an examiner may give to a finding: there is nothing to go and look for when nobody gave one.
+NAMES: Final = frozenset({"eponym", "meaning", "suspected-lesion"})
 _SAYS_NOTHING: Final = frozenset(
     {"other", "undetermined", "unknown", "not-done", "not-assessable", "indeterminate", "not-examined"}
 )
@@ -145,6 +149,10 @@ class Atom:
         return self._said_by(item)
 
     def _said_by(self, item: Item) -> Truth:
+        elsewhere = _METHOD if item.state is State.ABSENT else IDENTITY
+        if any(h.axis in elsewhere and h.holds(item) is Truth.UNKNOWN for h in self.having):
+            # It may be about another valve, side or site.
+            return Truth.UNKNOWN
         if self.want == "ever":
             if item.state not in (State.PRESENT, State.HISTORY):
                 return Truth.FALSE if item.state is State.ABSENT else Truth.UNKNOWN
@@ -170,6 +178,10 @@ class Atom:
         if self.against is not None:
             return Truth.UNKNOWN if self.against.isdisjoint(item.answers) else Truth.FALSE
         return Truth.UNKNOWN if _SAYS_NOTHING.issuperset(item.answers) else Truth.FALSE
+
+    def unnamed(self, item: Item) -> bool:
+        """True when it asks for a name that nobody gave the item."""
+        return any(h.axis in NAMES and h.holds(item) is Truth.UNKNOWN for h in self.having)
 
     def grounds(self, view: View) -> list[Ground]:
         """The items in question, each placed in the window."""

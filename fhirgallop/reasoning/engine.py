@@ -6,10 +6,12 @@ from collections.abc import Iterator
 from dataclasses import dataclass, replace
 from typing import Final
 
+from fhirgallop.reasoning.atoms import NAMES
 from fhirgallop.reasoning.conclusion import CONFLICTING, FIRED, Conclusion, Outcome
 from fhirgallop.reasoning.conditions import Support, View, joined, smallest, steps
 from fhirgallop.reasoning.items import Ground, ItemTable
 from fhirgallop.reasoning.logic import Truth
+from fhirgallop.reasoning.measured import GRADE_OF_SUBJECT
 from fhirgallop.reasoning.program import Saying
 from fhirgallop.reasoning.rule import Rule
 from fhirgallop.reasoning.rulebook import Rulebook
@@ -59,6 +61,8 @@ def grounded(saying: Saying, view: View) -> Conclusion | None:
         return None
     subject = tuple(sorted(saying.subject, key=_ground_key))
     unknown = _unknowns(rule, saying.subject_truth, when, other, about)
+    if unknown and not (unknown := tuple(filter(_worth_asking, unknown))):
+        return None
     return Conclusion(rule, outcome, rule.strength, Tier.T0, subject, unknown=unknown)
 
 
@@ -125,6 +129,11 @@ def _unknowns(rule: Rule, subject: Truth, when: Truth, other: Truth, view: View)
     if rule.other is not None and other is Truth.UNKNOWN:
         found.update(dict.fromkeys(rule.other.unknowns(view)))
     return tuple(found)
+
+
+def _worth_asking(datum: str) -> bool:
+    """Not a name nobody gave, nor the loudness of a murmur nobody graded: there is nothing to look for."""
+    return datum.partition("#")[2] not in NAMES and datum not in GRADE_OF_SUBJECT
 
 
 def _ordered(supports: tuple[Support, ...]) -> tuple[Ground, ...]:

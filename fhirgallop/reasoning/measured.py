@@ -5,6 +5,7 @@ from __future__ import annotations
 from collections.abc import Iterator
 from dataclasses import dataclass
 from decimal import Decimal
+from typing import Final
 
 from fhirgallop.exam.context import Source, State
 from fhirgallop.exam.entry import Measure
@@ -16,6 +17,7 @@ from fhirgallop.reasoning.logic import Truth, all_of
 from fhirgallop.reasoning.vocabulary import Window, kinds
 
 Value = Decimal | bool | str
+GRADE_OF_SUBJECT: Final = ("subject.grade", "subject.scale")
 
 
 @dataclass(frozen=True, slots=True)
@@ -29,7 +31,7 @@ class Given:
 
     def ground(self, view: View) -> Ground | None:
         """The item it is read from: of the subject's own reading where there is one, else the newest."""
-        if self.fact in ("subject.grade", "subject.scale"):
+        if self.fact in GRADE_OF_SUBJECT:
             return Ground(view.subject) if view.subject is not None and view.subject.grade else None
         subject = view.subject
         found = []

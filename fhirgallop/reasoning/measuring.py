@@ -11,7 +11,7 @@ from fhirgallop.reasoning.atoms import Bound
 from fhirgallop.reasoning.block import Block
 from fhirgallop.reasoning.conditions import Any, Condition
 from fhirgallop.reasoning.defining import Vocabulary
-from fhirgallop.reasoning.measured import Computed, Given, Judged, Value
+from fhirgallop.reasoning.measured import GRADE_OF_SUBJECT, Computed, Given, Judged, Value
 from fhirgallop.reasoning.vocabulary import Window, kinds
 from fhirgallop.reasoning.yaml_tree import Text
 
@@ -19,7 +19,6 @@ MEASURED_KEYS: Final = (
     "judge", "compute", "given", "answer", "edition", "at-least", "above", "at-most", "below",
 )  # fmt: skip
 _NEVER: Final = Any(())
-_GRADE_PARTS: Final = ("subject.grade", "subject.scale")
 _CONSTANTS: Final[dict[str, Value]] = {"yes": True, "no": False}
 
 
@@ -68,7 +67,7 @@ def _given(block: Block, inputs: dict[str, Input], words: Vocabulary) -> tuple[G
         elif source in kinds():
             _check_unit(block, key.line, entry, source)
             found.append(Given(key.text, source, words.window_of(source)))
-        elif source in _GRADE_PARTS:
+        elif source in GRADE_OF_SUBJECT:
             found.append(Given(key.text, source, Window("", None)))
         else:
             constant = _constant(source)

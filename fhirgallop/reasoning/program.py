@@ -258,7 +258,7 @@ def subjects_of(subject: Atom, view: View) -> list[tuple[Truth, tuple[Ground, ..
             said = subject.test(ground.item)
             if said is Truth.TRUE:
                 found.append((Truth.TRUE, (ground,)))
-            elif said is Truth.UNKNOWN and doubtful is None:
+            elif said is Truth.UNKNOWN and doubtful is None and not subject.unnamed(ground.item):
                 doubtful = ground
     if found:
         return found

@@ -65,13 +65,18 @@ def next_datum(conclusions: Iterable[Conclusion], view: View, table: Sequence[Re
 
 
 def _could_settle(datum: str, conclusion: Conclusion, view: View) -> bool:
-    """True when the answer alone, whichever it is, could leave nothing unknown in the rule."""
+    """True when the answer alone, whichever it is, could leave nothing unknown in the rule.
+
+    A rule of which it is not even known whether it applies asks nothing: no chart says "no prosthesis".
+    """
+    rule = conclusion.rule
+    subject = conclusion.subject[0].item if conclusion.subject else None
+    if rule.when is not None and rule.when.judge(view.about(subject)) is not Truth.TRUE:
+        return False
     if len(conclusion.unknown) == 1:
         return True
     if "#" in datum:
         return False
-    rule = conclusion.rule
-    subject = conclusion.subject[0].item if conclusion.subject else None
     for truth in (Truth.TRUE, Truth.FALSE):
         trial = view.about(subject).assuming({datum: truth})
         judged = all_of(c.judge(trial) for c in (rule.when, rule.other) if c is not None)

@@ -9,15 +9,13 @@ import pytest
 
 from fhirgallop.reasoning.rulebook import load
 
-# Families of rows that have been written; a family is added here with its rule file.
-FAMILIES = ("S4", "JV", "PU", "BP", "AP", "EC", "RH", "UR")
-
 
 @pytest.fixture(scope="module")
 def rows(shared: Path) -> dict[str, dict[str, str]]:
     with (shared / "evidence" / "knowledge.tsv").open(encoding="utf-8", newline="") as file:
         found = {row["id"]: row for row in csv.DictReader(file, delimiter="\t")}
-    return {id_: row for id_, row in found.items() if id_.rpartition("-")[0] in FAMILIES}
+    assert len(found) == 266
+    return found
 
 
 def test_every_row_is_carried_out_or_left_out(rows: dict[str, dict[str, str]]) -> None:
@@ -47,11 +45,12 @@ def test_no_rule_is_louder_than_its_row(rows: dict[str, dict[str, str]]) -> None
 
 
 def test_how_a_source_was_seen_is_that_of_the_row(rows: dict[str, dict[str, str]]) -> None:
+    sureness = ["low", "moderate", "high"]
     words = {"seen": "excerpt", "memory": "memory", "common": "practice"}
     for rule in load().rules.values():
         for name in rule.rows:
             row = rows.get(name)
             if row is not None and row["source_access"]:
                 assert rule.seen == words[row["source_access"].split()[0]], rule.id
-                assert rule.confidence == row["confidence"], rule.id
+                assert sureness.index(rule.confidence) <= sureness.index(row["confidence"]), rule.id
                 assert rule.reading == row["read_verdict"], rule.id

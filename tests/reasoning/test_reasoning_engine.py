@@ -290,3 +290,61 @@ def test_all_published_ratios_are_there_or_left_out_with_a_reason() -> None:
     assert len(book.likelihoods) >= 38
     assert sum(name.startswith("LR ") for name in book.left_out) == 4
     assert len({row.id for row in book.likelihoods}) == len(book.likelihoods)
+
+
+@pytest.mark.parametrize(
+    ("recorded", "asked", "is_open"),
+    [
+        ({"id": "heart-sound.prosthetic", "answer": "muffled"},
+         "{not: {fact: heart-sound.prosthetic, answer: [crisp], with: {valve: [aortic]}}}", True),
+        ({"id": "heart-sound.prosthetic", "answer": "muffled", "with": {"valve": "aortic"}},
+         "{not: {fact: heart-sound.prosthetic, answer: [crisp], with: {valve: [aortic]}}}", False),
+        ({"id": "murmur.systolic", "with": {"timing": "mid-systolic"}},
+         "{not: {fact: murmur.systolic, with: {timing: [holosystolic], site: [left-sternal-border]}}}", True),
+        ({"id": "murmur.systolic", "is": "absent"},
+         "{fact: murmur.systolic, is: absent, with: {site: [left-sternal-border]}}", False),
+        ({"id": "murmur.systolic"},
+         "{not: {fact: murmur.systolic, is: absent, with: {site: [left-sternal-border]}}}", True),
+    ],
+)  # fmt: skip
+def test_what_may_be_about_another_valve_or_site_decides_nothing(
+    made: Make, recorded: dict[str, Any], asked: str, is_open: bool
+) -> None:
+    """An absence without a place is said of every place; a presence is not."""
+    book, issues = with_site(SITE.format(name="other-valve", other=asked), "site.yaml")
+    assert not issues
+    found = made([{"id": "heart-sound.s3"}, recorded], []).review(rules=book)
+    ours = [c.outcome for c in (*found.open, *found.contradictions) if c.rule.id == "site.other-valve"]
+    assert ours == (["open"] if is_open else ["conflict"])
+
+
+def test_nobody_is_asked_for_a_name_or_a_grade_that_was_not_given(made: Make) -> None:
+    found = made([{"id": "murmur.systolic"}, {"id": "murmur.diastolic"}], []).review()
+    asked = {datum for c in (*found.open, *found.companions) for datum in c.unknown}
+    assert asked
+    names = {"eponym", "meaning", "suspected-lesion"}
+    assert not {d for d in asked if d.partition("#")[2] in names or d.startswith("subject.")}
+
+
+def test_a_rule_that_may_not_apply_asks_nothing(made: Make) -> None:
+    """No chart says "no prosthesis", so a muffled click in nobody's chart is not worth the one line."""
+    found = made([{"id": "murmur.systolic", "with": {"timing": "holosystolic"}}], []).review()
+    assert found.next_datum is None or not found.next_datum.id.startswith(("device.", "procedure."))
+
+
+@pytest.mark.parametrize(
+    ("person", "silent"),
+    [
+        ([{"id": "patient.age-category", "answer": "infant"}], True),
+        ([{"id": "patient.age-category", "answer": "adult"}], False),
+        ([{"id": "patient.age-category", "answer": "adolescent"}, {"id": "patient.age", "value": "19 a"}],
+         False),
+    ],
+)  # fmt: skip
+def test_an_age_band_makes_a_child_where_no_age_is_known(
+    made: Make, person: list[dict[str, Any]], silent: bool
+) -> None:
+    low = [{"id": "vital.temperature", "value": "38.5 Cel"}]
+    chart = [{"id": "device.prosthetic-valve", "answer": "mechanical", "with": {"valve": "aortic"}}, *person]
+    raised = [c.rule.id for c in made(low, chart).review().raised]
+    assert raised == ([] if silent else ["prosthesis.fever"])
