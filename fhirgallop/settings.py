@@ -7,8 +7,9 @@ import json
 import os
 from pathlib import Path
 from typing import Final, Literal, Self
+from urllib.parse import urlsplit
 
-from pydantic import Field, ValidationError, model_validator
+from pydantic import Field, ValidationError, ValidationInfo, field_validator, model_validator
 from pydantic_settings import BaseSettings, SettingsConfigDict
 from pydantic_settings import SettingsError as SourceError
 
@@ -51,6 +52,32 @@ class Settings(BaseSettings):
         frozenset({"127.0.0.1", "::1", "localhost"}),
         description='Host names it may be called by (a JSON list); add that of a proxy: ["gallop.example"].',
     )
+    pages: str = Field(
+        "",
+        max_length=500,
+        description="Address under which users' browsers reach the service; cards link to nothing else, and "
+        "to nothing at all where it is empty. Its host must be among the names.",
+    )
+    cards_critical: bool = Field(
+        default=False, description="Mark urgent cards as critical for the record system; else as warnings."
+    )
+    cards_shadow: bool = Field(
+        default=False, description="Work every card out and log it by rule, and show none."
+    )
+
+    @field_validator("pages")
+    @classmethod
+    def _links_home(cls, pages: str, info: ValidationInfo) -> str:
+        """Cards may link only to hosts that were configured."""
+        try:
+            parts = urlsplit(pages)
+            known = parts.scheme in ("http", "https") and parts.hostname in info.data.get("names", ())
+            plain = not (parts.query or parts.fragment or parts.username) and pages.isprintable()
+        except ValueError:
+            known = plain = False
+        if pages and not (known and plain and " " not in pages):
+            raise ValueError("it must be an http or https address whose host is among the names")
+        return pages
 
     @model_validator(mode="after")
     def _stays_at_home(self) -> Self:

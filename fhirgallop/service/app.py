@@ -12,14 +12,18 @@ from fastapi.exceptions import RequestValidationError
 from starlette.exceptions import HTTPException
 from starlette.responses import Response
 
+from fhirgallop.cards.policy import Policy
 from fhirgallop.outcome import Issue
+from fhirgallop.reasoning import rulebook
 from fhirgallop.service import answers
 from fhirgallop.service.examinations import Examinations
 from fhirgallop.service.guard import guard
-from fhirgallop.service.routes import about, exams, maps, validation
+from fhirgallop.service.hook_desk import HookDesk, Manner
+from fhirgallop.service.routes import about, exams, hooks, maps, validation
 from fhirgallop.service.shelf import load_shelf
 from fhirgallop.settings import Settings
 from fhirgallop.storage.engine import open_database
+from fhirgallop.storage.hooks import HookStore
 from fhirgallop.storage.submissions import Submissions
 from fhirgallop.version import VERSION
 
@@ -60,7 +64,10 @@ def create_app(settings: Settings, clock: Callable[[], datetime] = now) -> FastA
     app.state.settings = settings
     app.state.shelf = shelf
     app.state.examinations = Examinations(Submissions(engine), clock)
-    for router in (exams.router, validation.router, maps.router, about.router):
+    app.state.clock = clock
+    manner = Manner(Policy(shadow=settings.cards_shadow), settings.cards_critical, settings.pages.rstrip("/"))
+    app.state.hooks = HookDesk(HookStore(engine), clock, rulebook.load(), manner)
+    for router in (exams.router, hooks.router, validation.router, maps.router, about.router):
         app.include_router(router)
     app.middleware("http")(guard)
     app.exception_handler(answers.RefusalError)(_refused)

@@ -61,7 +61,7 @@ class Submissions:
         """
         same = (submissions.c.exam == exam, submissions.c.edition == edition, submissions.c.snomed == snomed)
         query = select(*_COLUMNS).where(*same).order_by(submissions.c.version.desc()).limit(1)
-        with _told(), self._engine.connect() as connection:
+        with told(), self._engine.connect() as connection:
             row = connection.execute(query).one_or_none()
         return Submission(*row) if row else None
 
@@ -73,7 +73,7 @@ class Submissions:
         """
         values = {name: getattr(submission, name) for name in _NAMES}
         try:
-            with _told(), self._engine.begin() as connection:
+            with told(), self._engine.begin() as connection:
                 connection.execute(insert(submissions).values(**values))
         except IntegrityError:
             return False
@@ -81,7 +81,7 @@ class Submissions:
 
 
 @contextmanager
-def _told() -> Iterator[None]:
+def told() -> Iterator[None]:
     """A failure of the database as a StorageError, without the statement and what it held."""
     try:
         yield

@@ -1,0 +1,299 @@
+"""Cards in the form of CDS Hooks: what the alert policy decided, as the JSON a client shows.
+
+Source: CDS Hooks 2.0.1, "CDS Service Response". Everything that came from a record is escaped for Markdown;
+no finding is ever edited: a suggestion creates a Task and nothing else.
+"""
+
+from __future__ import annotations
+
+import re
+import uuid
+from collections.abc import Iterable, Iterator, Mapping
+from dataclasses import dataclass
+from typing import Any, Final
+
+from fhirgallop.cards import words
+from fhirgallop.cards.card import Card, Section, combination_digest, entry_digest, may_be_true
+from fhirgallop.cards.memory import Answer
+from fhirgallop.cards.policy import Ask, Decision
+from fhirgallop.cards.safety import SAFETY_TEXTS
+from fhirgallop.cards.today import Held
+from fhirgallop.codes import systems
+from fhirgallop.reasoning.conclusion import Conclusion, cutoffs_of
+from fhirgallop.reasoning.items import Item
+from fhirgallop.reasoning.vocabulary import URGENT_PHRASE
+
+MAX_SUMMARY: Final = 139
+"""CDS Hooks: fewer than 140 characters."""
+MAX_SUGGESTIONS: Final = 4
+ANSWER_SYSTEM: Final = f"{systems.BASE}/CodeSystem/card-answer"
+TOPIC_SYSTEM: Final = f"{systems.BASE}/CodeSystem/card-topic"
+SOURCE_LABEL: Final = "fhirgallop heart examination review"
+_ANSWERS: Final = {
+    Answer.LOOKED_AGAIN: "Looked or listened again; the entries stand",
+    Answer.WILL_CORRECT: "An entry will be corrected by its author",
+    Answer.BOTH_TRUE: "Both entries are true",
+    Answer.TRUE_IN_PATIENT: "True in this patient, for twelve months",
+}
+_RHYTHM: Final = "rhythm."
+_SENTENCE: Final = re.compile(r"[^.?]{1,400}[.?](?=\s|$)")
+# What Markdown of GitHub's flavour gives a meaning inside a line; an address is broken before its slashes.
+_MARKED: Final = re.compile(r"([\\`*_\[\]<>&|~#!@]|:(?=//)|(?<=[Ww]{3})\.)")
+
+
+@dataclass(frozen=True, slots=True)
+class Frame:
+    """What all cards of one answer share.
+
+    Attributes:
+        instance: the hookInstance, from which the cards' ids follow.
+        patient, encounter: FHIR ids; the encounter may be empty.
+        critical: whether an urgent card is marked `critical`; else it is a `warning`.
+        pages: address under which users reach this service's pages, ending in no slash; empty for none.
+    """
+
+    instance: str
+    patient: str
+    encounter: str
+    critical: bool
+    pages: str
+
+
+@dataclass(frozen=True, slots=True)
+class Shown:
+    """A card that was given out, as it is remembered: rule ids and digests, no findings.
+
+    Attributes:
+        entries: digests to be silenced for the encounter by an answer.
+        combinations: digests that "true in this patient" may silence.
+    """
+
+    uuid: str
+    rules: tuple[str, ...]
+    entries: tuple[str, ...]
+    combinations: tuple[str, ...]
+
+
+def cards(decision: Decision, held: Held, frame: Frame) -> tuple[list[dict[str, Any]], list[Shown]]:
+    """The cards of an answer, loudest first, and what is to be remembered of them.
+
+    The same facts and the same hookInstance give the same cards in the same order.
+    """
+    given = [_card(card, held, frame) for card in decision.cards]
+    shown = [_shown(card, frame) for card in decision.cards]
+    folded = [f"Further, folded: {card.title}" for card in decision.folded]
+    asked = decision.ask
+    if given and (folded or asked):
+        last = given[-1]
+        lines = [*folded, *([asked.text] if asked else [])]
+        last["detail"] = _inserted(last["detail"], [escaped(line) for line in lines])
+    elif asked:
+        given.append(_asking(asked, held, frame))
+        shown.append(Shown(_id(frame, "ask", asked.id), (), (), ()))
+    return given, shown
+
+
+def escaped(text: str) -> str:
+    """Text on one line that Markdown shows as it stands."""
+    line = "".join(letter if letter.isprintable() else " " for letter in text)
+    return _MARKED.sub(r"\\\1", " ".join(line.split()))
+
+
+def _id(frame: Frame, *parts: str) -> str:
+    return str(uuid.uuid5(uuid.UUID(frame.instance), "\n".join(parts)))
+
+
+def _shown(card: Card, frame: Frame) -> Shown:
+    true = (combination_digest(c) for c in card.conclusions if may_be_true(c))
+    return Shown(
+        _id(frame, card.key),
+        tuple(dict.fromkeys(c.rule.id for c in card.conclusions)),
+        tuple(dict.fromkeys(entry_digest(c) for c in card.conclusions)),
+        tuple(dict.fromkeys(true)),
+    )
+
+
+def _card(card: Card, held: Held, frame: Frame) -> dict[str, Any]:
+    urgent = card.level == "urgent"
+    family = "" if urgent else card.sections[0].conclusions[0].rule.family
+    topic = "urgent" if urgent else family or card.sections[0].conclusions[0].rule.id
+    found: dict[str, Any] = {
+        "uuid": _id(frame, card.key),
+        "summary": URGENT_PHRASE.capitalize() if urgent else _summary(card.sections[0]),
+        "indicator": _indicator(card, frame),
+        "detail": "\n".join(_urgent_detail(card, held) if urgent else _detail(card, held)),
+        "source": _source(frame, topic, card.title),
+        "overrideReasons": [
+            {"code": answer.value, "system": ANSWER_SYSTEM, "display": _ANSWERS[answer]}
+            for answer in card.answers
+        ],
+    }
+    suggestions = [] if urgent else list(_suggestions(card, held, frame))
+    if suggestions:
+        found["suggestions"] = suggestions[:MAX_SUGGESTIONS]
+        found["selectionBehavior"] = "any"
+    if frame.pages and not urgent:
+        # an urgent card names entries only: its rules would name a diagnosis
+        rules = dict.fromkeys(c.rule.id for c in card.conclusions)
+        found["links"] = [
+            {
+                "label": f"The rule {rule} and its sources",
+                "url": f"{frame.pages}/rules/{rule}",
+                "type": "absolute",
+            }
+            for rule in rules
+        ]
+    return found
+
+
+def _indicator(card: Card, frame: Frame) -> str:
+    if card.level == "urgent" and frame.critical:
+        return "critical"
+    return "info" if card.level == "advisory" else "warning"
+
+
+def _source(frame: Frame, topic: str, display: str) -> dict[str, Any]:
+    source: dict[str, Any] = {
+        "label": SOURCE_LABEL,
+        "topic": {"system": TOPIC_SYSTEM, "code": topic, "display": display},
+    }
+    if frame.pages:
+        source["url"] = f"{frame.pages}/docs"
+    return source
+
+
+def _summary(section: Section) -> str:
+    """One sentence that fits: the family's question, else what its first rule says, else the title."""
+    texts = (section.question, section.conclusions[0].text, f"{section.title}.")
+    for text in texts:
+        sentence = _SENTENCE.match(text)
+        if sentence and len(sentence[0]) <= MAX_SUMMARY:
+            return sentence[0]
+    return section.title[: MAX_SUMMARY - 1] + "…" if len(section.title) > MAX_SUMMARY else section.title
+
+
+def _detail(card: Card, held: Held) -> Iterator[str]:
+    for section in card.sections:
+        yield f"**{escaped(section.title)}**"
+        yield ""
+        if section.question:
+            yield escaped(section.question)
+            yield ""
+        for text in dict.fromkeys(c.text for c in section.conclusions):
+            yield f"- {escaped(text)}"
+        yield ""
+    yield from _rests_on(card.entries, held)
+    yield from _list("Look again, cheapest first", (_look(look.item, look.action) for look in card.looks))
+    yield from _list("Sources", dict.fromkeys(map(_basis, card.conclusions)))
+    cutoffs = dict.fromkeys(words.cutoff(one) for c in card.conclusions for one in cutoffs_of(c.rule))
+    yield from _list("Cut-offs", cutoffs)
+    yield from _ending(held)
+
+
+def _urgent_detail(card: Card, held: Held) -> Iterator[str]:
+    yield from _rests_on(card.entries, held)
+    yield from _ending(held)
+
+
+def _rests_on(entries: Iterable[Item], held: Held) -> Iterator[str]:
+    """The entries, each with its value, source and age (CDS Hooks asks for the freshness of the data)."""
+    yield from _list(
+        f"Entries, examination of {held.own.exam.time.start}", (_entry(item, held) for item in entries)
+    )
+
+
+def _entry(item: Item, held: Held) -> str:
+    place = held.own.names.get(item.id) if item.of_exam else ""
+    return words.entry(item) + (f" ({place})" if place else "")
+
+
+def _look(item: Item, action: str) -> str:
+    return f"{words.label(item.id)}: {action}"
+
+
+def _basis(conclusion: Conclusion) -> str:
+    return f"{conclusion.rule.source} ({conclusion.rule.seen}; {conclusion.rule.id})"
+
+
+_NOTE: Final = "Please note"
+
+
+def _ending(held: Held) -> Iterator[str]:
+    yield from _list("Unknown to this review", held.gaps)
+    yield from _list(_NOTE, SAFETY_TEXTS)
+
+
+def _list(heading: str, lines: Iterable[str]) -> Iterator[str]:
+    items = [f"- {escaped(line)}" for line in lines]
+    if items:
+        yield from (f"{escaped(heading)}:", "", *items, "")
+
+
+def _inserted(detail: str, lines: Iterable[str]) -> str:
+    """Lines before the closing notes."""
+    head, mark, tail = detail.rpartition(f"{_NOTE}:")
+    return "".join((head, *(f"{line}\n\n" for line in lines), mark, tail))
+
+
+def _asking(ask: Ask, held: Held, frame: Frame) -> dict[str, Any]:
+    """The one line that asks for what nobody recorded, where no card carries it."""
+    line = f"Not recorded: {words.label(ask.id)}."
+    found: dict[str, Any] = {
+        "uuid": _id(frame, "ask", ask.id),
+        "summary": line
+        if len(line) <= MAX_SUMMARY
+        else "A datum is not recorded that would settle a question.",
+        "indicator": "info",
+        "detail": "\n".join([escaped(ask.text), "", *_ending(held)]),
+        "source": _source(frame, "not-recorded", "Not recorded"),
+    }
+    if ask.id.startswith(_RHYTHM):
+        found["suggestions"] = [_rhythm(frame, "ask")]
+        found["selectionBehavior"] = "any"
+    return found
+
+
+def _suggestions(card: Card, held: Held, frame: Frame) -> Iterator[dict[str, Any]]:
+    asked = (id_ for c in card.conclusions for id_ in c.unknown)
+    rhythm = (item.id for item in card.entries if not item.of_exam)
+    if any(id_.startswith(_RHYTHM) for id_ in (*asked, *rhythm)):
+        yield _rhythm(frame, card.key)
+    for look in card.looks:
+        if look.item.of_exam:
+            label = words.label(look.item.id)
+            say = f"Mark for another look: {label}"
+            told = f"{say} ({look.action}). The entry itself is not changed."
+            yield _task(frame, (card.key, look.item.key), say, told, held.own.names.get(look.item.id, ""))
+
+
+def _rhythm(frame: Frame, key: str) -> dict[str, Any]:
+    say = "Record today's rhythm"
+    return _task(frame, (key, "rhythm"), say, f"{say}, from a tracing or by the examiner.", "")
+
+
+def _task(frame: Frame, key: tuple[str, ...], label: str, told: str, focus: str) -> dict[str, Any]:
+    """A suggestion to create a Task (FHIR R4, intent proposal): something to do, never a changed finding."""
+    id_ = _id(frame, *key, "suggestion")
+    task: dict[str, Any] = {
+        "resourceType": "Task",
+        "id": _id(frame, *key, "task"),
+        "status": "requested",
+        "intent": "proposal",
+        "description": told,
+        "for": {"reference": f"Patient/{frame.patient}"},
+    }
+    if focus:
+        task["focus"] = {"reference": focus}
+    if frame.encounter:
+        task["encounter"] = {"reference": f"Encounter/{frame.encounter}"}
+    return {
+        "label": label,
+        "uuid": id_,
+        "actions": [{"type": "create", "description": told, "resource": task}],
+    }
+
+
+def answered(code: str, system: str) -> Answer | None:
+    """The answer that a coded override reason is; None for one of another system."""
+    known: Mapping[str, Answer] = {answer.value: answer for answer in Answer}
+    return known.get(code) if system == ANSWER_SYSTEM else None
