@@ -64,19 +64,17 @@ def kind_present_parent_absent(exam: Exam, catalogue: Catalogue) -> Iterator[Iss
 
 
 def qualified_but_not_present(exam: Exam, catalogue: Catalogue) -> Iterator[Issue]:
-    """A grade, a site or a quality on a finding that was not heard."""
+    """A grade or a quality on a finding that is absent, or that nobody could have heard."""
     for entry in exam.entries:
-        if entry.presence is Presence.ABSENT:
+        if entry.presence in _WITHOUT_DESCRIPTION and not entry.withdrawn:
             describing = sorted(
                 {q.axis for q in entry.qualifiers if q.axis not in ALSO_OF_ABSENT}
                 | ({"number"} if entry.measure else set())
             )
             if describing:
                 label = catalogue.findings[entry.finding].label
-                text = (
-                    f"{label} is absent but described ({', '.join(describing)}); clear the "
-                    "description or the absence."
-                )
+                said = _WITHOUT_DESCRIPTION[entry.presence]
+                text = f"{label} {said} but described ({', '.join(describing)}); keep the one that is true."
                 yield _issue("error", "exam-absent-but-described", text, entry)
 
 
@@ -158,6 +156,11 @@ CLAUSES: Final[tuple[Callable[[Exam, Catalogue], Iterator[Issue]], ...]] = (
     implausible_value,
 )
 
+_WITHOUT_DESCRIPTION: Final = {
+    Presence.ABSENT: "is absent",
+    Presence.NOT_EXAMINED: "was not examined",
+    Presence.NOT_EXAMINABLE: "could not be examined",
+}
 # Where and how one looked is true of an absent finding too; how it sounded is not.
 ALSO_OF_ABSENT: Final = frozenset(
     {"site", "side", "posture", "respiratory-phase", "method", "chamber", "exertion", "cuff-size"}

@@ -39,6 +39,14 @@ FAULTS = [
         ["exam-absent-but-described"],
     ),
     (
+        (Entry("murmur.systolic", Presence.NOT_EXAMINED, qualifiers=(grade_3,)),),
+        ["exam-absent-but-described"],
+    ),
+    (
+        (Entry("murmur.systolic", Presence.NOT_EXAMINABLE, qualifiers=(grade_3,)),),
+        ["exam-absent-but-described"],
+    ),
+    (
         (Entry("murmur.systolic", qualifiers=(Qualifier("grade", grade=Grade(7, 7, 6)),)),),
         ["exam-grade-range"],
     ),
