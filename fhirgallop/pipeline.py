@@ -18,6 +18,7 @@ from fhirgallop.mapping.apply import Mapped, UnknownValue, apply
 from fhirgallop.mapping.template_map import TemplateMap
 from fhirgallop.observations.bundle import encode
 from fhirgallop.observations.editions import Edition
+from fhirgallop.observations.revision import draft_after_signed
 from fhirgallop.outcome import Issue, has_errors, ordered
 
 
@@ -71,6 +72,8 @@ def process(
     if exam is None:
         return _result(None, None, issues, mapped)
     issues += checks.check(exam, known)
+    if earlier is not None and (late := draft_after_signed(earlier, exam.status)):
+        issues.append(late)
     if has_errors(issues):
         return _result(exam, None, issues, mapped)
     bundle = encode(
@@ -80,7 +83,5 @@ def process(
     return _result(exam, None if has_errors(issues) else bundle, issues, mapped)
 
 
-def _result(
-    exam: Exam | None, bundle: dict[str, Any] | None, issues: list[Issue], mapped: Mapped
-) -> Result:
+def _result(exam: Exam | None, bundle: dict[str, Any] | None, issues: list[Issue], mapped: Mapped) -> Result:
     return Result(exam, bundle, tuple(ordered(issues)), mapped.unread, mapped.unknown)

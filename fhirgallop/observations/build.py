@@ -122,7 +122,7 @@ class ObservationBuilder:
             parts = [component(qualifier) for qualifier in qualifiers]
             resource["component"] = [part for part, _ in parts]
             words = f"{words} ({'; '.join(said for _, said in parts)})"
-        resource["text"] = text.narrative(words)
+        resource["text"] = text.narrative(words, withdrawn=resource["status"] == "entered-in-error")
         return resource
 
     def _head(self, frame: Frame, entry: Entry, shared: Shared, urn: str) -> dict[str, Any]:
@@ -183,8 +183,9 @@ class ObservationBuilder:
 
     def _panel(self, frame: Frame, entries: Sequence[Entry], shared: Shared, urn: str) -> dict[str, Any]:
         """One Observation whose components are the parts of a panel (blood pressure)."""
-        first = replace(entries[0], withdrawn=all(entry.withdrawn for entry in entries))
-        resource = self._head(frame, first, shared, urn)
+        # A part that was taken back alone leaves the panel; the panel is taken back with its last part.
+        entries = [entry for entry in entries if not entry.withdrawn] or entries
+        resource = self._head(frame, entries[0], shared, urn)
         components: list[dict[str, Any]] = []
         words: list[str] = []
         notes: list[dict[str, str]] = []
@@ -208,7 +209,8 @@ class ObservationBuilder:
         if frame.method:
             resource["method"] = frame.method
         resource["component"] = components
-        resource["text"] = text.narrative(f"{frame.label} ({'; '.join(words)})")
+        withdrawn = resource["status"] == "entered-in-error"
+        resource["text"] = text.narrative(f"{frame.label} ({'; '.join(words)})", withdrawn=withdrawn)
         return resource
 
 

@@ -33,7 +33,10 @@ def panel(
     resource: dict[str, Any] = {
         "resourceType": "Observation",
         "meta": {"profile": [systems.profile("exam-panel")]},
-        "text": text.narrative(f"{text.escaped(definition.label)}: {len(members)} findings"),
+        "text": text.narrative(
+            f"{text.escaped(definition.label)}: {len(members)} findings",
+            withdrawn=shared.status == "entered-in-error",
+        ),
         "identifier": identifier(urn),
         "status": shared.status,
         "category": [{"coding": [category]}],
@@ -55,10 +58,11 @@ def report(
         _inner(finding["text"]["div"]) for finding in findings if finding["status"] != "entered-in-error"
     ]
     notes = [text.escaped(words) for note in exam.notes if (words := text.plain(note))]
+    told = _list_of(lines, notes)
     resource: dict[str, Any] = {
         "resourceType": "DiagnosticReport",
         "meta": {"profile": [systems.profile("exam-report")]},
-        "text": _list_of(lines, notes),
+        "text": text.taken_back(told) if shared.status == "entered-in-error" else told,
         "identifier": identifier(urn),
         "status": shared.status,
         "code": {"coding": [_REPORT_CODE], "text": _REPORT_LABEL},

@@ -8,9 +8,12 @@ from __future__ import annotations
 from typing import Any, Final
 
 from fhirgallop.observations.identity import identity_of
+from fhirgallop.observations.text import taken_back
+from fhirgallop.outcome import Issue
 
 # What the moment of conversion, not the examiner, decides.
 _NOT_CONTENT: Final = frozenset({"issued", "status"})
+_SIGNED: Final = frozenset({"final", "amended", "corrected"})
 
 
 def revise(
@@ -33,10 +36,28 @@ def revise(
         revised[urn] = resource if old is None else _after(old, resource, exam_status)
     for urn, old in before.items():
         if urn not in resources:
-            revised[urn] = (
-                old if old["status"] == "entered-in-error" else {**old, "status": "entered-in-error"}
-            )
+            revised[urn] = old if old["status"] == "entered-in-error" else _withdrawn(old)
     return revised
+
+
+def draft_after_signed(earlier: dict[str, Any], exam_status: str) -> Issue | None:
+    """A draft sent after the signed examination: it came late, or the sender forgot to say what it is."""
+    if exam_status != "preliminary":
+        return None
+    if not any(entry.get("resource", {}).get("status") in _SIGNED for entry in earlier.get("entry", ())):
+        return None
+    words = (
+        "This examination was sent as signed before, and a draft cannot take its place; nothing was changed. "
+        "Send the change as final, amended or corrected."
+    )
+    return Issue("error", "conflict", "exam-draft-after-signed", words)
+
+
+def _withdrawn(old: dict[str, Any]) -> dict[str, Any]:
+    taken = {**old, "status": "entered-in-error"}
+    if "text" in old:
+        taken["text"] = taken_back(old["text"])
+    return taken
 
 
 def _after(old: dict[str, Any], new: dict[str, Any], exam_status: str) -> dict[str, Any]:

@@ -11,6 +11,7 @@ from typing import Final
 _CONTROL: Final = re.compile("[\x00-\x08\x0b\x0c\x0e-\x1f\x7f-\x9f\ud800-\udfff\ufffe\uffff]")
 _BLANKS: Final = re.compile(r"\s+")
 _MARKUP: Final = str.maketrans({"&": "&amp;", "<": "&lt;", ">": "&gt;", '"': "&quot;"})
+_WITHDRAWN: Final = "Entered in error: "
 _DIV: Final = '<div xmlns="http://www.w3.org/1999/xhtml">'
 
 
@@ -29,6 +30,12 @@ def escaped(text: str) -> str:
     return text.translate(_MARKUP)
 
 
-def narrative(paragraph: str) -> dict[str, str]:
-    """FHIR Narrative of one paragraph that is already escaped."""
-    return {"status": "generated", "div": f"{_DIV}<p>{paragraph}</p></div>"}
+def narrative(paragraph: str, *, withdrawn: bool = False) -> dict[str, str]:
+    """FHIR Narrative of one paragraph that is already escaped; of a resource taken back it says so first."""
+    told = {"status": "generated", "div": f"{_DIV}<p>{paragraph}</p></div>"}
+    return taken_back(told) if withdrawn else told
+
+
+def taken_back(told: dict[str, str]) -> dict[str, str]:
+    """A narrative of ours, for a resource that is entered in error now."""
+    return {**told, "div": told["div"].replace("<p>", f"<p>{_WITHDRAWN}", 1)}

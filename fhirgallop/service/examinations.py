@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import hashlib
 from collections.abc import Callable
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from datetime import datetime
 from typing import Any, Final
 
@@ -15,10 +15,18 @@ from fhirgallop.mapping.template_map import TemplateMap
 from fhirgallop.observations.bundle import instant
 from fhirgallop.observations.editions import Edition
 from fhirgallop.observations.identity import Identities
+from fhirgallop.outcome import Issue, ordered
 from fhirgallop.pipeline import Result, process
 from fhirgallop.storage.submissions import Submission, Submissions
 
 _TRIES: Final = 5
+_SEEN_BEFORE: Final = Issue(
+    "warning",
+    "conflict",
+    "exam-earlier-content-again",
+    "This content was received before and has been changed since; it takes the place of the newer one now. "
+    "If an old message was only repeated, send the newer one again.",
+)
 
 
 class BusyError(Exception):
@@ -66,6 +74,10 @@ class Examinations:
                 result = process(
                     record, template, recorded=now, edition=edition, snomed=snomed, earlier=earlier
                 )
+                if result.bundle is None:
+                    return Coded(result, None)
+                if self._store.has(exam, edition, meant, snomed=snomed):
+                    result = replace(result, issues=tuple(ordered([*result.issues, _SEEN_BEFORE])))
             text = fhirjson.write(result.bundle)
             version = before.version + 1 if before else 1
             row = Submission(

@@ -65,6 +65,17 @@ class Submissions:
             row = connection.execute(query).one_or_none()
         return Submission(*row) if row else None
 
+    def has(self, exam: str, edition: str, record_hash: str, *, snomed: bool) -> bool:
+        """Whether some version of an examination, in that way of writing it, had this content.
+
+        Raises:
+            StorageError: the database failed.
+        """
+        same = (submissions.c.exam == exam, submissions.c.edition == edition, submissions.c.snomed == snomed)
+        query = select(submissions.c.id).where(*same, submissions.c.record_hash == record_hash).limit(1)
+        with _told(), self._engine.connect() as connection:
+            return connection.execute(query).first() is not None
+
     def add(self, submission: Submission) -> bool:
         """Stores one version; False when another request stored that version first.
 

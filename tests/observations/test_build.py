@@ -73,6 +73,19 @@ def test_a_missing_diastolic_pressure_is_said_not_dropped(coded):
     assert parts[1]["dataAbsentReason"]["coding"][0]["code"] == "unknown"
 
 
+def test_a_part_of_a_panel_that_was_taken_back_leaves_it(coded):
+    systolic = Entry("pressure.systolic", measure=Measure(Decimal(120), "mm[Hg]"), withdrawn=True)
+    diastolic = Entry("pressure.diastolic", measure=Measure(Decimal(84), "mm[Hg]"))
+    made = coded([systolic, diastolic])["vital.blood-pressure"]
+    assert made["status"] == "final"
+    assert made["component"][0]["dataAbsentReason"]["coding"][0]["code"] == "unknown"
+    assert made["component"][1]["valueQuantity"]["value"] == Decimal(84)
+    assert "120" not in made["text"]["div"]
+    both = coded([systolic, replace(diastolic, withdrawn=True)])["vital.blood-pressure"]
+    assert both["status"] == "entered-in-error"
+    assert both["component"][0]["valueQuantity"]["value"] == Decimal(120)
+
+
 def test_numbers_keep_their_digits_to_the_byte(coded):
     text = fhirjson.write(coded(bundle=True))
     assert b'"value":120.0,' in text

@@ -12,6 +12,7 @@ from fhirgallop.exam.entry import Entry
 from fhirgallop.exam.exam import Party
 from fhirgallop.exam.presence import Presence
 from fhirgallop.observations.identity import identity_of
+from fhirgallop.observations.revision import draft_after_signed
 
 
 def resources(bundle, kind):
@@ -115,6 +116,19 @@ def test_changed_entries_are_amended_and_lost_ones_entered_in_error(coded, exam)
     assert [r["status"] for r in resources(again, "DiagnosticReport")] == ["amended"]
 
 
+def test_what_is_taken_back_says_so_in_words_too(coded, exam):
+    first = coded(bundle=True)
+    entries = [e for e in exam.entries if e.finding != "heart-sound.s4"]
+    later = coded(entries, bundle=True, earlier=first)
+    again = coded(entries, bundle=True, earlier=later)
+    for bundle in (later, again):
+        (gone,) = [r for r in resources(bundle, "Observation") if r["status"] == "entered-in-error"]
+        assert gone["text"]["div"].count("Entered in error: Fourth heart sound: Present") == 1
+        assert "Fourth heart sound" not in resources(bundle, "DiagnosticReport")[0]["text"]["div"]
+    whole = coded(bundle=True, status="entered-in-error")
+    assert all("<p>Entered in error: " in e["resource"]["text"]["div"] for e in whole["entry"][:-1])
+
+
 def test_a_corrected_examination_corrects(coded, exam):
     first = coded(bundle=True)
     entries = [
@@ -124,6 +138,14 @@ def test_a_corrected_examination_corrects(coded, exam):
     status = statuses(coded(entries, bundle=True, earlier=first, status="corrected"))
     assert status["Fourth heart sound"] == "corrected"
     assert status["Third heart sound"] == "final"
+
+
+@pytest.mark.parametrize("signed", ["final", "amended", "corrected"])
+def test_a_draft_cannot_follow_the_signed_examination(coded, signed):
+    earlier = coded(bundle=True, status=signed)
+    assert draft_after_signed(earlier, "preliminary").is_error
+    assert draft_after_signed(earlier, "final") is None
+    assert draft_after_signed(coded(bundle=True, status="preliminary"), "preliminary") is None
 
 
 def test_a_draft_that_is_signed_becomes_final(coded):

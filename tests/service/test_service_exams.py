@@ -18,6 +18,12 @@ def statuses(bundle: dict[str, Any], kind: str) -> dict[str, str]:
     return {r["code"]["text"]: r["status"] for r in resources if r["resourceType"] == kind}
 
 
+def rules(told: dict[str, Any]) -> list[str]:
+    """Rules of the issues in an answer."""
+    issues = told.get("outcome", told)["issue"]
+    return [i["details"]["coding"][0]["code"] for i in issues if "coding" in i["details"]]
+
+
 def test_one_record_is_answered_with_bundle_outcome_and_what_was_left(client: Any, example: Any) -> None:
     answer = client.post(WHERE, json={**example(), "shoe": "43"})
     assert answer.status_code == 200
@@ -85,8 +91,21 @@ def test_a_changed_examination_amends_and_a_withdrawn_entry_is_entered_in_error(
 def test_back_to_the_first_state_is_a_change_again(client: Any, example: Any) -> None:
     client.post(WHERE, json=example())
     client.post(WHERE, json=example(vitals={"hr": 80}))
-    third = client.post(WHERE, json=example()).json()["bundle"]
-    assert statuses(third, "Observation")["Heart rate"] in ("amended", "corrected")
+    third = client.post(WHERE, json=example()).json()
+    assert statuses(third["bundle"], "Observation")["Heart rate"] in ("amended", "corrected")
+    assert rules(third) == ["exam-earlier-content-again"]
+    fourth = client.post(WHERE, json=example(vitals={"hr": 81})).json()
+    assert rules(fourth) == []
+
+
+def test_a_late_draft_does_not_take_the_place_of_a_signed_examination(client: Any, example: Any) -> None:
+    draft = client.post(WHERE, json=example(exam={"state": "draft"})).json()
+    assert set(statuses(draft["bundle"], "Observation").values()) == {"preliminary"}
+    signed = client.post(WHERE, json=example(), headers=FHIR).content
+    late = client.post(WHERE, json=example(exam={"state": "draft"}, vitals={"hr": 80}))
+    assert late.status_code == 422
+    assert rules(late.json()) == ["exam-draft-after-signed"]
+    assert client.post(WHERE, json=example(), headers=FHIR).content == signed
 
 
 def test_another_edition_is_no_change_of_the_examination(client: Any, example: Any) -> None:
