@@ -2,8 +2,9 @@
 
 from __future__ import annotations
 
+from collections import Counter
 from pathlib import Path
-from typing import TYPE_CHECKING, Annotated
+from typing import TYPE_CHECKING, Annotated, Final
 
 import typer
 
@@ -12,6 +13,9 @@ from fhirgallop.cli.shared import Exit
 if TYPE_CHECKING:
     from fhirgallop.mapping.coverage import Coverage
     from fhirgallop.mapping.template_map import TemplateMap
+    from fhirgallop.outcome import Issue
+
+_SHOWN: Final = 50
 
 app = typer.Typer(help="Template maps: check one, or print the schema of the format.", no_args_is_help=True)
 
@@ -47,6 +51,8 @@ def _try(template: TemplateMap, paths: list[Path]) -> None:
 
     known = catalogue.load()
     coverage = Coverage(template, known)
+    refusals: Counter[tuple[str, str]] = Counter()
+    first: dict[tuple[str, str], Issue] = {}
     refused = unreadable = 0
     for path in paths:
         for read in open_records(path, name=str(path)):
@@ -58,8 +64,14 @@ def _try(template: TemplateMap, paths: list[Path]) -> None:
             mapped = apply(read, template, known)
             coverage.add(read, mapped)
             found = [*mapped.issues, *(checks.check(mapped.exam, known) if mapped.exam else ())]
-            refused += any(issue.is_error for issue in found)
+            errors = [issue for issue in found if issue.is_error]
+            refused += bool(errors)
+            for issue in errors:
+                kind = (issue.field, issue.rule)
+                refusals[kind] += 1
+                first.setdefault(kind, issue)
     _print(coverage, refused, unreadable)
+    _print_refusals(refusals, first)
     still_open = coverage.unknown() or any(
         count.use == "unread" and count.filled for count in coverage.fields()
     )
@@ -85,6 +97,14 @@ def _print(coverage: Coverage, refused: int, unreadable: int) -> None:
         console.print(values)
     for issue in coverage.issues():
         console.print(str(issue), markup=False, soft_wrap=True)
+
+
+def _print_refusals(refusals: Counter[tuple[str, str]], first: dict[tuple[str, str], Issue]) -> None:
+    """Why records would be refused: the first issue of each kind, with the number of its like."""
+    for kind, times in refusals.most_common(_SHOWN):
+        typer.echo(f"{first[kind]} (met {times:,} times)")
+    if len(refusals) > _SHOWN:
+        typer.echo(f"... and {len(refusals) - _SHOWN:,} kinds more; fhirgallop code --issues FILE tells all")
 
 
 @app.command("schema")

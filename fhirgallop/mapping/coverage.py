@@ -31,7 +31,7 @@ class FieldCount:
 
 @dataclass(frozen=True, slots=True)
 class LineCount:
-    """One line of the map: in how many records its box was filled and its condition held."""
+    """One line of the map: in how many records its condition held and its box said something."""
 
     line: int
     says: str
@@ -71,7 +71,11 @@ class Coverage:
         run = Run(record)
         for at, line, test in self._tests:
             box = line.field or line.note
-            if (test is None or test(run)) and (line.presence is not None or filled(record.fields.get(box))):
+            if (test is None or test(run)) and (
+                line.presence is not None
+                or filled(record.fields.get(box))
+                or (line.blank_means != "not-recorded" and box in record.fields)
+            ):
                 self._touched[at] += 1
 
     def _room(self, *counters: Counter[str] | Counter[UnknownValue]) -> bool:
@@ -128,7 +132,8 @@ class Coverage:
         for line in self.lines():
             if self.records and not line.records:
                 words = (
-                    f"This line ({line.says}) was never touched by any record; check its field and its when."
+                    f"No record said anything by this line ({line.says}): its box was always blank or "
+                    "missing, or its when never held. Check both, if that is unexpected."
                 )
                 found.append(
                     Issue(

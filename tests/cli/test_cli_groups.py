@@ -60,6 +60,9 @@ def test_map_check_with_records_counts_what_is_left_open(call: Any, tmp_path: Pa
     assert re.search(r"s4\s+read\s+3\s+1", told)
     assert re.search(r"s4\s+loud\s+2", told)
     assert "2 would be refused" in told
+    assert re.search(
+        r"error: .*field s4: This wording is not among .*\[map-value-unknown\] \(met 2 times\)", told
+    )
 
 
 def test_map_check_with_records_that_fit(call: Any, tmp_path: Path, bedside: Path) -> None:
