@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import codecs
 import io
 from collections.abc import Iterator, Mapping
 from dataclasses import replace
@@ -113,6 +114,14 @@ def _each(values: list[Any], name: str, limits: Limits, convert: Convert) -> Ite
                 yield replace(read, issues=tuple(named))
 
 
+def _whole_json(stream: BinaryIO, limits: Limits) -> tuple[bytes, int]:
+    """A JSON text and how large it may be: a list holds many records."""
+    text = stream.read(limits.record_bytes + 1)
+    if not text.removeprefix(codecs.BOM_UTF8).lstrip().startswith(b"["):
+        return text, limits.record_bytes
+    return text + stream.read(limits.list_bytes + 1 - len(text)), limits.list_bytes
+
+
 def _read(
     kind: Kind,
     stream: BinaryIO,
@@ -128,8 +137,8 @@ def _read(
 
     match kind:
         case "json":
-            text = stream.read(limits.record_bytes + 1)
-            value, issues = fhirjson.read(text, max_bytes=limits.record_bytes, source=name)
+            text, largest = _whole_json(stream, limits)
+            value, issues = fhirjson.read(text, max_bytes=largest, source=name)
             if has_errors(issues):
                 return Reading(issues=tuple(issues)).stream(name)
             if isinstance(value, list) and value:

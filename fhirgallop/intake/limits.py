@@ -15,6 +15,7 @@ class Limits:
 
     Attributes:
         record_bytes: one JSON text, one NDJSON line, one row, one HL7 v2 message.
+        list_bytes: one JSON list of many records, which has to be read whole.
         workbook_bytes: a spreadsheet file, which has to be read whole.
         unpacked_bytes: what the parts of a zipped spreadsheet may grow to.
         cells: rows times columns of a sheet.
@@ -27,6 +28,7 @@ class Limits:
     """
 
     record_bytes: int = MEBI
+    list_bytes: int = 32 * MEBI
     workbook_bytes: int = 32 * MEBI
     unpacked_bytes: int = 128 * MEBI
     cells: int = 5_000_000

@@ -121,3 +121,13 @@ def test_a_long_line_costs_no_more_time_than_its_length():
     data = b"x" * 8_000_000
     assert list(numbered(io.BytesIO(data + b"\nlast"), 10)) == [(1, None), (2, b"last")]
     assert list(numbered(io.BytesIO(data), len(data))) == [(1, data)]
+
+
+def test_a_json_list_may_be_larger_than_one_record():
+    limits = Limits(record_bytes=100, list_bytes=400)
+    one = b'{"a": "' + b"x" * 40 + b'"}'
+    many = b"\xef\xbb\xbf [" + b",".join([one.replace(b"x", b"%d" % n, 1) for n in range(6)]) + b"]"
+    assert len(list(open_records(many, name="e.json", limits=limits))) == 6
+    for text in (b"[" + b",".join([one] * 9) + b"]", b'{"a": "' + b"x" * 100 + b'"}'):
+        (read,) = open_records(text, name="e.json", limits=limits)
+        assert rules([read]) == [["json-too-large"]]
