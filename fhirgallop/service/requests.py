@@ -19,6 +19,9 @@ _QUALITY: Final = re.compile(r"q=(0(?:\.\d{0,3})?|1(?:\.0{0,3})?)")  # RFC 9110,
 
 async def body(request: Request, most: int) -> bytes:
     """The body, read no further than `most` bytes, and no longer than a minute."""
+    if request.headers.get("content-encoding", "identity").strip().lower() != "identity":
+        text = "A packed body (Content-Encoding) is not read here; send it as it is."
+        raise refusal(415, "not-supported", "http-content-encoding", text)
     announced = request.headers.get("content-length", "")
     if announced.isdigit() and int(announced) > most:
         raise _too_large(most)

@@ -73,7 +73,7 @@ class Submissions:
         """
         same = (submissions.c.exam == exam, submissions.c.edition == edition, submissions.c.snomed == snomed)
         query = select(submissions.c.id).where(*same, submissions.c.record_hash == record_hash).limit(1)
-        with _told(), self._engine.connect() as connection:
+        with told(), self._engine.connect() as connection:
             return connection.execute(query).first() is not None
 
     def add(self, submission: Submission) -> bool:

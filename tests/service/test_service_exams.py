@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import gzip
 import json
 from pathlib import Path
 from typing import Any
@@ -96,6 +97,14 @@ def test_back_to_the_first_state_is_a_change_again(client: Any, example: Any) ->
     assert rules(third) == ["exam-earlier-content-again"]
     fourth = client.post(WHERE, json=example(vitals={"hr": 81})).json()
     assert rules(fourth) == []
+
+
+def test_a_packed_body_is_refused_by_name(client: Any, example: Any) -> None:
+    packed = gzip.compress(json.dumps(example()).encode())
+    headers = {"Content-Type": "application/json", "Content-Encoding": "gzip"}
+    answer = client.post(WHERE, content=packed, headers=headers)
+    assert answer.status_code == 415
+    assert rules(answer.json()) == ["http-content-encoding"]
 
 
 def test_a_late_draft_does_not_take_the_place_of_a_signed_examination(client: Any, example: Any) -> None:
