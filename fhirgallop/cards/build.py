@@ -36,6 +36,9 @@ _ANSWERS: Final = {
     Answer.TRUE_IN_PATIENT: "True in this patient, for twelve months",
 }
 _RHYTHM: Final = "rhythm."
+# A rhythm on the problem list says nothing of today's either.
+_RHYTHMS: Final = (_RHYTHM, "condition.atrial-fibrillation", "condition.atrial-flutter")
+_DAY: Final = 86_400
 _SENTENCE: Final = re.compile(r"[^.?]{1,400}[.?](?=\s|$)")
 # What Markdown of GitHub's flavour gives a meaning inside a line; an address is broken before its slashes.
 _MARKED: Final = re.compile(r"([\\`*_\[\]<>&|~#!@]|:(?=//)|(?<=[Ww]{3})\.)")
@@ -87,7 +90,8 @@ def cards(decision: Decision, held: Held, frame: Frame) -> tuple[list[dict[str, 
         last = given[-1]
         lines = [*folded, *([asked.text] if asked else [])]
         last["detail"] = _inserted(last["detail"], [escaped(line) for line in lines])
-    elif asked:
+    elif asked and asked.id.startswith(_RHYTHM):
+        # what is unknown never alerts; the rhythm alone, which most rules need, is asked for in a card
         given.append(_asking(asked, held, frame))
         shown.append(Shown(_id(frame, "ask", asked.id), (), (), ()))
     return given, shown
@@ -119,7 +123,7 @@ def _card(card: Card, held: Held, frame: Frame) -> dict[str, Any]:
     topic = "urgent" if urgent else family or card.sections[0].conclusions[0].rule.id
     found: dict[str, Any] = {
         "uuid": _id(frame, card.key),
-        "summary": URGENT_PHRASE.capitalize() if urgent else _summary(card.sections[0]),
+        "summary": URGENT_PHRASE if urgent else _summary(card.sections[0]),
         "indicator": _indicator(card, frame),
         "detail": "\n".join(_urgent_detail(card, held) if urgent else _detail(card, held)),
         "source": _source(frame, topic, card.title),
@@ -236,27 +240,20 @@ def _inserted(detail: str, lines: Iterable[str]) -> str:
 
 
 def _asking(ask: Ask, held: Held, frame: Frame) -> dict[str, Any]:
-    """The one line that asks for what nobody recorded, where no card carries it."""
-    line = f"Not recorded: {words.label(ask.id)}."
-    found: dict[str, Any] = {
+    """The one line that asks for the rhythm, where no card carries it."""
+    return {
         "uuid": _id(frame, "ask", ask.id),
-        "summary": line
-        if len(line) <= MAX_SUMMARY
-        else "A datum is not recorded that would settle a question.",
+        "summary": "Today's rhythm is not recorded; with it more could be said of this examination.",
         "indicator": "info",
         "detail": "\n".join([escaped(ask.text), "", *_ending(held)]),
         "source": _source(frame, "not-recorded", "Not recorded"),
+        "suggestions": [_rhythm(frame, "ask")],
+        "selectionBehavior": "any",
     }
-    if ask.id.startswith(_RHYTHM):
-        found["suggestions"] = [_rhythm(frame, "ask")]
-        found["selectionBehavior"] = "any"
-    return found
 
 
 def _suggestions(card: Card, held: Held, frame: Frame) -> Iterator[dict[str, Any]]:
-    asked = (id_ for c in card.conclusions for id_ in c.unknown)
-    rhythm = (item.id for item in card.entries if not item.of_exam)
-    if any(id_.startswith(_RHYTHM) for id_ in (*asked, *rhythm)):
+    if any(_asks_for_rhythm(c) for c in card.conclusions):
         yield _rhythm(frame, card.key)
     for look in card.looks:
         if look.item.of_exam:
@@ -264,6 +261,14 @@ def _suggestions(card: Card, held: Held, frame: Frame) -> Iterator[dict[str, Any
             say = f"Mark for another look: {label}"
             told = f"{say} ({look.action}). The entry itself is not changed."
             yield _task(frame, (card.key, look.item.key), say, told, held.own.names.get(look.item.id, ""))
+
+
+def _asks_for_rhythm(conclusion: Conclusion) -> bool:
+    """True when it rests on a rhythm that is not today's, or would need one that nobody recorded."""
+    grounds = (g for g in (*conclusion.subject, *conclusion.grounds) if not g.item.of_exam)
+    old = (g.item for g in grounds if g.stale or g.item.age is None or abs(g.item.age) > _DAY)
+    ids = (*conclusion.unknown, *(item.id for item in old))
+    return any(id_.startswith(_RHYTHMS) for id_ in ids)
 
 
 def _rhythm(frame: Frame, key: str) -> dict[str, Any]:

@@ -107,6 +107,9 @@ class HookDesk:
             call.instance, call.patient, call.encounter, self._manner.critical, self._manner.pages
         )
         cards, shown = build.cards(decision, asked.held, frame)
+        _log(asked.service, decision)
+        if not cards:
+            return cards
         known = self._store.cards([one.uuid for one in shown]) if earlier is not None else {}
         if after != current or any(one.uuid not in known for one in shown):
             stored = self._store.keep(
@@ -117,7 +120,6 @@ class HookDesk:
             )
             if not stored:
                 return None
-        _log(asked.service, decision)
         return cards
 
     def _decide(self, asked: _Asked, memory: Memory) -> Decision:

@@ -3,7 +3,9 @@
 from __future__ import annotations
 
 import json
+import uuid
 from collections.abc import Callable, Iterator
+from copy import deepcopy
 from datetime import UTC, datetime, timedelta
 from pathlib import Path
 from typing import Any
@@ -13,6 +15,8 @@ from fastapi import FastAPI
 from starlette.testclient import TestClient
 
 from fhirgallop import settings
+from fhirgallop.api import process
+from fhirgallop.codes import fhirjson
 from fhirgallop.service.app import create_app
 
 
@@ -56,5 +60,120 @@ def example(root: Path) -> Callable[..., dict[str, Any]]:
         for name, boxes in groups.items():
             record[name] = {**record[name], **boxes}
         return record
+
+    return make
+
+
+HERE = "http://localhost:8470"
+SERVER = "https://fernwood.example/fhir"
+SEEN = datetime.fromisoformat("2026-03-14T10:00:00+01:00")
+
+
+@pytest.fixture
+def hooked_with(tmp_path: Path, root: Path) -> Iterator[Callable[..., TestClient]]:
+    """The service half an hour after the example examination, with settings of choice."""
+    opened: list[TestClient] = []
+
+    def make(**given: Any) -> TestClient:
+        chosen = settings.load(
+            maps=root / "examples/informatician",
+            database=f"sqlite:///{tmp_path / 'hooks.sqlite3'}",
+            **{"pages": HERE, **given},
+        )
+        speaking = TestClient(create_app(chosen, lambda: SEEN), base_url=HERE, raise_server_exceptions=False)
+        opened.append(speaking.__enter__())
+        return speaking
+
+    yield make
+    for one in opened:
+        one.__exit__()
+
+
+@pytest.fixture
+def hooked(hooked_with: Callable[..., TestClient]) -> TestClient:
+    """The same with the ordinary settings, and pages to link to."""
+    return hooked_with()
+
+
+def _searchset(resources: list[dict[str, Any]]) -> dict[str, Any]:
+    entries = [
+        {"fullUrl": f"{SERVER}/{one['resourceType']}/{one['id']}", "resource": one} for one in resources
+    ]
+    return {"resourceType": "Bundle", "type": "searchset", "total": len(entries), "entry": entries}
+
+
+@pytest.fixture(scope="session")
+def searchset() -> Callable[[list[dict[str, Any]]], dict[str, Any]]:
+    """Resources as the answer of a search on the example server."""
+    return _searchset
+
+
+@pytest.fixture(scope="session")
+def _kept(root: Path) -> list[dict[str, Any]]:
+    """The Observations of the Fernwood examination as a server keeps them: ids and references of its own."""
+    record = (root / "examples/ehr/fernwood-exam.json").read_bytes()
+    result = process(record, root / "examples/informatician/fernwood-heart-form.yaml")
+    bundle = json.loads(fhirjson.write(result.bundle))
+    kept = [e for e in bundle["entry"] if e["resource"]["resourceType"] == "Observation"]
+    names = {entry["fullUrl"]: f"Observation/obs-{n}" for n, entry in enumerate(kept)}
+    for entry in kept:
+        resource = entry["resource"]
+        resource["id"] = names[entry["fullUrl"]].partition("/")[2]
+        resource["subject"] = {"reference": "Patient/p-20417"}
+        resource["encounter"] = {"reference": "Encounter/v-8812"}
+        if "hasMember" in resource:
+            resource["hasMember"] = [{"reference": names[m["reference"]]} for m in resource["hasMember"]]
+    return [entry["resource"] for entry in kept]
+
+
+@pytest.fixture
+def kept(_kept: list[dict[str, Any]]) -> list[dict[str, Any]]:
+    """A copy of them to change."""
+    return deepcopy(_kept)
+
+
+@pytest.fixture
+def prefetch(kept: list[dict[str, Any]], root: Path) -> Callable[..., dict[str, Any]]:
+    """Everything the services ask for: `prefetch("mitral-stenosis-known-area", conditions=None)`."""
+
+    def make(name: str = "atrial-fibrillation-today", **changed: Any) -> dict[str, Any]:
+        text = (root / f"examples/clinician/{name}.chart.json").read_text("utf-8")
+        chart = [entry["resource"] for entry in json.loads(text)["entry"]]
+        by_type: dict[str, list[dict[str, Any]]] = {}
+        for resource in chart:
+            by_type.setdefault(resource["resourceType"], []).append(resource)
+        found = {
+            "patient": by_type["Patient"][0],
+            "exam": _searchset(kept),
+            "results": _searchset(by_type.get("Observation", [])),
+            "reports": _searchset(by_type.get("DiagnosticReport", [])),
+            "conditions": _searchset(by_type.get("Condition", [])),
+            "procedures": _searchset(by_type.get("Procedure", [])),
+            "devices": _searchset(by_type.get("Device", [])),
+        }
+        return {**found, **changed}
+
+    return make
+
+
+@pytest.fixture
+def hook_call(prefetch: Callable[..., dict[str, Any]]) -> Callable[..., dict[str, Any]]:
+    """A well-formed call: `hook_call("patient-view", prefetch=..., context={...})`."""
+
+    def make(hook: str = "patient-view", **changed: Any) -> dict[str, Any]:
+        context = {
+            "userId": "Practitioner/7",
+            "patientId": "p-20417",
+            "encounterId": "v-8812",
+            **changed.pop("context", {}),
+        }
+        body = {
+            "hook": hook,
+            "hookInstance": str(uuid.uuid4()),
+            "fhirServer": SERVER,
+            "context": {name: value for name, value in context.items() if value is not None},
+            "prefetch": prefetch(),
+        }
+        return {**body, **changed}
 
     return make
