@@ -176,7 +176,24 @@ def _without_idle(schema: Schema) -> Schema:
         idle.add("minProperties")
     if schema.get("minItems") == 1 and "contains" in schema and schema.get("minContains", 1) >= 1:
         idle.add("minItems")
-    return {word: said for word, said in schema.items() if word not in idle}
+    return _seldom({word: said for word, said in schema.items() if word not in idle})
+
+
+def _seldom(schema: Schema) -> Schema:
+    """Asks which keys rule out one another only of objects that have two keys beside those required."""
+    rules = schema.get("dependentSchemas")
+    if not rules or "anyOf" in schema or "additionalProperties" not in schema:
+        return schema
+    required = schema.get("required", ())
+    for key, rule in rules.items():
+        ruled_out = rule.get("properties", {})
+        if rule.keys() != {"properties"} or not all(said is False for said in ruled_out.values()):
+            return schema
+        if key in required or any(other in required for other in ruled_out):
+            return schema
+    few = {"maxProperties": len(required) + 1}
+    rest = {word: said for word, said in schema.items() if word != "dependentSchemas"}
+    return {**rest, "anyOf": [few, {"dependentSchemas": rules}]}
 
 
 def never_both(one: Schema, other: Schema) -> bool:
