@@ -1,37 +1,28 @@
-"""How long a full check takes against parsing: ``python tests/bench/bench_conformance.py``.
-
-Only ratios count. Every candidate runs once a round, a ratio is taken a round, and the median over rounds is
-printed: the machine may slow down and speed up meanwhile. Exit code 1 when a check costs more than its limit.
-"""
+"""A full check against parsing, against the general-purpose model library, and the start of an edition."""
 
 from __future__ import annotations
 
-import gc
 import random
-import statistics
+import subprocess
 import sys
-import time
-from collections.abc import Callable
-from functools import partial
+from collections.abc import Iterator
+from pathlib import Path
+from time import perf_counter
 from typing import Any
-from uuid import UUID
 
 import orjson
+from bench_build import MOMENT, exam
 from fhir.resources.R4B.observation import Observation
+from measuring import Row, at_least, at_most, interleaved, ratio
 
+from fhirgallop.codes import fhirjson
+from fhirgallop.conformance.registry import registry
 from fhirgallop.conformance.validator import validate
+from fhirgallop.observations.bundle import encode
 
-ROUNDS = 41
-BATCH = 10
+EDITIONS = ("R4", "R4B", "R5")
+ROUNDS, CALLS = 15, 200
 DIV = '<div xmlns="http://www.w3.org/1999/xhtml"><p>{}</p></div>'
-# name of the ratio -> (goal, limit that fails the run)
-GOALS = {
-    "observation, parsed / loads": (1.0, 1.5),
-    "observation, from bytes / loads": (2.0, 3.0),
-    "all-new strings / repeated strings": (1.1, 1.5),
-    "bundle, parsed / loads": (1.0, 1.5),
-    "bundle, from bytes / loads": (2.0, 3.0),
-}
 
 
 def observation(source: random.Random) -> dict[str, Any]:
@@ -98,105 +89,102 @@ def observation(source: random.Random) -> dict[str, Any]:
     }
 
 
-def bundle(source: random.Random, count: int = 26) -> dict[str, Any]:
-    """A transaction of such Observations and the panel that holds them together."""
-    entries = []
-    members = []
-    for _ in range(count):
-        url = UUID(int=source.getrandbits(128), version=4).urn
-        members.append({"reference": url})
-        resource = observation(source)
-        entries.append(
-            {"fullUrl": url, "resource": resource, "request": {"method": "POST", "url": "Observation"}}
-        )
-    panel = observation(source)
-    del panel["component"]
-    panel["hasMember"] = members
-    entries.append(
-        {
-            "fullUrl": UUID(int=source.getrandbits(128), version=4).urn,
-            "resource": panel,
-            "request": {"method": "POST", "url": "Observation"},
-        }
+def rows() -> Iterator[Row]:
+    """The measured rows; of the editions, the slowest counts."""
+    found = [_observation(edition) for edition in EDITIONS]
+    worst = {name: max(one[name] for one in found) for name in found[0]}
+    yield at_most("full check of a parsed Observation / parsing it", worst["parsed"], 1, fails=1.5)
+    yield at_most("Observation from bytes, read and checked / parsing it", worst["bytes"], 2, fails=3)
+    yield at_most(
+        "parse and check Observations with all strings new / one again and again", worst["new"], 1.1
     )
-    return {"resourceType": "Bundle", "type": "transaction", "entry": entries}
+    yield at_least("the model library / full check of a parsed Observation", _models(), 50, fails=25)
+    bundles = [_bundle(edition) for edition in EDITIONS]
+    worst = {name: max(one[name] for one in bundles) for name in bundles[0]}
+    what = f"Bundle as we emit it, 25 entries, {_size() / 1000:.0f} kB"
+    yield at_most(f"{what}: full check / parsing it", worst["parsed"], 1, fails=2)
+    yield at_most(f"{what}: from bytes, read and checked / parsing it", worst["bytes"], 2, fails=3.5)
+    for step, seconds in _start().items():
+        yield at_most(step, seconds, 0.3, "s")
 
 
-def interleaved(texts: list[bytes], check: Callable[[Any], object]) -> tuple[float, float, float]:
-    """Seconds spent on loads, on the check of what was just parsed, and on the check from bytes."""
-    loads = parsed = from_bytes = 0.0
-    gc.collect()
-    gc.disable()
-    for start in range(0, len(texts), BATCH):
-        batch = texts[start : start + BATCH]
-        t0 = time.perf_counter()
-        values = [orjson.loads(text) for text in batch]
-        t1 = time.perf_counter()
-        for value in values:
-            check(value)
-        t2 = time.perf_counter()
-        for text in batch:
-            check(text)
-        t3 = time.perf_counter()
-        loads, parsed, from_bytes = loads + t1 - t0, parsed + t2 - t1, from_bytes + t3 - t2
-    gc.enable()
-    return loads, parsed, from_bytes
-
-
-def measure(edition: str) -> dict[str, float]:
-    """The ratios, medians over interleaved rounds."""
+def _observation(edition: str) -> dict[str, float]:
+    """Ratios for a single Observation."""
     source = random.Random(7)
-    check = partial(validate, edition=edition)
-    ratios: dict[str, list[float]] = {name: [] for name in GOALS}
-    same = [orjson.dumps(observation(source))] * (BATCH * 20)
-    for resource in (observation(source), bundle(source)):
-        assert not check(resource), [str(issue) for issue in check(resource)][:3]
-    for _ in range(ROUNDS):
-        texts = [orjson.dumps(observation(source)) for _ in same]
-        loads, parsed, from_bytes = interleaved(texts, check)
-        _, repeated, _ = interleaved(same, check)
-        big = interleaved([orjson.dumps(bundle(source)) for _ in range(4)], check)
-        found = (parsed / loads, from_bytes / loads, parsed / repeated, big[1] / big[0], big[2] / big[0])
-        for name, ratio in zip(GOALS, found, strict=True):
-            ratios[name].append(ratio)
-    return {name: statistics.median(found) for name, found in ratios.items()}
-
-
-def model_library() -> float:
-    """How many times longer the general-purpose model library takes for the same Observations (R4B)."""
-    source = random.Random(3)
-    ratios = []
-    for _ in range(9):
-        values = [observation(source) for _ in range(50)]
-        start = time.perf_counter()
-        for value in values:
-            Observation.model_validate(value)
-        middle = time.perf_counter()
-        for value in values:
-            validate(value, "R4B")
-        ratios.append((middle - start) / (time.perf_counter() - middle))
-    return statistics.median(ratios)
-
-
-def main() -> int:
-    """Prints a line a ratio; 1 when one is above its limit."""
-    over = 0
-    source = random.Random(1)
-    print(
-        f"observation {len(orjson.dumps(observation(source)))} bytes, "
-        f"bundle {len(orjson.dumps(bundle(source)))} bytes"
+    value = observation(source)
+    text = orjson.dumps(value)
+    assert validate(value, edition) == []
+    # the same strings are met again and again, or never twice; both are parsed first, to be as near at hand
+    fresh = iter([orjson.dumps(observation(source)) for _ in range(ROUNDS * CALLS + 1)])
+    times = interleaved(
+        {
+            "loads": lambda: orjson.loads(text),
+            "parsed": lambda: validate(value, edition),
+            "new": lambda: validate(orjson.loads(next(fresh)), edition),
+            "again": lambda: validate(orjson.loads(text), edition),
+            "bytes": lambda: validate(text, edition),
+        },
+        rounds=ROUNDS,
+        calls=CALLS,
     )
-    for edition in ("R4", "R4B", "R5"):
-        for name, ratio in measure(edition).items():
-            goal, limit = GOALS[name]
-            verdict = "goal met" if ratio <= goal else "within limit" if ratio <= limit else "OVER LIMIT"
-            over += ratio > limit
-            print(f"{edition:4} {name:40} {ratio:5.2f}   goal {goal}, limit {limit}: {verdict}")
-    times = model_library()
-    over += times < 25
-    print(f"R4B  model library / full check {times:18.0f}   goal at least 50, limit 25")
-    return 1 if over else 0
+    pairs = {"parsed": "loads", "bytes": "loads", "new": "again"}
+    return {above: ratio(times, above, below) for above, below in pairs.items()}
+
+
+def _models() -> float:
+    value = observation(random.Random(3))
+    times = interleaved(
+        {"models": lambda: Observation.model_validate(value), "ours": lambda: validate(value, "R4B")},
+        calls=CALLS,
+    )
+    return ratio(times, "models", "ours")
+
+
+def _bundle(edition: str) -> dict[str, float]:
+    """Ratios for the Bundle of an examination, with exact decimals as it leaves the encoder."""
+    value = encode(exam(), form="json", recorded=MOMENT, edition=edition)
+    text = fhirjson.write(value)
+    assert validate(value, edition) == []
+    times = interleaved(
+        {
+            "loads": lambda: orjson.loads(text),
+            "parsed": lambda: validate(value, edition),
+            "bytes": lambda: validate(text, edition),
+        },
+        rounds=ROUNDS,
+        calls=40,
+    )
+    return {above: ratio(times, above, "loads") for above in ("parsed", "bytes")}
+
+
+def _size() -> int:
+    return len(fhirjson.write(encode(exam(), form="json", recorded=MOMENT)))
+
+
+def _start() -> dict[str, float]:
+    """Seconds that a fresh process needs: an edition loaded, then its first Observation checked."""
+    command = [sys.executable, str(Path(__file__).resolve())]
+    found = [
+        orjson.loads(subprocess.run([*command, e], check=True, capture_output=True).stdout) for e in EDITIONS
+    ]
+    return {step: max(one[step] for one in found) for step in found[0]}
+
+
+def _load(edition: str) -> None:
+    value: dict[str, Any] = observation(random.Random(1))
+    start = perf_counter()
+    registry(edition)
+    loaded = perf_counter()
+    validate(value, edition)
+    print(
+        orjson.dumps(
+            {
+                "load an edition": loaded - start,
+                "check the first Observation, its type compiled": perf_counter() - loaded,
+            }
+        ).decode()
+    )
 
 
 if __name__ == "__main__":
-    sys.exit(main())
+    _load(sys.argv[1])

@@ -14,13 +14,18 @@ from dataclasses import dataclass
 
 @dataclass(frozen=True)
 class Row:
-    """One line of the table: what was measured, the figure, and the goal it is held against."""
+    """One line of the table: what was measured, the figure, and the goal it is held against.
+
+    `passes` is False when the figure is so far off that the run has to fail; without a wider limit of its
+    own, a missed goal does that.
+    """
 
     what: str
     figure: float
     unit: str
     goal: str
     holds: bool
+    passes: bool
 
     def __str__(self) -> str:
         return (
@@ -56,11 +61,19 @@ def ratio(times: Mapping[str, list[float]], above: str, below: str) -> float:
     return statistics.median(a / b for a, b in zip(times[above], times[below], strict=True))
 
 
-def at_most(what: str, figure: float, limit: float, unit: str = "x") -> Row:
-    """A row whose goal is an upper limit."""
-    return Row(what, figure, unit, f"at most {limit:g}", figure <= limit)
+def at_most(what: str, figure: float, limit: float, unit: str = "x", *, fails: float | None = None) -> Row:
+    """A row whose goal is an upper limit; `fails`: the wider one above which the run fails."""
+    if fails is None:
+        return Row(what, figure, unit, f"at most {limit:g}", figure <= limit, figure <= limit)
+    return Row(
+        what, figure, unit, f"at most {limit:g}, fails above {fails:g}", figure <= limit, figure <= fails
+    )
 
 
-def at_least(what: str, figure: float, limit: float, unit: str = "x") -> Row:
-    """A row whose goal is a lower limit."""
-    return Row(what, figure, unit, f"at least {limit:g}", figure >= limit)
+def at_least(what: str, figure: float, limit: float, unit: str = "x", *, fails: float | None = None) -> Row:
+    """A row whose goal is a lower limit; `fails`: the wider one below which the run fails."""
+    if fails is None:
+        return Row(what, figure, unit, f"at least {limit:g}", figure >= limit, figure >= limit)
+    return Row(
+        what, figure, unit, f"at least {limit:g}, fails below {fails:g}", figure >= limit, figure >= fails
+    )
