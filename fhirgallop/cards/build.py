@@ -13,7 +13,7 @@ from dataclasses import dataclass
 from typing import Any, Final
 
 from fhirgallop.cards import words
-from fhirgallop.cards.card import Card, Section, combination_digest, entry_digest, may_be_true
+from fhirgallop.cards.card import Card, combination_digest, entry_digest, may_be_true
 from fhirgallop.cards.memory import Answer
 from fhirgallop.cards.policy import Ask, Decision
 from fhirgallop.cards.safety import SAFETY_TEXTS
@@ -119,11 +119,12 @@ def _shown(card: Card, frame: Frame) -> Shown:
 
 def _card(card: Card, held: Held, frame: Frame) -> dict[str, Any]:
     urgent = card.level == "urgent"
-    family = "" if urgent else card.sections[0].conclusions[0].rule.family
-    topic = "urgent" if urgent else family or card.sections[0].conclusions[0].rule.id
+    first, rule = card.sections[0], card.sections[0].conclusions[0].rule
+    topic = "urgent" if urgent else rule.family or rule.id
+    headline = URGENT_PHRASE if urgent else summary(first.title, first.question, first.conclusions[0].text)
     found: dict[str, Any] = {
         "uuid": _id(frame, card.key),
-        "summary": URGENT_PHRASE if urgent else _summary(card.sections[0]),
+        "summary": headline,
         "indicator": _indicator(card, frame),
         "detail": "\n".join(_urgent_detail(card, held) if urgent else _detail(card, held)),
         "source": _source(frame, topic, card.title),
@@ -166,14 +167,13 @@ def _source(frame: Frame, topic: str, display: str) -> dict[str, Any]:
     return source
 
 
-def _summary(section: Section) -> str:
+def summary(title: str, question: str, text: str) -> str:
     """One sentence that fits: the family's question, else what its first rule says, else the title."""
-    texts = (section.question, section.conclusions[0].text, f"{section.title}.")
-    for text in texts:
-        sentence = _SENTENCE.match(text)
+    for one in (question, text):
+        sentence = _SENTENCE.match(one)
         if sentence and len(sentence[0]) <= MAX_SUMMARY:
             return sentence[0]
-    return section.title[: MAX_SUMMARY - 1] + "…" if len(section.title) > MAX_SUMMARY else section.title
+    return title if len(title) <= MAX_SUMMARY else f"{title[: MAX_SUMMARY - 1]}…"
 
 
 def _detail(card: Card, held: Held) -> Iterator[str]:

@@ -9,7 +9,8 @@
 4. What was answered is silent for the encounter; what is true in this patient, for twelve months, unless it
    is urgent or a matter of definition. What was shown comes again only when an entry changes.
 5. At most three advisory cards in view, the rest folded.
-6. Unknown never alerts; one line may ask for the datum that would settle most.
+6. Unknown never alerts; one line may ask for the datum that would settle most, where that is more than one
+   question or an urgent one.
 7. In shadow mode all of this is worked out and logged, and nothing is shown.
 
 Source: the alert policy of this project's evidence (over-alerting literature read there: override 46-96 %,
@@ -139,7 +140,7 @@ def decide(
     else:
         quiet = policy.interruptions == 0 or encounter in memory.interrupted
         cards, folded = _cards(speaking, review, book, policy, interrupt=not quiet)
-    ask = None if urgent else _ask(review, memory, encounter)
+    ask = None if urgent else _ask(review, memory, encounter, book)
     _note(log, (c for card in cards for c in card.conclusions if c in speaking), "shown")
     _note(log, (c for card in folded for c in card.conclusions), "folded")
     if policy.shadow:
@@ -195,11 +196,13 @@ def _note(log: list[LogLine], conclusions: Iterable[Conclusion], fate: Fate) -> 
     log += (LogLine(c.rule.id, c.tier, fate) for c in conclusions)
 
 
-def _ask(review: Review, memory: Memory, encounter: str) -> Ask | None:
+def _ask(review: Review, memory: Memory, encounter: str, book: Rulebook) -> Ask | None:
     datum = review.next_datum
     if datum is None or memory.was_shown(encounter, digest("ask", datum.id)):
         return None
     count = len(datum.settles)
+    if count == 1 and book.rules[datum.settles[0]].tier is not Tier.U:
+        return None
     settles = "one open question" if count == 1 else f"{count} open questions"
     return Ask(
         datum.id, f"Not recorded: {words.label(datum.id)}. It could settle {settles} ({datum.action})."
