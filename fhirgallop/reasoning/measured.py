@@ -43,6 +43,9 @@ class Given:
             ground = place(item, self.window)
             if ground is not None and _same_reading(item, subject):
                 found.append(ground)
+        if subject is not None and sum(_of_another_panel(g.item, subject) for g in found) > 1:
+            # Several readings, and nothing that says which of them goes with the subject.
+            return None
         return min(found, key=_age, default=None)
 
     def value(self, item: Item) -> Value | None:
@@ -65,7 +68,15 @@ def _age(ground: Ground) -> tuple[float, str]:
 
 
 def _same_reading(item: Item, subject: Item | None) -> bool:
-    return subject is None or not (item.of_exam and subject.of_exam) or item.instance == subject.instance
+    """Numbers of one panel go together by instance; a finding of another kind goes with the only reading."""
+    if subject is None or item.instance == subject.instance or not (item.of_exam and subject.of_exam):
+        return True
+    return _of_another_panel(item, subject)
+
+
+def _of_another_panel(item: Item, subject: Item) -> bool:
+    both = item.of_exam and subject.of_exam
+    return both and item.id.partition(".")[0] != subject.id.partition(".")[0]
 
 
 def _inputs(given: tuple[Given, ...], view: View) -> tuple[dict[str, Value], Support, list[str]]:

@@ -10,11 +10,13 @@ from fhirgallop.reasoning.conclusion import Conclusion, Outcome
 from fhirgallop.reasoning.conditions import View
 from fhirgallop.reasoning.conflicts import recheck_of
 from fhirgallop.reasoning.logic import Truth, all_of
-from fhirgallop.reasoning.vocabulary import Recheck, Strength, kinds
+from fhirgallop.reasoning.vocabulary import Recheck, Strength, Tier, kinds
 
 _WEIGHTS: Final = {
     Strength.HARD: 8, Strength.STRONG: 8, Strength.MODERATE: 4, Strength.WEAK: 2, Strength.INFORMATIONAL: 1,
 }  # fmt: skip
+# Nobody is sent to look for what would end in the detail panel.
+_WORTH_A_LINE: Final = frozenset({Tier.U, Tier.T1, Tier.T2})
 
 
 @dataclass(frozen=True, slots=True)
@@ -52,7 +54,7 @@ def next_datum(conclusions: Iterable[Conclusion], view: View, table: Sequence[Re
         if conclusion.outcome is not Outcome.OPEN or conclusion.silenced_by:
             continue
         weight = _WEIGHTS.get(conclusion.strength, 0)
-        if weight:
+        if weight and conclusion.rule.tier in _WORTH_A_LINE:
             for datum in conclusion.unknown:
                 if _could_settle(datum, conclusion, view):
                     settled.setdefault(datum, {})[conclusion.rule.id] = weight

@@ -197,10 +197,15 @@ def test_an_urgent_card_can_only_be_acknowledged(bedside: Any) -> None:
 
 
 def test_unknown_never_alerts_and_asks_at_most_once(bedside: Any) -> None:
-    first = bedside.see("heart-sound.s4")
+    first = bedside.see("murmur.diastolic")
     assert first.cards == ()
     assert first.ask is not None
     assert "Not recorded" in first.ask.text
+    assert bedside.see("murmur.diastolic").ask is None
+
+
+def test_a_single_question_that_is_not_urgent_is_not_asked(bedside: Any) -> None:
+    assert bedside.review("heart-sound.s4").next_datum is not None
     assert bedside.see("heart-sound.s4").ask is None
 
 
