@@ -106,10 +106,10 @@ def _each(values: list[Any], name: str, limits: Limits, convert: Convert) -> Ite
         else:
             reading = convert(value, name, limits)
         for read in reading.stream(name):
+            at = f"[{place}]"
             if isinstance(read, LocalRecord):
-                yield read
+                yield replace(read, source=f"{name}{at}") if name else read
             else:
-                at = f"[{place}]"
                 named = (replace(i, field=f"{at}.{i.field}" if i.field else at) for i in read.issues)
                 yield replace(read, issues=tuple(named))
 

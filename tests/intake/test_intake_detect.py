@@ -131,3 +131,8 @@ def test_a_json_list_may_be_larger_than_one_record():
     for text in (b"[" + b",".join([one] * 9) + b"]", b'{"a": "' + b"x" * 100 + b'"}'):
         (read,) = open_records(text, name="e.json", limits=limits)
         assert rules([read]) == [["json-too-large"]]
+
+
+def test_a_record_of_a_json_list_knows_its_place():
+    reads = open_records(b'[{"a": 1}, 5, {"a": 2}]', name="e.json")
+    assert [read.source for read in reads] == ["e.json[0]", "e.json", "e.json[2]"]
