@@ -15,20 +15,18 @@ from typing import Any
 
 from jsonschema_rs import Draft202012Validator, RegexOptions
 
-from fhirgallop.conformance import fast_profiles, invariants, references, structure, walk
+from fhirgallop.conformance import fast_profiles
 from fhirgallop.conformance.fast_formats import ID, UUID
 from fhirgallop.conformance.fast_logic import Logic
 from fhirgallop.conformance.fast_residue import Check, codes_apart
 from fhirgallop.conformance.fast_schema import Form, Schema, SchemaBuilder
-from fhirgallop.conformance.node import Node
+from fhirgallop.conformance.fast_walk import judged_well, no_narrative, without_narrative
 from fhirgallop.conformance.registry import Registry
-from fhirgallop.conformance.source import exact
 from fhirgallop.conformance.vital_signs import PROFILES as VITAL_SIGNS
 from fhirgallop.conformance.vital_signs import profiles_for
 from fhirgallop.outcome import Issue
 
 _KINDS = {"transaction": True, "batch": True, "collection": False}
-_DOM_6 = "dom-6"
 _LONG = re.compile(rb"[0-9.]{17}")
 
 
@@ -53,13 +51,13 @@ def settle(
     elif _accepted(value, kind, known) is None:
         return None
     else:
-        missing = [] if "text" in value or kind in _no_narrative(known) else [kind]
+        missing = [] if "text" in value or kind in no_narrative(known) else [kind]
     if missing is None:
         return None
     if not missing:
         return []
     # the place of a missing narrative in a text has to be found
-    return _without_narrative(value, missing, known) if text is None else None
+    return without_narrative(value, missing, known) if text is None else None
 
 
 @dataclass(frozen=True, slots=True)
@@ -169,22 +167,9 @@ def _bundle(value: dict[str, Any], known: Registry, text: bytes | None) -> list[
                 return None
         elif not _targets_right(resource, ready, urls):
             return None
-        elif "text" not in resource and kind not in _no_narrative(known):
+        elif "text" not in resource and kind not in no_narrative(known):
             missing.append(f"Bundle.entry[{index}].resource")
-    return missing if not doubtful or _judged_well(value, text, doubtful, known) else None
-
-
-def _judged_well(value: dict[str, Any], text: bytes | None, places: list[int], known: Registry) -> bool:
-    """Whether the walk finds nothing wrong with the resources of these entries."""
-    root = Node(value if text is None else exact(text).value, "Bundle")
-    scope = references.scope_of(root, known.edition)
-    issues: list[Issue] = []
-    entries = [n for n in structure.open_node(root, known.edition, issues) if n.key == "entry"]
-    for place in places:
-        for node in structure.open_node(entries[place], known.edition, issues):
-            if node.key == "resource" and next(walk.judge(node, known, scope), None) is not None:
-                return False
-    return not issues
+    return missing if not doubtful or judged_well(value, text, doubtful, known) else None
 
 
 def _consistent(entry: Mapping[str, Any], resource: Mapping[str, Any], kind: str) -> bool:
@@ -232,28 +217,6 @@ def _led_right(value: Any, plan: Mapping[str, Any], urls: Mapping[str, str]) -> 
     return True
 
 
-def _without_narrative(value: dict[str, Any], places: list[str], known: Registry) -> list[Issue] | None:
-    """The issues of the missing narratives, each as the walk words it."""
-    root = Node(value, str(value["resourceType"]))
-    scope = references.scope_of(root, known.edition)
-    issues: list[Issue] = []
-    nodes = [root]
-    if root.type_name == "Bundle":
-        nodes = [
-            child
-            for entry in structure.open_node(root, known.edition, issues)
-            if entry.key == "entry"
-            for child in structure.open_node(entry, known.edition, issues)
-            if child.key == "resource"
-        ]
-    wanted = frozenset(places)
-    for node in nodes:
-        if node.expression in wanted:
-            found = [i for i in invariants.check(node, scope) if i.rule == _DOM_6]
-            issues.extend(found)
-    return issues
-
-
 def _valid(validator: Draft202012Validator, value: object) -> bool:
     """False also for what JSON cannot hold: the thorough pass says what that is."""
     try:
@@ -294,13 +257,3 @@ def _envelope(known: Registry, asks: bool) -> Draft202012Validator:
 
 def _compiled(schema: Schema) -> Draft202012Validator:
     return Draft202012Validator(schema, pattern_options=RegexOptions(), validate_formats=True)
-
-
-@lru_cache(maxsize=8)
-def _no_narrative(known: Registry) -> frozenset[str]:
-    """Resource types that no invariant asks a narrative of (Bundle, Binary, Parameters)."""
-    return frozenset(
-        name
-        for name in known.edition.resources
-        if all(i.key != _DOM_6 for i in getattr(known.edition.type(name), "invariants", ()))
-    )
