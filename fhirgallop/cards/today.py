@@ -14,11 +14,12 @@ from typing import Any, Final
 from fhirgallop.cards.hooks import Call
 from fhirgallop.chart.gather import Found, gather
 from fhirgallop.chart.log import Log
-from fhirgallop.chart.own_exam import OwnExam, read_own_exams
+from fhirgallop.chart.own_exam import Gathered, OwnExam, gather_own_exams, read_own_exam
 from fhirgallop.chart.read import read_chart
 from fhirgallop.chart.times import Times
 from fhirgallop.chart.whose import Whose, recognise
 from fhirgallop.exam.exam import Party
+from fhirgallop.exam.moment import Moment
 from fhirgallop.outcome import Issue, has_errors
 from fhirgallop.reasoning.items import moment
 from fhirgallop.reasoning.review import Review, review
@@ -101,19 +102,22 @@ def _of_chart(
     call: Call, ours: Sequence[Found], whose: Whose, at: tuple[datetime, Rulebook, Log]
 ) -> OwnExam | None:
     now, rules, log = at
-    exams = read_own_exams(ours, whose.party, Times(now, log), log)
     within = rules.windows[_WINDOW].within or _DAY
-    today = [own for own in exams if _is_todays(own, call, now, within)]
-    return max(today, key=lambda own: (moment(own.exam.time.start) or 0, own.exam.identifier), default=None)
+    exams = [one for one in gather_own_exams(ours, Times(now, log)) if _is_todays(one, call, now, within)]
+    for newest in sorted(exams, key=lambda one: (-(moment(one.start) or 0), one.encounter)):
+        own = read_own_exam(newest, whose.party, log)
+        if own.exam.entries:
+            return own
+    return None
 
 
-def _is_todays(own: OwnExam, call: Call, now: datetime, within: int) -> bool:
-    exam = own.exam
-    if exam.encounter and call.encounter and exam.encounter.value != call.encounter:
+def _is_todays(one: Gathered, call: Call, now: datetime, within: int) -> bool:
+    if one.encounter and call.encounter and one.encounter != call.encounter:
         return False
-    start = moment(exam.time.start) if exam.time.precise_to_day else None
+    time = Moment(one.start)
+    start = moment(one.start) if time.precise_to_day else None
     # a day without a time of day may have been any hour of it, in any zone
-    return start is not None and now.timestamp() - start <= within + (0 if exam.time.has_clock else _DAY)
+    return start is not None and now.timestamp() - start <= within + (0 if time.has_clock else _DAY)
 
 
 def _of_draft(
@@ -127,7 +131,8 @@ def _of_draft(
             "an identifier that the prefetched Patient has. Nothing was evaluated."
         )
         return None, [Issue("error", "business-rule", "hook-other-patient", words, field=place)]
-    exams = read_own_exams(observations, whose.party, times, log)
+    read = [read_own_exam(one, whose.party, log) for one in gather_own_exams(observations, times)]
+    exams = [own for own in read if own.exam.entries]
     if len(exams) != 1:
         words = (
             "The draft holds several examinations; send one."

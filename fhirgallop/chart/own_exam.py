@@ -35,15 +35,30 @@ _NOT_DONE: Final = "not-done"
 
 
 @dataclass(frozen=True, slots=True)
+class Gathered:
+    """The Observations of one examination, before they are read.
+
+    Attributes:
+        start: FHIR dateTime of the examination.
+        encounter: FHIR id; empty when none is named.
+        members: each Observation with its own time.
+    """
+
+    start: str
+    encounter: str
+    members: tuple[tuple[Found, str], ...]
+
+
+@dataclass(frozen=True, slots=True)
 class OwnExam:
-    """One examination, and the Observations it was read from (their names, and that of each entry)."""
+    """One examination, and the Observations it was read from (their names, by finding)."""
 
     exam: Exam
     found: tuple[Found, ...]
     names: Mapping[str, str]
 
 
-def read_own_exams(chart: Sequence[Found], patient: Party, times: Times, log: Log) -> list[OwnExam]:
+def gather_own_exams(chart: Sequence[Found], times: Times) -> list[Gathered]:
     """Every examination of ours among the resources, in the order of the chart.
 
     Observations belong together that one panel names as its members; without a panel, those of one encounter
@@ -51,28 +66,52 @@ def read_own_exams(chart: Sequence[Found], patient: Party, times: Times, log: Lo
 
     Args:
         chart: the patient's own resources, those of other patients already left out.
-        patient: whose.
         times: reads times against the moment of review.
-        log: takes what could not be read.
     """
     places = by_place(chart)
-    groups: dict[tuple[str, str], list[tuple[Found, str]]] = {}
-    panels: dict[int, tuple[str, str]] = {}
     ours = [found for found in chart if found.type == "Observation" and _finding(found.resource)]
+    moments = {id(found): times.of(found.resource, "effective", found.place) or "" for found in ours}
+    panels: dict[int, tuple[str, str]] = {}
     for found in ours:
-        held = _moment(found, times)
-        if held:
+        if moments[id(found)]:
             for member in elements(found.resource.get("hasMember")):
                 target = places.get(reference(member))
                 if target is not None:
-                    panels.setdefault(id(target), (_encounter(found), held))
+                    panels.setdefault(id(target), (_encounter(found), moments[id(found)]))
+    groups: dict[tuple[str, str], list[tuple[Found, str]]] = {}
     for found in ours:
-        written = _moment(found, times)
+        written = moments[id(found)]
         if written and text(found.resource.get("status")) not in _WITHDRAWN:
             key = panels.get(id(found), (_encounter(found), written))
             groups.setdefault(key, []).append((found, written))
-    exams = (_exam(key, members, patient, log) for key, members in groups.items())
-    return [one for one in exams if one.exam.entries]
+    return [Gathered(start, encounter, tuple(members)) for (encounter, start), members in groups.items()]
+
+
+def read_own_exam(gathered: Gathered, patient: Party, log: Log) -> OwnExam:
+    """The examination that these Observations say; one without entries where they say nothing of their own.
+
+    Args:
+        gathered: Observations that belong together.
+        patient: whose.
+        log: takes what could not be read.
+    """
+    entries: list[Entry] = []
+    names: dict[str, str] = {}
+    for found, written in gathered.members:
+        for entry in _entries(found, log):
+            entries.append(entry if written == gathered.start else replace(entry, time=written))
+            names.setdefault(entry.finding, found.name if found.id else "")
+    statuses = {text(found.resource.get("status")) for found, _ in gathered.members}
+    exam = Exam(
+        patient=patient,
+        identifier=gathered.start,
+        identifier_system="",
+        time=Moment(gathered.start),
+        entries=tuple(_told_apart(_joined(entries))),
+        status="preliminary" if "preliminary" in statuses else "final",
+        encounter=Party(gathered.encounter, is_fhir_id=True) if gathered.encounter else None,
+    )
+    return OwnExam(exam, tuple(found for found, _ in gathered.members), names)
 
 
 def _finding(holder: Element) -> FindingDefinition | None:
@@ -84,31 +123,6 @@ def _finding(holder: Element) -> FindingDefinition | None:
 def _encounter(found: Found) -> str:
     literal = reference(element(found.resource.get("encounter"))).partition("/_history/")[0]
     return literal.rpartition("/")[2]
-
-
-def _moment(found: Found, times: Times) -> str:
-    return times.of(found.resource, "effective", found.place) or ""
-
-
-def _exam(key: tuple[str, str], members: Sequence[tuple[Found, str]], patient: Party, log: Log) -> OwnExam:
-    encounter, start = key
-    entries: list[Entry] = []
-    names: dict[str, str] = {}
-    for found, written in members:
-        for entry in _entries(found, log):
-            entries.append(entry if written == start else replace(entry, time=written))
-            names.setdefault(entry.finding, found.name if found.id else "")
-    preliminary = any(text(found.resource.get("status")) == "preliminary" for found, _ in members)
-    exam = Exam(
-        patient=patient,
-        identifier=start,
-        identifier_system="",
-        time=Moment(start),
-        entries=tuple(_told_apart(_joined(entries))),
-        status="preliminary" if preliminary else "final",
-        encounter=Party(encounter, is_fhir_id=True) if encounter else None,
-    )
-    return OwnExam(exam, tuple(found for found, _ in members), names)
 
 
 def _entries(found: Found, log: Log) -> Iterator[Entry]:

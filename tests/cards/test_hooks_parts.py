@@ -31,8 +31,8 @@ JSON = st.recursive(
     LEAF, lambda inner: st.lists(inner, max_size=4) | st.dictionaries(NAMES, inner, max_size=6), max_leaves=40
 )
 PATHS = [
-    ("hook",), ("hookInstance",), ("context",), ("context", "userId"), ("context", "patientId"), ("prefetch",),
-    ("prefetch", "patient"), ("prefetch", "exam"), ("fhirServer",), ("fhirAuthorization",),
+    ("hook",), ("hookInstance",), ("context",), ("context", "userId"), ("context", "patientId"),
+    ("prefetch",), ("prefetch", "patient"), ("prefetch", "exam"), ("fhirServer",), ("fhirAuthorization",),
 ]  # fmt: skip
 CALL = {
     "hook": "patient-view",
