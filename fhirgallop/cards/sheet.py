@@ -12,9 +12,9 @@ from fhirgallop.cards.card import Card
 from fhirgallop.cards.policy import Decision
 from fhirgallop.cards.safety import SAFETY_TEXTS
 from fhirgallop.exam.exam import Exam
-from fhirgallop.reasoning.conclusion import Conclusion, Outcome, cutoffs_of
+from fhirgallop.reasoning.conclusion import BEARING, Conclusion, Outcome, cutoffs_of
 from fhirgallop.reasoning.review import Review
-from fhirgallop.reasoning.vocabulary import Tier
+from fhirgallop.reasoning.vocabulary import Relation, Strength, Tier
 
 WIDTH: Final = 96
 _HEADINGS: Final = {"urgent": "NOW", "interruptive": "ONE QUESTION", "advisory": "TO CONSIDER"}
@@ -31,12 +31,13 @@ _OUTCOMES: Final = {
 }
 _ORDER: Final = tuple(_OUTCOMES)
 _UNKNOWN: Final = (Outcome.NOT_LOOKED_FOR, Outcome.OPEN)
-MAX_UNKNOWN: Final = 6
+MAX_UNKNOWN: Final = 3
 
 
 def sheet(exam: Exam, review: Review, decision: Decision) -> str:
     """The whole sheet as plain text."""
     lines = [f"Review of the examination of {exam.time.start}, with rules {review.rules_version}", ""]
+    lines += _block("MOST RULES ARE NOT MEANT FOR THIS PATIENT AND WERE NOT APPLIED", _limits(review))
     for card in decision.cards:
         lines += [*_card(card), ""]
     if not decision.cards:
@@ -93,6 +94,11 @@ def _source(conclusion: Conclusion) -> str:
     return f"Source: {conclusion.rule.source} ({conclusion.rule.seen}; {conclusion.rule.id})"
 
 
+def _limits(review: Review) -> Iterator[str]:
+    for guard in review.limits:
+        yield f"{'; '.join(words.entry(g.item) for g in guard.subject)}. {guard.rule.mechanism}"
+
+
 def _findings(review: Review) -> list[str]:
     """Every finding of today, with what each rule about it found; what a guard silenced is left out."""
     groups = (
@@ -105,34 +111,53 @@ def _findings(review: Review) -> list[str]:
         if conclusion.subject and not silent:
             by_subject.setdefault(words.said(conclusion.subject[0].item), {})[conclusion] = None
     lines = []
+    left_out = 0
     for subject in sorted(by_subject):
         ordered = sorted(by_subject[subject], key=lambda c: (_ORDER.index(c.outcome), c.rule.id))
         about: list[str] = []
         for line in dict.fromkeys(_known(c) for c in ordered if c.outcome not in _UNKNOWN):
             about += _filled(line, "    ")
         for outcome in _UNKNOWN:
-            about += _unknown(outcome, [c for c in ordered if c.outcome is outcome])
+            said, more = _unknown(outcome, [c for c in ordered if c.outcome is outcome])
+            about += said
+            left_out += more
         if about:
             lines += [*_filled(subject, "  "), *about]
+    if left_out:
+        lines += _filled(f"Unrecorded things of less weight: {left_out}; the JSON form lists them all.", "  ")
     return ["FINDING BY FINDING", *lines, ""] if lines else []
 
 
 def _known(conclusion: Conclusion) -> str:
-    """What a rule found, and what it rests on."""
+    """What a rule found, and what it rests on besides the finding itself."""
     if conclusion.outcome is Outcome.NOTE:
         return f"note: {conclusion.text}"
-    basis = "; ".join(words.ground(g) for g in conclusion.grounds)
+    subject = {ground.item.key for ground in conclusion.subject}
+    basis = "; ".join(words.ground(g) for g in conclusion.grounds if g.item.key not in subject)
     return f"{_OUTCOMES[conclusion.outcome]}: {basis or conclusion.text}"
 
 
-def _unknown(outcome: Outcome, conclusions: Iterable[Conclusion]) -> list[str]:
-    """The data nobody recorded, named once, those that most rules ask for first."""
-    asked = Counter(words.label(id_) for c in conclusions for id_ in c.unknown)
-    if not asked:
-        return []
-    named = [label for label, _ in asked.most_common()]
-    more = f"; and {len(named) - MAX_UNKNOWN} more" if len(named) > MAX_UNKNOWN else ""
-    return _filled(f"{_OUTCOMES[outcome]}: {'; '.join(named[:MAX_UNKNOWN])}{more}", "    ")
+def _unknown(outcome: Outcome, conclusions: Iterable[Conclusion]) -> tuple[list[str], int]:
+    """The few unrecorded data that weigh most, most asked for first; and how many are left out."""
+    asked: Counter[str] = Counter()
+    light: set[str] = set()
+    for conclusion in conclusions:
+        labels = {words.label(id_) for id_ in conclusion.unknown}
+        if _weighs(conclusion):
+            asked.update(sorted(labels))
+        else:
+            light |= labels
+    named = [label for label, _ in asked.most_common(MAX_UNKNOWN)]
+    more = len(light.union(asked).difference(named))
+    return (_filled(f"{_OUTCOMES[outcome]}: {'; '.join(named)}", "    ") if named else []), more
+
+
+def _weighs(conclusion: Conclusion) -> bool:
+    """What a finding needs, what could interrupt, and companions that are more than weakly expected."""
+    if conclusion.outcome is Outcome.OPEN:
+        required = conclusion.rule.relation is Relation.REQUIRES and conclusion.rule.strength in BEARING
+        return required or conclusion.rule.tier is Tier.T1
+    return conclusion.strength in (Strength.HARD, Strength.STRONG, Strength.MODERATE)
 
 
 def _block(heading: str, texts: Iterable[str]) -> list[str]:

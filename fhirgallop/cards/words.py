@@ -36,6 +36,7 @@ _STATES: Final = {
     State.UNCERTAIN: "uncertain",
 }
 _OF_SUBJECT: Final = {"subject.grade": "its loudness grade", "subject.scale": "the scale of its grade"}
+_SPANS: Final = {"a": "year", "mo": "month", "wk": "week", "d": "day", "h": "hour"}
 _UNITS: Final = ((31_557_600, "year"), (2_629_800, "month"), (86_400, "day"), (3_600, "hour"), (60, "minute"))
 
 
@@ -69,9 +70,11 @@ def said(item: Item) -> str:
 
 
 def number(measure: Measure) -> str:
-    """A number with its printed unit."""
+    """A number with its printed unit; years and days in words."""
     unit = units.table().by_code.get(measure.unit)
     printed = unit.printed if unit and unit.printed not in ("1", "ratio") else ""
+    if measure.unit in _SPANS:
+        printed = _SPANS[measure.unit] + ("" if measure.value == 1 and measure.high is None else "s")
     span = f"{measure.value:f}" if measure.high is None else f"{measure.value:f} to {measure.high:f}"
     return f"{measure.comparator}{span} {printed}".rstrip()
 
@@ -90,6 +93,9 @@ def _qualifier(qualifier: Qualifier) -> str:
     if qualifier.grade is not None:
         return f"grade {qualifier.grade}"
     value = axis.values.get(qualifier.value) if axis else None
+    if value is not None and qualifier.axis == "suspected-lesion":
+        # the examiner's guess, never a fact
+        return f"suspected: {value.label}"
     if value is not None:
         # "softer" alone says nothing without the manoeuvre
         return (

@@ -88,9 +88,10 @@ def _inputs(given: tuple[Given, ...], view: View) -> tuple[dict[str, Value], Sup
             continue
         ground = entry.ground(view)
         value = entry.value(ground.item) if ground else None
-        if ground is None or value is None:
+        if ground is None:
             missing.append(entry.fact)
-        else:
+        elif value is not None:
+            # What was recorded without an exact value is there; nobody is asked for it again.
             values[entry.name] = value
             grounds.append(ground)
     return values, frozenset(grounds), missing

@@ -48,6 +48,7 @@ class Review:
         companions: what is expected beside a finding: confirmed, missing, not looked for.
         explanations: causes that stand in the chart, unranked.
         notes: remarks of guards.
+        limits: guards that put this patient outside most rules (a child, pregnancy).
         open: questions that nobody can answer from the record.
         silenced: what a guard or another rule kept back, and which.
         conflicts, repair: minimal conflict sets over hard and strong rules, and what to look at again.
@@ -65,6 +66,7 @@ class Review:
     companions: tuple[Conclusion, ...]
     explanations: tuple[Conclusion, ...]
     notes: tuple[Conclusion, ...]
+    limits: tuple[Conclusion, ...]
     open: tuple[Conclusion, ...]
     silenced: tuple[Conclusion, ...]
     conflicts: tuple[ConflictSet, ...]
@@ -95,8 +97,8 @@ class Review:
         named: dict[str, Any] = {
             name: [c.as_dict() for c in getattr(self, name)]
             for name in (
-                "urgent", "contradictions", "prerequisites", "companions", "explanations", "notes", "open",
-                "silenced", "conflicts", "changes", "likelihoods",
+                "urgent", "contradictions", "prerequisites", "companions", "explanations", "notes", "limits",
+                "open", "silenced", "conflicts", "changes", "likelihoods",
             )
         }  # fmt: skip
         named["repair"] = self.repair.as_dict()
@@ -143,6 +145,7 @@ def review(
         ),
         explanations=_sorted(c for c in spoken if c.outcome is Outcome.EXPLAINS and c.tier is not Tier.U),
         notes=_sorted(c for c in spoken if c.outcome is Outcome.NOTE),
+        limits=_sorted(g for g in concluded.guards if g.rule.suppresses and g.rule.suppresses.not_for),
         open=_sorted(c for c in all_ if c.outcome is Outcome.OPEN and not c.silenced_by),
         silenced=_sorted(
             c for c in all_ if (c.silenced_by or c.merged_into) and c.outcome is not Outcome.OPEN

@@ -15,7 +15,7 @@ from fhirgallop.cards import words
 from fhirgallop.cards.memory import Memory
 from fhirgallop.cards.policy import decide
 from fhirgallop.cards.safety import SAFETY_TEXTS
-from fhirgallop.cards.sheet import WIDTH, sheet
+from fhirgallop.cards.sheet import MAX_UNKNOWN, WIDTH, sheet
 from fhirgallop.cards.signoff import rule_text, signoff_sheet
 from fhirgallop.exam.context import Context, Fact, Source, State
 from fhirgallop.exam.entry import Entry, Grade, Measure, Qualifier
@@ -57,7 +57,37 @@ def test_the_sheet_of_nothing_reassures_nobody() -> None:
     text = text_of((S4,), (replace(AF, answers=("sinus-rhythm",)),))
     assert "Nothing to raise. That is no reassurance" in text
     assert "has what it needs: Cardiac rhythm: Sinus rhythm" in text
-    assert "not recorded, would matter:" in text
+
+
+def test_only_the_unrecorded_data_that_matter_are_named_and_the_rest_is_counted() -> None:
+    text = text_of((S4, Entry("murmur.systolic")), ())
+    named = [line for line in text.splitlines() if "not recorded, would matter" in line]
+    assert any("Cardiac rhythm" in line for line in named)
+    assert max(line.count(";") for line in named) < MAX_UNKNOWN
+    assert re.search(r"Unrecorded things of less weight: \d+; the JSON form lists them all", text)
+
+
+@pytest.mark.parametrize(
+    "fact",
+    [
+        Fact("patient.age", State.PRESENT, Source.DEMOGRAPHICS, measure=Measure(Decimal(6), "a")),
+        Fact(
+            "patient.pregnancy-status", State.PRESENT, Source.DEMOGRAPHICS, ("pregnant",), time="2026-11-29"
+        ),
+    ],
+)
+def test_a_patient_the_rules_are_not_meant_for_is_told_so(fact: Fact) -> None:
+    text = text_of((S4,), (fact,))
+    assert "MOST RULES ARE NOT MEANT FOR THIS PATIENT AND WERE NOT APPLIED" in text
+    assert words.label(fact.id) in text
+    assert "NOT MEANT" not in text_of((S4,), ())
+
+
+def test_a_lesion_that_the_examiner_suspects_is_not_told_as_a_fact() -> None:
+    text = text_of(
+        (Entry("murmur.systolic", qualifiers=(Qualifier("suspected-lesion", "aortic-stenosis"),)),), ()
+    )
+    assert "(suspected: Aortic stenosis)" in " ".join(text.split())
 
 
 def test_disagreeing_sources_are_both_named() -> None:

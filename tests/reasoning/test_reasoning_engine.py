@@ -20,7 +20,7 @@ VEINS = {"id": "jvp.level", "answer": "elevated"}
 AF_ECG = {"id": "rhythm.diagnosis", "answer": "atrial-fibrillation", "from": "ecg", "age": "1 h"}
 
 REVIEW_KEYS = [
-    "urgent", "contradictions", "prerequisites", "companions", "explanations", "notes", "open", "silenced",
+    "urgent", "contradictions", "prerequisites", "companions", "explanations", "notes", "limits", "open", "silenced",
     "conflicts", "changes", "likelihoods", "repair", "next_datum", "disagreements", "unusable",
     "rules_version", "notice",
 ]  # fmt: skip
