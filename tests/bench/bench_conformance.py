@@ -115,7 +115,7 @@ def _observation(edition: str) -> dict[str, float]:
     text = orjson.dumps(value)
     assert validate(value, edition) == []
     # the same strings are met again and again, or never twice; both are parsed first, to be as near at hand
-    fresh = iter([orjson.dumps(observation(source)) for _ in range(ROUNDS * CALLS + 1)])
+    fresh = iter([orjson.dumps(observation(source)) for _ in range(ROUNDS * (CALLS + CALLS // 10 + 1) + 1)])
     times = interleaved(
         {
             "loads": lambda: orjson.loads(text),
