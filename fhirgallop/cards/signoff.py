@@ -10,11 +10,12 @@ from collections.abc import Iterator
 from typing import Final
 
 from fhirgallop.cards import words
+from fhirgallop.cards.conditions import UNSAID, in_words
 from fhirgallop.cards.safety import SAFETY_TEXTS
 from fhirgallop.reasoning.conclusion import cutoffs_of
 from fhirgallop.reasoning.rule import Rule
 from fhirgallop.reasoning.rulebook import Rulebook
-from fhirgallop.reasoning.vocabulary import Tier
+from fhirgallop.reasoning.vocabulary import Relation, Tier
 
 _TIERS: Final = (
     (
@@ -25,6 +26,15 @@ _TIERS: Final = (
     (Tier.T1, "Interruptive", "Asked once in an encounter, never blocking. One such card an encounter."),
     (Tier.T2, "Advisory", "Passive; at most three in view."),
 )
+_OTHER: Final = {
+    Relation.REQUIRES: "Needs",
+    Relation.CONTRADICTS: "Does not go with",
+    Relation.CHECK: "Asked about when",
+    Relation.EXPECTS: "Comes with",
+    Relation.SUGGESTS: "Together with",
+    Relation.FOLLOWS: "Follows on",
+    Relation.GUARD: "Together with",
+}
 _SEEN: Final = {
     "excerpt": "abstract or excerpt read",
     "memory": "from memory of published literature, not read again",
@@ -55,7 +65,7 @@ def _lines(book: Rulebook) -> Iterator[str]:
     yield ""
     yield f"Rules {book.version}. Sign each before it is shown to anybody, or silence or soften it on site."
     yield ""
-    yield from (f"- {text}" for text in SAFETY_TEXTS)
+    yield from (f"- {text}" for text in (*SAFETY_TEXTS, UNSAID))
     for tier, title, meaning in _TIERS:
         rules = [r for r in book.rules.values() if r.tier is tier and r.id not in book.silenced]
         yield ""
@@ -72,7 +82,11 @@ def _rule(rule: Rule, book: Rulebook) -> Iterator[str]:
     yield ""
     family = book.families.get(rule.family)
     rows = (
-        ("Finding", words.label(rule.finding)),
+        ("Finding", in_words(rule.subject)),
+        ("Only when", in_words(rule.when) if rule.when else ""),
+        (_OTHER[rule.relation], in_words(rule.other) if rule.other else ""),
+        ("Silent where", in_words(rule.unless) if rule.unless else ""),
+        ("Holds also in", ", ".join(sorted(rule.holds_in))),
         ("Relation, strength", f"{rule.relation.value}, {rule.strength.value}"),
         ("Card", family.title if family else "of its own"),
         ("Shown", "urgent clinical review" if rule.tier is Tier.U else rule.wording),
@@ -88,6 +102,7 @@ def _rule(rule: Rule, book: Rulebook) -> Iterator[str]:
     yield "| | |"
     yield "|---|---|"
     yield from (f"| {name} | {_cell(text)} |" for name, text in rows if text)
+    yield "| To be shown here | yes / no / softened to: |"
     yield "| Signed, date | |"
 
 

@@ -58,7 +58,7 @@ def said(item: Item) -> str:
     if item.measure is not None:
         words = number(item.measure)
     elif item.answers:
-        words = ", ".join(_answer(item.id, answer) for answer in item.answers)
+        words = ", ".join(answer(item.id, answer_) for answer_ in item.answers)
         if item.state is not State.PRESENT:
             words = f"{words}, {_STATES[item.state]}"
     else:
@@ -79,13 +79,25 @@ def number(measure: Measure) -> str:
     return f"{measure.comparator}{span} {printed}".rstrip()
 
 
-def _answer(id_: str, answer: str) -> str:
+def answer(id_: str, value_id: str) -> str:
+    """The printed form of a value of a choice."""
     definition = catalogue.load().findings.get(id_)
     if definition is not None and definition.answers:
-        value = catalogue.load().axes[definition.answers].values.get(answer)
+        value = catalogue.load().axes[definition.answers].values.get(value_id)
         if value is not None:
             return value.label
-    return answer.replace("-", " ")
+    return value_id.replace("-", " ")
+
+
+def axis(id_: str) -> str:
+    """The printed name of a property."""
+    known = catalogue.load().axes.get(id_)
+    return known.label.lower() if known else id_
+
+
+def source(id_: str) -> str:
+    """The printed name of a source."""
+    return _SOURCES[Source(id_)]
 
 
 def _qualifier(qualifier: Qualifier) -> str:
@@ -140,11 +152,18 @@ def age(seconds: int | None, *, clock: bool = True) -> str:
         return "time not known"
     if not clock and abs(seconds) < 86_400:
         return "same day"
+    if abs(seconds) < 60:
+        return "at the same time"
+    return f"{span(abs(seconds))} {'before' if seconds > 0 else 'after'}"
+
+
+def span(seconds: int) -> str:
+    """A length of time in its largest whole unit: `20 minutes`."""
     for length, name in _UNITS:
-        count = abs(seconds) // length
+        count = seconds // length
         if count:
-            return f"{count} {name}{'s' * (count > 1)} {'before' if seconds > 0 else 'after'}"
-    return "at the same time"
+            return f"{count} {name}{'s' * (count > 1)}"
+    return f"{seconds} seconds"
 
 
 def items(grounds: Iterable[Ground]) -> list[Item]:

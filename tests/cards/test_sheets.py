@@ -12,6 +12,7 @@ from typing import Any
 import pytest
 
 from fhirgallop.cards import words
+from fhirgallop.cards.conditions import in_words
 from fhirgallop.cards.memory import Memory
 from fhirgallop.cards.policy import decide
 from fhirgallop.cards.safety import SAFETY_TEXTS
@@ -174,6 +175,29 @@ def test_the_sheet_to_sign_names_every_rule_that_is_shown() -> None:
             assert f"### {rule.id}\n" not in text
     for safety in SAFETY_TEXTS:
         assert safety in text
+
+
+def test_the_sheet_to_sign_says_exactly_what_is_judged() -> None:
+    book = load()
+    text = rule_text(book.rules["s4.in-mitral-stenosis"], book)
+    assert (
+        "| Finding | Fourth heart sound: present, with side of the heart: Left-sided (left ventricle)" in text
+    )
+    assert "| Does not go with | the first of these that is known (Mitral valve area: at most 1.5 cm²" in text
+    assert "of the last 1 year (older weighs less)" in text
+    text = rule_text(book.rules["murmur.thrill-and-low-grade"], book)
+    assert "| Needs | Systolic murmur: present, with grade at least 4 of 6, of the same site" in text
+    assert "| Holds also in | child, pregnancy |" in text
+    text = rule_text(book.rules["urgent.low-pressure-and-cold-or-wet"], book)
+    assert "| Finding | Systolic blood pressure: below 90 mmHg, from this examination |" in text
+    assert "| Silent where | any of (Mechanical circulatory support" in text
+
+
+def test_every_condition_of_every_rule_has_words() -> None:
+    for rule in load().rules.values():
+        for condition in (rule.subject, rule.when, rule.unless, rule.other):
+            if condition is not None:
+                assert in_words(condition).count("(") == in_words(condition).count(")"), rule.id
 
 
 def test_a_rule_that_the_site_silenced_is_not_to_be_signed(
