@@ -21,8 +21,8 @@ _WANTED: Final = {
 }
 EVERYTHING_ELSE_WINDOW: Final = "encounter"
 UNSAID: Final = (
-    "Where nothing else is said, a datum counts when it is of this encounter and of the last 24 hours, or for "
-    "good (age, devices, operations, diagnoses); what nobody recorded is unknown and completes nothing."
+    "Where nothing else is said, a datum counts when it is of this encounter and of the last 24 hours, or "
+    "for good (age, devices, operations, diagnoses); what nobody recorded is unknown and completes nothing."
 )
 _BOUNDS: Final = {"above": "above", "at-least": "at least", "at-most": "at most", "below": "below"}
 
