@@ -94,7 +94,7 @@ def rows() -> Iterator[Row]:
     found = [_observation(edition) for edition in EDITIONS]
     worst = {name: max(one[name] for one in found) for name in found[0]}
     yield at_most("full check of a parsed Observation / parsing it", worst["parsed"], 1, fails=1.5)
-    yield at_most("Observation from bytes, read and checked / parsing it", worst["bytes"], 2, fails=3)
+    yield at_most("Observation from bytes, read and checked / parsing it", worst["bytes"], 2, fails=3.5)
     yield at_most(
         "parse and check Observations with all strings new / one again and again", worst["new"], 1.1
     )
