@@ -4,18 +4,24 @@ from __future__ import annotations
 
 from dataclasses import dataclass
 from functools import lru_cache
+from typing import Final
 
 from fhirgallop.codes import units
 from fhirgallop.exam.catalogue import Catalogue
 from fhirgallop.exam.exam import Exam
 from fhirgallop.intake.record import LocalRecord
 from fhirgallop.mapping.compiled import reading_of
+from fhirgallop.mapping.conditions import only_tested
+from fhirgallop.mapping.marks import own_notes
 from fhirgallop.mapping.preparation import Tools
-from fhirgallop.mapping.run import Run, UnknownValue
+from fhirgallop.mapping.run import Run, UnknownValue, is_plain
 from fhirgallop.mapping.template_map import TemplateMap
 from fhirgallop.outcome import Issue
 
-__all__ = ["CompiledMap", "Mapped", "UnknownValue", "apply", "compiled"]
+__all__ = ["ONLY_TESTED", "CompiledMap", "Mapped", "UnknownValue", "apply", "compiled"]
+
+# Rule id: a filled box that conditions look at, and whose wording none of them lists.
+ONLY_TESTED: Final = "map-value-only-tested"
 
 
 @dataclass(frozen=True, slots=True)
@@ -53,6 +59,7 @@ class CompiledMap:
         self.reads = template.reads()
         self._always = frozenset(line.field for line in template.lines if line.field and not line.when)
         self._contingent = self._contingent_fields()
+        self._tested = only_tested(template)
         self._ignored = frozenset(i.pattern for i in template.ignored if "*" not in i.pattern)
         self._known = self.reads | self._ignored
         self._patterns = [i for i in template.ignored if "*" in i.pattern]
@@ -81,6 +88,7 @@ class CompiledMap:
         status, encounter, examiner = reader.status(run), reader.encounter(run), reader.examiner(run)
         for reading in self._readings:
             reading(run)
+        self._only_tested(run)
         unread = self._unread(run, strangers)
         exam = None
         if patient and identifier and moment:
@@ -106,6 +114,21 @@ class CompiledMap:
         if record.fields.keys() <= self._known:
             return []
         return [name for name in record.fields if name not in self._known and not self.ignores(name)]
+
+    def _only_tested(self, run: Run) -> None:
+        """Names boxes that only conditions look at where their wording is in no list; keeps their remarks."""
+        for name, listed in self._tested.items():
+            field = run.fields.get(name)
+            if field is None:
+                continue
+            if not all(listed.find(value) for value in self.blanks.filled(field)):
+                words = (
+                    "This box only decides whether others are read; its wording is in no list, so it says "
+                    "nothing here. List it, or map the box."
+                )
+                run.issue("information", "informational", ONLY_TESTED, words, name)
+            if not is_plain(field):
+                run.notes += own_notes(run, field)
 
     def _unread(self, run: Run, strangers: list[str]) -> tuple[str, ...]:
         """Names, and notes, everything that no line has read."""

@@ -2,8 +2,10 @@
 
 from __future__ import annotations
 
+from collections.abc import Iterator
+
 from fhirgallop.mapping.run import Run, Test
-from fhirgallop.mapping.template_map import AllOf, AnyOf, Condition, FieldBlank, FieldIs, Not
+from fhirgallop.mapping.template_map import AllOf, AnyOf, Condition, FieldBlank, FieldIs, Not, TemplateMap
 from fhirgallop.mapping.wordings import Blanks, Lookup
 
 
@@ -32,3 +34,25 @@ def _field_is(name: str, words: tuple[str, ...], blanks: Blanks) -> Test:
         return any(table.find(value) for value in blanks.filled(run.fields.get(name)))
 
     return holds
+
+
+def only_tested(template: TemplateMap) -> dict[str, Lookup[bool]]:
+    """Fields that nothing but conditions look at, each with the wordings that some condition lists."""
+    listed: dict[str, dict[str, bool]] = {}
+    for line in template.lines:
+        for part in _leaves(line.when) if line.when else ():
+            words = part.words if isinstance(part, FieldIs) else ()
+            listed.setdefault(part.field, {}).update(dict.fromkeys(words, True))
+    said = set(template.record.fields()).union(*((line.field, *line.details()) for line in template.lines))
+    return {name: Lookup(words) for name, words in listed.items() if name not in said}
+
+
+def _leaves(condition: Condition) -> Iterator[FieldIs | FieldBlank]:
+    match condition:
+        case FieldIs() | FieldBlank():
+            yield condition
+        case AllOf(parts) | AnyOf(parts):
+            for part in parts:
+                yield from _leaves(part)
+        case Not(part):
+            yield from _leaves(part)

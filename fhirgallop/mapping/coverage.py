@@ -8,7 +8,7 @@ from typing import Final, Literal
 
 from fhirgallop.exam.catalogue import Catalogue
 from fhirgallop.intake.record import LocalRecord
-from fhirgallop.mapping.apply import Mapped, compiled
+from fhirgallop.mapping.apply import ONLY_TESTED, Mapped, compiled
 from fhirgallop.mapping.conditions import test_of
 from fhirgallop.mapping.run import Run, Test, UnknownValue
 from fhirgallop.mapping.template_map import Line, TemplateMap
@@ -52,6 +52,7 @@ class Coverage:
         self._blank: Counter[str] = Counter()
         self._unknown: Counter[UnknownValue] = Counter()
         self._touched: Counter[int] = Counter()
+        self._only_tested: Counter[str] = Counter()
         self._tests: list[tuple[int, Line, Test | None]] = [
             (at, line, test_of(line.when, self._map.blanks) if line.when else None)
             for at, line in enumerate(template.lines)
@@ -68,6 +69,7 @@ class Coverage:
         for unknown in mapped.unknown:
             if unknown in self._unknown or self._room(self._unknown):
                 self._unknown[unknown] += 1
+        self._only_tested.update(issue.field for issue in mapped.issues if issue.rule == ONLY_TESTED)
         run = Run(record)
         for at, line, test in self._tests:
             box = line.field or line.note
@@ -129,27 +131,27 @@ class Coverage:
         for name, times in by_field.items():
             words = f"Wordings that the map does not know were met {times} times; add them to its line."
             found.append(self._issue("map-value-unknown", words, name))
+        for name, times in self._only_tested.items():
+            words = (
+                f"This box only decides whether others are read; in {_records(times)} its wording is in no "
+                "list, so it said nothing. List it, or map the box."
+            )
+            found.append(self._information(ONLY_TESTED, words, name))
         for line in self.lines():
             if self.records and not line.records:
                 words = (
                     f"No record said anything by this line ({line.says}): its box was always blank or "
                     "missing, or its when never held. Check both, if that is unexpected."
                 )
-                found.append(
-                    Issue(
-                        "information",
-                        "informational",
-                        "map-line-untouched",
-                        words,
-                        field=line.field,
-                        source=self.template.name,
-                        line=line.line,
-                    )
-                )
+                found.append(self._information("map-line-untouched", words, line.field, line.line))
         return found
 
     def _issue(self, rule: str, words: str, name: str) -> Issue:
         return Issue("warning", "incomplete", rule, words, field=name[:200], source=self.template.name)
+
+    def _information(self, rule: str, words: str, name: str, line: int = 0) -> Issue:
+        source = self.template.name
+        return Issue("information", "informational", rule, words, field=name[:200], source=source, line=line)
 
 
 def _records(count: int) -> str:

@@ -148,6 +148,27 @@ def test_coverage_counts_fields_values_and_lines():
     assert not [issue for issue in counts.issues() if "maybe" in issue.text]
 
 
+def test_coverage_counts_boxes_that_only_decide_and_whose_wording_is_in_no_list():
+    template, faults = read_map(
+        'template-map: 1\nname: small\nversion: "1"\n'
+        'record:\n  patient: {field: pid, system: "urn:p"}\n  identifier: {field: no, system: "urn:e"}\n'
+        "  time: {field: at}\n"
+        'lines: [{finding: heart-sound.s3, presence: absent, when: {field: done, is: ["yes"]}}]\n'
+    )
+    assert template is not None, faults
+    counts = Coverage(template, load())
+    for said in ("yes", "YES ", "", "halfway", "hardly"):
+        record = row(done=said)
+        mapped = apply(record, template, load())
+        assert mapped.exam is not None
+        assert not any(issue.is_error for issue in mapped.issues)
+        counts.add(record, mapped)
+    assert counts.coded == 5
+    (issue,) = counts.issues()
+    assert (issue.severity, issue.rule, issue.field) == ("information", "map-value-only-tested", "done")
+    assert "2 records" in issue.text
+
+
 def test_coverage_names_fields_that_no_record_has():
     template = small_map()
     counts = Coverage(template, load())
