@@ -103,7 +103,7 @@ def rows() -> Iterator[Row]:
     worst = {name: max(one[name] for one in bundles) for name in bundles[0]}
     what = f"Bundle as we emit it, 25 entries, {_size() / 1000:.0f} kB"
     yield at_most(f"{what}: full check / parsing it", worst["parsed"], 1, fails=2)
-    yield at_most(f"{what}: from bytes, read and checked / parsing it", worst["bytes"], 2, fails=3.5)
+    yield at_most(f"{what}: from bytes, read and checked / parsing it", worst["bytes"], 2, fails=4)
     for step, seconds in _start().items():
         yield at_most(step, seconds, 0.3, "s")
 
