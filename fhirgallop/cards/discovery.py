@@ -94,7 +94,8 @@ class Service:
         return (
             f"Nothing is fetched from fhirServer: send the prefetch. {needed} must be sent (null or an empty "
             "searchset where there is nothing), or the answer is 412; what else is not sent stays unknown, "
-            "and the cards say so. FHIR R4, R4B or R5 resources. Support for clinical judgement, not a "
+            "and the cards say so. FHIR R4, R4B or R5 resources. Cards are for clinicians: for a user who is "
+            "none, the answer is empty. Support for clinical judgement, not a "
             "replacement for it; an empty answer is no reassurance."
         )
 

@@ -57,6 +57,11 @@ class Call:
     prefetch: Mapping[str, Any]
     missing: tuple[str, ...]
 
+    @property
+    def by_clinician(self) -> bool:
+        """False when a patient or a relative looks: cards are for clinicians, and shown to no one else."""
+        return self.user.startswith("Practitioner")
+
 
 def read_call(value: Any, service: Service) -> tuple[Call | None, list[Issue]]:
     """A call of `service`, or None and everything that is wrong with it.

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import json
 import logging
+import socket
 from collections.abc import Callable
 from typing import Any
 
@@ -11,6 +12,8 @@ import pytest
 from starlette.testclient import TestClient
 
 from fhirgallop.codes import fhirjson
+from fhirgallop.storage.hooks import HookStore
+from fhirgallop.storage.submissions import StorageError
 
 Json = dict[str, Any]
 Make = Callable[..., Json]
@@ -105,11 +108,15 @@ def test_ch_19_the_context_of_patient_view(hooked: TestClient, hook_call: Make, 
 
 
 @pytest.mark.parametrize(
-    "user", ["Practitioner/7", "PractitionerRole/7", "Patient/p-20417", "RelatedPerson/9"]
+    ("user", "count"),
+    [("Practitioner/7", 1), ("PractitionerRole/7", 1), ("Patient/p-20417", 0), ("RelatedPerson/9", 0)],
 )
-def test_ch_19_every_user_and_no_encounter(hooked: TestClient, hook_call: Make, user: str) -> None:
+def test_ch_19_every_user_and_no_encounter(
+    hooked: TestClient, hook_call: Make, user: str, count: int
+) -> None:
+    """A patient who opens the own chart is a user of the hook too; the cards are for clinicians."""
     answer = hooked.post(VIEW, json=hook_call(context={"userId": user, "encounterId": None}))
-    assert answer.json()["cards"]
+    assert (answer.status_code, len(answer.json()["cards"])) == (200, count)
 
 
 def test_ch_20_discharge_needs_user_patient_encounter(hooked: TestClient, hook_call: Make) -> None:
@@ -452,3 +459,53 @@ def test_va_8_no_value_of_the_record_is_echoed(
             assert issue["details"]["coding"][0]["system"].startswith("https://fhirgallop.org/")
             assert issue["details"]["text"]
     assert secret not in caplog.text
+
+
+def test_ch_36_no_server_is_ever_called(
+    hooked: TestClient, hook_call: Make, prefetch: Make, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    """Whatever address is named, and although a page and a key are missing."""
+    called: list[Any] = []
+    monkeypatch.setattr(socket.socket, "connect", lambda _, address: called.append(address))
+    monkeypatch.setattr(socket, "getaddrinfo", lambda *asked: called.append(asked))
+    found = without(prefetch(), "conditions")
+    found["results"] = {**found["results"], "link": [{"relation": "next", "url": "http://127.0.0.1:9/x"}]}
+    call = hook_call(fhirServer="http://169.254.1.1/fhir", fhirAuthorization=AUTHORISATION, prefetch=found)
+    assert hooked.post(VIEW, json=call).status_code == 200
+    assert called == []
+
+
+@pytest.mark.parametrize(
+    ("day", "count"), [("2026-03-14", 1), ("2026-03-13", 1), ("2026-03-12", 0), ("2026-03", 0)]
+)
+def test_an_examination_of_a_day_without_a_time(
+    hooked: TestClient, hook_call: Make, prefetch: Make, day: str, count: int
+) -> None:
+    """Yesterday evening is within 24 hours; a month says nothing of today."""
+    found = prefetch(results=None, conditions=None)
+    for entry in found["exam"]["entry"]:
+        entry["resource"]["effectiveDateTime"] = day
+    assert len(hooked.post(VIEW, json=hook_call(prefetch=found)).json()["cards"]) == count
+
+
+def test_a_failing_database_is_told_and_keeps_nothing(
+    hooked: TestClient, hook_call: Make, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    call = hook_call()
+
+    def fail(*_: Any, **__: Any) -> bool:
+        raise StorageError("OperationalError")
+
+    with monkeypatch.context() as broken:
+        broken.setattr(HookStore, "keep", fail)
+        answer = hooked.post(VIEW, json=call)
+        assert (answer.status_code, rules(answer)) == (503, {"storage-failed"})
+    assert hooked.post(VIEW, json=hook_call()).json()["cards"], "nothing counts as shown"
+
+
+def test_a_memory_that_others_keep_changing_is_told(
+    hooked: TestClient, hook_call: Make, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    monkeypatch.setattr(HookStore, "keep", lambda *_, **__: False)
+    answer = hooked.post(VIEW, json=hook_call())
+    assert (answer.status_code, rules(answer)) == (503, {"hook-busy"})

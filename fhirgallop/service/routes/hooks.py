@@ -154,6 +154,8 @@ def _cards(request: Request, service: Service, value: Any) -> Response:
     call, issues = read_call(value, service)
     if call is None:
         raise _refused(issues)
+    if not call.by_clinician:
+        return answers.json_answer({"cards": []})
     draft = _draft(request, call)
     cards, issues = _desk(request).answer(service, call, draft)
     if has_errors(issues):
