@@ -7,13 +7,12 @@ from collections import Counter
 from collections.abc import Iterator
 from contextlib import ExitStack
 from dataclasses import dataclass, field, replace
-from datetime import UTC, datetime
 from pathlib import Path
 from typing import IO, TYPE_CHECKING, Annotated, Any, Final
 
 import typer
 
-from fhirgallop.cli.shared import EditionName, Exit, complain, people, resource, whole_file
+from fhirgallop.cli.shared import EditionName, Exit, complain, moment, people, resource, whole_file
 
 if TYPE_CHECKING:
     from rich.console import Console
@@ -61,7 +60,7 @@ def command(  # noqa: PLR0913, PLR0917 - one argument an option
     from fhirgallop.outcome import operation_outcome  # noqa: PLC0415
 
     template = api.read_map(map_)
-    moment = _moment(recorded)
+    now = moment(recorded, "--recorded")
     earlier = resource(amends, "Bundle", "--amends") if amends else None
     questionnaire = resource(form, "Questionnaire", "--form") if form else None
     tally = Tally()
@@ -72,7 +71,7 @@ def command(  # noqa: PLR0913, PLR0917 - one argument an option
         for read in _with_progress(_all(records, questionnaire), console):
             if isinstance(read, LocalRecord):
                 result = api.process(
-                    read, template, edition.value, recorded=moment, snomed=snomed, earlier=earlier
+                    read, template, edition.value, recorded=now, snomed=snomed, earlier=earlier
                 )
                 tally.add("coded" if result.ok else "refused", [_placed(i, read) for i in result.issues])
                 if result.bundle is not None:
@@ -91,20 +90,6 @@ def command(  # noqa: PLR0913, PLR0917 - one argument an option
         complain("there is no examination in what was given; name record files, or folders that hold some")
     tally.print(console)
     raise typer.Exit(Exit.WELL if tally.all_coded else Exit.REFUSED)
-
-
-def _moment(text: str | None) -> datetime:
-    if text is None:
-        return datetime.now(tz=UTC)
-    try:
-        moment = datetime.fromisoformat(text)
-    except ValueError:
-        moment = None
-    if moment is None or moment.tzinfo is None:
-        raise typer.BadParameter(
-            "give an instant with a zone, such as 2026-12-01T08:30:00Z", param_hint="--recorded"
-        )
-    return moment
 
 
 def _all(paths: list[Path], questionnaire: dict[str, Any] | None) -> Iterator[Read]:

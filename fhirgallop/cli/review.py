@@ -2,14 +2,13 @@
 
 from __future__ import annotations
 
-from datetime import UTC, datetime
 from enum import StrEnum
 from pathlib import Path
 from typing import TYPE_CHECKING, Annotated, Any, NoReturn
 
 import typer
 
-from fhirgallop.cli.shared import Exit, complain
+from fhirgallop.cli.shared import Exit, complain, moment
 
 if TYPE_CHECKING:
     from fhirgallop.exam.exam import Exam
@@ -50,18 +49,18 @@ def command(  # noqa: PLR0913, PLR0917 - one argument an option
     from fhirgallop.reasoning import rulebook  # noqa: PLC0415
     from fhirgallop.reasoning.review import review  # noqa: PLC0415
 
-    moment = _moment(now)
+    at = moment(now, "--now")
     book = _site_rules(rules) if rules else rulebook.load()
     exam = _exam(record, map_)
     tables = _site_codes(codes) if codes else None
     value, issues = fhirjson.read(chart.read_bytes(), source=str(chart))
     if value is None:
         _refuse(issues)
-    read = read_chart(value, exam, moment, base=server, tables=tables)
+    read = read_chart(value, exam, at, base=server, tables=tables)
     found = review(exam, read.context, rules=book)
     encounter = exam.encounter.value if exam.encounter else exam.identifier
     decision = decide(
-        found, Memory(exam.patient.value), encounter=encounter or "this one", now=moment, rules=book
+        found, Memory(exam.patient.value), encounter=encounter or "this one", now=at, rules=book
     )
     if output is Format.JSON:
         whole: dict[str, Any] = {
@@ -117,17 +116,3 @@ def _usable(made: Any, issues: list[Issue]) -> Any:
     if made is None:
         raise typer.Exit(Exit.FAULTY)
     return made
-
-
-def _moment(text: str | None) -> datetime:
-    if text is None:
-        return datetime.now(tz=UTC)
-    try:
-        moment = datetime.fromisoformat(text)
-    except ValueError:
-        moment = None
-    if moment is None or moment.tzinfo is None:
-        raise typer.BadParameter(
-            "give an instant with a zone, such as 2026-12-01T08:30:00Z", param_hint="--now"
-        )
-    return moment

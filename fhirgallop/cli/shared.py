@@ -7,6 +7,7 @@ import sys
 import tempfile
 from collections.abc import Iterator
 from contextlib import contextmanager
+from datetime import UTC, datetime
 from enum import IntEnum, StrEnum
 from pathlib import Path
 from typing import IO, Any
@@ -85,3 +86,18 @@ def resource(path: Path, kind: str, option: str) -> dict[str, Any]:
         why = f": {issues[0].text}" if issues else ""
         raise typer.BadParameter(f"this file holds no {kind}{why}", param_hint=option)
     return value
+
+
+def moment(text: str | None, option: str) -> datetime:
+    """The instant that an option names; this moment when it is left out."""
+    if text is None:
+        return datetime.now(tz=UTC)
+    try:
+        found = datetime.fromisoformat(text)
+    except ValueError:
+        found = None
+    if found is None or found.tzinfo is None:
+        raise typer.BadParameter(
+            "give an instant with a zone, such as 2026-12-01T08:30:00Z", param_hint=option
+        )
+    return found
