@@ -8,6 +8,7 @@ from __future__ import annotations
 from collections.abc import Iterator
 from dataclasses import dataclass
 from decimal import Decimal
+from functools import partial
 from typing import Final
 
 from fhirgallop.exam.context import Source, State
@@ -23,6 +24,8 @@ IDENTITY: Final = frozenset({"valve", "side", "chamber", "site", "bp-site", "met
 _METHOD: Final = frozenset({"method"})
 # Names that an examiner may give to a finding: there is nothing to go and look for when nobody gave one.
 NAMES: Final = frozenset({"eponym", "meaning", "suspected-lesion"})
+# Not a property but a time: `matching: [study]` takes only what was found together with the subject.
+STUDY: Final = "study"
 _SAYS_NOTHING: Final = frozenset(
     {"other", "undetermined", "unknown", "not-done", "not-assessable", "indeterminate", "not-examined"}
 )
@@ -141,7 +144,8 @@ class Atom:
             if having.axis in IDENTITY and having.holds(item) is Truth.FALSE:
                 return None
         for axis in self.matching:
-            shared = _shared(axis, item, subject)
+            same = _same_study if axis == STUDY else partial(_shared, axis)
+            shared = same(item, subject)
             if shared is Truth.FALSE:
                 return None
             if shared is Truth.UNKNOWN:
@@ -250,6 +254,18 @@ def _shared(axis: str, item: Item, subject: Item | None) -> Truth:
     if not ours or not theirs:
         return Truth.UNKNOWN
     return Truth.FALSE if set(ours).isdisjoint(theirs) else Truth.TRUE
+
+
+def _same_study(item: Item, subject: Item | None) -> Truth:
+    """True for two entries of the examination, or two facts of one hour (one day where no clock was noted)."""
+    if subject is None:
+        return Truth.UNKNOWN
+    if item.of_exam or subject.of_exam:
+        return Truth.TRUE if item.of_exam and subject.of_exam else Truth.FALSE
+    if item.age is None or subject.age is None:
+        return Truth.UNKNOWN
+    slack = 3600 if item.clock and subject.clock else 86_400
+    return Truth.TRUE if abs(item.age - subject.age) <= slack else Truth.FALSE
 
 
 @dataclass(frozen=True, slots=True, eq=False)

@@ -7,7 +7,7 @@ from typing import Final
 
 from fhirgallop.exam import catalogue
 from fhirgallop.exam.context import Source
-from fhirgallop.reasoning.atoms import Atom, Bound, Having, OfSubject
+from fhirgallop.reasoning.atoms import STUDY, Atom, Bound, Having, OfSubject
 from fhirgallop.reasoning.block import Block, quantity
 from fhirgallop.reasoning.conditions import All, Any, Condition, Count, First, Not
 from fhirgallop.reasoning.defining import Vocabulary
@@ -272,7 +272,7 @@ class Builder:
 
     def _matching(self, block: Block, kind: Kind) -> tuple[str, ...]:
         found = block.texts("matching")
-        for axis in sorted(set(found) - kind.qualifiers):
+        for axis in sorted(set(found) - kind.qualifiers - {STUDY}):
             block.fault("rules-unknown-property", f"{kind.id} has no property {axis}.")
         return found
 
