@@ -257,7 +257,7 @@ def _shared(axis: str, item: Item, subject: Item | None) -> Truth:
 
 
 def _same_study(item: Item, subject: Item | None) -> Truth:
-    """True for two entries of the examination, or two facts of one hour (one day where no clock was noted)."""
+    """True for two entries of the examination, or two facts of one hour (one day without a clock time)."""
     if subject is None:
         return Truth.UNKNOWN
     if item.of_exam or subject.of_exam:
