@@ -20,6 +20,7 @@ from fhirgallop.chart.tables import Statement
 from fhirgallop.codes import systems
 from fhirgallop.exam.context import Fact, Source, State
 from fhirgallop.exam.entry import Grade, Measure, Qualifier
+from fhirgallop.exam.exam import Exam
 
 _DONE: Final = frozenset({"final", "amended", "corrected", "appended"})
 _EARLY: Final = frozenset({"preliminary", "partial", "modified"})  # modified: R5, before it is final
@@ -68,7 +69,7 @@ def read_observation(found: Found, reading: Reading) -> None:
     frame = _frame(found, reading, "effective")
     if frame is None:
         return
-    if frame.ours and _same_moment(frame.time, reading.exam.time.start):
+    if frame.ours and _of_this_exam(found, frame.time, reading.exam):
         # this very examination, already written to the chart
         return
     observation = found.resource
@@ -145,6 +146,15 @@ def _frame(found: Found, reading: Reading, stem: str) -> Frame | None:
         methods,
         _is_ours(resource),
     )
+
+
+def _of_this_exam(found: Found, time: str, exam: Exam) -> bool:
+    if _same_moment(time, exam.time.start):
+        return True
+    # what was found on another day, such as an echo's numbers, stands under that day
+    other_day = {entry.finding for entry in exam.entries if entry.time and _same_moment(time, entry.time)}
+    own = (code.code for code in codes(found.resource.get("code")) if code.system == systems.FINDINGS)
+    return bool(other_day) and not other_day.isdisjoint(own)
 
 
 def _same_moment(one: str, other: str) -> bool:

@@ -35,6 +35,14 @@ class Moment:
         """True when the start names a time of day."""
         return len(self.start) > 10
 
+    def after(self, other: Moment) -> bool:
+        """True when this starts later than `other` ends, as far as the coarser of the two tells."""
+        end = other.end or other.start
+        if self.has_clock and len(end) > 10:
+            return datetime.fromisoformat(self.start) > datetime.fromisoformat(end)
+        shared = min(len(self.start), len(end), 10)
+        return self.start[:shared] > end[:shared]
+
 
 def parse(text: str, *, zone: str = "") -> Moment | str:
     """The moment written as `text`, or a sentence that says why it is none.

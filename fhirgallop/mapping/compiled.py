@@ -64,6 +64,8 @@ class _FindingLine:
             (source.field, describer(source, tools.policy)) for source in line.qualifiers if source.field
         ]
         self._details = tuple(line.details())
+        self._describing = tuple(line.describing())
+        self._time = tools.line_time(line)
 
     def reading(self) -> LineReading:
         """The quickest function that reads the line as it is."""
@@ -89,7 +91,11 @@ class _FindingLine:
 
     def _box(self, says: Says) -> LineReading:
         line, blank, filled = self._line, self._blank, self._tools.blanks.filled
-        name, conditional, described = line.field, line.when is not None, bool(line.qualifiers or line.note)
+        name, conditional, described = (
+            line.field,
+            line.when is not None,
+            bool(line.qualifiers or line.note or line.time),
+        )
         exact = {}
         if line.choice and not line.choice.several and not described:
             exact = boxes.lookup(line, line.choice, self._tools.policy).exact
@@ -167,7 +173,7 @@ class _FindingLine:
         def read(run: Run) -> None:
             filled = [
                 field
-                for name in self._details
+                for name in self._describing
                 if (field := run.fields.get(name)) and tools.blanks.filled(field)
             ]
             taken_back = bool(filled) and all(field.status == "entered-in-error" for field in filled)
@@ -178,7 +184,7 @@ class _FindingLine:
     def _put(self, run: Run, base: Entry, carrier: Field | None) -> None:
         """Adds the entry with its qualifiers, its own time and its remarks."""
         plain = carrier is None or is_plain(carrier)
-        if plain and not self._line.qualifiers and not self._line.note:
+        if plain and not self._line.qualifiers and not self._line.note and not self._time:
             run.entries.append(base)
             return
         qualifiers = [*base.qualifiers, *self._constants(base)]
@@ -186,9 +192,9 @@ class _FindingLine:
         for name, describes in self._describers:
             self._describe(run, name, describes, base, qualifiers, fields, notes)
         self._note(run, fields, notes)
-        time = ""
+        time = self._time.read(run) if self._time else ""
         if carrier is not None and not plain:
-            time = own_time(run, carrier, self._tools.record)
+            time = own_time(run, carrier, self._tools.record, time)
             notes += own_notes(run, carrier)
         run.entries.append(
             Entry(

@@ -190,6 +190,14 @@ _NAMED = Group(
         ),
     ),
 )
+_ZONE = Key("zone", Word("Z, an offset such as +01:00, or a name such as Europe/Vienna."))
+_FORMAT = Key("format", Word("Written form such as DD.MM.YYYY hh:mm; ISO 8601 where left out."))
+_LINE_TIME = Group(
+    "time",
+    "When that was which the box says, where it has a time of its own; blank, it is the examination's.",
+    (Key("field", _FIELD), Key("fields", _FIELDS), _ZONE, _FORMAT),
+    one_of=("field", "fields"),
+)
 LINE: Final = Group(
     "line",
     "What one box, or one constant, says of one finding; or a box that names several; or a remark.",
@@ -215,6 +223,7 @@ LINE: Final = Group(
         Key("findings", _NAMED),
         Key("qualifiers", TableOf(_QUALIFIER, "Qualifiers by axis.")),
         Key("note", Word("Field whose words travel with the finding; alone, with the whole examination.")),
+        Key("time", _LINE_TIME),
         Key("blank-means", _BLANK),
     ),
     one_of=("finding", "findings", "note"),
@@ -238,8 +247,8 @@ _TIME = Group(
     (
         Key("field", _FIELD),
         Key("fields", _FIELDS),
-        Key("zone", Word("Z, an offset such as +01:00, or a name such as Europe/Vienna.")),
-        Key("format", Word("Written form such as DD.MM.YYYY hh:mm; ISO 8601 where left out.")),
+        _ZONE,
+        _FORMAT,
         Key(
             "periods",
             TableOf(_MONTHS, "Wordings that stand for a span of time: first and last day or month."),

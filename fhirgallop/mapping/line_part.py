@@ -11,7 +11,7 @@ from fhirgallop.exam.catalogue import Catalogue, FindingDefinition
 from fhirgallop.mapping.document import Items, Node, Pairs, Scalar, clip
 from fhirgallop.mapping.faults import Faults
 from fhirgallop.mapping.meanings import GRADE, Meanings, choice_list
-from fhirgallop.mapping.record_part import text, texts
+from fhirgallop.mapping.record_part import text, texts, time_source
 from fhirgallop.mapping.template_map import (
     AllOf,
     AnyOf,
@@ -91,7 +91,7 @@ class LineReader:
         self._only(
             node,
             "a box that names several findings",
-            {"field", "findings", "section", "instance", "when", "note", "blank-means"},
+            {"field", "findings", "section", "instance", "when", "note", "time", "blank-means"},
         )
         group = node.get("findings")
         if not isinstance(group, Pairs):
@@ -109,6 +109,7 @@ class LineReader:
             note=text(node, "note"),
             when=self._when(node),
             blank_means=self._blank(node, None),
+            time=time_source(node.get("time"), self._faults),
         )
 
     def _about_finding(self, node: Pairs) -> Line | None:
@@ -142,6 +143,7 @@ class LineReader:
             text(node, "note"),
             when,
             self._blank(node, definition),
+            time_source(node.get("time"), self._faults),
         )
 
     def _check_ways(self, node: Pairs, definition: FindingDefinition) -> None:

@@ -27,6 +27,7 @@ class NamingLine:
         self._message = boxes.unknown_text(line.named, kept=tools.policy.keep_unknown)
         findings = [finding for finding, _ in line.gives()]
         self._blank = self._all(findings, line.blank_means)
+        self._time = tools.line_time(line)
         self._unlisted = self._all(findings, line.unlisted)
 
     def _all(self, findings: list[str], means: BlankMeans) -> list[Entry]:
@@ -45,10 +46,13 @@ class NamingLine:
         if line.note:
             run.settled.add(line.note)
             notes = tuple(words_of(value) for value in self._tools.blanks.filled(run.fields.get(line.note)))
+        time = self._time.read(run) if self._time and found else ""
+        withdrawn = False
         if field is not None and not is_plain(field):
             notes += tuple(own_notes(run, field))
-            time = own_time(run, field, self._tools.record)
+            time = own_time(run, field, self._tools.record, time)
             withdrawn = field.status == "entered-in-error"
+        if time or withdrawn:
             found = [replace(entry, time=time, withdrawn=withdrawn) for entry in found]
         if notes and found:
             found[0] = replace(found[0], notes=notes)

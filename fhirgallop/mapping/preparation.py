@@ -10,6 +10,7 @@ from fhirgallop.exam.catalogue import Catalogue
 from fhirgallop.exam.entry import Entry
 from fhirgallop.exam.presence import Presence
 from fhirgallop.mapping.boxes import Policy
+from fhirgallop.mapping.marks import LineTime
 from fhirgallop.mapping.record_reading import RecordReader
 from fhirgallop.mapping.template_map import BlankMeans, Line, TemplateMap
 from fhirgallop.mapping.wordings import Blanks
@@ -40,6 +41,10 @@ class Tools:
                 parts[line.field] = max(parts.get(line.field, 0), line.number.part)
         policy = Policy(template.unknown_values == "keep-as-text", bool(template.local_system))
         return cls(catalogue, units, blanks, policy, RecordReader(template.record, blanks), parts)
+
+    def line_time(self, line: Line) -> LineTime | None:
+        """The reader of a line's own time; without a zone of its own, the examination's holds."""
+        return LineTime(line.time, self.blanks, self.record.zone) if line.time else None
 
 
 def when_blank(line: Line, finding: str, means: BlankMeans) -> Entry | None:

@@ -36,7 +36,7 @@ def record_part(node: Node | None, faults: Faults) -> RecordPart | None:
     patient, identifier, time = (
         _party(node, "patient", faults),
         _identifier(node, faults),
-        _time(node, faults),
+        time_source(node.get("time"), faults),
     )
     encounter, examiner = _party(node, "encounter", faults), _party(node, "examiner", faults)
     if patient is None or identifier is None or time is None:
@@ -71,8 +71,8 @@ def _identifier(record: Pairs, faults: Faults) -> IdentifierSource | None:
     return IdentifierSource(_fields(node, "identifier", faults), text(node, "system"), node.line)
 
 
-def _time(record: Pairs, faults: Faults) -> TimeSource | None:
-    node = record.get("time")
+def time_source(node: Node | None, faults: Faults) -> TimeSource | None:
+    """A time of the record, or of a line."""
     if not isinstance(node, Pairs):
         return None
     zone, form = text(node, "zone"), text(node, "format")

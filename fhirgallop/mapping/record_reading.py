@@ -8,10 +8,10 @@ from typing import Final
 
 from fhirgallop.exam.exam import ExamStatus, Party
 from fhirgallop.exam.moment import Moment
-from fhirgallop.mapping import clock
 from fhirgallop.mapping.run import Run
 from fhirgallop.mapping.template_map import PartySource, RecordPart
-from fhirgallop.mapping.wordings import Blanks, Lookup, wordings
+from fhirgallop.mapping.times import WrittenTime, single
+from fhirgallop.mapping.wordings import Blanks, Lookup
 
 # FHIR R4 data type id; business numbers are bounded by us.
 _FHIR_ID: Final = re.compile(r"[A-Za-z0-9.-]{1,64}", re.ASCII)
@@ -29,11 +29,14 @@ class RecordReader:
     def __init__(self, part: RecordPart, blanks: Blanks) -> None:
         self._part = part
         self._blanks = blanks
-        time = part.time
-        form = clock.written_form(time.format) if time.format else None
-        self._form = form if isinstance(form, re.Pattern) else None
-        self._periods = Lookup(time.periods)
+        self._time = WrittenTime(part.time)
+        self._periods = Lookup(part.time.periods)
         self._statuses = Lookup(part.status.choice) if part.status else None
+
+    @property
+    def zone(self) -> str:
+        """Zone of times that are written without one."""
+        return self._time.zone
 
     def patient(self, run: Run) -> Party | None:
         """The patient; an issue where there is none."""
@@ -54,7 +57,7 @@ class RecordReader:
     def identifier(self, run: Run) -> str:
         """The examination's number; empty, with an issue, where it cannot be told."""
         fields = self._part.identifier.fields
-        found = [self._single(run, name) for name in fields]
+        found = [single(run, self._blanks, name) for name in fields]
         number = "-".join(found) if fields and all(found) else run.record.header.identifier.strip()
         if not number:
             self._missing(run, "map-identifier-missing", "number of its own", fields)
@@ -76,25 +79,18 @@ class RecordReader:
                 )
                 run.unknown_value("error", words, name, values[0])
             return span
-        found = [self._single(run, field) for field in source.fields]
-        form = self._form
+        found = [single(run, self._blanks, field) for field in source.fields]
         if found and all(found):
-            written = " ".join(found)
-        else:
-            written, form = run.record.header.time.strip(), None
+            return self._time.moment(run, " ".join(found), name)
+        written = run.record.header.time.strip()
         if not written:
             self._missing(run, "map-time-missing", "time", source.fields)
             return None
-        return self.moment(run, written, name, form)
+        return self.moment(run, written, name)
 
-    def moment(self, run: Run, written: str, name: str, form: re.Pattern[str] | None = None) -> Moment | None:
-        """The moment written in a field; None, with an issue, where it cannot be read."""
-        moment = clock.read(written, self._part.time.zone, form)
-        if isinstance(moment, Moment):
-            return moment
-        rule = "map-time-without-zone" if "needs a zone" in moment else "map-time-unreadable"
-        run.issue("error", "value", rule, f"The time cannot be used: {moment}.", name)
-        return None
+    def moment(self, run: Run, written: str, name: str) -> Moment | None:
+        """The ISO 8601 moment of a header or a mark; None, with an issue, where it cannot be read."""
+        return self._time.moment(run, written, name, as_stated=False)
 
     def status(self, run: Run) -> ExamStatus:
         """The examination's status, never further than that of its least finished entry."""
@@ -148,7 +144,7 @@ class RecordReader:
         return None
 
     def _party(self, run: Run, source: PartySource, header: str) -> Party | None:
-        value = self._single(run, source.field) if source.field else ""
+        value = single(run, self._blanks, source.field) if source.field else ""
         if not value:
             header = header.strip()
             if reference := _REFERENCE.fullmatch(header):
@@ -166,13 +162,6 @@ class RecordReader:
         return (
             Party(value, source.system, source.is_fhir_id) if self._usable(run, value, source.field) else None
         )
-
-    def _single(self, run: Run, name: str) -> str:
-        values = self._blanks.filled(run.fields.get(name))
-        if len(values) > 1:
-            words = "The field holds several values where one is needed; send one."
-            run.issue("error", "value", "map-several-values", words, name)
-        return wordings(values[0])[0].strip() if values else ""
 
     def _usable(self, run: Run, value: str, name: str) -> bool:
         if len(value) <= _LONGEST and not _UNUSABLE.search(value):

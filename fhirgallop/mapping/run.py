@@ -33,6 +33,7 @@ class Run:
         "record",
         "settled",
         "strangers",
+        "times",
         "unknown",
     )
 
@@ -49,6 +50,8 @@ class Run:
         # Fields whose content has gone into an entry or an issue, and fields whose own remarks have.
         self.settled: set[str] = set()
         self.noted: set[str] = set()
+        # Times that lines name for their boxes, by what reads them.
+        self.times: dict[tuple[str, ...], str] = {}
 
     def issue(self, severity: Severity, code: str, rule: str, text: str, name: str) -> None:
         """Notes an issue about the field `name`."""

@@ -133,6 +133,7 @@ class Line:
             filled box says of those it does not name.
         blank_means: what a blank box means here, worked out from line, section and template.
         note: field whose words travel with the finding, or, without a finding, with the examination.
+        time: where the moment stands to which the box refers, if it is not the examination's.
     """
 
     line: int
@@ -150,12 +151,19 @@ class Line:
     note: str = ""
     when: Condition | None = None
     blank_means: BlankMeans = "not-recorded"
+    time: TimeSource | None = None
 
-    def details(self) -> Iterator[str]:
+    def describing(self) -> Iterator[str]:
         """Fields that describe the finding but do not say whether it is there."""
         yield from (source.field for source in self.qualifiers if source.field)
         if self.note:
             yield self.note
+
+    def details(self) -> Iterator[str]:
+        """Fields that are read only when the finding is there: they describe it, or say when it was."""
+        yield from self.describing()
+        if self.time:
+            yield from self.time.fields
 
     def reads(self) -> Iterator[str]:
         """Every field this line looks at."""
@@ -207,7 +215,7 @@ class IdentifierSource:
 
 @dataclass(frozen=True, slots=True)
 class TimeSource:
-    """Where the examination's time stands.
+    """Where the time of an examination, or of a single box, stands.
 
     Attributes:
         fields: joined by a blank; none where the form's header or `constant` says it.

@@ -35,7 +35,9 @@ def written(request: pytest.FixtureRequest, root: Path) -> tuple[Exam, Any]:
 
 
 def next_month(exam: Exam) -> Exam:
-    return replace(exam, time=Moment("2026-04-14T09:30:00+02:00"), identifier="next", encounter=None)
+    time = Moment("2026-04-14T09:30:00+02:00")
+    entries = tuple(replace(entry, time="") for entry in exam.entries)
+    return replace(exam, time=time, identifier="next", encounter=None, entries=entries)
 
 
 def test_every_entry_comes_back_as_it_was_said(written: tuple[Exam, Any]) -> None:
@@ -62,7 +64,7 @@ def test_every_entry_comes_back_as_it_was_said(written: tuple[Exam, Any]) -> Non
             # the panel's components share the properties of its parts; the clinician's own words stay behind
             said = {(q.axis, q.value, q.grade) for q in entry.qualifiers if not q.text}
             assert {(q.axis, q.value, q.grade) for q in fact.qualifiers} == said
-        assert fact.time == exam.time.start
+        assert fact.time == (entry.time or exam.time.start)
         assert fact.source is (Source.ECHO if entry.finding.startswith("echo.") else Source.EARLIER_EXAM)
     assert not facts
     assert {i.rule for i in chart.issues} <= {"chart-unknown-codes"}
@@ -72,6 +74,18 @@ def test_this_very_examination_is_not_an_earlier_one(written: tuple[Exam, Any]) 
     exam, bundle = written
     chart = read_chart(bundle, exam, datetime.fromisoformat("2026-03-14T10:00:00+01:00"))
     assert chart.context.facts == ()
+
+
+def test_a_number_of_another_day_that_this_examination_repeats_is_not_an_earlier_one(
+    written: tuple[Exam, Any],
+) -> None:
+    exam, bundle = written
+    again = replace(next_month(exam), entries=exam.entries)
+    facts = {fact.id for fact in read_chart(bundle, again, LATER).context.facts}
+    repeated = {entry.finding for entry in exam.entries if entry.time}
+    assert repeated == {"echo.lvef", "echo.e-e-prime-ratio", "echo.la-volume-index", "echo.ivc-diameter"}
+    assert facts
+    assert facts.isdisjoint(repeated)
 
 
 def test_what_changed_since_then(written: tuple[Exam, Any]) -> None:

@@ -55,3 +55,24 @@ def test_no_text_ever_raises(text):
 def test_only_a_day_is_precise_to_the_day():
     assert Moment("2026-03-14").precise_to_day
     assert not Moment("2026-03").precise_to_day
+
+
+@pytest.mark.parametrize(
+    ("one", "other", "after"),
+    [
+        ("2026-03-15", "2026-03-14T23:59:00+01:00", True),
+        ("2026-03-14", "2026-03-14T09:30:00+01:00", False),
+        ("2026-04", "2026-03-14", True),
+        ("2026", "2026-03-14", False),
+        ("2026-03-14T09:31:00+02:00", "2026-03-14T09:00:00+01:00", False),
+        ("2026-03-14T09:00:00Z", "2026-03-14T09:30:00+01:00", True),
+        ("2026-03-14T09:30:00+01:00", "2026-03-14T09:30:00+01:00", False),
+    ],
+)
+def test_what_is_later_as_far_as_the_coarser_tells(one, other, after):
+    assert Moment(one).after(Moment(other)) is after
+
+
+def test_later_than_a_span_is_later_than_its_end():
+    assert not Moment("2014-08-10").after(Moment("2014-07", "2014-08"))
+    assert Moment("2014-09-01").after(Moment("2014-07", "2014-08"))

@@ -120,6 +120,13 @@ def test_what_the_examination_says(exam):
     assert said["pressure.diastolic", ""].measure == Measure(Decimal(84), "mm[Hg]")
     assert said["vital.heart-rate", ""].measure == Measure(Decimal(78), "/min")
     assert said["echo.lvef", ""].measure == Measure(Decimal(60), "%", "", Decimal(65))
+    assert {key[0] for key, entry in said.items() if entry.time == "2026-03-12"} == {
+        "echo.lvef",
+        "echo.e-e-prime-ratio",
+        "echo.la-volume-index",
+        "echo.ivc-diameter",
+    }
+    assert {entry.time for entry in exam.entries} == {"", "2026-03-12"}
     assert said["echo.ivc-diameter", ""].measure == Measure(Decimal("1.8"), "cm", original="18 mm")
     assert said["heart-sound.pericardial-rub", ""].presence is Presence.ABSENT
     assert said["heart-sound.s3", ""].presence is Presence.ABSENT
