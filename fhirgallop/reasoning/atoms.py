@@ -100,7 +100,7 @@ def _within(low: int, high: int, least: int | None, most: int | None) -> Truth:
 
 @dataclass(frozen=True, slots=True, eq=False)
 class Atom:
-    """One question about one id; see the description of the rule files for each field."""
+    """One question about one id; each field is described in rules/README.md."""
 
     fact: str
     window: Window
