@@ -69,12 +69,14 @@ class Shown:
     Attributes:
         entries: digests to be silenced for the encounter by an answer.
         combinations: digests that "true in this patient" may silence.
+        shared: an answer holds for every user of the encounter; an urgent card each user answers alone.
     """
 
     uuid: str
     rules: tuple[str, ...]
     entries: tuple[str, ...]
     combinations: tuple[str, ...]
+    shared: bool
 
 
 def cards(decision: Decision, held: Held, frame: Frame) -> tuple[list[dict[str, Any]], list[Shown]]:
@@ -93,7 +95,7 @@ def cards(decision: Decision, held: Held, frame: Frame) -> tuple[list[dict[str, 
     elif asked and asked.id.startswith(_RHYTHM):
         # what is unknown never alerts; the rhythm alone, which most rules need, is asked for in a card
         given.append(_asking(asked, held, frame))
-        shown.append(Shown(_id(frame, "ask", asked.id), (), (), ()))
+        shown.append(Shown(_id(frame, "ask", asked.id), (), (), (), shared=False))
     return given, shown
 
 
@@ -114,6 +116,7 @@ def _shown(card: Card, frame: Frame) -> Shown:
         tuple(dict.fromkeys(c.rule.id for c in card.conclusions)),
         tuple(dict.fromkeys(entry_digest(c) for c in card.conclusions)),
         tuple(dict.fromkeys(true)),
+        card.level != "urgent",
     )
 
 

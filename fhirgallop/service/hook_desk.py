@@ -1,7 +1,8 @@
 """Answers CDS Hooks calls and takes feedback, with the memory of what was shown kept between them.
 
-The memory is a patient's; what was shown counts by encounter and user, so that nobody misses an urgent card
-because somebody else opened the chart before. The same hookInstance is answered alike again.
+The memory is a patient's; what was shown counts by encounter and user, so that nobody misses a card because
+somebody else opened the chart before. What was answered counts for every user of the encounter, but for an
+urgent card. The same hookInstance is answered alike again.
 """
 
 from __future__ import annotations
@@ -45,13 +46,17 @@ class Manner:
 
 @dataclass(frozen=True, slots=True)
 class _Asked:
-    """One call on its way, with the digests it is remembered under."""
+    """One call on its way, with the digests it is remembered under.
+
+    `visit` is the encounter's, `encounter` the encounter's for this user alone.
+    """
 
     service: Service
     call: Call
     held: Held
     now: datetime
     patient: str
+    visit: str
     encounter: str
     instance: str
 
@@ -82,10 +87,10 @@ class HookDesk:
             return [], issues
         patient = digest("patient", call.server, call.patient)
         exam = held.own.exam
-        visit = exam.encounter.value if exam.encounter else exam.time.start
+        visit = digest("encounter", patient, exam.encounter.value if exam.encounter else exam.time.start)
         asked = _Asked(
             service, call, held, now, patient,
-            digest("encounter", patient, visit, call.user),
+            visit, digest("user", visit, call.user),
             digest("instance", service.id, patient, call.instance),
         )  # fmt: skip
         for _ in range(_TRIES):
@@ -123,9 +128,10 @@ class HookDesk:
         return cards
 
     def _decide(self, asked: _Asked, memory: Memory) -> Decision:
+        answered = dict(memory.answered).get(asked.visit)
         return decide(
             asked.held.review,
-            memory,
+            memory.answering(asked.encounter, answered) if answered else memory,
             encounter=asked.encounter,
             now=asked.now,
             policy=self._manner.policy,
@@ -192,14 +198,22 @@ def _bytes(memory: Memory) -> bytes:
 
 
 def _kept(shown: Shown, asked: _Asked) -> KeptCard:
-    value = {"rules": shown.rules, "entries": shown.entries, "combinations": shown.combinations}
+    value = {"rules": shown.rules, "entries": shown.entries, "combinations": shown.combinations,
+             "shared": shown.shared}  # fmt: skip
     text = fhirjson.write(value)
-    return KeptCard(shown.uuid, asked.service.id, asked.patient, asked.encounter, text, instant(asked.now))
+    encounter = asked.visit if shown.shared else asked.encounter
+    return KeptCard(shown.uuid, asked.service.id, asked.patient, encounter, text, instant(asked.now))
 
 
 def _shown_of(card: KeptCard) -> Shown:
     value = fhirjson.read(card.shown)[0]
-    return Shown(card.card, tuple(value["rules"]), tuple(value["entries"]), tuple(value["combinations"]))
+    return Shown(
+        card.card,
+        tuple(value["rules"]),
+        tuple(value["entries"]),
+        tuple(value["combinations"]),
+        value["shared"],
+    )
 
 
 def _report(report: Feedback, service: Service, matched: bool, now: datetime) -> KeptFeedback:

@@ -173,26 +173,40 @@ def test_feedback_is_counted_by_rule(hooked: TestClient, card: Json, report: Mak
     assert counted == {"pulse.regular-in-fibrillation": expected, "s4.in-atrial-fibrillation": expected}
 
 
-def test_an_answer_is_silent_for_the_encounter_and_true_for_the_patient(
-    hooked: TestClient, hook_call: Make, report: Make, prefetch: Make, kept: list[Json], searchset: Any
+def test_an_answer_holds_for_every_user_of_the_encounter(
+    hooked: TestClient, hook_call: Make, report: Make
 ) -> None:
-    """True in this patient: silent in another encounter and for another user too."""
-
-    def elsewhere() -> Json:
-        for one in kept:
-            one["encounter"] = {"reference": "Encounter/v-9999"}
-        return hook_call(
-            prefetch=prefetch(exam=searchset(kept)),
-            context={"encounterId": "v-9999", "userId": "Practitioner/8"},
-        )
-
-    assert send(hooked, report("looked-again")) == 200
-    assert hooked.post(VIEW, json=hook_call()).json() == {"cards": []}
-    first = elsewhere()
-    assert hooked.post(VIEW, json=first).json()["cards"], "another encounter is asked again"
-    assert send(hooked, report("true-in-this-patient")) == 200
-    assert hooked.post(VIEW, json=elsewhere()).json() == {"cards": []}
+    other = {"userId": "Practitioner/8"}
+    assert send(hooked, report()) == 200
+    first = hook_call(context=other)
+    assert hooked.post(VIEW, json=first).json()["cards"], "an override without a reason answers nothing"
+    assert send(hooked, report("both-true")) == 200
+    assert hooked.post(VIEW, json=hook_call(context={"userId": "Practitioner/9"})).json() == {"cards": []}
     assert hooked.post(VIEW, json=first).json()["cards"], "the same hookInstance is answered alike"
+
+
+def test_an_urgent_card_each_user_answers_alone(hooked: TestClient, hook_call: Make, prefetch: Make) -> None:
+    said = prefetch("urgent-combination")
+    (urgent,) = hooked.post(VIEW, json=hook_call(prefetch=said)).json()["cards"]
+    for code in ("looked-again", "true-in-this-patient"):
+        reason = {"reason": {"code": code, "system": ANSWERS}}
+        answer = {"card": urgent["uuid"], "outcome": "overridden", "outcomeTimestamp": AT}
+        assert send(hooked, {**answer, "overrideReason": reason}) == 200
+    other = hook_call(prefetch=said, context={"userId": "Practitioner/8"})
+    assert hooked.post(VIEW, json=other).json()["cards"][0]["summary"] == "urgent clinical review"
+
+
+@pytest.mark.parametrize(("code", "count"), [("looked-again", 1), ("true-in-this-patient", 0)])
+def test_only_what_is_true_in_the_patient_is_silent_in_another_encounter(
+    hooked: TestClient, hook_call: Make, report: Make, prefetch: Make, kept: list[Json], searchset: Any,
+    code: str, count: int,
+) -> None:  # fmt: skip
+    assert send(hooked, report(code)) == 200
+    found = prefetch(exam=searchset(kept))
+    for one in (*kept, *(entry["resource"] for entry in found["results"]["entry"])):
+        one["encounter"] = {"reference": "Encounter/v-9999"}
+    call = hook_call(prefetch=found, context={"encounterId": "v-9999", "userId": "Practitioner/8"})
+    assert len(hooked.post(VIEW, json=call).json()["cards"]) == count
 
 
 def test_many_calls_for_one_patient_at_once(hooked: TestClient, hook_call: Make) -> None:

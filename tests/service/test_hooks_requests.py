@@ -509,3 +509,19 @@ def test_a_memory_that_others_keep_changing_is_told(
     monkeypatch.setattr(HookStore, "keep", lambda *_, **__: False)
     answer = hooked.post(VIEW, json=hook_call())
     assert (answer.status_code, rules(answer)) == (503, {"hook-busy"})
+
+
+def test_an_entry_with_a_time_of_its_own_is_no_earlier_examination(
+    hooked: TestClient, hook_call: Make, kept: list[Json], prefetch: Make, searchset: Any
+) -> None:
+    for one in kept:
+        if "hasMember" not in one and any(c["code"] == "heart-sound.s4" for c in one["code"]["coding"]):
+            one["effectiveDateTime"] = "2026-03-14T09:10:00+01:00"
+    call = hook_call(prefetch=prefetch("urgent-combination", exam=searchset(kept)))
+    text = detail(hooked.post(VIEW, json=call))
+    again = hook_call(prefetch=prefetch(exam=searchset(kept)), context={"userId": "Practitioner/8"})
+    text += detail(hooked.post(VIEW, json=again))
+    assert "Fourth heart sound: present" in text
+    assert "Fourth heart sound" not in "".join(
+        line for line in text.splitlines() if "earlier examination" in line
+    )
