@@ -76,7 +76,7 @@ class Card:
             "level": self.level,
             "key": self.key,
             "title": self.title,
-            "entries": [words.entry(item) for item in self.entries],
+            "entries": words.entries(self.entries),
             "answers": [answer.value for answer in self.answers],
             "notice": SHORT,
         }

@@ -12,6 +12,7 @@ from fhirgallop.cards.card import Card
 from fhirgallop.cards.policy import Decision
 from fhirgallop.cards.safety import SAFETY_TEXTS
 from fhirgallop.exam.exam import Exam
+from fhirgallop.outcome import Issue
 from fhirgallop.reasoning.conclusion import BEARING, Conclusion, Outcome, cutoffs_of
 from fhirgallop.reasoning.review import Review
 from fhirgallop.reasoning.vocabulary import Relation, Strength, Tier
@@ -32,12 +33,21 @@ _OUTCOMES: Final = {
 _ORDER: Final = tuple(_OUTCOMES)
 _UNKNOWN: Final = (Outcome.NOT_LOOKED_FOR, Outcome.OPEN)
 MAX_UNKNOWN: Final = 3
+MAX_GROUNDS: Final = 6
 
 
-def sheet(exam: Exam, review: Review, decision: Decision) -> str:
-    """The whole sheet as plain text."""
+def sheet(exam: Exam, review: Review, decision: Decision, issues: Iterable[Issue] = ()) -> str:
+    """The whole sheet as plain text.
+
+    Args:
+        exam: the examination.
+        review: what the rules gave.
+        decision: what the policy shows of it.
+        issues: what the reading of the chart had to leave out; a sheet without it would promise too much.
+    """
     lines = [f"Review of the examination of {exam.time.start}, with rules {review.rules_version}", ""]
     lines += _block("MOST RULES ARE NOT MEANT FOR THIS PATIENT AND WERE NOT APPLIED", _limits(review))
+    lines += _block("LEFT OUT OF THE CHART", _unread(issues))
     for card in decision.cards:
         lines += [*_card(card), ""]
     if not decision.cards:
@@ -59,9 +69,9 @@ def sheet(exam: Exam, review: Review, decision: Decision) -> str:
     )
     lines += _block(
         "SOURCES THAT DISAGREE (BOTH KEPT, NEITHER USED)",
-        ("; ".join(words.entry(item) for item in group) for group in review.disagreements),
+        ("; ".join(words.entries(group)) for group in review.disagreements),
     )
-    lines += _block("COULD NOT BE USED", (words.entry(item) for item in review.unusable))
+    lines += _block("COULD NOT BE USED", words.entries(review.unusable))
     lines += _block("PLEASE NOTE", SAFETY_TEXTS)
     return "\n".join(lines).rstrip() + "\n"
 
@@ -76,8 +86,8 @@ def _card(card: Card) -> Iterator[str]:
                 yield from _filled(conclusion.text, "  ")
             if section.question:
                 yield from _filled(section.question, "  ")
-    for item in card.entries:
-        yield from _filled(words.entry(item), "  - ")
+    for entry in words.entries(card.entries):
+        yield from _filled(entry, "  - ")
     for look in card.looks:
         yield from _filled(f"Look again: {words.label(look.item.id)}: {look.action}", "  ")
     if card.level != "urgent":
@@ -92,6 +102,13 @@ def _card(card: Card) -> Iterator[str]:
 
 def _source(conclusion: Conclusion) -> str:
     return f"Source: {conclusion.rule.source} ({conclusion.rule.seen}; {conclusion.rule.id})"
+
+
+def _unread(issues: Iterable[Issue]) -> Iterator[str]:
+    """What could not be read, each sentence once."""
+    counted = Counter(issue.text for issue in issues if issue.severity != "information")
+    for text, count in counted.most_common():
+        yield text if count == 1 else f"{text} ({count} places)"
 
 
 def _limits(review: Review) -> Iterator[str]:
@@ -133,7 +150,10 @@ def _known(conclusion: Conclusion) -> str:
     if conclusion.outcome is Outcome.NOTE:
         return f"note: {conclusion.text}"
     subject = {ground.item.key for ground in conclusion.subject}
-    basis = "; ".join(words.ground(g) for g in conclusion.grounds if g.item.key not in subject)
+    others = [g for g in conclusion.grounds if g.item.key not in subject]
+    basis = "; ".join(dict.fromkeys(map(words.ground, others[:MAX_GROUNDS])))
+    if len(others) > MAX_GROUNDS:
+        basis += f"; and {len(others) - MAX_GROUNDS} more"
     return f"{_OUTCOMES[conclusion.outcome]}: {basis or conclusion.text}"
 
 
@@ -155,8 +175,11 @@ def _unknown(outcome: Outcome, conclusions: Iterable[Conclusion]) -> tuple[list[
 def _weighs(conclusion: Conclusion) -> bool:
     """What a finding needs, what could interrupt, and companions that are more than weakly expected."""
     if conclusion.outcome is Outcome.OPEN:
-        required = conclusion.rule.relation is Relation.REQUIRES and conclusion.rule.strength in BEARING
-        return required or conclusion.rule.tier is Tier.T1
+        rule = conclusion.rule
+        required = rule.relation is Relation.REQUIRES and rule.strength in BEARING
+        # of what the examiner wrote down, nobody asks for further properties
+        itself = any(datum.startswith(f"{rule.finding}#") for datum in conclusion.unknown)
+        return (required or rule.tier is Tier.T1) and not itself
     return conclusion.strength in (Strength.HARD, Strength.STRONG, Strength.MODERATE)
 
 

@@ -134,6 +134,18 @@ def entry(item: Item) -> str:
     return f"{said(item)} [{origin(item)}]"
 
 
+def entries(several: Iterable[Item]) -> list[str]:
+    """The same of many; those that say the same from one kind of source and one time are told once."""
+    alike: dict[str, list[Item]] = {}
+    for item in several:
+        place = "" if item.of_exam else f"{item.source} {age(item.age, clock=item.clock)} {item.low_trust}"
+        alike.setdefault(f"{said(item)} {place}", []).append(item)
+    return [
+        entry(group[0]) + (f" and {len(group) - 1} more that say the same" if len(group) > 1 else "")
+        for group in alike.values()
+    ]
+
+
 def ground(one: Ground) -> str:
     """The same, with what weakens it in this use."""
     return f"{entry(one.item)}{' - out of date for this' if one.stale else ''}"

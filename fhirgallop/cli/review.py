@@ -70,7 +70,7 @@ def command(  # noqa: PLR0913, PLR0917 - one argument an option
         }
         typer.echo(fhirjson.pretty(whole).decode())
     else:
-        typer.echo(sheet(exam, found, decision), nl=False)
+        typer.echo(sheet(exam, found, decision, read.issues), nl=False)
         for issue in read.issues:
             complain(str(issue))
 

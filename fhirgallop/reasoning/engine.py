@@ -61,8 +61,11 @@ def grounded(saying: Saying, view: View) -> Conclusion | None:
         return None
     subject = tuple(sorted(saying.subject, key=_ground_key))
     unknown = _unknowns(rule, saying.subject_truth, when, other, about)
-    if unknown and not (unknown := tuple(filter(_worth_asking, unknown))):
-        return None
+    hinges = tuple(rule.other.unknowns(about)) if rule.other and other is Truth.UNKNOWN else ()
+    for asked in (unknown, hinges):
+        if asked and not any(map(_worth_asking, asked)):
+            return None
+    unknown = tuple(filter(_worth_asking, unknown))
     return Conclusion(rule, outcome, rule.strength, Tier.T0, subject, unknown=unknown)
 
 

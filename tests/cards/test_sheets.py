@@ -22,6 +22,7 @@ from fhirgallop.exam.context import Context, Fact, Source, State
 from fhirgallop.exam.entry import Entry, Grade, Measure, Qualifier
 from fhirgallop.exam.exam import Exam, Party
 from fhirgallop.exam.moment import Moment
+from fhirgallop.outcome import Issue
 from fhirgallop.reasoning.items import collect
 from fhirgallop.reasoning.review import review
 from fhirgallop.reasoning.rulebook import load
@@ -91,6 +92,29 @@ def test_a_lesion_that_the_examiner_suspects_is_not_told_as_a_fact() -> None:
     assert "(suspected: Aortic stenosis)" in " ".join(text.split())
 
 
+def test_what_could_not_be_read_stands_on_the_sheet() -> None:
+    exam = Exam(Party("p"), "x", "", Moment("2026-11-30T10:00:00+01:00"), (S4,))
+    found = review(exam, Context(NOW, ()))
+    decision = decide(found, Memory("p"), encounter="e", now=NOW)
+    issues = [
+        *(
+            Issue("error", "security", "chart-other-patient", "Another patient.", f"entry[{n}]")
+            for n in range(3)
+        ),
+        Issue("information", "informational", "x", "Nothing much."),
+    ]
+    text = sheet(exam, found, decision, issues)
+    assert "LEFT OUT OF THE CHART\n  - Another patient. (3 places)" in text
+    assert "Nothing much" not in text
+
+
+def test_copies_of_one_statement_are_told_once() -> None:
+    copies = tuple(replace(AF, reference=f"Observation/{n}") for n in range(500))
+    text = text_of((S4,), copies)
+    assert re.search(r"Observation/0\] and \d+ more that say the same", " ".join(text.split()))
+    assert text.count("Observation/") < 20
+
+
 def test_disagreeing_sources_are_both_named() -> None:
     text = text_of((S4,), (AF, replace(AF, answers=("sinus-rhythm",), reference="Observation/8")))
     assert "SOURCES THAT DISAGREE (BOTH KEPT, NEITHER USED)" in text
@@ -108,7 +132,7 @@ def test_no_sheet_says_what_must_not_be_said() -> None:
 
 def test_nothing_in_the_sheet_commands_a_terminal() -> None:
     words_ = Qualifier("quality", text="rough\x1b[2J\u202e\nNOW: urgent clinical review")
-    text = text_of((Entry("murmur.systolic", qualifiers=(words_,)),), ())
+    text = text_of((Entry("heart-sound.s4", qualifiers=(words_,)),), ())
     assert "rough" in text
     assert all(letter.isprintable() or letter == "\n" for letter in text)
     assert not any(line.startswith("NOW") for line in text.splitlines())
