@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from decimal import Decimal
 
 from fhirgallop.exam.presence import Presence
@@ -62,6 +62,8 @@ class Entry:
         time: the entry's own moment (FHIR dateTime), empty for the examination's.
         fields: names of the local fields it was read from.
         said: the local wording that was chosen, where the map names a local code system.
+        apart: of a box that may hold several answers, each answer as an entry of its own; it is coded and
+            known again by its answer, also where there is only one.
     """
 
     finding: str
@@ -77,6 +79,15 @@ class Entry:
     time: str = ""
     fields: tuple[str, ...] = ()
     said: str = ""
+    apart: tuple[Entry, ...] = ()
+
+    def by_answer(self) -> tuple[Entry, ...]:
+        """What is coded: each of several answers by itself (FHIR: one value, one Observation)."""
+        if self.apart or len(self.answers) < 2:
+            return self.apart or (self,)
+        return tuple(
+            replace(self, answers=(answer,), instance=f"{self.instance}/{answer}") for answer in self.answers
+        )
 
     @property
     def key(self) -> tuple[str, str]:

@@ -132,16 +132,24 @@ def choices_box(line: Line, choice: ChoiceList, policy: Policy) -> Says:
 
 
 def _together(run: Run, line: Line, found: list[Entry]) -> Entry | None:
-    if len(found) < 2:
-        return found[0] if found else None
-    if any(entry.presence is not Presence.PRESENT for entry in found):
+    if len(found) > 1 and any(entry.presence is not Presence.PRESENT for entry in found):
         several(run, line)
         return None
+    if not found or not found[0].answers:
+        return found[0] if found else None
+    apart: dict[str, Entry] = {}
+    for entry in found:
+        for answer in entry.answers:
+            same = apart.get(answer, entry)
+            qualifiers = tuple(dict.fromkeys((*same.qualifiers, *entry.qualifiers)))
+            instance = f"{line.instance}/{answer}"
+            apart[answer] = replace(same, answers=(answer,), qualifiers=qualifiers, instance=instance)
     return replace(
         found[0],
-        answers=tuple(dict.fromkeys(answer for entry in found for answer in entry.answers)),
+        answers=tuple(apart),
         qualifiers=tuple(dict.fromkeys(q for entry in found for q in entry.qualifiers)),
-        said="",
+        said=found[0].said if len(apart) == 1 else "",
+        apart=tuple(apart.values()),
     )
 
 

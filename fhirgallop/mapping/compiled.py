@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from dataclasses import replace
+from typing import NamedTuple
 
 from fhirgallop.exam.entry import Entry, Qualifier
 from fhirgallop.exam.presence import Presence
@@ -187,7 +188,7 @@ class _FindingLine:
         if plain and not self._line.qualifiers and not self._line.note and not self._time:
             run.entries.append(base)
             return
-        qualifiers = [*base.qualifiers, *self._constants(base)]
+        qualifiers = self._constants(base).copy()
         fields, notes = list(base.fields), list(base.notes)
         for name, describes in self._describers:
             self._describe(run, name, describes, base, qualifiers, fields, notes)
@@ -196,23 +197,9 @@ class _FindingLine:
         if carrier is not None and not plain:
             time = own_time(run, carrier, self._tools.record, time)
             notes += own_notes(run, carrier)
-        run.entries.append(
-            Entry(
-                base.finding,
-                base.presence,
-                base.answers,
-                base.measure,
-                base.text,
-                _in_order(qualifiers),
-                base.instance,
-                base.reason,
-                tuple(notes),
-                base.withdrawn,
-                time,
-                tuple(dict.fromkeys(fields)),
-                base.said,
-            )
-        )
+        said = _Said(qualifiers, tuple(notes), time, tuple(dict.fromkeys(fields)), base.withdrawn)
+        apart = tuple(said.of(one) for one in base.apart)
+        run.entries.append(said.of(base, apart))
 
     def _describe(
         self,
@@ -247,6 +234,35 @@ class _FindingLine:
             if values := self._tools.blanks.filled(run.fields.get(name)):
                 notes += [words_of(value) for value in values]
                 fields.append(name)
+
+
+class _Said(NamedTuple):
+    """What the boxes around it say of an entry."""
+
+    qualifiers: list[Qualifier]
+    notes: tuple[str, ...]
+    time: str
+    fields: tuple[str, ...]
+    withdrawn: bool
+
+    def of(self, base: Entry, apart: tuple[Entry, ...] = ()) -> Entry:
+        """The entry, described."""
+        return Entry(
+            base.finding,
+            base.presence,
+            base.answers,
+            base.measure,
+            base.text,
+            _in_order([*base.qualifiers, *self.qualifiers]),
+            base.instance,
+            base.reason,
+            self.notes,
+            self.withdrawn,
+            self.time,
+            self.fields,
+            base.said,
+            apart,
+        )
 
 
 def _in_order(qualifiers: list[Qualifier]) -> tuple[Qualifier, ...]:

@@ -7,7 +7,7 @@ or a number is the value of what was asked. What means nothing alone (a murmur's
 from __future__ import annotations
 
 from collections.abc import Sequence
-from dataclasses import dataclass, replace
+from dataclasses import dataclass
 from functools import cache
 from typing import Any
 
@@ -86,11 +86,9 @@ class ObservationBuilder:
             definition = frames[entry.finding].definition
             if definition.within or definition.kind == "panel":
                 gathered.setdefault((definition.within or definition.id, entry.instance), []).append(entry)
-            elif len(entry.answers) > 1:
-                for one in split_answers(entry):
-                    self._add(found, one, shared)
             else:
-                self._add(found, entry, shared)
+                for one in entry.by_answer():
+                    self._add(found, one, shared)
         for (panel, instance), parts in gathered.items():
             urn = shared.identities.of(panel, instance)
             found[urn] = self._panel(frames[panel], parts, shared, urn)
@@ -212,14 +210,6 @@ class ObservationBuilder:
         withdrawn = resource["status"] == "entered-in-error"
         resource["text"] = text.narrative(f"{frame.label} ({'; '.join(words)})", withdrawn=withdrawn)
         return resource
-
-
-def split_answers(entry: Entry) -> list[Entry]:
-    """Each of several answers as an entry of its own (FHIR: one value, one Observation)."""
-    return [
-        replace(entry, answers=(answer,), instance=f"{entry.instance}/{answer}".lstrip("/"))
-        for answer in entry.answers
-    ]
 
 
 def _site_apart(entry: Entry, frame: Frame) -> tuple[Sequence[Qualifier], str]:
