@@ -14,7 +14,7 @@ from typing import TYPE_CHECKING, Any, Final
 
 from fhirgallop.haemodynamics import COMPUTATIONS, Result
 from fhirgallop.reasoning.block import Block
-from fhirgallop.reasoning.conditions import Condition, View
+from fhirgallop.reasoning.conditions import Condition, Support, View
 from fhirgallop.reasoning.defining import SEEN
 from fhirgallop.reasoning.logic import Truth
 from fhirgallop.reasoning.yaml_tree import Items
@@ -122,9 +122,21 @@ def likelihoods(book: Rulebook, view: View, pretests: Mapping[str, Pretest]) -> 
             continue
         truth = row.finding.judge(view)
         ratio = {Truth.TRUE: row.present, Truth.FALSE: row.absent, Truth.UNKNOWN: None}[truth]
-        if ratio is not None:
-            found.append(_apply(row, truth is Truth.TRUE, ratio, pretest))
+        if ratio is None:
+            continue
+        if row.method == "auscultation" and _from_a_tracing(row.finding.supports(view, truth)):
+            refused = "Published for the ear; this sound was found on a tracing."
+            found.append(Likelihood(row, truth is Truth.TRUE, ratio, refused=refused))
+            continue
+        found.append(_apply(row, truth is Truth.TRUE, ratio, pretest))
     return tuple(found)
+
+
+def _from_a_tracing(supports: tuple[Support, ...]) -> bool:
+    """Ratios of the ear and of a phonocardiogram are not interchangeable."""
+    return bool(supports) and all(
+        any("phonocardiography" in ground.item.values("method") for ground in support) for support in supports
+    )
 
 
 def _apply(row: LikelihoodRow, is_present: bool, ratio: Ratio, pretest: Pretest) -> Likelihood:

@@ -348,3 +348,14 @@ def test_an_age_band_makes_a_child_where_no_age_is_known(
     chart = [{"id": "device.prosthetic-valve", "answer": "mechanical", "with": {"valve": "aortic"}}, *person]
     raised = [c.rule.id for c in made(low, chart).review().raised]
     assert raised == ([] if silent else ["prosthesis.fever"])
+
+
+def test_a_ratio_of_the_ear_is_not_used_for_a_tracing(made: Make) -> None:
+    settings = Settings({"heart-failure": Pretest(Decimal("0.3"), "emergency-dyspnoea")})
+    heard = {"id": "heart-sound.s3", "with": {"method": "auscultation-bell"}}
+    traced = {"id": "heart-sound.s3", "with": {"method": "phonocardiography"}}
+    for entry, refused in ((heard, False), (traced, True)):
+        found = {x.row.id: x for x in made([entry], []).review(settings=settings).likelihoods}
+        one = found["lr.third-sound-heart-failure"]
+        assert (one.probability is None) is refused
+        assert ("tracing" in one.refused) is refused
