@@ -46,7 +46,11 @@ class NumberFault:
     text: str
 
 
-Measured = Measure | NumberFault
+# None: the part of the box that was asked for is blank.
+Measured = Measure | NumberFault | None
+IsBlank = Callable[[Value], bool]
+# A dash in place of a number says that there is none.
+_DASHES: Final = frozenset("-\u2013\u2014")
 _NOT_A_NUMBER: Final = NumberFault(
     "map-number-unreadable", "value", "it is not a number; send digits, and words in a field of their own"
 )
@@ -64,13 +68,18 @@ class _Sent(NamedTuple):
     unit: str
 
 
-def reader(form: NumberForm, target: Unit, units: UnitTable) -> Callable[[Value], Measured]:
-    """A function from a field's value to the measure in `target`, or to why there is none."""
+def reader(
+    form: NumberForm, target: Unit, units: UnitTable, is_blank: IsBlank
+) -> Callable[[Value], Measured]:
+    """A function from a field's value to the measure in `target`, or to why there is none.
+
+    `is_blank` tells which wordings count as empty; in a box of several numbers one of them may be blank.
+    """
     default = units.by_code.get(form.unit)
 
     def read(value: Value) -> Measured:
-        sent = _sent(value, form)
-        return sent if isinstance(sent, NumberFault) else _measure(sent, default, target, units)
+        sent = _sent(value, form, is_blank)
+        return _measure(sent, default, target, units) if isinstance(sent, _Sent) else sent
 
     return read
 
@@ -80,12 +89,12 @@ def parts_in(value: Value, form: NumberForm) -> int:
     return value.count(form.split) + 1 if isinstance(value, str) and form.split else 1
 
 
-def _sent(value: Value, form: NumberForm) -> _Sent | NumberFault:
+def _sent(value: Value, form: NumberForm, is_blank: IsBlank) -> _Sent | NumberFault | None:
     match value:
         case bool():
             return _NOT_A_NUMBER
         case str():
-            return _written(value, form)
+            return _written(value, form, is_blank)
         case Decimal():
             sent = _Sent(value, None, "", "")
         case Amount(number, unit, comparator):
@@ -98,8 +107,8 @@ def _sent(value: Value, form: NumberForm) -> _Sent | NumberFault:
                 return span
             sent = span
         case Coded(code, display):
-            first = _written(code, form)
-            return _written(display, form) if isinstance(first, NumberFault) and display else first
+            first = _written(code, form, is_blank)
+            return _written(display, form, is_blank) if isinstance(first, NumberFault) and display else first
     if form.part > 1:
         return _part_missing(form)
     return _bounded(sent)
@@ -112,11 +121,13 @@ def _span(low: Decimal | None, high: Decimal | None, unit: str) -> _Sent | Numbe
     return _Sent(low, None, ">=", unit) if high is None else _Sent(low, high, "", unit)
 
 
-def _written(text: str, form: NumberForm) -> _Sent | NumberFault:
+def _written(text: str, form: NumberForm, is_blank: IsBlank) -> _Sent | NumberFault | None:
     if form.split:
         part = _part(text, form)
         if isinstance(part, NumberFault):
             return part
+        if is_blank(part) or part.strip() in _DASHES:
+            return None
         text = part
     match = _TEXT.fullmatch(" ".join(text[:200].split()))
     if not match:

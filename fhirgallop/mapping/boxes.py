@@ -14,7 +14,7 @@ from fhirgallop.mapping import amounts, grades
 from fhirgallop.mapping.meanings import GRADE
 from fhirgallop.mapping.run import Run
 from fhirgallop.mapping.template_map import ChoiceList, Line, Meaning
-from fhirgallop.mapping.wordings import Lookup, words_of
+from fhirgallop.mapping.wordings import Blanks, Lookup, words_of
 
 Says = Callable[[Run, tuple[Value, ...]], Entry | None]
 
@@ -170,14 +170,24 @@ def _in_words(line: Line, words: str, presence: Presence) -> Entry:
 
 
 def number_box(
-    line: Line, definition: FindingDefinition, units: UnitTable, policy: Policy, parts: int
+    line: Line,
+    definition: FindingDefinition,
+    units: UnitTable,
+    policy: Policy,
+    blanks: Blanks,
+    *,
+    parts: int,
+    blank: Entry | None,
 ) -> Says:
-    """A box that holds a number; `parts` is how many numbers of it the whole map reads."""
+    """A box that holds a number.
+
+    `parts` is how many numbers of it the whole map reads; `blank` what it says where this one is blank.
+    """
     form = line.number
     if form is None:  # pragma: no cover  (the caller asks only for lines with a number)
         raise ValueError(line)
     table = lookup(line, line.choice, policy) if line.choice else None
-    read = amounts.reader(form, units.by_code[definition.unit], units)
+    read = amounts.reader(form, units.by_code[definition.unit], units, blanks.is_blank)
 
     def says(run: Run, values: tuple[Value, ...]) -> Entry | None:
         if len(values) > 1:
@@ -187,6 +197,8 @@ def number_box(
         if table and (found := table.find(value)) is not None:
             return found if isinstance(found, Entry) else None
         measure = read(value)
+        if measure is None:
+            return blank
         if not isinstance(measure, Measure):
             run.issue(
                 "error", measure.code, measure.rule, f"The value cannot be used: {measure.text}.", line.field

@@ -79,8 +79,9 @@ class _FindingLine:
         line, tools = self._line, self._tools
         definition = tools.catalogue.findings[line.finding]
         if line.number:
+            parts = tools.parts.get(line.field, 1)
             return boxes.number_box(
-                line, definition, tools.units, tools.policy, tools.parts.get(line.field, 1)
+                line, definition, tools.units, tools.policy, tools.blanks, parts=parts, blank=self._blank
             )
         if line.text:
             return boxes.text_box(line, tools.policy)
