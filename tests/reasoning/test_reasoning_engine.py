@@ -20,8 +20,8 @@ VEINS = {"id": "jvp.level", "answer": "elevated"}
 AF_ECG = {"id": "rhythm.diagnosis", "answer": "atrial-fibrillation", "from": "ecg", "age": "1 h"}
 
 REVIEW_KEYS = [
-    "urgent", "contradictions", "prerequisites", "companions", "explanations", "notes", "limits", "open", "silenced",
-    "conflicts", "changes", "likelihoods", "repair", "next_datum", "disagreements", "unusable",
+    "urgent", "contradictions", "prerequisites", "companions", "explanations", "notes", "limits", "open",
+    "silenced", "conflicts", "changes", "likelihoods", "repair", "next_datum", "disagreements", "unusable",
     "rules_version", "notice",
 ]  # fmt: skip
 SITE = """\
