@@ -71,7 +71,7 @@ def process(
     exam = mapped.exam
     if exam is None:
         return _result(None, None, issues, mapped)
-    issues += checks.check(exam, known)
+    issues += [*checks.check(exam, known), *checks.check_against_clock(exam, recorded)]
     if earlier is not None and (late := draft_after_signed(earlier, exam.status)):
         issues.append(late)
     if has_errors(issues):

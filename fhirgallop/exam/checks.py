@@ -3,11 +3,13 @@
 from __future__ import annotations
 
 from collections.abc import Callable, Iterator
+from datetime import UTC, datetime, timedelta
 from typing import Final
 
 from fhirgallop.exam.catalogue import Catalogue
 from fhirgallop.exam.entry import Entry
 from fhirgallop.exam.exam import Exam
+from fhirgallop.exam.moment import Moment
 from fhirgallop.exam.presence import Presence
 from fhirgallop.outcome import Issue, Severity
 
@@ -15,6 +17,18 @@ from fhirgallop.outcome import Issue, Severity
 def check(exam: Exam, catalogue: Catalogue) -> list[Issue]:
     """Every contradiction and implausible value inside `exam`; nothing is changed."""
     return [issue for clause in CLAUSES for issue in clause(exam, catalogue)]
+
+
+def check_against_clock(exam: Exam, now: datetime) -> list[Issue]:
+    """What cannot be true at the moment `now` (with a zone), at which the examination is converted.
+
+    A day is granted: clocks go wrong, and a date without a time of day names no zone.
+    """
+    latest = Moment((now.astimezone(UTC) + timedelta(days=1)).isoformat())
+    if not Moment(exam.time.end or exam.time.start).after(latest):
+        return []
+    text = "The examination is dated in the future; it is kept as entered. Check its day, month and year."
+    return [_issue("warning", "exam-in-the-future", text, code="value")]
 
 
 def _issue(severity: Severity, rule: str, text: str, *entries: Entry, code: str = "business-rule") -> Issue:
@@ -27,6 +41,18 @@ def nothing_entered(exam: Exam, _catalogue: Catalogue) -> Iterator[Issue]:
     if not exam.entries:
         text = "No finding is recorded in this examination; only an empty report is written."
         yield _issue("warning", "exam-without-entries", text)
+
+
+def before_all_records(exam: Exam, catalogue: Catalogue) -> Iterator[Issue]:
+    """A year such as 1026, or 0206, in which no patient of today was examined."""
+    cure = "the year is mistyped. Correct it."
+    if any(moment and moment < _EARLIEST for moment in (exam.time.start, exam.time.end)):
+        text = f"The examination is dated before {_EARLIEST}; {cure}"
+        yield _issue("error", "exam-before-1900", text, code="value")
+    for entry in exam.entries:
+        if entry.time and entry.time < _EARLIEST:
+            text = f"{catalogue.findings[entry.finding].label} is dated before {_EARLIEST}; {cure}"
+            yield _issue("error", "exam-before-1900", text, entry, code="value")
 
 
 def present_and_absent(exam: Exam, catalogue: Catalogue) -> Iterator[Issue]:
@@ -146,6 +172,7 @@ def implausible_value(exam: Exam, catalogue: Catalogue) -> Iterator[Issue]:
 
 CLAUSES: Final[tuple[Callable[[Exam, Catalogue], Iterator[Issue]], ...]] = (
     nothing_entered,
+    before_all_records,
     present_and_absent,
     kind_present_parent_absent,
     qualified_but_not_present,
@@ -156,6 +183,8 @@ CLAUSES: Final[tuple[Callable[[Exam, Catalogue], Iterator[Issue]], ...]] = (
     implausible_value,
 )
 
+# Year, as a FHIR dateTime begins.
+_EARLIEST: Final = "1900"
 _WITHOUT_DESCRIPTION: Final = {
     Presence.ABSENT: "is absent",
     Presence.NOT_EXAMINED: "was not examined",

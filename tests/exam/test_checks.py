@@ -2,12 +2,13 @@
 
 from __future__ import annotations
 
+from datetime import UTC, datetime, timedelta, timezone
 from decimal import Decimal
 
 import pytest
 
 from fhirgallop.exam.catalogue import load
-from fhirgallop.exam.checks import check
+from fhirgallop.exam.checks import check, check_against_clock
 from fhirgallop.exam.entry import Entry, Grade, Measure, Qualifier
 from fhirgallop.exam.exam import Exam, Party
 from fhirgallop.exam.moment import Moment
@@ -110,3 +111,58 @@ def test_the_local_fields_are_named():
     exam = Exam(Party("P-1"), "E-1", "", Moment("2026"), entries)
     (issue,) = check(exam, CATALOGUE)
     assert issue.field == "s4_box, gallop"
+
+
+def dated(start, end="", *entries):
+    return Exam(Party("P-1"), "E-1", "", Moment(start, end), entries or (Entry("heart-sound.s4"),))
+
+
+NOW = datetime(2026, 12, 1, 8, 30, tzinfo=UTC)
+
+
+@pytest.mark.parametrize(
+    ("start", "end", "future"),
+    [
+        ("2026-12-01T09:30:00+01:00", "", False),
+        ("2026-12-02T08:30:00Z", "", False),
+        ("2026-12-02T08:30:01Z", "", True),
+        ("2026-12-02T09:30:00+01:00", "", False),
+        ("2026-12-02", "", False),
+        ("2026-12-03", "", True),
+        ("2026-12", "", False),
+        ("2027-01", "", True),
+        ("2026", "", False),
+        ("2062", "", True),
+        ("2026-11", "2027-01", True),
+        ("2014-07", "2014-08", False),
+    ],
+)
+def test_an_examination_in_the_future_is_flagged_and_kept(start, end, future):
+    found = check_against_clock(dated(start, end), NOW)
+    assert [(i.severity, i.rule) for i in found] == [("warning", "exam-in-the-future")] * future
+    elsewhere = NOW.astimezone(timezone(timedelta(hours=13)))
+    assert check_against_clock(dated(start, end), elsewhere) == found
+
+
+@pytest.mark.parametrize(
+    ("start", "end", "errors"),
+    [
+        ("1026-03-14", "", 1),
+        ("0206-03-14T09:30:00Z", "", 1),
+        ("1899-12-31", "", 1),
+        ("1899", "", 1),
+        ("1900", "", 0),
+        ("1900-01-01", "", 0),
+        ("1014-07", "2014-08", 1),
+    ],
+)
+def test_a_mistyped_century_is_an_error_with_its_cure(start, end, errors):
+    found = check(dated(start, end), CATALOGUE)
+    assert [(i.severity, i.rule) for i in found] == [("error", "exam-before-1900")] * errors
+    assert all("Correct it" in issue.text and start not in issue.text for issue in found)
+
+
+def test_an_entry_of_its_own_mistyped_time_is_named():
+    entry = Entry("echo.lvef", measure=Measure(Decimal(60), "%"), time="0026-03-12", fields=("echo.lvef",))
+    (issue,) = check(dated("2026-03-14", "", entry), CATALOGUE)
+    assert (issue.severity, issue.rule, issue.field) == ("error", "exam-before-1900", "echo.lvef")
