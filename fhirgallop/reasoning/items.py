@@ -91,7 +91,11 @@ def collect(exam: Exam, context: Context) -> ItemTable:
     for entry in entries:
         state = _STATES.get(entry.presence)
         if state is not None and not entry.withdrawn:
-            _put(_of_entry(entry, state, exam.time.start), found, unusable)
+            item = _of_entry(entry, state, exam.time.start, origin)
+            if item.age is not None and origin - item.age > now:
+                unusable.append(item)
+            else:
+                _put(item, found, unusable)
     encounter = exam.encounter.value if exam.encounter else ""
     for fact in context.facts:
         item = _of_fact(fact, origin, encounter)
@@ -121,7 +125,9 @@ def _put(item: Item, found: dict[str, list[Item]], unusable: list[Item]) -> None
             found.setdefault(parent, []).append(item)
 
 
-def _of_entry(entry: Entry, state: State, time: str) -> Item:
+def _of_entry(entry: Entry, state: State, time: str, origin: float) -> Item:
+    """An entry is as old as the examination, unless the form gave it a time of its own (an older echo)."""
+    own = moment(entry.time)
     described = ""
     if entry.answers or entry.measure is not None or entry.qualifiers:
         described = _said(entry.answers, entry.measure, entry.qualifiers)
@@ -135,9 +141,9 @@ def _of_entry(entry: Entry, state: State, time: str) -> Item:
         qualifiers=entry.qualifiers,
         instance=entry.instance,
         time=entry.time or time,
-        age=0,
-        clock=True,
-        encounter=True,
+        age=0 if own is None else int(origin - own),
+        clock=own is None or len(entry.time) > 10,
+        encounter=True if own is None else None,
         low_trust=False,
         place=", ".join(entry.fields),
         of_exam=True,

@@ -54,7 +54,10 @@ def places(value: Any, path: tuple[Any, ...] = ()) -> Iterator[tuple[Any, ...]]:
 
 def put(value: Any, path: tuple[Any, ...], new: Any) -> None:
     for step in path[:-1]:
-        value = value[step]
+        try:
+            value = value[step]
+        except (KeyError, IndexError, TypeError):
+            return  # an earlier change took this place away
         if not isinstance(value, (dict, list)):
             return
     fits = isinstance(path[-1], int) and path[-1] < len(value) if isinstance(value, list) else True
