@@ -6,7 +6,7 @@ Pure: no I/O, and no clock but the one handed in. The service, the command line 
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from datetime import datetime
 from typing import Any
 
@@ -14,7 +14,7 @@ from fhirgallop.conformance.validator import validate
 from fhirgallop.exam import catalogue, checks
 from fhirgallop.exam.exam import Exam
 from fhirgallop.intake.record import LocalRecord
-from fhirgallop.mapping.apply import Mapped, UnknownValue, apply
+from fhirgallop.mapping.apply import UnknownValue, apply
 from fhirgallop.mapping.template_map import TemplateMap
 from fhirgallop.observations.bundle import encode
 from fhirgallop.observations.editions import Edition
@@ -65,23 +65,35 @@ def process(
         snomed: write SNOMED CT codings.
         earlier: the Bundle that this examination gave before, when it is sent again.
     """
+    meant = understand(record, template_map, recorded)
+    return finish(meant, record.form, recorded=recorded, edition=edition, snomed=snomed, earlier=earlier)
+
+
+def understand(record: LocalRecord, template_map: TemplateMap, recorded: datetime) -> Result:
+    """The first half: what the clinician meant, mapped and checked; the Result has no Bundle yet."""
     known = catalogue.load()
     mapped = apply(record, template_map, known)
     issues = [*record.issues, *mapped.issues]
-    exam = mapped.exam
-    if exam is None:
-        return _result(None, None, issues, mapped)
-    issues += [*checks.check(exam, known), *checks.check_against_clock(exam, recorded)]
-    if earlier is not None and (late := draft_after_signed(earlier, exam.status)):
+    if mapped.exam is not None:
+        issues += [*checks.check(mapped.exam, known), *checks.check_against_clock(mapped.exam, recorded)]
+    return Result(mapped.exam, None, tuple(ordered(issues)), mapped.unread, mapped.unknown)
+
+
+def finish(
+    meant: Result,
+    form: str,
+    *,
+    recorded: datetime,
+    edition: Edition,
+    snomed: bool,
+    earlier: dict[str, Any] | None,
+) -> Result:
+    """The second half: what was understood, coded and judged, unless an issue is an error."""
+    exam, issues = meant.exam, list(meant.issues)
+    if earlier is not None and exam is not None and (late := draft_after_signed(earlier, exam.status)):
         issues.append(late)
-    if has_errors(issues):
-        return _result(exam, None, issues, mapped)
-    bundle = encode(
-        exam, form=record.form, recorded=recorded, edition=edition, snomed=snomed, earlier=earlier
-    )
-    issues += validate(bundle, edition)
-    return _result(exam, None if has_errors(issues) else bundle, issues, mapped)
-
-
-def _result(exam: Exam | None, bundle: dict[str, Any] | None, issues: list[Issue], mapped: Mapped) -> Result:
-    return Result(exam, bundle, tuple(ordered(issues)), mapped.unread, mapped.unknown)
+    bundle = None
+    if exam is not None and not has_errors(issues):
+        bundle = encode(exam, form=form, recorded=recorded, edition=edition, snomed=snomed, earlier=earlier)
+        issues += validate(bundle, edition)
+    return replace(meant, bundle=None if has_errors(issues) else bundle, issues=tuple(ordered(issues)))

@@ -15,8 +15,8 @@ from fhirgallop.mapping.template_map import TemplateMap
 from fhirgallop.observations.bundle import instant
 from fhirgallop.observations.editions import Edition
 from fhirgallop.observations.identity import Identities
-from fhirgallop.outcome import Issue, ordered
-from fhirgallop.pipeline import Result, process
+from fhirgallop.outcome import Issue, has_errors, ordered
+from fhirgallop.pipeline import Result, finish, understand
 from fhirgallop.storage.submissions import Submission, Submissions
 
 _TRIES: Final = 5
@@ -60,24 +60,23 @@ class Examinations:
             StorageError: the database failed; nothing of this record was kept.
         """
         now = self._clock()
+        understood = understand(record, template, now)
+        if understood.exam is None or has_errors(understood.issues):
+            return Coded(understood, None)
+        exam = Identities(understood.exam).of("examination")
+        meant = _fingerprint(understood.exam)
         for _ in range(_TRIES):
-            result = process(record, template, recorded=now, edition=edition, snomed=snomed)
-            if result.exam is None or result.bundle is None:
-                return Coded(result, None)
-            exam = Identities(result.exam).of("examination")
-            meant = _fingerprint(result.exam)
             before = self._store.latest(exam, edition, snomed=snomed)
             if before and before.record_hash == meant:
-                return Coded(result, before.bundle)
-            if before:
-                earlier: dict[str, Any] = fhirjson.read(before.bundle)[0]
-                result = process(
-                    record, template, recorded=now, edition=edition, snomed=snomed, earlier=earlier
-                )
-                if result.bundle is None:
-                    return Coded(result, None)
-                if self._store.has(exam, edition, meant, snomed=snomed):
-                    result = replace(result, issues=tuple(ordered([*result.issues, _SEEN_BEFORE])))
+                return Coded(understood, before.bundle)
+            earlier: dict[str, Any] | None = fhirjson.read(before.bundle)[0] if before else None
+            result = finish(
+                understood, record.form, recorded=now, edition=edition, snomed=snomed, earlier=earlier
+            )
+            if result.bundle is None:
+                return Coded(result, None)
+            if before and self._store.has(exam, edition, meant, snomed=snomed):
+                result = replace(result, issues=tuple(ordered([*result.issues, _SEEN_BEFORE])))
             text = fhirjson.write(result.bundle)
             version = before.version + 1 if before else 1
             row = Submission(
