@@ -12,7 +12,7 @@ import orjson
 from fhirgallop import assets
 from fhirgallop.conformance.editions import Edition, load
 from fhirgallop.conformance.editions.extensions import extension_row
-from fhirgallop.conformance.editions.model import Binding, ExtensionDef, ValueSet
+from fhirgallop.conformance.editions.model import ExtensionDef, ValueSet
 from fhirgallop.conformance.editions.package import KINDS, Package, read_package
 from fhirgallop.conformance.editions.valuesets import Expander
 from fhirgallop.errors import AssetError
@@ -79,16 +79,7 @@ class Registry:
         definition = self._structures.get(url)
         if definition is None or definition.get("type") != "Extension":
             return self.edition.extension(url)
-        row = extension_row(definition)
-        return ExtensionDef(
-            url=url,
-            types=tuple(row.get("t", ())),
-            contexts=tuple((kind, path) for kind, path in row.get("c", ())),
-            modifier=bool(row.get("m")),
-            parts={part: tuple(types) for part, types in row.get("p", {}).items()},
-            required=tuple(row.get("r", ())),
-            binding=Binding(*row["b"]) if "b" in row else None,
-        )
+        return ExtensionDef.of(url, extension_row(definition))
 
 
 @cache

@@ -112,17 +112,7 @@ class Edition:
     def extension(self, url: str) -> ExtensionDef | None:
         """A core extension's definition, or None when the core has none of that url."""
         row = self._extensions.get(url)
-        if row is None:
-            return None
-        return ExtensionDef(
-            url=url,
-            types=tuple(row.get("t", ())),
-            contexts=tuple((kind, path) for kind, path in row.get("c", ())),
-            modifier=bool(row.get("m")),
-            parts={part: tuple(types) for part, types in row.get("p", {}).items()},
-            required=tuple(row.get("r", ())),
-            binding=Binding(*row["b"]) if "b" in row else None,
-        )
+        return None if row is None else ExtensionDef.of(url, row)
 
     def _build(self, name: str) -> TypeDef:
         row = self._rows[name]

@@ -8,7 +8,7 @@ from __future__ import annotations
 from collections.abc import Mapping
 from typing import Any
 
-from fhirgallop.conformance.editions.structures import _binding as binding_row
+from fhirgallop.conformance.editions.structures import binding_row
 
 Definition = Mapping[str, Any]
 

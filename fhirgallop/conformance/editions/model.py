@@ -198,3 +198,16 @@ class ExtensionDef:
     parts: Mapping[str, tuple[str, ...]] = field(default_factory=dict)
     required: tuple[str, ...] = ()
     binding: Binding | None = None
+
+    @classmethod
+    def of(cls, url: str, row: Mapping[str, Any]) -> ExtensionDef:
+        """The definition that a compact row holds (see `extensions.extension_row`)."""
+        return cls(
+            url=url,
+            types=tuple(row.get("t", ())),
+            contexts=tuple((kind, path) for kind, path in row.get("c", ())),
+            modifier=bool(row.get("m")),
+            parts={part: tuple(types) for part, types in row.get("p", {}).items()},
+            required=tuple(row.get("r", ())),
+            binding=Binding(*row["b"]) if "b" in row else None,
+        )

@@ -144,7 +144,7 @@ class TypeTable:
             row["t"] = [_type_ref(t, name, kind, row) for t in types]
         if any(t["code"] in ("BackboneElement", "Element") for t in types):
             row["s"] = element["path"]
-        binding = _binding(element.get("binding"))
+        binding = binding_row(element.get("binding"))
         if binding:
             row["b"] = binding
         row["constraints"] = element.get("constraint", [])
@@ -223,7 +223,8 @@ def _short(canonical: str) -> str:
     return name if name[:1].isupper() and name.isalnum() else canonical
 
 
-def _binding(binding: Definition | None) -> list[str] | None:
+def binding_row(binding: Definition | None) -> list[str] | None:
+    """Value set and strength of a binding as a compact row; None where there is none worth keeping."""
     if not binding:
         return None
     maximum = next(
