@@ -54,8 +54,25 @@ class Condition(Protocol):
         """Every elementary condition in it."""
 
 
+class _Compound:
+    """What every condition made of parts has in common."""
+
+    __slots__ = ()
+    parts: tuple[Condition, ...]
+
+    def unknowns(self, view: View) -> Iterator[str]:
+        """The data that are unknown here."""
+        for part in self.parts:
+            yield from part.unknowns(view)
+
+    def atoms(self) -> Iterator[Condition]:
+        """Every elementary condition in it."""
+        for part in self.parts:
+            yield from part.atoms()
+
+
 @dataclass(frozen=True, slots=True, eq=False)
-class All:
+class All(_Compound):
     """True when every part is."""
 
     parts: tuple[Condition, ...]
@@ -68,19 +85,9 @@ class All:
         """Smallest sets of grounds that make it `truth`."""
         return _combine(self.parts, view, truth, together=Truth.TRUE)
 
-    def unknowns(self, view: View) -> Iterator[str]:
-        """The data that are unknown here."""
-        for part in self.parts:
-            yield from part.unknowns(view)
-
-    def atoms(self) -> Iterator[Condition]:
-        """Every elementary condition in it."""
-        for part in self.parts:
-            yield from part.atoms()
-
 
 @dataclass(frozen=True, slots=True, eq=False)
-class Any:
+class Any(_Compound):
     """True when one part is."""
 
     parts: tuple[Condition, ...]
@@ -93,19 +100,9 @@ class Any:
         """Smallest sets of grounds that make it `truth`."""
         return _combine(self.parts, view, truth, together=Truth.FALSE)
 
-    def unknowns(self, view: View) -> Iterator[str]:
-        """The data that are unknown here."""
-        for part in self.parts:
-            yield from part.unknowns(view)
-
-    def atoms(self) -> Iterator[Condition]:
-        """Every elementary condition in it."""
-        for part in self.parts:
-            yield from part.atoms()
-
 
 @dataclass(frozen=True, slots=True, eq=False)
-class First:
+class First(_Compound):
     """As the first part that is known: the better measurement before the proxy."""
 
     parts: tuple[Condition, ...]
@@ -125,17 +122,11 @@ class First:
     def unknowns(self, view: View) -> Iterator[str]:
         """The data that are unknown here."""
         if self.judge(view) is Truth.UNKNOWN:
-            for part in self.parts:
-                yield from part.unknowns(view)
-
-    def atoms(self) -> Iterator[Condition]:
-        """Every elementary condition in it."""
-        for part in self.parts:
-            yield from part.atoms()
+            yield from _Compound.unknowns(self, view)
 
 
 @dataclass(frozen=True, slots=True, eq=False)
-class Count:
+class Count(_Compound):
     """True when at least `least` of the parts are."""
 
     least: int
@@ -155,16 +146,6 @@ class Count:
         size = self.least if truth is Truth.TRUE else len(self.parts) - self.least + 1
         chosen = islice(combinations(each, size), MAX_SUPPORTS)
         return smallest(support for group in chosen for support in joined(group))
-
-    def unknowns(self, view: View) -> Iterator[str]:
-        """The data that are unknown here."""
-        for part in self.parts:
-            yield from part.unknowns(view)
-
-    def atoms(self) -> Iterator[Condition]:
-        """Every elementary condition in it."""
-        for part in self.parts:
-            yield from part.atoms()
 
 
 @dataclass(frozen=True, slots=True, eq=False)

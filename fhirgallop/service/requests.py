@@ -77,11 +77,6 @@ def wants_fhir(request: Request) -> bool:
     raise refusal(406, "not-supported", "http-accept", text)
 
 
-def accepts_fhir(request: Request) -> None:
-    """Refuses a request that takes no JSON back."""
-    wants_fhir(request)
-
-
 def fhir_content(request: Request) -> None:
     """Refuses a body that is not JSON by its own word."""
     given = request.headers.get("content-type", "").partition(";")[0].strip().lower()
