@@ -17,6 +17,7 @@ from fhirgallop.observations.editions import Edition
 from fhirgallop.observations.identity import Identities
 from fhirgallop.outcome import Issue, has_errors, ordered
 from fhirgallop.pipeline import Result, finish, understand
+from fhirgallop.storage.keys import patient_key
 from fhirgallop.storage.submissions import Submission, Submissions
 
 _TRIES: Final = 5
@@ -80,8 +81,10 @@ class Examinations:
             text = fhirjson.write(result.bundle)
             version = before.version + 1 if before else 1
             row = Submission(
-                exam, edition, snomed, version, template.name, template.version, meant, instant(now), text
-            )
+                exam, edition, snomed, version, template.name, template.version, meant,
+                patient_key(understood.exam.patient.system, understood.exam.patient.value),
+                instant(now), text,
+            )  # fmt: skip
             if self._store.add(row):
                 return Coded(result, text)
         raise BusyError

@@ -28,6 +28,7 @@ class Submission:
         map_name: template map it was read by.
         map_version: its version.
         record_hash: SHA-256 of what the sender meant, to tell a repetition from a change.
+        patient: digest of the patient's identifier.
         received: FHIR instant.
         bundle: the Bundle's bytes as answered.
     """
@@ -39,6 +40,7 @@ class Submission:
     map_name: str
     map_version: str
     record_hash: str
+    patient: str
     received: str
     bundle: bytes
 

@@ -1,12 +1,18 @@
-"""The tables. `schema_version` tells which form of them a database has."""
+"""The tables, as the newest migration leaves them.
+
+Moments that are compared by the database are milliseconds since 1970 (UTC); those that are only shown are
+FHIR instants. Patients, encounters and callers stand in columns of their own as digests only.
+"""
 
 from __future__ import annotations
 
 from typing import Final
 
 from sqlalchemy import (
+    BigInteger,
     Boolean,
     Column,
+    ForeignKey,
     Index,
     Integer,
     LargeBinary,
@@ -36,8 +42,11 @@ submissions = Table(
     Column("map_name", String(200), nullable=False),
     Column("map_version", String(200), nullable=False),
     Column("record_hash", String(64), nullable=False),
+    # digest of the patient's identifier: to find, and to delete, all that is kept of one patient
+    Column("patient", String(64), nullable=False),
     Column("received", String(35), nullable=False),
     Column("bundle", LargeBinary, nullable=False),
+    Index("submissions_patient", "patient"),
     UniqueConstraint("exam", "edition", "snomed", "version", name="submissions_exam_version"),
     Index("submissions_received", "received"),
 )
@@ -92,4 +101,166 @@ hook_feedback = Table(
     Column("at", String(40), nullable=False),
     Column("received", String(35), nullable=False),
     Index("hook_feedback_card", "card"),
+)
+
+# One row a version of a coded resource, as the FHIR addresses give it out. Versions are never changed;
+# `current` moves to the newest one.
+resources = Table(
+    "resources",
+    metadata,
+    # also the order of change: pages of a search and of a history follow it
+    Column("id", Integer, primary_key=True, autoincrement=True),
+    Column("edition", String(4), nullable=False),
+    Column("type", String(64), nullable=False),
+    Column("fhir_id", String(64), nullable=False),
+    Column("version", Integer, nullable=False),
+    Column("current", Boolean, nullable=False),
+    Column("deleted", Boolean, nullable=False),
+    Column("updated", BigInteger, nullable=False),
+    Column("patient", String(64), nullable=False),
+    Column("encounter", String(64), nullable=False),
+    # id of the catalogue's finding; empty for what is no finding of ours
+    Column("finding", String(200), nullable=False),
+    # first and last moment that the resource's date may mean; both empty where it has none
+    Column("date_from", BigInteger, nullable=True),
+    Column("date_to", BigInteger, nullable=True),
+    # the examination's version it came with; empty for what came over a FHIR address
+    Column("submission", Integer, ForeignKey("submissions.id", ondelete="CASCADE"), nullable=True),
+    # without id, versionId and lastUpdated, which stand in the columns
+    Column("body", LargeBinary, nullable=False),
+    UniqueConstraint("edition", "type", "fhir_id", "version", name="resources_version"),
+    Index("resources_patient", "patient"),
+    Index("resources_submission", "submission"),
+    Index("resources_current", "edition", "type", "current", "patient"),
+)
+
+# Digests of identifiers (system and value) by which a resource may be asked for, beside its own id.
+resource_identifiers = Table(
+    "resource_identifiers",
+    metadata,
+    Column("resource", Integer, ForeignKey("resources.id", ondelete="CASCADE"), primary_key=True),
+    Column("token", String(64), primary_key=True),
+    Index("resource_identifiers_token", "token"),
+)
+
+# Template maps as they were used: a version, once used, is never another.
+maps = Table(
+    "maps",
+    metadata,
+    Column("name", String(200), primary_key=True),
+    Column("version", String(200), primary_key=True),
+    Column("digest", String(64), nullable=False),
+    Column("text", LargeBinary, nullable=False),
+    Column("first_used", String(35), nullable=False),
+)
+
+# What is still to be sent to the record system, and what became of what was sent.
+outbox = Table(
+    "outbox",
+    metadata,
+    # also the order in which a patient's deliveries leave
+    Column("id", Integer, primary_key=True, autoincrement=True),
+    Column("destination", String(200), nullable=False),
+    Column("submission", Integer, ForeignKey("submissions.id", ondelete="CASCADE"), nullable=False),
+    Column("exam", String(45), nullable=False),
+    Column("patient", String(64), nullable=False),
+    # waiting, sending, delivered, failed (wants a person), dropped (a person gave it up)
+    Column("state", String(12), nullable=False),
+    Column("attempts", Integer, nullable=False),
+    Column("created", BigInteger, nullable=False),
+    Column("due", BigInteger, nullable=False),
+    Column("worker", String(64), nullable=False),
+    Column("lease", BigInteger, nullable=False),
+    Column("reason", String(500), nullable=False),
+    # status, location and outcome of each entry, as JSON; empty before there is an answer
+    Column("outcome", LargeBinary, nullable=True),
+    Index("outbox_due", "state", "due"),
+    Index("outbox_patient", "patient", "state"),
+    Index("outbox_submission", "submission"),
+)
+
+# How each destination fares, for all workers: after failures in a row nobody asks it before `open_until`.
+destinations = Table(
+    "destinations",
+    metadata,
+    Column("name", String(200), primary_key=True),
+    Column("failures", Integer, nullable=False),
+    Column("open_until", BigInteger, nullable=False),
+)
+
+# AuditEvent resources; only ever added to.
+audit = Table(
+    "audit",
+    metadata,
+    Column("id", Integer, primary_key=True, autoincrement=True),
+    Column("at", BigInteger, nullable=False),
+    Column("patient", String(64), nullable=False),
+    Column("event", LargeBinary, nullable=False),
+    Index("audit_at", "at"),
+    Index("audit_patient", "patient"),
+)
+
+# Tokens that were used, until they expire: the same one is not taken twice.
+used_tokens = Table(
+    "used_tokens",
+    metadata,
+    Column("token", String(64), primary_key=True),
+    Column("until", BigInteger, nullable=False),
+    Index("used_tokens_until", "until"),
+)
+
+# Answers by the sender's own key: the same request sent again gets the same answer, and does nothing.
+idempotent_answers = Table(
+    "idempotent_answers",
+    metadata,
+    Column("key", String(64), primary_key=True),
+    Column("request", String(64), nullable=False),
+    Column("at", BigInteger, nullable=False),
+    Column("status", Integer, nullable=False),
+    Column("media_type", String(100), nullable=False),
+    Column("headers", LargeBinary, nullable=False),
+    Column("answer", LargeBinary, nullable=False),
+    Column("patient", String(64), nullable=False),
+    Index("idempotent_answers_at", "at"),
+    Index("idempotent_answers_patient", "patient"),
+)
+
+# Many examinations in one request, coded after it was answered.
+batches = Table(
+    "batches",
+    metadata,
+    Column("id", String(36), primary_key=True),
+    Column("owner", String(64), nullable=False),
+    # waiting, coding, done, cancelled
+    Column("state", String(12), nullable=False),
+    Column("created", BigInteger, nullable=False),
+    Column("worker", String(64), nullable=False),
+    Column("lease", BigInteger, nullable=False),
+    Column("wish", LargeBinary, nullable=False),
+    Column("request", LargeBinary, nullable=False),
+    Column("total", Integer, nullable=False),
+    Column("done", Integer, nullable=False),
+    Index("batches_state", "state", "lease"),
+)
+
+# One row an examination of a batch that was gone through.
+batch_results = Table(
+    "batch_results",
+    metadata,
+    Column("batch", String(36), ForeignKey("batches.id", ondelete="CASCADE"), primary_key=True),
+    Column("position", Integer, primary_key=True),
+    Column("patient", String(64), nullable=False),
+    Column("result", LargeBinary, nullable=False),
+    Index("batch_results_patient", "patient"),
+)
+
+# People signed in to the pages.
+sessions = Table(
+    "sessions",
+    metadata,
+    Column("session", String(64), primary_key=True),
+    Column("subject", String(64), nullable=False),
+    Column("roles", String(200), nullable=False),
+    Column("until", BigInteger, nullable=False),
+    Index("sessions_until", "until"),
 )

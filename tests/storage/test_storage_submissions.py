@@ -30,7 +30,7 @@ store = Submissions(open_database(sys.argv[1]))
 for number in range(int(sys.argv[2]), 10**9):
     bundle = str(number).encode() * 9000
     digest = hashlib.sha256(bundle).hexdigest()
-    one = Submission(f"urn:{number}", "R4", True, 1, "m", "1", digest, "2026-12-01T08:30:00Z", bundle)
+    one = Submission(f"urn:{number}", "R4", True, 1, "m", "1", digest, "p", "2026-12-01T08:30:00Z", bundle)
     assert store.add(one)
     print(number, flush=True)
 """
@@ -39,7 +39,7 @@ for number in range(int(sys.argv[2]), 10**9):
 def submission(exam: str = "urn:a", version: int = 1, **other: object) -> Submission:
     """One version of an examination."""
     values: dict[str, object] = {
-        "edition": "R4", "snomed": True, "map_name": "m", "map_version": "1", "record_hash": "0" * 64,
+        "edition": "R4", "snomed": True, "map_name": "m", "map_version": "1", "record_hash": "0" * 64, "patient": "p" * 64,
         "received": "2026-12-01T08:30:00Z", "bundle": b'{"value":1.20}', **other,
     }  # fmt: skip
     return Submission(exam=exam, version=version, **values)  # type: ignore[arg-type]
