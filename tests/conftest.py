@@ -3,12 +3,17 @@
 from __future__ import annotations
 
 import os
+import shutil
+import signal
 import subprocess
 import sys
-from collections.abc import Callable
-from dataclasses import dataclass
+import tempfile
+import time
+from collections.abc import Callable, Iterator
+from dataclasses import dataclass, field
 from datetime import UTC, datetime
 from pathlib import Path
+from typing import Any
 
 import pytest
 
@@ -77,6 +82,104 @@ def run() -> Callable[..., subprocess.CompletedProcess[str]]:
         )
 
     return start
+
+
+@dataclass
+class PostgresServer:
+    """A PostgreSQL server of the tests' own, reachable through a socket in its folder alone.
+
+    What it keeps survives any death of its own, but not of the machine: it never waits for the disk.
+    """
+
+    programs: Path
+    folder: Path
+    running: subprocess.Popen[bytes] | None = None
+    made: int = field(default=0)
+
+    def address(self, database: str) -> str:
+        """Where a database is found."""
+        return f"postgresql+psycopg://tester@/{database}?host={self.folder}"
+
+    def start(self) -> None:
+        """Starts it and waits until it answers."""
+        options = {
+            "listen_addresses": "", "unix_socket_directories": str(self.folder), "fsync": "off",
+            "synchronous_commit": "off", "full_page_writes": "off", "max_connections": "60",
+        }  # fmt: skip
+        words = [word for name, value in options.items() for word in ("-c", f"{name}={value}")]
+        with (self.folder / "log").open("ab") as log:
+            self.running = subprocess.Popen(
+                [self.programs / "postgres", "-D", self.folder / "data", *words],
+                stdout=log, stderr=log, cwd=self.folder, **_unprivileged(),
+            )  # fmt: skip
+        self._do("pg_isready", "--quiet", "--timeout=30", "--host", self.folder, again=300)
+
+    def stop(self, how: signal.Signals = signal.SIGINT) -> None:
+        """Ends it: SIGINT drops every connection and ends well, SIGQUIT is as a crash."""
+        if self.running:
+            self.running.send_signal(how)
+            self.running.wait(30)
+            self.running = None
+
+    def fresh(self) -> str:
+        """The address of a new, empty database."""
+        self.made += 1
+        name = f"test{self.made}"
+        self._do("createdb", "--host", self.folder, "--username", "tester", name)
+        return self.address(name)
+
+    def drop(self, address: str) -> None:
+        """Removes such a database, whoever is still connected."""
+        name = address.partition("@/")[2].partition("?")[0]
+        self._do("dropdb", "--force", "--host", self.folder, "--username", "tester", name)
+
+    def _do(self, program: str, *words: str | Path, again: int = 0) -> None:
+        for left in range(again, -1, -1):
+            done = subprocess.run([self.programs / program, *words], capture_output=True, check=False)
+            if done.returncode == 0:
+                return
+            if left:
+                time.sleep(0.05)
+        raise RuntimeError(f"{program}: {done.stderr.decode()} {(self.folder / 'log').read_text()[-2000:]}")
+
+
+def _unprivileged() -> dict[str, Any]:
+    """PostgreSQL refuses to run as root."""
+    return {"user": "nobody", "group": "nogroup", "extra_groups": []} if os.geteuid() == 0 else {}
+
+
+@pytest.fixture(scope="session")
+def postgres_server() -> Iterator[PostgresServer]:
+    """A PostgreSQL server for this run, in a folder of its own."""
+    found = shutil.which("postgres")
+    programs = [Path(found).resolve().parent] if found else sorted(Path("/usr/lib/postgresql").glob("*/bin"))
+    if not programs:
+        pytest.skip("PostgreSQL's server programs are not installed on this machine")
+    # the path of a socket may be 107 bytes long, which the folders of tests may exceed
+    with tempfile.TemporaryDirectory(prefix="pg-", ignore_cleanup_errors=True) as name:
+        folder = Path(name)
+        if os.geteuid() == 0:
+            shutil.chown(folder, "nobody", "nogroup")
+        words = ["--pgdata", folder / "data", "--username=tester", "--auth=trust", "--no-sync",
+                 "--encoding=UTF8", "--locale=C"]  # fmt: skip
+        subprocess.run(
+            [programs[-1] / "initdb", *words], check=True, capture_output=True, cwd=folder, **_unprivileged()
+        )
+        server = PostgresServer(programs[-1], folder)
+        try:
+            server.start()
+            yield server
+        finally:
+            server.stop()
+
+
+@pytest.fixture
+def postgres(postgres_server: PostgresServer) -> Iterator[str]:
+    """The address of an empty PostgreSQL database of this test's own."""
+    address = postgres_server.fresh()
+    yield address
+    if postgres_server.running:
+        postgres_server.drop(address)
 
 
 def pytest_terminal_summary(terminalreporter: pytest.TerminalReporter) -> None:

@@ -2,11 +2,11 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterator
+from collections.abc import Callable, Iterator
 from contextlib import contextmanager
 from dataclasses import dataclass, fields
 
-from sqlalchemy import Engine, insert, select
+from sqlalchemy import Connection, Engine, insert, select
 from sqlalchemy.exc import IntegrityError, SQLAlchemyError
 
 from fhirgallop.storage.tables import submissions
@@ -45,6 +45,9 @@ class Submission:
     bundle: bytes
 
 
+# What is to be kept together with a submission: is given the connection of its transaction and the row's id.
+Also = Callable[[Connection, int], None]
+
 _NAMES = tuple(field.name for field in fields(Submission))
 _COLUMNS = [submissions.c[name] for name in _NAMES]
 
@@ -78,16 +81,27 @@ class Submissions:
         with told(), self._engine.connect() as connection:
             return connection.execute(query).first() is not None
 
-    def add(self, submission: Submission) -> bool:
-        """Stores one version; False when another request stored that version first.
+    def add(self, submission: Submission, *also: Also) -> bool:
+        """Stores one version, and what is to be kept with it, in one transaction.
+
+        Args:
+            submission: the version.
+            also: called in order after the submission's row is written, on the same connection, each with
+                the row's id: coded resources, deliveries, the answer by the sender's key, the audit record.
+
+        Returns:
+            False when another request was first, with this version or with anything that `also` adds;
+            nothing was then kept.
 
         Raises:
-            StorageError: the database failed; nothing of the submission was kept.
+            StorageError: the database failed; nothing was kept.
         """
         values = {name: getattr(submission, name) for name in _NAMES}
         try:
             with told(), self._engine.begin() as connection:
-                connection.execute(insert(submissions).values(**values))
+                row = connection.execute(insert(submissions).values(**values)).inserted_primary_key
+                for keep in also:
+                    keep(connection, row[0] if row else 0)
         except IntegrityError:
             return False
         return True
