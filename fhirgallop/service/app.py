@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import uuid
 from collections.abc import AsyncIterator, Callable
 from contextlib import asynccontextmanager
 from datetime import UTC, datetime
@@ -16,8 +17,9 @@ from fhirgallop.cards.policy import Policy
 from fhirgallop.outcome import Issue
 from fhirgallop.reasoning import rulebook
 from fhirgallop.service import answers
+from fhirgallop.service.auth.gate import Gate
 from fhirgallop.service.examinations import Examinations
-from fhirgallop.service.guard import guard
+from fhirgallop.service.guard import Guard
 from fhirgallop.service.hook_desk import HookDesk, Manner
 from fhirgallop.service.routes import about, exams, hooks, maps, validation
 from fhirgallop.service.shelf import load_shelf
@@ -37,6 +39,10 @@ _CODES: Final = {404: "not-found", 405: "not-supported", 413: "too-long"}
 def now() -> datetime:
     """The clock of the running service."""
     return datetime.now(tz=UTC)
+
+
+def _new_id() -> str:
+    return str(uuid.uuid4())
 
 
 def create_app(settings: Settings, clock: Callable[[], datetime] = now) -> FastAPI:
@@ -62,6 +68,7 @@ def create_app(settings: Settings, clock: Callable[[], datetime] = now) -> FastA
         lifespan=lifespan,
     )
     app.state.settings = settings
+    app.state.gate = Gate()
     app.state.shelf = shelf
     app.state.examinations = Examinations(Submissions(engine), clock)
     app.state.clock = clock
@@ -69,7 +76,7 @@ def create_app(settings: Settings, clock: Callable[[], datetime] = now) -> FastA
     app.state.hooks = HookDesk(HookStore(engine), clock, rulebook.load(), manner)
     for router in (exams.router, hooks.router, validation.router, maps.router, about.router):
         app.include_router(router)
-    app.middleware("http")(guard)
+    app.add_middleware(Guard, new_id=_new_id)
     app.exception_handler(answers.RefusalError)(_refused)
     app.exception_handler(RequestValidationError)(_invalid)
     app.exception_handler(HTTPException)(_plain)

@@ -6,20 +6,21 @@ from html import escape
 from importlib import resources
 from typing import Any, Final
 
-from fastapi import APIRouter, Request
+from fastapi import APIRouter, Depends, Request
 from starlette.responses import HTMLResponse, Response
 
 from fhirgallop.service import answers
+from fhirgallop.service.auth.needs import needs
 from fhirgallop.version import VERSION
 
-router = APIRouter(tags=["service"])
+router = APIRouter(tags=["service"], dependencies=[Depends(needs(open=True))])
 
 _STYLE: Final = resources.files("fhirgallop.service.pages").joinpath("style.css").read_text(encoding="utf-8")
 _EXAMPLE: Final = "curl -H 'Content-Type: application/json' --data-binary @exam.json '{base}exams?map=NAME'"
 
 
 @router.get("/health", summary="Is the service up?", responses=answers.REFUSALS)
-def health() -> Response:
+async def health() -> Response:
     """Says that the service answers, and its version."""
     return answers.json_answer({"status": "up", "version": VERSION})
 
