@@ -9,7 +9,7 @@ from itertools import islice
 from typing import Annotated, Any, Final
 
 import msgspec
-from fastapi import APIRouter, Query, Request
+from fastapi import APIRouter, Depends, Query, Request
 from starlette.concurrency import run_in_threadpool
 from starlette.responses import Response
 
@@ -21,6 +21,7 @@ from fhirgallop.mapping.template_map import TemplateMap
 from fhirgallop.observations.editions import Edition
 from fhirgallop.outcome import Issue, has_errors, operation_outcome
 from fhirgallop.service import answers, requests
+from fhirgallop.service.auth.needs import needs
 from fhirgallop.service.examinations import BusyError, Coded, Examinations
 from fhirgallop.service.guard import STORAGE_FAILED
 from fhirgallop.settings import Settings
@@ -28,6 +29,8 @@ from fhirgallop.storage.submissions import StorageError
 
 router = APIRouter(tags=["examinations"])
 
+# types of the resources that an examination becomes: new ones are created, changed ones updated
+_WRITTEN: Final = ("Observation", "DiagnosticReport", "Provenance")
 _SEVERAL: Final = frozenset({"ndjson", "csv", "tsv", "workbook"})
 _STATUSES: Final[dict[int | str, dict[str, Any]]] = {
     200: {"description": "Coded.", "content": {answers.PLAIN_JSON: {}, answers.FHIR_JSON: {}}},
@@ -72,6 +75,7 @@ class Wish:
         "its resources."
     ),
     openapi_extra={"requestBody": {"required": True, "content": _BODIES}},
+    dependencies=[Depends(needs(does="cu", to=_WRITTEN))],
     responses=_STATUSES,
 )
 async def post_exams(

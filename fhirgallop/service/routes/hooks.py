@@ -9,7 +9,7 @@ from collections.abc import Mapping
 from dataclasses import replace
 from typing import Annotated, Any, Final
 
-from fastapi import APIRouter, Path, Request
+from fastapi import APIRouter, Depends, Path, Request
 from starlette.concurrency import run_in_threadpool
 from starlette.responses import Response
 
@@ -25,6 +25,7 @@ from fhirgallop.intake.record import LocalRecord
 from fhirgallop.outcome import Issue, has_errors
 from fhirgallop.pipeline import process
 from fhirgallop.service import answers, requests
+from fhirgallop.service.auth.needs import needs
 from fhirgallop.service.examinations import BusyError
 from fhirgallop.service.hook_desk import HookDesk
 from fhirgallop.settings import Settings
@@ -54,7 +55,12 @@ ServiceId = Annotated[str, Path(max_length=64, description="Name of the service,
 RuleId = Annotated[str, Path(max_length=200, description="Name of the rule, as a card's link has it.")]
 
 
-@router.get("/cds-services", summary="List the CDS Hooks services", responses=answers.REFUSALS)
+@router.get(
+    "/cds-services",
+    summary="List the CDS Hooks services",
+    dependencies=[Depends(needs(cds=True))],
+    responses=answers.REFUSALS,
+)
 def list_services() -> Response:
     """Hooks, prefetch templates and usage requirements."""
     return answers.json_answer(discovery())
@@ -68,6 +74,7 @@ def list_services() -> Response:
         "prefetch are answered with 412."
     ),
     openapi_extra=_BODY,
+    dependencies=[Depends(needs(cds=True))],
     responses=_CALL_STATUSES,
 )
 async def call_service(request: Request, service_id: ServiceId) -> Response:
@@ -82,6 +89,7 @@ async def call_service(request: Request, service_id: ServiceId) -> Response:
     summary="Report what became of cards",
     description="The body is a CDS Hooks 2.0.1 feedback request. The same report sent twice is kept once.",
     openapi_extra=_BODY,
+    dependencies=[Depends(needs(cds=True))],
     responses={200: {"description": "Kept."}, **_STATUSES},
 )
 async def take_feedback(request: Request, service_id: ServiceId) -> Response:
@@ -91,14 +99,24 @@ async def take_feedback(request: Request, service_id: ServiceId) -> Response:
     return await run_in_threadpool(_guarded, _feedback, request, service, body)
 
 
-@router.get("/cds-feedback", summary="Feedback counted by rule", responses=answers.REFUSALS)
+@router.get(
+    "/cds-feedback",
+    summary="Feedback counted by rule",
+    dependencies=[Depends(needs(roles=("informatician",)))],
+    responses=answers.REFUSALS,
+)
 def feedback_counts(request: Request) -> Response:
     """How often the cards of each rule were accepted and overridden; no patient's data."""
     requests.only_known(request, ())
     return answers.json_answer(_desk(request).counts())
 
 
-@router.get("/rules/{rule_id}", summary="One rule, with its sources", responses=answers.REFUSALS)
+@router.get(
+    "/rules/{rule_id}",
+    summary="One rule, with its sources",
+    dependencies=[Depends(needs(open=True))],
+    responses=answers.REFUSALS,
+)
 def one_rule(request: Request, rule_id: RuleId) -> Response:
     """The rule as Markdown: what it says, why, from which source and how sure."""
     requests.only_known(request, ())
@@ -108,7 +126,12 @@ def one_rule(request: Request, rule_id: RuleId) -> Response:
     return Response(rule_text(book.rules[rule_id], book), media_type=MARKDOWN)
 
 
-@router.get(f"/hooks/{EXAM_DRAFT}", summary="Definition of the draft hook", responses=answers.REFUSALS)
+@router.get(
+    f"/hooks/{EXAM_DRAFT}",
+    summary="Definition of the draft hook",
+    dependencies=[Depends(needs(open=True))],
+    responses=answers.REFUSALS,
+)
 def draft_hook(request: Request) -> Response:
     """The definition page of our own hook, as Markdown."""
     requests.only_known(request, ())

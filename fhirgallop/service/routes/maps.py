@@ -4,14 +4,17 @@ from __future__ import annotations
 
 from typing import Any
 
-from fastapi import APIRouter, Request
+from fastapi import APIRouter, Depends, Request
 from starlette.responses import Response
 
 from fhirgallop.exam import catalogue
 from fhirgallop.mapping.template_map import TemplateMap
 from fhirgallop.service import answers, requests
+from fhirgallop.service.auth.needs import needs
 
-router = APIRouter(tags=["template maps"])
+router = APIRouter(
+    tags=["template maps"], dependencies=[Depends(needs(token=True, roles=("informatician", "operator")))]
+)
 
 
 @router.get("/maps", summary="List the template maps", responses=answers.REFUSALS)

@@ -8,7 +8,7 @@ from __future__ import annotations
 
 from typing import Annotated, Any, Final, Literal
 
-from fastapi import APIRouter, Path, Query, Request
+from fastapi import APIRouter, Depends, Path, Query, Request
 from starlette.concurrency import run_in_threadpool
 from starlette.responses import Response
 
@@ -17,6 +17,7 @@ from fhirgallop.conformance.registry import registry
 from fhirgallop.conformance.validator import validate
 from fhirgallop.outcome import Issue, has_errors, ordered
 from fhirgallop.service import answers, requests
+from fhirgallop.service.auth.needs import needs
 from fhirgallop.settings import Settings
 
 router = APIRouter(tags=["FHIR"])
@@ -43,6 +44,7 @@ Edition_ = Annotated[EditionPath, Path(description="FHIR edition.")]
     summary="Check a FHIR resource",
     description="The body is a resource, or Parameters with `resource` and perhaps `profile`.",
     openapi_extra=_DESCRIBED,
+    dependencies=[Depends(needs(token=True, roles=("informatician",)))],
     responses=_STATUSES,
 )
 async def validate_any(request: Request, edition: Edition_, profile: Profile = None) -> Response:
@@ -55,6 +57,7 @@ async def validate_any(request: Request, edition: Edition_, profile: Profile = N
     summary="Check a FHIR resource of one type",
     description="The same, and a resource of another type is refused.",
     openapi_extra=_DESCRIBED,
+    dependencies=[Depends(needs(token=True, roles=("informatician",)))],
     responses=_STATUSES,
 )
 async def validate_one_type(
