@@ -1,9 +1,9 @@
 """What is still to be sent: put in with the examination, taken by one worker at a time, in order.
 
 A row is *waiting*, *sending* (leased to a worker), *delivered*, *failed* (wants a person) or *dropped* (a
-person gave it up). Of one patient only the oldest row that waits or is being sent may be taken, so that what was
-accepted first arrives first. A failed row holds back the later versions of its own examination alone: they
-would overwrite each other, while the patient's other examinations do not.
+person gave it up). Of one patient only the oldest row that waits or is being sent may be taken, so that what
+was accepted first arrives first. A failed row holds back the later versions of its own examination alone:
+they would overwrite each other, while the patient's other examinations do not.
 """
 
 from __future__ import annotations
