@@ -20,6 +20,11 @@ def token_key(system: str, value: str) -> str:
     return _key("identifier", system, value)
 
 
+def number_key(system: str, value: str) -> str:
+    """The same for the same number of an examination, whoever's it is."""
+    return _key("number", system, value)
+
+
 def _key(*parts: str) -> str:
     # repr() keeps the parts apart whatever characters they hold
     return hashlib.sha256(repr(parts).encode("utf-8", "replace")).hexdigest()

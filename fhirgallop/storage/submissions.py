@@ -4,7 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Callable, Iterator
 from contextlib import contextmanager
-from dataclasses import dataclass, fields
+from dataclasses import dataclass, field, fields
 
 from sqlalchemy import Connection, Engine, insert, select
 from sqlalchemy.exc import IntegrityError, SQLAlchemyError
@@ -31,6 +31,8 @@ class Submission:
         patient: digest of the patient's identifier.
         received: FHIR instant.
         bundle: the Bundle's bytes as answered.
+        number: digest of the sender's number of the examination.
+        id: its row; 0 before it is stored.
     """
 
     exam: str
@@ -43,12 +45,15 @@ class Submission:
     patient: str
     received: str
     bundle: bytes
+    number: str = ""
+    id: int = field(default=0, compare=False)
 
 
 # What is to be kept together with a submission: is given the connection of its transaction and the row's id.
 Also = Callable[[Connection, int], None]
 
-_NAMES = tuple(field.name for field in fields(Submission))
+_MOST_OTHERS = 100
+_NAMES = tuple(one.name for one in fields(Submission))
 _COLUMNS = [submissions.c[name] for name in _NAMES]
 
 
@@ -96,7 +101,7 @@ class Submissions:
         Raises:
             StorageError: the database failed; nothing was kept.
         """
-        values = {name: getattr(submission, name) for name in _NAMES}
+        values = {name: getattr(submission, name) for name in _NAMES if name != "id"}
         try:
             with told(), self._engine.begin() as connection:
                 row = connection.execute(insert(submissions).values(**values)).inserted_primary_key
@@ -105,6 +110,43 @@ class Submissions:
         except IntegrityError:
             return False
         return True
+
+    def beside(self, row: int, *also: Also) -> bool:
+        """Keeps what belongs to a version that is stored already, or to none (0), in one transaction.
+
+        Returns:
+            False when another request was first with anything that `also` adds; nothing was then kept.
+
+        Raises:
+            StorageError: the database failed; nothing was kept.
+        """
+        try:
+            with told(), self._engine.begin() as connection:
+                for keep in also:
+                    keep(connection, row)
+        except IntegrityError:
+            return False
+        return True
+
+    def numbered(self, number: str, *, other_than: str) -> list[bytes]:
+        """The newest Bundle of each examination that has the same number under another patient.
+
+        Raises:
+            StorageError: the database failed.
+        """
+        table = submissions
+        query = (
+            select(table.c.exam, table.c.bundle)
+            .where(table.c.number == number, table.c.patient != other_than)
+            .order_by(table.c.id.desc())
+            .limit(_MOST_OTHERS)
+        )
+        with told(), self._engine.connect() as connection:
+            rows = connection.execute(query).all()
+        newest: dict[str, bytes] = {}
+        for row in rows:
+            newest.setdefault(row.exam, row.bundle)
+        return list(newest.values())
 
 
 @contextmanager

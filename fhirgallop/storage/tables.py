@@ -22,7 +22,7 @@ from sqlalchemy import (
     UniqueConstraint,
 )
 
-SCHEMA_VERSION: Final = 1
+SCHEMA_VERSION: Final = 2
 
 metadata = MetaData()
 
@@ -44,9 +44,12 @@ submissions = Table(
     Column("record_hash", String(64), nullable=False),
     # digest of the patient's identifier: to find, and to delete, all that is kept of one patient
     Column("patient", String(64), nullable=False),
+    # digest of the sender's number of the examination: to notice the same number under another patient
+    Column("number", String(64), nullable=False),
     Column("received", String(35), nullable=False),
     Column("bundle", LargeBinary, nullable=False),
     Index("submissions_patient", "patient"),
+    Index("submissions_number", "number"),
     UniqueConstraint("exam", "edition", "snomed", "version", name="submissions_exam_version"),
     Index("submissions_received", "received"),
 )
@@ -67,7 +70,10 @@ hook_instances = Table(
     Column("instance", String(64), primary_key=True),
     Column("patient", String(64), nullable=False),
     Column("memory", LargeBinary, nullable=False),
+    # FHIR instant
+    Column("at", String(35), nullable=False),
     Index("hook_instances_patient", "patient"),
+    Index("hook_instances_at", "at"),
 )
 
 # One row a card that was given out, so that an answer to it is understood later.
@@ -81,6 +87,7 @@ hook_cards = Table(
     Column("shown", LargeBinary, nullable=False),
     Column("at", String(35), nullable=False),
     Index("hook_cards_patient", "patient"),
+    Index("hook_cards_at", "at"),
 )
 
 # What clients reported; only ever added to. `comment` may hold what a user wrote of a patient.
@@ -128,10 +135,10 @@ resources = Table(
     Column("submission", Integer, ForeignKey("submissions.id", ondelete="CASCADE"), nullable=True),
     # without id, versionId and lastUpdated, which stand in the columns
     Column("body", LargeBinary, nullable=False),
-    UniqueConstraint("edition", "type", "fhir_id", "version", name="resources_version"),
-    Index("resources_patient", "patient"),
+    UniqueConstraint("fhir_id", "type", "edition", "version", name="resources_version"),
+    # to delete all of one patient, and to find what is kept of one
+    Index("resources_patient", "patient", "edition", "type"),
     Index("resources_submission", "submission"),
-    Index("resources_current", "edition", "type", "current", "patient"),
 )
 
 # Digests of identifiers (system and value) by which a resource may be asked for, beside its own id.
@@ -249,9 +256,15 @@ batch_results = Table(
     metadata,
     Column("batch", String(36), ForeignKey("batches.id", ondelete="CASCADE"), primary_key=True),
     Column("position", Integer, primary_key=True),
+    # coded, refused, unreadable
+    Column("status", String(12), nullable=False),
     Column("patient", String(64), nullable=False),
+    # where its Bundle is kept; empty where there is none, or none any more
+    Column("submission", Integer, ForeignKey("submissions.id", ondelete="SET NULL"), nullable=True),
+    # without the Bundle
     Column("result", LargeBinary, nullable=False),
     Index("batch_results_patient", "patient"),
+    Index("batch_results_submission", "submission"),
 )
 
 # People signed in to the pages.
