@@ -1,0 +1,1 @@
+"""The FHIR addresses: what is kept, found and changed there, and the operations over it."""

@@ -1,0 +1,167 @@
+"""Coded resources, each version of each: what the FHIR addresses give out.
+
+A version is never changed; which one is current moves. What a body means is the caller's: here it is bytes,
+with the columns that it is found by.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Iterator, Sequence
+from dataclasses import dataclass
+from typing import Any, Final, TypeVar
+
+from sqlalchemy import Connection, and_, insert, or_, select, update
+
+from fhirgallop.storage.tables import resource_identifiers, resources
+
+_AT_ONCE: Final = 200
+_T = TypeVar("_T")
+
+
+@dataclass(frozen=True, slots=True)
+class NewVersion:
+    """What a resource is from now on.
+
+    Attributes:
+        edition: FHIR edition it is written in.
+        type: resource type.
+        fhir_id: its id; the same id is the same resource.
+        patient: digest of its patient; empty for none.
+        encounter: digest of its encounter; empty for none.
+        finding: id of the catalogue's finding; empty for none.
+        date_from: first moment its date may mean, in ms since 1970; None when it has no date.
+        date_to: last such moment.
+        body: its JSON without id, versionId and lastUpdated.
+        tokens: digests by which it may also be asked for.
+        deleted: True when it is no more; the body is then empty.
+    """
+
+    edition: str
+    type: str
+    fhir_id: str
+    patient: str
+    encounter: str
+    finding: str
+    date_from: int | None
+    date_to: int | None
+    body: bytes
+    tokens: tuple[str, ...] = ()
+    deleted: bool = False
+
+
+@dataclass(frozen=True, slots=True)
+class Written:
+    """The version a resource has after it was given; `changed` is False when it was the same before."""
+
+    version: int
+    updated: int
+    changed: bool
+
+
+def add_versions(
+    connection: Connection,
+    versions: Sequence[NewVersion],
+    *,
+    at: int,
+    submission: int | None,
+    fresh: bool = False,
+) -> list[Written]:
+    """Adds a version of every resource whose body is another than before, in the caller's transaction.
+
+    Args:
+        connection: in a transaction; nothing is committed here.
+        versions: at most one of each resource.
+        at: now, in ms since 1970.
+        submission: row of the examination's version they come with; None when they come alone.
+        fresh: the caller takes them all for new ones; spares a look for earlier versions.
+
+    Returns:
+        What became of each, in their order.
+
+    Raises:
+        IntegrityError: another request was first, or something `fresh` was there already; the transaction is
+            of no use any more.
+    """
+    before = {} if fresh else _current(connection, versions)
+    written: list[Written] = []
+    rows: list[dict[str, Any]] = []
+    replaced: list[int] = []
+    for new in versions:
+        old = before.get((new.edition, new.type, new.fhir_id))
+        if old is not None and old.body == new.body and old.deleted == new.deleted:
+            written.append(Written(old.version, old.updated, changed=False))
+            continue
+        version = 1
+        if old is not None:
+            version = old.version + 1
+            replaced.append(old.id)
+        written.append(Written(version, at, changed=True))
+        rows.append(_row(new, version, at, submission))
+    for some in _slices(replaced):
+        connection.execute(update(resources).where(resources.c.id.in_(some)).values(current=False))
+    if rows:
+        connection.execute(insert(resources), rows)
+    _add_tokens(connection, versions, written)
+    return written
+
+
+def _row(new: NewVersion, version: int, at: int, submission: int | None) -> dict[str, Any]:
+    return {
+        "edition": new.edition,
+        "type": new.type,
+        "fhir_id": new.fhir_id,
+        "version": version,
+        "current": True,
+        "deleted": new.deleted,
+        "updated": at,
+        "patient": new.patient,
+        "encounter": new.encounter,
+        "finding": new.finding,
+        "date_from": new.date_from,
+        "date_to": new.date_to,
+        "submission": submission,
+        "body": new.body,
+    }
+
+
+def _current(connection: Connection, versions: Sequence[NewVersion]) -> dict[tuple[str, str, str], Any]:
+    columns = (resources.c[name] for name in
+               ("id", "edition", "type", "fhir_id", "version", "deleted", "updated", "body"))  # fmt: skip
+    query = select(*columns).where(resources.c.current)
+    by_kind: dict[tuple[str, str], list[str]] = {}
+    for new in versions:
+        by_kind.setdefault((new.edition, new.type), []).append(new.fhir_id)
+    found: dict[tuple[str, str, str], Any] = {}
+    for (edition, type_), ids in by_kind.items():
+        for some in _slices(ids):
+            same = (resources.c.edition == edition, resources.c.type == type_, resources.c.fhir_id.in_(some))
+            for row in connection.execute(query.where(*same)):
+                found[row.edition, row.type, row.fhir_id] = row
+    return found
+
+
+def _add_tokens(connection: Connection, versions: Sequence[NewVersion], written: Sequence[Written]) -> None:
+    told = [
+        (new, now.version)
+        for new, now in zip(versions, written, strict=True)
+        if new.tokens and now.changed and not new.deleted
+    ]
+    key = ("edition", "type", "fhir_id", "version")
+    for some in _slices(told):
+        tokens = {(n.edition, n.type, n.fhir_id, version): n.tokens for n, version in some}
+        same = [
+            and_(*(resources.c[name] == value for name, value in zip(key, values, strict=True)))
+            for values in tokens
+        ]
+        query = select(resources.c.id, *(resources.c[name] for name in key)).where(or_(*same))
+        rows = [
+            {"resource": id_, "token": token}
+            for id_, *values in connection.execute(query)
+            for token in dict.fromkeys(tokens[tuple(values)])
+        ]
+        connection.execute(insert(resource_identifiers), rows)
+
+
+def _slices(items: Sequence[_T]) -> Iterator[Sequence[_T]]:
+    for start in range(0, len(items), _AT_ONCE):
+        yield items[start : start + _AT_ONCE]
