@@ -2,9 +2,9 @@
 
 from __future__ import annotations
 
-import ipaddress
 import json
 import os
+from collections.abc import Mapping
 from pathlib import Path
 from typing import Final, Literal, Self
 from urllib.parse import urlsplit
@@ -13,9 +13,13 @@ from pydantic import Field, ValidationError, ValidationInfo, field_validator, mo
 from pydantic_settings import BaseSettings, SettingsConfigDict
 from pydantic_settings import SettingsError as SourceError
 
+from fhirgallop import listening
 from fhirgallop.errors import SettingsError
 
 PREFIX: Final = "FHIRGALLOP_"
+
+# those of RFC 7518 and RFC 8037 with a public and a private key
+Algorithm = Literal["ES256", "ES384", "ES512", "RS256", "RS384", "RS512", "PS256", "PS384", "PS512", "EdDSA"]
 
 
 class Settings(BaseSettings):
@@ -24,7 +28,8 @@ class Settings(BaseSettings):
     model_config = SettingsConfigDict(env_prefix=PREFIX, frozen=True, extra="forbid")
 
     host: str = Field(
-        "127.0.0.1", description="Address to listen on; only this machine's own may be given yet."
+        "127.0.0.1",
+        description="Address to listen on; others than this machine's own need authorisation and TLS.",
     )
     port: int = Field(8470, ge=0, le=65535, description="Port to listen on; 0 takes a free one.")
     maps: Path = Field(Path("maps"), description="Folder with the published template maps (*.yaml).")
@@ -65,6 +70,92 @@ class Settings(BaseSettings):
         default=False, description="Work every card out and log it by rule, and show none."
     )
 
+    # who may ask (service/auth)
+    address: str = Field(
+        "",
+        max_length=500,
+        description="Address under which clients reach the service (https://gallop.example): what tokens "
+        "must be made out for. Needed with authorisation; its host must be among the names.",
+    )
+    cds_clients: Mapping[str, tuple[str, ...]] = Field(
+        {},
+        description="CDS Hooks clients, by the `iss` of their tokens: where their public keys stand, as "
+        "https addresses (a token's `jku` must be one of them) or as files (for tokens without).",
+    )
+    cds_algorithms: frozenset[Algorithm] = Field(
+        frozenset({"ES384", "RS384"}), description="Signatures taken from CDS Hooks clients."
+    )
+    cds_token_seconds: int = Field(
+        300, ge=10, le=3600, description="Longest life of a CDS Hooks client's token, from `iat` to `exp`."
+    )
+    authority: str = Field(
+        "", max_length=500, description="Issuer (`iss`) of the access tokens for everything but CDS Hooks."
+    )
+    authority_keys: str = Field(
+        "", max_length=500, description="Its public keys (JWKS), as an https address or a file."
+    )
+    authority_introspection: str = Field(
+        "",
+        max_length=500,
+        description="Its introspection address (RFC 7662), for access tokens that are no JWTs; then no keys.",
+    )
+    authority_client: str = Field(
+        "", max_length=200, description="Client id that the service introduces itself with there."
+    )
+    authority_secret: Path | None = Field(None, description="File with the secret of that client.")
+    authority_tokens: str = Field(
+        "", max_length=500, description="Its token address, for those who ask where to get a token."
+    )
+    authority_algorithms: frozenset[Algorithm] = Field(
+        frozenset({"ES256", "ES384", "RS256", "RS384"}),
+        description="Signatures taken from the authority, and from the sign-in.",
+    )
+    audiences: frozenset[str] = Field(
+        frozenset(),
+        description="What access tokens must be made out for (`aud`); empty: the address, or one of its FHIR "
+        "bases.",
+    )
+    admin_token: str = Field(
+        "",
+        pattern=r"^([0-9a-f]{64})?$",
+        description="SHA-256 (hexadecimal) of a token that opens what operators and informaticians use; "
+        "`fhirgallop token` makes both.",
+    )
+    sign_in: str = Field("", max_length=500, description="OpenID Connect issuer that people sign in with.")
+    sign_in_client: str = Field("", max_length=200, description="Client id of this service there.")
+    sign_in_secret: Path | None = Field(
+        None, description="File with the secret of that client; none for a public client."
+    )
+    sign_in_claim: str = Field(
+        "roles", max_length=100, description="Claim of the id token that names what somebody may."
+    )
+    sign_in_roles: Mapping[str, Literal["clinician", "informatician", "operator"]] = Field(
+        {}, description="Role here by value of that claim; who has none is not let in."
+    )
+    session_minutes: int = Field(480, ge=5, le=1440, description="How long a sign-in lasts.")
+    clock_skew: int = Field(60, ge=0, le=300, description="Seconds that clocks of others may be wrong by.")
+    cors_origins: frozenset[str] = Field(
+        frozenset(), description="Origins of web pages that may call from a browser (https://ehr.example)."
+    )
+    private_network: bool = Field(
+        default=False,
+        description="Listed addresses of authorities, charts and receivers may lie in a private network.",
+    )
+    loopback_http: bool = Field(
+        default=False, description="Listed addresses may be plain http on this machine; for tries only."
+    )
+
+    # how it listens
+    certificate: Path | None = Field(None, description="TLS certificate with its chain (PEM file).")
+    certificate_key: Path | None = Field(None, description="Its private key (PEM file, no passphrase).")
+    behind_proxy: bool = Field(
+        default=False, description="A proxy in front ends TLS; nobody else can reach the service."
+    )
+    proxies: frozenset[str] = Field(
+        frozenset({"127.0.0.1", "::1"}),
+        description="Addresses of that proxy: whose X-Forwarded-For and -Proto are believed.",
+    )
+
     @field_validator("pages")
     @classmethod
     def _links_home(cls, pages: str, info: ValidationInfo) -> str:
@@ -79,21 +170,16 @@ class Settings(BaseSettings):
             raise ValueError("it must be an http or https address whose host is among the names")
         return pages
 
+    @property
+    def authorised(self) -> bool:
+        """Whether callers have to say who they are: as soon as one way in is set."""
+        return bool(self.cds_clients or self.authority or self.admin_token or self.sign_in)
+
     @model_validator(mode="after")
-    def _stays_at_home(self) -> Self:
-        """Without authorisation nothing but this machine may reach patient data."""
-        home = self.host == "localhost"
-        if not home:
-            try:
-                home = ipaddress.ip_address(self.host).is_loopback
-            except ValueError:
-                home = False
-        if not home:
-            message = (
-                "host must be a loopback address (127.0.0.1, ::1, localhost): there is no authorisation yet, "
-                "so no other machine may reach the service. Put an authorising proxy in front of it."
-            )
-            raise ValueError(message)
+    def _safe(self) -> Self:
+        """Without authorisation and TLS nothing but this machine may reach patient data."""
+        if faults := list(listening.faults(self)):
+            raise ValueError("; ".join(faults))
         return self
 
 
@@ -114,17 +200,22 @@ def load(**given: object) -> Settings:
         raise SettingsError(str(error)) from None
     except ValidationError as error:
         faults = [
-            f"{PREFIX}{'_'.join(map(str, fault['loc'])).upper() or 'HOST'}: {fault['msg']}"
+            _fault(fault["loc"], fault["msg"])
             for fault in error.errors(include_input=False, include_url=False)
         ]
         raise SettingsError("; ".join(faults)) from None
+
+
+def _fault(place: tuple[int | str, ...], text: str) -> str:
+    text = text.removeprefix("Value error, ")
+    return f"{PREFIX}{'_'.join(map(str, place)).upper()}: {text}" if place else text
 
 
 def table() -> str:
     """Every setting as a table in Markdown, as it stands in the README."""
     lines = ["| setting | default | meaning |", "|---|---|---|"]
     for name, field in Settings.model_fields.items():
-        default = field.default
+        default = "" if field.default is None else field.default
         shown = json.dumps(sorted(default) if isinstance(default, frozenset) else default, default=str)
         lines.append(f"| `{PREFIX}{name.upper()}` | `{shown.strip(chr(34))}` | {field.description} |")
     return "\n".join(lines)

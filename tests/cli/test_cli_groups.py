@@ -167,7 +167,7 @@ def test_serve_answers_and_keeps_queries_out_of_its_log(
 @pytest.mark.parametrize(
     ("words", "code", "said"),
     [
-        (("--host", "0.0.0.0"), 3, "no authorisation yet"),
+        (("--host", "0.0.0.0"), 3, "without authorisation"),
         (("--maps", "/no/such/folder"), 3, "does not exist"),
         (("--port", "70000"), 3, "FHIRGALLOP_PORT"),
         (("--database", "nonsense"), 3, "not an address"),
