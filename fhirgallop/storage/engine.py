@@ -1,10 +1,12 @@
-"""Opens the database, makes the tables of a new one, and refuses one of another form."""
+"""Opens the database: makes the tables of a new one, and takes no other form of them than today's."""
 
 from __future__ import annotations
 
+from collections.abc import Iterator
+from contextlib import contextmanager
 from typing import Any, Final
 
-from sqlalchemy import Engine, create_engine, event, insert, make_url, select
+from sqlalchemy import URL, Connection, Engine, create_engine, event, insert, inspect, make_url, select
 from sqlalchemy.exc import ArgumentError, SQLAlchemyError
 from sqlalchemy.pool import ConnectionPoolEntry
 
@@ -12,28 +14,148 @@ from fhirgallop.errors import SettingsError
 from fhirgallop.storage.tables import SCHEMA_VERSION, metadata, schema_version
 
 _BUSY_SECONDS: Final = 10
+# who makes or changes tables waits longer for another who does: there may be much to carry forward
+_TABLES_BUSY_SECONDS: Final = 3600
+# any number, the same in every version: who changes the tables of a PostgreSQL database holds this lock
+_TABLES_LOCK: Final = 7_401_962_538
 
 
 def open_database(address: str) -> Engine:
     """The engine of the database at `address`, with its tables in place.
 
+    Args:
+        address: as SQLAlchemy writes it, `sqlite:///file` or `postgresql://user@host/name`.
+
     Raises:
         SettingsError: the database cannot be opened, or its tables have another form.
     """
-    try:
-        url = make_url(address)
-        sqlite = url.get_backend_name() == "sqlite"
-        if sqlite and url.database in (None, "", ":memory:"):
-            raise SettingsError("database names no file; what is kept in memory is gone with the program")
-        engine = create_engine(url, connect_args={"timeout": _BUSY_SECONDS} if sqlite else {})
-        if sqlite:
+    engine = connect(address)
+    with opening():
+        found = version_of(engine)
+        if found is None:
+            with changing_tables(engine) as connection:
+                found = found_version(connection)
+                if found is None:
+                    metadata.create_all(connection)
+                    connection.execute(insert(schema_version).values(version=SCHEMA_VERSION))
+                    found = SCHEMA_VERSION
+    if found == SCHEMA_VERSION:
+        return engine
+    engine.dispose()
+    raise SettingsError(other_form(found))
+
+
+def connect(address: str) -> Engine:
+    """The engine of the database at `address`, whatever is in it.
+
+    Raises:
+        SettingsError: that is no address of a database which can be used here.
+    """
+    with opening():
+        url = _with_driver(make_url(address))
+        if url.get_backend_name() == "sqlite":
+            if url.database in (None, "", ":memory:"):
+                raise SettingsError("database names no file; what is kept in memory is gone with the program")
+            engine = create_engine(url, connect_args={"timeout": _BUSY_SECONDS}, hide_parameters=True)
             event.listen(engine, "connect", _durable_sqlite)
-        with engine.begin() as connection:
-            metadata.create_all(connection)
-            found = connection.scalar(select(schema_version.c.version))
-            if found is None:
-                connection.execute(insert(schema_version).values(version=SCHEMA_VERSION))
-                found = SCHEMA_VERSION
+            return engine
+        # each connection is tried before it is used: after a restart of the server the next request goes well
+        return create_engine(
+            url, pool_pre_ping=True, pool_size=10, max_overflow=30, pool_timeout=_BUSY_SECONDS,
+            connect_args=_reachable(url), hide_parameters=True,
+        )  # fmt: skip
+
+
+def version_of(engine: Engine) -> int | None:
+    """The version of the tables; None where the database is empty.
+
+    Raises:
+        SettingsError: the database cannot be opened, or another program's tables are in the way.
+    """
+    with opening(), engine.connect() as connection:
+        return found_version(connection)
+
+
+def other_form(found: int) -> str:
+    """What is to be done about a database with tables of another version."""
+    if found > SCHEMA_VERSION:
+        return (
+            f"the database has tables of version {found}, this program those of {SCHEMA_VERSION}; "
+            "use the newer program that made them"
+        )
+    return (
+        f"the database has tables of version {found}, this program those of {SCHEMA_VERSION}; stop the "
+        "service, copy the database to be safe, and run `fhirgallop database upgrade`"
+    )
+
+
+@contextmanager
+def changing_tables(engine: Engine) -> Iterator[Connection]:
+    """One transaction in which tables may be made and changed, by one process at a time; the others wait.
+
+    Foreign keys of SQLite are not followed meanwhile (a table that is rebuilt would take along all that
+    refers to it); they are looked over before the end.
+    """
+    with engine.connect() as connection:
+        if engine.dialect.name != "sqlite":
+            connection.exec_driver_sql(f"SELECT pg_advisory_xact_lock({_TABLES_LOCK})")
+            yield connection
+            connection.commit()
+            return
+        connection.exec_driver_sql(f"PRAGMA busy_timeout={_TABLES_BUSY_SECONDS * 1000}")
+        connection.exec_driver_sql("PRAGMA foreign_keys=OFF")
+        connection.exec_driver_sql("BEGIN IMMEDIATE")
+        try:
+            yield connection
+            if connection.exec_driver_sql("PRAGMA foreign_key_check").first():
+                raise SettingsError("the database refers to rows that are not there; restore a backup")
+            connection.commit()
+        finally:
+            connection.invalidate()  # its settings are not those of the others
+
+
+def found_version(connection: Connection) -> int | None:
+    """The same on a connection."""
+    there = set(inspect(connection).get_table_names())
+    if schema_version.name in there:
+        return connection.scalar(select(schema_version.c.version))
+    if in_the_way := sorted(there & set(metadata.tables)):
+        raise SettingsError(
+            f"the database has a table {in_the_way[0]} that is not of this program; give fhirgallop a "
+            "database of its own"
+        )
+    return None
+
+
+def _with_driver(url: URL) -> URL:
+    return url.set(drivername="postgresql+psycopg") if url.drivername == "postgresql" else url
+
+
+def _reachable(url: URL) -> dict[str, Any]:
+    """Connections to PostgreSQL are given up when the other side is gone, also in the middle of an answer."""
+    if url.get_driver_name() != "psycopg":
+        return {}
+    return {
+        "connect_timeout": _BUSY_SECONDS, "application_name": "fhirgallop", "keepalives_idle": 30,
+        "keepalives_interval": 10, "keepalives_count": 3,
+    }  # fmt: skip
+
+
+def _durable_sqlite(connection: Any, _entry: ConnectionPoolEntry) -> None:
+    cursor = connection.cursor()
+    cursor.execute("PRAGMA journal_mode=WAL")
+    cursor.execute("PRAGMA synchronous=NORMAL")
+    cursor.execute("PRAGMA foreign_keys=ON")
+    # what is deleted or replaced is overwritten
+    cursor.execute("PRAGMA secure_delete=ON")
+    cursor.close()
+
+
+@contextmanager
+def opening() -> Iterator[None]:
+    """What keeps a database from being opened, in words for the operator and without its password."""
+    try:
+        yield
     except ArgumentError:
         raise SettingsError("database is not an address such as sqlite:///fhirgallop.sqlite3") from None
     except ModuleNotFoundError as error:
@@ -43,17 +165,3 @@ def open_database(address: str) -> Engine:
         raise SettingsError(
             f"the database cannot be opened ({reason}); check its address and rights"
         ) from None
-    if found != SCHEMA_VERSION:
-        raise SettingsError(
-            f"the database has tables of version {found}, this program those of {SCHEMA_VERSION}; "
-            "use the program that made them"
-        )
-    return engine
-
-
-def _durable_sqlite(connection: Any, _entry: ConnectionPoolEntry) -> None:
-    cursor = connection.cursor()
-    cursor.execute("PRAGMA journal_mode=WAL")
-    cursor.execute("PRAGMA synchronous=NORMAL")
-    cursor.execute("PRAGMA foreign_keys=ON")
-    cursor.close()

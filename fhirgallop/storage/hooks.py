@@ -107,7 +107,8 @@ class HookStore:
                 if not _advanced(connection, memory):
                     return False
                 if instance and not _known(connection, instance):
-                    row = {"instance": instance, "patient": memory.patient, "memory": before}
+                    at = max((card.at for card in cards), default="")
+                    row = {"instance": instance, "patient": memory.patient, "memory": before, "at": at}
                     connection.execute(insert(hook_instances).values(**row))
                 _add_cards(connection, cards)
         except IntegrityError:
