@@ -9,7 +9,7 @@ from typing import Annotated
 
 import typer
 
-from fhirgallop.cli import code, demo, extract, maps, review, rules, serve, validate
+from fhirgallop.cli import code, demo, draw, extract, maps, review, rules, serve, validate
 from fhirgallop.cli.shared import Exit, complain
 from fhirgallop.errors import FhirgallopError, MapError, SettingsError
 from fhirgallop.version import VERSION
@@ -26,6 +26,7 @@ app.command("code")(code.command)
 app.command("extract")(extract.command)
 app.command("validate")(validate.command)
 app.command("review")(review.command)
+app.command("heart-cycle")(draw.command)
 app.command("demo")(demo.command)
 app.command("serve")(serve.command)
 app.add_typer(maps.app, name="map")

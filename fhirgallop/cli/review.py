@@ -4,14 +4,13 @@ from __future__ import annotations
 
 from enum import StrEnum
 from pathlib import Path
-from typing import TYPE_CHECKING, Annotated, Any, NoReturn
+from typing import TYPE_CHECKING, Annotated, Any
 
 import typer
 
-from fhirgallop.cli.shared import Exit, complain, moment
+from fhirgallop.cli.shared import Exit, complain, moment, one_exam, refuse
 
 if TYPE_CHECKING:
-    from fhirgallop.exam.exam import Exam
     from fhirgallop.outcome import Issue
 
 
@@ -51,11 +50,11 @@ def command(  # noqa: PLR0913, PLR0917 - one argument an option
 
     at = moment(now, "--now")
     book = _site_rules(rules) if rules else rulebook.load()
-    exam = _exam(record, map_)
+    exam = one_exam(record, map_)
     tables = _site_codes(codes) if codes else None
     value, issues = fhirjson.read(chart.read_bytes(), source=str(chart))
     if value is None:
-        _refuse(issues)
+        refuse(issues)
     read = read_chart(value, exam, at, base=server, tables=tables)
     found = review(exam, read.context, rules=book)
     encounter = exam.encounter.value if exam.encounter else exam.identifier
@@ -73,29 +72,6 @@ def command(  # noqa: PLR0913, PLR0917 - one argument an option
         typer.echo(sheet(exam, found, decision, read.issues), nl=False)
         for issue in read.issues:
             complain(str(issue))
-
-
-def _exam(record: Path, map_: Path) -> Exam:
-    from fhirgallop import api  # noqa: PLC0415
-    from fhirgallop.intake.record import LocalRecord  # noqa: PLC0415
-
-    template = api.read_map(map_)
-    reads = list(api.read_records(record))
-    if len(reads) != 1:
-        raise typer.BadParameter("give the record of exactly one examination", param_hint="RECORD")
-    one = reads[0]
-    if not isinstance(one, LocalRecord):
-        _refuse(list(one.issues))
-    result = api.process(one, template)
-    if result.exam is None or not result.ok:
-        _refuse(list(result.issues))
-    return result.exam
-
-
-def _refuse(issues: list[Issue]) -> NoReturn:
-    for issue in issues:
-        complain(str(issue))
-    raise typer.Exit(Exit.REFUSED)
 
 
 def _site_rules(path: Path) -> Any:

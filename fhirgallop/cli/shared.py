@@ -5,15 +5,19 @@ from __future__ import annotations
 import os
 import sys
 import tempfile
-from collections.abc import Iterator
+from collections.abc import Iterable, Iterator
 from contextlib import contextmanager
 from datetime import UTC, datetime
 from enum import IntEnum, StrEnum
 from pathlib import Path
-from typing import IO, Any
+from typing import IO, TYPE_CHECKING, Any, NoReturn
 
 import typer
 from rich.console import Console
+
+if TYPE_CHECKING:
+    from fhirgallop.exam.exam import Exam
+    from fhirgallop.outcome import Issue
 
 
 class Exit(IntEnum):
@@ -101,3 +105,28 @@ def moment(text: str | None, option: str) -> datetime:
             "give an instant with a zone, such as 2026-12-01T08:30:00Z", param_hint=option
         )
     return found
+
+
+def one_exam(record: Path, map_: Path) -> Exam:
+    """The examination in a file that holds exactly one."""
+    from fhirgallop import api  # noqa: PLC0415
+    from fhirgallop.intake.record import LocalRecord  # noqa: PLC0415
+
+    template = api.read_map(map_)
+    reads = list(api.read_records(record))
+    if len(reads) != 1:
+        raise typer.BadParameter("give the record of exactly one examination", param_hint="RECORD")
+    one = reads[0]
+    if not isinstance(one, LocalRecord):
+        refuse(one.issues)
+    result = api.process(one, template)
+    if result.exam is None or not result.ok:
+        refuse(result.issues)
+    return result.exam
+
+
+def refuse(issues: Iterable[Issue]) -> NoReturn:
+    """Tells the issues and ends the command."""
+    for issue in issues:
+        complain(str(issue))
+    raise typer.Exit(Exit.REFUSED)

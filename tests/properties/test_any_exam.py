@@ -5,12 +5,15 @@ from __future__ import annotations
 from datetime import UTC, datetime
 from decimal import Decimal
 
+from defusedxml import ElementTree
 from fhir.resources.R4B.bundle import Bundle as BundleR4B
 from hypothesis import HealthCheck, given, settings
 from hypothesis import strategies as st
 
 from fhirgallop.codes import fhirjson
 from fhirgallop.conformance.validator import validate
+from fhirgallop.drawing.cycle import heart_cycle
+from fhirgallop.drawing.heart_cycle import draw
 from fhirgallop.exam.catalogue import load
 from fhirgallop.exam.entry import Entry, Grade, Measure, Qualifier
 from fhirgallop.exam.exam import Exam, MapVersion, Party
@@ -157,3 +160,9 @@ def test_every_entry_can_be_found_again_with_its_presence(exam):
 
 def test_no_finding_is_left_out_of_the_law():
     assert len(FINDINGS) > 300
+
+
+@settings(max_examples=60, deadline=None, suppress_health_check=list(HealthCheck))
+@given(exams())
+def test_any_exam_can_be_drawn(exam):
+    ElementTree.fromstring(draw(heart_cycle(exam)))
