@@ -174,16 +174,13 @@ def heart_cycle(exam: Exam, context: Context | None = None) -> HeartCycle:
 
 
 def _telling(exam: Exam) -> list[Entry]:
-    """What counts: nothing taken back, and no murmur as such where it is said more closely."""
+    """What counts: nothing taken back, and no bare "murmur" where one is said more closely."""
     entries = [entry for entry in exam.entries if not entry.withdrawn]
     closer = any(e.finding in _WHOLE and e.presence is Presence.PRESENT for e in entries)
-    return [
-        e
-        for e in entries
-        if not (
-            closer and e.finding == "murmur" and e.presence is Presence.PRESENT and not value_of(e, "timing")
-        )
+    bare = [
+        e for e in entries if e.finding == "murmur" and e.presence is Presence.PRESENT and not e.qualifiers
     ]
+    return [entry for entry in entries if not (closer and entry in bare)]
 
 
 def value_of(entry: Entry, axis: str) -> str:
