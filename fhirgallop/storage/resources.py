@@ -33,7 +33,7 @@ class NewVersion:
         date_to: last such moment.
         body: its JSON without id, versionId and lastUpdated.
         tokens: digests by which it may also be asked for.
-        deleted: True when it is no more; the body is then empty.
+        follows: the version it is meant to follow (0: it is new); None where any will do.
     """
 
     edition: str
@@ -46,7 +46,11 @@ class NewVersion:
     date_to: int | None
     body: bytes
     tokens: tuple[str, ...] = ()
-    deleted: bool = False
+    follows: int | None = None
+
+
+class ChangedMeanwhileError(Exception):
+    """A resource has another version than the one that was to be followed."""
 
 
 @dataclass(frozen=True, slots=True)
@@ -81,6 +85,7 @@ def add_versions(
     Raises:
         IntegrityError: another request was first, or something `fresh` was there already; the transaction is
             of no use any more.
+        ChangedMeanwhileError: a resource does not stand at the version that was to be followed.
     """
     before = {} if fresh else _current(connection, versions)
     written: list[Written] = []
@@ -88,7 +93,9 @@ def add_versions(
     replaced: list[int] = []
     for new in versions:
         old = before.get((new.edition, new.type, new.fhir_id))
-        if old is not None and old.body == new.body and old.deleted == new.deleted:
+        if new.follows not in (None, old.version if old else 0):
+            raise ChangedMeanwhileError
+        if old is not None and old.body == new.body:
             written.append(Written(old.version, old.updated, changed=False))
             continue
         version = 1
@@ -112,7 +119,7 @@ def _row(new: NewVersion, version: int, at: int, submission: int | None) -> dict
         "fhir_id": new.fhir_id,
         "version": version,
         "current": True,
-        "deleted": new.deleted,
+        "deleted": False,
         "updated": at,
         "patient": new.patient,
         "encounter": new.encounter,
@@ -126,7 +133,7 @@ def _row(new: NewVersion, version: int, at: int, submission: int | None) -> dict
 
 def _current(connection: Connection, versions: Sequence[NewVersion]) -> dict[tuple[str, str, str], Any]:
     columns = (resources.c[name] for name in
-               ("id", "edition", "type", "fhir_id", "version", "deleted", "updated", "body"))  # fmt: skip
+               ("id", "edition", "type", "fhir_id", "version", "updated", "body"))  # fmt: skip
     query = select(*columns).where(resources.c.current)
     by_kind: dict[tuple[str, str], list[str]] = {}
     for new in versions:
@@ -142,9 +149,7 @@ def _current(connection: Connection, versions: Sequence[NewVersion]) -> dict[tup
 
 def _add_tokens(connection: Connection, versions: Sequence[NewVersion], written: Sequence[Written]) -> None:
     told = [
-        (new, now.version)
-        for new, now in zip(versions, written, strict=True)
-        if new.tokens and now.changed and not new.deleted
+        (new, now.version) for new, now in zip(versions, written, strict=True) if new.tokens and now.changed
     ]
     key = ("edition", "type", "fhir_id", "version")
     for some in _slices(told):
