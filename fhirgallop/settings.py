@@ -34,7 +34,8 @@ class Settings(BaseSettings):
     port: int = Field(8470, ge=0, le=65535, description="Port to listen on; 0 takes a free one.")
     maps: Path = Field(Path("maps"), description="Folder with the published template maps (*.yaml).")
     database: str = Field(
-        "sqlite:///fhirgallop.sqlite3", description="Where examinations are kept (an SQLAlchemy address)."
+        "sqlite:///fhirgallop.sqlite3",
+        description="Where all is kept: a file (sqlite:///...) or PostgreSQL (postgresql://user@host/name).",
     )
     edition: Literal["R4", "R4B", "R5"] = Field("R4", description="FHIR edition when a request names none.")
     snomed: bool = Field(
@@ -69,6 +70,21 @@ class Settings(BaseSettings):
     cards_shadow: bool = Field(
         default=False, description="Work every card out and log it by rule, and show none."
     )
+
+    # how long what is kept (storage/retention.py)
+    keep_exams: int = Field(
+        0,
+        ge=0,
+        description="Days that an examination and its resources are kept after its newest version, and while "
+        "a delivery of it waits; 0: for ever.",
+    )
+    keep_cards: int = Field(
+        365, ge=0, description="Days that cards, answers to them and memories of both are kept; 0: for ever."
+    )
+    keep_batches: int = Field(
+        7, ge=0, description="Days that a finished batch and its results are kept; 0: for ever."
+    )
+    keep_audit: int = Field(0, ge=0, description="Days that the audit trail is kept; 0: for ever.")
 
     # who may ask (service/auth)
     address: str = Field(

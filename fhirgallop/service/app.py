@@ -14,6 +14,7 @@ from starlette.exceptions import HTTPException
 from starlette.responses import Response
 
 from fhirgallop.cards.policy import Policy
+from fhirgallop.observations.bundle import instant
 from fhirgallop.outcome import Issue
 from fhirgallop.reasoning import rulebook
 from fhirgallop.service import answers
@@ -22,10 +23,11 @@ from fhirgallop.service.examinations import Examinations
 from fhirgallop.service.guard import Guard
 from fhirgallop.service.hook_desk import HookDesk, Manner
 from fhirgallop.service.routes import about, exams, hooks, maps, validation
-from fhirgallop.service.shelf import load_shelf
+from fhirgallop.service.shelf import keep_versions, load_shelf
 from fhirgallop.settings import Settings
 from fhirgallop.storage.engine import open_database
 from fhirgallop.storage.hooks import HookStore
+from fhirgallop.storage.maps import MapStore
 from fhirgallop.storage.submissions import Submissions
 from fhirgallop.version import VERSION
 
@@ -53,6 +55,7 @@ def create_app(settings: Settings, clock: Callable[[], datetime] = now) -> FastA
     """
     shelf = load_shelf(settings.maps)  # before the database: what cannot start leaves nothing behind
     engine = open_database(settings.database)
+    keep_versions(shelf, MapStore(engine), at=instant(clock()))
 
     @asynccontextmanager
     async def lifespan(_app: FastAPI) -> AsyncIterator[None]:
@@ -69,7 +72,7 @@ def create_app(settings: Settings, clock: Callable[[], datetime] = now) -> FastA
     )
     app.state.settings = settings
     app.state.gate = Gate()
-    app.state.shelf = shelf
+    app.state.shelf = {name: one.template for name, one in shelf.items()}
     app.state.examinations = Examinations(Submissions(engine), clock)
     app.state.clock = clock
     manner = Manner(Policy(shadow=settings.cards_shadow), settings.cards_critical, settings.pages.rstrip("/"))
