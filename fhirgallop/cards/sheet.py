@@ -9,6 +9,7 @@ from typing import Final
 
 from fhirgallop.cards import words
 from fhirgallop.cards.card import Card
+from fhirgallop.cards.opinion import left_out, limits
 from fhirgallop.cards.policy import Decision
 from fhirgallop.cards.safety import SAFETY_TEXTS
 from fhirgallop.exam.exam import Exam
@@ -46,8 +47,8 @@ def sheet(exam: Exam, review: Review, decision: Decision, issues: Iterable[Issue
         issues: what the reading of the chart had to leave out; a sheet without it would promise too much.
     """
     lines = [f"Review of the examination of {exam.time.start}, with rules {review.rules_version}", ""]
-    lines += _block("MOST RULES ARE NOT MEANT FOR THIS PATIENT AND WERE NOT APPLIED", _limits(review))
-    lines += _block("LEFT OUT OF THE CHART", _unread(issues))
+    lines += _block("MOST RULES ARE NOT MEANT FOR THIS PATIENT AND WERE NOT APPLIED", limits(review))
+    lines += _block("LEFT OUT OF THE CHART", left_out(issues))
     for card in decision.cards:
         lines += [*_card(card), ""]
     if not decision.cards:
@@ -102,18 +103,6 @@ def _card(card: Card) -> Iterator[str]:
 
 def _source(conclusion: Conclusion) -> str:
     return f"Source: {conclusion.rule.source} ({conclusion.rule.seen}; {conclusion.rule.id})"
-
-
-def _unread(issues: Iterable[Issue]) -> Iterator[str]:
-    """What could not be read, each sentence once."""
-    counted = Counter(issue.text for issue in issues if issue.severity != "information")
-    for text, count in counted.most_common():
-        yield text if count == 1 else f"{text} ({count} places)"
-
-
-def _limits(review: Review) -> Iterator[str]:
-    for guard in review.limits:
-        yield f"{'; '.join(words.entry(g.item) for g in guard.subject)}. {guard.rule.mechanism}"
 
 
 def _findings(review: Review) -> list[str]:
