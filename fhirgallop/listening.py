@@ -25,6 +25,7 @@ def faults(settings: Settings) -> Iterator[str]:
     yield from _clients(settings)
     yield from _authority(settings)
     yield from _people(settings)
+    yield from _deliveries(settings)
     for origin in sorted(settings.cors_origins):
         if _origin(origin) != origin:
             yield f"{_P}CORS_ORIGINS: {origin!r} is no origin; write scheme://host, each one by name"
@@ -98,6 +99,15 @@ def _people(settings: Settings) -> Iterator[str]:
         yield f"{_P}SIGN_IN_CLIENT: register the service with the issuer, and give the client id"
     if not settings.sign_in_roles:
         yield f'{_P}SIGN_IN_ROLES: say who may what, such as {{"cardiology-it": "informatician"}}'
+
+
+def _deliveries(settings: Settings) -> Iterator[str]:
+    yield from _secure(settings, "DELIVER_TO", settings.deliver_to)
+    yield from _secure(settings, "DELIVER_TOKEN_URL", settings.deliver_token_url)
+    if bool(settings.deliver_client) != bool(settings.deliver_key):
+        yield f"{_P}DELIVER_CLIENT and {_P}DELIVER_KEY: give both, or none"
+    if settings.deliver_client and not settings.deliver_to:
+        yield f"{_P}DELIVER_TO: name the endpoint, or leave {_P}DELIVER_CLIENT out"
 
 
 def _secure(settings: Settings, name: str, *addresses: str) -> Iterator[str]:

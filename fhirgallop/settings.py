@@ -161,6 +161,62 @@ class Settings(BaseSettings):
         default=False, description="Listed addresses may be plain http on this machine; for tries only."
     )
 
+    # what is sent to the record system (delivery)
+    deliver_to: str = Field(
+        "",
+        max_length=500,
+        description="FHIR endpoint of the record system (https://record.example/fhir) that coded "
+        "examinations are sent to, in the edition and with the codings set above; empty: nothing is sent.",
+    )
+    deliver_client: str = Field(
+        "", max_length=200, description="Our client id there (SMART backend services); empty: no token."
+    )
+    deliver_key: Path | None = Field(
+        None, description="File with our private keys (JWK Set, or one key in PEM); the first signs."
+    )
+    deliver_token_url: str = Field(
+        "", max_length=500, description="Token address; empty: found by discovery below the endpoint."
+    )
+    deliver_scope: str = Field(
+        "system/Observation.cus system/DiagnosticReport.cus system/Provenance.cs",
+        max_length=500,
+        description="Scopes that are asked for.",
+    )
+    deliver_authorities: Path | None = Field(
+        None, description="Certificates of the authorities trusted there (PEM), in place of the system's."
+    )
+    delivery_workers: int = Field(
+        1,
+        ge=0,
+        le=32,
+        description="Threads of each service process that send; 0: only `deliveries work` sends.",
+    )
+    delivery_timeout: float = Field(
+        30, ge=0.5, le=600, description="Seconds that one exchange with the record system may take."
+    )
+    delivery_wait: float = Field(
+        2, ge=0.01, le=3600, description="Longest wait before a second try; it doubles with each."
+    )
+    delivery_wait_most: float = Field(
+        600, ge=0.01, le=86_400, description="Longest wait before any try, unless more is asked for."
+    )
+    delivery_tries: int = Field(
+        20,
+        ge=1,
+        le=1000,
+        description="Tries after which a delivery fails and waits for a person, while others get through.",
+    )
+    delivery_rest_after: int = Field(
+        5,
+        ge=1,
+        le=1000,
+        description="Failures in a row after which the record system counts as down and is probed by one "
+        "delivery at a time.",
+    )
+    delivery_rest: float = Field(
+        15, ge=0.01, le=3600, description="First rest of one that is down; it doubles with each failed probe."
+    )
+
     # how it listens
     certificate: Path | None = Field(None, description="TLS certificate with its chain (PEM file).")
     certificate_key: Path | None = Field(None, description="Its private key (PEM file, no passphrase).")
@@ -170,6 +226,46 @@ class Settings(BaseSettings):
     proxies: frozenset[str] = Field(
         frozenset({"127.0.0.1", "::1"}),
         description="Addresses of that proxy: whose X-Forwarded-For and -Proto are believed.",
+    )
+
+    # operation
+    log_form: Literal["console", "json"] = Field(
+        "console", description="How the log is written: for people, or a JSON object a line."
+    )
+    log_level: Literal["debug", "info", "warning", "error"] = Field(
+        "info", description="The least that is logged; each request is `info`."
+    )
+    rate: float = Field(
+        500,
+        ge=0,
+        description="Requests a second that one address, and one caller, may send to one process; twice as "
+        "many may come at once. 0: no limit.",
+    )
+    at_once: int = Field(
+        64, ge=1, le=10_000, description="Requests that one process works on at once; more are refused."
+    )
+    header_seconds: float = Field(
+        10, gt=0, le=600, description="How long the head of a request may take to arrive."
+    )
+    idle_seconds: int = Field(
+        15, ge=1, le=3600, description="How long a connection may lie idle between two requests."
+    )
+    notice_seconds: float = Field(
+        0,
+        ge=0,
+        le=600,
+        description="How long the service still takes requests after it was told to end, while `/ready` says "
+        "no already, so that a balancer turns to another.",
+    )
+    finish_seconds: int = Field(
+        20, ge=1, le=600, description="How long requests may then still run before they are cut off."
+    )
+    stuck_minutes: int = Field(15, ge=1, description="Age of the oldest delivery from which `/ready` warns.")
+    free_disk: int = Field(
+        256,
+        ge=0,
+        description="Megabytes that must be free beside an embedded database; with less the service is not "
+        "ready.",
     )
 
     @field_validator("pages")

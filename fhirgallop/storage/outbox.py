@@ -98,6 +98,19 @@ class Settled:
 
 
 @dataclass(frozen=True, slots=True)
+class Rest:
+    """How a destination that did not answer well is left alone.
+
+    Attributes:
+        weight: how many failures in a row this one counts for.
+        until: from the failures in a row to the moment (ms) before which nobody asks it again.
+    """
+
+    weight: int
+    until: Callable[[int], int]
+
+
+@dataclass(frozen=True, slots=True)
 class Delivery:
     """A row of the outbox, for a person to look at; moments in milliseconds since 1970."""
 
@@ -168,14 +181,13 @@ class Outbox:
             bundle = connection.scalar(select(submissions.c.bundle).where(submissions.c.id == row.submission))
             return Claim(row.id, worker, row.attempts, now + lease, probe, failures, bundle or b"")
 
-    def settle(self, claim: Claim, settled: Settled, rest: Callable[[int], int] | None) -> bool:
+    def settle(self, claim: Claim, settled: Settled, rest: Rest | None) -> bool:
         """Records what became of a claim; False when its lease ran out and another worker took it over.
 
         Args:
             claim: as it was given out.
             settled: what became of it.
-            rest: None when the destination answered as one that is well. Else gives, for the number of
-                failures in a row, the moment (ms) before which nobody is to ask it again.
+            rest: how the destination is left alone; None when it answered as one that is well.
         """
         values = {"state": settled.state, "reason": settled.reason[:_REASON_LENGTH], "due": settled.due,
                   "outcome": settled.outcome, "lease": 0, "worker": ""}  # fmt: skip
@@ -318,10 +330,11 @@ class Outbox:
         first = update(destinations).where(self._own(), destinations.c.open_until == seen)
         return connection.execute(first.values(open_until=until)).rowcount == 1
 
-    def _failed(self, connection: Connection, rest: Callable[[int], int]) -> None:
-        more = update(destinations).where(self._own()).values(failures=destinations.c.failures + 1)
+    def _failed(self, connection: Connection, rest: Rest) -> None:
+        counted = destinations.c.failures + rest.weight
+        more = update(destinations).where(self._own()).values(failures=counted)
         failures = connection.execute(more.returning(destinations.c.failures)).scalar_one()
-        until = rest(failures)
+        until = rest.until(failures)
         later = case((destinations.c.open_until > until, destinations.c.open_until), else_=until)
         connection.execute(update(destinations).where(self._own()).values(open_until=later))
 
