@@ -1,4 +1,4 @@
-"""Puts delivery together from the settings: what is noted, who sends it, and the keys that we publish."""
+"""Puts delivery together from the settings: who sends to whom, and the keys that we publish."""
 
 from __future__ import annotations
 
@@ -16,7 +16,6 @@ from fhirgallop.delivery.auth import Access, Identity
 from fhirgallop.delivery.client import Client
 from fhirgallop.delivery.destination import Destination, client_for, destination
 from fhirgallop.delivery.keys import SigningKey, public_set, read_keys
-from fhirgallop.delivery.outgoing import Outgoing
 from fhirgallop.delivery.patience import Chance, Patience
 from fhirgallop.delivery.post import Post
 from fhirgallop.delivery.worker import Way, Workers
@@ -29,13 +28,11 @@ class Dispatch:
     """Delivery as the settings want it.
 
     Attributes:
-        outgoing: what notes a delivery with its submission.
         workers: threads of this process, not started yet; there may be none.
         client: closes its connections when the workers have stopped.
         keys: our public keys, to be published as they are; empty where we have none.
     """
 
-    outgoing: Outgoing
     workers: Workers
     client: Client
     keys: bytes
@@ -78,9 +75,7 @@ def open_dispatch(
     )
     host = f"{socket.gethostname()[:24]}-{os.getpid()}"
     workers = Workers(way, [f"{host}-{n}-{new_id()[:8]}" for n in range(threads)])
-    return Dispatch(
-        Outgoing(settings.edition, settings.snomed), workers, client, public_set(keys) if keys else b""
-    )
+    return Dispatch(workers, client, public_set(keys) if keys else b"")
 
 
 def patience(settings: Settings) -> Patience:
