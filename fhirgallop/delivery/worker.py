@@ -84,7 +84,7 @@ class Workers:
         return not any(thread.is_alive() for thread in self._threads)
 
     def counts(self) -> dict[str, int]:
-        """Tries since the start by what they came to: `delivered`, or a kind of failure (`422`, `refused`)."""
+        """Tries since the start by what they came to: `delivered` or a kind of failure (`422`, `refused`)."""
         with self._lock:
             return dict(self._counts)
 
