@@ -5,6 +5,7 @@ from __future__ import annotations
 import json
 import os
 from collections.abc import Mapping
+from difflib import get_close_matches
 from pathlib import Path
 from typing import Final, Literal, Self
 from urllib.parse import urlsplit
@@ -17,6 +18,17 @@ from fhirgallop import listening
 from fhirgallop.errors import SettingsError
 
 PREFIX: Final = "FHIRGALLOP_"
+_FILE: Final = "_FILE"
+# what settings are about, by the first of them
+_ABOUT: Final = {
+    "host": "Service, storage and limits",
+    "pages": "Cards",
+    "keep_exams": "How long what is kept",
+    "address": "Who may ask",
+    "deliver_to": "Delivery to the record system",
+    "certificate": "TLS and proxy",
+    "log_form": "Operation",
+}
 
 # those of RFC 7518 and RFC 8037 with a public and a private key
 Algorithm = Literal["ES256", "ES384", "ES512", "RS256", "RS384", "RS512", "PS256", "PS384", "PS512", "EdDSA"]
@@ -35,6 +47,7 @@ class Settings(BaseSettings):
     maps: Path = Field(Path("maps"), description="Folder with the published template maps (*.yaml).")
     database: str = Field(
         "sqlite:///fhirgallop.sqlite3",
+        repr=False,
         description="Where all is kept: a file (sqlite:///...) or PostgreSQL (postgresql://user@host/name).",
     )
     edition: Literal["R4", "R4B", "R5"] = Field("R4", description="FHIR edition when a request names none.")
@@ -298,24 +311,55 @@ class Settings(BaseSettings):
 def load(**given: object) -> Settings:
     """Settings from the environment, with `given` ones on top.
 
+    A text setting may also stand in a file that `FHIRGALLOP_<NAME>_FILE` names, so that a password need not
+    stand in the environment.
+
     Raises:
-        SettingsError: names every setting that cannot be used, and why.
+        SettingsError: names every setting that cannot be used, and why; never what it was set to.
     """
+    texts, faults = _from_files()
     known = {f"{PREFIX}{name}".upper() for name in Settings.model_fields}
-    if strange := sorted(
-        name for name in os.environ if name.upper().startswith(PREFIX) and name.upper() not in known
-    ):
-        raise SettingsError(f"{', '.join(strange)}: no such setting; there are {', '.join(sorted(known))}")
+    files = {f"{PREFIX}{name}{_FILE}".upper() for name in _texts()}
+    for name in sorted(os.environ):
+        if name.upper().startswith(PREFIX) and name.upper() not in known | files:
+            near = get_close_matches(name.upper(), known, 1, 0.0)
+            faults.append(f"{name}: no such setting; did you mean {near[0]}?")
+    chosen = {name: value for name, value in {**texts, **given}.items() if value is not None}
     try:
-        return Settings(**{name: value for name, value in given.items() if value is not None})  # type: ignore[arg-type]
+        settings = Settings(**chosen)  # type: ignore[arg-type]
     except SourceError as error:
-        raise SettingsError(str(error)) from None
+        faults.append(str(error))
     except ValidationError as error:
-        faults = [
+        faults += [
             _fault(fault["loc"], fault["msg"])
             for fault in error.errors(include_input=False, include_url=False)
         ]
-        raise SettingsError("; ".join(faults)) from None
+    if faults:
+        raise SettingsError("; ".join(faults))
+    return settings
+
+
+def _texts() -> list[str]:
+    return [name for name, field in Settings.model_fields.items() if field.annotation is str]
+
+
+def _from_files() -> tuple[dict[str, str], list[str]]:
+    """Settings that stand in files of their own, and what is wrong with these files."""
+    found: dict[str, str] = {}
+    faults = []
+    for name in _texts():
+        variable = f"{PREFIX}{name}".upper()
+        path = os.environ.get(variable + _FILE)
+        if path is None:
+            continue
+        if variable in os.environ:
+            faults.append(f"{variable}{_FILE}: {variable} is set too; leave one of them out")
+        try:
+            found[name] = Path(path).read_text("utf-8").strip()
+        except (OSError, UnicodeDecodeError) as error:
+            said = error.strerror if isinstance(error, OSError) else "no UTF-8 text"
+            faults.append(f"{variable}{_FILE}: the file cannot be read ({said})")
+    return found, faults
 
 
 def _fault(place: tuple[int | str, ...], text: str) -> str:
@@ -324,10 +368,12 @@ def _fault(place: tuple[int | str, ...], text: str) -> str:
 
 
 def table() -> str:
-    """Every setting as a table in Markdown, as it stands in the README."""
-    lines = ["| setting | default | meaning |", "|---|---|---|"]
+    """Every setting in tables by what it is about, in Markdown, as the README has them."""
+    lines = []
     for name, field in Settings.model_fields.items():
+        if name in _ABOUT:
+            lines += ["", f"**{_ABOUT[name]}**", "", "| setting | default | meaning |", "|---|---|---|"]
         default = "" if field.default is None else field.default
         shown = json.dumps(sorted(default) if isinstance(default, frozenset) else default, default=str)
         lines.append(f"| `{PREFIX}{name.upper()}` | `{shown.strip(chr(34))}` | {field.description} |")
-    return "\n".join(lines)
+    return "\n".join(lines[1:])

@@ -2,8 +2,7 @@
 
 from __future__ import annotations
 
-import uuid
-from collections.abc import AsyncIterator, Callable
+from collections.abc import AsyncIterator, Callable, Mapping, Sequence
 from contextlib import asynccontextmanager
 from datetime import UTC, datetime
 from typing import Final
@@ -20,9 +19,9 @@ from fhirgallop.reasoning import rulebook
 from fhirgallop.service import answers
 from fhirgallop.service.auth.gate import Gate
 from fhirgallop.service.examinations import Examinations
-from fhirgallop.service.guard import Guard
 from fhirgallop.service.hook_desk import HookDesk, Manner
-from fhirgallop.service.routes import about, exams, hooks, maps, validation
+from fhirgallop.service.operation import watch_over
+from fhirgallop.service.routes import about, exams, hooks, maps, validation, watching
 from fhirgallop.service.shelf import keep_versions, load_shelf
 from fhirgallop.settings import Settings
 from fhirgallop.storage.engine import open_database
@@ -41,10 +40,6 @@ _CODES: Final = {404: "not-found", 405: "not-supported", 413: "too-long"}
 def now() -> datetime:
     """The clock of the running service."""
     return datetime.now(tz=UTC)
-
-
-def _new_id() -> str:
-    return str(uuid.uuid4())
 
 
 def create_app(settings: Settings, clock: Callable[[], datetime] = now) -> FastAPI:
@@ -77,35 +72,42 @@ def create_app(settings: Settings, clock: Callable[[], datetime] = now) -> FastA
     app.state.clock = clock
     manner = Manner(Policy(shadow=settings.cards_shadow), settings.cards_critical, settings.pages.rstrip("/"))
     app.state.hooks = HookDesk(HookStore(engine), clock, rulebook.load(), manner)
-    for router in (exams.router, hooks.router, validation.router, maps.router, about.router):
+    for router in (exams.router, hooks.router, validation.router, maps.router, about.router, watching.router):
         app.include_router(router)
-    app.add_middleware(Guard, new_id=_new_id)
+    watch_over(app, engine, settings, clock)
     app.exception_handler(answers.RefusalError)(_refused)
     app.exception_handler(RequestValidationError)(_invalid)
     app.exception_handler(HTTPException)(_plain)
     return app
 
 
-async def _refused(_request: Request, error: Exception) -> Response:
+async def _refused(request: Request, error: Exception) -> Response:
     assert isinstance(error, answers.RefusalError)  # noqa: S101 - registered for this class alone
-    return answers.outcome_answer(error.status, error.issues, error.headers)
+    return _told(request, error.status, error.issues, error.headers)
 
 
-async def _invalid(_request: Request, error: Exception) -> Response:
+async def _invalid(request: Request, error: Exception) -> Response:
     assert isinstance(error, RequestValidationError)  # noqa: S101 - registered for this class alone
     issues = [
         Issue("error", "required" if fault["type"] == "missing" else "value", "http-parameter",
               f"Parameter {fault['loc'][-1]}: {fault['msg']}.")
         for fault in error.errors()
     ]  # fmt: skip
-    return answers.outcome_answer(400, issues)
+    return _told(request, 400, issues)
 
 
-async def _plain(_request: Request, error: Exception) -> Response:
+async def _plain(request: Request, error: Exception) -> Response:
     assert isinstance(error, HTTPException)  # noqa: S101 - registered for this class alone
     text = {404: "There is nothing at this address; /docs lists the addresses.",
             405: "This address does not take that method; /docs lists what it takes."}  # fmt: skip
     said = text.get(error.status_code, "The request cannot be served.")
     code = _CODES.get(error.status_code, "processing")
     issue = Issue("error", code, f"http-{error.status_code}", said)
-    return answers.outcome_answer(error.status_code, [issue], error.headers)
+    return _told(request, error.status_code, [issue], error.headers)
+
+
+def _told(
+    request: Request, status: int, issues: Sequence[Issue], headers: Mapping[str, str] | None = None
+) -> Response:
+    request.state.issues = issues  # the audit trail holds them too
+    return answers.outcome_answer(status, issues, headers)

@@ -2,11 +2,12 @@
 
 from __future__ import annotations
 
+import hashlib
 import logging
 import re
 import time
 from collections.abc import Callable
-from typing import Final
+from typing import Any, Final
 from urllib.parse import urlsplit
 
 import structlog
@@ -16,6 +17,11 @@ from starlette.types import ASGIApp, Message, Receive, Scope, Send
 
 from fhirgallop.outcome import Issue
 from fhirgallop.service import answers
+from fhirgallop.service.audit import Auditor
+from fhirgallop.service.auth.caller import Caller
+from fhirgallop.service.limits import Limits
+from fhirgallop.service.logging import place
+from fhirgallop.service.metrics import Metrics
 from fhirgallop.storage.submissions import StorageError
 
 log: Final = logging.getLogger("fhirgallop.service")
@@ -24,16 +30,21 @@ STORAGE_FAILED: Final = Issue(
     "fatal", "transient", "storage-failed",
     "The examination could not be stored, and nothing of it was kept; send it again later.",
 )  # fmt: skip
+AUDIT_FAILED: Final = Issue(
+    "fatal", "transient", "audit-failed",
+    "That this was asked could not be written to the audit trail, so it is not answered; ask again later.",
+)  # fmt: skip
 REQUEST_ID: Final = b"x-request-id"
 # a UUID and nothing freer: what a sender writes there stands in log and audit trail, and a patient's number
 # must not
 _WELL_FORMED: Final = re.compile(r"[0-9a-fA-F]{8}(?:-?[0-9a-fA-F]{4}){3}-?[0-9a-fA-F]{12}")
 _METHODS: Final = frozenset({"GET", "HEAD", "POST", "PUT", "PATCH", "DELETE", "OPTIONS"})
+_WATCHING: Final = frozenset({"/health", "/ready", "/metrics"})
 _SAFE: Final = [(name.lower().encode(), value.encode()) for name, value in answers.SAFE_HEADERS.items()]
 
 
 class Guard:
-    """ASGI middleware: lets a request through or not, whatever comes back has safe headers and a log line."""
+    """ASGI middleware: lets a request through or not, and sees every answer before it leaves."""
 
     def __init__(self, app: ASGIApp, *, new_id: Callable[[], str]) -> None:
         self._app = app
@@ -44,18 +55,21 @@ class Guard:
         if scope["type"] != "http":
             await self._app(scope, receive, send)
             return
-        visit = _Visit(scope, send, self._new_id)
-        structlog.contextvars.bind_contextvars(request=visit.id)
-        try:
-            await self._answer(Request(scope, receive), visit)
-        finally:
-            structlog.contextvars.unbind_contextvars("request")
-            visit.log()
+        visit = _Visit(Request(scope, receive), send, self._new_id)
+        limits: Limits = scope["app"].state.limits
+        with structlog.contextvars.bound_contextvars(request=visit.id):
+            limits.running += 1
+            try:
+                await self._answer(visit)
+            finally:
+                limits.running -= 1
+                visit.end()
 
-    async def _answer(self, request: Request, visit: _Visit) -> None:
-        refused = _misled(request)
+    async def _answer(self, visit: _Visit) -> None:
+        request = visit.request
+        refused = _misled(request) or _too_much(request)
         if refused is not None:
-            await refused(request.scope, request.receive, visit.send)
+            await visit.say(refused)
             return
         try:
             await self._app(request.scope, request.receive, visit.send)
@@ -64,7 +78,7 @@ class Guard:
             if visit.status:
                 # half an answer is out: only a connection that ends says that it is not whole
                 raise CutOffError from None
-            await answer(request.scope, request.receive, visit.send)
+            await visit.say(answer)
 
 
 class CutOffError(Exception):
@@ -72,19 +86,37 @@ class CutOffError(Exception):
 
 
 class _Visit:
-    """One request on its way: its id, its clock, and what is put on the head of its answer."""
+    """One request on its way: its id, its clock, and what is done before its answer leaves."""
 
-    def __init__(self, scope: Scope, send: Send, new_id: Callable[[], str]) -> None:
-        self._scope = scope
+    def __init__(self, request: Request, send: Send, new_id: Callable[[], str]) -> None:
+        self.request = request
+        self.status = 0
         self._send = send
         self._start = time.perf_counter()
-        self.status = 0
-        given = next((value for name, value in scope["headers"] if name == REQUEST_ID), b"").decode("latin-1")
-        self.id = given if _WELL_FORMED.fullmatch(given) else new_id()
-        scope.setdefault("state", {})["request_id"] = self.id
+        self._withheld = False
+        given = next((value for name, value in request.scope["headers"] if name == REQUEST_ID), b"")
+        text = given.decode("latin-1")
+        self.id = text if _WELL_FORMED.fullmatch(text) else new_id()
+        request.state.request_id = self.id
+
+    async def say(self, answer: Response) -> None:
+        """Sends an answer of the guard's own."""
+        await answer(self.request.scope, self.request.receive, self.send)
 
     async def send(self, message: Message) -> None:
-        """Passes a part of the answer on."""
+        """Passes a part of the answer on; nothing of it when its audit event could not be kept."""
+        if self._withheld:
+            return
+        if message["type"] == "http.response.start":
+            auditor: Auditor = self.request.app.state.audit
+            if not await auditor.answered(self.request, message["status"]) and message["status"] < 400:
+                refused = answers.outcome_answer(503, [AUDIT_FAILED], {"Retry-After": "30"})
+                await refused(self.request.scope, self.request.receive, self._pass_on)
+                self._withheld = True
+                return
+        await self._pass_on(message)
+
+    async def _pass_on(self, message: Message) -> None:
         if message["type"] == "http.response.start":
             self.status = message["status"]
             headers = message["headers"] = list(message.get("headers", ()))
@@ -93,13 +125,32 @@ class _Visit:
             headers.append((REQUEST_ID, self.id.encode()))
         await self._send(message)
 
-    def log(self) -> None:
-        """One line: the route's pattern, never the address, where a client may write a patient's number."""
-        route = getattr(self._scope.get("route"), "path", "(none)")
-        method = self._scope["method"] if self._scope["method"] in _METHODS else "(other)"
-        took = (time.perf_counter() - self._start) * 1000
-        said = {"request": self.id, "status": self.status, "ms": round(took, 1)}
+    def end(self) -> None:
+        """Counts the request, and leaves one line in the log.
+
+        The route's pattern stands there, never the address, where a client may write a patient's number.
+        """
+        route = getattr(self.request.scope.get("route"), "path", "(none)")
+        method = self.request.method if self.request.method in _METHODS else "(other)"
+        took = time.perf_counter() - self._start
+        metrics: Metrics = self.request.app.state.metrics
+        metrics.answered(method, route, self.status, took)
+        caller: Caller | None = getattr(self.request.state, "caller", None)
+        said: dict[str, Any] = {"status": self.status, "ms": round(took * 1000, 1)}
+        if caller:
+            said["caller"] = caller.kind
+            if caller.name:
+                said["name"] = hashlib.sha256(caller.name.encode("utf-8", "replace")).hexdigest()[:12]
         log.info("%s %s", method, route, extra=said)
+
+
+def _too_much(request: Request) -> Response | None:
+    """A refusal where a client, or all together, ask too much; who only looks after the service is let in."""
+    if request.url.path in _WATCHING:
+        return None
+    limits: Limits = request.app.state.limits
+    refused = limits.refusal(request.client.host if request.client else "")
+    return answers.outcome_answer(refused.status, refused.issues, refused.headers) if refused else None
 
 
 def _misled(request: Request) -> Response | None:
@@ -132,13 +183,6 @@ def _broken(error: Exception) -> Response:
     if isinstance(error, StorageError):
         log.error("storage failed: %s", error)
         return answers.outcome_answer(503, [STORAGE_FAILED], {"Retry-After": "30"})
-    log.error("unexpected %s at %s", type(error).__name__, _place(error))
+    log.error("unexpected %s at %s", type(error).__name__, place(error))
     text = "Something broke here; nothing of the request was kept. Tell the operator the time of day."
     return answers.outcome_answer(500, [Issue("fatal", "exception", "service-broke", text)])
-
-
-def _place(error: BaseException) -> str:
-    trace = error.__traceback__
-    while trace and trace.tb_next:
-        trace = trace.tb_next
-    return f"{trace.tb_frame.f_code.co_filename}:{trace.tb_lineno}" if trace else "(nowhere)"

@@ -42,6 +42,7 @@ class Need:
         Raises:
             RefusalError: 401 or 403.
         """
+        request.state.need = self  # what is audited depends on it
         if self.open:
             request.state.caller = STRANGER
             return

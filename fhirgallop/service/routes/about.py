@@ -1,4 +1,4 @@
-"""What the service says of itself: health, and a readable page of its addresses."""
+"""What the service says of itself: a readable page of its addresses."""
 
 from __future__ import annotations
 
@@ -9,20 +9,12 @@ from typing import Any, Final
 from fastapi import APIRouter, Depends, Request
 from starlette.responses import HTMLResponse, Response
 
-from fhirgallop.service import answers
 from fhirgallop.service.auth.needs import needs
-from fhirgallop.version import VERSION
 
 router = APIRouter(tags=["service"], dependencies=[Depends(needs(open=True))])
 
 _STYLE: Final = resources.files("fhirgallop.service.pages").joinpath("style.css").read_text(encoding="utf-8")
 _EXAMPLE: Final = "curl -H 'Content-Type: application/json' --data-binary @exam.json '{base}exams?map=NAME'"
-
-
-@router.get("/health", summary="Is the service up?", responses=answers.REFUSALS)
-async def health() -> Response:
-    """Says that the service answers, and its version."""
-    return answers.json_answer({"status": "up", "version": VERSION})
 
 
 @router.get("/style.css", include_in_schema=False)

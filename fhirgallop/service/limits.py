@@ -1,0 +1,93 @@
+"""How much one client, and all together, may ask of this process.
+
+A client's requests fill a bucket that leaks at the permitted rate (generic cell rate algorithm, ITU-T I.371:
+one moment is kept a client). Each process counts for itself.
+"""
+
+from __future__ import annotations
+
+import math
+from collections import OrderedDict
+from collections.abc import Callable
+from typing import Final
+
+from starlette.requests import Request
+
+from fhirgallop.outcome import Issue
+from fhirgallop.service import answers
+
+_MOST_CLIENTS: Final = 20_000
+_BURST: Final = 2.0  # seconds of the permitted rate that may come at once
+
+
+class Rate:
+    """At most so many requests a second from each client, on average; a short burst may be quicker.
+
+    Args:
+        rate: requests a second; 0: no limit.
+        clock: seconds, never going back.
+    """
+
+    def __init__(self, rate: float, clock: Callable[[], float]) -> None:
+        self._step = 1 / rate if rate else 0.0
+        self._clock = clock
+        # when each client's bucket will be empty; the client asked last stands last
+        self._empty: OrderedDict[str, float] = OrderedDict()
+
+    def wait(self, client: str) -> float:
+        """Seconds that a client has to wait; 0 when the request is let in, and then it counts."""
+        if not self._step:
+            return 0.0
+        now = self._clock()
+        empty = max(self._empty.pop(client, now), now)
+        late = empty - now - _BURST
+        if late <= 0:
+            empty += self._step
+        self._empty[client] = empty
+        if len(self._empty) > _MOST_CLIENTS:
+            self._empty.popitem(last=False)
+        return max(late, 0.0)
+
+
+class Limits:
+    """The rate of each address and of each caller, and how many requests are worked on at once."""
+
+    def __init__(self, *, rate: float, at_once: int, clock: Callable[[], float]) -> None:
+        self._addresses = Rate(rate, clock)
+        self._callers = Rate(rate, clock)
+        self._at_once = at_once
+        self.running = 0
+
+    def refusal(self, address: str) -> answers.RefusalError | None:
+        """Why a request from this address is not worked on, if so."""
+        if self.running > self._at_once:  # it counts itself
+            text = "The service is busy with other requests; send it again in a moment."
+            return _refusal(503, "transient", "http-busy", text, 1)
+        wait = self._addresses.wait(address)
+        return _too_many(wait) if wait else None
+
+    def admit_caller(self, name: str) -> None:
+        """Counts a request for a caller who has shown who they are, from whichever address.
+
+        Raises:
+            RefusalError: 429.
+        """
+        wait = self._callers.wait(name) if name else 0
+        if wait:
+            raise _too_many(wait)
+
+
+def admit_caller(request: Request, name: str) -> None:
+    """The same, for the limits of the service that the request came to."""
+    limits: Limits = request.app.state.limits
+    limits.admit_caller(name)
+
+
+def _too_many(wait: float) -> answers.RefusalError:
+    """Source: RFC 6585, section 4."""
+    text = "These are more requests than one client may send; wait as long as Retry-After says."
+    return _refusal(429, "throttled", "http-too-many", text, math.ceil(wait))
+
+
+def _refusal(status: int, code: str, rule: str, text: str, wait: int) -> answers.RefusalError:
+    return answers.RefusalError(status, [Issue("error", code, rule, text)], {"Retry-After": str(wait)})

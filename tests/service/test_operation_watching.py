@@ -1,0 +1,119 @@
+"""Health, readiness and metrics: what a balancer, an operator and Prometheus see."""
+
+from __future__ import annotations
+
+import json
+from collections.abc import Callable
+from typing import Any
+
+import pytest
+from fastapi import FastAPI
+from prometheus_client.parser import text_string_to_metric_families
+from sqlalchemy import text
+
+WHERE = "/exams?map=fernwood-heart-form"
+
+
+def figures(client: Any) -> dict[tuple[str, ...], float]:
+    """Every figure of the page, by name and label values; the text format is read by the library."""
+    page = client.get("/metrics")
+    assert page.status_code == 200
+    assert page.headers["content-type"].startswith("text/plain; version=0.0.4")
+    return {
+        (sample.name, *sample.labels.values()): sample.value
+        for family in text_string_to_metric_families(page.text)
+        for sample in family.samples
+    }
+
+
+def test_health_says_that_the_process_is_up(client: Any) -> None:
+    assert client.get("/health").json()["status"] == "up"
+
+
+def test_a_sound_service_is_ready_in_every_part(client: Any) -> None:
+    answer = client.get("/ready")
+    assert answer.status_code == 200
+    assert answer.json()["status"] == "ready"
+    assert {name: part["state"] for name, part in answer.json()["parts"].items()} == dict.fromkeys(
+        ("process", "database", "definitions", "deliveries", "disk"), "well"
+    )
+
+
+@pytest.mark.parametrize(
+    ("spoil", "part"),
+    [
+        (lambda state: setattr(state.readiness, "draining", True), "process"),
+        (lambda state: _change(state, "UPDATE schema_version SET version = 1"), "database"),
+        (lambda state: _change(state, "UPDATE schema_version SET version = 999"), "database"),
+        (lambda state: _change(state, "DROP TABLE outbox"), "deliveries"),
+        (lambda state: object.__setattr__(state.settings, "free_disk", 10**12), "disk"),
+    ],
+)
+def test_a_part_that_fails_is_named_with_its_reason(
+    application: FastAPI, client: Any, spoil: Callable[[Any], None], part: str
+) -> None:
+    spoil(application.state)
+    answer = client.get("/ready")
+    assert answer.status_code == 503
+    told = answer.json()["parts"]
+    assert told[part]["state"] == "failed"
+    assert told[part]["reason"]
+    assert "sqlite" not in answer.text, "an address may hold a password"
+
+
+def _change(state: Any, statement: str) -> None:
+    with state.readiness.engine.begin() as connection:
+        connection.execute(text(statement))
+
+
+def _delivery(state: Any, *, now_state: str, created: int) -> None:
+    insert = text(
+        "INSERT INTO outbox (destination, submission, exam, patient, state, attempts, created, due, worker,"
+        " lease, reason) VALUES ('record-system', (SELECT max(id) FROM submissions), 'x', 'p', :s, 1,"
+        " :c, 0, '', 0, '')"
+    )
+    with state.readiness.engine.begin() as connection:
+        connection.execute(insert, {"s": now_state, "c": created})
+
+
+def test_deliveries_that_want_a_person_are_a_warning(application: FastAPI, client: Any, example: Any) -> None:
+    client.post(WHERE, json=example())
+    moment = int(application.state.clock().timestamp() * 1000)
+    _delivery(application.state, now_state="waiting", created=moment)
+    assert client.get("/ready").json()["parts"]["deliveries"]["state"] == "well"
+    _delivery(application.state, now_state="waiting", created=moment - 16 * 60_000)
+    told = client.get("/ready")
+    assert told.status_code == 200
+    assert told.json()["parts"]["deliveries"]["state"] == "warning"
+    _delivery(application.state, now_state="failed", created=moment)
+    assert "failed for good" in client.get("/ready").json()["parts"]["deliveries"]["reason"]
+    found = figures(client)
+    assert found["fhirgallop_deliveries", "waiting"] == 2
+    assert found["fhirgallop_deliveries", "failed"] == 1
+    assert found["fhirgallop_delivery_age_seconds",] > 15 * 60
+
+
+def test_requests_are_counted_by_route_and_status(client: Any, example: Any) -> None:
+    client.post(WHERE, json=example())
+    client.post(WHERE, json={"nonsense": "F-20417"})
+    client.get("/maps/F-20417")
+    client.get("/F-20417")
+    found = figures(client)
+    assert found["fhirgallop_requests_total", "POST", "/exams", "200"] == 1
+    assert found["fhirgallop_requests_total", "POST", "/exams", "422"] == 1
+    assert found["fhirgallop_requests_total", "GET", "/maps/{name}", "404"] == 1
+    assert found["fhirgallop_requests_total", "GET", "(none)", "404"] == 1
+    assert found["fhirgallop_request_seconds_count", "/exams"] == 2
+    assert found["fhirgallop_ready", "database"] == 1
+    assert found["process_resident_memory_bytes",] > 0
+
+
+def test_no_label_is_of_a_senders_making(client: Any, example: Any) -> None:
+    client.post(WHERE, json=example())
+    client.post("/exams?map=F-20417", json=example())
+    client.get("/F-20417", headers={"X-Request-Id": "F-20417"})
+    client.request("F20417", "/health")
+    client.get("/rules/F-20417")
+    page = client.get("/metrics").text
+    assert "20417" not in page
+    assert json.dumps(example()["patient"]) not in page
