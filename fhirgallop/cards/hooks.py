@@ -1,33 +1,44 @@
 """A call of a CDS Hooks service: what is sent, checked and read.
 
-Source: CDS Hooks 2.0.1, "HTTP Request", "Prefetch Template", "FHIR Resource Access"; the library's
-definitions of patient-view and encounter-discharge. Members that are not known here, and extensions, are
-ignored. The access token that a client may send is not read: nothing is fetched.
+Source: CDS Hooks 2.0.1, "HTTP Request", "FHIR Resource Access"; the library's definitions of patient-view and
+encounter-discharge. Members that are not known here, and extensions, are ignored.
 """
 
 from __future__ import annotations
 
 import re
-from collections.abc import Iterator, Mapping
-from dataclasses import dataclass
+from collections.abc import Callable, Iterator, Mapping
+from dataclasses import dataclass, field
+from types import MappingProxyType
 from typing import Any, Final
 from urllib.parse import urlsplit
 
-from fhirgallop.cards.discovery import Service, Wanted
+from fhirgallop.cards.discovery import Service
+from fhirgallop.cards.prefetch import Prefetch, faults, read_prefetch
 from fhirgallop.outcome import Issue, has_errors
 
 MAX_TEXT: Final = 2000
 _UUID: Final = re.compile(r"[0-9A-Fa-f]{8}(?:-[0-9A-Fa-f]{4}){3}-[0-9A-Fa-f]{12}", re.ASCII)
 _ID: Final = re.compile(r"[A-Za-z0-9\-.]{1,64}", re.ASCII)  # FHIR R4 id
-_AUTHORISATION: Final = ("access_token", "token_type", "expires_in", "scope", "subject")
-# Members that only STU3 or DSTU2 resources have; R4 and later name them otherwise.
-_OLD_MEMBERS: Final[Mapping[str, tuple[str, ...]]] = {
-    "Observation": ("comment", "comments", "related", "context"),
-    "Condition": ("context", "dateRecorded"),
-    "Procedure": ("context", "notPerformed", "notDone"),
-    "DiagnosticReport": ("context", "codedDiagnosis"),
-    "Encounter": ("indication",),
-}
+_BEARER: Final = re.compile(r"[A-Za-z0-9\-._~+/]{1,8000}={0,2}", re.ASCII)  # RFC 6750, b64token
+_MAX_SCOPE: Final = 8000
+
+
+@dataclass(frozen=True, slots=True)
+class Authorisation:
+    """What a client lends for reading from its server; lives as long as the call, and is shown nowhere.
+
+    Attributes:
+        token: access token.
+        seconds: how long it lives.
+        scope: SMART scopes, separated by blanks.
+        patient: FHIR id that its patient scopes are meant for; empty when not told.
+    """
+
+    token: str = field(repr=False)
+    seconds: int
+    scope: str
+    patient: str
 
 
 @dataclass(frozen=True, slots=True)
@@ -42,8 +53,8 @@ class Call:
         encounter: FHIR id; empty when none.
         draft: the Bundle of a draft examination, where the hook brings one.
         record: the same as the clinic's own record, and `map_name`, the map that reads it.
-        prefetch: what was sent and can be used, by key.
-        missing: keys that were not sent, or not as asked for; what they would say stays unknown.
+        prefetch: the chart, as far as it was sent.
+        authorisation: for reading more of it; None where the client lends none.
     """
 
     instance: str
@@ -54,21 +65,24 @@ class Call:
     draft: Mapping[str, Any] | None
     record: Mapping[str, Any] | None
     map_name: str
-    prefetch: Mapping[str, Any]
-    missing: tuple[str, ...]
+    prefetch: Prefetch
+    authorisation: Authorisation | None
 
     @property
     def by_clinician(self) -> bool:
         """False when a patient or a relative looks: cards are for clinicians, and shown to no one else."""
         return self.user.startswith("Practitioner")
 
+    def faults(self, service: Service) -> list[Issue]:
+        """What keeps it from being evaluated, once nothing more can be fetched.
+
+        Issues with the code `incomplete` mean data that are needed and are unknown.
+        """
+        return list(faults(self.prefetch, service, self.patient, self.draft))
+
 
 def read_call(value: Any, service: Service) -> tuple[Call | None, list[Issue]]:
-    """A call of `service`, or None and everything that is wrong with it.
-
-    Issues with the code `incomplete` mean data that are needed and were not sent; they come alone, for a call
-    that is otherwise well formed.
-    """
+    """A call of `service`, or None and everything that is wrong with its form."""
     if not isinstance(value, dict):
         return None, [_fault("structure", "hook-body", "The body is not a JSON object; send one.")]
     issues = [*_envelope(value, service)]
@@ -82,12 +96,6 @@ def read_call(value: Any, service: Service) -> tuple[Call | None, list[Issue]]:
         issues.append(_fault("structure", "hook-prefetch", "prefetch is no object.", "prefetch"))
     if has_errors(issues):
         return None, issues
-    usable, missing = _prefetched(prefetch or {}, service)
-    issues += [_incomplete(key) for key in missing if service.prefetch[key].required]
-    issues += _old({**usable, **_drafted(context, service)})
-    issues += _same_patient(usable.get("patient"), context["patientId"])
-    if has_errors(issues):
-        return None, issues
     record = context.get("record")
     return (
         Call(
@@ -99,8 +107,8 @@ def read_call(value: Any, service: Service) -> tuple[Call | None, list[Issue]]:
             context.get("draftObservations") if service.takes_draft else None,
             record if service.takes_draft else None,
             context.get("map", "") if service.takes_draft else "",
-            usable,
-            tuple(missing),
+            read_prefetch(prefetch or {}, service),
+            _authorisation(value.get("fhirAuthorization")),
         ),
         issues,
     )
@@ -134,17 +142,37 @@ def _envelope(value: Mapping[str, Any], service: Service) -> Iterator[Issue]:
         words = "fhirAuthorization is no object."
         yield _fault("structure", "hook-authorization", words, "fhirAuthorization")
         return
-    for name in _AUTHORISATION:
+    for name, fits in _AUTHORISATION.items():
         if name not in given:
-            words = f"{name} is missing; send all of {', '.join(_AUTHORISATION)}."
+            if name == "patient":
+                continue
+            words = f"{name} is missing; send all of {', '.join(_AUTHORISATION)} (patient where it applies)."
             yield _fault("required", "hook-authorization", words, f"fhirAuthorization.{name}")
-    if "token_type" in given and given["token_type"] != "Bearer":  # noqa: S105 - the kind, not a token
-        words = "token_type is not Bearer."
-        yield _fault("value", "hook-authorization", words, "fhirAuthorization.token_type")
+        elif not fits(given[name]):
+            words = f"{name} is not what CDS Hooks says of it."
+            yield _fault("value", "hook-authorization", words, f"fhirAuthorization.{name}")
+
+
+def _authorisation(given: Mapping[str, Any] | None) -> Authorisation | None:
+    if given is None:
+        return None
+    return Authorisation(given["access_token"], given["expires_in"], given["scope"], given.get("patient", ""))
 
 
 def _short(value: Any) -> bool:
     return isinstance(value, str) and 0 < len(value) <= MAX_TEXT
+
+
+_AUTHORISATION: Final[Mapping[str, Callable[[Any], bool]]] = MappingProxyType(
+    {
+        "access_token": lambda value: isinstance(value, str) and bool(_BEARER.fullmatch(value)),
+        "token_type": lambda value: bool(value == "Bearer"),
+        "expires_in": lambda value: isinstance(value, int) and not isinstance(value, bool),
+        "scope": lambda value: isinstance(value, str) and len(value) <= _MAX_SCOPE,
+        "subject": _short,
+        "patient": lambda value: isinstance(value, str) and bool(_ID.fullmatch(value)),
+    }
+)
 
 
 def _is_address(value: Any) -> bool:
@@ -191,78 +219,3 @@ def _draft(context: Mapping[str, Any]) -> Iterator[Issue]:
     if record is not None and not _short(name):
         words = "A record needs map, the name of the template map that reads it."
         yield _fault("required", "hook-draft", words, "context.map")
-
-
-def _prefetched(prefetch: Mapping[str, Any], service: Service) -> tuple[dict[str, Any], list[str]]:
-    """What can be used, and the keys that were not sent as asked for.
-
-    null and an empty searchset say that there are no data; a key that is absent, an OperationOutcome (the
-    client could not fetch it) and a resource of another type say nothing.
-    """
-    usable: dict[str, Any] = {}
-    missing: list[str] = []
-    for key, wanted in service.prefetch.items():
-        if key not in prefetch:
-            missing.append(key)
-        elif prefetch[key] is None or _as_asked(prefetch[key], wanted):
-            usable[key] = prefetch[key]
-        else:
-            missing.append(key)
-    return usable, missing
-
-
-def _as_asked(value: Any, wanted: Wanted) -> bool:
-    if not isinstance(value, dict):
-        return False
-    kind = value.get("resourceType")
-    if wanted.is_read:
-        return bool(kind == wanted.type)
-    return kind == "Bundle" and value.get("type", "searchset") in ("searchset", "collection")
-
-
-def _incomplete(key: str) -> Issue:
-    words = (
-        f"The prefetch key {key} is needed and was not sent, or is not what its template asks for. Send it; "
-        "null or an empty searchset where there are no data. Nothing is fetched from fhirServer."
-    )
-    return Issue("error", "incomplete", "hook-prefetch-missing", words, field=f"prefetch.{key}")
-
-
-def _drafted(context: Mapping[str, Any], service: Service) -> dict[str, Any]:
-    return {"draftObservations": context.get("draftObservations")} if service.takes_draft else {}
-
-
-def _same_patient(patient: Any, id_: str) -> Iterator[Issue]:
-    if isinstance(patient, dict) and patient.get("id") != id_:
-        words = "The Patient in the prefetch is another one than context.patientId; nothing was evaluated."
-        yield _fault("business-rule", "hook-other-patient", words, "prefetch.patient")
-
-
-def _old(prefetch: Mapping[str, Any]) -> Iterator[Issue]:
-    """One issue a key whose resources are of an older FHIR: read as R4 they would say something else."""
-    for key, value in prefetch.items():
-        if any(_is_old(resource) for resource in _resources(value)):
-            words = f"The resources in {key} are of FHIR STU3 or DSTU2; send R4, R4B or R5."
-            yield Issue("error", "incomplete", "hook-old-fhir", words, field=key)
-
-
-def _resources(value: Any) -> Iterator[Mapping[str, Any]]:
-    if not isinstance(value, dict):
-        return
-    if value.get("resourceType") != "Bundle":
-        yield value
-        return
-    entries = value.get("entry")
-    for entry in entries if isinstance(entries, list) else ():
-        resource = entry.get("resource") if isinstance(entry, dict) else None
-        if isinstance(resource, dict):
-            yield resource
-
-
-def _is_old(resource: Mapping[str, Any]) -> bool:
-    kind = resource.get("resourceType")
-    members = _OLD_MEMBERS.get(kind, ()) if isinstance(kind, str) else ()
-    if any(member in resource for member in members):
-        return True
-    statuses = (resource.get("clinicalStatus"), resource.get("verificationStatus"))
-    return kind == "Condition" and any(isinstance(status, str) for status in statuses)

@@ -29,14 +29,6 @@ _WINDOW: Final = "encounter"
 _DAY: Final = 86_400
 # The clock of a client that writes a draft may be ahead of ours by a little.
 _AHEAD: Final = timedelta(minutes=10)
-_PARTS: Final = {
-    "exam": "earlier examinations",
-    "results": "results (tracings, imaging, laboratory)",
-    "reports": "reports",
-    "conditions": "the problem list",
-    "procedures": "procedures",
-    "devices": "devices",
-}
 _NOTED: Final = {
     "chart-part-missing": "a part or a page of what was asked for was not sent",
     "chart-other-patient": "something was sent that is not known to be this patient's; it was not used",
@@ -73,7 +65,7 @@ def hold(
     """
     log = Log()
     party = Party(call.patient, is_fhir_id=True)
-    chart = gather(call.prefetch, log)
+    chart = gather(call.prefetch.usable, log)
     drafted = gather(draft, log) if draft is not None else []
     base = _base(call, chart)
     whose = recognise(party, [*chart, *drafted], base, log)
@@ -145,9 +137,5 @@ def _of_draft(
 
 
 def _gaps(call: Call, issues: Iterable[Issue]) -> list[str]:
-    absent = [_PARTS[key] for key in call.missing if key in _PARTS]
     rules = {issue.rule for issue in issues}
-    return [
-        *([f"not sent: {', '.join(absent)}"] if absent else []),
-        *(words for rule, words in _NOTED.items() if rule in rules),
-    ]
+    return [*call.prefetch.gaps(), *(words for rule, words in _NOTED.items() if rule in rules)]

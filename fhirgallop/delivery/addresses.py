@@ -57,6 +57,36 @@ def origin_of(url: str) -> str | None:
     return f"{parts.scheme}://{named}" + (f":{port}" if port not in (None, _PORTS[parts.scheme]) else "")
 
 
+def base_of(url: str) -> str | None:
+    """A FHIR server's base in one spelling, without a closing slash; None for what is no plain base."""
+    origin = origin_of(url)
+    parts = urlsplit(url) if origin else None
+    if origin is None or parts is None or parts.query or "?" in url:
+        return None
+    path = parts.path.rstrip("/")
+    return f"{origin}{path}" if _is_straight(path) else None
+
+
+def is_below(base: str, url: str) -> bool:
+    """Whether an address lies on the server of `base` (as `base_of` gives it): the base itself or below it.
+
+    One that a server may read otherwise than it looks (dot segments, encoded dots or slashes) does not.
+    """
+    origin = origin_of(url)
+    parts = urlsplit(url) if origin else None
+    if origin is None or parts is None or not _is_straight(parts.path):
+        return False
+    return f"{origin}{parts.path}/".startswith(f"{base}/")
+
+
+def _is_straight(path: str) -> bool:
+    lower = path.lower()
+    if any(code in lower for code in ("%2e", "%2f", "%5c", "%25", ";")):
+        return False
+    *inner, last = path.split("/")[1:] or [""]
+    return not any(part in (".", "..", "") for part in inner) and last not in (".", "..")
+
+
 def _is_host(host: str, netloc: str) -> bool:
     if netloc.startswith("["):
         return _address(host) is not None and "%" not in host

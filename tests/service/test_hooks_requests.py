@@ -222,7 +222,7 @@ def test_ch_31_an_operation_outcome_means_that_the_client_failed(
     hooked: TestClient, hook_call: Make, prefetch: Make
 ) -> None:
     text = detail(hooked.post(VIEW, json=hook_call(prefetch=prefetch(procedures=FAILED))))
-    assert "not sent: procedures" in text
+    assert "not to be had by the record system: procedures" in text
 
 
 @pytest.mark.parametrize("nothing", [None, EMPTY])

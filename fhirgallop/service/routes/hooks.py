@@ -180,6 +180,8 @@ def _cards(request: Request, service: Service, value: Any) -> Response:
     if not call.by_clinician:
         return answers.json_answer({"cards": []})
     draft = _draft(request, call)
+    if has_errors(issues := call.faults(service)):
+        raise _refused(issues)
     cards, issues = _desk(request).answer(service, call, draft)
     if has_errors(issues):
         raise _refused(issues)
