@@ -6,7 +6,8 @@ What is wrong in *data* is never an exception but an `fhirgallop.outcome.Issue`.
     ├── AssetError        a file that is shipped with fhirgallop is missing or broken
     ├── SettingsError     a setting is missing, contradictory or out of range
     ├── MapError          a template map has faults and cannot be used (carries them all)
-    └── PackageError      a FHIR package cannot be used (names the file and the reason)
+    ├── PackageError      a FHIR package cannot be used (names the file and the reason)
+    └── BackupError       a backup, or the database to fill from it, cannot be used
 """
 
 from __future__ import annotations
@@ -32,6 +33,10 @@ class SettingsError(FhirgallopError):
 
 class PackageError(FhirgallopError):
     """A FHIR package cannot be used; the message names the file and the reason."""
+
+
+class BackupError(FhirgallopError):
+    """A backup, or the database to fill from it, cannot be used; the message says why and what to do."""
 
 
 class MapError(FhirgallopError):
