@@ -1,4 +1,4 @@
-"""Words of field names, from terminology/field-words.csv: idle ones, short forms, units, sides, properties."""
+"""Words of field names, from terminology/field-words.csv: idle ones, short forms, units, sides."""
 
 from __future__ import annotations
 
