@@ -26,6 +26,9 @@ def faults(settings: Settings) -> Iterator[str]:
     yield from _authority(settings)
     yield from _people(settings)
     yield from _deliveries(settings)
+    yield from _secure(
+        settings, "CDS_CHARTS", *(base for bases in settings.cds_charts.values() for base in bases)
+    )
     for origin in sorted(settings.cors_origins):
         if _origin(origin) != origin:
             yield f"{_P}CORS_ORIGINS: {origin!r} is no origin; write scheme://host, each one by name"

@@ -1,6 +1,6 @@
 """CDS Hooks: discovery, the services, feedback, and the pages that cards link to.
 
-Source: CDS Hooks 2.0.1. There is no authorisation yet: the service answers on this machine only.
+Source: CDS Hooks 2.0.1.
 """
 
 from __future__ import annotations
@@ -27,6 +27,7 @@ from fhirgallop.pipeline import process
 from fhirgallop.service import answers, requests
 from fhirgallop.service.auth.needs import needs
 from fhirgallop.service.examinations import BusyError
+from fhirgallop.service.fetching import Fetcher
 from fhirgallop.service.hook_desk import HookDesk
 from fhirgallop.settings import Settings
 
@@ -70,8 +71,8 @@ def list_services() -> Response:
     "/cds-services/{service_id}",
     summary="Call a CDS Hooks service",
     description=(
-        "The body is a CDS Hooks 2.0.1 request. Nothing is fetched: data that are needed and are not in the "
-        "prefetch are answered with 412."
+        "The body is a CDS Hooks 2.0.1 request. What is not in the prefetch is read from a fhirServer that is "
+        "listed here; data that are needed and cannot be had are answered with 412."
     ),
     openapi_extra=_BODY,
     dependencies=[Depends(needs(cds=True))],
@@ -180,6 +181,9 @@ def _cards(request: Request, service: Service, value: Any) -> Response:
     if not call.by_clinician:
         return answers.json_answer({"cards": []})
     draft = _draft(request, call)
+    fetcher: Fetcher | None = request.app.state.fetcher
+    if fetcher:
+        call = fetcher.complete(call, service, request.state.caller.name)
     if has_errors(issues := call.faults(service)):
         raise _refused(issues)
     cards, issues = _desk(request).answer(service, call, draft)
