@@ -64,6 +64,27 @@ class Settings(BaseSettings):
         le=100_000,
         description="Most examinations in one request; the command line has no such limit.",
     )
+    batch_body: int = Field(
+        64 * 1024 * 1024,
+        ge=1024,
+        le=512 * 1024 * 1024,
+        description="Largest body in bytes of a request with `Prefer: respond-async`.",
+    )
+    batch_records: int = Field(
+        100_000, ge=1, le=1_000_000, description="Most examinations in such a request."
+    )
+    batch_workers: int = Field(
+        1,
+        ge=0,
+        le=16,
+        description="Threads that code such requests; with 0 they wait for another process of the service.",
+    )
+    idempotency_hours: int = Field(
+        24,
+        ge=1,
+        le=720,
+        description="How long an answer is kept for a request that is sent again with its Idempotency-Key.",
+    )
     max_depth: int = Field(
         32, ge=4, le=200, description="Deepest nesting of objects and lists in a JSON record."
     )
@@ -82,6 +103,23 @@ class Settings(BaseSettings):
     )
     cards_shadow: bool = Field(
         default=False, description="Work every card out and log it by rule, and show none."
+    )
+    # what CDS Hooks calls may have read (service/fetching.py)
+    cds_charts: Mapping[str, tuple[str, ...]] = Field(
+        {},
+        description="FHIR bases that may be read for CDS Hooks calls that lack data, by the `iss` of the "
+        "client; under `*` for every client. None: nothing is ever fetched.",
+    )
+    chart_milliseconds: int = Field(
+        400, ge=50, le=5000, description="Time for all that one call has fetched; what is late stays unknown."
+    )
+    chart_authorities: Path | None = Field(
+        None, description="Certificates of the authorities trusted there (PEM), in place of the system's."
+    )
+    cds_system_actions: frozenset[str] = Field(
+        frozenset(),
+        description="CDS Hooks clients (`iss`) that asked for system actions: a Task to record today's "
+        "rhythm, instead of the suggestion of one.",
     )
 
     # how long what is kept (storage/retention.py)

@@ -18,14 +18,18 @@ from fhirgallop.outcome import Issue
 from fhirgallop.reasoning import rulebook
 from fhirgallop.service import answers
 from fhirgallop.service.auth.gate import Gate
+from fhirgallop.service.exam_desk import ExamDesk
 from fhirgallop.service.examinations import Examinations
+from fhirgallop.service.fetching import open_fetcher
 from fhirgallop.service.hook_desk import HookDesk, Manner
+from fhirgallop.service.keyed import KeyDesk
 from fhirgallop.service.operation import watch_over
 from fhirgallop.service.routes import about, exams, hooks, maps, validation, watching
 from fhirgallop.service.shelf import keep_versions, load_shelf
 from fhirgallop.settings import Settings
 from fhirgallop.storage.engine import open_database
 from fhirgallop.storage.hooks import HookStore
+from fhirgallop.storage.idempotency import Answers
 from fhirgallop.storage.maps import MapStore
 from fhirgallop.storage.submissions import Submissions
 from fhirgallop.version import VERSION
@@ -49,12 +53,15 @@ def create_app(settings: Settings, clock: Callable[[], datetime] = now) -> FastA
         SettingsError: maps or database cannot be used; the message says why.
     """
     shelf = load_shelf(settings.maps)  # before the database: what cannot start leaves nothing behind
+    fetcher = open_fetcher(settings)
     engine = open_database(settings.database)
     keep_versions(shelf, MapStore(engine), at=instant(clock()))
 
     @asynccontextmanager
     async def lifespan(_app: FastAPI) -> AsyncIterator[None]:
         yield
+        if fetcher:
+            fetcher.close()
         engine.dispose()
 
     app = FastAPI(
@@ -68,13 +75,19 @@ def create_app(settings: Settings, clock: Callable[[], datetime] = now) -> FastA
     app.state.settings = settings
     app.state.gate = Gate()
     app.state.shelf = {name: one.template for name, one in shelf.items()}
-    app.state.examinations = Examinations(Submissions(engine), clock)
+    policy = Policy(shadow=settings.cards_shadow)
+    keys = KeyDesk(Answers(engine), clock, settings.idempotency_hours)
     app.state.clock = clock
-    manner = Manner(Policy(shadow=settings.cards_shadow), settings.cards_critical, settings.pages.rstrip("/"))
+    manner = Manner(policy, settings.cards_critical, settings.pages.rstrip("/"))
     app.state.hooks = HookDesk(HookStore(engine), clock, rulebook.load(), manner)
+    app.state.fetcher = fetcher
     for router in (exams.router, hooks.router, validation.router, maps.router, about.router, watching.router):
         app.include_router(router)
     watch_over(app, engine, settings, clock)
+    app.state.exams = ExamDesk(
+        Examinations(Submissions(engine), clock), keys, clock, rulebook.load(), policy,
+        app.state.metrics.examination,
+    )  # fmt: skip
     app.exception_handler(answers.RefusalError)(_refused)
     app.exception_handler(RequestValidationError)(_invalid)
     app.exception_handler(HTTPException)(_plain)

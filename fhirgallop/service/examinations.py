@@ -1,12 +1,14 @@
-"""Codes an examination, keeps it, and tells a repetition from a change."""
+"""Codes an examination, keeps it with all that goes with it, and tells a repetition from a change."""
 
 from __future__ import annotations
 
 import hashlib
-from collections.abc import Callable
+from collections.abc import Callable, Sequence
 from dataclasses import dataclass, replace
 from datetime import datetime
 from typing import Any, Final
+
+from sqlalchemy import Connection
 
 from fhirgallop.codes import fhirjson
 from fhirgallop.exam.exam import Exam
@@ -17,8 +19,10 @@ from fhirgallop.observations.editions import Edition
 from fhirgallop.observations.identity import Identities
 from fhirgallop.outcome import Issue, has_errors, ordered
 from fhirgallop.pipeline import Result, finish, understand
-from fhirgallop.storage.keys import patient_key
-from fhirgallop.storage.submissions import Submission, Submissions
+from fhirgallop.service.fhir.coded import coded
+from fhirgallop.storage import outbox, resources
+from fhirgallop.storage.keys import number_key, patient_key
+from fhirgallop.storage.submissions import Also, Submission, Submissions
 
 _TRIES: Final = 5
 _SEEN_BEFORE: Final = Issue(
@@ -28,6 +32,13 @@ _SEEN_BEFORE: Final = Issue(
     "This content was received before and has been changed since; it takes the place of the newer one now. "
     "If an old message was only repeated, send the newer one again.",
 )
+_OTHER_PATIENT: Final = Issue(
+    "warning",
+    "conflict",
+    "exam-number-other-patient",
+    "An examination of this number stands under another patient, and stays as it is. If the patient was "
+    "corrected, send the earlier one again, under its own patient, as entered in error.",
+)
 
 
 class BusyError(Exception):
@@ -35,25 +46,63 @@ class BusyError(Exception):
 
 
 @dataclass(frozen=True, slots=True)
+class Wish:
+    """How an examination is to be coded."""
+
+    template: TemplateMap
+    edition: Edition
+    snomed: bool
+
+
+@dataclass(frozen=True, slots=True)
 class Coded:
-    """The result of one record, with the Bundle as it was kept."""
+    """The result of one record, with the Bundle as it is kept.
+
+    Attributes:
+        result: what the pipeline gave.
+        bundle: the Bundle's bytes; None when the record was refused.
+        patient: digest of the patient's identifier; empty when it was not understood whose it is.
+        at: the moment of coding, in milliseconds since 1970 (UTC).
+        repeated: True when this content is what is kept already.
+    """
 
     result: Result
     bundle: bytes | None
+    patient: str = ""
+    at: int = 0
+    repeated: bool = False
+
+
+# What else is to be kept in the transaction of a result; called before each try to keep it.
+Along = Callable[[Coded], Sequence[Also]]
+
+
+def nothing(_coded: Coded) -> Sequence[Also]:
+    """Nothing else is to be kept."""
+    return ()
 
 
 class Examinations:
     """Codes and keeps examinations.
 
     The same examination sent twice is answered with the very same Bundle; a changed one is given its earlier
-    Bundle, so that what changed is amended and what is gone is entered in error.
+    Bundle, so that what changed is amended and what is gone is entered in error. The examination's version,
+    its resources, its delivery and whatever a caller sends along are kept in one transaction.
     """
 
-    def __init__(self, store: Submissions, clock: Callable[[], datetime]) -> None:
+    def __init__(
+        self,
+        store: Submissions,
+        clock: Callable[[], datetime],
+        *,
+        delivered: tuple[Edition, bool] | None = None,
+    ) -> None:
+        """`delivered` is the edition, and whether with SNOMED CT, that the record system gets; None: none."""
         self._store = store
         self._clock = clock
+        self._delivered = delivered
 
-    def code(self, record: LocalRecord, template: TemplateMap, edition: Edition, *, snomed: bool) -> Coded:
+    def code(self, record: LocalRecord, wish: Wish, along: Along = nothing) -> Coded:
         """One record through the pipeline and into the store.
 
         Raises:
@@ -61,33 +110,82 @@ class Examinations:
             StorageError: the database failed; nothing of this record was kept.
         """
         now = self._clock()
-        understood = understand(record, template, now)
-        if understood.exam is None or has_errors(understood.issues):
-            return Coded(understood, None)
-        exam = Identities(understood.exam).of("examination")
-        meant = _fingerprint(understood.exam)
-        for _ in range(_TRIES):
-            before = self._store.latest(exam, edition, snomed=snomed)
+        at = int(now.timestamp() * 1000)
+        understood = understand(record, wish.template, now)
+        exam = understood.exam
+        patient = patient_key(exam.patient.system, exam.patient.value) if exam else ""
+        if exam is None or has_errors(understood.issues):
+            return self._beside(0, Coded(understood, None, patient, at), along)
+        number = number_key(exam.identifier_system or wish.template.name, exam.identifier)
+        if exam.status != "entered-in-error" and self._stands_elsewhere(number, patient):
+            understood = replace(understood, issues=tuple(ordered([*understood.issues, _OTHER_PATIENT])))
+        identity, meant = Identities(exam).of("examination"), _fingerprint(exam)
+        for attempt in range(_TRIES):
+            before = self._store.latest(identity, wish.edition, snomed=wish.snomed)
             if before and before.record_hash == meant:
-                return Coded(understood, before.bundle)
-            earlier: dict[str, Any] | None = fhirjson.read(before.bundle)[0] if before else None
-            result = finish(
-                understood, record.form, recorded=now, edition=edition, snomed=snomed, earlier=earlier
-            )
-            if result.bundle is None:
-                return Coded(result, None)
-            if before and self._store.has(exam, edition, meant, snomed=snomed):
+                again = Coded(understood, before.bundle, patient, at, repeated=True)
+                return self._beside(before.id, again, along)
+            result = self._finished(understood, record.form, wish, now, before)
+            if (bundle := result.bundle) is None:
+                return self._beside(0, Coded(result, None, patient, at), along)
+            if before and self._store.has(identity, wish.edition, meant, snomed=wish.snomed):
                 result = replace(result, issues=tuple(ordered([*result.issues, _SEEN_BEFORE])))
-            text = fhirjson.write(result.bundle)
-            version = before.version + 1 if before else 1
+            written = coded(bundle, wish.edition)
             row = Submission(
-                exam, edition, snomed, version, template.name, template.version, meant,
-                patient_key(understood.exam.patient.system, understood.exam.patient.value),
-                instant(now), text,
+                identity, wish.edition, wish.snomed, before.version + 1 if before else 1,
+                wish.template.name, wish.template.version, meant, patient, instant(now), written.text, number,
             )  # fmt: skip
-            if self._store.add(row):
-                return Coded(result, text)
+            done = Coded(result, written.text, patient, at)
+            kept = _resources(written.versions, at, fresh=not (before or attempt))
+            if self._store.add(row, kept, *self._deliveries(row, wish, at), *along(done)):
+                return done
         raise BusyError
+
+    @staticmethod
+    def _finished(
+        understood: Result, form: str, wish: Wish, now: datetime, before: Submission | None
+    ) -> Result:
+        earlier: dict[str, Any] | None = fhirjson.read(before.bundle)[0] if before else None
+        return finish(
+            understood, form, recorded=now, edition=wish.edition, snomed=wish.snomed, earlier=earlier
+        )
+
+    def _beside(self, row: int, done: Coded, along: Along) -> Coded:
+        """Keeps what goes along with a result that makes no new version."""
+        for _ in range(_TRIES):
+            also = along(done)
+            if not also or self._store.beside(row, *also):
+                return done
+        raise BusyError
+
+    def _deliveries(self, row: Submission, wish: Wish, at: int) -> Sequence[Also]:
+        if self._delivered != (wish.edition, wish.snomed):
+            return ()
+
+        def send(connection: Connection, submission: int) -> None:
+            outbox.enqueue(
+                connection, destination=outbox.RECORD_SYSTEM, submission=submission, exam=row.exam,
+                patient=row.patient, at=at,
+            )  # fmt: skip
+
+        return (send,)
+
+    def _stands_elsewhere(self, number: str, patient: str) -> bool:
+        """Whether an examination of this number stands, not taken back, under another patient."""
+        return any(map(_stands, self._store.numbered(number, other_than=patient)))
+
+
+def _resources(versions: Sequence[resources.NewVersion], at: int, *, fresh: bool) -> Also:
+    def keep(connection: Connection, submission: int) -> None:
+        resources.add_versions(connection, versions, at=at, submission=submission, fresh=fresh)
+
+    return keep
+
+
+def _stands(bundle: bytes) -> bool:
+    entries = fhirjson.read(bundle)[0]["entry"]
+    statuses = {entry["resource"].get("status", "entered-in-error") for entry in entries}
+    return statuses != {"entered-in-error"}
 
 
 def _fingerprint(exam: Exam) -> str:

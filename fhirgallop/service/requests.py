@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import asyncio
 import re
-from collections.abc import Iterable
+from collections.abc import Iterable, Sequence
 from typing import Final
 
 from starlette.requests import ClientDisconnect, Request
@@ -51,7 +51,15 @@ def only_known(request: Request, known: Iterable[str]) -> None:
 
 def content_type(request: Request) -> str:
     """The media type of the body: one that a reader exists for."""
-    given = request.headers.get("content-type", "").partition(";")[0].strip().lower()
+    return known_type(request.headers.get("content-type", "").partition(";")[0].strip().lower())
+
+
+def known_type(given: str) -> str:
+    """A media type that a reader exists for; plain text is HL7 v2.
+
+    Raises:
+        RefusalError: 415, there is no reader for it.
+    """
     if given == "text/plain":
         given = "application/hl7-v2"
     if given not in BY_CONTENT_TYPE:
@@ -61,20 +69,32 @@ def content_type(request: Request) -> str:
     return given
 
 
-def wants_fhir(request: Request) -> bool:
-    """True when the bare Bundle is asked for, False for the envelope around it."""
+def accepted(request: Request, offered: Sequence[str]) -> str:
+    """The media type to answer in: of those offered the one liked best, the first where all are.
+
+    Raises:
+        RefusalError: 406, none of them is acceptable.
+
+    Source: RFC 9110, section 12.5.1.
+    """
     wanted: list[tuple[float, str]] = []
     for part in request.headers.get("accept", "*/*").lower().split(","):
         kind, *parameters = (piece.strip() for piece in part.split(";"))
         given = [found[1] for piece in parameters if (found := _QUALITY.fullmatch(piece))]
         wanted.append((float(given[0]) if given else 1.0, kind))
     for quality, kind in sorted(wanted, key=lambda one: -one[0]):
-        if quality and kind == FHIR_JSON:
-            return True
-        if quality and (kind == PLAIN_JSON or kind in _ANY or not kind):
-            return False
-    text = f"Nothing acceptable can be answered; ask for {PLAIN_JSON} or {FHIR_JSON}."
+        if quality and kind in offered:
+            return kind
+        if quality and (kind in _ANY or not kind):
+            return offered[0]
+    text = f"Nothing acceptable can be answered; ask for {' or '.join(offered)}."
     raise refusal(406, "not-supported", "http-accept", text)
+
+
+def prefers(request: Request, what: str) -> bool:
+    """Whether a preference without a value, such as `respond-async`, was stated (RFC 7240)."""
+    stated = ",".join(request.headers.getlist("prefer")).lower().replace(";", ",").split(",")
+    return what in (one.strip() for one in stated)
 
 
 def fhir_content(request: Request) -> None:

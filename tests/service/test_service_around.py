@@ -66,7 +66,7 @@ def test_what_breaks_inside_is_an_outcome_and_tells_nothing(
     def broken(*_: Any, **__: Any) -> None:
         raise ZeroDivisionError("F-20417")
 
-    application.state.examinations.code = broken
+    application.state.exams.one = broken
     with caplog.at_level(logging.DEBUG):
         answer = client.post(WHERE, json=example())
     assert outcome(answer) == (500, "exception", "service-broke")
@@ -83,12 +83,15 @@ def test_a_failing_database_is_told_and_the_rest_of_a_batch_does_not_wait_for_it
         def latest(self, *_: Any, **__: Any) -> None:
             return None
 
-        def add(self, _: Any) -> bool:
+        def numbered(self, *_: Any, **__: Any) -> list[bytes]:
+            return []
+
+        def add(self, *_: Any) -> bool:
             nonlocal tried
             tried += 1
             raise StorageError("OperationalError")
 
-    application.state.examinations._store = Full()
+    application.state.exams._examinations._store = Full()
     answer = client.post(WHERE, json=example())
     assert outcome(answer) == (503, "transient", "storage-failed")
     assert answer.headers["retry-after"]

@@ -14,9 +14,9 @@ from sqlalchemy import Engine, select
 from fhirgallop import api
 from fhirgallop.codes import fhirjson
 from fhirgallop.intake.record import LocalRecord
-from fhirgallop.service.examinations import BusyError, Examinations
+from fhirgallop.service.examinations import BusyError, Examinations, Wish
 from fhirgallop.storage.engine import open_database
-from fhirgallop.storage.submissions import Submission, Submissions
+from fhirgallop.storage.submissions import Also, Submission, Submissions
 from fhirgallop.storage.tables import submissions
 
 
@@ -46,7 +46,7 @@ def test_changes_from_many_sides_become_versions_one_after_the_other(
     desk = Examinations(Submissions(engine), now)
     records = [record_of(example(vitals={"hr": rate}), tmp_path) for rate in (70, 71, 72, 73)]
     with ThreadPoolExecutor(4) as pool:
-        coded = list(pool.map(lambda record: desk.code(record, template, "R4", snomed=True), records))
+        coded = list(pool.map(lambda record: desk.code(record, Wish(template, "R4", snomed=True)), records))
     with engine.connect() as connection:
         rows = connection.execute(select(submissions.c.version, submissions.c.bundle)).all()
     assert sorted(row.version for row in rows) == [1, 2, 3, 4]
@@ -59,7 +59,7 @@ def test_a_name_that_looks_alike_is_not_the_same_patient(
     template = api.read_map(root / "examples/informatician/fernwood-heart-form.yaml")
     desk = Examinations(Submissions(engine), now)
     for number in ("F-1", "F-2"):
-        desk.code(record_of(example(patient={"number": number}), tmp_path), template, "R4", snomed=True)
+        desk.code(record_of(example(patient={"number": number}), tmp_path), Wish(template, "R4", snomed=True))
     with engine.connect() as connection:
         assert len(set(connection.scalars(select(submissions.c.exam)))) == 2
 
@@ -68,7 +68,8 @@ def test_what_is_kept_beside_the_bundle_does_not_tell_the_patient(
     engine: Engine, example: Any, root: Path, tmp_path: Path
 ) -> None:
     template = api.read_map(root / "examples/informatician/fernwood-heart-form.yaml")
-    Examinations(Submissions(engine), now).code(record_of(example(), tmp_path), template, "R4", snomed=True)
+    wish = Wish(template, "R4", snomed=True)
+    Examinations(Submissions(engine), now).code(record_of(example(), tmp_path), wish)
     with engine.connect() as connection:
         row = dict(connection.execute(select(submissions)).one()._mapping)
     row.pop("bundle")
@@ -84,12 +85,15 @@ def test_endless_changes_by_others_are_given_up(example: Any, root: Path, tmp_pa
         def latest(self, exam: str, edition: str, *, snomed: bool) -> Submission | None:
             return None
 
-        def add(self, submission: Submission) -> bool:
+        def numbered(self, number: str, *, other_than: str) -> list[bytes]:
+            return []
+
+        def add(self, submission: Submission, *also: Also) -> bool:
             self.tries += 1
             return False
 
     store = Contested()
     template = api.read_map(root / "examples/informatician/fernwood-heart-form.yaml")
     with pytest.raises(BusyError):
-        Examinations(store, now).code(record_of(example(), tmp_path), template, "R4", snomed=True)
+        Examinations(store, now).code(record_of(example(), tmp_path), Wish(template, "R4", snomed=True))
     assert 1 < store.tries < 10

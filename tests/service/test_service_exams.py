@@ -30,7 +30,7 @@ def test_one_record_is_answered_with_bundle_outcome_and_what_was_left(client: An
     assert answer.status_code == 200
     assert answer.headers["content-type"] == "application/json"
     told = answer.json()
-    assert list(told) == ["bundle", "outcome", "unread", "unknown"]
+    assert list(told) == ["bundle", "outcome", "review", "unread", "unknown"]
     assert (told["bundle"]["resourceType"], told["bundle"]["type"]) == ("Bundle", "transaction")
     assert told["unread"] == ["shoe"]
     assert [i["severity"] for i in told["outcome"]["issue"]] == ["warning"]

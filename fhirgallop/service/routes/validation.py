@@ -74,7 +74,9 @@ async def validate_one_type(
 
 async def _judged(request: Request, edition: EditionPath, profile: str | None, wanted: str) -> Response:
     requests.only_known(request, ("profile",))
-    requests.wants_fhir(request)  # refuses who takes no JSON back; the answer is FHIR either way
+    requests.accepted(
+        request, (answers.FHIR_JSON, answers.PLAIN_JSON)
+    )  # refuses who takes no JSON back; the answer is FHIR either way
     requests.fhir_content(request)
     settings: Settings = request.app.state.settings
     body = await requests.body(request, settings.max_body)
