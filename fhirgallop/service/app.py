@@ -17,11 +17,12 @@ from fhirgallop.observations.bundle import instant
 from fhirgallop.outcome import Issue
 from fhirgallop.reasoning import rulebook
 from fhirgallop.service import answers
-from fhirgallop.service.auth.gate import Gate
+from fhirgallop.service.auth.opening import open_gate
 from fhirgallop.service.exam_desk import ExamDesk
 from fhirgallop.service.examinations import Examinations
 from fhirgallop.service.fetching import open_fetcher
 from fhirgallop.service.hook_desk import HookDesk, Manner
+from fhirgallop.service.housekeeping import house_kept, keeping
 from fhirgallop.service.keyed import KeyDesk
 from fhirgallop.service.operation import watch_over
 from fhirgallop.service.routes import about, exams, hooks, maps, validation, watching
@@ -59,7 +60,8 @@ def create_app(settings: Settings, clock: Callable[[], datetime] = now) -> FastA
 
     @asynccontextmanager
     async def lifespan(_app: FastAPI) -> AsyncIterator[None]:
-        yield
+        async with house_kept(engine, keeping(settings), clock):
+            yield
         if fetcher:
             fetcher.close()
         engine.dispose()
@@ -73,7 +75,7 @@ def create_app(settings: Settings, clock: Callable[[], datetime] = now) -> FastA
         lifespan=lifespan,
     )
     app.state.settings = settings
-    app.state.gate = Gate()
+    app.state.gate, app.state.sign_in = open_gate(settings, engine, clock)
     app.state.shelf = {name: one.template for name, one in shelf.items()}
     policy = Policy(shadow=settings.cards_shadow)
     keys = KeyDesk(Answers(engine), clock, settings.idempotency_hours)
