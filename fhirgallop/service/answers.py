@@ -18,7 +18,8 @@ SAFE_HEADERS: Final = {
     "Cache-Control": "no-store",
     "X-Content-Type-Options": "nosniff",
     "Referrer-Policy": "no-referrer",
-    "Content-Security-Policy": "default-src 'none'; style-src 'self'; frame-ancestors 'none'",
+    "Content-Security-Policy": "default-src 'none'; style-src 'self'; frame-ancestors 'none'; "
+    "base-uri 'none'; form-action 'self'",
 }
 
 

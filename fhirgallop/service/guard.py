@@ -8,7 +8,6 @@ import re
 import time
 from collections.abc import Callable
 from typing import Any, Final
-from urllib.parse import urlsplit
 
 import structlog
 from starlette.requests import Request
@@ -18,6 +17,7 @@ from starlette.types import ASGIApp, Message, Receive, Scope, Send
 from fhirgallop.outcome import Issue
 from fhirgallop.service import answers
 from fhirgallop.service.audit import Auditor
+from fhirgallop.service.auth import origins
 from fhirgallop.service.auth.caller import Caller
 from fhirgallop.service.limits import Limits
 from fhirgallop.service.logging import place
@@ -67,7 +67,7 @@ class Guard:
 
     async def _answer(self, visit: _Visit) -> None:
         request = visit.request
-        refused = _misled(request) or _too_much(request)
+        refused = origins.refusal(request) or _too_much(request)
         if refused is not None:
             await visit.say(refused)
             return
@@ -122,6 +122,7 @@ class _Visit:
             headers = message["headers"] = list(message.get("headers", ()))
             there = {name.lower() for name, _ in headers}
             headers += [pair for pair in _SAFE if pair[0] not in there]
+            headers += origins.headers(self.request)
             headers.append((REQUEST_ID, self.id.encode()))
         await self._send(message)
 
@@ -151,31 +152,6 @@ def _too_much(request: Request) -> Response | None:
     limits: Limits = request.app.state.limits
     refused = limits.refusal(request.client.host if request.client else "")
     return answers.outcome_answer(refused.status, refused.issues, refused.headers) if refused else None
-
-
-def _misled(request: Request) -> Response | None:
-    """A refusal where a page of another site speaks through somebody's browser.
-
-    There is no sign-in yet, so that every program of this machine may ask; a browser that was led here by a
-    foreign page, or by a foreign name that points to this machine, may not.
-    """
-    host = request.headers.get("host", "")
-    if _name(f"//{host}") not in request.app.state.settings.names:
-        text = "The service is not known by this name; call it by one of those in its settings."
-        return answers.outcome_answer(421, [Issue("error", "forbidden", "http-host", text)])
-    origin = request.headers.get("origin")
-    foreign = origin is not None and origin.partition("://")[2] != host
-    if foreign or request.headers.get("sec-fetch-site") in ("cross-site", "same-site"):
-        text = "Pages of other sites may not use this service."
-        return answers.outcome_answer(403, [Issue("error", "forbidden", "http-origin", text)])
-    return None
-
-
-def _name(address: str) -> str | None:
-    try:
-        return urlsplit(address).hostname
-    except ValueError:
-        return None
 
 
 def _broken(error: Exception) -> Response:
