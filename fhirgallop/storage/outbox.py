@@ -21,11 +21,11 @@ from sqlalchemy import (
     exists,
     func,
     insert,
-    or_,
     select,
     update,
 )
 from sqlalchemy.exc import IntegrityError
+from sqlalchemy.sql.selectable import NamedFromClause
 
 from fhirgallop.storage.submissions import told
 from fhirgallop.storage.tables import destinations, outbox, submissions
@@ -302,19 +302,13 @@ class Outbox:
     def _taken(self, worker: str, now: int, until: int, *, probe: bool) -> Any:
         """One statement, so that two workers cannot take the same row; PostgreSQL passes over locked rows."""
         before = outbox.alias("before")
-        same_exam = and_(before.c.state == "failed", before.c.exam == outbox.c.exam)
-        earlier = exists().where(
-            before.c.patient == outbox.c.patient,
-            before.c.state.in_((*_OPEN, "failed")),
-            before.c.destination == outbox.c.destination,
-            before.c.id < outbox.c.id,
-            or_(before.c.state != "failed", same_exam),
-        )
+        # one that is held back itself holds back nobody
+        first = ~exists().where(_earlier(before, outbox), before.c.state.in_(_OPEN), ~_is_held(before))
         order = (outbox.c.due, outbox.c.id)
         chosen = (
             select(outbox.c.id)
             .where(outbox.c.state == "waiting", outbox.c.due <= now)
-            .where(outbox.c.destination == self._destination, ~earlier)
+            .where(outbox.c.destination == self._destination, first, ~_is_held(outbox))
             .order_by(*((outbox.c.attempts, *order) if probe else order))
             .limit(1)
             .with_for_update(skip_locked=True)
@@ -337,6 +331,19 @@ class Outbox:
         until = rest.until(failures)
         later = case((destinations.c.open_until > until, destinations.c.open_until), else_=until)
         connection.execute(update(destinations).where(self._own()).values(open_until=later))
+
+
+def _earlier(one: NamedFromClause, other: NamedFromClause) -> ColumnElement[bool]:
+    """Of two deliveries of the same patient, that one was noted first."""
+    return and_(
+        one.c.patient == other.c.patient, one.c.destination == other.c.destination, one.c.id < other.c.id
+    )
+
+
+def _is_held(row: NamedFromClause) -> ColumnElement[bool]:
+    """Whether an earlier version of the same examination has failed."""
+    stuck = outbox.alias(f"stuck_before_{row.name}")
+    return exists().where(_earlier(stuck, row), stuck.c.state == "failed", stuck.c.exam == row.c.exam)
 
 
 _SHOWN: Final = tuple(outbox.c[name] for name in Delivery.__dataclass_fields__)
