@@ -86,6 +86,8 @@ def _authority(settings: Settings) -> Iterator[str]:
         )
     if settings.authority_introspection and not (settings.authority_client and settings.authority_secret):
         yield f"{_P}AUTHORITY_INTROSPECTION: it needs {_P}AUTHORITY_CLIENT and {_P}AUTHORITY_SECRET"
+    if not settings.authority_tokens:
+        yield f"{_P}AUTHORITY_TOKENS: set it; clients look up here where to get a token"
     keys = [settings.authority_keys] if "://" in settings.authority_keys else []
     yield from _secure(settings, "AUTHORITY_KEYS", *keys)
     yield from _secure(settings, "AUTHORITY_INTROSPECTION", settings.authority_introspection)

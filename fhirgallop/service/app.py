@@ -13,19 +13,22 @@ from starlette.exceptions import HTTPException
 from starlette.responses import Response
 
 from fhirgallop.cards.policy import Policy
+from fhirgallop.delivery.dispatch import open_dispatch
 from fhirgallop.observations.bundle import instant
 from fhirgallop.outcome import Issue
 from fhirgallop.reasoning import rulebook
 from fhirgallop.service import answers
-from fhirgallop.service.auth.opening import open_gate
+from fhirgallop.service.auth.opening import open_gate, public_keys
+from fhirgallop.service.delivering import delivering
 from fhirgallop.service.exam_desk import ExamDesk
 from fhirgallop.service.examinations import Examinations
 from fhirgallop.service.fetching import open_fetcher
+from fhirgallop.service.fhir.opening import open_fhir
 from fhirgallop.service.hook_desk import HookDesk, Manner
 from fhirgallop.service.housekeeping import house_kept, keeping
 from fhirgallop.service.keyed import KeyDesk
 from fhirgallop.service.operation import watch_over
-from fhirgallop.service.routes import about, exams, hooks, maps, validation, watching
+from fhirgallop.service.routes import about, exams, hooks, maps, sign_in, validation, watching, well_known
 from fhirgallop.service.shelf import keep_versions, load_shelf
 from fhirgallop.settings import Settings
 from fhirgallop.storage.engine import open_database
@@ -56,11 +59,15 @@ def create_app(settings: Settings, clock: Callable[[], datetime] = now) -> FastA
     shelf = load_shelf(settings.maps)  # before the database: what cannot start leaves nothing behind
     fetcher = open_fetcher(settings)
     engine = open_database(settings.database)
+    dispatch = open_dispatch(settings, engine, clock, threads=settings.delivery_workers)
     keep_versions(shelf, MapStore(engine), at=instant(clock()))
 
     @asynccontextmanager
     async def lifespan(_app: FastAPI) -> AsyncIterator[None]:
-        async with house_kept(engine, keeping(settings), clock):
+        async with (
+            house_kept(engine, keeping(settings), clock),
+            delivering(dispatch, settings.finish_seconds),
+        ):
             yield
         if fetcher:
             fetcher.close()
@@ -76,6 +83,7 @@ def create_app(settings: Settings, clock: Callable[[], datetime] = now) -> FastA
     )
     app.state.settings = settings
     app.state.gate, app.state.sign_in = open_gate(settings, engine, clock)
+    app.state.public_keys = public_keys(settings)
     app.state.shelf = {name: one.template for name, one in shelf.items()}
     policy = Policy(shadow=settings.cards_shadow)
     keys = KeyDesk(Answers(engine), clock, settings.idempotency_hours)
@@ -83,11 +91,25 @@ def create_app(settings: Settings, clock: Callable[[], datetime] = now) -> FastA
     manner = Manner(policy, settings.cards_critical, settings.pages.rstrip("/"))
     app.state.hooks = HookDesk(HookStore(engine), clock, rulebook.load(), manner)
     app.state.fetcher = fetcher
-    for router in (exams.router, hooks.router, validation.router, maps.router, about.router, watching.router):
+    app.state.dispatch = dispatch
+    for router in (
+        exams.router,
+        hooks.router,
+        validation.router,
+        maps.router,
+        about.router,
+        watching.router,
+        well_known.router,
+        sign_in.router,
+    ):
         app.include_router(router)
+    open_fhir(app, engine, clock)
     watch_over(app, engine, settings, clock)
     app.state.exams = ExamDesk(
-        Examinations(Submissions(engine), clock), keys, clock, rulebook.load(), policy,
+        Examinations(
+            Submissions(engine), clock, delivered=(settings.edition, settings.snomed) if dispatch else None
+        ),
+        keys, clock, rulebook.load(), policy,
         app.state.metrics.examination,
     )  # fmt: skip
     app.exception_handler(answers.RefusalError)(_refused)

@@ -112,6 +112,8 @@ class SignIn:
             TokenError: nobody, or somebody without a role here.
             UnreachableError: the provider does not answer as it should.
         """
+        if not secret:
+            raise TokenError("no cookie")
         state = answer.get("state", "")
         if not hmac.compare_digest(state.encode("utf-8", "replace"), _derived(secret, "state").encode()):
             raise TokenError("state")

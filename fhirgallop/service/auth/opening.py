@@ -13,6 +13,7 @@ from sqlalchemy import Engine
 
 from fhirgallop.delivery.addresses import origin_of
 from fhirgallop.delivery.client import Client, trust
+from fhirgallop.delivery.keys import public_set, read_keys
 from fhirgallop.errors import SettingsError
 from fhirgallop.service.auth.access import AccessTokens, Authority, OpaqueTokens, SignedTokens, Teller
 from fhirgallop.service.auth.admin import Administrators
@@ -46,7 +47,7 @@ class _Site:
             timeout=_SECONDS,
             most_bytes=_MOST_BYTES,
             private=given.private_network or given.loopback_http,
-            verify=trust(given.chart_authorities),
+            verify=trust(given.trusted),
         )
 
     def keys(self, *places: str) -> Keys:
@@ -120,6 +121,15 @@ def _sign_in(site: _Site, address: str) -> SignIn | None:
         skew=given.clock_skew,
     )
     return SignIn(provider, site.client(given.sign_in), site.keys(given.sign_in), site.clock)
+
+
+def public_keys(settings: Settings) -> bytes:
+    """Our own public keys, as a key set; an empty one where we sign in nowhere.
+
+    Raises:
+        SettingsError: the file with the private ones cannot be used.
+    """
+    return public_set(read_keys(settings.deliver_key) if settings.deliver_key else ())
 
 
 def _secret(path: Path | None) -> str:
