@@ -113,9 +113,6 @@ class Settings(BaseSettings):
     chart_milliseconds: int = Field(
         400, ge=50, le=5000, description="Time for all that one call has fetched; what is late stays unknown."
     )
-    chart_authorities: Path | None = Field(
-        None, description="Certificates of the authorities trusted there (PEM), in place of the system's."
-    )
     cds_system_actions: frozenset[str] = Field(
         frozenset(),
         description="CDS Hooks clients (`iss`) that asked for system actions: a Task to record today's "
@@ -204,6 +201,11 @@ class Settings(BaseSettings):
     cors_origins: frozenset[str] = Field(
         frozenset(), description="Origins of web pages that may call from a browser (https://ehr.example)."
     )
+    trusted: Path | None = Field(
+        None,
+        description="Certificates of the authorities that are trusted for every outgoing connection "
+        "(PEM file), in place of the system's.",
+    )
     private_network: bool = Field(
         default=False,
         description="Listed addresses of authorities, charts and receivers may lie in a private network.",
@@ -232,9 +234,6 @@ class Settings(BaseSettings):
         "system/Observation.cus system/DiagnosticReport.cus system/Provenance.cs",
         max_length=500,
         description="Scopes that are asked for.",
-    )
-    deliver_authorities: Path | None = Field(
-        None, description="Certificates of the authorities trusted there (PEM), in place of the system's."
     )
     delivery_workers: int = Field(
         1,

@@ -48,6 +48,6 @@ def client_for(place: Destination, settings: Settings, threads: int) -> Client:
         timeout=settings.delivery_timeout,
         most_bytes=_MOST_ANSWERED,
         private=settings.private_network or settings.loopback_http,
-        verify=trust(settings.deliver_authorities),
+        verify=trust(settings.trusted),
         connections=threads + 1,
     )

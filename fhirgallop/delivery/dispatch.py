@@ -1,4 +1,4 @@
-"""Puts delivery together from the settings: who sends to whom, and the keys that we publish."""
+"""Puts delivery together from the settings: who sends, to whom, and how failures are borne."""
 
 from __future__ import annotations
 
@@ -15,7 +15,7 @@ from sqlalchemy import Engine
 from fhirgallop.delivery.auth import Access, Identity
 from fhirgallop.delivery.client import Client
 from fhirgallop.delivery.destination import Destination, client_for, destination
-from fhirgallop.delivery.keys import SigningKey, public_set, read_keys
+from fhirgallop.delivery.keys import SigningKey, read_keys
 from fhirgallop.delivery.patience import Chance, Patience
 from fhirgallop.delivery.post import Post
 from fhirgallop.delivery.worker import Way, Workers
@@ -30,12 +30,10 @@ class Dispatch:
     Attributes:
         workers: threads of this process, not started yet; there may be none.
         client: closes its connections when the workers have stopped.
-        keys: our public keys, to be published as they are; empty where we have none.
     """
 
     workers: Workers
     client: Client
-    keys: bytes
 
     def stop(self, within: float) -> bool:
         """Stops the workers; False when some were not done in so many seconds."""
@@ -75,7 +73,7 @@ def open_dispatch(
     )
     host = f"{socket.gethostname()[:24]}-{os.getpid()}"
     workers = Workers(way, [f"{host}-{n}-{new_id()[:8]}" for n in range(threads)])
-    return Dispatch(workers, client, public_set(keys) if keys else b"")
+    return Dispatch(workers, client)
 
 
 def patience(settings: Settings) -> Patience:
