@@ -36,7 +36,7 @@ def status(database: Database = None) -> None:
     from fhirgallop.storage import backup  # noqa: PLC0415 - heavy; --help stays quick
     from fhirgallop.storage.engine import version_of  # noqa: PLC0415
 
-    with _opened(database) as engine:
+    with opened(database) as engine:
         typer.echo(f"tables of version {version_of(engine)}, {engine.dialect.name}")
         _print(backup.count(engine))
 
@@ -53,7 +53,7 @@ def upgrade(database: Database = None) -> None:
     from fhirgallop.storage.retention import clear_away  # noqa: PLC0415
     from fhirgallop.storage.tables import SCHEMA_VERSION  # noqa: PLC0415
 
-    with _opened(database, today=False) as engine:
+    with opened(database, today=False) as engine:
         found = carrying.upgrade(engine, _keep_resources)
         if found == SCHEMA_VERSION:
             typer.echo(f"the tables are of version {found} already")
@@ -92,7 +92,7 @@ def backup_(
 
     made = instant(datetime.now(UTC))
     with (
-        _opened(database) as engine,
+        opened(database) as engine,
         whole_file(file) as out,
         _shown("saving", backup.count(engine)) as progress,
     ):
@@ -113,7 +113,7 @@ def restore(
 
     typer.echo(f"{file}: checking it", err=True)
     contents = backup.check_backup(file)
-    with _opened(database, new=True) as engine, _shown("restoring", contents.rows) as progress:
+    with opened(database, new=True) as engine, _shown("restoring", contents.rows) as progress:
         backup.read_backup(engine, file, progress=progress)
     typer.echo(f"{sum(contents.rows.values()):,} rows, as they were at {contents.made}")
 
@@ -131,7 +131,7 @@ def prune(database: Database = None) -> None:
     from fhirgallop.storage import retention  # noqa: PLC0415
 
     how_long = keeping(settings.load(database=database))
-    with _opened(database) as engine:
+    with opened(database) as engine:
         _print(retention.prune(engine, how_long, datetime.now(UTC)))
 
 
@@ -159,7 +159,7 @@ def forget(
     from fhirgallop.storage import retention  # noqa: PLC0415
 
     digests = _digests(patient or [], chart_id, server)
-    with _opened(database) as engine:
+    with opened(database) as engine:
         if not yes and not typer.confirm(f"Delete all of this patient's data from {engine.url.database}?"):
             raise typer.Exit(Exit.REFUSED)
         _print(retention.forget(engine, digests, _audited(engine, digests[: len(patient or []) + 1])))
@@ -211,7 +211,7 @@ def _audited(engine: Engine, digests: list[str]) -> Any:
 
 
 @contextmanager
-def _opened(database: str | None, *, today: bool = True, new: bool = False) -> Iterator[Engine]:
+def opened(database: str | None, *, today: bool = True, new: bool = False) -> Iterator[Engine]:
     """The database of the settings, with `today`'s tables, or a `new` one; what it cannot do is told."""
     from fhirgallop import settings  # noqa: PLC0415
     from fhirgallop.storage.engine import connect, other_form, version_of  # noqa: PLC0415

@@ -55,12 +55,12 @@ def formatter(form: Form) -> logging.Formatter:
         structlog.processors.TimeStamper(fmt="iso", utc=True, key="time"),
         _kind_and_place,
     ]
-    last: Processor = structlog.dev.ConsoleRenderer(colors=False, pad_event_to=30)
-    if form == "json":
-        last = structlog.processors.JSONRenderer()
+    last: list[Processor] = [structlog.processors.JSONRenderer()]
+    if form == "console":
+        last = [_one_line, structlog.dev.ConsoleRenderer(colors=False, pad_event_to=30)]
     return structlog.stdlib.ProcessorFormatter(
         foreign_pre_chain=shared,
-        processors=[structlog.stdlib.ProcessorFormatter.remove_processors_meta, last],
+        processors=[structlog.stdlib.ProcessorFormatter.remove_processors_meta, *last],
     )
 
 
@@ -71,4 +71,13 @@ def _kind_and_place(_logger: Any, _method: str, line: EventDict) -> EventDict:
     if isinstance(error, BaseException):
         line["error"], line["place"] = type(error).__name__, place(error)
     line.pop("stack_info", None)
+    line.pop("color_message", None)  # the HTTP server's, once more
+    return line
+
+
+def _one_line(_logger: Any, _method: str, line: EventDict) -> EventDict:
+    """Nothing that a terminal would take for a command, or a reader for another line."""
+    for key, value in line.items():
+        if isinstance(value, str) and not value.isprintable():
+            line[key] = value.strip().encode("unicode_escape").decode("ascii")
     return line

@@ -1,0 +1,172 @@
+"""AuditEvents: sound FHIR, by the patterns of IHE BALP, kept before the answer leaves, or there is no answer.
+
+Published facts, from IHE Basic Audit Log Patterns 1.1.3 (profiles Read, Create, OAUTHaccessTokenUse.Opaque):
+type `rest`, subtype from FHIR's RESTful interactions, action by kind of access, client and server by the
+DICOM codes 110153 (source of the data) and 110152 (destination), an X-Request-Id
+entity, of a token the end only.
+"""
+
+from __future__ import annotations
+
+import json
+from pathlib import Path
+from typing import Any
+
+import pytest
+from fastapi import FastAPI
+from sqlalchemy import text
+
+from fhirgallop.conformance.validator import validate
+from fhirgallop.outcome import Issue
+from fhirgallop.service.audit import _end
+from fhirgallop.service.audit_event import Deed, Ending, Who, audit_event
+from fhirgallop.storage.audit import AuditTrail
+from fhirgallop.storage.keys import patient_key
+
+WHERE = "/exams?map=fernwood-heart-form"
+DICOM = "http://dicom.nema.org/resources/ontology/DCM"
+REQUEST = "0b7c1c1e-5d2e-4f5a-9a37-0d2f6c1f7a11"
+DIGEST = patient_key("https://fernwood.example/patients", "F-20417")
+
+
+def trail(application: FastAPI) -> list[dict[str, Any]]:
+    """Every event that was kept."""
+    kept = AuditTrail(application.state.readiness.engine)
+    return [json.loads(row.event) for row in kept.read()]
+
+
+def codes(coded: dict[str, Any]) -> set[tuple[str, str]]:
+    return {(one["system"], one["code"]) for one in coded["coding"]}
+
+
+def sound(event: dict[str, Any]) -> None:
+    """The judge finds nothing wrong."""
+    found = [issue for issue in validate(event, "R4") if issue.is_error]
+    assert not found, found
+
+
+_LOGIN = (Issue("error", "login", "auth-login", "Present F-20417"),)
+_MANY = (Issue("fatal", "transient", "storage-failed", "x"),) * 50
+
+
+@pytest.mark.parametrize("edition", ["R4", "R4B"])
+@pytest.mark.parametrize(
+    ("deed", "who", "ending"),
+    [
+        (
+            Deed("R", "read", (DIGEST,), ("List/1",)),
+            Who("https://a.example", address="::1"),
+            Ending(),
+        ),
+        (Deed("C", "operation", (DIGEST,), ("urn:uuid:" + REQUEST,)), Who(), Ending()),
+        (Deed("R", "search-type", (), (), ("patient", "date")), Who("app", token="c2Vj"), Ending()),
+        (Deed("U", "update"), Who("ann", person=True, token="t-1", address="::1"), Ending()),
+        (Deed("E", "operation"), Who(), Ending(401, _LOGIN)),
+        (Deed("E", "operation"), Who(), Ending(503, _MANY)),
+    ],
+)
+def test_pr_8_every_kind_of_event_is_sound(
+    deed: Deed, who: Who, ending: Ending, edition: Any, moment: Any
+) -> None:
+    event = audit_event(deed, who, ending, at=moment, id_=REQUEST, request=REQUEST, patient=DIGEST)
+    assert not [issue for issue in validate(event, edition) if issue.is_error]
+    assert sum(agent["requestor"] for agent in event["agent"]) == 1
+    assert "F-20417" not in json.dumps(event), "an issue stands in the trail by its codes alone"
+
+
+def test_pr_8_source_and_destination_follow_the_data(moment: Any) -> None:
+    def roles(action: Any) -> list[set[tuple[str, str]]]:
+        event = audit_event(Deed(action, "x"), Who(), Ending(), at=moment, id_="a", request="")
+        return [codes(agent["type"]) for agent in event["agent"]]
+
+    assert roles("R") == [{(DICOM, "110152")}, {(DICOM, "110153")}]
+    for action in "CUDE":
+        assert roles(action) == [{(DICOM, "110153")}, {(DICOM, "110152")}]
+
+
+def test_pr_8_of_a_token_only_a_part_is_kept() -> None:
+    long = "".join(chr(33 + n % 90) for n in range(500))
+    assert _end(long) == long[-32:]
+    assert _end("0123456789") == "56789", "of a short token not the whole"
+    assert _end("") == ""
+
+
+def test_pr_8_an_examination_leaves_one_event(application: FastAPI, client: Any, example: Any) -> None:
+    answer = client.post(WHERE, json=example(), headers={"X-Request-Id": REQUEST})
+    assert answer.status_code == 200
+    (event,) = trail(application)
+    sound(event)
+    assert event["action"] in {"C", "E"}
+    assert event["outcome"] == "0"
+    entities = event["entity"]
+    assert REQUEST in {entity["what"].get("identifier", {}).get("value") for entity in entities}
+    assert "F-20417" not in json.dumps(event)
+
+
+def test_pr_9_a_refusal_is_kept_with_its_outcome(application: FastAPI, client: Any, example: Any) -> None:
+    refused = client.post(WHERE, json=example(vitals={"hr": "seventy-eight"}))
+    assert refused.status_code == 422
+    (event,) = trail(application)
+    sound(event)
+    assert (event["outcome"], event["outcomeDesc"]) == ("4", "HTTP 422")
+    told = {issue["details"]["coding"][0]["code"] for issue in refused.json()["issue"]}
+    (contained,) = event["contained"]
+    assert {issue["details"]["coding"][0]["code"] for issue in contained["issue"]} <= told
+    assert "seventy" not in json.dumps(event)
+
+
+def test_what_touches_no_patient_leaves_no_event(application: FastAPI, client: Any) -> None:
+    for path in ("/health", "/ready", "/docs", "/openapi.json", "/maps", "/metrics", "/nowhere"):
+        client.get(path)
+    assert trail(application) == []
+
+
+def test_without_a_trail_there_is_no_answer(application: FastAPI, client: Any, example: Any) -> None:
+    with application.state.readiness.engine.begin() as connection:
+        connection.execute(text("DROP TABLE audit"))
+    answer = client.post(WHERE, json=example())
+    assert answer.status_code == 503
+    assert answer.headers["retry-after"]
+    assert answer.json()["issue"][0]["details"]["coding"][0]["code"] in {"audit-failed", "storage-failed"}
+    assert "bundle" not in answer.json()
+    assert "valueQuantity" not in answer.text
+    refused = client.post(WHERE, json={"nonsense": 1})
+    assert refused.status_code == 422, "a refusal gives nothing away, and is told"
+    assert application.state.audit.failures >= 1
+    assert "fhirgallop_audit_failures 0" not in client.get("/metrics").text
+
+
+def test_events_are_found_by_patient_and_time(application: FastAPI, client: Any, example: Any) -> None:
+    client.post(WHERE, json=example())
+    client.post(WHERE, json={"nonsense": 1})
+    kept = AuditTrail(application.state.readiness.engine)
+    rows = list(kept.read())
+    assert len(rows) == 2
+    assert len(list(kept.read(since=rows[1].at))) == 1
+    assert len(list(kept.read(until=rows[1].at))) == 1
+    patients = {row.patient for row in rows} - {""}
+    for patient in patients:
+        assert [row.patient for row in kept.read(patient=patient)] == [patient]
+
+
+def test_the_trail_is_exported_by_a_command(
+    application: FastAPI, client: Any, example: Any, call: Any, tmp_path: Path
+) -> None:
+    client.post(WHERE, json=example())
+    client.post(WHERE, json={"nonsense": 1})
+    database = f"sqlite:///{tmp_path / 'service.sqlite3'}"
+    done = call("audit", "export", "--database", database)
+    assert done.code == 0
+    lines = [json.loads(line) for line in done.out.splitlines()]
+    assert lines == trail(application)
+    for event in lines:
+        sound(event)
+    later = call("audit", "export", "--database", database, "--since", lines[1]["recorded"])
+    assert [json.loads(line) for line in later.out.splitlines()] == lines[1:]
+    written = tmp_path / "trail.ndjson"
+    assert call("audit", "export", "--database", database, "--out", written).code == 0
+    assert written.read_bytes() == done.out
+    stranger = call("audit", "export", "--database", database, "--patient", "https://x.example|F-20417")
+    assert (stranger.code, stranger.out) == (0, b"")
+    assert call("audit", "export", "--database", database, "--patient", "F-20417").code == 2
+    assert call("audit", "export", "--database", f"sqlite:///{tmp_path / 'nowhere'}").code == 3
