@@ -19,6 +19,8 @@ from fhirgallop.outcome import Issue
 from fhirgallop.reasoning import rulebook
 from fhirgallop.service import answers
 from fhirgallop.service.auth.opening import open_gate, public_keys
+from fhirgallop.service.batch_desk import BatchDesk
+from fhirgallop.service.batch_work import BatchWork, batches_coded
 from fhirgallop.service.delivering import delivering
 from fhirgallop.service.exam_desk import ExamDesk
 from fhirgallop.service.examinations import Examinations
@@ -27,10 +29,21 @@ from fhirgallop.service.fhir.opening import open_fhir
 from fhirgallop.service.hook_desk import HookDesk, Manner
 from fhirgallop.service.housekeeping import house_kept, keeping
 from fhirgallop.service.keyed import KeyDesk
-from fhirgallop.service.operation import watch_over
-from fhirgallop.service.routes import about, exams, hooks, maps, sign_in, validation, watching, well_known
+from fhirgallop.service.operation import new_id, watch_over
+from fhirgallop.service.routes import (
+    about,
+    batches,
+    exams,
+    hooks,
+    maps,
+    sign_in,
+    validation,
+    watching,
+    well_known,
+)
 from fhirgallop.service.shelf import keep_versions, load_shelf
 from fhirgallop.settings import Settings
+from fhirgallop.storage.batches import Batches
 from fhirgallop.storage.engine import open_database
 from fhirgallop.storage.hooks import HookStore
 from fhirgallop.storage.idempotency import Answers
@@ -67,6 +80,7 @@ def create_app(settings: Settings, clock: Callable[[], datetime] = now) -> FastA
         async with (
             house_kept(engine, keeping(settings), clock),
             delivering(dispatch, settings.finish_seconds),
+            batches_coded(_app.state.batch_work, settings.finish_seconds),
         ):
             yield
         if fetcher:
@@ -94,6 +108,7 @@ def create_app(settings: Settings, clock: Callable[[], datetime] = now) -> FastA
     app.state.dispatch = dispatch
     for router in (
         exams.router,
+        batches.router,
         hooks.router,
         validation.router,
         maps.router,
@@ -112,6 +127,9 @@ def create_app(settings: Settings, clock: Callable[[], datetime] = now) -> FastA
         keys, clock, rulebook.load(), policy,
         app.state.metrics.examination,
     )  # fmt: skip
+    work = BatchWork(engine, app.state.exams, app.state.shelf, settings, clock, app.state.audit, new_id)
+    app.state.batch_work = work
+    app.state.batches = BatchDesk(Batches(engine), keys, settings, clock, new_id, work.wake)
     app.exception_handler(answers.RefusalError)(_refused)
     app.exception_handler(RequestValidationError)(_invalid)
     app.exception_handler(HTTPException)(_plain)

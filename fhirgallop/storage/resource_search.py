@@ -5,11 +5,11 @@ Every method raises StorageError when the database failed; nothing of that call 
 
 from __future__ import annotations
 
-from collections.abc import Sequence
+from collections.abc import Callable, Sequence
 from dataclasses import dataclass
 from typing import Any, Final, Literal
 
-from sqlalchemy import ColumnElement, Engine, Select, and_, func, not_, or_, select
+from sqlalchemy import ColumnElement, Connection, Engine, Select, and_, func, not_, or_, select
 
 from fhirgallop.storage.resources import NewVersion, Written, add_versions
 from fhirgallop.storage.submissions import told
@@ -83,6 +83,7 @@ class Kept:
     fhir_id: str
     version: int
     updated: int
+    patient: str
     date_from: int | None
     body: bytes
 
@@ -93,7 +94,7 @@ class Kept:
         return Place(BEFORE_ALL if self.date_from is None else self.date_from, self.number)
 
 
-_NAMES: Final = ("id", "edition", "type", "fhir_id", "version", "updated", "date_from", "body")
+_NAMES: Final = ("id", "edition", "type", "fhir_id", "version", "updated", "patient", "date_from", "body")
 _COLUMNS: Final = [resources.c[name] for name in _NAMES]
 _WHEN: Final = func.coalesce(resources.c.date_from, BEFORE_ALL)
 
@@ -135,15 +136,26 @@ class Resources:
         with told(), self._engine.connect() as connection:
             return connection.scalar(query) or 0
 
-    def write(self, versions: Sequence[NewVersion], *, at: int) -> list[Written]:
+    def write(
+        self,
+        versions: Sequence[NewVersion],
+        *,
+        at: int,
+        also: Sequence[Callable[[Connection, int], None]] = (),
+    ) -> list[Written]:
         """Adds versions that come without an examination, all or none.
+
+        What is in `also` is done in the same transaction, and called with 0 for the number of a row.
 
         Raises:
             IntegrityError: another request changed one of them at the same moment.
             ChangedMeanwhileError: one does not stand at the version that was to be followed.
         """
         with told(), self._engine.begin() as connection:
-            return add_versions(connection, versions, at=at, submission=None)
+            written = add_versions(connection, versions, at=at, submission=None)
+            for act in also:
+                act(connection, 0)
+        return written
 
     def _one(self, query: Select[Any]) -> Kept | None:
         with told(), self._engine.connect() as connection:

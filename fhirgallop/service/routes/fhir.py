@@ -1,0 +1,206 @@
+"""/fhir/{edition}/{type}: read, versions, search, create and update of what is kept.
+
+Source: FHIR R4 http.html and search.html. HEAD, `_summary`, `_elements`, delete and patch are not offered:
+what was wrong is entered in error, and stays in the history.
+"""
+
+from __future__ import annotations
+
+from typing import Annotated, Any, Final
+from urllib.parse import parse_qsl
+
+from fastapi import APIRouter, Depends, Path, Request
+from starlette.concurrency import run_in_threadpool
+from starlette.responses import Response
+
+from fhirgallop.service import answers, requests
+from fhirgallop.service.auth.needs import needs
+from fhirgallop.service.fhir import changes, interactions
+from fhirgallop.service.fhir.address import KEPT, EditionPath, base, known_type
+from fhirgallop.service.fhir.changes import Sent
+from fhirgallop.service.fhir.negotiation import GENERAL, sent_fhir, wish
+from fhirgallop.service.fhir.query import MOST_PARAMETERS
+from fhirgallop.service.fhir.writing import read_resource
+from fhirgallop.settings import Settings
+
+router = APIRouter(tags=["FHIR"])
+
+FORM: Final = "application/x-www-form-urlencoded"
+_MOST_FORM: Final = 64 * 1024  # bytes of a search that is posted
+_RESOURCE: Final[dict[str, Any]] = {
+    "requestBody": {
+        "required": True,
+        "content": {kind: {"schema": {"type": "object"}} for kind in (answers.FHIR_JSON, answers.PLAIN_JSON)},
+    }
+}
+_SEARCH_FORM: Final[dict[str, Any]] = {"requestBody": {"content": {FORM: {"schema": {"type": "object"}}}}}
+_STATUSES: Final[dict[int | str, dict[str, Any]]] = {
+    200: {"description": "The resource, or a Bundle.", "content": {answers.FHIR_JSON: {}}},
+    304: {"description": "It is as the client knows it."},
+    **answers.REFUSALS,
+}
+_CHANGED: Final[dict[int | str, dict[str, Any]]] = {
+    200: {"description": "Kept; or nothing had to be.", "content": {answers.FHIR_JSON: {}}},
+    201: {"description": "Created.", "content": {answers.FHIR_JSON: {}}},
+    **answers.REFUSALS,
+}
+EditionName = Annotated[EditionPath, Path(description="FHIR edition.")]
+TypeName = Annotated[str, Path(max_length=64, description=f"One of {', '.join(KEPT)}.")]
+ResourceId = Annotated[str, Path(max_length=200, description="FHIR id.")]
+
+
+@router.get(
+    "/fhir/{edition}/{resource_type}",
+    summary="Search resources",
+    description="Search parameters as the CapabilityStatement lists them; pages follow the link `next`.",
+    responses=_STATUSES,
+    dependencies=[Depends(needs(does="s"))],
+)
+def search(request: Request, edition: EditionName, resource_type: TypeName) -> Response:
+    """One page of what fits."""
+    here = base(request, edition)
+    wanted = wish(request, here.edition)
+    known_type(here.edition, resource_type, among=KEPT)
+    return interactions.search(request, wanted, here, resource_type, request.query_params.multi_items())
+
+
+@router.post(
+    "/fhir/{edition}/{resource_type}/_search",
+    summary="Search resources, with the parameters in the body",
+    openapi_extra=_SEARCH_FORM,
+    responses=_STATUSES,
+    dependencies=[Depends(needs(does="s"))],
+)
+async def search_by_form(request: Request, edition: EditionName, resource_type: TypeName) -> Response:
+    """The same search; parameters of the address count too."""
+    here = base(request, edition)
+    wanted = wish(request, here.edition)
+    known_type(here.edition, resource_type, among=KEPT)
+    kind = request.headers.get("content-type", "").partition(";")[0].strip().lower()
+    text = await requests.body(request, _MOST_FORM)
+    if kind != FORM and (text or kind):
+        said = f"This Content-Type is not read here; send {FORM}."
+        raise answers.refusal(415, "not-supported", "http-content-type", said)
+    parameters = [*request.query_params.multi_items(), *_form(text)]
+    return await run_in_threadpool(interactions.search, request, wanted, here, resource_type, parameters)
+
+
+@router.get(
+    "/fhir/{edition}/{resource_type}/{fhir_id}",
+    summary="Read a resource",
+    responses=_STATUSES,
+    dependencies=[Depends(needs(does="r"))],
+)
+def read(request: Request, edition: EditionName, resource_type: TypeName, fhir_id: ResourceId) -> Response:
+    """The current version, with its ETag."""
+    here = base(request, edition)
+    wanted = wish(request, here.edition)
+    requests.only_known(request, GENERAL)
+    known_type(here.edition, resource_type, among=KEPT)
+    return interactions.read(request, wanted, here, resource_type, fhir_id)
+
+
+@router.get(
+    "/fhir/{edition}/{resource_type}/{fhir_id}/_history",
+    summary="Versions of a resource",
+    description="Newest first; `_count` and `_since` are served.",
+    responses=_STATUSES,
+    dependencies=[Depends(needs(does="r"))],
+)
+def history(request: Request, edition: EditionName, resource_type: TypeName, fhir_id: ResourceId) -> Response:
+    """A Bundle of versions."""
+    here = base(request, edition)
+    wanted = wish(request, here.edition)
+    requests.only_known(request, interactions.HISTORY_PARAMETERS)
+    known_type(here.edition, resource_type, among=KEPT)
+    return interactions.history(request, wanted, here, resource_type, fhir_id)
+
+
+@router.get(
+    "/fhir/{edition}/{resource_type}/{fhir_id}/_history/{version_id}",
+    summary="Read one version of a resource",
+    responses=_STATUSES,
+    dependencies=[Depends(needs(does="r"))],
+)
+def vread(
+    request: Request,
+    edition: EditionName,
+    resource_type: TypeName,
+    fhir_id: ResourceId,
+    version_id: Annotated[str, Path(max_length=64, description="versionId.")],
+) -> Response:
+    """The version as it was."""
+    here = base(request, edition)
+    wanted = wish(request, here.edition)
+    requests.only_known(request, GENERAL)
+    known_type(here.edition, resource_type, among=KEPT)
+    return interactions.vread(request, wanted, here, resource_type, fhir_id, version_id)
+
+
+@router.post(
+    "/fhir/{edition}/{resource_type}",
+    summary="Create a resource",
+    description="The id is ours. With If-None-Exist nothing is created where one fits already.",
+    openapi_extra=_RESOURCE,
+    responses=_CHANGED,
+    dependencies=[Depends(needs(does="c"))],
+)
+async def create(request: Request, edition: EditionName, resource_type: TypeName) -> Response:
+    """Judges the resource and keeps it."""
+    wanted = wish(request, base(request, edition).edition)
+    requests.only_known(request, GENERAL)
+    sent = await _sent(request, edition, resource_type)
+    condition = request.headers.get("if-none-exist")
+    return await run_in_threadpool(changes.create, request, wanted, sent, condition)
+
+
+@router.put(
+    "/fhir/{edition}/{resource_type}/{fhir_id}",
+    summary="Update a resource",
+    description="The next version of what is there; with If-Match only of the version named.",
+    openapi_extra=_RESOURCE,
+    responses=_CHANGED,
+    dependencies=[Depends(needs(does="u"))],
+)
+async def update(
+    request: Request, edition: EditionName, resource_type: TypeName, fhir_id: ResourceId
+) -> Response:
+    """Judges the resource and keeps it as the next version."""
+    wanted = wish(request, base(request, edition).edition)
+    requests.only_known(request, GENERAL)
+    sent = await _sent(request, edition, resource_type)
+    return await run_in_threadpool(changes.update, request, wanted, sent, fhir_id)
+
+
+@router.put(
+    "/fhir/{edition}/{resource_type}",
+    summary="Update the one resource that fits",
+    description="Search parameters name the resource; where none fits it is created, where several do: 412.",
+    openapi_extra=_RESOURCE,
+    responses=_CHANGED,
+    dependencies=[Depends(needs(does="u"))],
+)
+async def update_found(request: Request, edition: EditionName, resource_type: TypeName) -> Response:
+    """Judges the resource and keeps it, as the next version of the one that fits, or as a new one."""
+    wanted = wish(request, base(request, edition).edition)
+    sent = await _sent(request, edition, resource_type)
+    return await run_in_threadpool(
+        changes.update_found, request, wanted, sent, request.query_params.multi_items()
+    )
+
+
+async def _sent(request: Request, edition: EditionPath, type_: str) -> Sent:
+    here = base(request, edition)
+    known_type(here.edition, type_, among=KEPT)
+    sent_fhir(request, here.edition)
+    settings: Settings = request.app.state.settings
+    text = await requests.body(request, settings.max_body)
+    return Sent(here, type_, await run_in_threadpool(read_resource, text))
+
+
+def _form(text: bytes) -> list[tuple[str, str]]:
+    try:
+        return parse_qsl(text.decode(), keep_blank_values=True, max_num_fields=MOST_PARAMETERS)
+    except ValueError:
+        said = f"The form cannot be read; send at most {MOST_PARAMETERS} parameters, in UTF-8."
+        raise answers.refusal(400, "structure", "search-form", said) from None
