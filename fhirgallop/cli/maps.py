@@ -1,4 +1,4 @@
-"""`fhirgallop map ...`: checks a template map, alone or against records; prints the format's JSON Schema."""
+"""`fhirgallop map ...`: checks a template map, compares two, suggests; prints the format's JSON Schema."""
 
 from __future__ import annotations
 
@@ -11,13 +11,16 @@ import typer
 from fhirgallop.cli.shared import Exit
 
 if TYPE_CHECKING:
+    from fhirgallop.mapping.compare import Comparison
     from fhirgallop.mapping.coverage import Coverage
     from fhirgallop.mapping.template_map import TemplateMap
     from fhirgallop.outcome import Issue
 
 _SHOWN: Final = 50
 
-app = typer.Typer(help="Template maps: check one, or print the schema of the format.", no_args_is_help=True)
+app = typer.Typer(
+    help="Template maps: check one, compare two, suggest lines, or print the schema.", no_args_is_help=True
+)
 
 
 @app.command("check")
@@ -105,6 +108,80 @@ def _print_refusals(refusals: Counter[tuple[str, str]], first: dict[tuple[str, s
         typer.echo(f"{first[kind]} (met {times:,} times)")
     if len(refusals) > _SHOWN:
         typer.echo(f"... and {len(refusals) - _SHOWN:,} kinds more; fhirgallop code --issues FILE tells all")
+
+
+@app.command("compare")
+def compare(
+    old: Annotated[Path, typer.Argument(help="The map as it is.")],
+    new: Annotated[Path, typer.Argument(help="The map as it would be.")],
+    records: Annotated[list[Path], typer.Option("--with", help="Records to read by both; several times.")],
+) -> None:
+    """Tell what a changed map would change in these records, before it is used.
+
+    Exit codes: 0 nothing changes; 1 something does; 3 a map has faults.
+    """
+    from fhirgallop import api  # noqa: PLC0415
+    from fhirgallop.exam import catalogue  # noqa: PLC0415
+    from fhirgallop.intake.record import LocalRecord  # noqa: PLC0415
+    from fhirgallop.mapping.compare import Comparison  # noqa: PLC0415
+
+    comparison = Comparison(api.read_map(old), api.read_map(new), catalogue.load())
+    for path in records:
+        for read in api.read_records(path):
+            if isinstance(read, LocalRecord):
+                comparison.add(read)
+    _print_comparison(comparison)
+    changed = comparison.differences() or comparison.newly_refused or comparison.other_identity
+    raise typer.Exit(Exit.REFUSED if changed else Exit.WELL)
+
+
+def _print_comparison(comparison: Comparison) -> None:
+    from rich.console import Console  # noqa: PLC0415
+    from rich.table import Table  # noqa: PLC0415
+
+    console = Console(highlight=False)
+    console.print(
+        f"{comparison.records:,} records: {comparison.touched:,} come out otherwise; "
+        f"{comparison.newly_refused:,} would be refused that are not now, {comparison.newly_coded:,} no more;"
+        f" {comparison.other_identity:,} would become another examination"
+    )
+    table = Table("finding", "change", "entries", "first records", "from the fields", box=None)
+    for one in comparison.differences():
+        first = ", ".join(str(at + 1) for at in one.examples)
+        table.add_row(one.finding, one.change, f"{one.count:,}", first, ", ".join(sorted(one.fields)))
+    console.print(table)
+
+
+@app.command("suggest")
+def suggest(
+    records: Annotated[list[Path], typer.Argument(help="Records of the form, of any kind that is read.")],
+) -> None:
+    """List the fields of a form's records, each with what it may mean; nothing is decided."""
+    from rich.console import Console  # noqa: PLC0415
+    from rich.table import Table  # noqa: PLC0415
+
+    from fhirgallop import api  # noqa: PLC0415
+    from fhirgallop.intake.record import LocalRecord  # noqa: PLC0415
+    from fhirgallop.mapping.suggest import MOST_VALUES, suggest  # noqa: PLC0415
+    from fhirgallop.mapping.wordings import wordings  # noqa: PLC0415
+
+    seen: dict[str, dict[str, None]] = {}
+    for path in records:
+        for read in api.read_records(path):
+            for name, field in read.fields.items() if isinstance(read, LocalRecord) else ():
+                held = seen.setdefault(name, {})
+                if len(held) < MOST_VALUES:
+                    held |= dict.fromkeys(wordings(value)[-1] for value in field.values)
+    table = Table("field", "may be", "because", box=None)
+    for name, values in seen.items():
+        section, _, short = name.rpartition(".")
+        named = name
+        for one in suggest(short, values=values, section=section):
+            table.add_row(named, str(one.target), "; ".join(one.reasons))
+            named = ""
+        if named:
+            table.add_row(named, "-", "no wording is like it")
+    Console(highlight=False).print(table)
 
 
 @app.command("schema")

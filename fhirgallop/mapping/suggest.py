@@ -243,7 +243,8 @@ def _weighed(target: Target, asked: _Asked, seen: Sequence[str]) -> tuple[float,
     weight = 1.0
     reasons: list[str] = []
     if definition is None:
-        return weight, reasons
+        near = asked.section & {target.axis, "exam" if target.axis == "identifier" else target.axis}
+        return (1.2, ["its section fits"]) if near else (weight, reasons)
     about = set(_words(f"{definition.section} {definition.label} {definition.id}"))
     about |= {"vitals"} if definition.section in ("vital", "pressure") else set()
     if asked.section & about:
