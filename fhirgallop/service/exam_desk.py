@@ -103,7 +103,7 @@ class ExamDesk:
             return (ask.watched(coded), *self._kept(ask.keyed, replies[0]))
 
         try:
-            coded = self._coded(record, ask.wish, along)
+            coded = self.coded(record, ask.wish, along)
         except KeyTakenError:
             if ask.keyed and (reply := self._keys.again(ask.keyed)):
                 return reply
@@ -144,7 +144,7 @@ class ExamDesk:
         taken = 0
         for read in reads:
             if isinstance(read, LocalRecord):
-                coded = self._coded(read, ask.wish, lambda coded: (ask.watched(coded),))
+                coded = self.coded(read, ask.wish, lambda coded: (ask.watched(coded),))
                 taken += coded.bundle is not None
                 issues += coded.result.issues
             else:
@@ -177,7 +177,8 @@ class ExamDesk:
         said["unknown"] = [{"field": u.field, "value": u.value} for u in coded.result.unknown]
         return said
 
-    def _coded(self, record: LocalRecord, wish: Wish, along: Along) -> Coded:
+    def coded(self, record: LocalRecord, wish: Wish, along: Along) -> Coded:
+        """One record coded, kept and counted; raises as Examinations.code does."""
         coded = self._examinations.code(record, wish, along)
         fate = "refused" if coded.bundle is None else "repeated" if coded.repeated else "coded"
         self._count(wish.template.name, fate)
@@ -212,7 +213,7 @@ class ExamDesk:
             coded = None
             try:
                 if not failed:
-                    coded = self._coded(read, ask.wish, lambda coded: (ask.watched(coded),))
+                    coded = self.coded(read, ask.wish, lambda coded: (ask.watched(coded),))
             except BusyError:
                 issue = BUSY
             except StorageError:

@@ -11,6 +11,7 @@ from starlette.requests import ClientDisconnect, Request
 
 from fhirgallop.intake.detect import BY_CONTENT_TYPE
 from fhirgallop.service.answers import FHIR_JSON, PLAIN_JSON, refusal
+from fhirgallop.settings import Settings
 
 _ANY: Final = ("*/*", "application/*")
 _PATIENCE: Final = 60.0  # seconds for a whole body
@@ -89,6 +90,12 @@ def accepted(request: Request, offered: Sequence[str]) -> str:
             return offered[0]
     text = f"Nothing acceptable can be answered; ask for {' or '.join(offered)}."
     raise refusal(406, "not-supported", "http-accept", text)
+
+
+def base(request: Request) -> str:
+    """Address of the service as its clients know it, without a slash at its end."""
+    settings: Settings = request.app.state.settings
+    return (settings.address or str(request.base_url)).rstrip("/")
 
 
 def prefers(request: Request, what: str) -> bool:

@@ -113,8 +113,9 @@ class Batches:
         return body or b""
 
     def claim(self, worker: str, *, now: int, until: int) -> Batch | None:
-        """The oldest batch that nobody holds, held by `worker` until then; None when there is none."""
-        free = or_(batches.c.state == WAITING, and_(batches.c.state == CODING, batches.c.lease < now))
+        """The oldest batch that nobody else holds, held by `worker` until then; None when there is none."""
+        let_go = or_(batches.c.lease < now, batches.c.worker == worker)
+        free = or_(batches.c.state == WAITING, and_(batches.c.state == CODING, let_go))
         oldest = select(batches.c.id).where(free).order_by(batches.c.created, batches.c.id).limit(1)
         with told(), self._engine.begin() as connection:
             id_ = connection.scalar(oldest)
@@ -152,6 +153,14 @@ class Batches:
         query = select(table.c.status, func.count()).where(table.c.batch == id_).group_by(table.c.status)
         with told(), self._engine.connect() as connection:
             return Counter({row[0]: row[1] for row in connection.execute(query)})
+
+    def patients(self, id_: str, *, first: int, count: int) -> list[str]:
+        """Digests of the patients whose results these are."""
+        table = batch_results
+        some = (table.c.batch == id_, table.c.position >= first, table.c.position < first + count)
+        query = select(table.c.patient).where(*some, table.c.patient != "").distinct()
+        with told(), self._engine.connect() as connection:
+            return list(connection.scalars(query.order_by(table.c.patient)))
 
     def results(self, id_: str, *, first: int, count: int) -> Iterator[KeptResult]:
         """Results in the order of the records, from `first` on, at most `count`; few in memory at once."""

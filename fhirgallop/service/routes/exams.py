@@ -21,6 +21,7 @@ from fhirgallop.observations.editions import Edition
 from fhirgallop.outcome import Issue, has_errors
 from fhirgallop.service import answers, audit, enclosed, requests
 from fhirgallop.service.auth.needs import needs
+from fhirgallop.service.batch_desk import BatchDesk, unreadable
 from fhirgallop.service.exam_desk import BUSY, Ask, ExamDesk, Opinion
 from fhirgallop.service.examinations import BusyError, Coded, Wish
 from fhirgallop.service.keyed import Keyed, Reply, keyed
@@ -41,6 +42,7 @@ _STATUSES: Final[dict[int | str, dict[str, Any]]] = {
         "description": "Coded; or, as HL7 v2, acknowledged.",
         "content": {kind: {} for kind in _ANSWERS},
     },
+    202: answers.told("Taken in, to be coded later; Content-Location says where to ask."),
     400: answers.told("The body, or a parameter, is malformed."),
     404: answers.told("There is no map of that name."),
     406: answers.told("Nothing acceptable can be answered."),
@@ -87,7 +89,9 @@ class Sent:
         "the examination reviewed against the chart; without one it is held against itself. That a review "
         "raises nothing is no reassurance.\n\n"
         "An HL7 v2 message with `Accept: application/hl7-v2` is answered with its acknowledgement (AA, AE, "
-        "AR). With `Idempotency-Key` a request that is sent again gets the very same bytes."
+        "AR). With `Idempotency-Key` a request that is sent again gets the very same bytes.\n\n"
+        "With `Prefer: respond-async` the answer is 202 and, in `Content-Location`, the address where to ask "
+        "how far the examinations are; they are coded one by one, and the batch outlives a restart."
     ),
     openapi_extra={"requestBody": {"required": True, "content": _BODIES}},
     dependencies=[Depends(needs(does="cu", to=WRITTEN))],
@@ -111,6 +115,8 @@ async def post_exams(
         text = "There is no template map of that name; GET /maps lists them."
         raise answers.refusal(404, "not-found", "http-unknown-map", text)
     wish = Wish(template, edition or settings.edition, settings.snomed if snomed is None else snomed)
+    if requests.prefers(request, "respond-async"):
+        return await _taken(request, wish, review or "none")
     answer = requests.accepted(request, _ANSWERS)
     sent, key = await _sent(request, settings)
     if answer in _HL7 and sent.kind not in _HL7:
@@ -123,6 +129,23 @@ async def post_exams(
         raise answers.RefusalError(409, [BUSY], {"Retry-After": "1"}) from None
     if reply.patient:
         audit.about(request, action="C", interaction="create", patients=[reply.patient])
+    return reply.response()
+
+
+async def _taken(request: Request, wish: Wish, review: Opinion) -> Response:
+    """A batch: answered at once, coded later."""
+    settings: Settings = request.app.state.settings
+    desk: BatchDesk = request.app.state.batches
+    kind = requests.content_type(request)
+    body = await requests.body(request, settings.batch_body)
+    caller, key = request.state.caller, keyed(request, kind, body)
+    audit.about(request, action="C", interaction="batch")
+    try:
+        reply = await run_in_threadpool(
+            desk.take, body, kind, wish, review, caller, key, requests.base(request)
+        )
+    except BusyError:
+        raise answers.RefusalError(409, [BUSY], {"Retry-After": "1"}) from None
     return reply.response()
 
 
@@ -163,7 +186,7 @@ def _answer(desk: ExamDesk, sent: Sent, ask: Ask, settings: Settings) -> Reply:
     if ask.answer in _HL7:
         return desk.acknowledged(sent.content, reads, ask)
     if not any(isinstance(read, LocalRecord) for read in reads):
-        raise _unreadable([issue for read in reads for issue in read.issues])
+        raise unreadable([issue for read in reads for issue in read.issues])
     if is_one(reads, sent.kind, sent.content):
         return desk.one(reads[0], ask)
     if ask.answer == answers.FHIR_JSON:
@@ -192,13 +215,3 @@ def is_one(reads: Sequence[Read], kind: str, body: bytes) -> bool:
     """Whether one examination was sent as one: who sends a list gets a list, also for one."""
     listed = body[:64].removeprefix(codecs.BOM_UTF8).lstrip().startswith(b"[")
     return len(reads) == 1 and BY_CONTENT_TYPE[kind] not in _SEVERAL and not listed
-
-
-def _unreadable(issues: list[Issue]) -> answers.RefusalError:
-    if not has_errors(issues):
-        issues = [
-            Issue("error", "required", "record-none", "The body holds no examination; send one."),
-            *issues,
-        ]
-    too_long = any(issue.code == "too-long" and issue.is_error for issue in issues)
-    return answers.RefusalError(413 if too_long else 400, issues)
