@@ -30,19 +30,17 @@ def open_database(address: str) -> Engine:
         SettingsError: the database cannot be opened, or its tables have another form.
     """
     engine = connect(address)
-    with opening():
+    try:
         found = version_of(engine)
         if found is None:
-            with changing_tables(engine) as connection:
-                found = found_version(connection)
-                if found is None:
-                    metadata.create_all(connection)
-                    connection.execute(insert(schema_version).values(version=SCHEMA_VERSION))
-                    found = SCHEMA_VERSION
-    if found == SCHEMA_VERSION:
-        return engine
-    engine.dispose()
-    raise SettingsError(other_form(found))
+            found = _made(engine)
+    except SettingsError:
+        engine.dispose()
+        raise
+    if found != SCHEMA_VERSION:
+        engine.dispose()
+        raise SettingsError(other_form(found))
+    return engine
 
 
 def connect(address: str) -> Engine:
@@ -112,6 +110,17 @@ def changing_tables(engine: Engine) -> Iterator[Connection]:
             connection.commit()
         finally:
             connection.invalidate()  # its settings are not those of the others
+
+
+def _made(engine: Engine) -> int:
+    """Makes today's tables, unless another process has just made some."""
+    with opening(), changing_tables(engine) as connection:
+        found = found_version(connection)
+        if found is None:
+            metadata.create_all(connection)
+            connection.execute(insert(schema_version).values(version=SCHEMA_VERSION))
+            found = SCHEMA_VERSION
+    return found
 
 
 def found_version(connection: Connection) -> int | None:

@@ -9,16 +9,16 @@ import signal
 import sqlite3
 import subprocess
 import sys
-from collections.abc import Iterator
 from concurrent.futures import ThreadPoolExecutor
 from pathlib import Path
+from typing import Any
 
 import pytest
 from sqlalchemy import Engine, event, func, select, update
 
 from fhirgallop.errors import SettingsError
 from fhirgallop.storage.engine import open_database
-from fhirgallop.storage.submissions import StorageError, Submission, Submissions
+from fhirgallop.storage.submissions import StorageError, Submissions
 from fhirgallop.storage.tables import SCHEMA_VERSION, schema_version, submissions
 
 # A program that stores one examination after the other and says each number once it is stored.
@@ -36,28 +36,12 @@ for number in range(int(sys.argv[2]), 10**9):
 """
 
 
-def submission(exam: str = "urn:a", version: int = 1, **other: object) -> Submission:
-    """One version of an examination."""
-    values: dict[str, object] = {
-        "edition": "R4", "snomed": True, "map_name": "m", "map_version": "1", "record_hash": "0" * 64, "patient": "p" * 64,
-        "received": "2026-12-01T08:30:00Z", "bundle": b'{"value":1.20}', **other,
-    }  # fmt: skip
-    return Submission(exam=exam, version=version, **values)  # type: ignore[arg-type]
-
-
-@pytest.fixture
-def engine(tmp_path: Path) -> Iterator[Engine]:
-    opened = open_database(f"sqlite:///{tmp_path / 'store.sqlite3'}")
-    yield opened
-    opened.dispose()
-
-
 def rows(engine: Engine) -> int:
     with engine.connect() as connection:
         return connection.scalar(select(func.count()).select_from(submissions)) or 0
 
 
-def test_the_newest_version_counts_and_comes_back_whole(engine: Engine) -> None:
+def test_the_newest_version_counts_and_comes_back_whole(engine: Engine, submission: Any) -> None:
     store = Submissions(engine)
     first, second = submission(), submission(version=2, bundle=b"2", record_hash="1" * 64)
     assert store.latest("urn:a", "R4", snomed=True) is None
@@ -68,7 +52,7 @@ def test_the_newest_version_counts_and_comes_back_whole(engine: Engine) -> None:
     assert store.latest("urn:b", "R4", snomed=True) is None
 
 
-def test_each_way_of_writing_has_versions_of_its_own(engine: Engine) -> None:
+def test_each_way_of_writing_has_versions_of_its_own(engine: Engine, submission: Any) -> None:
     store = Submissions(engine)
     kinds = [("R4", True), ("R5", True), ("R4", False)]
     for edition, snomed in kinds:
@@ -79,7 +63,7 @@ def test_each_way_of_writing_has_versions_of_its_own(engine: Engine) -> None:
         assert (found.edition, found.snomed) == (edition, snomed)
 
 
-def test_of_two_who_store_the_same_version_one_wins(engine: Engine) -> None:
+def test_of_two_who_store_the_same_version_one_wins(engine: Engine, submission: Any) -> None:
     store = Submissions(engine)
     offered = [submission(bundle=bytes([n])) for n in range(8)]
     with ThreadPoolExecutor(8) as pool:
@@ -89,7 +73,7 @@ def test_of_two_who_store_the_same_version_one_wins(engine: Engine) -> None:
     assert rows(engine) == 1
 
 
-def test_a_full_disk_keeps_nothing_and_is_got_over(tmp_path: Path) -> None:
+def test_a_full_disk_keeps_nothing_and_is_got_over(tmp_path: Path, submission: Any) -> None:
     """SQLite tells a page limit that is reached as it tells a full disk (SQLITE_FULL)."""
     engine = open_database(f"sqlite:///{tmp_path / 'full.sqlite3'}")
 
@@ -171,7 +155,10 @@ def test_a_database_that_cannot_be_opened_is_told(tmp_path: Path) -> None:
         open_database("nosuchdatabase://host/name")
 
 
-def test_the_journal_survives_a_crash_of_the_program(engine: Engine) -> None:
+def test_the_journal_survives_a_crash_of_the_program(tmp_path: Path) -> None:
+    engine = open_database(f"sqlite:///{tmp_path / 'store.sqlite3'}")
     with engine.connect() as connection:
-        assert connection.exec_driver_sql("PRAGMA journal_mode").scalar() == "wal"
-        assert connection.exec_driver_sql("PRAGMA foreign_keys").scalar() == 1
+        pragmas = {"journal_mode": "wal", "foreign_keys": 1, "secure_delete": 1}
+        for name, value in pragmas.items():
+            assert connection.exec_driver_sql(f"PRAGMA {name}").scalar() == value
+    engine.dispose()
