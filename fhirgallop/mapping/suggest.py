@@ -172,12 +172,15 @@ def _targets() -> Mapping[Target, tuple[_Wording, ...]]:
         texts |= dict.fromkeys(MURMUR_WORDINGS.get(axis, ()), False)
     for part, texts_ in RECORD_WORDINGS.items():
         said[Target(RECORD, part)] = dict.fromkeys(texts_, False)
-    return {target: tuple(_wording(*item) for item in texts.items()) for target, texts in said.items()}
+    return {
+        target: tuple(_wording(*item, whole=target.finding == RECORD) for item in texts.items())
+        for target, texts in said.items()
+    }
 
 
-def _wording(text: str, short: bool) -> _Wording:
+def _wording(text: str, short: bool, *, whole: bool) -> _Wording:
     raw = _words(text)
-    told = [word for word in raw if word not in IDLE] or raw
+    told = raw if whole else [word for word in raw if word not in IDLE] or raw
     wide = [part for word in told for part in SHORT.get(word, word).split()]
     return _Wording(text, tuple(dict.fromkeys(wide)), "".join(raw), short)
 
