@@ -18,6 +18,7 @@ from starlette.concurrency import run_in_threadpool
 from starlette.requests import Request
 
 from fhirgallop.codes import fhirjson
+from fhirgallop.outcome import Issue
 from fhirgallop.service.audit_event import Action, Deed, Ending, Who, audit_event
 from fhirgallop.service.auth.caller import Caller
 from fhirgallop.storage import audit as storage
@@ -66,13 +67,20 @@ def about(
     )
 
 
-def kept(request: Request) -> Callable[[Connection, int], None]:
+def kept(
+    request: Request, *, status: int = 200, issues: Iterable[Issue] = ()
+) -> Callable[[Connection, int], None]:
     """What adds the event of a request to a transaction that writes data (see Submissions.add).
 
     Call `about` first. The guard adds no event of its own, unless the request fails in the end.
+
+    Args:
+        request: the request.
+        status: how this part of it came out, where it has several parts.
+        issues: why this part was refused.
     """
     auditor: Auditor = request.app.state.audit
-    rows = auditor.rows(request, Ending())
+    rows = auditor.rows(request, Ending(status, tuple(issues)))
 
     def keep(connection: Connection, _row: int) -> None:
         storage.add(connection, rows)
