@@ -9,7 +9,20 @@ from typing import Annotated
 
 import typer
 
-from fhirgallop.cli import audit, code, database, demo, draw, extract, maps, review, rules, serve, validate
+from fhirgallop.cli import (
+    audit,
+    code,
+    database,
+    deliveries,
+    demo,
+    draw,
+    extract,
+    maps,
+    review,
+    rules,
+    serve,
+    validate,
+)
 from fhirgallop.cli.shared import Exit, complain
 from fhirgallop.errors import FhirgallopError, MapError, SettingsError
 from fhirgallop.version import VERSION
@@ -33,6 +46,7 @@ app.add_typer(maps.app, name="map")
 app.add_typer(rules.app, name="rules")
 app.add_typer(database.app, name="database")
 app.add_typer(audit.app, name="audit")
+app.add_typer(deliveries.app, name="deliveries")
 
 
 def _version(wanted: bool) -> None:

@@ -129,7 +129,9 @@ def _settled(way: Way, claim: Claim, verdict: Verdict) -> Settled:
     if verdict.meaning == "delivered":
         return Settled("delivered", due=now, outcome=verdict.outcome)
     wait = way.patience.wait(claim.attempts, way.chance)
-    due = now + max(wait, asked_to_wait(verdict.retry_after, way.clock()))
+    # what was given up may still be worked on over there; it must not be overtaken by what follows
+    still_working = way.timeout if verdict.kind == "timed-out" else 0
+    due = now + max(wait, still_working, asked_to_wait(verdict.retry_after, way.clock()))
     return Settled(
         "failed" if _is_final(claim, verdict, way.patience) else "waiting",
         verdict.reason,
