@@ -155,8 +155,7 @@ class Fetcher:
                 reading.lack = page
                 return
             reading.pages.append(page)
-            following = "" if reading.wanted.is_read else next_page(page)
-            reading.url = urljoin(reading.url, following) if following else ""
+            reading.url = "" if reading.wanted.is_read else _following(page, reading.url)
         reading.lack = None
 
     def _page(self, reading: _Reading, way: _Way) -> dict[str, Any] | Lack:
@@ -198,7 +197,7 @@ def open_fetcher(settings: Settings, resolve: Resolve | None = None) -> Fetcher 
         timeout=seconds,
         most_bytes=settings.max_body,
         private=settings.private_network or settings.loopback_http,
-        verify=trust(settings.chart_authorities),
+        verify=trust(settings.trusted),
         resolve=resolve,
         connections=_AT_ONCE,
     )
@@ -249,8 +248,17 @@ def _readings(call: Call, service: Service, base: str) -> dict[str, _Reading]:
             readings[key] = _Reading(wanted, f"{base}/{query(wanted, context)}", [])
         elif key in call.prefetch.paged:
             first = call.prefetch.usable[key]
-            readings[key] = _Reading(wanted, urljoin(f"{base}/", next_page(first)), [first])
+            readings[key] = _Reading(wanted, _following(first, f"{base}/"), [first])
     return readings
+
+
+def _following(page: Mapping[str, Any], url: str) -> str:
+    """Address of the page after this one, which itself stood at `url`; empty when there is none."""
+    following = next_page(page)
+    try:
+        return urljoin(url, following) if following else ""
+    except ValueError:  # no address; nothing is asked, and the page stays open
+        return ""
 
 
 def _log(service: Service, readings: Mapping[str, _Reading], lacks: Mapping[str, Lack]) -> None:

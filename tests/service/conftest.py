@@ -3,6 +3,8 @@
 from __future__ import annotations
 
 import json
+import subprocess
+import sys
 import uuid
 from collections.abc import Callable, Iterator
 from copy import deepcopy
@@ -10,6 +12,7 @@ from datetime import UTC, datetime, timedelta
 from pathlib import Path
 from typing import Any
 
+import httpx
 import pytest
 from fastapi import FastAPI
 from starlette.testclient import TestClient
@@ -177,3 +180,51 @@ def hook_call(prefetch: Callable[..., dict[str, Any]]) -> Callable[..., dict[str
         return {**body, **changed}
 
     return make
+
+
+class ChartPeer:
+    """The record system's FHIR server in a process of its own; see tests/peers/chart_server.py."""
+
+    def __init__(self, port: int) -> None:
+        self.origin = f"http://127.0.0.1:{port}"
+        self.base = f"{self.origin}/fhir"
+        self._client = httpx.Client(base_url=self.origin, trust_env=False)
+
+    def holds(self, resources: list[dict[str, Any]], **manners: dict[str, Any]) -> None:
+        """What it has from now on; `Observation__exam={"delay": 1}` is the manner of `Observation/exam`."""
+        named = {name.replace("__", "/"): manner for name, manner in manners.items()}
+        assert self._client.put("/_chart", json={"resources": resources, "manners": named}).is_success
+
+    def asked(self) -> list[dict[str, Any]]:
+        """Paths and headers since."""
+        found: list[dict[str, Any]] = self._client.get("/_asked").json()["asked"]
+        return found
+
+    def get(self, path: str) -> Any:
+        """What it answers the test itself."""
+        return self._client.get(f"{self.base}/{path}").json()
+
+    def close(self) -> None:
+        self._client.close()
+
+
+@pytest.fixture(scope="session")
+def _chart_peer(root: Path) -> Iterator[ChartPeer]:
+    started = subprocess.Popen(
+        [sys.executable, str(root / "tests/peers/chart_server.py")], stdout=subprocess.PIPE, text=True
+    )
+    assert started.stdout
+    peer = ChartPeer(int(started.stdout.readline()))
+    yield peer
+    peer.close()
+    started.kill()
+    started.communicate()
+
+
+@pytest.fixture
+def chart_peer(_chart_peer: ChartPeer, prefetch: Callable[..., dict[str, Any]]) -> ChartPeer:
+    """The server with everything that the services ask for."""
+    found = prefetch()
+    entries = [e["resource"] for key, value in found.items() if key != "patient" for e in value["entry"]]
+    _chart_peer.holds([found["patient"], *entries])
+    return _chart_peer

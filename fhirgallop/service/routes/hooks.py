@@ -71,8 +71,8 @@ def list_services() -> Response:
     "/cds-services/{service_id}",
     summary="Call a CDS Hooks service",
     description=(
-        "The body is a CDS Hooks 2.0.1 request. What is not in the prefetch is read from a fhirServer that is "
-        "listed here; data that are needed and cannot be had are answered with 412."
+        "The body is a CDS Hooks 2.0.1 request. What is not in the prefetch is read from a fhirServer that "
+        "is listed here; data that are needed and cannot be had are answered with 412."
     ),
     openapi_extra=_BODY,
     dependencies=[Depends(needs(cds=True))],
