@@ -1,0 +1,64 @@
+"""Pages for people: templates, and the answer around them. Everything a page shows is escaped."""
+
+from __future__ import annotations
+
+from typing import Any, Final
+
+from fastapi import Request
+from jinja2 import Environment, PackageLoader, StrictUndefined
+from starlette.responses import HTMLResponse
+
+from fhirgallop.service.auth.caller import Caller
+from fhirgallop.service.auth.people import FORM_FIELD
+from fhirgallop.version import VERSION
+
+# a page may load what lies here beside it, and nothing from anywhere else
+POLICY: Final = (
+    "default-src 'none'; style-src 'self'; script-src 'self'; img-src 'self' data:; connect-src 'self'; "
+    "form-action 'self'; frame-ancestors 'none'; base-uri 'none'"
+)
+# address, name, and the roles it is for
+_WAYS: Final = (
+    ("/desk", "Maps", frozenset({"informatician"})),
+    ("/exams", "Examinations", frozenset({"clinician", "informatician"})),
+    ("/deliveries", "Deliveries", frozenset({"operator"})),
+    ("/knowledge", "Knowledge", frozenset({"operator", "informatician", "clinician"})),
+)
+
+_templates: Final = Environment(
+    loader=PackageLoader("fhirgallop.service.pages"),
+    autoescape=True,
+    undefined=StrictUndefined,
+    trim_blocks=True,
+    lstrip_blocks=True,
+)
+
+
+def page(request: Request, template: str, *, status: int = 200, **values: Any) -> HTMLResponse:
+    """A page for whoever asks.
+
+    Args:
+        request: the request, let in already.
+        template: name of a file in `templates/`.
+        status: HTTP status.
+        values: what the template needs; one that is missing is an error.
+    """
+    return HTMLResponse(render(request, template, **values), status, {"Content-Security-Policy": POLICY})
+
+
+def render(request: Request, template: str, **values: Any) -> str:
+    """The text of a page, or of a part of one."""
+    caller: Caller = request.state.caller
+    token = getattr(request.state, "form_token", "")
+    ways = [
+        (address, name) for address, name, roles in _WAYS if caller.kind == "nobody" or roles & caller.roles
+    ]
+    return _templates.get_template(template).render(
+        caller=caller,
+        form_field=FORM_FIELD,
+        form_token=token,
+        here=request.url.path,
+        ways=ways,
+        version=VERSION,
+        **values,
+    )
