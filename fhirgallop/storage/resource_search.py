@@ -84,6 +84,7 @@ class Kept:
     version: int
     updated: int
     patient: str
+    encounter: str
     date_from: int | None
     body: bytes
 
@@ -94,7 +95,18 @@ class Kept:
         return Place(BEFORE_ALL if self.date_from is None else self.date_from, self.number)
 
 
-_NAMES: Final = ("id", "edition", "type", "fhir_id", "version", "updated", "patient", "date_from", "body")
+_NAMES: Final = (
+    "id",
+    "edition",
+    "type",
+    "fhir_id",
+    "version",
+    "updated",
+    "patient",
+    "encounter",
+    "date_from",
+    "body",
+)
 _COLUMNS: Final = [resources.c[name] for name in _NAMES]
 _WHEN: Final = func.coalesce(resources.c.date_from, BEFORE_ALL)
 

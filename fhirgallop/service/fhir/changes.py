@@ -48,57 +48,54 @@ class Sent:
 
 def create(request: Request, wish: Wish, sent: Sent, unless: str | None) -> Response:
     """A new resource; nothing where the condition (If-None-Exist) is met by one already."""
-    of_type(sent.resource, sent.type)
-    _within(request, sent, "c")
-    issues = judged(sent.resource, sent.base.edition)
-    keeper = desk(request)
-    if unless is not None:
-        found = keeper.the_one(sent.base.edition, sent.type, condition(unless))
-        if found is not None:
-            kept = seen(request, found, "s")
-            audit.about(request, action="R", interaction="create", patients=[kept.patient],
-                        entities=[f"{sent.type}/{kept.fhir_id}"])  # fmt: skip
-            return _saved(wish, sent, Saved.before(kept), issues)
-    return _save(request, wish, sent, None, issues)
+    existing = met(request, sent, condition(unless) if unless is not None else None)
+    if existing is None:
+        return _save(request, wish, sent, None)
+    audit.about(request, action="R", interaction="create", patients=[existing.patient],
+                entities=[f"{sent.type}/{existing.fhir_id}"])  # fmt: skip
+    return _saved(wish, sent, Saved.before(existing), [])
 
 
 def update(request: Request, wish: Wish, sent: Sent, fhir_id: str) -> Response:
     """The next version of a resource."""
+    return _save(request, wish, sent, known(request, sent, fhir_id, request.headers.get("if-match")))
+
+
+def update_found(request: Request, wish: Wish, sent: Sent, parameters: Parameters) -> Response:
+    """The next version of the one resource that fits; a new one where none does."""
+    return _save(request, wish, sent, fitting(request, sent, parameters, request.headers.get("if-match")))
+
+
+def met(request: Request, sent: Sent, parameters: Parameters | None) -> Kept | None:
+    """What meets the condition of a create already, so that nothing is created."""
+    of_type(sent.resource, sent.type)
+    _within(request, sent, "c")
+    if parameters is None:
+        return None
+    found = desk(request).the_one(sent.base.edition, sent.type, parameters)
+    return None if found is None else seen(request, found, "s")
+
+
+def known(request: Request, sent: Sent, fhir_id: str, if_match: str | None) -> Kept:
+    """What an update changes; 405 where there is nothing of that id."""
     of_type(sent.resource, sent.type)
     if sent.resource.get("id") != fhir_id:
         text = "The resource's id is not that of its address; send it with the same id."
         raise refusal(400, "value", "http-other-id", text)
     _within(request, sent, "u")
-    before = known(request, sent, fhir_id)
-    issues = judged(sent.resource, sent.base.edition)
-    _expect(request.headers.get("if-match"), before)
-    return _save(request, wish, sent, before, issues)
-
-
-def update_found(request: Request, wish: Wish, sent: Sent, parameters: Parameters) -> Response:
-    """The next version of the one resource that fits; a new one where none does."""
-    of_type(sent.resource, sent.type)
-    _within(request, sent, "u")
-    issues = judged(sent.resource, sent.base.edition)
-    before = fitting(request, sent, parameters)
-    if before is not None:
-        _expect(request.headers.get("if-match"), before)
-    return _save(request, wish, sent, before, issues)
-
-
-def known(request: Request, sent: Sent, fhir_id: str) -> Kept:
-    """What an update changes; 405 where there is nothing of that id."""
     store = desk(request).store
     before = store.read(sent.base.edition, sent.type, fhir_id) if is_id(fhir_id) else None
     if before is None:
         if not request.state.caller.reach(sent.type, "u").everything:
             raise not_found()  # the same as for what may not be seen
         raise refusal(405, "not-supported", "update-unknown", _NO_UPSERT)
-    return seen(request, before, "u")
+    return _expected(if_match, seen(request, before, "u"))
 
 
-def fitting(request: Request, sent: Sent, parameters: Parameters) -> Kept | None:
+def fitting(request: Request, sent: Sent, parameters: Parameters, if_match: str | None) -> Kept | None:
     """What a conditional update changes; None where it creates."""
+    of_type(sent.resource, sent.type)
+    _within(request, sent, "u")
     caller: Caller = request.state.caller
     before = desk(request).the_one(sent.base.edition, sent.type, parameters)
     own = sent.resource.get("id")
@@ -106,7 +103,7 @@ def fitting(request: Request, sent: Sent, parameters: Parameters) -> Kept | None
         if own is not None and own != before.fhir_id:
             text = "The resource's id is not that of the one that fits the condition; leave the id out."
             raise refusal(400, "value", "http-other-id", text)
-        return seen(request, before, "u")
+        return _expected(if_match, seen(request, before, "u"))
     if own is not None:
         raise refusal(405, "not-supported", "update-unknown", _NO_UPSERT)
     if not caller.may(sent.type, "c", sent.resource):
@@ -120,15 +117,17 @@ def _within(request: Request, sent: Sent, does: str) -> None:
         raise forbidden()
 
 
-def _expect(header: str | None, before: Kept) -> None:
+def _expected(header: str | None, before: Kept) -> Kept:
     wanted = expected_version(header)
     if wanted is not None and wanted != str(before.version):
         raise stale()
+    return before
 
 
-def _save(request: Request, wish: Wish, sent: Sent, before: Kept | None, issues: list[Issue]) -> Response:
+def _save(request: Request, wish: Wish, sent: Sent, before: Kept | None) -> Response:
+    issues = judged(sent.resource, sent.base.edition)
     keeper = desk(request)
-    new = keeper.version(sent.base.edition, sent.resource, before)
+    new = keeper.version(sent.base.edition, sent.resource, keeper.id_for(sent.resource, before), before)
     audit.about(
         request, action="U" if before else "C", interaction="update" if before else "create",
         patients=[new.patient], entities=[f"{sent.type}/{new.fhir_id}"],

@@ -9,6 +9,7 @@ from __future__ import annotations
 from collections.abc import Callable, Iterable, Mapping, Sequence
 from dataclasses import dataclass
 from datetime import datetime
+from types import MappingProxyType
 from typing import Any, Final
 from urllib.parse import parse_qsl
 
@@ -21,6 +22,7 @@ from fhirgallop.observations.editions import Edition
 from fhirgallop.outcome import Issue, has_errors
 from fhirgallop.service.answers import RefusalError, refusal
 from fhirgallop.service.fhir import body, dates
+from fhirgallop.service.fhir.address import KEPT, is_id
 from fhirgallop.service.fhir.coded import finding_of, party_key
 from fhirgallop.service.fhir.query import MOST_PARAMETERS, Parameters, parse
 from fhirgallop.service.fhir.search import matches
@@ -38,6 +40,12 @@ _IDENTITY: Final = Issue(
     "error", "business-rule", "resource-identity",
     "A resource keeps the urn:uuid identity it was created with; send it with that, or create another.",
 )  # fmt: skip
+_OF_NOTHING: Final = Issue(
+    "error", "business-rule", "provenance-targets",
+    "None of the targets is kept here, so that nobody would find this Provenance; send it with its targets.",
+    expression="Provenance.target",
+)  # fmt: skip
+_MOST_TARGETS: Final = 20  # that are looked for
 _DUPLICATE: Final = Issue(
     "error", "duplicate", "resource-duplicate",
     "There is a resource with this identity already; update it, or create with If-None-Exist.",
@@ -95,28 +103,60 @@ class Desk:
             raise refusal(412, "multiple-matches", "condition-several", said)
         return found[0] if found else None
 
-    def version(self, edition: Edition, resource: Resource, before: Kept | None) -> NewVersion:
-        """What to keep of a judged resource: a new one, or one that follows `before`.
+    def id_for(self, resource: Resource, before: Kept | None) -> str:
+        """The id of a resource that follows `before`, or is new.
 
         Raises:
             RefusalError: 422 where it changes its identity.
         """
         identity = own_id(resource)
-        if before is not None:
-            kept_as = before.fhir_id
-            if identity != kept_as and (identity or "-" in kept_as):
-                raise RefusalError(422, [_IDENTITY])
-        else:
-            kept_as = identity or self._new_id()
+        if before is None:
+            return identity or self._new_id()
+        if identity != before.fhir_id and (identity or "-" in before.fhir_id):
+            raise RefusalError(422, [_IDENTITY])
+        return before.fhir_id
+
+    def version(
+        self,
+        edition: Edition,
+        resource: Resource,
+        kept_as: str,
+        before: Kept | None,
+        beside: Mapping[str, NewVersion] = MappingProxyType({}),
+    ) -> NewVersion:
+        """What to keep of a judged resource: a new one, or one that follows `before`.
+
+        Args:
+            edition: FHIR edition.
+            resource: judged, with its references turned.
+            kept_as: its id.
+            before: what it follows.
+            beside: what is kept in the same transaction, by address; a Provenance may be of these.
+        """
         start, end = dates.of_element(resource) or (None, None)
-        party = resource if "subject" in resource else {"subject": resource.get("patient"), **resource}
-        tokens = tokens_of(resource)
+        patient = party_key(resource.get("subject") or resource.get("patient"), patient_key)
+        encounter = party_key(resource.get("encounter"), encounter_key)
+        if not patient and resource["resourceType"] == "Provenance":
+            patient, encounter = self._of_targets(edition, resource, beside)
         return NewVersion(
-            edition, resource["resourceType"], kept_as,
-            party_key(party.get("subject"), patient_key), party_key(party.get("encounter"), encounter_key),
-            finding_of(resource), start, end, body.kept(resource), tokens,
-            before.version if before else 0,
+            edition, resource["resourceType"], kept_as, patient, encounter, finding_of(resource), start, end,
+            body.kept(resource), tokens_of(resource), before.version if before else 0,
         )  # fmt: skip
+
+    def _of_targets(
+        self, edition: Edition, provenance: Resource, beside: Mapping[str, NewVersion]
+    ) -> tuple[str, str]:
+        """Patient and encounter of what a Provenance is about: with them it is found, and deleted."""
+        for target in provenance.get("target", ())[:_MOST_TARGETS]:
+            address = target.get("reference", "")
+            new = beside.get(address)
+            if new is not None:
+                return new.patient, new.encounter
+            type_, _, fhir_id = address.partition("/")
+            kept = self.store.read(edition, type_, fhir_id) if type_ in KEPT and is_id(fhir_id) else None
+            if kept is not None:
+                return kept.patient, kept.encounter
+        raise RefusalError(422, [_OF_NOTHING])
 
     def save(self, versions: Sequence[NewVersion], also: Iterable[Also] = ()) -> list[Saved]:
         """Keeps them all, or none.
@@ -174,9 +214,14 @@ def judged(resource: Mapping[str, Any], edition: Edition) -> list[Issue]:
     """
     issues = validate(resource, edition)
     if has_errors(issues):
-        basic = any(issue.is_error and issue.code in _BASIC for issue in issues)
-        raise RefusalError(400 if basic else 422, issues)
+        raise as_refusal(issues)
     return issues
+
+
+def as_refusal(issues: Sequence[Issue]) -> RefusalError:
+    """400 where something is no well-formed resource, 422 where it breaks a rule."""
+    basic = any(issue.is_error and issue.code in _BASIC for issue in issues)
+    return RefusalError(400 if basic else 422, issues)
 
 
 def of_type(resource: Mapping[str, Any], type_: str) -> None:

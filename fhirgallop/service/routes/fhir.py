@@ -16,9 +16,10 @@ from starlette.responses import Response
 from fhirgallop.service import answers, requests
 from fhirgallop.service.auth.needs import needs
 from fhirgallop.service.fhir import changes, interactions
-from fhirgallop.service.fhir.address import KEPT, EditionPath, base, known_type
+from fhirgallop.service.fhir.address import KEPT, Base, EditionPath, base, known_type
+from fhirgallop.service.fhir.bundles import MOST_ENTRIES, answered
 from fhirgallop.service.fhir.changes import Sent
-from fhirgallop.service.fhir.negotiation import GENERAL, sent_fhir, wish
+from fhirgallop.service.fhir.negotiation import GENERAL, Wish, sent_fhir, wish
 from fhirgallop.service.fhir.query import MOST_PARAMETERS
 from fhirgallop.service.fhir.writing import read_resource
 from fhirgallop.settings import Settings
@@ -187,6 +188,29 @@ async def update_found(request: Request, edition: EditionName, resource_type: Ty
     return await run_in_threadpool(
         changes.update_found, request, wanted, sent, request.query_params.multi_items()
     )
+
+
+@router.post(
+    "/fhir/{edition}",
+    summary="Transaction or batch",
+    description=f"A Bundle of creates, updates, reads and searches; at most {MOST_ENTRIES} entries.",
+    openapi_extra=_RESOURCE,
+    responses=_CHANGED,
+    dependencies=[Depends(needs(token=True))],  # each entry needs its own scopes
+)
+async def bundle(request: Request, edition: EditionName) -> Response:
+    """All entries or none (transaction), or each for itself (batch)."""
+    here = base(request, edition)
+    wanted = wish(request, here.edition)
+    requests.only_known(request, GENERAL)
+    sent_fhir(request, here.edition)
+    settings: Settings = request.app.state.settings
+    text = await requests.body(request, settings.max_body)
+    return await run_in_threadpool(_bundle, request, wanted, here, text)
+
+
+def _bundle(request: Request, wanted: Wish, here: Base, text: bytes) -> Response:
+    return answered(request, wanted, here, read_resource(text))
 
 
 async def _sent(request: Request, edition: EditionPath, type_: str) -> Sent:
