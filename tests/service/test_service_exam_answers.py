@@ -50,11 +50,11 @@ def test_an_examination_by_itself_is_reviewed_and_silence_is_called_no_reassuran
 
 def test_the_review_without_a_chart_is_of_this_examination(client: Any, example: Any) -> None:
     said = []
-    for rhythm in ("reg", "irr-irr"):
-        record = example(pulse={"rhythm": rhythm})
+    for sound in ("left", "no"):
+        record = example(heart={"s4": sound})
         full = client.post(f"{WHERE}&review=full", json=record).json()["review"]["conclusions"]
-        said.append("pulse.irregularly-irregular" in json.dumps(full))
-    assert said == [False, True]
+        said.append("heart-sound.s4" in {item["id"] for one in full["open"] for item in one["subject"]})
+    assert said == [True, False]
 
 
 def test_the_full_review_holds_what_no_card_shows(client: Any, example: Any) -> None:
