@@ -68,7 +68,11 @@ def judge(answer: Answer, entries: int) -> Verdict:
     reason = f"answered {status}{said}"
     retry_after = answer.headers.get("retry-after", "")
     if status in (401, 403):
-        return Verdict("denied", str(status), reason, well=False, retry_after=retry_after, outcome=outcome)
+        # 403 may be about this one patient; 401 is about us
+        return Verdict(
+            "denied", str(status), reason, well=False, ends=status == 403,
+            retry_after=retry_after, outcome=outcome,
+        )  # fmt: skip
     if status in _LATER or status >= 500 or status < 300:
         return Verdict(
             "later", str(status), reason, well=status in _WELL, ends=_LATER.get(status, True),
