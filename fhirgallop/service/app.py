@@ -86,6 +86,7 @@ def create_app(settings: Settings, clock: Callable[[], datetime] = now) -> FastA
             yield
         if fetcher:
             fetcher.close()
+        _app.state.gate.close()
         engine.dispose()
 
     app = FastAPI(
@@ -97,14 +98,12 @@ def create_app(settings: Settings, clock: Callable[[], datetime] = now) -> FastA
         lifespan=lifespan,
     )
     app.state.settings = settings
-    app.state.gate, app.state.sign_in = open_gate(settings, engine, clock)
+    app.state.gate = open_gate(settings, engine, clock)
     app.state.public_keys = public_keys(settings)
     app.state.shelf = {name: one.template for name, one in shelf.items()}
     policy = Policy(shadow=settings.cards_shadow)
     keys = KeyDesk(Answers(engine), clock, settings.idempotency_hours)
     app.state.clock = clock
-    manner = Manner(policy, settings.cards_critical, settings.pages.rstrip("/"))
-    app.state.hooks = HookDesk(HookStore(engine), clock, rulebook.load(), manner)
     app.state.fetcher = fetcher
     app.state.dispatch = dispatch
     for router in (
@@ -122,6 +121,8 @@ def create_app(settings: Settings, clock: Callable[[], datetime] = now) -> FastA
         app.include_router(router)
     open_fhir(app, engine, clock)
     watch_over(app, engine, settings, clock)
+    manner = Manner(policy, settings.cards_critical, settings.pages.rstrip("/"), settings.cds_system_actions)
+    app.state.hooks = HookDesk(HookStore(engine), clock, rulebook.load(), manner, app.state.metrics)
     app.state.exams = ExamDesk(
         Examinations(
             Submissions(engine), clock, delivered=(settings.edition, settings.snomed) if dispatch else None

@@ -3,12 +3,14 @@
 from __future__ import annotations
 
 import logging
+from collections.abc import Sequence
 from dataclasses import dataclass
 from typing import Final
 
 from fastapi import Request
 from starlette.concurrency import run_in_threadpool
 
+from fhirgallop.delivery.client import Client
 from fhirgallop.outcome import Issue
 from fhirgallop.service import answers
 from fhirgallop.service.auth.access import AccessTokens
@@ -18,6 +20,7 @@ from fhirgallop.service.auth.cds import CdsClients
 from fhirgallop.service.auth.jwt import TokenError
 from fhirgallop.service.auth.keys import UnreachableError
 from fhirgallop.service.auth.needs import Need
+from fhirgallop.service.auth.openid import SignIn
 from fhirgallop.service.auth.people import People
 from fhirgallop.service.limits import admit_caller
 
@@ -35,6 +38,8 @@ class Gate:
         tokens: holders of access tokens.
         administrators: holders of the local token.
         people: who is signed in.
+        sign_in: how people sign in with the site's provider.
+        clients: what all of these speak to others with.
     """
 
     closed: bool
@@ -43,6 +48,13 @@ class Gate:
     tokens: AccessTokens | None
     administrators: Administrators
     people: People
+    sign_in: SignIn | None
+    clients: Sequence[Client]
+
+    def close(self) -> None:
+        """Closes the connections to others."""
+        for client in self.clients:
+            client.close()
 
     async def admit(self, request: Request, need: Need) -> Caller:
         """The caller.

@@ -38,17 +38,20 @@ class _Site:
     settings: Settings
     engine: Engine
     clock: Callable[[], float]
+    clients: list[Client]
 
     def client(self, *places: str) -> Client:
         """Speaks to the places that are addresses, and to nobody else."""
         given = self.settings
-        return Client(
+        made = Client(
             _origins(places),
             timeout=_SECONDS,
             most_bytes=_MOST_BYTES,
             private=given.private_network or given.loopback_http,
             verify=trust(given.trusted),
         )
+        self.clients.append(made)
+        return made
 
     def keys(self, *places: str) -> Keys:
         """Finds keys at these places; those that are files are read now, so that a fault is told at once."""
@@ -58,26 +61,25 @@ class _Site:
         return Keys(self.client(*places), time.monotonic)
 
 
-def open_gate(
-    settings: Settings, engine: Engine, clock: Callable[[], datetime]
-) -> tuple[Gate, SignIn | None]:
-    """The gate, and the sign-in where one is set.
+def open_gate(settings: Settings, engine: Engine, clock: Callable[[], datetime]) -> Gate:
+    """The gate.
 
     Raises:
         SettingsError: a file with keys or a secret cannot be used.
     """
-    site = _Site(settings, engine, lambda: clock().timestamp())
+    site = _Site(settings, engine, lambda: clock().timestamp(), [])
     address = settings.address.rstrip("/")
     people = People(Sessions(engine), site.clock, settings.session_minutes * 60)
-    gate = Gate(
+    return Gate(
         closed=settings.authorised,
         address=address,
         cds=_cds(site),
         tokens=_tokens(site, address),
         administrators=Administrators(settings.admin_token, time.monotonic),
         people=people,
+        sign_in=_sign_in(site, address),
+        clients=site.clients,
     )
-    return gate, _sign_in(site, address)
 
 
 def _cds(site: _Site) -> CdsClients | None:

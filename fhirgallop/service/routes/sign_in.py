@@ -43,7 +43,7 @@ async def page(request: Request) -> Response:
         return _page(_signed_in(person, request.state.form_token))
     settings: Settings = request.app.state.settings
     parts = []
-    if request.app.state.sign_in:
+    if gate.sign_in:
         parts.append('<p><a href="/sign-in/start">Sign in with the account of your house</a></p>')
     if settings.admin_token:
         parts.append(
@@ -113,10 +113,10 @@ async def sign_out(request: Request) -> Response:
 
 
 def _desk(request: Request) -> SignIn:
-    desk: SignIn | None = request.app.state.sign_in
-    if desk is None:
+    gate: Gate = request.app.state.gate
+    if gate.sign_in is None:
         raise answers.refusal(404, "not-found", "auth-no-sign-in", "No sign-in provider is set here.")
-    return desk
+    return gate.sign_in
 
 
 def _unreachable() -> answers.RefusalError:
