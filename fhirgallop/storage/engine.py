@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+import sqlite3
+import time
 from collections.abc import Iterator
 from contextlib import contextmanager
 from typing import Any, Final
@@ -152,12 +154,25 @@ def _reachable(url: URL) -> dict[str, Any]:
 
 def _durable_sqlite(connection: Any, _entry: ConnectionPoolEntry) -> None:
     cursor = connection.cursor()
-    cursor.execute("PRAGMA journal_mode=WAL")
+    _write_ahead(cursor)
     cursor.execute("PRAGMA synchronous=NORMAL")
     cursor.execute("PRAGMA foreign_keys=ON")
     # what is deleted or replaced is overwritten
     cursor.execute("PRAGMA secure_delete=ON")
     cursor.close()
+
+
+def _write_ahead(cursor: sqlite3.Cursor) -> None:
+    """SQLite does not wait by itself for another who switches the journal at the same moment."""
+    for left in range(_BUSY_SECONDS * 20, -1, -1):
+        try:
+            cursor.execute("PRAGMA journal_mode=WAL")
+        except sqlite3.OperationalError as error:
+            if error.sqlite_errorcode != sqlite3.SQLITE_BUSY or not left:
+                raise
+            time.sleep(0.05)
+        else:
+            return
 
 
 @contextmanager
