@@ -2,9 +2,13 @@
 
 from __future__ import annotations
 
+import contextlib
 import json
+import os
+import socket
 import subprocess
 import sys
+import time
 import uuid
 from collections.abc import Callable, Iterator
 from copy import deepcopy
@@ -228,3 +232,70 @@ def chart_peer(_chart_peer: ChartPeer, prefetch: Callable[..., dict[str, Any]]) 
     entries = [e["resource"] for key, value in found.items() if key != "patient" for e in value["entry"]]
     _chart_peer.holds([found["patient"], *entries])
     return _chart_peer
+
+
+class ServiceProcess:
+    """The service in a process of its own, on one port and one database however often it is started."""
+
+    def __init__(self, folder: Path, root: Path, settings: dict[str, object]) -> None:
+        with socket.socket() as free:
+            free.bind(("127.0.0.1", 0))
+            self.port = free.getsockname()[1]
+        self.base = f"http://127.0.0.1:{self.port}"
+        self.database = str(settings.pop("DATABASE", f"sqlite:///{folder / 'process.sqlite3'}"))
+        self._log = folder / f"service-{self.port}.log"
+        given = {
+            "PORT": self.port,
+            "MAPS": root / "examples/informatician",
+            "DATABASE": self.database,
+            "FREE_DISK": 0,
+            **settings,
+        }
+        env = {name: value for name, value in os.environ.items() if not name.startswith("FHIRGALLOP_")}
+        self._env = env | {f"FHIRGALLOP_{name}": str(value) for name, value in given.items()}
+        self.process: subprocess.Popen[bytes] | None = None
+
+    def start(self) -> None:
+        """Starts it, and waits until it answers."""
+        with self._log.open("ab") as log:
+            self.process = subprocess.Popen(
+                [sys.executable, "-m", "fhirgallop", "serve"], env=self._env, stdout=log, stderr=log
+            )
+        deadline = time.monotonic() + 60
+        while time.monotonic() < deadline and self.process.poll() is None:
+            with contextlib.suppress(httpx.TransportError):
+                httpx.get(f"{self.base}/health", trust_env=False)
+                return
+            time.sleep(0.05)
+        raise AssertionError(self.log())
+
+    def kill(self) -> None:
+        """Ends it without warning (SIGKILL)."""
+        if self.process:
+            self.process.kill()
+            self.process.wait(30)
+
+    def end(self) -> int:
+        """Tells it to end (SIGTERM), and waits until it has."""
+        assert self.process
+        self.process.terminate()
+        return self.process.wait(30)
+
+    def log(self) -> str:
+        """What it logged so far."""
+        return self._log.read_text("utf-8")
+
+
+@pytest.fixture
+def serving(tmp_path: Path, root: Path) -> Iterator[Callable[..., ServiceProcess]]:
+    """Starts the service: `serving(DATABASE=..., BATCH_WORKERS=2)`; what still runs in the end is killed."""
+    running: list[ServiceProcess] = []
+
+    def start(**settings: object) -> ServiceProcess:
+        running.append(ServiceProcess(tmp_path, root, settings))
+        running[-1].start()
+        return running[-1]
+
+    yield start
+    for one in running:
+        one.kill()
