@@ -26,6 +26,8 @@ def faults(settings: Settings) -> Iterator[str]:
     yield from _authority(settings)
     yield from _people(settings)
     yield from _deliveries(settings)
+    if "" in settings.cds_system_actions:
+        yield f"{_P}CDS_SYSTEM_ACTIONS: name each client by its `iss`"
     yield from _secure(
         settings, "CDS_CHARTS", *(base for bases in settings.cds_charts.values() for base in bases)
     )

@@ -7,16 +7,18 @@ no finding is ever edited: a suggestion creates a Task and nothing else.
 from __future__ import annotations
 
 import re
-import uuid
 from collections.abc import Iterable, Iterator, Mapping
 from dataclasses import dataclass
 from typing import Any, Final
 
 from fhirgallop.cards import words
 from fhirgallop.cards.card import Card, combination_digest, entry_digest, may_be_true
+from fhirgallop.cards.frame import Frame
 from fhirgallop.cards.memory import Answer
+from fhirgallop.cards.opinion import limits
 from fhirgallop.cards.policy import Ask, Decision
 from fhirgallop.cards.safety import SAFETY_TEXTS
+from fhirgallop.cards.tasks import RHYTHM, asks_for_rhythm, rhythm_suggestion, suggestions, system_action
 from fhirgallop.cards.today import Held
 from fhirgallop.codes import systems
 from fhirgallop.reasoning.conclusion import Conclusion, cutoffs_of
@@ -35,31 +37,9 @@ _ANSWERS: Final = {
     Answer.BOTH_TRUE: "Both entries are true",
     Answer.TRUE_IN_PATIENT: "True in this patient, for twelve months",
 }
-_RHYTHM: Final = "rhythm."
-# A rhythm on the problem list says nothing of today's either.
-_RHYTHMS: Final = (_RHYTHM, "condition.atrial-fibrillation", "condition.atrial-flutter")
-_DAY: Final = 86_400
 _SENTENCE: Final = re.compile(r"[^.?]{1,400}[.?](?=\s|$)")
 # What Markdown of GitHub's flavour gives a meaning inside a line; an address is broken before its slashes.
 _MARKED: Final = re.compile(r"([\\`*_\[\]<>&|~#!@]|:(?=//)|(?<=[Ww]{3})\.)")
-
-
-@dataclass(frozen=True, slots=True)
-class Frame:
-    """What all cards of one answer share.
-
-    Attributes:
-        instance: the hookInstance, from which the cards' ids follow.
-        patient, encounter: FHIR ids; the encounter may be empty.
-        critical: whether an urgent card is marked `critical`; else it is a `warning`.
-        pages: address under which users reach this service's pages, ending in no slash; empty for none.
-    """
-
-    instance: str
-    patient: str
-    encounter: str
-    critical: bool
-    pages: str
 
 
 @dataclass(frozen=True, slots=True)
@@ -79,11 +59,21 @@ class Shown:
     shared: bool
 
 
-def cards(decision: Decision, held: Held, frame: Frame) -> tuple[list[dict[str, Any]], list[Shown]]:
-    """The cards of an answer, loudest first, and what is to be remembered of them.
+def answer(decision: Decision, held: Held, frame: Frame) -> tuple[dict[str, Any], list[Shown]]:
+    """An answer with its cards, loudest first, and what is to be remembered of them.
 
     The same facts and the same hookInstance give the same cards in the same order.
     """
+    given, shown = _cards(decision, held, frame)
+    found: dict[str, Any] = {"cards": given}
+    asks = decision.ask is not None and decision.ask.id.startswith(RHYTHM)
+    calm = (card for card in decision.cards if card.level != "urgent")
+    if frame.acts and given and (asks or any(asks_for_rhythm(c) for card in calm for c in card.conclusions)):
+        found["systemActions"] = [system_action(frame)]
+    return found, shown
+
+
+def _cards(decision: Decision, held: Held, frame: Frame) -> tuple[list[dict[str, Any]], list[Shown]]:
     given = [_card(card, held, frame) for card in decision.cards]
     shown = [_shown(card, frame) for card in decision.cards]
     folded = [f"Further, folded: {card.title}" for card in decision.folded]
@@ -92,10 +82,10 @@ def cards(decision: Decision, held: Held, frame: Frame) -> tuple[list[dict[str, 
         last = given[-1]
         lines = [*folded, *([asked.text] if asked else [])]
         last["detail"] = _inserted(last["detail"], [escaped(line) for line in lines])
-    elif asked and asked.id.startswith(_RHYTHM):
+    elif asked and asked.id.startswith(RHYTHM):
         # what is unknown never alerts; the rhythm alone, which most rules need, is asked for in a card
         given.append(_asking(asked, held, frame))
-        shown.append(Shown(_id(frame, "ask", asked.id), (), (), (), shared=False))
+        shown.append(Shown(frame.id("ask", asked.id), (), (), (), shared=False))
     return given, shown
 
 
@@ -105,14 +95,10 @@ def escaped(text: str) -> str:
     return _MARKED.sub(r"\\\1", " ".join(line.split()))
 
 
-def _id(frame: Frame, *parts: str) -> str:
-    return str(uuid.uuid5(uuid.UUID(frame.instance), "\n".join(parts)))
-
-
 def _shown(card: Card, frame: Frame) -> Shown:
     true = (combination_digest(c) for c in card.conclusions if may_be_true(c))
     return Shown(
-        _id(frame, card.key),
+        frame.id(card.key),
         tuple(dict.fromkeys(c.rule.id for c in card.conclusions)),
         tuple(dict.fromkeys(entry_digest(c) for c in card.conclusions)),
         tuple(dict.fromkeys(true)),
@@ -126,7 +112,7 @@ def _card(card: Card, held: Held, frame: Frame) -> dict[str, Any]:
     topic = "urgent" if urgent else rule.family or rule.id
     headline = URGENT_PHRASE if urgent else summary(first.title, first.question, first.conclusions[0].text)
     found: dict[str, Any] = {
-        "uuid": _id(frame, card.key),
+        "uuid": frame.id(card.key),
         "summary": headline,
         "indicator": _indicator(card, frame),
         "detail": "\n".join(_urgent_detail(card, held) if urgent else _detail(card, held)),
@@ -136,9 +122,9 @@ def _card(card: Card, held: Held, frame: Frame) -> dict[str, Any]:
             for answer in card.answers
         ],
     }
-    suggestions = [] if urgent else list(_suggestions(card, held, frame))
-    if suggestions:
-        found["suggestions"] = suggestions[:MAX_SUGGESTIONS]
+    offered = [] if urgent else list(suggestions(card, held, frame))
+    if offered:
+        found["suggestions"] = offered[:MAX_SUGGESTIONS]
         found["selectionBehavior"] = "any"
     if frame.pages and not urgent:
         # an urgent card names entries only: its rules would name a diagnosis
@@ -226,8 +212,14 @@ _NOTE: Final = "Please note"
 
 
 def _ending(held: Held) -> Iterator[str]:
+    yield from _list("Most rules are not meant for this patient and were not applied", limits(held.review))
+    yield from _list("Sources disagree; both are kept, neither is used", _disputed(held))
     yield from _list("Unknown to this review", held.gaps)
     yield from _list(_NOTE, SAFETY_TEXTS)
+
+
+def _disputed(held: Held) -> Iterable[str]:
+    return dict.fromkeys(words.label(group[0].id) for group in held.review.disagreements)
 
 
 def _list(heading: str, lines: Iterable[str]) -> Iterator[str]:
@@ -244,61 +236,17 @@ def _inserted(detail: str, lines: Iterable[str]) -> str:
 
 def _asking(ask: Ask, held: Held, frame: Frame) -> dict[str, Any]:
     """The one line that asks for the rhythm, where no card carries it."""
-    return {
-        "uuid": _id(frame, "ask", ask.id),
+    card: dict[str, Any] = {
+        "uuid": frame.id("ask", ask.id),
         "summary": "Today's rhythm is not recorded; with it more could be said of this examination.",
         "indicator": "info",
         "detail": "\n".join([escaped(ask.text), "", *_ending(held)]),
         "source": _source(frame, "not-recorded", "Not recorded"),
-        "suggestions": [_rhythm(frame, "ask")],
-        "selectionBehavior": "any",
     }
-
-
-def _suggestions(card: Card, held: Held, frame: Frame) -> Iterator[dict[str, Any]]:
-    if any(_asks_for_rhythm(c) for c in card.conclusions):
-        yield _rhythm(frame, card.key)
-    for look in card.looks:
-        if look.item.of_exam:
-            label = words.label(look.item.id)
-            say = f"Mark for another look: {label}"
-            told = f"{say} ({look.action}). The entry itself is not changed."
-            yield _task(frame, (card.key, look.item.key), say, told, held.own.names.get(look.item.id, ""))
-
-
-def _asks_for_rhythm(conclusion: Conclusion) -> bool:
-    """True when it rests on a rhythm that is not today's, or would need one that nobody recorded."""
-    grounds = (g for g in (*conclusion.subject, *conclusion.grounds) if not g.item.of_exam)
-    old = (g.item for g in grounds if g.stale or g.item.age is None or abs(g.item.age) > _DAY)
-    ids = (*conclusion.unknown, *(item.id for item in old))
-    return any(id_.startswith(_RHYTHMS) for id_ in ids)
-
-
-def _rhythm(frame: Frame, key: str) -> dict[str, Any]:
-    say = "Record today's rhythm"
-    return _task(frame, (key, "rhythm"), say, f"{say}, from a tracing or by the examiner.", "")
-
-
-def _task(frame: Frame, key: tuple[str, ...], label: str, told: str, focus: str) -> dict[str, Any]:
-    """A suggestion to create a Task (FHIR R4, intent proposal): something to do, never a changed finding."""
-    id_ = _id(frame, *key, "suggestion")
-    task: dict[str, Any] = {
-        "resourceType": "Task",
-        "id": _id(frame, *key, "task"),
-        "status": "requested",
-        "intent": "proposal",
-        "description": told,
-        "for": {"reference": f"Patient/{frame.patient}"},
-    }
-    if focus:
-        task["focus"] = {"reference": focus}
-    if frame.encounter:
-        task["encounter"] = {"reference": f"Encounter/{frame.encounter}"}
-    return {
-        "label": label,
-        "uuid": id_,
-        "actions": [{"type": "create", "description": told, "resource": task}],
-    }
+    if not frame.acts:
+        card["suggestions"] = [rhythm_suggestion(frame, "ask")]
+        card["selectionBehavior"] = "any"
+    return card
 
 
 def answered(code: str, system: str) -> Answer | None:

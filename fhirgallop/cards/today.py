@@ -35,6 +35,15 @@ _NOTED: Final = {
     "chart-no-patient": "something was sent that does not say whose it is; it was not used",
     "chart-too-large": "more was sent than is read",
 }
+# of things that have a meaning here; what has none is no gap
+_UNREADABLE: Final = {
+    "chart-unit": "a number by its unit",
+    "chart-number": "a number",
+    "chart-time": "a time",
+    "chart-future": "something of a time that has not come",
+    "chart-birth-date": "the date of birth",
+    "chart-modifier": "something that an unknown extension changes the meaning of",
+}
 
 
 @dataclass(frozen=True, slots=True)
@@ -138,4 +147,9 @@ def _of_draft(
 
 def _gaps(call: Call, issues: Iterable[Issue]) -> list[str]:
     rules = {issue.rule for issue in issues}
-    return [*call.prefetch.gaps(), *(words for rule, words in _NOTED.items() if rule in rules)]
+    unread = [words for rule, words in _UNREADABLE.items() if rule in rules]
+    return [
+        *call.prefetch.gaps(),
+        *(words for rule, words in _NOTED.items() if rule in rules),
+        *([f"sent, and not used because it could not be read: {', '.join(unread)}"] if unread else []),
+    ]

@@ -19,6 +19,7 @@ from fhirgallop.cards.build import Shown
 from fhirgallop.cards.card import digest
 from fhirgallop.cards.discovery import Service
 from fhirgallop.cards.feedback import Feedback, remembering
+from fhirgallop.cards.frame import Frame
 from fhirgallop.cards.hooks import Call
 from fhirgallop.cards.memory import Memory
 from fhirgallop.cards.policy import Decision, Policy, decide
@@ -28,6 +29,7 @@ from fhirgallop.observations.bundle import instant
 from fhirgallop.outcome import Issue
 from fhirgallop.reasoning.rulebook import Rulebook
 from fhirgallop.service.examinations import BusyError
+from fhirgallop.service.metrics import Metrics
 from fhirgallop.storage.hooks import HookStore, KeptCard, KeptFeedback, KeptMemory
 
 log: Final = logging.getLogger("fhirgallop.service")
@@ -37,16 +39,20 @@ _TRIES: Final = 8
 
 @dataclass(frozen=True, slots=True)
 class Manner:
-    """What a site may set of its cards: the alert policy, and how cards are drawn (see build.Frame)."""
+    """What a site may set of its cards: the alert policy, and how cards are drawn (see Frame).
+
+    `acting` names the clients that take system actions.
+    """
 
     policy: Policy
     critical: bool
     pages: str
+    acting: frozenset[str] = frozenset()
 
 
 @dataclass(frozen=True, slots=True)
 class _Asked:
-    """One call on its way, with the digests it is remembered under.
+    """One call on its way, with the digests it is remembered under, and the CDS client it came from.
 
     `visit` is the encounter's, `encounter` the encounter's for this user alone.
     """
@@ -59,23 +65,36 @@ class _Asked:
     visit: str
     encounter: str
     instance: str
+    client: str
 
 
 class HookDesk:
     """Calls in, cards out; feedback in, counts out."""
 
     def __init__(
-        self, store: HookStore, clock: Callable[[], datetime], rules: Rulebook, manner: Manner
+        self,
+        store: HookStore,
+        clock: Callable[[], datetime],
+        rules: Rulebook,
+        manner: Manner,
+        metrics: Metrics,
     ) -> None:
         self._store = store
         self._clock = clock
         self.rules: Final = rules
         self._manner = manner
+        self._metrics = metrics
 
     def answer(
-        self, service: Service, call: Call, draft: Mapping[str, Any] | None
-    ) -> tuple[list[dict[str, Any]], list[Issue]]:
-        """The cards of one call; with an issue that is an error, none.
+        self, service: Service, call: Call, draft: Mapping[str, Any] | None, client: str
+    ) -> tuple[dict[str, Any], list[Issue]]:
+        """The answer to one call, with its cards; with an issue that is an error, none.
+
+        Args:
+            service: what is called.
+            call: a call without faults.
+            draft: the draft examination, where the hook brings one.
+            client: name of the CDS client; empty where there is no authorisation.
 
         Raises:
             BusyError: other requests kept changing what is remembered of this patient.
@@ -84,14 +103,14 @@ class HookDesk:
         now = self._clock()
         held, issues = hold(call, draft, now, self.rules)
         if held is None:
-            return [], issues
-        patient = digest("patient", call.server, call.patient)
+            return {"cards": []}, issues
+        patient = patient_of(call)
         exam = held.own.exam
         visit = digest("encounter", patient, exam.encounter.value if exam.encounter else exam.time.start)
         asked = _Asked(
             service, call, held, now, patient,
             visit, digest("user", visit, call.user),
-            digest("instance", service.id, patient, call.instance),
+            digest("instance", service.id, patient, call.instance), client,
         )  # fmt: skip
         for _ in range(_TRIES):
             found = self._shown(asked)
@@ -99,8 +118,8 @@ class HookDesk:
                 return found, []
         raise BusyError
 
-    def _shown(self, asked: _Asked) -> list[dict[str, Any]] | None:
-        """The cards, remembered; None when another request changed the memory meanwhile."""
+    def _shown(self, asked: _Asked) -> dict[str, Any] | None:
+        """The answer, with its cards remembered; None when another request changed the memory meanwhile."""
         kept = self._store.memory(asked.patient)
         current = _memory(kept.memory) if kept else Memory(asked.patient)
         earlier = self._store.before(asked.instance)
@@ -108,13 +127,13 @@ class HookDesk:
         decision = self._decide(asked, before)
         after = decision.memory if before is current else self._decide(asked, current).memory
         call = asked.call
-        frame = build.Frame(
-            call.instance, call.patient, call.encounter, self._manner.critical, self._manner.pages
-        )
-        cards, shown = build.cards(decision, asked.held, frame)
-        _log(asked.service, decision)
-        if not cards:
-            return cards
+        manner = self._manner
+        acts = asked.client in manner.acting
+        frame = Frame(call.instance, call.patient, call.encounter, manner.critical, manner.pages, acts)
+        answer, shown = build.answer(decision, asked.held, frame)
+        if not shown:
+            self._note(asked.service, decision)
+            return answer
         known = self._store.cards([one.uuid for one in shown]) if earlier is not None else {}
         if after != current or any(one.uuid not in known for one in shown):
             stored = self._store.keep(
@@ -125,7 +144,8 @@ class HookDesk:
             )
             if not stored:
                 return None
-        return cards
+        self._note(asked.service, decision)
+        return answer
 
     def _decide(self, asked: _Asked, memory: Memory) -> Decision:
         answered = dict(memory.answered).get(asked.visit)
@@ -138,8 +158,11 @@ class HookDesk:
             rules=self.rules,
         )
 
-    def take(self, service: Service, reports: Sequence[Feedback]) -> None:
+    def take(self, service: Service, reports: Sequence[Feedback]) -> list[str]:
         """Keeps what a client reports, each report once, and remembers what was answered.
+
+        Returns:
+            Digests of the patients whose cards were reported on.
 
         Raises:
             BusyError: other requests kept changing what is remembered of a patient.
@@ -156,6 +179,11 @@ class HookDesk:
         rows = [_report(report, service, report.card in own, now) for report in reports]
         if not any(self._store.add_feedback(rows) for _ in range(_TRIES)):
             raise BusyError
+        for report in reports:
+            if report.key in new and report.card in own:
+                for rule in _shown_of(own[report.card]).rules:
+                    self._metrics.card_answer(rule, report.outcome)
+        return list(dict.fromkeys(card.patient for card in own.values()))
 
     def _answered(self, card: KeptCard, report: Feedback, now: datetime) -> None:
         if report.answer is None:
@@ -170,6 +198,13 @@ class HookDesk:
             ):
                 return
         raise BusyError
+
+    def _note(self, service: Service, decision: Decision) -> None:
+        """What became of each rule: ids and fates, no patient's data."""
+        fates: Counter[tuple[str, str]] = Counter((line.rule, line.fate) for line in decision.log)
+        self._metrics.raised(fates)
+        said = ", ".join(f"{rule}={fate}" for rule, fate in sorted(fates))
+        log.info("hook %s: %s", service.id, said or "nothing raised")
 
     def counts(self) -> dict[str, Any]:
         """How often the cards of each rule were accepted and overridden, and for which of our reasons."""
@@ -187,6 +222,11 @@ class HookDesk:
                     counter[known.value] += 1
         rules = [{"rule": rule, **dict(sorted(found.items()))} for rule, found in sorted(outcomes.items())]
         return {"rules": rules, "unmatched": unmatched}
+
+
+def patient_of(call: Call) -> str:
+    """The digest that a call's patient is remembered under."""
+    return digest("patient", call.server, call.patient)
 
 
 def _memory(text: bytes) -> Memory:
@@ -230,9 +270,3 @@ def _report(report: Feedback, service: Service, matched: bool, now: datetime) ->
         at=report.at,
         received=instant(now),
     )
-
-
-def _log(service: Service, decision: Decision) -> None:
-    """What became of each rule: ids and fates, no patient's data."""
-    fates = Counter(f"{line.rule}={line.fate}" for line in decision.log)
-    log.info("hook %s: %s", service.id, ", ".join(sorted(fates)) or "nothing raised")

@@ -24,11 +24,11 @@ from fhirgallop.intake.limits import DEFAULT
 from fhirgallop.intake.record import LocalRecord
 from fhirgallop.outcome import Issue, has_errors
 from fhirgallop.pipeline import process
-from fhirgallop.service import answers, requests
+from fhirgallop.service import answers, audit, requests
 from fhirgallop.service.auth.needs import needs
 from fhirgallop.service.examinations import BusyError
 from fhirgallop.service.fetching import Fetcher
-from fhirgallop.service.hook_desk import HookDesk
+from fhirgallop.service.hook_desk import HookDesk, patient_of
 from fhirgallop.settings import Settings
 
 router = APIRouter(tags=["CDS Hooks"])
@@ -178,18 +178,26 @@ def _cards(request: Request, service: Service, value: Any) -> Response:
     call, issues = read_call(value, service)
     if call is None:
         raise _refused(issues)
+    audit.about(
+        request,
+        action="E",
+        interaction="operation",
+        patients=[patient_of(call)],
+        entities=[f"CDS Hooks {service.id}"],
+    )
     if not call.by_clinician:
         return answers.json_answer({"cards": []})
     draft = _draft(request, call)
     fetcher: Fetcher | None = request.app.state.fetcher
+    client = request.state.caller.name
     if fetcher:
-        call = fetcher.complete(call, service, request.state.caller.name)
+        call = fetcher.complete(call, service, client)
     if has_errors(issues := call.faults(service)):
         raise _refused(issues)
-    cards, issues = _desk(request).answer(service, call, draft)
+    answer, issues = _desk(request).answer(service, call, draft, client)
     if has_errors(issues):
         raise _refused(issues)
-    return answers.json_answer({"cards": cards})
+    return answers.json_answer(answer)
 
 
 def _refused(issues: list[Issue]) -> answers.RefusalError:
@@ -224,5 +232,6 @@ def _feedback(request: Request, service: Service, value: Any) -> Response:
     reports, issues = read_feedback(value, service.id)
     if has_errors(issues):
         raise answers.RefusalError(400, issues)
-    _desk(request).take(service, reports)
+    patients = _desk(request).take(service, reports)
+    audit.about(request, action="C", interaction="create", patients=patients)
     return Response(status_code=200)
