@@ -9,7 +9,7 @@ from __future__ import annotations
 import re
 import threading
 from collections.abc import Callable
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from datetime import datetime
 from typing import Any, Final
 from urllib.parse import urlencode
@@ -141,7 +141,7 @@ class Access:
         try:
             return self._client.send(method, url, headers=headers, body=body, timeout=_PATIENCE)
         except ClientError as error:
-            raise NoTokenError(no_answer(error)) from None
+            raise NoTokenError(replace(no_answer(error), ends=False)) from None
 
 
 def _object(answer: Answer) -> dict[str, Any]:

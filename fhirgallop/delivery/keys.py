@@ -12,6 +12,8 @@ from dataclasses import dataclass
 from pathlib import Path
 from typing import Any, Final
 
+from cryptography.hazmat.primitives.asymmetric.rsa import RSAPrivateKey
+from cryptography.hazmat.primitives.serialization import load_pem_private_key
 from joserfc import jwk
 from joserfc.errors import JoseError
 from joserfc.jwk import ECKey, RSAKey
@@ -76,9 +78,10 @@ def public_set(keys: Sequence[SigningKey]) -> bytes:
 
 def _parsed(text: bytes) -> list[Any]:
     if b"-----BEGIN" in text:
-        return [jwk.import_key(text, "RSA" if b"RSA PRIVATE" in text else None)]
-    found = json.loads(text)
-    return [jwk.import_key(one) for one in found.get("keys", [found])]
+        found = load_pem_private_key(text, password=None)
+        return [jwk.import_key(text, "RSA" if isinstance(found, RSAPrivateKey) else "EC")]
+    value = json.loads(text)
+    return [jwk.import_key(one) for one in value.get("keys", [value])]
 
 
 def _signing(key: Any, path: Path) -> SigningKey:
