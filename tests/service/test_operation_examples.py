@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import configparser
+import json
 import re
 import shutil
 import subprocess
@@ -101,3 +102,15 @@ def test_the_image_runs_the_service_as_nobody_of_note(root: Path) -> None:
             assert (root / source).exists(), source
     settings = {name for _, rest in words for name in re.findall(rf"{PREFIX}(\w+)=", rest)}
     assert {name.lower() for name in settings} <= set(Settings.model_fields)
+
+
+def test_pr_10_every_resource_in_the_examples_says_that_it_is_for_tests(root: Path) -> None:
+    """Source: HL7 v3-ActReason, HTEST ("test health data"), as a security label of the resource."""
+    label = {"system": "http://terminology.hl7.org/CodeSystem/v3-ActReason", "code": "HTEST"}
+    found = 0
+    for path in (root / "examples").rglob("*.json"):
+        resource = json.loads(path.read_bytes())
+        if isinstance(resource, dict) and resource.get("resourceType") in ("Bundle", "QuestionnaireResponse"):
+            assert label in resource["meta"]["security"], path.name
+            found += 1
+    assert found >= 6

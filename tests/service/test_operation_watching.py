@@ -3,7 +3,9 @@
 from __future__ import annotations
 
 import json
+import re
 from collections.abc import Callable
+from pathlib import Path
 from typing import Any
 
 import pytest
@@ -117,3 +119,12 @@ def test_no_label_is_of_a_senders_making(client: Any, example: Any) -> None:
     page = client.get("/metrics").text
     assert "20417" not in page
     assert json.dumps(example()["patient"]) not in page
+
+
+def test_every_figure_of_the_runbook_is_published(client: Any, root: Path) -> None:
+    client.get("/maps")
+    page = client.get("/metrics").text
+    named = set(re.findall(r"`((?:fhirgallop|process)_\w+)", (root / "README.md").read_text("utf-8")))
+    assert len(named) > 10
+    for name in named:
+        assert f"# TYPE {name} " in page, name
