@@ -21,6 +21,7 @@ from fhirgallop.cli import (
     review,
     rules,
     serve,
+    token,
     validate,
 )
 from fhirgallop.cli.shared import Exit, complain
@@ -42,6 +43,7 @@ app.command("review")(review.command)
 app.command("heart-cycle")(draw.command)
 app.command("demo")(demo.command)
 app.command("serve")(serve.command)
+app.command("token")(token.command)
 app.add_typer(maps.app, name="map")
 app.add_typer(rules.app, name="rules")
 app.add_typer(database.app, name="database")
