@@ -292,7 +292,11 @@ class Settings(BaseSettings):
         "many may come at once. 0: no limit.",
     )
     at_once: int = Field(
-        64, ge=1, le=10_000, description="Requests that one process works on at once; more are refused."
+        64,
+        ge=1,
+        le=10_000,
+        description="Requests that one process works on at once, half of them from one address; more are "
+        "refused.",
     )
     header_seconds: float = Field(
         10, gt=0, le=600, description="How long the head of a request may take to arrive."

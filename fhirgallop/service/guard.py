@@ -57,12 +57,13 @@ class Guard:
             return
         visit = _Visit(Request(scope, receive), send, self._new_id)
         limits: Limits = scope["app"].state.limits
-        with structlog.contextvars.bound_contextvars(request=visit.id):
-            limits.running += 1
+        with (
+            structlog.contextvars.bound_contextvars(request=visit.id),
+            limits.counted(_address(visit.request)),
+        ):
             try:
                 await self._answer(visit)
             finally:
-                limits.running -= 1
                 visit.end()
 
     async def _answer(self, visit: _Visit) -> None:
@@ -145,12 +146,16 @@ class _Visit:
         log.info("%s %s", method, route, extra=said)
 
 
+def _address(request: Request) -> str:
+    return request.client.host if request.client else ""
+
+
 def _too_much(request: Request) -> Response | None:
     """A refusal where a client, or all together, ask too much; who only looks after the service is let in."""
     if request.url.path in _WATCHING:
         return None
     limits: Limits = request.app.state.limits
-    refused = limits.refusal(request.client.host if request.client else "")
+    refused = limits.refusal(_address(request))
     return answers.outcome_answer(refused.status, refused.issues, refused.headers) if refused else None
 
 

@@ -7,8 +7,9 @@ one moment is kept a client). Each process counts for itself.
 from __future__ import annotations
 
 import math
-from collections import OrderedDict
-from collections.abc import Callable
+from collections import Counter, OrderedDict
+from collections.abc import Callable, Iterator
+from contextlib import contextmanager
 from typing import Final
 
 from starlette.requests import Request
@@ -56,11 +57,31 @@ class Limits:
         self._addresses = Rate(rate, clock)
         self._callers = Rate(rate, clock)
         self._at_once = at_once
-        self.running = 0
+        self._running: Counter[str] = Counter()
+
+    @property
+    def running(self) -> int:
+        """How many requests are worked on."""
+        return self._running.total()
+
+    @contextmanager
+    def counted(self, address: str) -> Iterator[None]:
+        """Counts a request from this address while it is worked on."""
+        self._running[address] += 1
+        try:
+            yield
+        finally:
+            self._running[address] -= 1
+            if not self._running[address]:
+                del self._running[address]
 
     def refusal(self, address: str) -> answers.RefusalError | None:
-        """Why a request from this address is not worked on, if so."""
-        if self.running > self._at_once:  # it counts itself
+        """Why a request from this address, which is counted already, is not worked on, if so.
+
+        One address has at most half of what may run at once: who sends bodies that never end shuts out
+        nobody else.
+        """
+        if self._running[address] > max(1, self._at_once // 2) or self.running > self._at_once:
             text = "The service is busy with other requests; send it again in a moment."
             return _refusal(503, "transient", "http-busy", text, 1)
         wait = self._addresses.wait(address)

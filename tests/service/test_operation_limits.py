@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import contextlib
 from typing import Any
 
 import pytest
@@ -87,14 +88,31 @@ def test_too_many_requests_are_429_with_a_time(application: FastAPI, client: Any
 
 
 def test_a_crowd_is_told_to_come_again(application: FastAPI, client: Any) -> None:
-    application.state.limits.running = application.state.settings.at_once
-    refused = client.get("/maps")
-    assert refused.status_code == 503
-    assert refused.headers["retry-after"]
-    assert client.get("/health").status_code == 200
-    application.state.limits.running = 0
+    limits = application.state.limits
+    with contextlib.ExitStack() as crowd:
+        for number in range(application.state.settings.at_once):
+            crowd.enter_context(limits.counted(f"10.0.0.{number}"))
+        refused = client.get("/maps")
+        assert refused.status_code == 503
+        assert refused.headers["retry-after"]
+        assert client.get("/health").status_code == 200
     assert client.get("/maps").status_code == 200
-    assert application.state.limits.running == 0, "what is answered is worked on no longer"
+    assert limits.running == 0, "what is answered is worked on no longer"
+
+
+def test_one_address_cannot_shut_out_all_others() -> None:
+    limits = Limits(rate=0, at_once=10, clock=Hand())
+    with contextlib.ExitStack() as slow:
+        for _ in range(5):
+            slow.enter_context(limits.counted("10.0.0.1"))
+            assert limits.refusal("10.0.0.1") is None
+        with limits.counted("10.0.0.1"):
+            refused = limits.refusal("10.0.0.1")
+            assert refused is not None
+            assert refused.status == 503
+        with limits.counted("10.0.0.2"):
+            assert limits.refusal("10.0.0.2") is None
+    assert limits._running == {}, "nothing is remembered of who has left"
 
 
 def test_a_caller_has_one_rate_from_all_addresses() -> None:
