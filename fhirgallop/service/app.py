@@ -119,7 +119,7 @@ def create_app(settings: Settings, clock: Callable[[], datetime] = now) -> FastA
         sign_in.router,
     ):
         app.include_router(router)
-    open_fhir(app, engine, clock)
+    open_fhir(app, engine, app.state.shelf, clock)
     watch_over(app, engine, settings, clock)
     manner = Manner(policy, settings.cards_critical, settings.pages.rstrip("/"), settings.cds_system_actions)
     app.state.hooks = HookDesk(HookStore(engine), clock, rulebook.load(), manner, app.state.metrics)

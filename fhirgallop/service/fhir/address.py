@@ -20,7 +20,7 @@ FHIR_VERSIONS: Final[dict[Edition, str]] = {"R4": "4.0", "R4B": "4.3", "R5": "5.
 # Types whose resources are kept here: coded findings, their report, and where they come from.
 KEPT: Final = ("Observation", "DiagnosticReport", "Provenance")
 # Types whose resources come with this program (and the template maps): read and searched only.
-PUBLISHED: Final = ("CodeSystem", "ConceptMap", "StructureDefinition", "ValueSet", "OperationDefinition")
+PUBLISHED: Final = ("CodeSystem", "ConceptMap", "StructureDefinition", "ValueSet")
 
 _ID: Final = re.compile(r"[A-Za-z0-9\-.]{1,64}", re.ASCII)
 _VERSION: Final = re.compile(r"[1-9][0-9]{0,8}", re.ASCII)

@@ -58,7 +58,7 @@ def answered(request: Request, wish: Wish, base: Base, bundle: dict[str, Any]) -
 
 
 def _batched(bundle: dict[str, Any], base: Base) -> dict[int, list[Issue]]:
-    """What is wrong with each entry's resource; a batch is refused whole only where the Bundle itself is none."""
+    """What is wrong with each entry; a batch is refused whole only where the Bundle itself is none."""
     by_entry: dict[int, list[Issue]] = {}
     outside: list[Issue] = []
     for issue in validate(bundle, base.edition):

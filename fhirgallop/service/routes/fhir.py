@@ -6,55 +6,42 @@ what was wrong is entered in error, and stays in the history.
 
 from __future__ import annotations
 
-from typing import Annotated, Any, Final
-from urllib.parse import parse_qsl
+from typing import Annotated
 
 from fastapi import APIRouter, Depends, Path, Request
 from starlette.concurrency import run_in_threadpool
 from starlette.responses import Response
 
-from fhirgallop.service import answers, requests
+from fhirgallop.service import requests
 from fhirgallop.service.auth.needs import needs
 from fhirgallop.service.fhir import changes, interactions
 from fhirgallop.service.fhir.address import KEPT, Base, EditionPath, base, known_type
 from fhirgallop.service.fhir.bundles import MOST_ENTRIES, answered
 from fhirgallop.service.fhir.changes import Sent
+from fhirgallop.service.fhir.described import (
+    CHANGED,
+    FORM,
+    FORM_BODY,
+    RESOURCE_BODY,
+    STATUSES,
+    EditionName,
+    ResourceId,
+)
+from fhirgallop.service.fhir.forms import form
 from fhirgallop.service.fhir.negotiation import GENERAL, Wish, sent_fhir, wish
-from fhirgallop.service.fhir.query import MOST_PARAMETERS
 from fhirgallop.service.fhir.writing import read_resource
 from fhirgallop.settings import Settings
 
 router = APIRouter(tags=["FHIR"])
 
-FORM: Final = "application/x-www-form-urlencoded"
-_MOST_FORM: Final = 64 * 1024  # bytes of a search that is posted
-_RESOURCE: Final[dict[str, Any]] = {
-    "requestBody": {
-        "required": True,
-        "content": {kind: {"schema": {"type": "object"}} for kind in (answers.FHIR_JSON, answers.PLAIN_JSON)},
-    }
-}
-_SEARCH_FORM: Final[dict[str, Any]] = {"requestBody": {"content": {FORM: {"schema": {"type": "object"}}}}}
-_STATUSES: Final[dict[int | str, dict[str, Any]]] = {
-    200: {"description": "The resource, or a Bundle.", "content": {answers.FHIR_JSON: {}}},
-    304: {"description": "It is as the client knows it."},
-    **answers.REFUSALS,
-}
-_CHANGED: Final[dict[int | str, dict[str, Any]]] = {
-    200: {"description": "Kept; or nothing had to be.", "content": {answers.FHIR_JSON: {}}},
-    201: {"description": "Created.", "content": {answers.FHIR_JSON: {}}},
-    **answers.REFUSALS,
-}
-EditionName = Annotated[EditionPath, Path(description="FHIR edition.")]
 TypeName = Annotated[str, Path(max_length=64, description=f"One of {', '.join(KEPT)}.")]
-ResourceId = Annotated[str, Path(max_length=200, description="FHIR id.")]
 
 
 @router.get(
     "/fhir/{edition}/{resource_type}",
     summary="Search resources",
     description="Search parameters as the CapabilityStatement lists them; pages follow the link `next`.",
-    responses=_STATUSES,
+    responses=STATUSES,
     dependencies=[Depends(needs(does="s"))],
 )
 def search(request: Request, edition: EditionName, resource_type: TypeName) -> Response:
@@ -68,8 +55,8 @@ def search(request: Request, edition: EditionName, resource_type: TypeName) -> R
 @router.post(
     "/fhir/{edition}/{resource_type}/_search",
     summary="Search resources, with the parameters in the body",
-    openapi_extra=_SEARCH_FORM,
-    responses=_STATUSES,
+    openapi_extra=FORM_BODY,
+    responses=STATUSES,
     dependencies=[Depends(needs(does="s"))],
 )
 async def search_by_form(request: Request, edition: EditionName, resource_type: TypeName) -> Response:
@@ -77,19 +64,14 @@ async def search_by_form(request: Request, edition: EditionName, resource_type: 
     here = base(request, edition)
     wanted = wish(request, here.edition)
     known_type(here.edition, resource_type, among=KEPT)
-    kind = request.headers.get("content-type", "").partition(";")[0].strip().lower()
-    text = await requests.body(request, _MOST_FORM)
-    if kind != FORM and (text or kind):
-        said = f"This Content-Type is not read here; send {FORM}."
-        raise answers.refusal(415, "not-supported", "http-content-type", said)
-    parameters = [*request.query_params.multi_items(), *_form(text)]
+    parameters = [*request.query_params.multi_items(), *await form(request, FORM)]
     return await run_in_threadpool(interactions.search, request, wanted, here, resource_type, parameters)
 
 
 @router.get(
     "/fhir/{edition}/{resource_type}/{fhir_id}",
     summary="Read a resource",
-    responses=_STATUSES,
+    responses=STATUSES,
     dependencies=[Depends(needs(does="r"))],
 )
 def read(request: Request, edition: EditionName, resource_type: TypeName, fhir_id: ResourceId) -> Response:
@@ -105,7 +87,7 @@ def read(request: Request, edition: EditionName, resource_type: TypeName, fhir_i
     "/fhir/{edition}/{resource_type}/{fhir_id}/_history",
     summary="Versions of a resource",
     description="Newest first; `_count` and `_since` are served.",
-    responses=_STATUSES,
+    responses=STATUSES,
     dependencies=[Depends(needs(does="r"))],
 )
 def history(request: Request, edition: EditionName, resource_type: TypeName, fhir_id: ResourceId) -> Response:
@@ -120,7 +102,7 @@ def history(request: Request, edition: EditionName, resource_type: TypeName, fhi
 @router.get(
     "/fhir/{edition}/{resource_type}/{fhir_id}/_history/{version_id}",
     summary="Read one version of a resource",
-    responses=_STATUSES,
+    responses=STATUSES,
     dependencies=[Depends(needs(does="r"))],
 )
 def vread(
@@ -142,8 +124,8 @@ def vread(
     "/fhir/{edition}/{resource_type}",
     summary="Create a resource",
     description="The id is ours. With If-None-Exist nothing is created where one fits already.",
-    openapi_extra=_RESOURCE,
-    responses=_CHANGED,
+    openapi_extra=RESOURCE_BODY,
+    responses=CHANGED,
     dependencies=[Depends(needs(does="c"))],
 )
 async def create(request: Request, edition: EditionName, resource_type: TypeName) -> Response:
@@ -159,8 +141,8 @@ async def create(request: Request, edition: EditionName, resource_type: TypeName
     "/fhir/{edition}/{resource_type}/{fhir_id}",
     summary="Update a resource",
     description="The next version of what is there; with If-Match only of the version named.",
-    openapi_extra=_RESOURCE,
-    responses=_CHANGED,
+    openapi_extra=RESOURCE_BODY,
+    responses=CHANGED,
     dependencies=[Depends(needs(does="u"))],
 )
 async def update(
@@ -177,8 +159,8 @@ async def update(
     "/fhir/{edition}/{resource_type}",
     summary="Update the one resource that fits",
     description="Search parameters name the resource; where none fits it is created, where several do: 412.",
-    openapi_extra=_RESOURCE,
-    responses=_CHANGED,
+    openapi_extra=RESOURCE_BODY,
+    responses=CHANGED,
     dependencies=[Depends(needs(does="u"))],
 )
 async def update_found(request: Request, edition: EditionName, resource_type: TypeName) -> Response:
@@ -194,8 +176,8 @@ async def update_found(request: Request, edition: EditionName, resource_type: Ty
     "/fhir/{edition}",
     summary="Transaction or batch",
     description=f"A Bundle of creates, updates, reads and searches; at most {MOST_ENTRIES} entries.",
-    openapi_extra=_RESOURCE,
-    responses=_CHANGED,
+    openapi_extra=RESOURCE_BODY,
+    responses=CHANGED,
     dependencies=[Depends(needs(token=True))],  # each entry needs its own scopes
 )
 async def bundle(request: Request, edition: EditionName) -> Response:
@@ -220,11 +202,3 @@ async def _sent(request: Request, edition: EditionPath, type_: str) -> Sent:
     settings: Settings = request.app.state.settings
     text = await requests.body(request, settings.max_body)
     return Sent(here, type_, await run_in_threadpool(read_resource, text))
-
-
-def _form(text: bytes) -> list[tuple[str, str]]:
-    try:
-        return parse_qsl(text.decode(), keep_blank_values=True, max_num_fields=MOST_PARAMETERS)
-    except ValueError:
-        said = f"The form cannot be read; send at most {MOST_PARAMETERS} parameters, in UTF-8."
-        raise answers.refusal(400, "structure", "search-form", said) from None
