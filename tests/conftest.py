@@ -104,7 +104,7 @@ class PostgresServer:
         """Starts it and waits until it answers."""
         options = {
             "listen_addresses": "", "unix_socket_directories": str(self.folder), "fsync": "off",
-            "synchronous_commit": "off", "full_page_writes": "off", "max_connections": "60",
+            "full_page_writes": "off", "max_connections": "60",
         }  # fmt: skip
         words = [word for name, value in options.items() for word in ("-c", f"{name}={value}")]
         with (self.folder / "log").open("ab") as log:
