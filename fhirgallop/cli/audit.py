@@ -9,7 +9,7 @@ from typing import Annotated
 
 import typer
 
-from fhirgallop.cli.database import Database, opened
+from fhirgallop.cli.database import Database, digests_of, opened
 from fhirgallop.cli.shared import complain, moment, whole_file
 
 app = typer.Typer(help="The audit trail: who touched whose data.", no_args_is_help=True)
@@ -27,29 +27,32 @@ def export(
     ] = None,
     until: Annotated[str | None, typer.Option(help="Before this instant.")] = None,
     patient: Annotated[
-        str, typer.Option(help="Of one patient alone: SYSTEM|VALUE of the identifier, as the map writes it.")
-    ] = "",
+        list[str] | None,
+        typer.Option(
+            metavar="SYSTEM|VALUE", help="Of one patient alone, by an identifier; may be given several times."
+        ),
+    ] = None,
+    chart_id: Annotated[str, typer.Option(help="The patient's id in the record system, for cards.")] = "",
+    server: Annotated[str, typer.Option(help="FHIR address of the record system that has that id.")] = "",
     out: Annotated[Path | None, typer.Option(help="File to write; else standard output.")] = None,
     database: Database = None,
 ) -> None:
     """Write the trail as FHIR R4 AuditEvents, one a line (NDJSON), oldest first.
 
-    Patients stand in it as digests; --patient finds the events of one. Exit codes: 0 written; 2 the call was
-    wrong; 3 a setting has faults; 4 the database or the file could not be used.
+    Patients stand in it as digests; --patient and --chart-id find the events of one.
+
+    Exit codes: 0 written; 2 the call was wrong; 3 a setting has faults; 4 the database or the file could not
+    be used.
     """
     from fhirgallop.storage.audit import AuditTrail  # noqa: PLC0415 - heavy; --help stays quick
-    from fhirgallop.storage.keys import patient_key  # noqa: PLC0415
 
-    system, bar, value = patient.partition("|")
-    if patient and not (bar and value):
-        raise typer.BadParameter("write SYSTEM|VALUE", param_hint="--patient")
+    whose = digests_of(patient or [], chart_id, server) if patient or chart_id else []
     start = int(moment(since, "--since").timestamp() * 1000) if since else 0
     end = int(moment(until, "--until").timestamp() * 1000) if until else None
-    key = patient_key(system, value) if patient else ""
     count = 0
     with opened(database) as engine, ExitStack() as stack:
         sink = stack.enter_context(whole_file(out, may_be_empty=True)) if out else sys.stdout.buffer
-        for row in AuditTrail(engine).read(since=start, until=end, patient=key):
+        for row in AuditTrail(engine).read(since=start, until=end, patients=whose):
             sink.write(row.event + b"\n")
             count += 1
         sink.flush()

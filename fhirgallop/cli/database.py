@@ -158,7 +158,7 @@ def forget(
     """
     from fhirgallop.storage import retention  # noqa: PLC0415
 
-    digests = _digests(patient or [], chart_id, server)
+    digests = digests_of(patient or [], chart_id, server)
     with opened(database) as engine:
         if not yes and not typer.confirm(f"Delete all of this patient's data from {engine.url.database}?"):
             raise typer.Exit(Exit.REFUSED)
@@ -174,7 +174,8 @@ def forget(
         raise typer.Exit(Exit.REFUSED)
 
 
-def _digests(patients: list[str], chart_id: str, server: str) -> list[str]:
+def digests_of(patients: list[str], chart_id: str, server: str) -> list[str]:
+    """The digests that one patient stands under, by identifiers and by the id in the record system."""
     from fhirgallop.cards.card import digest  # noqa: PLC0415
     from fhirgallop.storage.keys import patient_key  # noqa: PLC0415
 

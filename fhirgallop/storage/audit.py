@@ -49,13 +49,21 @@ class AuditTrail:
         with told(), self._engine.begin() as connection:
             add(connection, rows)
 
-    def read(self, *, since: int = 0, until: int | None = None, patient: str = "") -> Iterator[AuditRow]:
-        """Events in the order in which they were added, from `since` on and before `until` (milliseconds)."""
+    def read(
+        self, *, since: int = 0, until: int | None = None, patients: Sequence[str] = ()
+    ) -> Iterator[AuditRow]:
+        """Events in the order in which they were added.
+
+        Args:
+            since: from this moment on, in milliseconds since 1970.
+            until: before this moment.
+            patients: of these alone, by their digests.
+        """
         query = select(audit.c.at, audit.c.patient, audit.c.event).where(audit.c.at >= since)
         if until is not None:
             query = query.where(audit.c.at < until)
-        if patient:
-            query = query.where(audit.c.patient == patient)
+        if patients:
+            query = query.where(audit.c.patient.in_(patients))
         with told(), self._engine.connect() as connection:
             for row in connection.execution_options(yield_per=_AT_ONCE).execute(query.order_by(audit.c.id)):
                 yield AuditRow(*row)

@@ -8,6 +8,7 @@ entity, of a token the end only.
 
 from __future__ import annotations
 
+import base64
 import json
 from pathlib import Path
 from typing import Any
@@ -15,9 +16,12 @@ from typing import Any
 import pytest
 from fastapi import FastAPI
 from sqlalchemy import text
+from starlette.testclient import TestClient
 
+from fhirgallop import settings
 from fhirgallop.conformance.validator import validate
 from fhirgallop.outcome import Issue
+from fhirgallop.service.app import create_app
 from fhirgallop.service.audit import _end
 from fhirgallop.service.audit_event import Deed, Ending, Who, audit_event
 from fhirgallop.storage.audit import AuditTrail
@@ -146,7 +150,7 @@ def test_events_are_found_by_patient_and_time(application: FastAPI, client: Any,
     assert len(list(kept.read(until=rows[1].at))) == 1
     patients = {row.patient for row in rows} - {""}
     for patient in patients:
-        assert [row.patient for row in kept.read(patient=patient)] == [patient]
+        assert [row.patient for row in kept.read(patients=[patient])] == [patient]
 
 
 def test_the_trail_is_exported_by_a_command(
@@ -170,3 +174,75 @@ def test_the_trail_is_exported_by_a_command(
     assert (stranger.code, stranger.out) == (0, b"")
     assert call("audit", "export", "--database", database, "--patient", "F-20417").code == 2
     assert call("audit", "export", "--database", f"sqlite:///{tmp_path / 'nowhere'}").code == 3
+
+
+def test_every_way_to_a_patient_leaves_an_event(
+    application: FastAPI, client: Any, example: Any, hook_call: Any, call: Any, tmp_path: Path
+) -> None:
+    """Hook call and feedback, search, read and history of resources, refused and unknown ones."""
+
+    def new(action: str, interaction: str, outcome: str = "0") -> dict[str, Any]:
+        (event,) = trail(application)[len(seen) :]
+        seen.append(event)
+        sound(event)
+        found = (event["action"], event["subtype"][0]["code"], event["outcome"])
+        assert found == (action, interaction, outcome)
+        return event
+
+    seen: list[dict[str, Any]] = []
+    bundle = client.post(WHERE, json=example()).json()["bundle"]
+    assert len(patient_digests(new("C", "create"))) == 1
+    client.post("/cds-services/exam-review-patient-view", json=hook_call())
+    assert len(patient_digests(new("E", "operation"))) == 1
+    report = {"feedback": [{"card": REQUEST, "outcome": "accepted", "acceptedSuggestions": [{"id": REQUEST}],
+                            "outcomeTimestamp": "2026-03-14T10:00:00Z"}]}  # fmt: skip
+    answer = client.post("/cds-services/exam-review-patient-view/feedback", json=report)
+    assert answer.status_code == 200, answer.text
+    new("C", "create")
+    subject = next(e["resource"]["subject"] for e in bundle["entry"] if "subject" in e["resource"])
+    asked = f"{subject['identifier']['system']}|{subject['identifier']['value']}"
+    found = client.get("/fhir/r4/Observation", params={"patient:identifier": asked, "_count": "3"})
+    assert found.status_code == 200, found.text
+    event = new("E", "search-type")
+    (query,) = [entity["query"] for entity in event["entity"] if "query" in entity]
+    assert base64.b64decode(query) == b"patient:identifier=&_count="
+    one = f"Observation/{found.json()['entry'][0]['resource']['id']}"
+    client.get(f"/fhir/r4/{one}")
+    assert one in json.dumps(new("R", "read"))
+    client.get(f"/fhir/r4/{one}/_history/1")
+    new("R", "vread")
+    client.get(f"/fhir/r4/{one}/_history")
+    new("R", "history-instance")
+    assert client.get(f"/fhir/r4/Observation/{REQUEST}").status_code == 404
+    new("R", "read", "4")
+    assert "F-20417" not in json.dumps(seen)
+    database = f"sqlite:///{tmp_path / 'service.sqlite3'}"
+    mine = call("audit", "export", "--database", database, "--patient", asked)
+    assert len(mine.out.splitlines()) == 5  # the post, the search, read, vread, history
+    chart = ("--chart-id", "p-20417", "--server", "https://fernwood.example/fhir")
+    assert len(call("audit", "export", "--database", database, *chart).out.splitlines()) == 1
+
+
+def patient_digests(event: dict[str, Any]) -> list[str]:
+    """The digests of the patients an event is about."""
+    system = "https://fhirgallop.org/fhir/patient-digest"
+    whats = (entity.get("what", {}).get("identifier", {}) for entity in event["entity"])
+    return [what["value"] for what in whats if what.get("system") == system]
+
+
+def test_a_failed_sign_in_is_kept_with_no_token(tmp_path: Path, root: Path) -> None:
+    """DICOM 110114, User Authentication, as BALP and the base specification have it."""
+    token = "a-guess-at-the-token-of-the-administrators"
+    chosen = settings.load(
+        maps=root / "examples/informatician", database=f"sqlite:///{tmp_path / 'auth.sqlite3'}",
+        admin_token="0" * 64, address="http://localhost:8470",
+    )  # fmt: skip
+    with TestClient(create_app(chosen), base_url="http://localhost:8470") as client:
+        refused = client.get("/cds-feedback", headers={"Authorization": f"Bearer {token}"})
+        assert refused.status_code == 401
+        (event,) = trail(client.app)  # type: ignore[arg-type]
+    sound(event)
+    assert (event["type"]["system"], event["type"]["code"]) == (DICOM, "110114")
+    assert (event["action"], event["outcome"]) == ("E", "4")
+    assert event["agent"][0]["network"]["address"] == "testclient"
+    assert token[-16:] not in json.dumps(event)
