@@ -15,7 +15,7 @@ from fhirgallop.cards.hooks import Call
 from fhirgallop.chart.gather import Found, gather
 from fhirgallop.chart.log import Log
 from fhirgallop.chart.own_exam import Gathered, OwnExam, gather_own_exams, read_own_exam
-from fhirgallop.chart.read import read_chart
+from fhirgallop.chart.read import read_gathered
 from fhirgallop.chart.times import Times
 from fhirgallop.chart.whose import Whose, recognise
 from fhirgallop.exam.exam import Party
@@ -87,10 +87,10 @@ def hold(
     if own.exam.encounter is None and call.encounter:
         own = replace(own, exam=replace(own.exam, encounter=Party(call.encounter, is_fhir_id=True)))
     used = {id(found) for found in own.found}
-    rest = [{"fullUrl": f.url, "resource": f.resource} for f in chart if id(f) not in used]
-    read = read_chart({"resourceType": "Bundle", "entry": rest}, own.exam, now, base=base)
+    rest = [found for found in chart if id(found) not in used]
+    read = read_gathered(rest, own.exam, now, log, base=base)
     found = review(own.exam, read.context, rules=rules)
-    return Held(own, found, tuple(_gaps(call, [*log.all(), *read.issues]))), []
+    return Held(own, found, tuple(_gaps(call, read.issues))), []
 
 
 def _base(call: Call, chart: Sequence[Found]) -> str:

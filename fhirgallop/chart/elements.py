@@ -3,8 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Iterator, Mapping
-from dataclasses import dataclass
-from typing import Any, Final
+from typing import Any, Final, NamedTuple
 
 MAX_TEXT: Final = 1024
 MAX_ITEMS: Final = 1000
@@ -13,9 +12,8 @@ Element = Mapping[str, Any]
 NOTHING: Final[Element] = {}
 
 
-@dataclass(frozen=True, slots=True)
-class Code:
-    """System and code of one coding."""
+class Code(NamedTuple):
+    """System and code of one coding; a tuple, for thousands are made and looked up for a chart."""
 
     system: str
     code: str
@@ -43,13 +41,15 @@ def text(value: Any) -> str:
 
 def codes(concepts: Any) -> tuple[Code, ...]:
     """Every coding of a CodeableConcept, of a list of them, or of a CodeableReference (R5)."""
+    if concepts is None:
+        return ()
     found: dict[Code, None] = {}
     for concept in elements(concepts):
         # R5 CodeableReference holds its concept one level deeper
         for coding in elements(concept.get("coding") or element(concept.get("concept")).get("coding")):
-            code = Code(text(coding.get("system")), text(coding.get("code")))
-            if code.code:
-                found[code] = None
+            code = text(coding.get("code"))
+            if code:
+                found[Code(text(coding.get("system")), code)] = None
     return tuple(found)
 
 

@@ -7,7 +7,7 @@ OperationOutcome of the client).
 from __future__ import annotations
 
 from collections.abc import Iterator
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 from typing import Any, Final
 
 from fhirgallop.chart.elements import Element, element, text
@@ -28,29 +28,30 @@ class Found:
         resource: its content.
         place: where it stands, as an expression for issues.
         url: its full address where the Bundle gives one (`urn:uuid:...`, `https://server/Observation/1`).
+        id: its logical id; empty when it has none that could be printed in one word.
+        base: address of the server it lies on; empty when unknown.
     """
 
     type: str
     resource: Element
     place: str
     url: str
+    id: str = field(init=False)
+    base: str = field(init=False)
 
-    @property
-    def id(self) -> str:
-        """Its logical id; empty when it has none that could be printed in one word."""
+    def __post_init__(self) -> None:
         id_ = text(self.resource.get("id"))
-        return id_ if id_.isprintable() and " " not in id_ else ""
+        id_ = id_ if id_.isprintable() and " " not in id_ else ""
+        tail = f"/{self.type}/{id_}"
+        object.__setattr__(self, "id", id_)
+        object.__setattr__(
+            self, "base", self.url.removesuffix(tail) if id_ and self.url.endswith(tail) else ""
+        )
 
     @property
     def name(self) -> str:
         """How a reader finds it: `Observation/123`, else its full address, else its place."""
         return f"{self.type}/{self.id}" if self.id else self.url or self.place
-
-    @property
-    def base(self) -> str:
-        """Address of the server it lies on; empty when unknown."""
-        tail = f"/{self.type}/{self.id}"
-        return self.url.removesuffix(tail) if self.id and self.url.endswith(tail) else ""
 
 
 def gather(chart: Any, log: Log) -> list[Found]:

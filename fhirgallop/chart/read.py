@@ -6,7 +6,7 @@ for what a chart holds.
 
 from __future__ import annotations
 
-from collections.abc import Callable, Mapping
+from collections.abc import Callable, Mapping, Sequence
 from dataclasses import dataclass, replace
 from datetime import datetime
 from types import MappingProxyType
@@ -72,10 +72,26 @@ def read_chart(
     Raises:
         ValueError: `now` has no zone.
     """
+    log = Log()
+    return read_gathered(gather(chart, log), exam, now, log, base=base, tables=tables)
+
+
+def read_gathered(
+    all_: Sequence[Found],
+    exam: Exam,
+    now: datetime,
+    log: Log,
+    *,
+    base: str = "",
+    tables: Tables | None = None,
+) -> Chart:
+    """The same from resources that were gathered before; `log` takes what is wrong.
+
+    Raises:
+        ValueError: `now` has no zone.
+    """
     if now.tzinfo is None:
         raise ValueError("now needs a zone")
-    log = Log()
-    all_ = gather(chart, log)
     whose = recognise(exam.patient, all_, base, log)
     reading = Reading(tables or shipped(), whose, exam, Times(now, log), log, by_place(all_))
     ours = [found for found in all_ if _may_be_read(found, reading)]
