@@ -7,6 +7,7 @@ then stops listening, lets what runs finish within a limit, lets the workers fin
 from __future__ import annotations
 
 import asyncio
+import gc
 import logging
 import time
 from types import FrameType
@@ -34,6 +35,9 @@ def serve(app: FastAPI, settings: Settings) -> None:
     Raises:
         SystemExit: the address cannot be listened on, or the certificate cannot be used.
     """
+    # what was loaded by now is needed to the end; the collector need not go through it with every answer
+    gc.collect()
+    gc.freeze()
     Server(app, settings).run()
 
 
