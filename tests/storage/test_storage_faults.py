@@ -174,6 +174,26 @@ def test_a_restart_of_postgres_in_the_middle_is_told_and_got_over(
     assert len(found - told) <= len(writers)
     assert all(text.isidentifier() for _, text in failed)  # the kind of failure, and nothing of its content
     engine.dispose()
+
+
+def test_a_connection_that_is_cut_in_the_middle_keeps_nothing(
+    postgres: str, submission: Callable[..., Submission]
+) -> None:
+    engine, other = open_database(postgres), connect(postgres)
+    store = Submissions(engine)
+    assert store.add(submission("urn:before"), along("urn:before"))
+
+    def cut(connection: Connection, _row: int) -> None:
+        own = connection.scalar(select(func.pg_backend_pid()))
+        with other.connect() as second:
+            assert second.scalar(select(func.pg_terminate_backend(own)))
+
+    with pytest.raises(StorageError):
+        store.add(submission("urn:cut"), along("urn:cut"), cut, along("urn:cut-2"))
+    assert kept(engine) == {"urn:before"}
+    assert store.add(submission("urn:cut"), along("urn:cut"))
+    assert kept(engine) == {"urn:before", "urn:cut"}
+    engine.dispose()
     other.dispose()
 
 
