@@ -104,14 +104,6 @@ def prefers(request: Request, what: str) -> bool:
     return what in (one.strip() for one in stated)
 
 
-def fhir_content(request: Request) -> None:
-    """Refuses a body that is not JSON by its own word."""
-    given = request.headers.get("content-type", "").partition(";")[0].strip().lower()
-    if given not in (FHIR_JSON, PLAIN_JSON):
-        text = f"This Content-Type is not read here; send {FHIR_JSON}."
-        raise refusal(415, "not-supported", "http-content-type", text)
-
-
 def _too_large(most: int) -> Exception:
     text = f"The body is larger than {most:,} bytes; send fewer examinations at a time."
     return refusal(413, "too-long", "http-body-too-large", text)

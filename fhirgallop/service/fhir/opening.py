@@ -12,7 +12,7 @@ from sqlalchemy import Engine
 from fhirgallop.mapping.template_map import TemplateMap
 from fhirgallop.service.fhir.published import Library
 from fhirgallop.service.fhir.writing import Desk
-from fhirgallop.service.routes import fhir, fhir_definitions
+from fhirgallop.service.routes import fhir, fhir_definitions, fhir_extraction
 from fhirgallop.storage.maps import MapStore
 from fhirgallop.storage.resource_search import Resources
 
@@ -29,4 +29,5 @@ def open_fhir(
     app.state.fhir = Desk(Resources(engine), clock, new_id)
     app.state.library = Library(shelf, MapStore(engine))
     app.include_router(fhir_definitions.router)
+    app.include_router(fhir_extraction.router)
     app.include_router(fhir.router)

@@ -22,7 +22,8 @@ MOST_EXPANDED: Final = 1000
 
 _CODE: Final = {
     "url": "uri", "code": "code", "display": "string", "coding": "Coding",
-    "codeableConcept": "CodeableConcept", "date": "dateTime", "abstract": "boolean", "displayLanguage": "code",
+    "codeableConcept": "CodeableConcept", "date": "dateTime", "abstract": "boolean",
+    "displayLanguage": "code",
 }  # fmt: skip
 CODE_SYSTEM_CODE: Final = {**_CODE, "version": "string"}
 VALUE_SET_CODE: Final = {**_CODE, "system": "uri", "systemVersion": "string", "valueSetVersion": "string"}
@@ -168,8 +169,8 @@ def _coded(edition: Edition, coding: Mapping[str, Any], place: str) -> Verdict:
     url, code = str(coding.get("system", "")), str(coding.get("code", ""))
     known = system(edition, url)
     if known is None:
-        issue = Issue("warning", "not-found", "unknown-code-system",
-                      "This code system is not known here; the code was not judged.", f"{place}system")  # fmt: skip
+        said = "This code system is not known here; the code was not judged."
+        issue = Issue("warning", "not-found", "unknown-code-system", said, f"{place}system")
         return Verdict(None, coding, issues=(issue,))
     found = known.codes.get(code)
     if found is not None:
