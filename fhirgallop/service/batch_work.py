@@ -27,7 +27,7 @@ from fhirgallop.service.audit import Auditor
 from fhirgallop.service.audit_event import Deed
 from fhirgallop.service.batch_desk import Errand, records
 from fhirgallop.service.exam_desk import BUSY, ExamDesk
-from fhirgallop.service.examinations import BusyError, Coded, Wish
+from fhirgallop.service.examinations import BusyError, Coded, Wish, done_to
 from fhirgallop.service.logging import place
 from fhirgallop.settings import Settings
 from fhirgallop.storage.batches import Batch, Batches, NewResult, SupersededError, add_result
@@ -164,7 +164,8 @@ class BatchWork:
             said.pop("bundle", None)
             said = {"line": record.line, "status": status, **said}
             add = self._result(held, position, status, coded.patient, said)
-            deed = Deed("C", "create", (coded.patient,) if coded.patient else (), ())
+            whose = (coded.patient,) if coded.patient else ()
+            deed = Deed(*done_to(coded), whose, (coded.identity,) if coded.identity else ())
             return (add, self._auditor.kept_by_worker(deed, held.errand.caller))
 
         for _ in range(_BUSY_TRIES):

@@ -97,10 +97,11 @@ class ExamDesk:
         replies: list[Reply] = []
 
         def along(coded: Coded) -> Sequence[Also]:
-            if coded.bundle is None:
+            watched = ask.watched(coded)
+            if coded.bundle is None:  # the guard sees a refusal, and keeps the event of it
                 return ()
             replies[:] = [self._reply(coded, ask)]
-            return (ask.watched(coded), *self._kept(ask.keyed, replies[0]))
+            return (watched, *self._kept(ask.keyed, replies[0]))
 
         try:
             coded = self.coded(record, ask.wish, along)

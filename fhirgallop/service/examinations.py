@@ -19,6 +19,7 @@ from fhirgallop.observations.editions import Edition
 from fhirgallop.observations.identity import Identities
 from fhirgallop.outcome import Issue, has_errors, ordered
 from fhirgallop.pipeline import Result, finish, understand
+from fhirgallop.service.audit_event import Action
 from fhirgallop.service.fhir.coded import coded
 from fhirgallop.storage import outbox, resources
 from fhirgallop.storage.keys import number_key, patient_key
@@ -63,6 +64,8 @@ class Coded:
         bundle: the Bundle's bytes; None when the record was refused.
         patient: digest of the patient's identifier; empty when it was not understood whose it is.
         at: the moment of coding, in milliseconds since 1970 (UTC).
+        identity: `urn:uuid:...` of the examination; empty like the patient.
+        version: of the examination, as it is kept; 0 when nothing is.
         repeated: True when this content is what is kept already.
     """
 
@@ -70,7 +73,16 @@ class Coded:
     bundle: bytes | None
     patient: str = ""
     at: int = 0
+    identity: str = ""
+    version: int = 0
     repeated: bool = False
+
+
+def done_to(coded: Coded) -> tuple[Action, str]:
+    """What a result did to the patient's data, for the audit trail: action and FHIR interaction."""
+    if coded.repeated:
+        return "R", "read"
+    return ("U", "update") if coded.version > 1 else ("C", "create")
 
 
 # What else is to be kept in the transaction of a result; called before each try to keep it.
@@ -123,11 +135,11 @@ class Examinations:
         for attempt in range(_TRIES):
             before = self._store.latest(identity, wish.edition, snomed=wish.snomed)
             if before and before.record_hash == meant:
-                again = Coded(understood, before.bundle, patient, at, repeated=True)
+                again = Coded(understood, before.bundle, patient, at, identity, before.version, repeated=True)
                 return self._beside(before.id, again, along)
             result = self._finished(understood, record.form, wish, now, before)
             if (bundle := result.bundle) is None:
-                return self._beside(0, Coded(result, None, patient, at), along)
+                return self._beside(0, Coded(result, None, patient, at, identity), along)
             if before and self._store.has(identity, wish.edition, meant, snomed=wish.snomed):
                 result = replace(result, issues=tuple(ordered([*result.issues, _SEEN_BEFORE])))
             written = coded(bundle, wish.edition)
@@ -135,7 +147,7 @@ class Examinations:
                 identity, wish.edition, wish.snomed, before.version + 1 if before else 1,
                 wish.template.name, wish.template.version, meant, patient, instant(now), written.text, number,
             )  # fmt: skip
-            done = Coded(result, written.text, patient, at)
+            done = Coded(result, written.text, patient, at, identity, row.version)
             kept = _resources(written.versions, at, fresh=not (before or attempt))
             if self._store.add(row, kept, *self._deliveries(row, wish, at), *along(done)):
                 return done

@@ -36,13 +36,14 @@ class KeyTakenError(Exception):
 
 @dataclass(frozen=True, slots=True)
 class Reply:
-    """An answer of success before it leaves."""
+    """An answer of success before it leaves; `repeated` where it was given before."""
 
     body: bytes
     media_type: str
     headers: dict[str, str] = field(default_factory=dict)
     status: int = 200
     patient: str = ""
+    repeated: bool = False
 
     def response(self) -> Response:
         """As it leaves."""
@@ -108,7 +109,7 @@ class KeyDesk:
         if known.status == RESERVED:
             return None
         headers = {**fhirjson.read(known.headers)[0], "Fhirgallop-Repeated": "true"}
-        return Reply(known.answer, known.media_type, headers, known.status, known.patient)
+        return Reply(known.answer, known.media_type, headers, known.status, known.patient, repeated=True)
 
     def keep(self, asked: Keyed, reply: Reply) -> Callable[[Connection], None]:
         """What keeps an answer, to be called in the transaction of what it tells of.

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import codecs
-from collections.abc import Sequence
+from collections.abc import Callable, Sequence
 from dataclasses import dataclass, replace
 from itertools import islice
 from typing import Annotated, Any, Final
@@ -23,7 +23,7 @@ from fhirgallop.service import answers, audit, enclosed, requests
 from fhirgallop.service.auth.needs import needs
 from fhirgallop.service.batch_desk import BatchDesk, unreadable
 from fhirgallop.service.exam_desk import BUSY, Ask, ExamDesk, Opinion
-from fhirgallop.service.examinations import BusyError, Coded, Wish
+from fhirgallop.service.examinations import BusyError, Coded, Wish, done_to
 from fhirgallop.service.keyed import Keyed, Reply, keyed
 from fhirgallop.settings import Settings
 from fhirgallop.storage.submissions import Also
@@ -127,8 +127,8 @@ async def post_exams(
         reply = await run_in_threadpool(_answer, request.app.state.exams, sent, ask, settings)
     except BusyError:
         raise answers.RefusalError(409, [BUSY], {"Retry-After": "1"}) from None
-    if reply.patient:
-        audit.about(request, action="C", interaction="create", patients=[reply.patient])
+    if reply.repeated:
+        audit.about(request, action="R", interaction="read", patients=[reply.patient])
     return reply.response()
 
 
@@ -171,9 +171,13 @@ def _chart(text: bytes) -> Any:
     return value
 
 
-def _watch(request: Request) -> Any:
+def _watch(request: Request) -> Callable[[Coded], Also]:
     def watched(coded: Coded) -> Also:
-        audit.about(request, action="C", interaction="create", patients=[coded.patient])
+        action, interaction = done_to(coded)
+        whose = {"patients": [coded.patient], "entities": [coded.identity] if coded.identity else []}
+        audit.about(request, action=action, interaction=interaction, **whose)
+        if coded.bundle is None:
+            return audit.kept(request, status=422, issues=coded.result.issues)
         return audit.kept(request)
 
     return watched
