@@ -17,7 +17,6 @@ from sqlalchemy import (
     Connection,
     Engine,
     and_,
-    case,
     exists,
     func,
     insert,
@@ -205,7 +204,7 @@ class Outbox:
                     well = well.where(destinations.c.failures > 0).values(failures=0)
                 connection.execute(well)
             else:
-                self._failed(connection, rest)
+                self._failed(connection, rest, probe=claim.probe)
         return kept
 
     def give_back(self, claim: Claim, now: int) -> None:
@@ -324,13 +323,15 @@ class Outbox:
         first = update(destinations).where(self._own(), destinations.c.open_until == seen)
         return connection.execute(first.values(open_until=until)).rowcount == 1
 
-    def _failed(self, connection: Connection, rest: Rest) -> None:
+    def _failed(self, connection: Connection, rest: Rest, *, probe: bool) -> None:
         counted = destinations.c.failures + rest.weight
         more = update(destinations).where(self._own()).values(failures=counted)
         failures = connection.execute(more.returning(destinations.c.failures)).scalar_one()
         until = rest.until(failures)
-        later = case((destinations.c.open_until > until, destinations.c.open_until), else_=until)
-        connection.execute(update(destinations).where(self._own()).values(open_until=later))
+        rests = update(destinations).where(self._own())
+        if not probe:  # a longer rest stands, but for the probe's own time
+            rests = rests.where(destinations.c.open_until < until)
+        connection.execute(rests.values(open_until=until))
 
 
 def _earlier(one: NamedFromClause, other: NamedFromClause) -> ColumnElement[bool]:

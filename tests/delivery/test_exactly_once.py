@@ -157,7 +157,7 @@ def environment(folder: Path, address: str, base: str) -> dict[str, str]:
     settings = {
         "MAPS": str(maps), "DATABASE": address, "DELIVER_TO": base, "LOOPBACK_HTTP": "true", "RATE": "0",
         "LOG_LEVEL": "warning", "DELIVERY_TIMEOUT": "1", "DELIVERY_WAIT": "0.05", "DELIVERY_WAIT_MOST": "1",
-        "DELIVERY_REST": "0.2", "DELIVERY_TRIES": "1000", "DELIVERY_WORKERS": "2", "FREE_DISK": "0",
+        "DELIVERY_REST": "0.2", "DELIVERY_TRIES": "1000", "DELIVERY_WORKERS": "3", "FREE_DISK": "0",
     }  # fmt: skip
     return {**os.environ, **{f"FHIRGALLOP_{name}": value for name, value in settings.items()}}
 
@@ -165,11 +165,11 @@ def environment(folder: Path, address: str, base: str) -> dict[str, str]:
 def disturb(site: Site, peer: Any, done: threading.Event, chance: random.Random) -> Counter[str]:
     """Kills programs at random moments, spread over the whole of the sending and the delivering."""
     killed: Counter[str] = Counter()
-    total = expected_posts()
+    total = 2 * expected_posts()
     for number in range(KILLS):
         # at a random point of each of so many equal parts of the work
-        at = (number + chance.random()) / KILLS * total * 0.95
-        while site.accepted < at and not done.wait(0.002):
+        at = (number + chance.random()) / KILLS * total * 0.97
+        while site.accepted + peer.rows("SELECT count(*) FROM events")[0][0] < at and not done.wait(0.02):
             pass
         done.wait(chance.random() * 0.3)
         program = chance.choice(site.programs)

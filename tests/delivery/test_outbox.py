@@ -150,6 +150,20 @@ def test_after_failures_in_a_row_one_delivery_probes_the_destination(engine: Eng
     assert take(other, 5001)
 
 
+def test_a_probe_that_failed_is_followed_by_a_rest_and_no_longer(engine: Engine, put: Put) -> None:
+    box = Outbox(engine)
+    put(engine, "a")
+    claim = take(box)
+    assert claim
+    assert box.settle(claim, Settled("waiting", due=0), Rest(AFTER, lambda _: 100))
+    probe = take(box, 100)
+    assert probe
+    assert box.settle(probe, Settled("waiting", due=0), Rest(1, lambda _: 150))
+    assert box.tally().open_until == 150
+    assert take(box, 149) is None
+    assert take(box, 150)
+
+
 def test_a_probe_that_died_is_followed_by_another(engine: Engine, put: Put) -> None:
     box = Outbox(engine)
     put(engine, "a")
