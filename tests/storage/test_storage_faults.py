@@ -14,10 +14,10 @@ from pathlib import Path
 from typing import Any
 
 import pytest
-from sqlalchemy import Connection, Engine, select
+from sqlalchemy import Connection, Engine, func, select
 
 from fhirgallop.storage import outbox as line
-from fhirgallop.storage.engine import open_database
+from fhirgallop.storage.engine import connect, open_database
 from fhirgallop.storage.resources import NewVersion, add_versions
 from fhirgallop.storage.submissions import StorageError, Submission, Submissions
 from fhirgallop.storage.tables import outbox, resources, submissions
@@ -27,7 +27,7 @@ from fhirgallop.storage.tables import outbox, resources, submissions
 WRITER = """
 import sys
 from fhirgallop.storage import outbox
-from fhirgallop.storage.engine import open_database
+from fhirgallop.storage.engine import connect, open_database
 from fhirgallop.storage.resources import NewVersion, add_versions
 from fhirgallop.storage.submissions import StorageError, Submission, Submissions
 store = Submissions(open_database(sys.argv[1]))
