@@ -91,7 +91,7 @@ def _cards(decision: Decision, held: Held, frame: Frame) -> tuple[list[dict[str,
 
 def escaped(text: str) -> str:
     """Text on one line that Markdown shows as it stands."""
-    line = "".join(letter if letter.isprintable() else " " for letter in text)
+    line = text if text.isprintable() else "".join(one if one.isprintable() else " " for one in text)
     return _MARKED.sub(r"\\\1", " ".join(line.split()))
 
 

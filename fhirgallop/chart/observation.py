@@ -35,6 +35,7 @@ _BY_ECHO: Final = {
     "catheter.right-atrial-pressure": "echo.right-atrial-pressure",
     "catheter.rv-systolic-pressure": "echo.rv-systolic-pressure",
 }
+_TWINS: Final = frozenset((*_BY_ECHO, *_BY_ECHO.values()))
 
 
 @dataclass(frozen=True, slots=True)
@@ -77,12 +78,13 @@ def read_observation(found: Found, reading: Reading) -> None:
     head = codes(observation.get("code"))
     components = tuple(elements(observation.get("component")))
     known_code = _read(Part(head, observation, components, found.place), frame, reading)
-    properties = tuple(c for c in components if _is_property(c, reading))
-    for index, component in enumerate(components):
+    describing = [_is_property(component, reading) for component in components]
+    properties = tuple(c for c, describes in zip(components, describing, strict=True) if describes)
+    for index, (component, describes) in enumerate(zip(components, describing, strict=True)):
         place = f"{found.place}.component[{index}]"
         if modified(component):
             reading.log.add("warning", "not-supported", "chart-modifier", _MODIFIED, place)
-        elif not _is_property(component, reading):
+        elif not describes:
             part = Part(codes(component.get("code")), component, properties, place)
             known_code |= _read(part, frame, reading)
     if not known_code and len(reading.facts) == before:
@@ -213,6 +215,8 @@ def _asserted(part: Part, frame: Frame, reading: Reading) -> None:
 
 def _apart(found: dict[str, Statement], part: Part, frame: Frame, reading: Reading) -> list[Statement]:
     """One of two ids that share a code: by echo or by catheter, as the source says."""
+    if _TWINS.isdisjoint(found):
+        return list(found.values())
     source = _source("", part, frame, reading)
     kept = []
     for id_, statement in found.items():
