@@ -39,7 +39,7 @@ KILLS = int(os.environ.get("DELIVERY_KILLS", "5"))
 FAULTS = os.environ.get("DELIVERY_FAULTS", "0.1")  # share of deliveries that the record system spoils
 SENDERS = 4
 PATIENT_SHARE = 5  # examinations of each patient
-SECONDS = 120 + EXAMS // 4 + 10 * KILLS
+SECONDS = 300 + EXAMS // 2 + 20 * KILLS  # patience, not a measure
 
 FORM = """
 template-map: 1
