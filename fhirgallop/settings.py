@@ -298,6 +298,9 @@ class Settings(BaseSettings):
         description="Requests that one process works on at once, half of them from one address; more are "
         "refused.",
     )
+    coded_at_once: int = Field(
+        4, ge=1, le=64, description="Of these, requests with examinations that compute at once; others queue."
+    )
     header_seconds: float = Field(
         10, gt=0, le=600, description="How long the head of a request may take to arrive."
     )

@@ -10,12 +10,16 @@ import math
 from collections import Counter, OrderedDict
 from collections.abc import Callable, Iterator
 from contextlib import contextmanager
-from typing import Final
+from functools import partial
+from typing import Any, Final, TypeVar
 
+from anyio import CapacityLimiter, to_thread
 from starlette.requests import Request
 
 from fhirgallop.outcome import Issue
 from fhirgallop.service import answers
+
+T = TypeVar("T")
 
 _MOST_CLIENTS: Final = 20_000
 _BURST: Final = 2.0  # seconds of the permitted rate that may come at once
@@ -53,7 +57,10 @@ class Rate:
 class Limits:
     """The rate of each address and of each caller, and how many requests are worked on at once."""
 
-    def __init__(self, *, rate: float, at_once: int, clock: Callable[[], float]) -> None:
+    def __init__(
+        self, *, rate: float, at_once: int, clock: Callable[[], float], coded_at_once: int = 4
+    ) -> None:
+        self.turns: Final = CapacityLimiter(coded_at_once)
         self._addresses = Rate(rate, clock)
         self._callers = Rate(rate, clock)
         self._at_once = at_once
@@ -102,6 +109,16 @@ def admit_caller(request: Request, name: str) -> None:
     """The same, for the limits of the service that the request came to."""
     limits: Limits = request.app.state.limits
     limits.admit_caller(name)
+
+
+async def in_turn(request: Request, act: Callable[..., T], *given: Any) -> T:
+    """What `act` gives, called in a thread, one after the other as the requests came.
+
+    Threads that all compute share one interpreter: with many at once everybody waits for the slowest, and an
+    embedded database has one writer.
+    """
+    limits: Limits = request.app.state.limits
+    return await to_thread.run_sync(partial(act, *given), limiter=limits.turns)
 
 
 def _too_many(wait: float) -> answers.RefusalError:

@@ -1,4 +1,4 @@
-"""What watches over the service, put together once: audit, limits, metrics, readiness, the guard around all."""
+"""What watches over the service, put together once: audit, limits, metrics, readiness, and the guard."""
 
 from __future__ import annotations
 
@@ -27,7 +27,12 @@ def new_id() -> str:
 def watch_over(app: FastAPI, engine: Engine, settings: Settings, clock: Callable[[], datetime]) -> None:
     """Puts the guard around an application, and into its state what handlers and guard share."""
     app.state.audit = Auditor(AuditTrail(engine), clock, new_id)
-    app.state.limits = Limits(rate=settings.rate, at_once=settings.at_once, clock=time.monotonic)
+    app.state.limits = Limits(
+        rate=settings.rate,
+        at_once=settings.at_once,
+        clock=time.monotonic,
+        coded_at_once=settings.coded_at_once,
+    )
     app.state.readiness = Readiness(engine, settings, clock, app.state.audit)
     app.state.metrics = Metrics()
     app.state.metrics.watch(app.state.readiness.readings)

@@ -108,7 +108,7 @@ class Bench:
         env = {
             **os.environ, "WRK_BODY": str(body), "WRK_FIRST": str(self._first), "WRK_ACCEPT": accept,
         }  # fmt: skip
-        words = ["wrk", "-t1", f"-c{connections}", f"-d{seconds}s", "-s", self.folder / "load.lua", address]
+        words = ["wrk", "-t1", "--timeout=30s", f"-c{connections}", f"-d{seconds}s", "-s", self.folder / "load.lua", address]
         done = subprocess.run(words, env=env, capture_output=True, check=True, text=True)
         found = json.loads(re.findall(r"^\{.*\}$", done.stdout, re.MULTILINE)[-1])
         if found.pop("bad"):

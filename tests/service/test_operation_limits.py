@@ -3,6 +3,9 @@
 from __future__ import annotations
 
 import contextlib
+import threading
+import time
+from concurrent.futures import ThreadPoolExecutor
 from typing import Any
 
 import pytest
@@ -125,3 +128,32 @@ def test_a_caller_has_one_rate_from_all_addresses() -> None:
     limits.admit_caller("https://other.example")
     for _ in range(10):
         limits.admit_caller("")  # nobody has a name where authorisation is off; the address counts
+
+
+def test_examinations_are_coded_in_turn(application: FastAPI, client: Any, example: Any) -> None:
+    """Never more at once than the setting says, and everybody's turn comes."""
+    desk, at_once, most, lock = application.state.exams, 0, 0, threading.Lock()
+    one = desk.one
+
+    def watched(*given: Any) -> Any:
+        nonlocal at_once, most
+        with lock:
+            at_once += 1
+            most = max(most, at_once)
+        try:
+            time.sleep(0.02)
+            return one(*given)
+        finally:
+            with lock:
+                at_once -= 1
+
+    desk.one = watched
+
+    def post(number: int) -> int:
+        record = example(exam={"number": f"E-{number}"})
+        status: int = client.post("/exams?map=fernwood-heart-form", json=record).status_code
+        return status
+
+    with ThreadPoolExecutor(12) as senders:
+        assert set(senders.map(post, range(24))) == {200}
+    assert most == application.state.settings.coded_at_once

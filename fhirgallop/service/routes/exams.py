@@ -25,6 +25,7 @@ from fhirgallop.service.batch_desk import BatchDesk, unreadable
 from fhirgallop.service.exam_desk import BUSY, Ask, ExamDesk, Opinion
 from fhirgallop.service.examinations import BusyError, Coded, Wish, done_to
 from fhirgallop.service.keyed import Keyed, Reply, keyed
+from fhirgallop.service.limits import in_turn
 from fhirgallop.settings import Settings
 from fhirgallop.storage.submissions import Also
 
@@ -124,7 +125,7 @@ async def post_exams(
         raise answers.refusal(406, "not-supported", "http-accept-hl7", text)
     ask = Ask(wish, answer, review, sent.chart, key, _watch(request))
     try:
-        reply = await run_in_threadpool(_answer, request.app.state.exams, sent, ask, settings)
+        reply = await in_turn(request, _answer, request.app.state.exams, sent, ask, settings)
     except BusyError:
         raise answers.RefusalError(409, [BUSY], {"Retry-After": "1"}) from None
     if reply.repeated:
