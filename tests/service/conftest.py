@@ -299,3 +299,59 @@ def serving(tmp_path: Path, root: Path) -> Iterator[Callable[..., ServiceProcess
     yield start
     for one in running:
         one.kill()
+
+
+PATIENT = "https://fernwood.example/patients|F-20417"
+
+
+@pytest.fixture(scope="session")
+def still(
+    tmp_path_factory: pytest.TempPathFactory, root: Path, example: Callable[..., dict[str, Any]]
+) -> Iterator[TestClient]:
+    """The service after it took the Fernwood examination, for tests that change nothing."""
+    folder = tmp_path_factory.mktemp("still")
+    chosen = settings.load(
+        maps=root / "examples/informatician", database=f"sqlite:///{folder / 'still.sqlite3'}"
+    )
+    with TestClient(create_app(chosen, Clock()), base_url=HERE, raise_server_exceptions=False) as speaking:
+        answer = speaking.post("/exams", params={"map": "fernwood-heart-form"}, json=example())
+        assert answer.status_code == 200
+        yield speaking
+
+
+@pytest.fixture
+def examined(client: TestClient, example: Callable[..., dict[str, Any]]) -> TestClient:
+    """The service after it took the Fernwood examination."""
+    answer = client.post("/exams", params={"map": "fernwood-heart-form"}, json=example())
+    assert answer.status_code == 200
+    return client
+
+
+@pytest.fixture
+def of_patient() -> dict[str, str]:
+    """The search parameter for the patient of the example."""
+    return {"patient:identifier": PATIENT}
+
+
+@pytest.fixture(scope="session")
+def _coded_bundle(root: Path) -> bytes:
+    record = (root / "examples/ehr/fernwood-exam.json").read_bytes()
+    at = datetime(2026, 12, 1, 8, 0, tzinfo=UTC)
+    result = process(record, root / "examples/informatician/fernwood-heart-form.yaml", recorded=at)
+    return fhirjson.write(result.bundle)
+
+
+@pytest.fixture
+def coded_bundle(_coded_bundle: bytes) -> dict[str, Any]:
+    """The Bundle of the example as the command line gives it, to be changed and sent."""
+    made: dict[str, Any] = json.loads(_coded_bundle)
+    return made
+
+
+@pytest.fixture
+def observation(coded_bundle: dict[str, Any]) -> dict[str, Any]:
+    """One Observation of it, without an identity of ours and without profile."""
+    made: dict[str, Any] = deepcopy(coded_bundle["entry"][0]["resource"])
+    del made["meta"]
+    made["identifier"] = [{"system": "https://fernwood.example/results", "value": "R-1"}]
+    return made

@@ -24,7 +24,7 @@ router = APIRouter(tags=["FHIR"])
     "/fhir/{edition}/QuestionnaireResponse/$extract",
     summary="Make Observations of a form's answers",
     description=(
-        "The body is Parameters with `questionnaire-response` and `questionnaire`, the answer Parameters with "
+        "The body is Parameters with `questionnaire-response`, `questionnaire`; the answer Parameters with "
         "`return` (a transaction Bundle) and `issues`. Or send the response alone, with its form contained."
     ),
     openapi_extra=RESOURCE_BODY,
