@@ -92,11 +92,12 @@ class Service:
         """What a client must know before it uses the service."""
         needed = " and ".join(f"'{key}'" for key, wanted in self.prefetch.items() if wanted.required)
         return (
-            f"Nothing is fetched from fhirServer: send the prefetch. {needed} must be sent (null or an empty "
-            "searchset where there is nothing), or the answer is 412; what else is not sent stays unknown, "
-            "and the cards say so. FHIR R4, R4B or R5 resources. Cards are for clinicians: for a user who is "
-            "none, the answer is empty. Support for clinical judgement, not a "
-            "replacement for it; an empty answer is no reassurance."
+            "Send the prefetch. A key that is absent, and further pages, are read from fhirServer only where "
+            "the site has listed that server, with the scopes of fhirAuthorization, within moments. "
+            f"{needed} must be known (null or an empty searchset where there is nothing), or the answer is "
+            "412; what else is unknown stays unknown, and the cards say so. FHIR R4, R4B or R5 resources. "
+            "Cards are for clinicians: for a user who is none, the answer is empty. Support for clinical "
+            "judgement, not a replacement for it; an empty answer is no reassurance."
         )
 
     def as_dict(self) -> dict[str, Any]:

@@ -66,7 +66,7 @@ def test_ch_9_each_id_is_an_address(hooked: TestClient, listed: list[dict[str, A
 def test_ch_10_prefetch_and_usage_are_as_described(listed: list[dict[str, Any]]) -> None:
     for one in listed:
         assert all(isinstance(key, str) and isinstance(query, str) for key, query in one["prefetch"].items())
-        assert "Nothing is fetched from fhirServer" in one["usageRequirements"]
+        assert "Send the prefetch" in one["usageRequirements"]
         assert "412" in one["usageRequirements"]
 
 
