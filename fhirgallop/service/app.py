@@ -5,6 +5,7 @@ from __future__ import annotations
 from collections.abc import AsyncIterator, Callable, Mapping, Sequence
 from contextlib import asynccontextmanager
 from datetime import UTC, datetime
+from functools import partial
 from typing import Final
 
 from fastapi import FastAPI, Request
@@ -21,7 +22,7 @@ from fhirgallop.service import answers
 from fhirgallop.service.auth.opening import open_gate, public_keys
 from fhirgallop.service.batch_desk import BatchDesk
 from fhirgallop.service.batch_work import BatchWork, batches_coded
-from fhirgallop.service.delivering import delivering
+from fhirgallop.service.delivering import delivering, readings
 from fhirgallop.service.exam_desk import ExamDesk
 from fhirgallop.service.examinations import Examinations
 from fhirgallop.service.fetching import open_fetcher
@@ -78,6 +79,7 @@ def create_app(settings: Settings, clock: Callable[[], datetime] = now) -> FastA
 
     @asynccontextmanager
     async def lifespan(_app: FastAPI) -> AsyncIterator[None]:
+        _app.state.readiness.try_out()
         async with (
             house_kept(engine, keeping(settings), clock),
             delivering(dispatch, settings.finish_seconds),
@@ -121,6 +123,8 @@ def create_app(settings: Settings, clock: Callable[[], datetime] = now) -> FastA
         app.include_router(router)
     open_fhir(app, engine, app.state.shelf, clock)
     watch_over(app, engine, settings, clock)
+    if dispatch:
+        app.state.metrics.watch(partial(readings, dispatch))
     manner = Manner(policy, settings.cards_critical, settings.pages.rstrip("/"), settings.cds_system_actions)
     app.state.hooks = HookDesk(HookStore(engine), clock, rulebook.load(), manner, app.state.metrics)
     app.state.exams = ExamDesk(

@@ -166,6 +166,9 @@ def test_the_service_delivers_what_is_written_as_the_site_delivers(
         amended = record.replace(b'"hr": 78', b'"hr": 80')
         assert client.post(f"/exams?map={MAP}", content=amended, headers=header).status_code == 200
         until(engine, lambda tally: tally.counts["delivered"] == 2)
+        told = client.get("/metrics").text
+    assert 'fhirgallop_delivery_tries{result="delivered"} 2.0' in told
+    assert 'fhirgallop_deliveries{state="delivered"} 2.0' in told
     assert peer.rows("SELECT created, updated > 0 FROM events") == [(len(sent["entry"]), 0), (1, 1)]
     engine.dispose()
 
