@@ -12,8 +12,12 @@ from typing import Final, Literal
 from sqlalchemy import Engine
 from sqlalchemy.pool import QueuePool
 
-from fhirgallop.conformance.registry import registry
+from fhirgallop import assets
 from fhirgallop.errors import SettingsError
+from fhirgallop.intake.detect import open_records
+from fhirgallop.intake.record import LocalRecord
+from fhirgallop.mapping.reading import load_map
+from fhirgallop.pipeline import process
 from fhirgallop.service.audit import Auditor
 from fhirgallop.service.metrics import Reading
 from fhirgallop.settings import Settings
@@ -55,6 +59,7 @@ class Readiness:
     auditor: Auditor
     draining: bool = False
     _outbox: Outbox = field(init=False)
+    _tried: bool = field(init=False, default=False)
 
     def __post_init__(self) -> None:
         self._outbox = Outbox(self.engine)
@@ -77,11 +82,25 @@ class Readiness:
             return Part("database", "failed", other_form(found or 0))
         return Part("database", "well")
 
-    def _definitions(self) -> Part:
-        if not registry(self.settings.edition).edition.resources:
-            return Part(
-                "definitions", "failed", "The FHIR definitions are not loaded; install the program anew."
+    def try_out(self) -> None:
+        """Codes and judges an invented examination, and keeps nothing of it.
+
+        What is compiled then is ready for the first patient, and a broken installation shows before one.
+        """
+        template = load_map(assets.path("examples", "informatician", "fernwood-heart-form.yaml"))
+        text = assets.path("examples", "ehr", "fernwood-exam.json").read_bytes()
+        (record,) = open_records(text, content_type="application/json")
+        if isinstance(record, LocalRecord):
+            settings = self.settings
+            result = process(
+                record, template, recorded=self.clock(), edition=settings.edition, snomed=settings.snomed
             )
+            self._tried = result.ok
+
+    def _definitions(self) -> Part:
+        if not self._tried:
+            text = "The trial examination could not be coded and judged; install the program anew."
+            return Part("definitions", "failed", text)
         return Part("definitions", "well")
 
     def _deliveries(self) -> Part:

@@ -56,7 +56,7 @@ def test_the_unit_fits_the_program(root: Path, given: dict[str, str]) -> None:
     credential = service["LoadCredential"].partition(":")[0]
     assert value == f"%d/{credential}"
     fields = Settings.model_fields
-    needed = float(given[f"{PREFIX}NOTICE_SECONDS"]) + 2 * int(fields["finish_seconds"].default)
+    needed = float(given[f"{PREFIX}NOTICE_SECONDS"]) + 3 * int(fields["finish_seconds"].default)
     assert int(service["TimeoutStopSec"]) > needed, "systemd must not kill what is allowed to finish"
     for line in ("ProtectSystem=strict", "NoNewPrivileges=yes", "CapabilityBoundingSet=", "DynamicUser=yes",
                  "SystemCallFilter=@system-service"):  # fmt: skip

@@ -13,6 +13,8 @@ from fastapi import FastAPI
 from prometheus_client.parser import text_string_to_metric_families
 from sqlalchemy import text
 
+from fhirgallop.outcome import Issue
+
 WHERE = "/exams?map=fernwood-heart-form"
 
 
@@ -49,6 +51,7 @@ def test_a_sound_service_is_ready_in_every_part(client: Any) -> None:
         (lambda state: _change(state, "UPDATE schema_version SET version = 999"), "database"),
         (lambda state: _change(state, "DROP TABLE outbox"), "deliveries"),
         (lambda state: object.__setattr__(state.settings, "free_disk", 10**12), "disk"),
+        (lambda state: setattr(state.readiness, "_tried", False), "definitions"),
     ],
 )
 def test_a_part_that_fails_is_named_with_its_reason(
@@ -128,3 +131,20 @@ def test_every_figure_of_the_runbook_is_published(client: Any, root: Path) -> No
     assert len(named) > 10
     for name in named:
         assert f"# TYPE {name} " in page, name
+
+
+def test_the_trial_at_the_start_is_of_the_whole_way_and_keeps_nothing(
+    application: FastAPI, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    """Where the judge refuses what we write, the service is not ready."""
+    readiness = application.state.readiness
+    issue = Issue("error", "structure", "made-up", "Made up.")
+    monkeypatch.setattr("fhirgallop.pipeline.validate", lambda *_: [issue])
+    readiness.try_out()
+    parts = {part.name: part.state for part in readiness.parts()}
+    assert parts["definitions"] == "failed"
+    monkeypatch.undo()
+    readiness.try_out()
+    assert {part.state for part in readiness.parts()} == {"well"}
+    with readiness.engine.connect() as connection:
+        assert connection.scalar(text("SELECT count(*) FROM submissions")) == 0
