@@ -110,7 +110,7 @@ def retry(
 ) -> None:
     """Send failed deliveries again; named ones that wait are sent at once.
 
-    Exit codes: 0 they are under way; 1 there was none; 2 neither numbers nor --all.
+    Exit codes: 0 they are under way, or a rest ended; 1 there was none; 2 neither numbers nor --all.
     """
     from fhirgallop.storage.outbox import Outbox  # noqa: PLC0415 - heavy; --help stays quick
 
@@ -119,9 +119,11 @@ def retry(
     with _opened(database) as (engine, _):
         box = Outbox(engine)
         count = box.again(None if all_ else numbers, _now())
-        if all_:
-            box.reopen()
-    _counted(count, "to be sent again")
+        rested = all_ and box.reopen(_now())
+    if rested:
+        complain("the record system is asked at once")
+    if count or not rested:
+        _counted(count, "to be sent again")
 
 
 @app.command("drop")

@@ -258,10 +258,11 @@ class Outbox:
         fresh = {"state": "waiting", "due": now, "attempts": 0, "reason": ""}
         return self._change(numbers, states, fresh)
 
-    def reopen(self) -> None:
-        """Lets the destination be asked at once, though it was down."""
+    def reopen(self, now: int) -> bool:
+        """Lets a destination that is down be asked at once; False when it was not resting."""
+        rested = update(destinations).where(self._own(), destinations.c.open_until > now)
         with told(), self._engine.begin() as connection:
-            connection.execute(update(destinations).where(self._own()).values(open_until=0, failures=0))
+            return connection.execute(rested.values(open_until=now)).rowcount == 1
 
     def drop(self, numbers: Sequence[int]) -> int:
         """Gives deliveries up that failed or wait; how many there were."""

@@ -7,6 +7,7 @@ tests/outside by `cryptography` alone.
 from __future__ import annotations
 
 import json
+import ssl
 import threading
 from collections.abc import Callable
 from datetime import UTC, datetime, timedelta
@@ -19,7 +20,7 @@ from joserfc import jwt
 from joserfc.jwk import ECKey, KeySet, RSAKey
 
 from fhirgallop.delivery.auth import Access, Identity, NoTokenError
-from fhirgallop.delivery.client import Answer, ClientError
+from fhirgallop.delivery.client import Answer, ClientError, trust
 from fhirgallop.delivery.destination import Destination
 from fhirgallop.delivery.keys import SigningKey, public_set, read_keys
 from fhirgallop.delivery.post import Post
@@ -252,6 +253,10 @@ def test_a_401_is_answered_with_one_new_token(key: SigningKey) -> None:
     wire = Wire(token=[given("t1"), given("t2")], fhir=[Answer(401, {}, b"")] * 2)
     assert post(wire, key).send(OK, lambda: True).meaning == "denied"
     assert len(wire.sent) == 4
+
+
+def test_sm_11_nothing_older_than_tls_1_2_is_spoken() -> None:
+    assert trust().minimum_version >= ssl.TLSVersion.TLSv1_2
 
 
 def written(folder: Path, *keys: RSAKey | ECKey) -> Path:

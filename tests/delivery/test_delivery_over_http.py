@@ -19,10 +19,10 @@ from fhirgallop import settings
 from fhirgallop.api import process
 from fhirgallop.codes import fhirjson
 from fhirgallop.delivery.dispatch import Dispatch, open_dispatch
-from fhirgallop.delivery.keys import public_set, read_keys
+from fhirgallop.delivery.keys import KEPT_SECONDS, public_set, read_keys
 from fhirgallop.service.app import create_app
 from fhirgallop.storage.engine import open_database
-from fhirgallop.storage.outbox import Outbox, Tally
+from fhirgallop.storage.outbox import Outbox, Rest, Settled, Tally
 
 Put = Callable[..., None]
 MAP = "fernwood-heart-form"
@@ -184,6 +184,23 @@ def test_without_an_endpoint_nothing_is_noted(tmp_path: Path, root: Path) -> Non
     engine.dispose()
 
 
+def test_sm_16_our_public_keys_are_published_with_how_long_they_may_be_kept(
+    tmp_path: Path, root: Path
+) -> None:
+    path = keys(tmp_path, RSAKey.generate_key(2048), ECKey.generate_key("P-384"))
+    chosen = settings.load(
+        maps=root / "examples/informatician", database=f"sqlite:///{tmp_path / 'service.sqlite3'}",
+        deliver_to="https://record.example/fhir", deliver_client="gallop-1", deliver_key=path,
+        delivery_workers=0,
+    )  # fmt: skip
+    with TestClient(create_app(chosen), base_url="http://localhost") as client:
+        answer = client.get("/.well-known/jwks.json")
+    assert answer.headers["content-type"].startswith("application/json")
+    assert answer.headers["cache-control"] == f"public, max-age={KEPT_SECONDS}"
+    assert answer.content == public_set(read_keys(path))
+    assert [key["alg"] for key in answer.json()["keys"]] == ["RS384", "ES384"], "old and new overlap"
+
+
 @pytest.mark.parametrize(
     ("given", "said"),
     [
@@ -243,6 +260,21 @@ def test_failed_deliveries_are_found_explained_and_sent_again_by_one_command(
     assert commands("drop", "1", "--yes").code == 1
     assert commands("retry").code == 2
     assert commands("retry", "1", "--all").code == 2
+
+
+def test_a_rest_is_told_and_ended_by_one_command(
+    commands: Any, sqlite_engine: Engine, put: Put, bundle: bytes
+) -> None:
+    put(sqlite_engine, "a", bundle=bundle)
+    box = Outbox(sqlite_engine)
+    claim = box.claim("w", 1, lease=9, after=1)
+    assert claim
+    later = round(now().timestamp() * 1000) + 600_000
+    assert box.settle(claim, Settled("waiting", "answered 403", due=0), Rest(1, lambda _: later))
+    assert "the record system rests until" in commands("list").err
+    done = commands("retry", "--all")
+    assert (done.code, done.err) == (0, "the record system is asked at once\n")
+    assert commands("retry", "--all").code == 1
 
 
 def test_work_without_an_endpoint_says_what_to_set(commands: Any, sqlite_engine: Engine) -> None:

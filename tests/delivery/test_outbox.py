@@ -194,6 +194,19 @@ def test_the_least_tried_delivery_probes(engine: Engine, put: Put) -> None:
     assert box.one(probe.id).exam == "sound"  # type: ignore[union-attr]
 
 
+def test_a_rest_ends_when_a_person_says_so(engine: Engine, put: Put) -> None:
+    box = Outbox(engine)
+    put(engine, "a")
+    assert not box.reopen(0)
+    claim = take(box)
+    assert claim
+    assert box.settle(claim, Settled("waiting", due=0), Rest(AFTER, lambda _: 5000))
+    assert box.reopen(100)
+    probe = take(box, 100)
+    assert probe
+    assert probe.probe, "whether it is back is still to be seen"
+
+
 def test_a_hold_asked_for_ends_by_itself(engine: Engine, put: Put) -> None:
     """429 with Retry-After: all wait, and after that all go on, without a probe."""
     box = Outbox(engine)
