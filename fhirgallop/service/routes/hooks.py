@@ -5,7 +5,8 @@ Source: CDS Hooks 2.0.1.
 
 from __future__ import annotations
 
-from collections.abc import Mapping
+from collections.abc import Iterator, Mapping
+from contextlib import contextmanager
 from dataclasses import replace
 from typing import Annotated, Any, Final
 
@@ -29,6 +30,7 @@ from fhirgallop.service.auth.needs import needs
 from fhirgallop.service.examinations import BusyError
 from fhirgallop.service.fetching import Fetcher
 from fhirgallop.service.hook_desk import HookDesk, patient_of
+from fhirgallop.service.limits import in_turn
 from fhirgallop.settings import Settings
 
 router = APIRouter(tags=["CDS Hooks"])
@@ -79,10 +81,17 @@ def list_services() -> Response:
     responses=_CALL_STATUSES,
 )
 async def call_service(request: Request, service_id: ServiceId) -> Response:
-    """Holds today's examination against what was sent."""
+    """Holds today's examination against what was sent, and what could be read of the rest."""
     service = _service(service_id)
     body = await _json_body(request)
-    return await run_in_threadpool(_guarded, _cards, request, service, body)
+    call, draft = await in_turn(request, _prepared, request, service, body)
+    if not call.by_clinician:
+        return answers.json_answer({"cards": []})
+    fetcher: Fetcher | None = request.app.state.fetcher
+    if fetcher and (call.prefetch.absent or call.prefetch.paged):
+        # waits for another server: out of turn
+        call = await run_in_threadpool(fetcher.complete, call, service, request.state.caller.name)
+    return await in_turn(request, _cards, request, service, call, draft)
 
 
 @router.post(
@@ -97,7 +106,7 @@ async def take_feedback(request: Request, service_id: ServiceId) -> Response:
     """Keeps feedback, all of it or none."""
     service = _service(service_id)
     body = await _json_body(request)
-    return await run_in_threadpool(_guarded, _feedback, request, service, body)
+    return await in_turn(request, _feedback, request, service, body)
 
 
 @router.get(
@@ -163,19 +172,24 @@ async def _json_body(request: Request) -> bytes:
     return await requests.body(request, settings.max_body)
 
 
-def _guarded(act: Any, request: Request, service: Service, body: bytes) -> Response:
+def _value(body: bytes) -> Any:
     value, issues = fhirjson.read(body)
     if has_errors(issues):
         raise answers.RefusalError(400, issues)
+    return value
+
+
+@contextmanager
+def _busy_told() -> Iterator[None]:
     try:
-        answer: Response = act(request, service, value)
+        yield
     except BusyError:
         raise answers.RefusalError(503, [_BUSY], {"Retry-After": "1"}) from None
-    return answer
 
 
-def _cards(request: Request, service: Service, value: Any) -> Response:
-    call, issues = read_call(value, service)
+def _prepared(request: Request, service: Service, body: bytes) -> tuple[Call, Mapping[str, Any] | None]:
+    """The call as it was sent, and its draft examination, where it has one and somebody to see cards."""
+    call, issues = read_call(_value(body), service)
     if call is None:
         raise _refused(issues)
     audit.about(
@@ -185,16 +199,14 @@ def _cards(request: Request, service: Service, value: Any) -> Response:
         patients=[patient_of(call)],
         entities=[f"CDS Hooks {service.id}"],
     )
-    if not call.by_clinician:
-        return answers.json_answer({"cards": []})
-    draft = _draft(request, call)
-    fetcher: Fetcher | None = request.app.state.fetcher
-    client = request.state.caller.name
-    if fetcher:
-        call = fetcher.complete(call, service, client)
+    return call, _draft(request, call) if call.by_clinician else None
+
+
+def _cards(request: Request, service: Service, call: Call, draft: Mapping[str, Any] | None) -> Response:
     if has_errors(issues := call.faults(service)):
         raise _refused(issues)
-    answer, issues = _desk(request).answer(service, call, draft, client)
+    with _busy_told():
+        answer, issues = _desk(request).answer(service, call, draft, request.state.caller.name)
     if has_errors(issues):
         raise _refused(issues)
     return answers.json_answer(answer)
@@ -228,10 +240,11 @@ def _draft(request: Request, call: Call) -> Mapping[str, Any] | None:
     return result.bundle
 
 
-def _feedback(request: Request, service: Service, value: Any) -> Response:
-    reports, issues = read_feedback(value, service.id)
+def _feedback(request: Request, service: Service, body: bytes) -> Response:
+    reports, issues = read_feedback(_value(body), service.id)
     if has_errors(issues):
         raise answers.RefusalError(400, issues)
-    patients = _desk(request).take(service, reports)
+    with _busy_told():
+        patients = _desk(request).take(service, reports)
     audit.about(request, action="C", interaction="create", patients=patients)
     return Response(status_code=200)
