@@ -23,13 +23,16 @@ _MOMENT = {
 TEXT = r"^[^\x00-\x08\x0B\x0C\x0E-\x1F]+$"
 
 # narrative of plain blocks without attributes, which the narrative clause takes as it is
-_SAID = r"([^<>&\x00-\x08\x0B\x0C\x0E-\x1F\x7F-\x9F\uFFFE\uFFFF]|&(amp|lt|gt|quot|apos);)"
+_PLAIN = r"[^<>&\x00-\x08\x0B\x0C\x0E-\x1F\x7F-\x9F\uFFFE\uFFFF]"
+_SAID = f"({_PLAIN}|&(amp|lt|gt|quot|apos);)"
 _INLINE = f"({_SAID}|<b>{_SAID}*</b>|<i>{_SAID}*</i>|<br/>)"
 _BLOCK = f"(<p>{_INLINE}*</p>|<ul>(<li>{_INLINE}*</li>)+</ul>)"
 _FIRST = f"[A-Za-z0-9(]{_INLINE}*"
+_OPEN = r'^<div xmlns="http://www\.w3\.org/1999/xhtml">'
+# a paragraph alone is so frequent, and its pattern so much smaller, that it is tried first
+_PARAGRAPH = rf"{_OPEN}<p>[A-Za-z0-9(]{_PLAIN}*</p></div>$"
 _DIV = (
-    r'^<div xmlns="http://www\.w3\.org/1999/xhtml">'
-    f"({_FIRST}|<p>{_FIRST}</p>{_BLOCK}*|<p><b>{_FIRST}</b>{_INLINE}*</p>{_BLOCK}*"
+    f"{_OPEN}({_FIRST}|<p>{_FIRST}</p>{_BLOCK}*|<p><b>{_FIRST}</b>{_INLINE}*</p>{_BLOCK}*"
     f"|<ul><li>{_FIRST}</li>(<li>{_INLINE}*</li>)*</ul>{_BLOCK}*)</div>$"
 )
 _PATTERNS: Mapping[str, str] = {
@@ -40,7 +43,6 @@ _PATTERNS: Mapping[str, str] = {
     "canonical": '^[!"$-~][!-~]*$',
     "oid": r"^urn:oid:[0-2](\.(0|[1-9][0-9]*))+$",
     "uuid": f"^{UUID}$",
-    "xhtml": _DIV,
     "date": _DATE,
     "time": r"^([01][0-9]|2[0-3]):[0-5][0-9]:[0-5][0-9](\.[0-9]{1,9})?$",
     "base64Binary": "^([A-Za-z0-9+/]{4})+([A-Za-z0-9+/]{2}==|[A-Za-z0-9+/]{3}=)?$",
@@ -48,6 +50,7 @@ _PATTERNS: Mapping[str, str] = {
 _ANY: Mapping[str, Any] = {"type": "string", "pattern": TEXT, "maxLength": 2**20}
 _FORMATS: Mapping[str, Mapping[str, Any]] = {
     **{name: {"type": "string", "pattern": pattern} for name, pattern in _PATTERNS.items()},
+    "xhtml": {"type": "string", "anyOf": [{"pattern": _PARAGRAPH}, {"pattern": _DIV}]},
     "instant": {"type": "string", **_MOMENT},
     "dateTime": {"type": "string", "anyOf": [_MOMENT, {"pattern": _DATE}]},
 }

@@ -128,7 +128,7 @@ _ROWS: tuple[tuple[Fragment, str], ...] = (
         {"any": ("reference", "identifier", "display")},
         "reference.exists() or identifier.exists() or display.exists() or extension.exists()",
     ),
-    ({"needs": {"display": ("code",)}}, "code.exists().not() implies display.exists().not()"),
+    ({"required": ("code",)}, "code.exists().not() implies display.exists().not()"),
     ({"required": ("value",)}, "value.exists()"),
 )
 FRAGMENTS: Mapping[str, Fragment] = {" ".join(text.split()): addition for addition, text in _ROWS}

@@ -78,7 +78,7 @@ class _Narrowing:
 
     def root(self, schema: Schema, profile: Profile, definition: TypeDef, targets: dict[str, Any]) -> None:
         """Narrows a resource's schema, and the types its references may lead to inside a Bundle."""
-        self._object(schema, profile.root, definition, urn=True)
+        self._object(schema, profile.root, definition, urn=self._builder.urn)
         for name, rule in profile.root.children.items():
             wanted = self._targets(rule.types)
             for key in keys_of(definition, name, schema) if wanted else ():

@@ -10,6 +10,9 @@ from typing import Any
 
 Check = Callable[[Any], bool]
 
+# types of a choice that are often met; plain forms take no others
+OFTEN = frozenset({"Quantity", "CodeableConcept", "string", "boolean", "dateTime"})
+_VALUES = tuple(f"value{name[:1].upper()}{name[1:]}" for name in sorted(OFTEN))
 _DAY = len("2026-03-04")
 
 
@@ -42,14 +45,19 @@ def _zone(moment: str) -> str:
     return "Z" if moment.endswith("Z") else moment[-6:]
 
 
-def codes_apart(resource: Mapping[str, Any]) -> bool:
-    """No component has a code of the Observation itself, if that has a value (obs-7)."""
-    own = {coding.get("code") for coding in resource["code"].get("coding", ())}
-    return all(
-        coding.get("code") not in own
-        for component in resource["component"]
-        for coding in component["code"].get("coding", ())
-    )
+def codes_apart(observation: Mapping[str, Any]) -> bool:
+    """No component has a code of the Observation itself, which has a value (obs-7)."""
+    own = {coding.get("code") for coding in observation["code"].get("coding", ())}
+    for component in observation["component"]:
+        for coding in component["code"].get("coding", ()):
+            if coding.get("code") in own:
+                return False
+    return True
+
+
+def components_apart(observation: Mapping[str, Any]) -> bool:
+    """The same of an Observation that has components and, if any, a value of an ordinary type."""
+    return observation.keys().isdisjoint(_VALUES) or codes_apart(observation)
 
 
 # type of a root element -> its check, and the invariants which that check answers for

@@ -48,9 +48,11 @@ class Form:
 class SchemaBuilder:
     """Builds schemas of resource types of one edition; data types stand once, under "$defs"."""
 
-    def __init__(self, registry: Registry) -> None:
+    def __init__(self, registry: Registry, *, urn: bool = True) -> None:
+        """`urn`: whether references may lead to entries of a Bundle, which have to be looked up then."""
         self.registry = registry
         self.edition = registry.edition
+        self.urn = urn
         self.definitions: dict[str, Schema] = {}
         # Reference and Identifier hold one another: built in this order, only the assigner is refused
         self.type("Reference")
@@ -203,7 +205,7 @@ class SchemaBuilder:
                 properties[key] = self._looked_at_apart(child.type_name)
                 continue
             # a urn may lead to another entry, which is looked up for resources and their nested types only
-            schema = self._element(child, urn=definition.kind in ("resource", "nested"))
+            schema = self._element(child, urn=self.urn and definition.kind in ("resource", "nested"))
             if schema is not REFUSED:
                 properties[key] = schema
         return properties

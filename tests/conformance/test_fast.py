@@ -16,7 +16,7 @@ from hypothesis import HealthCheck, given, settings
 from hypothesis import strategies as st
 from jsonschema_rs import Draft202012Validator
 
-from fhirgallop.conformance import fast, fast_profiles
+from fhirgallop.conformance import fast, fast_forms, fast_profiles
 from fhirgallop.conformance.fast_schema import SchemaBuilder
 from fhirgallop.conformance.registry import Registry, own_definitions, registry
 from fhirgallop.conformance.source import read
@@ -186,15 +186,15 @@ def test_periods_out_of_order_or_of_two_forms_are_not(edition: str) -> None:
 def test_every_vital_sign_and_every_profile_of_ours_has_a_form(edition: str) -> None:
     known = registry(edition)
     for name in PROFILES.values():
-        assert fast._form(known, "Observation", (), (SD + name,)) is not None, name
+        assert fast_forms.form(known, ("Observation", (), (SD + name,))) is not None, name
     for url, definition in own_definitions().structures.items():
-        assert fast._form(known, definition["type"], (url,), ()) is not None, url
+        assert fast_forms.form(known, (definition["type"], (url,), ())) is not None, url
 
 
 @pytest.mark.parametrize("edition", EDITIONS)
 def test_every_form_of_a_resource_type_compiles(edition: str) -> None:
     known = registry(edition)
-    formed = [kind for kind in known.edition.resources if fast._form(known, kind, (), ()) is not None]
+    formed = [kind for kind in known.edition.resources if fast_forms.form(known, (kind, (), ())) is not None]
     assert {"Observation", "DiagnosticReport", "Patient", "Provenance", "Encounter"} <= set(formed)
 
 
@@ -393,9 +393,9 @@ def _both(
     builder = SchemaBuilder(known)
     form = fast_profiles.form(builder, "Observation", declared, implied)
     assert form is not None
-    found = fast._form(known, "Observation", declared, implied)
+    found = fast_forms.form(known, ("Observation", declared, implied))
     assert found is not None
-    return fast._compiled({**form.schema, "$defs": builder.definitions}), found[1]
+    return fast_forms._compiled({**form.schema, "$defs": builder.definitions}), found[1]
 
 
 SAMPLES = sorted((Path(__file__).parent / "published").glob("*.json"))
