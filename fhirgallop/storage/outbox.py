@@ -207,18 +207,6 @@ class Outbox:
                 self._failed(connection, rest, probe=claim.probe)
         return kept
 
-    def give_back(self, claim: Claim, now: int) -> None:
-        """Lets others take a claim at once that was not tried."""
-        row = outbox.c
-        held = and_(row.id == claim.id, row.worker == claim.worker, row.state == "sending",
-                    row.lease == claim.lease)  # fmt: skip
-        untried = {"state": "waiting", "due": now, "lease": 0, "worker": "",
-                   "attempts": row.attempts - (0 if claim.probe else 1)}  # fmt: skip
-        with told(), self._engine.begin() as connection:
-            connection.execute(update(outbox).where(held).values(**untried))
-            if claim.probe:
-                connection.execute(update(destinations).where(self._own()).values(open_until=0))
-
     def tally(self) -> Tally:
         """How the outbox fares now."""
         mine = outbox.c.destination == self._destination

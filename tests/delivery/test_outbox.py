@@ -117,17 +117,6 @@ def test_a_lease_that_ran_out_gives_the_delivery_to_another(engine: Engine, put:
     assert box.settle(taken, DELIVERED, None)
 
 
-def test_a_claim_given_back_was_no_try(engine: Engine, put: Put) -> None:
-    box = Outbox(engine)
-    put(engine, "a")
-    claim = take(box)
-    assert claim
-    box.give_back(claim, 20)
-    again = take(box, 20)
-    assert again
-    assert again.attempts == 1
-
-
 def test_after_failures_in_a_row_one_delivery_probes_the_destination(engine: Engine, put: Put) -> None:
     box, other = Outbox(engine), Outbox(engine)
     for number in range(8):

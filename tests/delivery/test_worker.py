@@ -11,7 +11,7 @@ from datetime import UTC, datetime, timedelta
 from typing import Any
 
 import pytest
-from sqlalchemy import Engine
+from sqlalchemy import Engine, event
 
 from fhirgallop.delivery.client import Answer, ClientError
 from fhirgallop.delivery.patience import Patience
@@ -246,6 +246,34 @@ def test_nothing_is_sent_when_the_lease_is_nearly_over(
     clock.pass_by(60)
     verdict = one.post.send(claim.bundle, lambda: one.now() + one.timeout < claim.lease)
     assert (verdict.kind, verdict.meaning, wire.sent) == ("late", "later", [])
+
+
+def test_what_arrived_while_the_disk_was_full_is_sent_again_and_written_down_later(
+    sqlite_engine: Engine, put: Put, way: Callable[..., Way], clock: Clock
+) -> None:
+    """SQLite tells a page limit that is reached as it tells a full disk (SQLITE_FULL)."""
+    answer = b'{"response":{"status":"200","location":"%s"}}' % (b"x" * 400_000)
+    wire = Wire(Answer(200, {}, DONE.body.replace(ENTRY, answer)))
+    one = way(wire)
+    put(sqlite_engine, "a")
+    with sqlite_engine.connect() as connection:
+        pages = connection.exec_driver_sql("PRAGMA page_count").scalar()
+
+    def full(connection: Any, _: object) -> None:
+        connection.execute(f"PRAGMA max_page_count={pages}")
+
+    sqlite_engine.dispose()
+    event.listen(sqlite_engine, "connect", full)
+    with pytest.raises(StorageError):
+        deliver_one(one, "w")
+    assert first(one).state == "sending", "nothing of the result was written"
+    assert deliver_one(one, "w") == ""
+    event.remove(sqlite_engine, "connect", full)
+    sqlite_engine.dispose()
+    clock.pass_by(one.lease / 1000)
+    assert deliver_one(one, "w") == "delivered"
+    assert first(one).state == "delivered"
+    assert [sent["body"] for sent in wire.sent] == [wire.sent[0]["body"]] * 2
 
 
 def test_workers_go_on_after_the_database_failed_and_finish_what_they_send(
