@@ -4,6 +4,11 @@ from __future__ import annotations
 
 import base64
 import json
+import os
+import signal
+import socket
+import subprocess
+import sys
 import threading
 import time
 import uuid
@@ -226,3 +231,48 @@ def outcome() -> Callable[[Any], tuple[int, str, str]]:
         return answer.status_code, issue["code"], issue["details"]["coding"][0]["code"]
 
     return read
+
+
+class Running:
+    """The service as a process of its own, started from the command line."""
+
+    def __init__(self, root: Path, folder: Path, env: dict[str, str]) -> None:
+        with socket.socket() as taken:
+            taken.bind(("127.0.0.1", 0))
+            self.port: int = taken.getsockname()[1]
+        named = {f"FHIRGALLOP_{name}": value.replace("{port}", str(self.port)) for name, value in env.items()}
+        words = ["--port", str(self.port), "--maps", str(root / "examples/informatician"),
+                 "--database", f"sqlite:///{folder / f'{self.port}.sqlite3'}"]  # fmt: skip
+        self.log_file = folder / f"{self.port}.log"
+        with self.log_file.open("wb") as log:
+            self.process = subprocess.Popen(
+                [sys.executable, "-m", "fhirgallop", "serve", *words],
+                stdout=log, stderr=subprocess.STDOUT, env={**os.environ, **named},
+            )  # fmt: skip
+        for _ in range(600):
+            if "running on" in self.log().lower():
+                return
+            assert self.process.poll() is None, self.log()
+            time.sleep(0.1)
+        raise AssertionError(self.log())
+
+    def log(self) -> str:
+        return self.log_file.read_text("utf-8")
+
+    def end(self) -> None:
+        self.process.send_signal(signal.SIGTERM)
+        self.process.wait(timeout=60)
+
+
+@pytest.fixture
+def started(tmp_path: Path, root: Path) -> Iterator[Callable[..., Running]]:
+    """Starts the service: `started(ADMIN_TOKEN=...)`; `{port}` stands for its port."""
+    running: list[Running] = []
+
+    def start(**env: str) -> Running:
+        running.append(Running(root, tmp_path, env))
+        return running[-1]
+
+    yield start
+    for one in running:
+        one.end()

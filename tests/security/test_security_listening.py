@@ -4,13 +4,9 @@ from __future__ import annotations
 
 import hashlib
 import json
-import os
-import signal
 import socket
 import ssl
-import subprocess
-import sys
-from collections.abc import Callable, Iterator
+from collections.abc import Callable
 from datetime import UTC, datetime, timedelta
 from ipaddress import ip_address
 from pathlib import Path
@@ -140,44 +136,13 @@ def certificate(folder: Path) -> tuple[Path, Path]:
     return chain, private
 
 
-@pytest.fixture
-def started(tmp_path: Path, root: Path) -> Iterator[Callable[..., int]]:
-    """Starts the service from the command line; gives its port."""
-    running: list[subprocess.Popen[str]] = []
-
-    def start(**given: str) -> int:
-        with socket.socket() as taken:
-            taken.bind(("127.0.0.1", 0))
-            port: int = taken.getsockname()[1]
-        env = {f"FHIRGALLOP_{name}": value.replace("{port}", str(port)) for name, value in given.items()}
-        words = ["--port", str(port), "--maps", str(root / "examples/informatician"),
-                 "--database", f"sqlite:///{tmp_path / 'x.sqlite3'}"]  # fmt: skip
-        process = subprocess.Popen(
-            [sys.executable, "-m", "fhirgallop", "serve", *words],
-            stdout=subprocess.DEVNULL, stderr=subprocess.PIPE, text=True, env={**os.environ, **env},
-        )  # fmt: skip
-        running.append(process)
-        assert process.stderr
-        log = ""
-        while "running on" not in log.lower():
-            line = process.stderr.readline()
-            assert line, log
-            log += line
-        return port
-
-    yield start
-    for process in running:
-        process.send_signal(signal.SIGTERM)
-        process.communicate(timeout=30)
-
-
-def test_tls_of_its_own(started: Callable[..., int], tmp_path: Path) -> None:
+def test_tls_of_its_own(started: Callable[..., Any], tmp_path: Path) -> None:
     """All addresses, authorisation and TLS: version 1.2 and 1.3 are spoken, 1.1 and plain http are not."""
     chain, private = certificate(tmp_path)
-    port = started(
+    port: int = started(
         HOST="0.0.0.0", ADMIN_TOKEN=ADMIN, ADDRESS="https://localhost:{port}",
         CERTIFICATE=str(chain), CERTIFICATE_KEY=str(private),
-    )  # fmt: skip
+    ).port  # fmt: skip
     for version in (ssl.TLSVersion.TLSv1_2, ssl.TLSVersion.TLSv1_3):
         trusted = ssl.create_default_context(cafile=chain)
         trusted.minimum_version = trusted.maximum_version = version
@@ -211,7 +176,7 @@ def first_byte(port: int, sent: bytes) -> bytes:
         return connection.recv(1)
 
 
-def test_behind_a_proxy_only_the_proxy_is_believed(started: Callable[..., int]) -> None:
+def test_behind_a_proxy_only_the_proxy_is_believed(started: Callable[..., Any]) -> None:
     """The address that a proxy names is the one that is slowed down; a stranger's word counts nothing."""
     given = {"ADMIN_TOKEN": ADMIN, "ADDRESS": "http://localhost:{port}", "BEHIND_PROXY": "true"}
 
@@ -220,8 +185,8 @@ def test_behind_a_proxy_only_the_proxy_is_believed(started: Callable[..., int]) 
         where = f"http://127.0.0.1:{port}/cds-feedback"
         return httpx.get(where, headers=headers, trust_env=False).status_code
 
-    port = started(**given)
+    port = started(**given).port
     assert [guess(port, "203.0.113.7") for _ in range(11)] == [401] * 10 + [429]
     assert guess(port, "203.0.113.8", TOKEN) == 200
-    other = started(**given, PROXIES='["10.0.0.7"]')
+    other = started(**given, PROXIES='["10.0.0.7"]').port
     assert [guess(other, f"203.0.113.{n}") for n in range(11)] == [401] * 10 + [429]
