@@ -47,7 +47,9 @@ class Source(NamedTuple):
 
 def read(resource: object) -> Source:
     """Reads at full speed; decimals are floats. Never raises for what the resource holds."""
-    if isinstance(resource, (bytes, bytearray, memoryview)):
+    if type(resource) is bytes:
+        text = resource
+    elif isinstance(resource, (bytes, bytearray, memoryview)):
         text = bytes(resource)
     elif isinstance(resource, (dict, Mapping)):
         return Source(resource, None, True)
@@ -66,8 +68,11 @@ def read(resource: object) -> Source:
         value = orjson.loads(text)
     except ValueError:
         return exact(text)
-    proved, same = _nothing_lost(text, value)
-    return Source(value, text, proved, same)
+    try:
+        again = orjson.dumps(value)
+    except TypeError:  # nested deeper than it writes
+        return Source(value, text, False)
+    return Source(value, text, True, True) if again == text else Source(value, text, _kept_all(text, again))
 
 
 def exact(text: bytes) -> Source:
@@ -184,20 +189,14 @@ def locate(text: bytes, paths: Iterable[Path]) -> dict[Path, tuple[int, int]]:
     return {path: places[offset] for path, offset in found.items()}
 
 
-def _nothing_lost(text: bytes, value: Any) -> tuple[bool, bool]:
-    r"""Whether it is proved that no key was lost in reading, and whether the text is the value written again.
+def _kept_all(text: bytes, again: bytes) -> bool:
+    r"""Whether it is proved that no key was lost in reading a text, given the value written again.
 
-    A text that equals its value written again has lost nothing. Else: a lost key takes at least two quotation
-    marks with it, so as many marks in the text as in the value written again means that none is lost;
-    `\u0022` could hide a mark and ends the proof.
+    A text that equals it has lost nothing. Else: a lost key takes at least two quotation marks with it, so as
+    many marks in the text as in the value written again means that none is lost; `\u0022` could hide a mark
+    and ends the proof.
     """
-    try:
-        again = orjson.dumps(value)
-    except TypeError:  # nested deeper than it writes
-        return False, False
-    if again == text:
-        return True, True
-    return b"\\u" not in text and text.count(b'"') == again.count(b'"'), False
+    return b"\\u" not in text and text.count(b'"') == again.count(b'"')
 
 
 def _unreadable(rule: str, said: str) -> Source:

@@ -46,8 +46,9 @@ def validate(
         if settled is not None:
             return ordered(settled) if settled else settled
     read = source.read(resource)
-    if read.text is not None and read.proved and not profiles:
-        settled = fast.settle(read.value, known, read.text, same=read.same)
+    value, text, proved, same, _ = read
+    if proved and text is not None and not profiles:
+        settled = fast.settle(value, known, text, same=same)
         if settled is not None:
             return ordered(settled) if settled else settled
     return thorough(read, known, profiles)
