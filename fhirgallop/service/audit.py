@@ -21,9 +21,9 @@ from fhirgallop.codes import fhirjson
 from fhirgallop.outcome import Issue
 from fhirgallop.service.audit_event import Action, Deed, Ending, Who, audit_event
 from fhirgallop.service.auth.caller import Caller
+from fhirgallop.service.logging import place
 from fhirgallop.storage import audit as storage
 from fhirgallop.storage.audit import AuditRow, AuditTrail
-from fhirgallop.storage.submissions import StorageError
 
 log: Final = logging.getLogger("fhirgallop.audit")
 
@@ -143,12 +143,13 @@ class Auditor:
             wanted = _touches(request)
         if not wanted:
             return True
-        rows = self.rows(request, Ending(status, tuple(getattr(state, "issues", ()))))
         try:
+            rows = self.rows(request, Ending(status, tuple(getattr(state, "issues", ()))))
             await run_in_threadpool(self._trail.add, rows)
-        except StorageError as error:
+        except Exception as error:  # noqa: BLE001 - whatever breaks here: no answer without its event
             self.failures += 1
-            log.error("an audit event could not be kept: %s", error)  # noqa: TRY400 - no traceback
+            said = {"error": type(error).__name__, "place": place(error)}
+            log.error("an audit event could not be kept", extra=said)  # noqa: TRY400 - no traceback
             return False
         return True
 
@@ -167,7 +168,8 @@ def _who(request: Request) -> Who:
     token = quote(caller.token_id[:_LONGEST], safe=_URI)
     if caller.kind == "system" and not token:
         token = _end(request.headers.get("authorization", "").partition(" ")[2])
-    return Who(caller.name, caller.kind in ("person", "administrator"), token, address)
+    name = caller.name.encode("utf-8", "replace").decode()  # a token may hold half a character
+    return Who(name, caller.kind in ("person", "administrator"), token, address)
 
 
 def _end(token: str) -> str:

@@ -140,6 +140,16 @@ def test_without_a_trail_there_is_no_answer(application: FastAPI, client: Any, e
     assert "fhirgallop_audit_failures 0" not in client.get("/metrics").text
 
 
+def test_what_breaks_in_the_trail_itself_is_no_answer_either(
+    application: FastAPI, client: Any, hook_call: Any, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    monkeypatch.setattr("fhirgallop.service.audit.audit_event", lambda *_, **__: 1 / 0)
+    answer = client.post("/cds-services/exam-review-patient-view", json=hook_call())
+    assert answer.status_code == 503
+    assert answer.json()["issue"][0]["details"]["coding"][0]["code"] == "audit-failed"
+    assert client.post("/cds-services/exam-review-patient-view", json={}).status_code == 400
+
+
 def test_events_are_found_by_patient_and_time(application: FastAPI, client: Any, example: Any) -> None:
     client.post(WHERE, json=example())
     client.post(WHERE, json={"nonsense": 1})
