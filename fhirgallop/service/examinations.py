@@ -23,7 +23,7 @@ from fhirgallop.service.audit_event import Action
 from fhirgallop.service.fhir.coded import coded
 from fhirgallop.storage import outbox, resources
 from fhirgallop.storage.keys import number_key, patient_key
-from fhirgallop.storage.submissions import Also, Submission, Submissions
+from fhirgallop.storage.submissions import Also, Seen, Submission, Submissions
 
 _TRIES: Final = 5
 _SEEN_BEFORE: Final = Issue(
@@ -129,19 +129,22 @@ class Examinations:
         if exam is None or has_errors(understood.issues):
             return self._beside(0, Coded(understood, None, patient, at), along)
         number = number_key(exam.identifier_system or wish.template.name, exam.identifier)
-        if exam.status != "entered-in-error" and self._stands_elsewhere(number, patient):
-            understood = replace(understood, issues=tuple(ordered([*understood.issues, _OTHER_PATIENT])))
         identity, meant = Identities(exam).of("examination"), _fingerprint(exam)
         for attempt in range(_TRIES):
-            before = self._store.latest(identity, wish.edition, snomed=wish.snomed)
+            seen = self._store.seen(identity, number)
+            result = understood
+            if exam.status != "entered-in-error" and self._stands_elsewhere(seen, patient):
+                result = _with(result, _OTHER_PATIENT)
+            hashes = [one.record_hash for one in seen if _same(one, identity, wish)]
+            before = self._store.latest(identity, wish.edition, snomed=wish.snomed) if hashes else None
             if before and before.record_hash == meant:
-                again = Coded(understood, before.bundle, patient, at, identity, before.version, repeated=True)
+                again = Coded(result, before.bundle, patient, at, identity, before.version, repeated=True)
                 return self._beside(before.id, again, along)
-            result = self._finished(understood, record.form, wish, now, before)
+            result = self._finished(result, record.form, wish, now, before)
             if (bundle := result.bundle) is None:
                 return self._beside(0, Coded(result, None, patient, at, identity), along)
-            if before and self._store.has(identity, wish.edition, meant, snomed=wish.snomed):
-                result = replace(result, issues=tuple(ordered([*result.issues, _SEEN_BEFORE])))
+            if meant in hashes:
+                result = _with(result, _SEEN_BEFORE)
             written = coded(bundle, wish.edition)
             row = Submission(
                 identity, wish.edition, wish.snomed, before.version + 1 if before else 1,
@@ -182,9 +185,18 @@ class Examinations:
 
         return (send,)
 
-    def _stands_elsewhere(self, number: str, patient: str) -> bool:
-        """Whether an examination of this number stands, not taken back, under another patient."""
-        return any(map(_stands, self._store.numbered(number, other_than=patient)))
+    def _stands_elsewhere(self, seen: Sequence[Seen], patient: str) -> bool:
+        """Whether an examination of the same number stands, not taken back, under another patient."""
+        newest = {one.exam: one.id for one in seen if one.patient != patient}
+        return any(_stands(self._store.bundle(row)) for row in newest.values())
+
+
+def _same(one: Seen, identity: str, wish: Wish) -> bool:
+    return (one.exam, one.edition, one.snomed) == (identity, wish.edition, wish.snomed)
+
+
+def _with(result: Result, issue: Issue) -> Result:
+    return replace(result, issues=tuple(ordered([*result.issues, issue])))
 
 
 def _resources(versions: Sequence[resources.NewVersion], at: int, *, fresh: bool) -> Also:
@@ -194,7 +206,9 @@ def _resources(versions: Sequence[resources.NewVersion], at: int, *, fresh: bool
     return keep
 
 
-def _stands(bundle: bytes) -> bool:
+def _stands(bundle: bytes | None) -> bool:
+    if bundle is None:  # deleted since
+        return False
     entries = fhirjson.read(bundle)[0]["entry"]
     statuses = {entry["resource"].get("status", "entered-in-error") for entry in entries}
     return statuses != {"entered-in-error"}

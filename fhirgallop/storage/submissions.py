@@ -6,7 +6,7 @@ from collections.abc import Callable, Iterator
 from contextlib import contextmanager
 from dataclasses import dataclass, field, fields
 
-from sqlalchemy import Connection, Engine, insert, select
+from sqlalchemy import Connection, Engine, bindparam, insert, or_, select
 from sqlalchemy.exc import IntegrityError, SQLAlchemyError
 
 from fhirgallop.storage.tables import submissions
@@ -49,12 +49,30 @@ class Submission:
     id: int = field(default=0, compare=False)
 
 
+@dataclass(frozen=True, slots=True)
+class Seen:
+    """A version that was accepted, without its Bundle; see Submission."""
+
+    id: int
+    exam: str
+    patient: str
+    edition: str
+    snomed: bool
+    version: int
+    record_hash: str
+
+
 # What is to be kept together with a submission: is given the connection of its transaction and the row's id.
 Also = Callable[[Connection, int], None]
 
-_MOST_OTHERS = 100
 _NAMES = tuple(one.name for one in fields(Submission))
 _COLUMNS = [submissions.c[name] for name in _NAMES]
+_SEEN_NAMES = tuple(one.name for one in fields(Seen))
+# made once: every examination asks and adds, and to make a statement costs as much as to run it
+_SEEN = select(*(submissions.c[name] for name in _SEEN_NAMES)).where(
+    or_(submissions.c.exam == bindparam("same_exam"), submissions.c.number == bindparam("same_number"))
+)
+_ADD = insert(submissions)
 
 
 class Submissions:
@@ -75,16 +93,28 @@ class Submissions:
             row = connection.execute(query).one_or_none()
         return Submission(*row) if row else None
 
-    def has(self, exam: str, edition: str, record_hash: str, *, snomed: bool) -> bool:
-        """Whether some version of an examination, in that way of writing it, had this content.
+    def seen(self, exam: str, number: str) -> list[Seen]:
+        """Every version of an examination, in every way of writing it, and of others with the same number.
+
+        In the order in which they came.
 
         Raises:
             StorageError: the database failed.
         """
-        same = (submissions.c.exam == exam, submissions.c.edition == edition, submissions.c.snomed == snomed)
-        query = select(submissions.c.id).where(*same, submissions.c.record_hash == record_hash).limit(1)
         with told(), self._engine.connect() as connection:
-            return connection.execute(query).first() is not None
+            rows = connection.execute(_SEEN, {"same_exam": exam, "same_number": number}).all()
+        return sorted((Seen(*row) for row in rows), key=lambda one: one.id)
+
+    def bundle(self, row: int) -> bytes | None:
+        """The Bundle in a row.
+
+        Raises:
+            StorageError: the database failed.
+        """
+        query = select(submissions.c.bundle).where(submissions.c.id == row)
+        with told(), self._engine.connect() as connection:
+            found: bytes | None = connection.scalar(query)
+        return found
 
     def add(self, submission: Submission, *also: Also) -> bool:
         """Stores one version, and what is to be kept with it, in one transaction.
@@ -104,7 +134,7 @@ class Submissions:
         values = {name: getattr(submission, name) for name in _NAMES if name != "id"}
         try:
             with told(), self._engine.begin() as connection:
-                row = connection.execute(insert(submissions).values(**values)).inserted_primary_key
+                row = connection.execute(_ADD, values).inserted_primary_key
                 for keep in also:
                     keep(connection, row[0] if row else 0)
         except IntegrityError:
@@ -127,26 +157,6 @@ class Submissions:
         except IntegrityError:
             return False
         return True
-
-    def numbered(self, number: str, *, other_than: str) -> list[bytes]:
-        """The newest Bundle of each examination that has the same number under another patient.
-
-        Raises:
-            StorageError: the database failed.
-        """
-        table = submissions
-        query = (
-            select(table.c.exam, table.c.bundle)
-            .where(table.c.number == number, table.c.patient != other_than)
-            .order_by(table.c.id.desc())
-            .limit(_MOST_OTHERS)
-        )
-        with told(), self._engine.connect() as connection:
-            rows = connection.execute(query).all()
-        newest: dict[str, bytes] = {}
-        for row in rows:
-            newest.setdefault(row.exam, row.bundle)
-        return list(newest.values())
 
 
 @contextmanager

@@ -31,9 +31,9 @@ from fhirgallop.storage.tables import audit, batch_results, batches, submissions
 WHERE = "/exams?map=fernwood-heart-form"
 LATER = {"Prefer": "respond-async"}
 NDJSON = {"Content-Type": "application/x-ndjson"}
-# how often the service is killed, on each database, and how many examinations there are; full size: 20, 400
+# how often the service is killed, on each database, and how many examinations there are; full size: 20, 200
 KILLS = int(os.environ.get("GALLOP_KILLS", "2"))
-EXAMS = int(os.environ.get("GALLOP_EXAMS", "40"))
+EXAMS = int(os.environ.get("GALLOP_EXAMS", "16"))
 
 
 @pytest.fixture

@@ -83,7 +83,7 @@ def test_a_failing_database_is_told_and_the_rest_of_a_batch_does_not_wait_for_it
         def latest(self, *_: Any, **__: Any) -> None:
             return None
 
-        def numbered(self, *_: Any, **__: Any) -> list[bytes]:
+        def seen(self, *_: Any) -> list[Any]:
             return []
 
         def add(self, *_: Any) -> bool:

@@ -28,8 +28,9 @@ from fhirgallop.storage.tables import idempotent_answers, submissions
 WHERE = "/exams?map=fernwood-heart-form"
 KEY = {"Idempotency-Key": '"8e03978e-40d5-43dd-bc93-6894a57f9324"'}
 AGAIN = "fhirgallop-repeated"
-# how often the service is killed, on each database; the full size is 20
+# how often the service is killed, on each database, and how many examinations there are; full size: 20, 200
 KILLS = int(os.environ.get("GALLOP_KILLS", "2"))
+EXAMS = int(os.environ.get("GALLOP_EXAMS", "16"))
 
 
 def rule(answer: Any) -> str:
@@ -199,7 +200,7 @@ def test_sudden_death_leaves_both_or_neither(
     address = {} if kind == "sqlite" else {"DATABASE": request.getfixturevalue("postgres")}
     service = serving(**address)
     rng = random.Random(20261201)
-    records = [example(exam={"number": f"N-{number}"}) for number in range(40)]
+    records = [example(exam={"number": f"N-{number}"}) for number in range(EXAMS)]
     answers: dict[int, bytes] = {}
 
     def send(number: int) -> None:
@@ -210,9 +211,9 @@ def test_sudden_death_leaves_both_or_neither(
             assert answers.setdefault(number, answer.content) == answer.content
 
     for _ in range(KILLS):
-        send(rng.randrange(40))  # a process that has just started reads the base definitions first
+        send(rng.randrange(EXAMS))  # a process that has just started reads the base definitions first
         with ThreadPoolExecutor(4) as pool:
-            sent = pool.map(send, rng.sample(range(40), 24))
+            sent = pool.map(send, rng.sample(range(EXAMS), EXAMS // 2))
             time.sleep(rng.uniform(0.02, 0.25))
             service.kill()
             list(sent)
@@ -221,10 +222,10 @@ def test_sudden_death_leaves_both_or_neither(
         assert kept == len(versions), "an examination and its answer are kept together"
         service.start()
     assert kept > 0
-    for number in range(40):
+    for number in range(EXAMS):
         send(number)
-    assert len(answers) == 40
-    assert _kept(service.database) == ([1] * 40, 40)
+    assert len(answers) == EXAMS
+    assert _kept(service.database) == ([1] * EXAMS, EXAMS)
 
 
 def _kept(database: str) -> tuple[list[int], int]:

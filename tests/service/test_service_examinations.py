@@ -16,7 +16,7 @@ from fhirgallop.codes import fhirjson
 from fhirgallop.intake.record import LocalRecord
 from fhirgallop.service.examinations import BusyError, Examinations, Wish
 from fhirgallop.storage.engine import open_database
-from fhirgallop.storage.submissions import Also, Submission, Submissions
+from fhirgallop.storage.submissions import Also, Seen, Submission, Submissions
 from fhirgallop.storage.tables import submissions
 
 
@@ -85,7 +85,7 @@ def test_endless_changes_by_others_are_given_up(example: Any, root: Path, tmp_pa
         def latest(self, exam: str, edition: str, *, snomed: bool) -> Submission | None:
             return None
 
-        def numbered(self, number: str, *, other_than: str) -> list[bytes]:
+        def seen(self, exam: str, number: str) -> list[Seen]:
             return []
 
         def add(self, submission: Submission, *also: Also) -> bool:
