@@ -78,11 +78,12 @@ def _transaction(
             steps.append(located(request, step_of(number, entry, base)))
     _apart(steps)
     names = {step.full_url: f"{step.type}/{step.kept_as}" for step in steps if step.full_url and step.kept_as}
+    reads = [step for step in steps if step.method == "GET"]
+    for step in reads:  # one that fails takes the writes along, so it is tried before them
+        with placed(step.number):
+            _got(request, base, step)
     told = _written(request, wish, base, steps, names.get)
-    for step in steps:
-        if step.method == "GET":
-            with placed(step.number):
-                told[step.number] = _got(request, base, step)
+    told |= {step.number: _got(request, base, step) for step in reads}
     return [told[step.number] for step in steps]
 
 
@@ -180,7 +181,8 @@ def _told(wish: Wish, base: Base, step: Step, saved: Saved) -> dict[str, Any]:
         "etag": etag(saved.version),
         "lastModified": dates.instant(saved.updated),
     }
-    made: dict[str, Any] = {"fullUrl": base.of(step.type, saved.kept_as)}
+    # without fullUrl: two entries of a batch may be answered with the same resource (bdl-7)
+    made: dict[str, Any] = {}
     if wish.back == "representation":
         text = body.given(step.type, saved.kept_as, saved.version, saved.updated, saved.body)
         made["resource"] = msgspec.Raw(text)
@@ -221,7 +223,7 @@ def _got(request: Request, base: Base, step: Step) -> dict[str, Any]:
         "etag": etag(kept.version),
         "lastModified": dates.instant(kept.updated),
     }
-    return {"fullUrl": base.of(step.type, step.fhir_id), "resource": msgspec.Raw(text), "response": response}
+    return {"resource": msgspec.Raw(text), "response": response}
 
 
 def _status(code: int) -> str:
