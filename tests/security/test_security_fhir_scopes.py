@@ -222,3 +222,27 @@ def test_an_entry_says_no_other_type_than_it_is(by: Any, bundle: Json) -> None:
         by("system/Observation.cruds", "POST", "", sent)
         assert not by("system/*.s", "GET", "/DiagnosticReport").json().get("entry")
         assert not by("system/*.s", "GET", "/Observation").json().get("entry")
+
+
+def test_sm_3_every_listed_scope_works(fhir_service: TestClient, by: Any, kept: list[Json]) -> None:
+    """Each scope of the SMART configuration opens what its letters say, for a resource that is there."""
+    told = fhir_service.get(f"{BASE}/.well-known/smart-configuration").json()
+    reports = by("system/*.s", "GET", "/DiagnosticReport").json()["entry"]
+    traces = by("system/*.s", "GET", "/Provenance").json()["entry"]
+    ids = {e["resource"]["resourceType"]: e["resource"]["id"] for e in (*reports, *traces)}
+    asked = 0
+    for scope in told["scopes_supported"]:
+        type_, does = scope.removeprefix("system/").partition("?")[0].split(".")
+        letters = {"read": "rs"}.get(does, does)
+        category = scope.rpartition("|")[2] if "?" in scope else "exam"
+        id_ = ids.get(type_) or of_category(kept, category)["id"]
+        interactions = {"r": ("GET", f"/{type_}/{id_}", None), "s": ("GET", f"/{type_}", None),
+                        "c": ("POST", f"/{type_}", {"resourceType": type_}),
+                        "u": ("PUT", f"/{type_}/{id_}", {"resourceType": type_, "id": id_})}  # fmt: skip
+        for letter in letters:
+            method, path, body = interactions[letter]
+            answer = by(scope, method, path, body)
+            # what is sent here is refused for what it is, not for the scope
+            assert answer.status_code in ((200,) if body is None else (400, 422)), (scope, letter)
+            asked += 1
+    assert asked > 20
