@@ -148,3 +148,31 @@ def test_the_trial_at_the_start_is_of_the_whole_way_and_keeps_nothing(
     assert {part.state for part in readiness.parts()} == {"well"}
     with readiness.engine.connect() as connection:
         assert connection.scalar(text("SELECT count(*) FROM submissions")) == 0
+
+
+def test_examinations_and_rules_are_counted_by_what_became_of_them(
+    hooked: Any, example: Any, hook_call: Any
+) -> None:
+    hooked.post(WHERE, json=example())
+    hooked.post(WHERE, json=example())
+    hooked.post(WHERE, json=example(vitals={"hr": "seventy-eight"}))
+    hooked.post(WHERE, json=[example(exam={"number": "E-2"}), {"nonsense": 1}])
+    answer = hooked.post("/cds-services/exam-review-patient-view", json=hook_call()).json()
+    (card,) = answer["cards"][:1]
+    reason = card["overrideReasons"][0]
+    report = {
+        "card": card["uuid"], "outcome": "overridden", "outcomeTimestamp": "2026-03-14T10:00:00Z",
+        "overrideReason": {"reason": {"code": reason["code"], "system": reason["system"]}},
+    }  # fmt: skip
+    for _ in range(2):
+        hooked.post("/cds-services/exam-review-patient-view/feedback", json={"feedback": [report]})
+    found = figures(hooked)
+    made = {
+        labels[2]: value for labels, value in found.items() if labels[0] == "fhirgallop_examinations_total"
+    }
+    assert made == {"coded": 2, "repeated": 1, "refused": 2}
+    fates = {labels[1:] for labels in found if labels[0] == "fhirgallop_rules_total"}
+    assert ("shown", "s4.in-atrial-fibrillation") in fates
+    answers = [value for labels, value in found.items() if labels[0] == "fhirgallop_card_answers_total"]
+    assert answers
+    assert set(answers) == {1.0}, "a report that is sent again counts once"
