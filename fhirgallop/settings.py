@@ -50,6 +50,11 @@ class Settings(BaseSettings):
         repr=False,
         description="Where all is kept: a file (sqlite:///...) or PostgreSQL (postgresql://user@host/name).",
     )
+    durable: bool = Field(
+        default=True,
+        description="What was accepted survives a power cut; false is quicker, and may lose the last moments "
+        "then. The death of the process loses nothing either way.",
+    )
     edition: Literal["R4", "R4B", "R5"] = Field("R4", description="FHIR edition when a request names none.")
     snomed: bool = Field(
         default=True, description="Write SNOMED CT codings; needs the licence that applies where you are."

@@ -22,7 +22,7 @@ from fhirgallop.service import answers
 from fhirgallop.service.auth.opening import open_gate, public_keys
 from fhirgallop.service.batch_desk import BatchDesk
 from fhirgallop.service.batch_work import BatchWork, batches_coded
-from fhirgallop.service.delivering import delivering, readings
+from fhirgallop.service.delivering import delivering, delivery_trail, readings
 from fhirgallop.service.exam_desk import ExamDesk
 from fhirgallop.service.examinations import Examinations
 from fhirgallop.service.fetching import open_fetcher
@@ -73,8 +73,7 @@ def create_app(settings: Settings, clock: Callable[[], datetime] = now) -> FastA
     """
     shelf = load_shelf(settings.maps)  # before the database: what cannot start leaves nothing behind
     fetcher = open_fetcher(settings)
-    engine = open_database(settings.database)
-    dispatch = open_dispatch(settings, engine, clock, threads=settings.delivery_workers)
+    engine = open_database(settings.database, durable=settings.durable)
     keep_versions(shelf, MapStore(engine), at=instant(clock()))
 
     @asynccontextmanager
@@ -107,7 +106,6 @@ def create_app(settings: Settings, clock: Callable[[], datetime] = now) -> FastA
     keys = KeyDesk(Answers(engine), clock, settings.idempotency_hours)
     app.state.clock = clock
     app.state.fetcher = fetcher
-    app.state.dispatch = dispatch
     for router in (
         exams.router,
         batches.router,
@@ -123,6 +121,11 @@ def create_app(settings: Settings, clock: Callable[[], datetime] = now) -> FastA
         app.include_router(router)
     open_fhir(app, engine, app.state.shelf, clock)
     watch_over(app, engine, settings, clock)
+    dispatch = open_dispatch(
+        settings, engine, clock, threads=settings.delivery_workers,
+        trail=delivery_trail(app.state.audit, settings),
+    )  # fmt: skip
+    app.state.dispatch = dispatch
     if dispatch:
         app.state.metrics.watch(partial(readings, dispatch))
     manner = Manner(policy, settings.cards_critical, settings.pages.rstrip("/"), settings.cds_system_actions)

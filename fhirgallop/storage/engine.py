@@ -6,6 +6,7 @@ import sqlite3
 import time
 from collections.abc import Iterator
 from contextlib import contextmanager
+from functools import partial
 from typing import Any, Final
 
 from sqlalchemy import URL, Connection, Engine, create_engine, event, insert, inspect, make_url, select
@@ -22,16 +23,18 @@ _TABLES_BUSY_SECONDS: Final = 3600
 _TABLES_LOCK: Final = 7_401_962_538
 
 
-def open_database(address: str) -> Engine:
+def open_database(address: str, *, durable: bool = True) -> Engine:
     """The engine of the database at `address`, with its tables in place.
 
     Args:
         address: as SQLAlchemy writes it, `sqlite:///file` or `postgresql://user@host/name`.
+        durable: whether what is kept survives a power cut the moment it is said to be kept; else the last
+            moments may be lost then (never by the death of a process).
 
     Raises:
         SettingsError: the database cannot be opened, or its tables have another form.
     """
-    engine = connect(address)
+    engine = connect(address, durable=durable)
     try:
         found = version_of(engine)
         if found is None:
@@ -45,8 +48,8 @@ def open_database(address: str) -> Engine:
     return engine
 
 
-def connect(address: str) -> Engine:
-    """The engine of the database at `address`, whatever is in it.
+def connect(address: str, *, durable: bool = True) -> Engine:
+    """The engine of the database at `address`, whatever is in it; arguments as in `open_database`.
 
     Raises:
         SettingsError: that is no address of a database which can be used here.
@@ -57,12 +60,12 @@ def connect(address: str) -> Engine:
             if url.database in (None, "", ":memory:"):
                 raise SettingsError("database names no file; what is kept in memory is gone with the program")
             engine = create_engine(url, connect_args={"timeout": _BUSY_SECONDS}, hide_parameters=True)
-            event.listen(engine, "connect", _durable_sqlite)
+            event.listen(engine, "connect", partial(_set_up_sqlite, "FULL" if durable else "NORMAL"))
             return engine
         # each connection is tried before it is used: after a restart of the server the next request goes well
         return create_engine(
             url, pool_pre_ping=True, pool_size=10, max_overflow=30, pool_timeout=_BUSY_SECONDS,
-            connect_args=_reachable(url), hide_parameters=True,
+            connect_args=_manners(url, durable), hide_parameters=True,
         )  # fmt: skip
 
 
@@ -142,20 +145,22 @@ def _with_driver(url: URL) -> URL:
     return url.set(drivername="postgresql+psycopg") if url.drivername == "postgresql" else url
 
 
-def _reachable(url: URL) -> dict[str, Any]:
+def _manners(url: URL, durable: bool) -> dict[str, Any]:
     """Connections to PostgreSQL are given up when the other side is gone, also in the middle of an answer."""
     if url.get_driver_name() != "psycopg":
         return {}
+    commit = {} if durable else {"options": "-c synchronous_commit=off"}
     return {
+        **commit,
         "connect_timeout": _BUSY_SECONDS, "application_name": "fhirgallop", "keepalives_idle": 30,
         "keepalives_interval": 10, "keepalives_count": 3,
     }  # fmt: skip
 
 
-def _durable_sqlite(connection: Any, _entry: ConnectionPoolEntry) -> None:
+def _set_up_sqlite(synchronous: str, connection: Any, _entry: ConnectionPoolEntry) -> None:
     cursor = connection.cursor()
     _write_ahead(cursor)
-    cursor.execute("PRAGMA synchronous=NORMAL")
+    cursor.execute(f"PRAGMA synchronous={synchronous}")
     cursor.execute("PRAGMA foreign_keys=ON")
     # what is deleted or replaced is overwritten
     cursor.execute("PRAGMA secure_delete=ON")

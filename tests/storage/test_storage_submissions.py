@@ -155,10 +155,26 @@ def test_a_database_that_cannot_be_opened_is_told(tmp_path: Path) -> None:
         open_database("nosuchdatabase://host/name")
 
 
-def test_the_journal_survives_a_crash_of_the_program(tmp_path: Path) -> None:
-    engine = open_database(f"sqlite:///{tmp_path / 'store.sqlite3'}")
+@pytest.mark.parametrize("durable", [True, False])
+def test_the_journal_survives_the_program_and_if_wished_the_power(tmp_path: Path, durable: bool) -> None:
+    engine = open_database(f"sqlite:///{tmp_path / 'store.sqlite3'}", durable=durable)
+    # 2 is FULL, 1 is NORMAL (sqlite.org/pragma.html#pragma_synchronous)
+    pragmas = {
+        "journal_mode": "wal",
+        "synchronous": 2 if durable else 1,
+        "foreign_keys": 1,
+        "secure_delete": 1,
+    }
     with engine.connect() as connection:
-        pragmas = {"journal_mode": "wal", "foreign_keys": 1, "secure_delete": 1}
         for name, value in pragmas.items():
             assert connection.exec_driver_sql(f"PRAGMA {name}").scalar() == value
+    engine.dispose()
+
+
+@pytest.mark.parametrize("durable", [True, False])
+def test_postgres_waits_for_the_disk_if_wished(postgres: str, durable: bool) -> None:
+    engine = open_database(postgres, durable=durable)
+    with engine.connect() as connection:
+        found = connection.exec_driver_sql("SHOW synchronous_commit").scalar()
+    assert found == ("on" if durable else "off")
     engine.dispose()
