@@ -53,9 +53,19 @@ def finds(keys: Keys, signer: Any) -> bool:
 
 @pytest.mark.parametrize(
     ("cache_control", "seconds"),
-    [("max-age=600", 600), ("public, max-age=60", 60), ("max-age=999999999", 86_400), (None, 300),
-     ("public", 300), ("max-age=600, no-store", 0), ("no-cache", 0), ("max-age=0", 0), ("max-age=x", 300), ("MAX-AGE=60", 60)],
-)  # fmt: skip
+    [
+        ("max-age=600", 600),
+        ("public, max-age=60", 60),
+        ("max-age=999999999", 86_400),
+        (None, 300),
+        ("public", 300),
+        ("max-age=600, no-store", 0),
+        ("no-cache", 0),
+        ("max-age=0", 0),
+        ("max-age=x", 300),
+        ("MAX-AGE=60", 60),
+    ],
+)
 def test_ch_70_keys_are_kept_as_long_as_the_place_says(ehr: Any, cache_control: str, seconds: int) -> None:
     place = Publisher([ehr], cache_control)
     keys = place.keys()
@@ -124,9 +134,21 @@ def test_keys_that_are_there_outlast_a_failure_within_their_time(ehr: Any, new_s
 
 @pytest.mark.parametrize(
     "changed",
-    [{"kid": "other"}, {"kty": "RSA"}, {"crv": "P-256"}, {"use": "enc"}, {"alg": "ES512"},
-     {"key_ops": ["sign"]}, {"key_ops": "verify"}, {"x": "AA"}, {"x": None}, {"y": 7}, {"d": "AA"}, {"kid": None}],
-)  # fmt: skip
+    [
+        {"kid": "other"},
+        {"kty": "RSA"},
+        {"crv": "P-256"},
+        {"use": "enc"},
+        {"alg": "ES512"},
+        {"key_ops": ["sign"]},
+        {"key_ops": "verify"},
+        {"x": "AA"},
+        {"x": None},
+        {"y": 7},
+        {"d": "AA"},
+        {"kid": None},
+    ],
+)
 def test_keys_that_are_not_for_this(ehr: Any, changed: dict[str, Any]) -> None:
     key = {name: value for name, value in {**ehr.public, **changed}.items() if value is not None}
     assert not finds(Publisher([], extra=[key]).keys(), ehr)

@@ -99,7 +99,7 @@ class SignIn:
             "scope": "openid",
             "state": _derived(secret, "state"),
             "nonce": _derived(secret, "nonce"),
-            "code_challenge": _base64(hashlib.sha256(_derived(secret, "verifier").encode()).digest()),
+            "code_challenge": challenge_of(_derived(secret, "verifier")),
             "code_challenge_method": "S256",
         }
         where = self._addresses().authorize
@@ -207,6 +207,11 @@ class SignIn:
         if answer.status != 200 or has_errors(issues) or not isinstance(value, dict):
             raise UnreachableError
         return value
+
+
+def challenge_of(verifier: str) -> str:
+    """What is shown of a code verifier beforehand (RFC 7636, section 4.2, S256)."""
+    return _base64(hashlib.sha256(verifier.encode("ascii")).digest())
 
 
 def _values(claims: Mapping[str, Any], claim: str) -> list[str]:
