@@ -128,7 +128,7 @@ class BatchDesk:
         errand = Errand(
             wish.template.name, wish.template.version, wish.edition, wish.snomed, review, kind, caller.name
         )
-        text = f"{total:,} examinations are waiting to be coded; ask at the address in Content-Location."
+        text = f"Waiting to be coded: {total:,}. Ask how far they are at the address in Content-Location."
         headers = {
             "Content-Location": f"{base}/batches/{id_}",
             "Preference-Applied": "respond-async",

@@ -12,6 +12,7 @@ from typing import Final
 from python_multipart.exceptions import FormParserError
 from python_multipart.multipart import MultipartParser
 
+from fhirgallop.intake.detect import BY_CONTENT_TYPE, kind_of
 from fhirgallop.service.answers import refusal
 
 FORM: Final = "multipart/form-data"
@@ -19,6 +20,7 @@ RECORD: Final = "record"
 CHART: Final = "chart"
 _MOST_HEADERS: Final = 8
 _LONGEST_HEADER: Final = 1000
+_UNSAID: Final = ("", "application/octet-stream")
 _NAMES: Final = frozenset({RECORD, CHART})
 
 
@@ -36,8 +38,12 @@ class Part:
 
     @property
     def content_type(self) -> str:
-        """Media type, in lower case; empty where the part names none."""
-        return self.headers.get("content-type", "").partition(";")[0].strip().lower()
+        """Media type, in lower case: as the part says, else by the ending of its file's name, else JSON."""
+        given = self.headers.get("content-type", "").partition(";")[0].strip().lower()
+        if given not in _UNSAID:
+            return given
+        named = kind_of(name=_parsed("content-disposition", self.headers).get_filename("")) or "json"
+        return next(media for media, kind in BY_CONTENT_TYPE.items() if kind == named)
 
 
 def parts(body: bytes, content_type: str) -> dict[str, Part]:

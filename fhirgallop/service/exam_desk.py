@@ -173,7 +173,8 @@ class ExamDesk:
                 rules=self._rules, policy=self._policy, full=opinion == "full",
             )  # fmt: skip
             fates = Counter(f"{line.rule}={line.fate}" for line in decision.log)
-            log.info("review: %s", ", ".join(sorted(fates)) or "nothing raised")
+            if fates:
+                log.info("review: %s", ", ".join(sorted(fates)))
         said["unread"] = coded.result.unread
         said["unknown"] = [{"field": u.field, "value": u.value} for u in coded.result.unknown]
         return said

@@ -79,6 +79,17 @@ def test_every_form_can_be_reviewed_against_a_chart(client: Any, chart: bytes, m
     assert "s4.in-atrial-fibrillation" in json.dumps(review["cards"])
 
 
+def test_the_ending_of_a_file_says_its_form_where_nothing_else_does(
+    client: Any, chart: bytes, message: str, example: Any
+) -> None:
+    """What common clients send for a file whose type they do not know."""
+    for name, text in (("exam.hl7", message.encode()), ("exam.json", json.dumps(example()).encode())):
+        files = {"record": (name, text, "application/octet-stream"), "chart": ("c", chart)}
+        assert client.post(WHERE, files=files).status_code == 200, name
+    files = {"record": ("exam.png", b"\x89PNG", "image/png"), "chart": ("c", chart)}
+    assert client.post(WHERE, files=files).status_code == 415
+
+
 def test_limits_travel_with_the_review(client: Any, example: Any, chart: bytes) -> None:
     """A child's examination: most rules are not meant for it, and that is said."""
     bundle = json.loads(chart)

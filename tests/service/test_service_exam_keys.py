@@ -29,7 +29,7 @@ WHERE = "/exams?map=fernwood-heart-form"
 KEY = {"Idempotency-Key": '"8e03978e-40d5-43dd-bc93-6894a57f9324"'}
 AGAIN = "fhirgallop-repeated"
 # how often the service is killed, on each database, and how many examinations there are; full size: 20, 200
-KILLS = int(os.environ.get("GALLOP_KILLS", "2"))
+KILLS = int(os.environ.get("GALLOP_KILLS", "1"))
 EXAMS = int(os.environ.get("GALLOP_EXAMS", "16"))
 
 

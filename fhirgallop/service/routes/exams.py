@@ -160,7 +160,7 @@ async def _sent(request: Request, settings: Settings) -> tuple[Sent, Keyed | Non
         return Sent(body, kind), keyed(request, kind, body)
     found = enclosed.parts(body, header)
     record, chart = (bytes(found[name].content) for name in (enclosed.RECORD, enclosed.CHART))
-    read_as = requests.known_type(found[enclosed.RECORD].content_type or answers.PLAIN_JSON)
+    read_as = requests.known_type(found[enclosed.RECORD].content_type)
     return Sent(record, read_as, _chart(chart)), keyed(request, read_as, record, chart)
 
 
