@@ -159,12 +159,19 @@ def work(
     """
     from fhirgallop.delivery.dispatch import open_dispatch  # noqa: PLC0415 - heavy; --help stays quick
     from fhirgallop.errors import SettingsError  # noqa: PLC0415
+    from fhirgallop.service.app import now  # noqa: PLC0415
+    from fhirgallop.service.audit import Auditor  # noqa: PLC0415
+    from fhirgallop.service.delivering import delivery_trail  # noqa: PLC0415
     from fhirgallop.service.logging import start_logging  # noqa: PLC0415
+    from fhirgallop.service.operation import new_id  # noqa: PLC0415
+    from fhirgallop.storage.audit import AuditTrail  # noqa: PLC0415
     from fhirgallop.storage.outbox import Outbox  # noqa: PLC0415
 
     with _opened(database) as (engine, chosen):
         start_logging(chosen.log_form, chosen.log_level)
-        dispatch = open_dispatch(chosen, engine, lambda: datetime.now(tz=UTC), threads=threads)
+        auditor = Auditor(AuditTrail(engine), now, new_id)
+        trail = delivery_trail(auditor, chosen)
+        dispatch = open_dispatch(chosen, engine, now, threads=threads, trail=trail)
         if dispatch is None:
             raise SettingsError("FHIRGALLOP_DELIVER_TO: name the record system's FHIR endpoint")
         asked = _asked_to_end()

@@ -40,6 +40,8 @@ class Verdict:
         ends: whether too many tries of this kind make it a matter for a person.
         retry_after: header of that name; empty without.
         outcome: what is kept of the answer, as JSON: status, and of each entry status, location and etag.
+        status: of the answer to the transaction; 0 without one.
+        request: value of its X-Request-Id.
     """
 
     meaning: Meaning
@@ -49,6 +51,8 @@ class Verdict:
     ends: bool = True
     retry_after: str = ""
     outcome: bytes | None = None
+    status: int = 0
+    request: str = ""
 
 
 def no_answer(error: ClientError) -> Verdict:

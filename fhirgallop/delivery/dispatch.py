@@ -18,7 +18,7 @@ from fhirgallop.delivery.destination import Destination, client_for, destination
 from fhirgallop.delivery.keys import SigningKey, read_keys
 from fhirgallop.delivery.patience import Chance, Patience
 from fhirgallop.delivery.post import Post
-from fhirgallop.delivery.worker import Way, Workers
+from fhirgallop.delivery.worker import Trail, Way, Workers, no_trail
 from fhirgallop.settings import Settings
 from fhirgallop.storage.outbox import Outbox
 
@@ -49,6 +49,7 @@ def open_dispatch(
     clock: Callable[[], datetime],
     *,
     threads: int,
+    trail: Trail = no_trail,
     chance: Chance = random.random,
     new_id: Callable[[], str] = lambda: str(uuid.uuid4()),
 ) -> Dispatch | None:
@@ -70,6 +71,7 @@ def open_dispatch(
         round(settings.delivery_timeout * 1000),
         clock,
         chance,
+        trail,
     )
     host = f"{socket.gethostname()[:24]}-{os.getpid()}"
     workers = Workers(way, [f"{host}-{n}-{new_id()[:8]}" for n in range(threads)])

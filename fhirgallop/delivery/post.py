@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Callable
+from dataclasses import replace
 from typing import Final
 
 import msgspec
@@ -68,10 +69,11 @@ class Post:
             "Prefer": "return=minimal",
             "X-Request-Id": self._new_id(),
         }
+        request = headers["X-Request-Id"]
         if token:
             headers["Authorization"] = f"Bearer {token}"
         try:
             answer = self._client.send("POST", self._base, headers=headers, body=bundle)
         except ClientError as error:
             return no_answer(error)
-        return judge(answer, entries)
+        return replace(judge(answer, entries), status=answer.status, request=request)

@@ -6,7 +6,7 @@ import logging
 import threading
 import time
 from collections import Counter
-from collections.abc import Callable
+from collections.abc import Callable, Sequence
 from dataclasses import dataclass
 from datetime import datetime
 from typing import Final
@@ -15,13 +15,21 @@ from fhirgallop.delivery.answer import Verdict
 from fhirgallop.delivery.patience import Chance, Patience, asked_to_wait
 from fhirgallop.delivery.post import Post
 from fhirgallop.storage.outbox import Claim, Outbox, Rest, Settled
-from fhirgallop.storage.submissions import StorageError
+from fhirgallop.storage.submissions import Also, StorageError
 
 log: Final = logging.getLogger("fhirgallop.delivery")
 
 _IDLE_SECONDS: Final = 0.5
 _BROKEN_SECONDS: Final = 2.0
 _TO_SETTLE_MS: Final = 5000
+
+
+Trail = Callable[[Claim, Verdict], Sequence[Also]]
+
+
+def no_trail(_claim: Claim, _verdict: Verdict) -> Sequence[Also]:
+    """Nothing is kept beside the result."""
+    return ()
 
 
 @dataclass(frozen=True, slots=True)
@@ -35,6 +43,7 @@ class Way:
         timeout: ms that one exchange may take.
         clock: now, with a zone; the clocks of all processes must agree to a second or two.
         chance: evenly from 0 to 1.
+        trail: what is kept of a try in the transaction that writes its result down.
     """
 
     outbox: Outbox
@@ -43,6 +52,7 @@ class Way:
     timeout: int
     clock: Callable[[], datetime]
     chance: Chance
+    trail: Trail = no_trail
 
     @property
     def lease(self) -> int:
@@ -118,7 +128,7 @@ def deliver_one(way: Way, worker: str) -> str:
         return ""
     verdict = way.post.send(claim.bundle, lambda: way.now() + way.timeout + _TO_SETTLE_MS // 2 < claim.lease)
     settled = _settled(way, claim, verdict)
-    if not way.outbox.settle(claim, settled, _rest(way, verdict)):
+    if not way.outbox.settle(claim, settled, _rest(way, verdict), *way.trail(claim, verdict)):
         log.warning("delivery %s was taken over by another worker before its result was written", claim.id)
     _tell(claim, settled, verdict)
     return verdict.kind

@@ -34,6 +34,7 @@ _BY_METHOD: Final[dict[str, tuple[Action, str]]] = {
     "PATCH": ("U", "patch"),
     "DELETE": ("D", "delete"),
 }
+_WELL: Final = Ending()
 _EXECUTED: Final[tuple[Action, str]] = ("E", "operation")
 _MOST: Final = 32  # characters of an opaque token that may be kept (BALP)
 _LONGEST: Final = 200
@@ -104,12 +105,18 @@ class Auditor:
         who = _who(request)
         return self._rows(deed, who, ending, getattr(request.state, "request_id", ""))
 
-    def kept_by_worker(self, deed: Deed, name: str) -> Callable[[Connection, int], None]:
-        """What adds the event of a deed that no request is behind: a worker's, or a command's.
+    def kept_by_worker(
+        self, deed: Deed, name: str, *, ending: Ending = _WELL, request: str = ""
+    ) -> Callable[[Connection, int], None]:
+        """What adds the event of a deed that no request to us is behind: a worker's, or a command's.
 
-        `name` says who does it: the owner of a batch, the operator's account.
+        Args:
+            deed: what was done.
+            name: who does it: the owner of a batch, the operator's account.
+            ending: how it came out.
+            request: X-Request-Id of a request of ours.
         """
-        rows = self._rows(deed, Who(name), Ending(), "")
+        rows = self._rows(deed, Who(name), ending, request)
         return lambda connection, _row: storage.add(connection, rows)
 
     def _rows(self, deed: Deed, who: Who, ending: Ending, request: str) -> list[AuditRow]:

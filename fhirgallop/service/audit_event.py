@@ -82,6 +82,7 @@ class Deed:
         patients: digests of the patients whose data were touched (one event is made for each).
         entities: what else was touched: `Type/id`, `urn:uuid:...`, or words.
         parameters: names of a search's parameters; their values may name a patient.
+        receiver: who got the data, where this program was the client; empty where it was asked.
     """
 
     action: Action
@@ -89,6 +90,7 @@ class Deed:
     patients: tuple[str, ...] = ()
     entities: tuple[str, ...] = ()
     parameters: tuple[str, ...] = ()
+    receiver: str = ""
 
 
 @dataclass(frozen=True, slots=True)
@@ -137,6 +139,10 @@ def _bare(issue: Issue) -> Issue:
 
 def _agents(deed: Deed, who: Who) -> Iterable[dict[str, Any]]:
     """Client, server, and the user or token behind the client; just one of them is the requestor."""
+    if deed.receiver:
+        yield {"type": {"coding": [_SENDER]}, "who": _SERVER, "requestor": True}
+        yield {"type": {"coding": [_RECEIVER]}, "who": _named(deed.receiver), "requestor": False}
+        return
     reads = deed.action == "R"
     client: dict[str, Any] = {
         "type": {"coding": [_RECEIVER if reads else _SENDER]},

@@ -3,16 +3,39 @@
 from __future__ import annotations
 
 import logging
-from collections.abc import AsyncIterator, Iterator
+from collections.abc import AsyncIterator, Iterator, Sequence
 from contextlib import asynccontextmanager
 from typing import Final
 
 from starlette.concurrency import run_in_threadpool
 
+from fhirgallop.delivery.addresses import origin_of
+from fhirgallop.delivery.answer import Verdict
 from fhirgallop.delivery.dispatch import Dispatch
+from fhirgallop.delivery.worker import Trail
+from fhirgallop.service.audit import Auditor
+from fhirgallop.service.audit_event import Deed, Ending
 from fhirgallop.service.metrics import Reading
+from fhirgallop.settings import Settings
+from fhirgallop.storage.outbox import Claim
+from fhirgallop.storage.submissions import Also
 
 log: Final = logging.getLogger("fhirgallop.delivery")
+
+
+def delivery_trail(auditor: Auditor, settings: Settings) -> Trail:
+    """An audit event for each answered try: whose data went where, and how it was taken."""
+    receiver = origin_of(settings.deliver_to) or ""
+
+    def trail(claim: Claim, verdict: Verdict) -> Sequence[Also]:
+        if not verdict.status:
+            return ()
+        # what a transaction is by BALP: executed, whatever its entries do
+        deed = Deed("E", "transaction", (claim.patient,), (claim.exam,), receiver=receiver)
+        ending = Ending(verdict.status)
+        return (auditor.kept_by_worker(deed, "", ending=ending, request=verdict.request),)
+
+    return trail
 
 
 @asynccontextmanager

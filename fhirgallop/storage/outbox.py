@@ -26,7 +26,7 @@ from sqlalchemy import (
 from sqlalchemy.exc import IntegrityError
 from sqlalchemy.sql.selectable import NamedFromClause
 
-from fhirgallop.storage.submissions import told
+from fhirgallop.storage.submissions import Also, told
 from fhirgallop.storage.tables import destinations, outbox, submissions
 
 State = Literal["waiting", "sending", "delivered", "failed", "dropped"]
@@ -62,6 +62,8 @@ class Claim:
 
     Attributes:
         id: of the outbox row.
+        exam: identity of the examination.
+        patient: digest of the patient's identifier.
         worker: who holds it.
         attempts: tries so far, this one counted; a probe of a destination that is down counts as none.
         lease: moment (ms) from which others may take it.
@@ -71,6 +73,8 @@ class Claim:
     """
 
     id: int
+    exam: str
+    patient: str
     worker: str
     attempts: int
     lease: int
@@ -178,15 +182,19 @@ class Outbox:
                 connection.rollback()
                 return None
             bundle = connection.scalar(select(submissions.c.bundle).where(submissions.c.id == row.submission))
-            return Claim(row.id, worker, row.attempts, now + lease, probe, failures, bundle or b"")
+        until = now + lease
+        return Claim(
+            row.id, row.exam, row.patient, worker, row.attempts, until, probe, failures, bundle or b""
+        )
 
-    def settle(self, claim: Claim, settled: Settled, rest: Rest | None) -> bool:
+    def settle(self, claim: Claim, settled: Settled, rest: Rest | None, *also: Also) -> bool:
         """Records what became of a claim; False when its lease ran out and another worker took it over.
 
         Args:
             claim: as it was given out.
             settled: what became of it.
             rest: how the destination is left alone; None when it answered as one that is well.
+            also: what is kept in the same transaction, called with the id of the row.
         """
         values = {"state": settled.state, "reason": settled.reason[:_REASON_LENGTH], "due": settled.due,
                   "outcome": settled.outcome, "lease": 0, "worker": ""}  # fmt: skip
@@ -196,6 +204,8 @@ class Outbox:
         )  # fmt: skip
         with told(), self._engine.begin() as connection:
             kept = connection.execute(update(outbox).where(held).values(**values)).rowcount == 1
+            for keep in also:
+                keep(connection, claim.id)
             if rest is None:
                 well = update(destinations).where(self._own())
                 if claim.probe:
@@ -305,7 +315,8 @@ class Outbox:
         tried = outbox.c.attempts + (0 if probe else 1)
         taken = {"state": "sending", "worker": worker, "lease": until, "attempts": tried}
         changed = update(outbox).where(outbox.c.id == chosen).values(**taken)
-        return changed.returning(outbox.c.id, outbox.c.submission, outbox.c.attempts)
+        told = (outbox.c.id, outbox.c.submission, outbox.c.exam, outbox.c.patient, outbox.c.attempts)
+        return changed.returning(*told)
 
     def _may_probe(self, connection: Connection, seen: int, until: int) -> bool:
         """Of all who want to probe, the first; the others wait until it has told, or is not heard of."""

@@ -18,10 +18,13 @@ from starlette.testclient import TestClient
 from fhirgallop import settings
 from fhirgallop.api import process
 from fhirgallop.codes import fhirjson
+from fhirgallop.conformance.validator import validate
 from fhirgallop.delivery.dispatch import Dispatch, open_dispatch
 from fhirgallop.delivery.keys import KEPT_SECONDS, public_set, read_keys
 from fhirgallop.service.app import create_app
+from fhirgallop.storage.audit import AuditTrail
 from fhirgallop.storage.engine import open_database
+from fhirgallop.storage.keys import patient_key
 from fhirgallop.storage.outbox import Outbox, Rest, Settled, Tally
 
 Put = Callable[..., None]
@@ -167,9 +170,23 @@ def test_the_service_delivers_what_is_written_as_the_site_delivers(
         assert client.post(f"/exams?map={MAP}", content=amended, headers=header).status_code == 200
         until(engine, lambda tally: tally.counts["delivered"] == 2)
         told = client.get("/metrics").text
+        events = [json.loads(row.event) for row in AuditTrail(engine).read()]
     assert 'fhirgallop_delivery_tries{result="delivered"} 2.0' in told
     assert 'fhirgallop_deliveries{state="delivered"} 2.0' in told
     assert peer.rows("SELECT created, updated > 0 FROM events") == [(len(sent["entry"]), 0), (1, 1)]
+    out = [event for event in events if event["subtype"][0]["code"] == "transaction"]
+    assert [(event["action"], event["outcome"]) for event in out] == [("E", "0")] * 2
+    for event, (request,) in zip(out, peer.rows("SELECT request FROM events"), strict=True):
+        we, they = event["agent"]
+        assert we["requestor"]
+        assert they["who"]["identifier"]["value"] == peer.base.removesuffix("/fhir")
+        patient, exam, asked = event["entity"]
+        assert patient["what"]["identifier"]["value"] == patient_key(
+            "https://fernwood.example/patients", "F-20417"
+        )
+        assert exam["what"]["identifier"]["value"].startswith("urn:uuid:")
+        assert asked["what"]["identifier"]["value"] == request
+        assert not [issue for issue in validate(event, "R4") if issue.is_error], "by our own judge"
     engine.dispose()
 
 
