@@ -5,6 +5,7 @@ Published sources: OpenID Connect Core 1.0 (3.1.2, 3.1.3.7), RFC 7636 (S256), RF
 
 from __future__ import annotations
 
+import asyncio
 import hashlib
 import json
 import re
@@ -207,6 +208,23 @@ def test_signing_in_with_the_administrators_token(browser: TestClient) -> None:
     assert browser.post("/sign-in", data={"token": SECRET}).status_code == 303
     assert "clinician, informatician, operator" in browser.get("/sign-in").text
     assert browser.get("/cds-feedback").status_code == 200
+
+
+def test_a_form_that_does_not_arrive_is_not_waited_for(
+    browser: TestClient, monkeypatch: pytest.MonkeyPatch, outcome: Any
+) -> None:
+    """The sign-in is open to anybody, so that it may keep nobody's connection for long."""
+    monkeypatch.setattr("fhirgallop.service.auth.people._PATIENCE", 0.1)
+
+    async def never(_: Any) -> bytes:
+        await asyncio.sleep(3600)
+        return b""
+
+    monkeypatch.setattr("starlette.requests.Request.body", never)
+    assert outcome(browser.post("/sign-in", data={"token": SECRET})) == (408, "timeout", "http-too-slow")
+    large = "token=" + "x" * 300_000
+    sent = {"Content-Type": "application/x-www-form-urlencoded"}
+    assert browser.post("/sign-in", content=large, headers=sent).status_code == 401
 
 
 def test_guessing_is_slow(browser: TestClient, bearer: Any, outcome: Any) -> None:

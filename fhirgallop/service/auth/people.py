@@ -6,6 +6,7 @@ Sheet (a token in every form that changes something).
 
 from __future__ import annotations
 
+import asyncio
 import hmac
 import secrets
 from collections.abc import Callable
@@ -13,6 +14,7 @@ from typing import Final
 
 from fastapi import Request
 from starlette.concurrency import run_in_threadpool
+from starlette.datastructures import FormData
 from starlette.responses import Response
 
 from fhirgallop.service import answers
@@ -25,6 +27,8 @@ FORM_HEADER: Final = "X-Form-Token"
 _SAFE: Final = frozenset({"GET", "HEAD"})
 _FORM: Final = "application/x-www-form-urlencoded"
 _MOST_FORM: Final = 256 * 1024
+_MOST_FIELDS: Final = 1000
+_PATIENCE: Final = 30.0
 
 
 class People:
@@ -101,15 +105,28 @@ def _form_token(secret: str) -> str:
     return hmac.digest(secret.encode("utf-8", "replace"), b"form", "sha256").hex()
 
 
-async def _sent(request: Request) -> bytes:
-    """The proof that a request carries, in its form or in a header."""
-    if given := request.headers.get(FORM_HEADER):
-        return given.encode("utf-8", "replace")
+async def small_form(request: Request) -> FormData:
+    """The fields of a form of ours; none where the body is no form, too large, or does not say how large.
+
+    The request keeps its body, so that whoever comes after may read it once more.
+
+    Raises:
+        RefusalError: 408.
+    """
     kind = request.headers.get("content-type", "").partition(";")[0].strip().lower()
     length = request.headers.get("content-length", "")
     if kind != _FORM or not length.isdecimal() or int(length) > _MOST_FORM:
-        return b""
-    await request.body()  # kept by the request, so that the handler can read the form once more
-    form = await request.form(max_fields=100, max_files=0)
-    value = form.get(FORM_FIELD, "")
+        return FormData()
+    try:
+        async with asyncio.timeout(_PATIENCE):
+            await request.body()
+    except TimeoutError:
+        text = "The form took too long to arrive; send it again."
+        raise answers.refusal(408, "timeout", "http-too-slow", text) from None
+    return await request.form(max_fields=_MOST_FIELDS, max_files=0)
+
+
+async def _sent(request: Request) -> bytes:
+    """The proof that a request carries, in its form or in a header."""
+    value = request.headers.get(FORM_HEADER) or (await small_form(request)).get(FORM_FIELD, "")
     return value.encode("utf-8", "replace") if isinstance(value, str) else b""

@@ -19,7 +19,7 @@ from fhirgallop.service.auth.keys import UnreachableError
 from fhirgallop.service.auth.needs import needs
 from fhirgallop.service.auth.openid import SignIn
 from fhirgallop.service.auth.opening import SIGNED_IN
-from fhirgallop.service.auth.people import FORM_FIELD, set_cookie
+from fhirgallop.service.auth.people import FORM_FIELD, set_cookie, small_form
 from fhirgallop.settings import Settings
 
 log: Final = logging.getLogger("fhirgallop.service")
@@ -29,7 +29,6 @@ router = APIRouter(include_in_schema=False)
 _HALFWAY: Final = "__Host-fhirgallop-halfway"
 _HALFWAY_SECONDS: Final = 600
 _ALL: Final = ("clinician", "informatician", "operator")
-_MOST_FORM: Final = 8192
 Open = Depends(needs(open=True))
 Anybody = Depends(needs(roles=_ALL))
 
@@ -58,10 +57,7 @@ async def page(request: Request) -> Response:
 async def by_token(request: Request) -> Response:
     """Signs in with the administrators' token."""
     gate: Gate = request.app.state.gate
-    length = request.headers.get("content-length", "")
-    if not length.isdecimal() or int(length) > _MOST_FORM:
-        raise unknown(presented=False)
-    token = (await request.form(max_fields=5, max_files=0)).get("token", "")
+    token = (await small_form(request)).get("token", "")
     address = request.client.host if request.client else ""
     caller = gate.administrators.admit(token, address) if isinstance(token, str) and token else None
     if caller is None:
