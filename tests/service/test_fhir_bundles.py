@@ -268,8 +268,8 @@ def test_each_entry_needs_its_own_scope(
     assert [one[:3] for one in statuses(told)] == ["201", "403"]
     # a conditional update creates where there is nothing yet, so it needs both
     application.state.gate = _Let("system/Observation.u")
-    upsert = {"resource": {**observation, "identifier": [{"system": "https://a.example", "value": "new"}]},
-              "request": {"method": "PUT", "url": "Observation?identifier=https://a.example|new"}}  # fmt: skip
+    upsert = {"resource": {**observation, "identifier": [{"system": "https://a.example", "value": "n"}]},
+              "request": {"method": "PUT", "url": "Observation?identifier=https://a.example|n"}}  # fmt: skip
     assert [one[:3] for one in statuses(send(client, of("batch", upsert)))] == ["403"]
     application.state.gate = _Let("system/Observation.cu")
     assert [one[:3] for one in statuses(send(client, of("batch", upsert)))] == ["201"]

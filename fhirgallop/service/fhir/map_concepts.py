@@ -114,7 +114,11 @@ class _Rows:
             group: dict[str, Any] = {"source": local_system(self._template), "target": target}
             group["element"] = [self._element(source, rows) for source, rows in elements.items()]
             if keeps and target == systems.QUALIFIERS:
-                group["unmapped"] = {"mode": "use-source-code" if self._fifth else "provided"}
+                group["unmapped"] = (
+                    {"mode": "use-source-code", "relationship": "related-to"}
+                    if self._fifth
+                    else {"mode": "provided"}
+                )
             made.append(group)
         return made
 

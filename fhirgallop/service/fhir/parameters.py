@@ -118,10 +118,20 @@ def _held(entry: Mapping[str, Any], name: str, kind: str) -> Any:
     if len(held) != 1:
         raise refusal(400, "value", "operation-parameter-type", f"{name} has one value.")
     if kind[:1].isupper():
-        if not isinstance(held[0], dict):
+        if not isinstance(held[0], dict) or not _coded(held[0]):
             raise refusal(400, "value", "operation-parameter-type", f"{name} is a {kind}.")
         return held[0]
     return _simple(name, kind, held[0])
+
+
+def _coded(value: Mapping[str, Any]) -> bool:
+    """Whether a Coding, or the codings of a CodeableConcept, are what they should be."""
+    codings = value.get("coding", [])
+    return isinstance(codings, list) and all(
+        isinstance(one_, dict)
+        and all(isinstance(one_.get(key, ""), str) for key in ("system", "version", "code", "display"))
+        for one_ in [value, *codings]
+    )
 
 
 def _simple(name: str, kind: str, value: Any) -> Any:
