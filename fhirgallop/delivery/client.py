@@ -11,9 +11,10 @@ import socket
 import ssl
 import threading
 import time
-from collections.abc import Callable, Iterable, Mapping, Sequence
+from collections.abc import Callable, Iterable, Iterator, Mapping, Sequence
 from concurrent.futures import ThreadPoolExecutor
 from concurrent.futures import TimeoutError as WaitError
+from contextlib import contextmanager
 from dataclasses import dataclass
 from pathlib import Path
 from types import MappingProxyType
@@ -44,6 +45,7 @@ _OURS: Final = frozenset({"host", "content-length", "transfer-encoding", "connec
 _WRITTEN_AT_ONCE: Final = 16_384
 _RESOLVERS: Final = 4
 _KEPT_OPEN_SECONDS: Final = 15.0
+_ORIGINS_KEPT_OPEN: Final = 4
 _NO_HEADERS: Final[Mapping[str, str]] = MappingProxyType({})
 
 
@@ -79,7 +81,7 @@ class Client:
         private: also hosts on this machine and in private networks, and plain http.
         verify: what certificates are trusted; see `trust`.
         resolve: from a host and a port to its addresses, by default the system's way.
-        connections: most connections open at once.
+        connections: most exchanges at once.
 
     Raises:
         SettingsError: an origin cannot be used.
@@ -101,12 +103,12 @@ class Client:
         self._most = most_bytes
         self._deadline = _Deadline()
         self._network = _Judged(self._deadline, resolve or _by_system, private=private)
-        self._pool = httpcore.ConnectionPool(
-            ssl_context=verify or trust(),
-            max_connections=connections,
-            keepalive_expiry=_KEPT_OPEN_SECONDS,
-            network_backend=self._network,
-        )
+        self._trusted = verify or trust()
+        self._room = threading.BoundedSemaphore(connections)
+        # A pool that threads share may close a connection that one of them has just taken (httpcore 1.0.9:
+        # what looks idle and has an answer waiting counts as ended); so each is one exchange's at a time.
+        self._idle: list[httpcore.ConnectionPool] = []
+        self._closed = False
 
     def send(
         self,
@@ -138,7 +140,8 @@ class Client:
         seconds = self._timeout if timeout is None else timeout
         self._deadline.at = time.monotonic() + seconds
         try:
-            return self._exchange(_request(method, url, origin, headers, body, seconds), origin)
+            with self._pool(seconds) as pool:
+                return self._exchange(pool, _request(method, url, origin, headers, body, seconds), origin)
         except httpcore.TimeoutException:
             raise ClientError("timed-out", origin) from None
         except _RefusedError:
@@ -150,8 +153,36 @@ class Client:
         except (httpcore.NetworkError, httpcore.ProtocolError):
             raise ClientError("dropped", origin) from None
 
-    def _exchange(self, request: dict[str, Any], origin: str) -> Answer:
-        with self._pool.stream(**request) as response:
+    @contextmanager
+    def _pool(self, seconds: float) -> Iterator[httpcore.ConnectionPool]:
+        """The connections that were used last, for one exchange."""
+        if not self._room.acquire(timeout=max(0.0, seconds)):
+            raise httpcore.PoolTimeout
+        try:
+            try:
+                pool = self._idle.pop()
+            except IndexError:
+                pool = self._new_pool()
+            try:
+                yield pool
+            finally:
+                if self._closed:
+                    pool.close()
+                else:
+                    self._idle.append(pool)
+        finally:
+            self._room.release()
+
+    def _new_pool(self) -> httpcore.ConnectionPool:
+        return httpcore.ConnectionPool(
+            ssl_context=self._trusted,
+            max_connections=_ORIGINS_KEPT_OPEN,
+            keepalive_expiry=_KEPT_OPEN_SECONDS,
+            network_backend=self._network,
+        )
+
+    def _exchange(self, pool: httpcore.ConnectionPool, request: dict[str, Any], origin: str) -> Answer:
+        with pool.stream(**request) as response:
             headers: dict[str, str] = {}
             for raw_name, raw in response.headers:
                 name, value = raw_name.decode("ascii").lower(), raw.decode("latin-1")
@@ -170,7 +201,9 @@ class Client:
 
     def close(self) -> None:
         """Closes what is open; the client cannot be used afterwards."""
-        self._pool.close()
+        self._closed = True
+        while self._idle:
+            self._idle.pop().close()
         self._network.close()
 
 

@@ -29,6 +29,7 @@ class Speaker:
         self, answer: bytes | Callable[[socket.socket], None], context: ssl.SSLContext | None
     ) -> None:
         self.asked: list[bytes] = []
+        self.opened = 0
         self._answer, self._context = answer, context
         self._listening = socket.create_server(("127.0.0.1", 0))
         self.port = self._listening.getsockname()[1]
@@ -40,6 +41,7 @@ class Speaker:
                 connection, _ = self._listening.accept()
             except OSError:
                 return
+            self.opened += 1
             threading.Thread(target=self._one, args=(connection,), daemon=True).start()
 
     def _one(self, connection: socket.socket) -> None:
@@ -123,14 +125,30 @@ def test_several_threads_share_it(speaker: Callable[..., Speaker], client: Calla
     speaking = client(base, connections=3)
     got: list[int] = []
     threads = [
-        threading.Thread(target=lambda: got.extend(speaking.send("GET", base).status for _ in range(5)))
+        threading.Thread(target=lambda: got.extend(speaking.send("GET", base).status for _ in range(25)))
         for _ in range(6)
     ]
     for one in threads:
         one.start()
     for one in threads:
-        one.join(10)
-    assert got == [200] * 30
+        one.join(30)
+    assert got == [200] * 150
+    assert there.opened <= 3, "connections are used again"
+
+
+def test_no_more_exchanges_at_once_than_there_is_room_for(
+    speaker: Callable[..., Speaker], client: Callable[..., Client]
+) -> None:
+    ended = threading.Event()
+    base = f"http://127.0.0.1:{speaker(lambda _: ended.wait(10) and None).port}"
+    speaking = client(base, connections=1)
+    first = threading.Thread(target=lambda: kind_of(speaking, base))
+    first.start()
+    try:
+        assert kind_of(speaking, base, timeout=0.2) == "timed-out"
+    finally:
+        ended.set()
+        first.join(10)
 
 
 @pytest.mark.parametrize(
