@@ -104,12 +104,11 @@ def _bundle(value: dict[str, Any], known: Registry, text: bytes | None) -> list[
             missing.append(f"Bundle.entry[{index}].resource")
     if len(urls) != len(entries) or len(alike) > _MAX_KINDS:
         return None
-    rest = [
-        index
-        for what, places in alike.items()
-        if not _plain_entries([entries[place] for place in places], what, asks, urls, known)
-        for index in places
-    ]
+    rest: list[int] = []
+    for what, places in alike.items():
+        if not _plain_entries([entries[place] for place in places], what, asks, urls, known):
+            alone = len(places) == 1
+            rest += [p for p in places if alone or not _plain_entries([entries[p]], what, asks, urls, known)]
     doubtful = _doubtful(entries, rest, urls, asks, known) if rest else ()
     if doubtful is None or (doubtful and not judged_well(value, text, doubtful, known)):
         return None
@@ -129,11 +128,19 @@ def _plain_entries(
     """
     for form in forms.plain_entries(known, what, asks):
         if form.is_valid(entries):
-            resources = [entry["resource"] for entry in entries]
-            if form.targets and not all(_led_right(r, form.targets, urls) for r in resources):
+            break
+    else:
+        return False
+    for entry in entries:
+        resource = entry["resource"]
+        if form.targets and not _led_right(resource, form.targets, urls):
+            return False
+        if "component" in resource and not components_apart(resource):
+            return False
+        for key, check in form.checks:
+            if key in resource and not check(resource[key]):
                 return False
-            return all(components_apart(r) for r in resources if "component" in r)
-    return False
+    return True
 
 
 def _doubtful(

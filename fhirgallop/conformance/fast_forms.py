@@ -52,11 +52,13 @@ class Entries:
     Attributes:
         targets: where references to other entries may stand, and the types they may lead to; none where
             the schema takes no such references, so that nothing is left to be looked at.
+        checks: keys whose values are looked at apart, with the check.
     """
 
     def __init__(self, known: Registry, what: What, *, asks: bool, linked: bool) -> None:
         self._made_of = known, what, asks, linked
         self.targets: Mapping[str, Any] = {}
+        self.checks: tuple[tuple[str, Check], ...] = ()
 
     @cached_property
     def is_valid(self) -> Valid:
@@ -69,6 +71,9 @@ class Entries:
             return _never
         if linked:
             self.targets = found.targets
+        self.checks = tuple(
+            (key, check) for key, check in found.checks.items() if key in schema["properties"]
+        )
         entry = _entry(_UUID_URL, schema, _request(what[0]) if asks else None)
         return _closed({"type": "array", "items": entry}, builder).is_valid
 

@@ -1,6 +1,6 @@
-"""The plain part of a form: what one schema says whole, with no look at keys or numbers beside it.
+"""The plain part of a form: what one schema says, presence of keys included.
 
-It leaves out what is looked at apart and values of seldom types; what is refused here may still be right.
+It leaves out values of seldom types, for the sake of speed; what is refused here may still be right.
 """
 
 from __future__ import annotations
@@ -16,12 +16,15 @@ def plain(form: Form, kind: str, edition: Edition) -> Schema | None:
     """The schema of plain resources of a form, presence of keys included; None when there are none."""
     definition = edition.type(kind)
     keys = definition.keys if definition else {}
-    seldom = {key for key, child in keys.items() if child.element.is_choice and child.type_name not in OFTEN}
-    left_out = seldom | form.checks.keys()
+    seldom = {
+        key
+        for key, child in keys.items()
+        if child.element.is_choice and child.type_name not in OFTEN and key not in form.checks
+    }
     schema = {**form.presence, **form.schema}
-    if left_out.intersection(schema.get("required", ())):
+    if seldom.intersection(schema.get("required", ())):
         return None
-    properties = {key: held for key, held in schema["properties"].items() if key not in left_out}
+    properties = {key: held for key, held in schema["properties"].items() if key not in seldom}
     schema["properties"] = properties
     rules: dict[str, Any] = {}
     for key, rule in schema.pop("dependentSchemas", {}).items():

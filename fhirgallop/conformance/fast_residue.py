@@ -10,9 +10,8 @@ from typing import Any
 
 Check = Callable[[Any], bool]
 
-# types of a choice that are often met; plain forms take no others
-OFTEN = frozenset({"Quantity", "CodeableConcept", "string", "boolean", "dateTime"})
-_VALUES = tuple(f"value{name[:1].upper()}{name[1:]}" for name in sorted(OFTEN))
+# types of a choice that are often met; beside those looked at apart, plain forms take no others
+OFTEN = ("Quantity", "CodeableConcept", "string", "boolean", "dateTime")
 _DAY = len("2026-03-04")
 
 
@@ -68,3 +67,4 @@ CHECKS: Mapping[str, tuple[Check, frozenset[str]]] = {
     "Range": (in_order, frozenset({"rng-2"})),
     "Period": (one_after_the_other, frozenset({"per-1"})),
 }
+_VALUES = tuple(f"value{name[:1].upper()}{name[1:]}" for name in (*OFTEN, *CHECKS))
