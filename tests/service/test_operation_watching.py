@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+import asyncio
+import gc
 import json
 import re
 from collections.abc import Callable
@@ -14,6 +16,7 @@ from prometheus_client.parser import text_string_to_metric_families
 from sqlalchemy import text
 
 from fhirgallop.outcome import Issue
+from fhirgallop.service.server import Server
 
 WHERE = "/exams?map=fernwood-heart-form"
 
@@ -176,3 +179,18 @@ def test_examinations_and_rules_are_counted_by_what_became_of_them(
     answers = [value for labels, value in found.items() if labels[0] == "fhirgallop_card_answers_total"]
     assert answers
     assert set(answers) == {1.0}, "a report that is sent again counts once"
+
+
+def test_what_was_loaded_is_laid_aside_when_the_server_has_started(
+    application: FastAPI, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    async def started(*_: Any) -> None:
+        return None
+
+    monkeypatch.setattr("uvicorn.Server.startup", started)
+    before = gc.get_freeze_count()
+    try:
+        asyncio.run(Server(application, application.state.settings).startup())
+        assert gc.get_freeze_count() > before + 50_000
+    finally:
+        gc.unfreeze()
