@@ -9,6 +9,7 @@ from __future__ import annotations
 import asyncio
 import gc
 import logging
+import socket
 import time
 from types import FrameType
 from typing import Final
