@@ -36,9 +36,6 @@ def serve(app: FastAPI, settings: Settings) -> None:
     Raises:
         SystemExit: the address cannot be listened on, or the certificate cannot be used.
     """
-    # what was loaded by now is needed to the end; the collector need not go through it with every answer
-    gc.collect()
-    gc.freeze()
     Server(app, settings).run()
 
 
