@@ -120,7 +120,8 @@ def _is_uuid(value: Any) -> bool:
 
 
 def _is_text(value: Any) -> bool:
-    return isinstance(value, str) and 0 < len(value) <= MAX_TEXT
+    # PostgreSQL keeps no text with U+0000
+    return isinstance(value, str) and 0 < len(value) <= MAX_TEXT and "\0" not in value
 
 
 def _is_instant(text: str) -> bool:
