@@ -184,7 +184,7 @@ class BatchDesk:
             "transactionTime": instant(datetime.fromtimestamp(batch.created / 1000, tz=UTC)),
             "request": f"{base}/exams?map={errand.map}",
             "requiresAccessToken": self._settings.authorised,
-            "total": batch.done,
+            "total": batch.total,
             **{status: counts[status] for status in ("coded", "refused", "unreadable", "not-stored")},
             "results": [
                 {"url": f"{address}/results?first={first}", "count": min(PAGE, batch.done - first)}

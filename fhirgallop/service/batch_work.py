@@ -8,9 +8,9 @@ from __future__ import annotations
 
 import logging
 import threading
-from collections.abc import AsyncIterator, Callable, Mapping, Sequence
+from collections.abc import AsyncIterator, Callable, Iterator, Mapping, Sequence
 from contextlib import asynccontextmanager
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from datetime import datetime
 from itertools import islice
 from typing import Any, Final
@@ -22,7 +22,7 @@ from fhirgallop.codes import fhirjson
 from fhirgallop.intake.reading import Read
 from fhirgallop.intake.record import LocalRecord
 from fhirgallop.mapping.template_map import TemplateMap
-from fhirgallop.outcome import Issue, operation_outcome
+from fhirgallop.outcome import Issue, operation_outcome, ordered
 from fhirgallop.service.audit import Auditor
 from fhirgallop.service.audit_event import Deed
 from fhirgallop.service.batch_desk import Errand, records
@@ -44,9 +44,17 @@ _NO_MAP: Final = Issue(
     "error", "not-found", "batch-map-gone",
     "The template map of this batch is no longer published; send the record again with another.",
 )  # fmt: skip
+_OTHER_MAP: Final = Issue(
+    "information", "informational", "batch-map-changed",
+    "The template map was changed after this batch was taken in; the record was read by the newer version.",
+)  # fmt: skip
 _BROKE: Final = Issue(
     "fatal", "exception", "record-broke",
     "Something broke at this record, and nothing of it was kept; tell the operator the time of day.",
+)  # fmt: skip
+_REST_BROKE: Final = Issue(
+    "fatal", "exception", "batch-broke",
+    "Something broke while the body was read on from here; tell the operator, and send what follows again.",
 )  # fmt: skip
 
 
@@ -123,20 +131,32 @@ class BatchWork:
             StorageError: the database failed; the batch may be claimed again.
         """
         held = _Held(batch.id, worker, Errand.read(batch.wish))
-        body = self._store.request(batch.id)
-        todo = islice(records(body, held.errand.kind, self._settings), batch.done, None)
         log.info("batch %s: from record %d of %d on", batch.id, batch.done + 1, batch.total)
+        position = batch.done
         try:
-            for position, read in enumerate(todo, start=batch.done):
+            for read in self._left(held, batch.done):
                 if self._stopping.is_set():
                     self._store.release(batch.id, worker)
                     return
-                self._step(held, position, read)
+                if read is None:
+                    self._keep(held, position, 0, "not-stored", [_REST_BROKE])
+                else:
+                    self._step(held, position, read)
+                position += 1
         except SupersededError:
             log.info("batch %s: given up, or gone on with elsewhere", batch.id)
             return
         self._store.finish(batch.id, worker)
         log.info("batch %s: done", batch.id)
+
+    def _left(self, held: _Held, done: int) -> Iterator[Read | None]:
+        """The records not gone through yet; None where the reader broke, and then no more."""
+        body = self._store.request(held.batch)
+        try:
+            yield from islice(records(body, held.errand.kind, self._settings), done, None)
+        except Exception as error:  # noqa: BLE001 - the batch must come to an end, and others wait behind it
+            log.error("a batch broke: %s at %s", type(error).__name__, place(error))  # noqa: TRY400
+            yield None
 
     def _step(self, held: _Held, position: int, read: Read) -> None:
         """One record, with its result.
@@ -160,6 +180,9 @@ class BatchWork:
 
         def along(coded: Coded) -> Sequence[Also]:
             status = "refused" if coded.bundle is None else "coded"
+            if wish.template.version != held.errand.version:
+                issues = ordered([*coded.result.issues, _OTHER_MAP])
+                coded = replace(coded, result=replace(coded.result, issues=tuple(issues)))
             said = self._desk.told(coded, held.errand.review)
             said.pop("bundle", None)
             said = {"line": record.line, "status": status, **said}

@@ -158,6 +158,8 @@ class ExamDesk:
         reply = Reply(ack(message, ordered(issues), control_id=number, now=now), ask.answer)
         if ask.keyed and taken:
             self._keys.finish(ask.keyed, reply)
+        elif ask.keyed:
+            self._keys.release(ask.keyed)
         return reply
 
     def told(self, coded: Coded, opinion: Opinion, chart: Any = None) -> dict[str, Any]:

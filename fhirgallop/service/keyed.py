@@ -149,6 +149,14 @@ class KeyDesk:
         """
         self._store.finish(self._kept(asked, reply))
 
+    def release(self, asked: Keyed) -> None:
+        """Gives a reserved key back, where the request left nothing behind.
+
+        Raises:
+            StorageError: the database failed.
+        """
+        self._store.release(asked.key, asked.request)
+
     def _kept(self, asked: Keyed, reply: Reply) -> KeptAnswer:
         headers = fhirjson.write(reply.headers)
         return KeptAnswer(

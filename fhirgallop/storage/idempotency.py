@@ -82,6 +82,13 @@ class Answers:
         with told(), self._engine.begin() as connection:
             return connection.execute(update(table).where(*same).values(**values)).rowcount == 1
 
+    def release(self, key: str, request: str) -> None:
+        """Gives a reserved key back."""
+        table = idempotent_answers
+        same = (table.c.key == key, table.c.request == request, table.c.status == RESERVED)
+        with told(), self._engine.begin() as connection:
+            connection.execute(delete(table).where(*same))
+
 
 def add(connection: Connection, kept: KeptAnswer) -> None:
     """Adds an answer in the caller's transaction.

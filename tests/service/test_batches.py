@@ -8,6 +8,7 @@ import os
 import random
 import time
 from collections.abc import Callable, Iterator
+from dataclasses import replace
 from datetime import UTC, datetime
 from pathlib import Path
 from typing import Any
@@ -302,6 +303,39 @@ def test_a_map_that_is_gone_is_said_of_each_record(batching: Any, example: Any) 
     found = results(client, end(client, sent))
     assert [one["status"] for one in found] == ["refused"] * 2
     assert "batch-map-gone" in json.dumps(found)
+
+
+def test_a_map_that_was_changed_is_said_of_each_record(batching: Any, example: Any) -> None:
+    client = batching(batch_workers=0)
+    sent = client.post(WHERE, json=[example()], headers=LATER)
+    shelf = client.app.state.shelf
+    shelf["fernwood-heart-form"] = replace(shelf["fernwood-heart-form"], version="2027.1")
+    _work(client.app.state, settings.load(batch_workers=1))
+    (found,) = results(client, end(client, sent))
+    assert found["status"] == "coded"
+    assert "batch-map-changed" in json.dumps(found["outcome"])
+
+
+def test_a_body_that_breaks_its_reader_comes_to_an_end(
+    batching: Any, example: Any, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    client = batching(batch_workers=0)
+    sent = client.post(WHERE, json=[example(), example()], headers=LATER)
+    after = client.post(WHERE, json=[example()], headers=LATER)
+    whole = batch_work.records
+
+    def breaking(body: bytes, kind: str, chosen: settings.Settings) -> Iterator[Any]:
+        for place, read in enumerate(whole(body, kind, chosen)):
+            if place == 1:
+                raise ZeroDivisionError
+            yield read
+
+    monkeypatch.setattr(batch_work, "records", breaking)
+    _work(client.app.state, settings.load(batch_workers=1))
+    found = results(client, end(client, sent))
+    assert [one["status"] for one in found] == ["coded", "not-stored"]
+    assert "batch-broke" in json.dumps(found[1])
+    assert end(client, after)["coded"] == 1, "the next one has its turn"
 
 
 def _work(state: Any, chosen: settings.Settings) -> None:

@@ -7,7 +7,7 @@ import json
 import os
 import random
 import time
-from collections.abc import Callable
+from collections.abc import Callable, Iterator
 from concurrent.futures import ThreadPoolExecutor
 from datetime import timedelta
 from pathlib import Path
@@ -18,8 +18,11 @@ import pytest
 from fastapi import FastAPI
 from sqlalchemy import func, select
 from starlette.requests import Request
+from starlette.testclient import TestClient
 
+from fhirgallop import settings
 from fhirgallop.service.answers import RefusalError
+from fhirgallop.service.app import create_app
 from fhirgallop.service.auth.caller import Caller
 from fhirgallop.service.keyed import keyed
 from fhirgallop.storage.engine import connect
@@ -143,6 +146,14 @@ def test_messages_have_keys_too(client: Any, root: Path) -> None:
     assert again.headers[AGAIN] == "true"
 
 
+def test_a_message_that_was_refused_may_be_mended_under_the_same_key(client: Any, root: Path) -> None:
+    message = (root / "examples/ehr/fernwood-exam.hl7").read_bytes()
+    headers = {**KEY, "Content-Type": "application/hl7-v2", "Accept": "application/hl7-v2"}
+    wrong = client.post(WHERE, content=message.replace(b"left^left", b"x^x"), headers=headers)
+    assert b"MSA|AE" in wrong.content
+    assert b"MSA|AA" in client.post(WHERE, content=message, headers=headers).content
+
+
 def test_a_form_is_the_same_whatever_stands_between_its_parts(client: Any, example: Any, root: Path) -> None:
     chart = (root / "examples/clinician/atrial-fibrillation-today.chart.json").read_bytes()
     answers = []
@@ -172,24 +183,31 @@ def test_keys_of_two_callers_are_two_keys() -> None:
         asked(one, "abcdefgh", "abcdefgi")
 
 
-def test_of_many_at_once_one_does_it_and_all_get_its_answer(
-    application: FastAPI, client: Any, example: Any
-) -> None:
+@pytest.fixture(params=["sqlite", "postgres"])
+def anywhere(request: pytest.FixtureRequest, tmp_path: Path, root: Path) -> Iterator[Any]:
+    """The service on either database."""
+    address = f"sqlite:///{tmp_path / 'k.sqlite3'}"
+    if request.param == "postgres":
+        address = request.getfixturevalue("postgres")
+    chosen = settings.load(maps=root / "examples/informatician", database=address, batch_workers=0)
+    with TestClient(create_app(chosen), base_url="http://localhost") as speaking:
+        yield speaking
+
+
+def test_of_many_at_once_one_does_it_and_all_get_its_answer(anywhere: Any, example: Any) -> None:
     with ThreadPoolExecutor(8) as pool:
-        answers = list(pool.map(lambda _: client.post(WHERE, json=example(), headers=KEY), range(8)))
+        answers = list(pool.map(lambda _: anywhere.post(WHERE, json=example(), headers=KEY), range(8)))
     assert {answer.status_code for answer in answers} == {200}
     assert len({answer.content for answer in answers}) == 1
-    assert count(application, submissions) == count(application, idempotent_answers) == 1
+    assert count(anywhere.app, submissions) == count(anywhere.app, idempotent_answers) == 1
 
 
-def test_of_different_requests_at_once_under_one_key_one_is_kept(
-    application: FastAPI, client: Any, example: Any
-) -> None:
+def test_of_different_requests_at_once_under_one_key_one_is_kept(anywhere: Any, example: Any) -> None:
     records = [example(exam={"number": f"N-{number}"}) for number in range(8)]
     with ThreadPoolExecutor(8) as pool:
-        answers = list(pool.map(lambda record: client.post(WHERE, json=record, headers=KEY), records))
+        answers = list(pool.map(lambda record: anywhere.post(WHERE, json=record, headers=KEY), records))
     assert sorted(answer.status_code for answer in answers) == [200] + [422] * 7
-    assert count(application, submissions) == count(application, idempotent_answers) == 1
+    assert count(anywhere.app, submissions) == count(anywhere.app, idempotent_answers) == 1
 
 
 @pytest.mark.parametrize("kind", ["sqlite", "postgres"])

