@@ -3,6 +3,8 @@
 from __future__ import annotations
 
 import json
+import threading
+from concurrent.futures import ThreadPoolExecutor
 from dataclasses import dataclass, field
 from pathlib import Path
 from typing import Any
@@ -132,6 +134,30 @@ def test_keys_that_are_there_outlast_a_failure_within_their_time(ehr: Any, new_s
     assert finds(keys, ehr)
 
 
+def test_a_place_that_hangs_holds_up_nobody_whose_key_is_known(ehr: Any, new_signer: Any) -> None:
+    """While a forged kid makes one thread wait for the place, the others are served from what is kept."""
+    place = Publisher([ehr], "max-age=600")
+    keys = place.keys()
+    assert finds(keys, ehr)
+    begun, go_on = threading.Event(), threading.Event()
+    plain = place.send
+
+    def hanging(*words: Any, **named: Any) -> Answer:
+        begun.set()
+        assert go_on.wait(30)
+        return plain(*words, **named)
+
+    place.send = hanging  # type: ignore[method-assign]
+    with ThreadPoolExecutor(2) as pool:
+        forged = pool.submit(finds, keys, new_signer("guess"))
+        assert begun.wait(30)
+        assert finds(keys, ehr)
+        with pytest.raises(UnreachableError):
+            finds(keys, new_signer("another guess"))
+        go_on.set()
+        assert forged.result(30) is False
+
+
 @pytest.mark.parametrize(
     "changed",
     [
@@ -181,3 +207,7 @@ def test_keys_in_a_file_are_read_again(ehr: Any, new_signer: Any, tmp_path: Path
     path.write_text(json.dumps({"keys": [newer.public]}))
     assert found(newer)
     assert not found(ehr)
+    path.unlink()
+    token, later = read_token(ehr.sign({}), ("ES384",)), Publisher([]).keys()
+    with pytest.raises(UnreachableError):
+        later.find(token, (str(path),))

@@ -28,6 +28,7 @@ _UNTOLD: Final = 300.0  # seconds that keys are kept where the place does not sa
 _LONGEST: Final = 86_400.0
 _ASK_AGAIN: Final = 30.0  # seconds between two askings for a key that was not there
 _AFTER_FAILURE: Final = 5.0
+_WAIT: Final = 1.0  # longest that a thread stands idle while another asks
 _AGE: Final = re.compile(r"max-age=\"?(\d{1,9})\"?")
 _RSA_BITS: Final = (2048, 8192)
 
@@ -77,27 +78,45 @@ class Keys:
         return _usable(found[0])
 
     def _of(self, place: str, *, anew: bool = False) -> tuple[Mapping[str, Any], ...]:
+        if (keys := self._fresh(place, anew=anew)) is not None:
+            return keys
         with self._lock:
             lock = self._locks.setdefault(place, threading.Lock())
-        with lock:  # one asking at a time; who waited finds what the other brought
-            now = self._clock()
-            kept = self._kept.get(place)
-            if kept and now < (kept.again if anew else kept.until):
-                return kept.keys
-            if now < self._failed.get(place, now):
-                raise UnreachableError
-            try:
-                keys, seconds = self._read(place)
-            except UnreachableError:
-                self._failed[place] = now + _AFTER_FAILURE
-                raise
-            again = now + _ASK_AGAIN if anew else (kept.again if kept else now)
-            self._kept[place] = _Kept(keys, now + seconds, again)
-            return keys
+        # one asking at a time; who waited finds what the other brought
+        if not lock.acquire(timeout=_WAIT):
+            raise UnreachableError
+        try:
+            if (keys := self._fresh(place, anew=anew)) is not None:
+                return keys
+            return self._asked(place, anew=anew)
+        finally:
+            lock.release()
+
+    def _fresh(self, place: str, *, anew: bool) -> tuple[Mapping[str, Any], ...] | None:
+        """The keys that are kept, unless they have to be asked for."""
+        kept = self._kept.get(place)
+        return kept.keys if kept and self._clock() < (kept.again if anew else kept.until) else None
+
+    def _asked(self, place: str, *, anew: bool) -> tuple[Mapping[str, Any], ...]:
+        now = self._clock()
+        if now < self._failed.get(place, now):
+            raise UnreachableError
+        try:
+            keys, seconds = self._read(place)
+        except UnreachableError:
+            self._failed[place] = now + _AFTER_FAILURE
+            raise
+        before = self._kept.get(place)
+        again = now + _ASK_AGAIN if anew else (before.again if before else now)
+        self._kept[place] = _Kept(keys, now + seconds, again)
+        return keys
 
     def _read(self, place: str) -> tuple[tuple[Mapping[str, Any], ...], float]:
         if "://" not in place:
-            return keys_of(Path(place)), _UNTOLD
+            try:
+                return keys_of(Path(place)), _UNTOLD
+            except SettingsError:  # it was there when the service started
+                raise UnreachableError from None
         try:
             answer = self._client.send("GET", place, headers={"Accept": "application/json"})
         except ClientError:
