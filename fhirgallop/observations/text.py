@@ -17,11 +17,13 @@ _DIV: Final = '<div xmlns="http://www.w3.org/1999/xhtml">'
 
 def plain(text: str) -> str:
     """`text` without control characters and blank ends: a FHIR string, or empty."""
-    return _CONTROL.sub("", text).strip()
+    return text.strip() if text.isprintable() else _CONTROL.sub("", text).strip()
 
 
 def code(text: str) -> str:
     """`text` as a FHIR code: single spaces inside, none around."""
+    if text.isprintable() and "  " not in text:  # of all white space, only the space itself can be printed
+        return text.strip()
     return _BLANKS.sub(" ", plain(text)).strip()
 
 
