@@ -64,6 +64,20 @@ _BODIES[enclosed.FORM] = {
         "required": [enclosed.RECORD],
     }
 }
+_HEADERS: Final = [
+    {
+        "name": "Idempotency-Key",
+        "in": "header",
+        "description": "A string of the sender's own: the same request with it gets the same answer again.",
+        "schema": {"type": "string", "minLength": 8, "maxLength": 202},
+    },
+    {
+        "name": "Prefer",
+        "in": "header",
+        "description": "`respond-async`: answer at once, code later.",
+        "schema": {"type": "string"},
+    },
+]
 
 
 @dataclass(frozen=True, slots=True)
@@ -94,7 +108,7 @@ class Sent:
         "With `Prefer: respond-async` the answer is 202 and, in `Content-Location`, the address where to ask "
         "how far the examinations are; they are coded one by one, and the batch outlives a restart."
     ),
-    openapi_extra={"requestBody": {"required": True, "content": _BODIES}},
+    openapi_extra={"requestBody": {"required": True, "content": _BODIES}, "parameters": _HEADERS},
     dependencies=[Depends(needs(does="cu", to=WRITTEN))],
     responses=_STATUSES,
 )
