@@ -151,3 +151,20 @@ def test_the_body_of_another_edition(examined: TestClient, one: dict[str, Any]) 
     headers = {"Content-Type": "application/fhir+json; fhirVersion=5.0"}
     assert examined.post(f"{BASE}/$validate", json=one, headers=headers).status_code == 415
     assert examined.post("/fhir/r5/Observation/$validate", json=one, headers=headers).status_code == 200
+
+
+def test_codes_that_nobody_can_judge_here_are_named(still: TestClient, observation: dict[str, Any]) -> None:
+    """VA-12, VA-13: not loaded is neither valid nor wrong."""
+    answer = asked(still, BASE, observation)
+    assert errors(answer) == set()
+    said = {issue["details"]["text"]: issue for issue in answer.json()["issue"]}
+    (snomed,) = [issue for words, issue in said.items() if "SNOMED CT" in words]
+    assert (snomed["severity"], snomed["code"]) == ("information", "incomplete")
+    observation["code"]["coding"][0]["version"] = "http://snomed.info/sct/900000000000207008/version/19000101"
+    versioned = asked(still, BASE, observation).json()["issue"]
+    (issue,) = [one for one in versioned if "SNOMED CT" in one["details"]["text"]]
+    assert (issue["severity"], issue["code"], issue["expression"]) == (
+        "warning",
+        "not-found",
+        ["Observation"],
+    )

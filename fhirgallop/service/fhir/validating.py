@@ -20,6 +20,7 @@ from fhirgallop.service import answers, audit
 from fhirgallop.service.fhir.address import KEPT, is_id
 from fhirgallop.service.fhir.interactions import desk, seen
 from fhirgallop.service.fhir.tokens import own_id
+from fhirgallop.service.fhir.unjudged import unjudged
 from fhirgallop.storage.resource_search import Kept
 
 MODES: Final = ("create", "update", "delete", "profile")
@@ -70,7 +71,11 @@ def judge(request: Request, body: bytes, asked: Question) -> list[Issue]:
     if resource is None or value is None:
         text = "The Parameters hold no resource; add a parameter named resource."
         raise answers.refusal(400, "required", "http-validate-resource", text)
-    found = [*validate(resource, asked.edition, asked.profiles), *_beside(request, value, asked, before)]
+    found = [
+        *validate(resource, asked.edition, asked.profiles),
+        *_beside(request, value, asked, before),
+        *unjudged(value),
+    ]
     if asked.type and value.get("resourceType") != asked.type:
         text = (
             f"The address is for {asked.type}, the resource is of another type; send it to its own address."
