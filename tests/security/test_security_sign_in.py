@@ -234,10 +234,38 @@ def test_guessing_is_slow(browser: TestClient, bearer: Any, outcome: Any) -> Non
     assert outcome(told) == (429, "throttled", "auth-too-often")
     assert 0 < int(told.headers["retry-after"]) <= 61
     assert browser.post("/sign-in", data={"token": SECRET}).status_code == 429
-    brake = browser.app.state.gate.administrators._brake  # type: ignore[attr-defined]
+    brake = browser.app.state.gate.administrators.brake  # type: ignore[attr-defined]
     then = brake._clock() + 61
     brake._clock = lambda: then
     assert browser.get("/cds-feedback", headers=bearer(SECRET)).status_code == 200
+
+
+def test_good_tokens_of_the_authority_are_no_guesses(
+    serving: Any, place: Any, tmp_path: Path, bearer: Any
+) -> None:
+    """Opaque access tokens look like the administrators'; many new ones slow nobody down."""
+    secret = tmp_path / "secret"
+    secret.write_text("s")
+    client = serving(
+        authority="https://login.example", authority_introspection=f"{place.base}/tell",
+        authority_client="gallop", authority_secret=secret, authority_tokens="https://login.example/token",
+        admin_token=DIGEST,
+    )  # fmt: skip
+    told = {
+        "active": True,
+        "scope": "",
+        "client_id": "x",
+        "exp": 4_102_444_800,
+        "aud": "http://localhost:8470",
+    }
+    place.pages["/tell"] = (200, {}, json.dumps(told).encode())
+    for n in range(15):
+        assert client.get("/maps", headers=bearer(f"opaque-{n}")).status_code == 200
+    assert client.get("/maps", headers=bearer(SECRET)).status_code == 200
+    assert len(place.asked) == 15, "the administrators' token is not shown to the authority"
+    place.pages["/tell"] = (200, {}, b'{"active": false}')
+    statuses = [client.get("/maps", headers=bearer(f"guess-{n}")).status_code for n in range(11)]
+    assert statuses == [401] * 10 + [429]
 
 
 def test_where_no_way_is_set_nobody_signs_in(fhir_service: TestClient, outcome: Any) -> None:

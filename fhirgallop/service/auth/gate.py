@@ -24,6 +24,8 @@ from fhirgallop.service.auth.openid import SignIn
 from fhirgallop.service.auth.people import People
 from fhirgallop.service.limits import admit_caller
 
+_DOTS_OF_JWT: Final = 2
+
 log: Final = logging.getLogger("fhirgallop.service")
 
 
@@ -95,11 +97,23 @@ class Gate:
             raise answers.RefusalError(503, [issue], {"Retry-After": "10"}) from None
 
     def _proven(self, request: Request, need: Need, text: str) -> Caller | None:
-        # the local token is none of the signed ones: it has no dots
-        if need.roles and "." not in text:
-            found = self.administrators.admit(text, request.client.host if request.client else "")
-            if found:
-                return found
+        # a JWT is never the local token; anything else may be, and is not shown to others before it is told
+        if not need.roles or text.count(".") == _DOTS_OF_JWT:
+            return self._signed(request, need, text)
+        address = request.client.host if request.client else ""
+        brake = self.administrators.brake
+        brake.check(address)
+        found = self.administrators.known(text)
+        try:
+            found = found or self._signed(request, need, text)
+        except TokenError:
+            brake.failed(address)
+            raise
+        if found is None:
+            brake.failed(address)
+        return found
+
+    def _signed(self, request: Request, need: Need, text: str) -> Caller | None:
         if self.tokens and (need.token or need.does):
             return self.tokens.admit(text)
         if self.cds and need.cds:
