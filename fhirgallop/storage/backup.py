@@ -28,7 +28,8 @@ from fhirgallop.storage.submissions import told
 from fhirgallop.storage.tables import SCHEMA_VERSION, metadata, schema_version
 
 _FORM: Final = 1
-_AT_ONCE: Final = 200
+# a row may hold the body of a request, and so many are in memory at a time
+_AT_ONCE: Final = 20
 # a row holds a Bundle, or the body of a request, at most
 _LONGEST_LINE: Final = 256 * 1024 * 1024
 _TABLES: Final = tuple(table for table in metadata.sorted_tables if table is not schema_version)

@@ -16,6 +16,8 @@ from sqlalchemy import (
     ColumnElement,
     Connection,
     Engine,
+    Integer,
+    String,
     Table,
     and_,
     bindparam,
@@ -24,6 +26,7 @@ from sqlalchemy import (
     func,
     or_,
     select,
+    tuple_,
 )
 
 from fhirgallop.storage.submissions import Also, told
@@ -44,9 +47,8 @@ from fhirgallop.storage.tables import (
     used_tokens,
 )
 
-# rows, and examinations, in one transaction of `prune`: others never wait long for it
-_ROWS: Final = 500
-_EXAMS: Final = 50
+# in one transaction of `prune`: others never wait long for it
+_ROWS: Final = 100
 _STILL_TO_BE_SENT: Final = ("waiting", "sending", "failed")
 _FINISHED: Final = ("done", "cancelled")
 
@@ -139,6 +141,7 @@ def forget(engine: Engine, patients: Collection[str], *also: Also) -> Mapping[st
         (hook_memories, hook_memories.c.patient.in_(known)),
     ]
     with told(), engine.begin() as connection:
+        _hold_examinations(connection)
         gone = _delete(connection, chosen)
         for keep in also:
             keep(connection, 0)
@@ -179,18 +182,25 @@ def clear_away(engine: Engine) -> bool:
 
 def _old_exams(engine: Engine, before: datetime) -> Counter[str]:
     gone: Counter[str] = Counter()
-    newer, limit = submissions.alias("newer"), _instant(before)
-    over = select(submissions.c.exam).distinct().where(
-        submissions.c.exam > bindparam("after"),
+    newer, sent, limit = submissions.alias("newer"), submissions.alias("sent"), _instant(before)
+    still = select(outbox.c.id).join(sent, sent.c.id == outbox.c.submission)
+    still = still.where(sent.c.exam == submissions.c.exam, outbox.c.state.in_(_STILL_TO_BE_SENT))
+    place = (submissions.c.received, submissions.c.id)
+    over = select(*place, submissions.c.exam).where(
         submissions.c.received < limit,
+        tuple_(*place) > tuple_(bindparam("received", type_=String), bindparam("row", type_=Integer)),
         ~exists().where(newer.c.exam == submissions.c.exam, newer.c.received >= limit),
-        ~exists().where(outbox.c.exam == submissions.c.exam, outbox.c.state.in_(_STILL_TO_BE_SENT)),
-    ).order_by(submissions.c.exam).limit(_EXAMS)  # fmt: skip
-    exams = [""]
-    while exams:
+        ~still.correlate(submissions).exists(),
+    ).order_by(*place).limit(_ROWS)  # fmt: skip
+    after, more = ("", 0), True
+    while more:
         with told(), engine.begin() as connection:
-            exams = list(connection.scalars(over, {"after": exams[-1]}))
-            gone.update(_delete_exams(connection, exams))
+            _hold_examinations(connection)
+            found = connection.execute(over, {"received": after[0], "row": after[1]}).all()
+            if found:
+                gone.update(_delete_exams(connection, sorted({row.exam for row in found})))
+        more = len(found) == _ROWS
+        after = (found[-1].received, found[-1].id) if found else after
     # what came over a FHIR address belongs to no examination
     later = resources.alias("later")
     same = [later.c[name] == resources.c[name] for name in ("fhir_id", "type", "edition")]
@@ -201,6 +211,18 @@ def _old_exams(engine: Engine, before: datetime) -> Counter[str]:
     )
     gone[resources.name] += _delete_slowly(engine, resources, alone)
     return gone
+
+
+def _hold_examinations(connection: Connection) -> None:
+    """Nobody adds an examination before the end of this transaction.
+
+    Else a version that comes between the choice and the deletion would go too, or would stay without those of
+    its resources that it has from the version before.
+    """
+    if connection.dialect.name == "sqlite":
+        connection.exec_driver_sql("BEGIN IMMEDIATE")
+    else:
+        connection.exec_driver_sql(f"LOCK TABLE {submissions.name} IN SHARE ROW EXCLUSIVE MODE")
 
 
 def _delete_exams(connection: Connection, exams: Sequence[str]) -> Counter[str]:

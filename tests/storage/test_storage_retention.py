@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import threading
 from collections.abc import Callable, Mapping
 from datetime import UTC, datetime, timedelta
 from pathlib import Path
@@ -120,7 +121,6 @@ def test_an_examination_goes_whole_when_its_newest_version_is_old(
 def test_more_than_one_transaction_goes_all_the_same(
     engine: Engine, keep: Callable[..., None], monkeypatch: pytest.MonkeyPatch
 ) -> None:
-    monkeypatch.setattr(retention, "_EXAMS", 2)
     monkeypatch.setattr(retention, "_ROWS", 2)
     for number in range(7):
         keep(f"urn:{number}", age=40, state="waiting" if number in (0, 3) else "")
@@ -129,6 +129,32 @@ def test_more_than_one_transaction_goes_all_the_same(
         connection.execute(insert(used_tokens), rows)
     assert prune(engine, Keeping(exams=30), NOW) == {"submissions": 5, "resources": 5, "used_tokens": 7}
     assert exams(engine) == ["urn:0", "urn:3"]
+
+
+def test_a_version_that_comes_meanwhile_waits_and_stays_whole(
+    engine: Engine, keep: Callable[..., None], monkeypatch: pytest.MonkeyPatch
+) -> None:
+    """An amendment is sent just when the old version was chosen to go."""
+    keep("urn:a", 1, age=40)
+    delete, chosen, coming = retention._delete_exams, threading.Event(), []
+
+    def slowly(connection: Any, exams: Any) -> Any:
+        chosen.set()
+        coming[0].join(0.3)  # it would be through by then, could it go on
+        return delete(connection, exams)
+
+    def amend() -> None:
+        chosen.wait()
+        keep("urn:a", 2, age=0, state="waiting")
+
+    monkeypatch.setattr(retention, "_delete_exams", slowly)
+    coming.append(threading.Thread(target=amend))
+    coming[0].start()
+    prune(engine, Keeping(exams=30), NOW)
+    coming[0].join()
+    assert counts(engine) == {"submissions": 1, "resources": 1, "resource_identifiers": 1, "outbox": 1}
+    with engine.connect() as connection:
+        assert connection.scalar(select(submissions.c.version)) == 2
 
 
 def test_resources_that_came_alone_go_when_their_newest_version_is_old(engine: Engine) -> None:
