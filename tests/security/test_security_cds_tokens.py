@@ -12,6 +12,7 @@ from pathlib import Path
 from typing import Any
 
 import pytest
+from sqlalchemy import create_engine, text
 from starlette.testclient import TestClient
 
 from fhirgallop import settings
@@ -299,6 +300,17 @@ def test_ch_71_the_memory_of_used_tokens_outlives_the_process(
     token = bearer(ehr.sign(cds_claims()))
     assert serving(cds_clients=where).get("/cds-services", headers=token).status_code == 200
     assert serving(cds_clients=where).get("/cds-services", headers=token).status_code == 401
+
+
+def test_ch_71_whether_a_token_was_used_must_be_known(
+    cds_service: TestClient, ehr: Any, cds_claims: Any, bearer: Any, outcome: Any, tmp_path: Path
+) -> None:
+    """With a database that fails nobody is let in, and nothing is answered."""
+    with create_engine(f"sqlite:///{tmp_path / 'security.sqlite3'}").begin() as connection:
+        connection.execute(text("DROP TABLE used_tokens"))
+    answer = cds_service.get("/cds-services", headers=bearer(ehr.sign(cds_claims())))
+    assert outcome(answer) == (503, "transient", "storage-failed")
+    assert "services" not in answer.json()
 
 
 def test_ch_71_lifetime_and_skew_are_settings(
