@@ -43,6 +43,11 @@ def codes(concepts: Any) -> tuple[Code, ...]:
     """Every coding of a CodeableConcept, of a list of them, or of a CodeableReference (R5)."""
     if concepts is None:
         return ()
+    if type(concepts) is dict and type(concepts.get("coding")) is list and len(concepts["coding"]) == 1:
+        # by far the most are one concept with one coding
+        coding = element(concepts["coding"][0])
+        code = text(coding.get("code"))
+        return (Code(text(coding.get("system")), code),) if code else ()
     found: dict[Code, None] = {}
     for concept in elements(concepts):
         # R5 CodeableReference holds its concept one level deeper

@@ -67,16 +67,20 @@ class Part:
 
 def read_observation(found: Found, reading: Reading) -> None:
     """Adds every fact an Observation states."""
+    observation = found.resource
+    head = codes(observation.get("code"))
+    components = tuple(elements(observation.get("component")))
+    # most of a chart is of codes that have no meaning here; nothing more is asked of it
+    if not (_is_known(head, reading) or any(_is_known(codes(c.get("code")), reading) for c in components)):
+        reading.unknown += text(observation.get("status")) not in _WITHDRAWN
+        return
     frame = _frame(found, reading, "effective")
     if frame is None:
         return
     if frame.ours and _of_this_exam(found, frame.time, reading.exam):
         # this very examination, already written to the chart
         return
-    observation = found.resource
     before = len(reading.facts)
-    head = codes(observation.get("code"))
-    components = tuple(elements(observation.get("component")))
     known_code = _read(Part(head, observation, components, found.place), frame, reading)
     describing = [_is_property(component, reading) for component in components]
     properties = tuple(c for c, describes in zip(components, describing, strict=True) if describes)
@@ -89,6 +93,14 @@ def read_observation(found: Found, reading: Reading) -> None:
             known_code |= _read(part, frame, reading)
     if not known_code and len(reading.facts) == before:
         reading.unknown += 1
+
+
+def _is_known(head: tuple[Code, ...], reading: Reading) -> bool:
+    """Whether one of the codes says something in the tables, alone or with a value."""
+    tables = reading.tables
+    return any(
+        code in tables.uses["observation"] or code in tables.questions or code == _ASSERTION for code in head
+    )
 
 
 def read_report(found: Found, reading: Reading) -> None:
