@@ -23,7 +23,7 @@ from fhirgallop.service.audit_event import Action
 from fhirgallop.service.fhir.coded import coded
 from fhirgallop.storage import outbox, resources
 from fhirgallop.storage.keys import number_key, patient_key
-from fhirgallop.storage.submissions import Also, Seen, Submission, Submissions
+from fhirgallop.storage.submissions import MANY_OTHERS, Also, Seen, Submission, Submissions
 
 _TRIES: Final = 5
 _SEEN_BEFORE: Final = Issue(
@@ -131,7 +131,7 @@ class Examinations:
         number = number_key(exam.identifier_system or wish.template.name, exam.identifier)
         identity, meant = Identities(exam).of("examination"), _fingerprint(exam)
         for attempt in range(_TRIES):
-            seen = self._store.seen(identity, number)
+            seen = self._store.seen(identity, number, patient)
             result = understood
             if exam.status != "entered-in-error" and self._stands_elsewhere(seen, patient):
                 result = _with(result, _OTHER_PATIENT)
@@ -187,8 +187,10 @@ class Examinations:
 
     def _stands_elsewhere(self, seen: Sequence[Seen], patient: str) -> bool:
         """Whether an examination of the same number stands, not taken back, under another patient."""
-        newest = {one.exam: one.id for one in seen if one.patient != patient}
-        return any(_stands(self._store.bundle(row)) for row in newest.values())
+        others = [one for one in seen if one.patient != patient]
+        newest = {one.exam: one.id for one in others}
+        # of very many not all were looked at, and one of them stands
+        return len(others) == MANY_OTHERS or any(_stands(self._store.bundle(row)) for row in newest.values())
 
 
 def _same(one: Seen, identity: str, wish: Wish) -> bool:

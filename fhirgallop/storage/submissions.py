@@ -5,8 +5,9 @@ from __future__ import annotations
 from collections.abc import Callable, Iterator
 from contextlib import contextmanager
 from dataclasses import dataclass, field, fields
+from typing import Final
 
-from sqlalchemy import Connection, Engine, bindparam, insert, or_, select
+from sqlalchemy import Connection, Engine, bindparam, insert, select, union_all
 from sqlalchemy.exc import IntegrityError, SQLAlchemyError
 
 from fhirgallop.storage.tables import submissions
@@ -68,9 +69,18 @@ Also = Callable[[Connection, int], None]
 _NAMES = tuple(one.name for one in fields(Submission))
 _COLUMNS = [submissions.c[name] for name in _NAMES]
 _SEEN_NAMES = tuple(one.name for one in fields(Seen))
+MANY_OTHERS: Final = 20
 # made once: every examination asks and adds, and to make a statement costs as much as to run it
-_SEEN = select(*(submissions.c[name] for name in _SEEN_NAMES)).where(
-    or_(submissions.c.exam == bindparam("same_exam"), submissions.c.number == bindparam("same_number"))
+_SEEN_COLUMNS = [submissions.c[name] for name in _SEEN_NAMES]
+_SEEN = union_all(
+    select(*_SEEN_COLUMNS).where(submissions.c.exam == bindparam("same_exam")),
+    # a sender whose numbers start anew with each patient has very many of one number
+    select(
+        select(*_SEEN_COLUMNS)
+        .where(submissions.c.number == bindparam("same_number"), submissions.c.patient != bindparam("own"))
+        .limit(MANY_OTHERS)
+        .subquery()
+    ),
 )
 _ADD = insert(submissions)
 
@@ -93,16 +103,22 @@ class Submissions:
             row = connection.execute(query).one_or_none()
         return Submission(*row) if row else None
 
-    def seen(self, exam: str, number: str) -> list[Seen]:
-        """Every version of an examination, in every way of writing it, and of others with the same number.
+    def seen(self, exam: str, number: str, patient: str) -> list[Seen]:
+        """Every version of an examination, and at most MANY_OTHERS of other patients' with the same number.
 
-        In the order in which they came.
+        In every way of writing it, in the order in which they came.
+
+        Args:
+            exam: identity of the examination.
+            number: digest of its number.
+            patient: digest of its patient.
 
         Raises:
             StorageError: the database failed.
         """
+        asked = {"same_exam": exam, "same_number": number, "own": patient}
         with told(), self._engine.connect() as connection:
-            rows = connection.execute(_SEEN, {"same_exam": exam, "same_number": number}).all()
+            rows = connection.execute(_SEEN, asked).all()
         return sorted((Seen(*row) for row in rows), key=lambda one: one.id)
 
     def bundle(self, row: int) -> bytes | None:

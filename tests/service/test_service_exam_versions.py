@@ -164,6 +164,29 @@ def test_the_same_number_under_another_patient_is_pointed_out_until_it_is_settle
     assert rules(client.post(WHERE, json=example(exam={"number": "E-other"}))) == []
 
 
+def test_a_number_of_very_many_patients_is_pointed_out_without_looking_at_all(
+    application: FastAPI, client: Any, example: Any, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    """A clinic that counts each patient's visits from 1: what an examination costs must not grow with it."""
+    store = application.state.exams._examinations._store
+    looked: list[int] = []
+    bundle = store.bundle
+    monkeypatch.setattr(store, "bundle", lambda row: looked.append(row) or bundle(row))
+    for number in range(22):
+        told = client.post(WHERE + "&review=none", json=example(patient={"number": f"P-{number}"}))
+        assert rules(told) == (["exam-number-other-patient"] if number else [])
+    assert len(store.seen("urn:uuid:none", _number(store), "nobody")) == 20
+    looked.clear()
+    client.post(WHERE, json=example(patient={"number": "P-99"}))
+    assert looked == []
+
+
+def _number(store: Any) -> str:
+    with store._engine.connect() as connection:
+        found: str = connection.scalars(select(submissions.c.number)).first()
+    return found
+
+
 def test_all_or_nothing(application: FastAPI, client: Any, example: Any, monkeypatch: Any) -> None:
     """What breaks while the resources are written leaves no examination, and no answer under the key."""
     key = {"Idempotency-Key": "a-key-of-mine"}

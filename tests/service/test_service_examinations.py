@@ -85,7 +85,7 @@ def test_endless_changes_by_others_are_given_up(example: Any, root: Path, tmp_pa
         def latest(self, exam: str, edition: str, *, snomed: bool) -> Submission | None:
             return None
 
-        def seen(self, exam: str, number: str) -> list[Seen]:
+        def seen(self, exam: str, number: str, patient: str) -> list[Seen]:
             return []
 
         def add(self, submission: Submission, *also: Also) -> bool:
