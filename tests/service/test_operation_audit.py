@@ -256,3 +256,20 @@ def test_a_failed_sign_in_is_kept_with_no_token(tmp_path: Path, root: Path) -> N
     assert (event["action"], event["outcome"]) == ("E", "4")
     assert event["agent"][0]["network"]["address"] == "testclient"
     assert token[-16:] not in json.dumps(event)
+
+
+def test_each_record_of_a_list_leaves_its_own_event(application: FastAPI, client: Any, example: Any) -> None:
+    records = [example(), example(exam={"number": "E-2"}, heart={"s4": "thundering"})]
+    told = client.post(WHERE, json=records).json()
+    assert [one["status"] for one in told["results"]] == ["coded", "refused"]
+    well, refused = trail(application)
+    for event in (well, refused):
+        sound(event)
+    assert (well["action"], well["outcome"]) == ("C", "0")
+    assert (refused["outcome"], refused["outcomeDesc"]) == ("4", "HTTP 422")
+    assert refused["contained"][0]["issue"][0]["severity"] == "error"
+    exams = [e["what"]["identifier"]["value"] for e in well["entity"] if "role" in e]
+    assert any(value.startswith("urn:uuid:") for value in exams), "the examination by its identity"
+    changed = client.post(WHERE, json=example(heart={"s4": "no"}))
+    assert changed.status_code == 200
+    assert trail(application)[-1]["action"] == "U", "an amendment updates"
