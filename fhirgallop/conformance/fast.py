@@ -61,8 +61,7 @@ def settle(
 
 def _accepted(resource: dict[str, Any], kind: str, known: Registry) -> forms.Ready | None:
     """The form that a single resource was found to have; None when it is in doubt."""
-    declared, implied = _asked(resource, kind)
-    ready = forms.fitting(known, kind, declared, implied, tuple(resource))
+    ready = forms.fitting(known, _what(resource, kind), tuple(resource))
     if ready is None or not ready.is_valid(resource):
         return None
     if ready.components and not codes_apart(resource):
@@ -70,16 +69,16 @@ def _accepted(resource: dict[str, Any], kind: str, known: Registry) -> forms.Rea
     return None if ready.checks and not all(c(resource[key]) for key, c in ready.checks) else ready
 
 
-def _asked(resource: dict[str, Any], kind: str) -> tuple[tuple[str, ...], tuple[str, ...]]:
-    """The profiles that a resource declares, and those that its vital-signs codes ask for."""
+def _what(resource: dict[str, Any], kind: str) -> forms.What:
+    """The type of a resource, the profiles it declares, and those that its vital-signs codes ask for."""
     declared: tuple[str, ...] = ()
     if "meta" in resource and "profile" in resource["meta"]:
         declared = tuple(resource["meta"]["profile"])
     if kind == "Observation":
         for coding in resource["code"].get("coding", ()):
             if coding.get("code") in VITAL_SIGNS:
-                return declared, tuple(dict.fromkeys(profiles_for(resource)))
-    return declared, ()
+                return kind, declared, tuple(dict.fromkeys(profiles_for(resource)))
+    return kind, declared, ()
 
 
 def _bundle(value: dict[str, Any], known: Registry, text: bytes | None) -> list[str] | None:
@@ -95,11 +94,12 @@ def _bundle(value: dict[str, Any], known: Registry, text: bytes | None) -> list[
     for index, entry in enumerate(entries):
         resource = entry["resource"]
         kind = urls[entry["fullUrl"]] = resource["resourceType"]
-        what = (kind, *_asked(resource, kind))
-        if what in alike:
-            alike[what].append(index)
-        else:
+        what = _what(resource, kind)
+        places = alike.get(what)
+        if places is None:
             alike[what] = [index]
+        else:
+            places.append(index)
         if "text" not in resource and kind not in unasked:
             missing.append(f"Bundle.entry[{index}].resource")
     if len(urls) != len(entries) or len(alike) > _MAX_KINDS:

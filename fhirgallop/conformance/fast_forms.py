@@ -112,14 +112,12 @@ def bundle_head(known: Registry) -> Valid:
 
 
 @lru_cache(maxsize=4096)
-def fitting(
-    known: Registry, kind: str, declared: tuple[str, ...], implied: tuple[str, ...], keys: tuple[str, ...]
-) -> Ready | None:
+def fitting(known: Registry, what: What, keys: tuple[str, ...]) -> Ready | None:
     """The form of a resource, if these keys may stand together at its root: settled once for a set of keys.
 
     None too for a type, or a profile, that no schema can settle.
     """
-    found = form(known, (kind, declared, implied))
+    found = form(known, what)
     if found is None or not found[0].is_valid(dict.fromkeys(keys)):
         return None
     _, validator, fit = found

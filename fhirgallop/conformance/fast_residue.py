@@ -46,10 +46,10 @@ def _zone(moment: str) -> str:
 
 def codes_apart(observation: Mapping[str, Any]) -> bool:
     """No component has a code of the Observation itself, which has a value (obs-7)."""
-    own = {coding.get("code") for coding in observation["code"].get("coding", ())}
+    own = [coding["code"] for coding in observation["code"].get("coding", ()) if "code" in coding]
     for component in observation["component"]:
         for coding in component["code"].get("coding", ()):
-            if coding.get("code") in own:
+            if "code" not in coding or coding["code"] in own:
                 return False
     return True
 

@@ -108,8 +108,9 @@ class SchemaBuilder:
         for key, child in definition.keys.items() if definition else ():
             nested = self.edition.type(child.type_name)
             if child.type_name == "Reference":
-                if child.type.targets:
-                    plan[key] = frozenset(self.kinds(child.type.targets))
+                allowed = frozenset(self.kinds(child.type.targets))
+                if allowed < self.edition.resources:  # else it may lead anywhere
+                    plan[key] = allowed
             elif nested is not None and nested.kind == "nested" and nested.name not in inside:
                 deeper = self.targets(nested.name, inside | {nested.name})
                 if deeper:
