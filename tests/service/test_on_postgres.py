@@ -59,6 +59,27 @@ def test_the_answers_are_the_same(
     assert first == second
 
 
+def test_a_database_that_is_away_is_told_and_got_over_by_itself(
+    both: tuple[TestClient, TestClient], postgres_server: Any, example: Callable[..., Any]
+) -> None:
+    speaking = both[1]
+    first = speaking.post(URL, json=example())
+    assert first.status_code == 200
+    postgres_server.stop()
+    try:
+        for answer in (speaking.post(URL, json=example(heart={"s4": "no"})), speaking.get("/ready")):
+            assert answer.status_code == 503
+        refused = speaking.post(URL, json=example(heart={"s4": "no"}))
+        assert refused.json()["resourceType"] == "OperationOutcome"
+        assert speaking.get("/health").status_code == 200
+    finally:
+        postgres_server.start()
+    assert speaking.get("/ready").status_code == 200
+    assert speaking.post(URL, json=example()).json()["bundle"] == first.json()["bundle"]
+    amended = speaking.post(URL, json=example(heart={"s4": "no"}))
+    assert amended.status_code == 200
+
+
 def test_odd_text_is_answered_and_breaks_nothing(
     both: tuple[TestClient, TestClient], hook_call: Callable[..., Any]
 ) -> None:
