@@ -31,6 +31,7 @@ from fhirgallop.reasoning.rulebook import Rulebook
 from fhirgallop.service.examinations import BusyError
 from fhirgallop.service.metrics import Metrics
 from fhirgallop.storage.hooks import HookStore, KeptCard, KeptFeedback, KeptMemory
+from fhirgallop.storage.submissions import Also
 
 log: Final = logging.getLogger("fhirgallop.service")
 
@@ -66,6 +67,7 @@ class _Asked:
     encounter: str
     instance: str
     client: str
+    also: tuple[Also, ...]
 
 
 class HookDesk:
@@ -86,7 +88,7 @@ class HookDesk:
         self._metrics = metrics
 
     def answer(
-        self, service: Service, call: Call, draft: Mapping[str, Any] | None, client: str
+        self, service: Service, call: Call, draft: Mapping[str, Any] | None, client: str, *also: Also
     ) -> tuple[dict[str, Any], list[Issue]]:
         """The answer to one call, with its cards; with an issue that is an error, none.
 
@@ -95,6 +97,7 @@ class HookDesk:
             call: a call without faults.
             draft: the draft examination, where the hook brings one.
             client: name of the CDS client; empty where there is no authorisation.
+            also: what is kept in one transaction with the cards, where cards are kept.
 
         Raises:
             BusyError: other requests kept changing what is remembered of this patient.
@@ -110,7 +113,7 @@ class HookDesk:
         asked = _Asked(
             service, call, held, now, patient,
             visit, digest("user", visit, call.user),
-            digest("instance", service.id, patient, call.instance), client,
+            digest("instance", service.id, patient, call.instance), client, also,
         )  # fmt: skip
         for _ in range(_TRIES):
             found = self._shown(asked)
@@ -141,6 +144,7 @@ class HookDesk:
                 instance=asked.instance,
                 before=_bytes(before),
                 cards=[_kept(one, asked) for one in shown],
+                also=asked.also,
             )
             if not stored:
                 return None

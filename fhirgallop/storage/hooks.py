@@ -12,7 +12,7 @@ from dataclasses import dataclass, fields
 from sqlalchemy import Connection, Engine, and_, insert, select, update
 from sqlalchemy.exc import IntegrityError
 
-from fhirgallop.storage.submissions import told
+from fhirgallop.storage.submissions import Also, told
 from fhirgallop.storage.tables import hook_cards, hook_feedback, hook_instances, hook_memories
 
 _AT_ONCE = 500
@@ -95,12 +95,19 @@ class HookStore:
         return found
 
     def keep(
-        self, memory: KeptMemory, *, instance: str = "", before: bytes = b"", cards: Sequence[KeptCard] = ()
+        self,
+        memory: KeptMemory,
+        *,
+        instance: str = "",
+        before: bytes = b"",
+        cards: Sequence[KeptCard] = (),
+        also: Sequence[Also] = (),
     ) -> bool:
         """Stores a patient's memory as the version after `memory.version`, with the cards given out.
 
         False when another request changed it first; then nothing is kept. Cards and instances that are
-        already known stay as they were.
+        already known stay as they were. What is to be kept `also` comes last in the same transaction, with 0
+        for a row: it is not called where nothing is kept.
         """
         try:
             with told(), self._engine.begin() as connection:
@@ -111,6 +118,8 @@ class HookStore:
                     row = {"instance": instance, "patient": memory.patient, "memory": before, "at": at}
                     connection.execute(insert(hook_instances).values(**row))
                 _add_cards(connection, cards)
+                for one in also:
+                    one(connection, 0)
         except IntegrityError:
             return False
         return True

@@ -206,7 +206,8 @@ def _cards(request: Request, service: Service, call: Call, draft: Mapping[str, A
     if has_errors(issues := call.faults(service)):
         raise _refused(issues)
     with _busy_told():
-        answer, issues = _desk(request).answer(service, call, draft, request.state.caller.name)
+        client = request.state.caller.name
+        answer, issues = _desk(request).answer(service, call, draft, client, audit.kept(request))
     if has_errors(issues):
         raise _refused(issues)
     return answers.json_answer(answer)
