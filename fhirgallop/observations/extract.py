@@ -9,7 +9,7 @@ from __future__ import annotations
 
 import uuid
 from collections import Counter
-from collections.abc import Mapping
+from collections.abc import Collection, Mapping
 from dataclasses import dataclass, field
 from decimal import Decimal
 from typing import Any, Final
@@ -37,7 +37,11 @@ Observation = dict[str, Any]
 
 
 def extract(
-    response: dict[str, Any], questionnaire: dict[str, Any], *, edition: Edition = "R4"
+    response: dict[str, Any],
+    questionnaire: dict[str, Any],
+    *,
+    edition: Edition = "R4",
+    beside: Collection[str] = (),
 ) -> tuple[list[Observation], list[Issue]]:
     """The Observations that a completed form's answers are, and everything noticed.
 
@@ -49,8 +53,9 @@ def extract(
         response: QuestionnaireResponse, with exact decimals.
         questionnaire: the Questionnaire it answers, with codes and extraction flags.
         edition: FHIR edition of the Observations.
+        beside: other ways of extraction (`templateExtract`) that the caller sees to.
     """
-    by_link, issues = plans(questionnaire)
+    by_link, issues = plans(questionnaire, beside)
     extraction = _Extraction(by_link, edition, issues)
     extraction.judge(response)
     if has_errors(issues):

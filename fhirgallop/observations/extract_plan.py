@@ -6,7 +6,7 @@ observationExtract (boolean, or a relationship to the parent's Observation) and 
 
 from __future__ import annotations
 
-from collections.abc import Mapping, Sequence
+from collections.abc import Collection, Mapping, Sequence
 from dataclasses import dataclass, field
 from typing import Any, Final
 
@@ -49,9 +49,14 @@ class Plan:
     text: str = ""
 
 
-def plans(questionnaire: Mapping[str, Any]) -> tuple[dict[str, Plan], list[Issue]]:
-    """The plan of every item by linkId, and what is wrong with the form or not supported in it."""
-    planner = _Planner()
+def plans(
+    questionnaire: Mapping[str, Any], beside: Collection[str] = ()
+) -> tuple[dict[str, Plan], list[Issue]]:
+    """The plan of every item by linkId, and what is wrong with the form or not supported in it.
+
+    The ways of extraction in `beside` are seen to elsewhere.
+    """
+    planner = _Planner(beside)
     relation = planner.relation(questionnaire, "Questionnaire", "")
     categories = _categories(questionnaire)
     planner.other_ways(questionnaire, "Questionnaire")
@@ -60,7 +65,8 @@ def plans(questionnaire: Mapping[str, Any]) -> tuple[dict[str, Plan], list[Issue
 
 
 class _Planner:
-    def __init__(self) -> None:
+    def __init__(self, beside: Collection[str]) -> None:
+        self._beside = beside
         self.found: dict[str, Plan] = {}
         self.issues: list[Issue] = []
 
@@ -127,6 +133,8 @@ class _Planner:
         for extension in mappings(element.get("extension")):
             if extension.get("url") in _OTHER_WAYS:
                 name = str(extension["url"]).rpartition("sdc-questionnaire-")[2]
+                if name in self._beside:
+                    continue
                 text = f"Extraction by {name} is not supported; only the observation-based way is."
                 self._note("warning", "not-supported", "sdc-way-not-supported", text, link)
         if mappings(element.get("modifierExtension")):

@@ -1,4 +1,4 @@
-"""QuestionnaireResponse/$extract: the Observations that a form's answers are; nothing is stored.
+"""QuestionnaireResponse/$extract: the resources that a form's answers are; nothing is stored.
 
 Source: HL7 Structured Data Capture (SDC) 4.0.0, operation QuestionnaireResponse-extract. What is found comes
 as a transaction Bundle, to be sent wherever it shall be kept.
@@ -7,7 +7,7 @@ as a transaction Bundle, to be sent wherever it shall be kept.
 from __future__ import annotations
 
 import uuid
-from collections.abc import Mapping
+from collections.abc import Mapping, Sequence
 from datetime import datetime
 from typing import Any, Final
 
@@ -22,6 +22,7 @@ from fhirgallop.observations.provenance import CONVERSION_TAG
 from fhirgallop.outcome import has_errors, operation_outcome, ordered
 from fhirgallop.service.answers import RefusalError, refusal
 from fhirgallop.service.fhir import parameters
+from fhirgallop.service.fhir.form_templates import WAYS, from_templates
 from fhirgallop.service.fhir.parameters import Given, Part, one
 from fhirgallop.version import VERSION
 
@@ -45,11 +46,18 @@ def extracted(given: Given, edition: Edition, now: datetime) -> bytes:
         said = "Send the response as the parameter questionnaire-response."
         raise refusal(400, "required", "extract-response", said)
     questionnaire = one(given, "questionnaire") or _contained(response)
-    observations, issues = extract(response, questionnaire, edition=edition)
+    observations, issues = extract(response, questionnaire, edition=edition, beside=WAYS)
+    entries: list[dict[str, Any]] = []
+    if not has_errors(issues):
+        entries, more = from_templates(response, questionnaire, edition)
+        issues += more
+    if entries and not observations:
+        issues = [issue for issue in issues if issue.rule != "sdc-nothing-to-extract"]
     bundle = None
-    if observations and not has_errors(issues):
+    if (observations or entries) and not has_errors(issues):
         bundle = transaction({identity_of(made): made for made in observations})
-        bundle["entry"].append(_provenance(response, observations, edition, now))
+        bundle["entry"] += entries
+        bundle["entry"].append(_provenance(response, bundle["entry"], edition, now))
         issues += validate(bundle, edition)
     issues = ordered(issues)
     if has_errors(issues):
@@ -72,11 +80,11 @@ def _contained(response: Mapping[str, Any]) -> dict[str, Any]:
 
 
 def _provenance(
-    response: Mapping[str, Any], observations: list[dict[str, Any]], edition: Edition, now: datetime
+    response: Mapping[str, Any], entries: Sequence[Mapping[str, Any]], edition: Edition, now: datetime
 ) -> dict[str, Any]:
     """Where the Observations come from; the same response gives the same one."""
     tag = str(uuid.uuid5(_NAMESPACE, fhirjson.write([edition, response]).decode()))
-    targets = [identity_of(made) for made in observations]
+    targets = [str(entry["fullUrl"]) for entry in entries]
     author = response.get("author")
     agents = [{"type": _AUTHOR, "who": author}] if isinstance(author, Mapping) else []
     found: dict[str, Any] = {
@@ -86,7 +94,7 @@ def _provenance(
         "target": [{"reference": target} for target in targets],
     }
     if EDITIONS[edition].provenance_names_patient:
-        found["patient"] = observations[0]["subject"]
+        found["patient"] = response["subject"]
     found["recorded"] = instant(now)
     found["agent"] = [*agents, {"type": _ASSEMBLER, "who": {"display": f"fhirgallop {VERSION}"}}]
     found["entity"] = [{"role": "source", "what": _what(response)}]
