@@ -4,8 +4,9 @@ from __future__ import annotations
 
 from collections.abc import Iterator, Mapping
 from contextlib import contextmanager
+from itertools import count
 from pathlib import Path
-from typing import TYPE_CHECKING, Annotated, Any
+from typing import TYPE_CHECKING, Annotated, Any, Final
 
 import typer
 
@@ -16,7 +17,9 @@ if TYPE_CHECKING:
     from sqlalchemy import Connection, Engine
 
     from fhirgallop.storage.backup import Progress
-    from fhirgallop.storage.migrations.stored import Stored
+    from fhirgallop.storage.migrations.stored import Keep, Stored
+
+_SAID_EVERY: Final = 1000
 
 app = typer.Typer(
     help="The database: upgrade, backup, restore, prune, and the deletion of one patient's data.",
@@ -54,12 +57,24 @@ def upgrade(database: Database = None) -> None:
     from fhirgallop.storage.tables import SCHEMA_VERSION  # noqa: PLC0415
 
     with opened(database, today=False) as engine:
-        found = carrying.upgrade(engine, _keep_resources)
+        found = carrying.upgrade(engine, _counted(_keep_resources))
         if found == SCHEMA_VERSION:
             typer.echo(f"the tables are of version {found} already")
             return
         clear_away(engine)
     typer.echo(f"carried forward from version {found} to {SCHEMA_VERSION}")
+
+
+def _counted(keep: Keep) -> Keep:
+    """Says now and then how far it is."""
+    done = count(1)
+
+    def counting(connection: Connection, stored: Stored) -> None:
+        keep(connection, stored)
+        if (number := next(done)) % _SAID_EVERY == 0:
+            complain(f"{number:,} examinations")
+
+    return counting
 
 
 def _keep_resources(connection: Connection, stored: Stored) -> None:
