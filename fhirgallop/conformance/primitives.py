@@ -9,7 +9,7 @@ from __future__ import annotations
 import re
 from collections.abc import Iterator
 from decimal import Decimal
-from functools import cache
+from functools import cache, lru_cache
 from math import isfinite
 
 from fhirgallop.conformance.editions import Edition
@@ -109,6 +109,7 @@ def _pattern(text: str) -> re.Pattern[str]:
     return re.compile(text, re.ASCII)
 
 
+@lru_cache(maxsize=512)
 def _limit(name: str, edition: Edition) -> int:
     """The longest text of a type: its own limit or that of the type it specialises."""
     for step in edition.ancestors(name):

@@ -9,6 +9,7 @@ from __future__ import annotations
 
 from collections.abc import Mapping
 from dataclasses import dataclass, field
+from functools import lru_cache
 from typing import Any, Literal
 
 from fhirgallop.conformance.editions.model import Binding, Invariant, TypeRef
@@ -54,6 +55,7 @@ class Profile:
     root: Rule
 
 
+@lru_cache(maxsize=512)
 def read_profile(url: str, registry: Registry) -> Profile | None:
     """The tree of a known profile; None when it, or one it derives from, is not known or makes a circle."""
     return _read(url.partition("|")[0], registry, frozenset())
