@@ -35,6 +35,8 @@ State = Literal["waiting", "sending", "delivered", "failed", "dropped"]
 RECORD_SYSTEM: Final = "record-system"
 _OPEN: Final = ("waiting", "sending")
 _REASON_LENGTH: Final = 500
+# rows looked at for one that may be taken: mostly one of the first; all where many wait behind others
+_AMONG: Final = (50, 2000, 1_000_000)
 
 
 def enqueue(
@@ -175,8 +177,11 @@ class Outbox:
                 return None
             probe = failures >= after
             connection.execute(self._expired(now))
-            row = connection.execute(self._taken(worker, now, now + lease, probe=probe)).one_or_none()
-            if row is None:
+            for among in _AMONG:
+                taken = self._taken(worker, now, now + lease, probe=probe, among=among)
+                if (row := connection.execute(taken).one_or_none()) is not None:
+                    break
+            else:
                 return None
             if probe and not self._may_probe(connection, open_until, now + lease):
                 connection.rollback()
@@ -297,17 +302,24 @@ class Outbox:
         mine = outbox.c.destination == self._destination
         return update(outbox).where(gone, mine).values(state="waiting", due=now, worker="", lease=0)
 
-    def _taken(self, worker: str, now: int, until: int, *, probe: bool) -> Any:
-        """One statement, so that two workers cannot take the same row; PostgreSQL passes over locked rows."""
-        before = outbox.alias("before")
-        # one that is held back itself holds back nobody
-        first = ~exists().where(_earlier(before, outbox), before.c.state.in_(_OPEN), ~_is_held(before))
-        order = (outbox.c.due, outbox.c.id)
+    def _taken(self, worker: str, now: int, until: int, *, probe: bool, among: int) -> Any:
+        """One statement, so that no two workers take the same row; PostgreSQL passes over locked ones.
+
+        Only the first `among` rows that are due are looked at closely, whatever a planner may think.
+        """
+        order = (outbox.c.attempts, outbox.c.due, outbox.c.id) if probe else (outbox.c.due, outbox.c.id)
+        due = select(outbox.c.id).where(
+            outbox.c.state == "waiting", outbox.c.due <= now, outbox.c.destination == self._destination
+        )
+        # the patient's oldest that is open; one that is held back itself holds back nobody
+        mine = outbox.alias("mine")
+        same = and_(mine.c.patient == outbox.c.patient, mine.c.destination == outbox.c.destination)
+        oldest = select(func.min(mine.c.id)).where(same, mine.c.state.in_(_OPEN), ~_is_held(mine))
         chosen = (
             select(outbox.c.id)
-            .where(outbox.c.state == "waiting", outbox.c.due <= now)
-            .where(outbox.c.destination == self._destination, first, ~_is_held(outbox))
-            .order_by(*((outbox.c.attempts, *order) if probe else order))
+            .where(outbox.c.id.in_(due.order_by(*order).limit(among)))
+            .where(outbox.c.state == "waiting", outbox.c.id == oldest.scalar_subquery())
+            .order_by(*order)
             .limit(1)
             .with_for_update(skip_locked=True)
             .scalar_subquery()
@@ -334,17 +346,11 @@ class Outbox:
         connection.execute(rests.values(open_until=until))
 
 
-def _earlier(one: NamedFromClause, other: NamedFromClause) -> ColumnElement[bool]:
-    """Of two deliveries of the same patient, that one was noted first."""
-    return and_(
-        one.c.patient == other.c.patient, one.c.destination == other.c.destination, one.c.id < other.c.id
-    )
-
-
 def _is_held(row: NamedFromClause) -> ColumnElement[bool]:
     """Whether an earlier version of the same examination has failed."""
-    stuck = outbox.alias(f"stuck_before_{row.name}")
-    return exists().where(_earlier(stuck, row), stuck.c.state == "failed", stuck.c.exam == row.c.exam)
+    stuck = outbox.alias("stuck")
+    same = and_(stuck.c.patient == row.c.patient, stuck.c.destination == row.c.destination)
+    return exists().where(same, stuck.c.state == "failed", stuck.c.exam == row.c.exam, stuck.c.id < row.c.id)
 
 
 _SHOWN: Final = tuple(outbox.c[name] for name in Delivery.__dataclass_fields__)

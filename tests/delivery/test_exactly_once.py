@@ -158,6 +158,7 @@ def environment(folder: Path, address: str, base: str) -> dict[str, str]:
         "MAPS": str(maps), "DATABASE": address, "DELIVER_TO": base, "LOOPBACK_HTTP": "true", "RATE": "0",
         "LOG_LEVEL": "warning", "DELIVERY_TIMEOUT": "1", "DELIVERY_WAIT": "0.05", "DELIVERY_WAIT_MOST": "1",
         "DELIVERY_REST": "0.2", "DELIVERY_TRIES": "1000", "DELIVERY_WORKERS": "3", "FREE_DISK": "0",
+        "DURABLE": "false",
     }  # fmt: skip
     return {**os.environ, **{f"FHIRGALLOP_{name}": value for name, value in settings.items()}}
 

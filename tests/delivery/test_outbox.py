@@ -7,7 +7,7 @@ from collections.abc import Callable
 from concurrent.futures import ThreadPoolExecutor
 
 import pytest
-from sqlalchemy import Engine, delete, event, select
+from sqlalchemy import Engine, delete, event, insert, select
 
 from fhirgallop.storage.engine import open_database
 from fhirgallop.storage.outbox import Claim, Outbox, Rest, Settled
@@ -292,3 +292,24 @@ def test_a_full_disk_keeps_the_outbox_as_it_was(tmp_path: object, put: Put) -> N
     assert box.tally().counts["sending"] == 1
     assert box.settle(claim, DELIVERED, None), "with less to write it goes on"
     engine.dispose()
+
+
+def test_one_that_may_go_is_found_behind_thousands_that_wait_for_others(
+    sqlite_engine: Engine, put: Put
+) -> None:
+    box = Outbox(sqlite_engine)
+    put(sqlite_engine, "first")
+    claim = take(box)
+    assert claim
+    behind = [
+        {"destination": "record-system", "submission": 1, "exam": f"e{number}", "patient": "p",
+         "state": "waiting", "attempts": 0, "created": 1, "due": 1, "worker": "", "lease": 0, "reason": ""}
+        for number in range(2100)
+    ]  # fmt: skip
+    with sqlite_engine.begin() as connection:
+        connection.execute(insert(outbox), behind)
+    assert take(box) is None
+    put(sqlite_engine, "other", patient="q", at=2)
+    found = take(box)
+    assert found
+    assert found.exam == "other"
