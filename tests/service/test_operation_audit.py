@@ -144,9 +144,13 @@ def test_what_breaks_in_the_trail_itself_is_no_answer_either(
     application: FastAPI, client: Any, hook_call: Any, monkeypatch: pytest.MonkeyPatch
 ) -> None:
     monkeypatch.setattr("fhirgallop.service.audit.audit_event", lambda *_, **__: 1 / 0)
-    answer = client.post("/cds-services/exam-review-patient-view", json=hook_call())
-    assert answer.status_code == 503
-    assert answer.json()["issue"][0]["details"]["coding"][0]["code"] == "audit-failed"
+    for answer, status, rule in (
+        (client.get("/cds-services"), 503, "audit-failed"),
+        # cards are kept in one transaction with their event
+        (client.post("/cds-services/exam-review-patient-view", json=hook_call()), 500, "service-broke"),
+    ):
+        assert (answer.status_code, set(answer.json())) == (status, {"resourceType", "issue"})
+        assert answer.json()["issue"][0]["details"]["coding"][0]["code"] == rule
     assert client.post("/cds-services/exam-review-patient-view", json={}).status_code == 400
 
 
