@@ -3,7 +3,10 @@
 from __future__ import annotations
 
 import json
+import sqlite3
 from collections.abc import Callable
+from contextlib import closing
+from pathlib import Path
 from typing import Any
 
 import pytest
@@ -152,3 +155,19 @@ def test_rules_and_answers_are_counted(hooked: TestClient, hook_call: Make) -> N
     rule = "s4.in-atrial-fibrillation"
     assert f'fhirgallop_rules_total{{fate="shown",rule="{rule}"}} 1.0' in page
     assert f'fhirgallop_card_answers_total{{outcome="overridden",rule="{rule}"}} 1.0' in page
+
+
+def test_without_its_audit_event_no_card_is_kept_or_shown(
+    hooked: TestClient, hook_call: Make, tmp_path: Path
+) -> None:
+    call = hook_call()
+    with closing(sqlite3.connect(tmp_path / "hooks.sqlite3")) as database:
+        database.execute("ALTER TABLE audit RENAME TO away")
+        answer = hooked.post(VIEW, json=call)
+        assert answer.status_code == 503
+        assert "cards" not in answer.json()
+        for table in ("hook_cards", "hook_memories", "hook_instances"):
+            assert database.execute(f"SELECT count(*) FROM {table}").fetchone() == (0,)
+        database.execute("ALTER TABLE away RENAME TO audit")
+        assert hooked.post(VIEW, json=call).json()["cards"]
+        assert database.execute("SELECT count(*) FROM audit").fetchone() == (1,), "one event, with the cards"
