@@ -153,7 +153,7 @@ def _manners(url: URL, durable: bool) -> dict[str, Any]:
     return {
         **commit,
         "connect_timeout": _BUSY_SECONDS, "application_name": "fhirgallop", "keepalives_idle": 30,
-        "keepalives_interval": 10, "keepalives_count": 3,
+        "keepalives_interval": 10, "keepalives_count": 3, "tcp_user_timeout": 30_000,
     }  # fmt: skip
 
 
