@@ -260,9 +260,14 @@ def test_ch_70_several_keys_of_one_name_are_refused(
 def test_ch_70_the_kind_of_key_counts_too(
     serving: Any, place: Any, ehr: Any, new_signer: Any, cds_claims: Any, bearer: Any
 ) -> None:
-    """An RSA key of the same name does not stand in the way of the elliptic one."""
-    client = serving(cds_clients={EHR: [place.publish("/k", new_signer(ehr.kid, "RS384"), ehr)]})
-    assert client.get("/cds-services", headers=bearer(ehr.sign(cds_claims()))).status_code == 200
+    """An RSA key and an elliptic one of the same name do not stand in each other's way."""
+    other = new_signer(ehr.kid, "RS384")
+    plain = {name: value for name, value in other.public.items() if name != "alg"}
+    client = serving(cds_clients={EHR: [place.publish("/k", ehr)]})
+    curve = {name: value for name, value in ehr.public.items() if name != "alg"}
+    place.pages["/k"] = (200, {}, json.dumps({"keys": [plain, curve]}).encode())
+    for signer in (ehr, other):
+        assert client.get("/cds-services", headers=bearer(signer.sign(cds_claims()))).status_code == 200
 
 
 def test_ch_70_keys_may_be_changed(
