@@ -156,3 +156,17 @@ def test_more_kinds_of_entries_than_are_compiled_for_one_bundle_are_walked() -> 
         entry["resource"]["meta"] = {"profile": [url]}
         value["entry"].append(entry)
     assert fast.settle(value, known) is None
+
+
+@pytest.mark.parametrize("edition", EDITIONS)
+@pytest.mark.parametrize(
+    "url", ["urn:uuid:", "urn:uuid:1", "urn:uuid:a:b", "urn:uuid:A", "urn:oid:1.2.3", "x:"]
+)
+def test_both_passes_agree_on_names_that_are_no_uuid(edition: str, url: str) -> None:
+    value = bundle()
+    value["entry"][PLACE]["fullUrl"] = url
+    settled(value, edition)
+    for reference in ({"subject": {"reference": url}}, {"hasMember": [{"reference": url}]}):
+        referring = deepcopy(value)
+        referring["entry"][PLACE + 1]["resource"].update(reference)
+        settled(referring, edition)
