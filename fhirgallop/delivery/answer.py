@@ -21,6 +21,7 @@ _LATER: Final[Mapping[int, bool]] = {408: True, 409: True, 412: True, 425: True,
 _WELL: Final = frozenset({409, 412})
 _MOST_KEPT: Final = 65_536
 _MOST_ISSUES: Final = 5
+_LONGEST: Final = 500
 _CODE: Final = re.compile(r"[a-z-]{1,40}")
 # element names and indices below a type that we send; nothing that could carry a value of the record
 _NAME: Final = r"\.[a-z][A-Za-z]{0,39}(?:\[[0-9]{1,4}\])?"
@@ -105,12 +106,15 @@ def _done(answer: Answer, entries: int) -> Verdict:
 
 
 def _result(entry: Any) -> dict[str, str]:
-    """Status, location and etag of one entry."""
+    """Status, location and etag of one entry; what could not be shown to a person is left out."""
     response = entry.get("response") if isinstance(entry, dict) else None
     said = response if isinstance(response, dict) else {}
-    found = {name: said[name] for name in ("location", "etag") if isinstance(said.get(name), str)}
-    status = said.get("status")
-    return {"status": status if isinstance(status, str) else "", **found}
+    found = {name: said[name] for name in ("status", "location", "etag") if _is_plain(said.get(name))}
+    return {"status": "", **found}
+
+
+def _is_plain(said: Any) -> bool:
+    return isinstance(said, str) and said.isprintable() and len(said) <= _LONGEST
 
 
 def _refusal(answer: Answer) -> tuple[bytes, str]:

@@ -38,10 +38,16 @@ def test_a_whole_transaction_response_is_delivered_and_each_entrys_outcome_is_ke
     assert kept == {
         "status": 200,
         "entry": [
-            {"location": "Observation/0/_history/1", "etag": 'W/"1"', "status": "201 Created"},
-            {"location": "Observation/1/_history/1", "etag": 'W/"1"', "status": "200"},
+            {"status": "201 Created", "location": "Observation/0/_history/1", "etag": 'W/"1"'},
+            {"status": "200", "location": "Observation/1/_history/1", "etag": 'W/"1"'},
         ],
     }
+
+
+def test_what_could_harm_a_terminal_is_not_kept() -> None:
+    odd = {"status": "200", "location": "Observation/1\x1b[2J", "etag": "x" * 501}
+    answered = {**responses(), "entry": [{"response": odd}]}
+    assert json.loads(judge(answer(200, answered), 1).outcome or b"")["entry"] == [{"status": "200"}]
 
 
 @pytest.mark.parametrize(

@@ -252,8 +252,8 @@ def test_what_arrived_while_the_disk_was_full_is_sent_again_and_written_down_lat
     sqlite_engine: Engine, put: Put, way: Callable[..., Way], clock: Clock
 ) -> None:
     """SQLite tells a page limit that is reached as it tells a full disk (SQLITE_FULL)."""
-    answer = b'{"response":{"status":"200","location":"%s"}}' % (b"x" * 400_000)
-    wire = Wire(Answer(200, {}, DONE.body.replace(ENTRY, answer)))
+    large = {"resourceType": "OperationOutcome", "issue": [{"diagnostics": "x" * 60_000}]}
+    wire = Wire(Answer(422, {}, json.dumps(large).encode()), DONE)
     one = way(wire)
     put(sqlite_engine, "a")
     with sqlite_engine.connect() as connection:
