@@ -234,6 +234,7 @@ def check(engine: Any, peer: Any) -> dict[str, int]:
     return {"deliveries": len(noted), "applied": len(events), "of which again": len(events) - len(noted)}
 
 
+@pytest.mark.slow
 @pytest.mark.parametrize("kind", ["sqlite", "postgresql", "two services and three workers"])
 def test_everything_arrives_once_and_in_order(
     kind: str, tmp_path: Path, receiver: Callable[..., Any], request: pytest.FixtureRequest
