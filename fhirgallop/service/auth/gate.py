@@ -141,6 +141,8 @@ def _enough(caller: Caller, need: Need, request: Request) -> None:
     if caller.kind == "system":
         if need.token:
             return
-        if need.does and all(caller.may(type_, does) for type_ in need.types(request) for does in need.does):
+        reaches = [caller.reach(type_, does) for type_ in need.types(request) for does in need.does]
+        # where the address names the type, what is asked for is held against a granular scope one by one
+        if reaches and all(reach.everything if need.to else not reach.nothing for reach in reaches):
             return
     raise forbidden()

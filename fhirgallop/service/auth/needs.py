@@ -25,7 +25,8 @@ class Need:
         cds: a CDS client's own token for this very address.
         token: any valid access token.
         does: letters of SMART scopes that an access token must have, all of them ...
-        to: ... for each of these types; none: for the type that the address names.
+        to: ... for each of these types, without a restriction, for they are written together; none: for the
+            type that the address names, and its handler minds the restrictions.
         roles: a person, or the administrator, with one of these.
     """
 
@@ -50,8 +51,8 @@ class Need:
         request.state.caller = await gate.admit(request, self)
 
     def types(self, request: Request) -> tuple[str, ...]:
-        """The types that the scopes have to name."""
-        return self.to or (request.path_params[_TYPE],)
+        """The types that the scopes have to name; none where no scope is asked for."""
+        return self.to or ((request.path_params[_TYPE],) if self.does else ())
 
 
 def needs(

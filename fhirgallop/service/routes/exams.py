@@ -20,7 +20,6 @@ from fhirgallop.intake.record import LocalRecord
 from fhirgallop.observations.editions import Edition
 from fhirgallop.outcome import Issue, has_errors
 from fhirgallop.service import answers, audit, enclosed, requests
-from fhirgallop.service.auth.caller import Caller, forbidden
 from fhirgallop.service.auth.needs import needs
 from fhirgallop.service.batch_desk import BatchDesk, unreadable
 from fhirgallop.service.exam_desk import BUSY, Ask, ExamDesk, Opinion
@@ -124,7 +123,6 @@ async def post_exams(
     ] = None,
 ) -> Response:
     """Codes what the body holds."""
-    _whole(request)
     requests.only_known(request, _PARAMETERS)
     settings: Settings = request.app.state.settings
     template = request.app.state.shelf.get(map)
@@ -147,13 +145,6 @@ async def post_exams(
     if reply.repeated:
         audit.about(request, action="R", interaction="read", patients=[reply.patient])
     return reply.response()
-
-
-def _whole(request: Request) -> None:
-    """Refuses a token whose rights end at some category: an examination is written whole, or not at all."""
-    caller: Caller = request.state.caller
-    if not all(caller.reach(type_, letter).everything for type_ in WRITTEN for letter in "cu"):
-        raise forbidden()
 
 
 async def _taken(request: Request, wish: Wish, review: Opinion) -> Response:
