@@ -43,13 +43,14 @@ from fhirgallop.service.routes import (
     watching,
     well_known,
 )
-from fhirgallop.service.shelf import keep_versions, load_shelf
+from fhirgallop.service.shelf import Shelf, keep_versions, load_shelf
 from fhirgallop.settings import Settings
 from fhirgallop.storage.batches import Batches
 from fhirgallop.storage.engine import open_database
 from fhirgallop.storage.hooks import HookStore
 from fhirgallop.storage.idempotency import Answers
 from fhirgallop.storage.maps import MapStore
+from fhirgallop.storage.publications import Publications
 from fhirgallop.storage.submissions import Submissions
 from fhirgallop.version import VERSION
 
@@ -101,7 +102,7 @@ def create_app(settings: Settings, clock: Callable[[], datetime] = now) -> FastA
     app.state.settings = settings
     app.state.gate = open_gate(settings, engine, clock)
     app.state.public_keys = public_keys(settings)
-    app.state.shelf = {name: one.template for name, one in shelf.items()}
+    app.state.shelf = Shelf({name: one.template for name, one in shelf.items()}, Publications(engine))
     policy = Policy(shadow=settings.cards_shadow)
     keys = KeyDesk(Answers(engine), clock, settings.idempotency_hours)
     app.state.clock = clock

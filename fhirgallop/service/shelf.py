@@ -1,10 +1,18 @@
-"""The template maps that the service may use: read and checked at its start, and kept version by version."""
+"""The template maps that the service may use: those of the folder, and over them those published at the desk.
+
+Maps of the folder are read and checked at the start. What is published at the desk is in use at once in the
+process that published it, and within a second in every other. Where both have a map of one name, the desk's
+counts: publishing is the later decision, with an author and a reason.
+"""
 
 from __future__ import annotations
 
-from collections.abc import Mapping
+import logging
+import time
+from collections.abc import Callable, Iterator, Mapping
 from dataclasses import dataclass
 from pathlib import Path
+from typing import Final
 
 from fhirgallop.errors import SettingsError
 from fhirgallop.mapping.document import MAX_BYTES
@@ -12,7 +20,12 @@ from fhirgallop.mapping.reading import read_map
 from fhirgallop.mapping.template_map import TemplateMap
 from fhirgallop.outcome import has_errors
 from fhirgallop.storage.maps import MapStore
+from fhirgallop.storage.publications import Publications
 from fhirgallop.storage.submissions import StorageError
+
+log: Final = logging.getLogger("fhirgallop.service")
+
+_STALE_SECONDS: Final = 1.0
 
 
 @dataclass(frozen=True, slots=True)
@@ -73,3 +86,61 @@ def keep_versions(shelf: Mapping[str, Published], store: MapStore, *, at: str) -
             f"this version of a map was used before with another text: {names}; raise `version` in the file, "
             "or take back the change"
         )
+
+
+class Shelf(Mapping[str, TemplateMap]):
+    """Every map in use, by name; looks, when used, whether another process has published one.
+
+    Raises StorageError from any use when the database failed: an outdated map is not used in silence.
+    """
+
+    def __init__(
+        self,
+        folder: Mapping[str, TemplateMap],
+        publications: Publications,
+        monotonic: Callable[[], float] = time.monotonic,
+    ) -> None:
+        self.folder = folder
+        self._publications = publications
+        self._monotonic = monotonic
+        self._looked = float("-inf")
+        self._newest = -1
+        self._maps = dict(folder)
+
+    def __getitem__(self, name: str) -> TemplateMap:
+        return self._current()[name]
+
+    def __iter__(self) -> Iterator[str]:
+        return iter(self._current())
+
+    def __len__(self) -> int:
+        return len(self._current())
+
+    def look(self) -> None:
+        """Takes up at once what has been published."""
+        self._looked = self._monotonic()
+        newest = self._publications.newest()
+        if newest == self._newest:
+            return
+        found = dict(self.folder)
+        for name, (version, text) in self._publications.in_use().items():
+            held = self._maps.get(name)
+            if held is None or held.version != version or held is self.folder.get(name):
+                held = _read_published(name, text)
+            if held is not None:
+                found[name] = held
+        self._maps, self._newest = found, newest
+
+    def _current(self) -> dict[str, TemplateMap]:
+        if self._monotonic() - self._looked >= _STALE_SECONDS:
+            self.look()
+        return self._maps
+
+
+def _read_published(name: str, text: bytes) -> TemplateMap | None:
+    template, issues = read_map(text, name=name)
+    if template is None or has_errors(issues):
+        # it was without fault when it was published: a newer program reads maps otherwise
+        log.error("the published map %s cannot be read by this program; publish it anew", name)
+        return None
+    return template

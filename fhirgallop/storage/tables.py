@@ -277,3 +277,64 @@ sessions = Table(
     Column("until", BigInteger, nullable=False),
     Index("sessions_until", "until"),
 )
+
+# An informatician's work on a map before it is published; every change is a step, so that it can be undone.
+drafts = Table(
+    "drafts",
+    metadata,
+    Column("id", String(36), primary_key=True),
+    Column("title", String(200), nullable=False),
+    # where the clinic's numbers belong, and its time zone: what suggestions for the record's parts need
+    Column("address", String(200), nullable=False),
+    Column("zone", String(64), nullable=False),
+    # the step that counts; later ones were undone
+    Column("step", Integer, nullable=False),
+    Column("changed", BigInteger, nullable=False),
+    # what a data dictionary says of the fields, as JSON; no patient's data
+    Column("dictionary", LargeBinary, nullable=False),
+)
+
+draft_steps = Table(
+    "draft_steps",
+    metadata,
+    Column("draft", String(36), ForeignKey("drafts.id", ondelete="CASCADE"), primary_key=True),
+    Column("step", Integer, primary_key=True),
+    Column("did", String(200), nullable=False),
+    Column("text", LargeBinary, nullable=False),
+)
+
+# Sample records as they were brought in: patients' data, until they are deleted.
+draft_samples = Table(
+    "draft_samples",
+    metadata,
+    Column("id", Integer, primary_key=True, autoincrement=True),
+    Column("draft", String(36), ForeignKey("drafts.id", ondelete="CASCADE"), nullable=False),
+    Column("media_type", String(100), nullable=False),
+    Column("content", LargeBinary, nullable=False),
+    Column("at", BigInteger, nullable=False),
+    Index("draft_samples_draft", "draft"),
+    Index("draft_samples_at", "at"),
+)
+
+# Which version of a map is in use since when, by whom and why; only ever added to. The texts are in `maps`.
+publications = Table(
+    "publications",
+    metadata,
+    # the newest row of a name that is in use counts
+    Column("id", Integer, primary_key=True, autoincrement=True),
+    Column("name", String(200), nullable=False),
+    Column("version", String(200), nullable=False),
+    # publish, or back to an earlier version
+    Column("kind", String(12), nullable=False),
+    # waiting (for a second person), approved or declined by one, used
+    Column("state", String(12), nullable=False),
+    Column("author", String(200), nullable=False),
+    # who that was, as a digest: nobody approves what is his own
+    Column("author_key", String(64), nullable=False),
+    Column("approver", String(200), nullable=False),
+    Column("note", String(2000), nullable=False),
+    # the check at publishing, as JSON: counts, no patient's data
+    Column("checked", LargeBinary, nullable=False),
+    Column("at", String(35), nullable=False),
+    Index("publications_name", "name", "state"),
+)

@@ -52,7 +52,7 @@ class Library:
         self._shelf = shelf
         self._store = store
         # versions never change, so that each is made once
-        self._made: dict[tuple[str, str, Edition], Artefact | None] = {}
+        self._made: dict[tuple[str, str, Edition, bool], Artefact | None] = {}
 
     def all(self, edition: Edition, type_: str) -> list[Artefact]:
         """Every definition of one type, the current ones first.
@@ -96,10 +96,10 @@ class Library:
                 yield made
 
     def _map(self, name: str, version: str, first_used: str, edition: Edition) -> Artefact | None:
-        key = (name, version, edition)
+        current = self._shelf.get(name)
+        on_shelf = current is not None and current.version == version
+        key = (name, version, edition, on_shelf)
         if key not in self._made:
-            current = self._shelf.get(name)
-            on_shelf = current is not None and current.version == version
             template = current if on_shelf else self._read(name, version)
             resource = concept_map(template, edition, first_used) if template else None
             self._made[key] = Artefact.of(resource, current=on_shelf) if resource else None

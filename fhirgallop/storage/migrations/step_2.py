@@ -184,6 +184,53 @@ Table(
     Index("sessions_until", "until"),
 )
 
+Table(
+    "drafts",
+    _metadata,
+    Column("id", String(36), primary_key=True),
+    Column("title", String(200), nullable=False),
+    Column("address", String(200), nullable=False),
+    Column("zone", String(64), nullable=False),
+    Column("step", Integer, nullable=False),
+    Column("changed", BigInteger, nullable=False),
+    Column("dictionary", LargeBinary, nullable=False),
+)
+Table(
+    "draft_steps",
+    _metadata,
+    Column("draft", String(36), ForeignKey("drafts.id", ondelete="CASCADE"), primary_key=True),
+    Column("step", Integer, primary_key=True),
+    Column("did", String(200), nullable=False),
+    Column("text", LargeBinary, nullable=False),
+)
+Table(
+    "draft_samples",
+    _metadata,
+    Column("id", Integer, primary_key=True, autoincrement=True),
+    Column("draft", String(36), ForeignKey("drafts.id", ondelete="CASCADE"), nullable=False),
+    Column("media_type", String(100), nullable=False),
+    Column("content", LargeBinary, nullable=False),
+    Column("at", BigInteger, nullable=False),
+    Index("draft_samples_draft", "draft"),
+    Index("draft_samples_at", "at"),
+)
+Table(
+    "publications",
+    _metadata,
+    Column("id", Integer, primary_key=True, autoincrement=True),
+    Column("name", String(200), nullable=False),
+    Column("version", String(200), nullable=False),
+    Column("kind", String(12), nullable=False),
+    Column("state", String(12), nullable=False),
+    Column("author", String(200), nullable=False),
+    Column("author_key", String(64), nullable=False),
+    Column("approver", String(200), nullable=False),
+    Column("note", String(2000), nullable=False),
+    Column("checked", LargeBinary, nullable=False),
+    Column("at", String(35), nullable=False),
+    Index("publications_name", "name", "state"),
+)
+
 
 def upgrade(op: Operations, keep: Keep) -> None:
     """Adds the tables, and fills in of what is kept already all that its Bundles tell."""
