@@ -124,13 +124,14 @@ def _plain_entries(
 ) -> bool:
     """Whether one schema says all of entries of one type and with the same profiles, seen together.
 
-    One call for all is much faster than one for each; and most refer to no other entry, or all do.
+    One call for all is much faster than one for each; and none of them refers to other entries, or most do.
     """
-    for form in forms.plain_entries(known, what, asks):
-        if form.is_valid(entries):
-            break
-    else:
-        return False
+    alone = forms.plain_entries(known, what, asks)
+    form = alone.linked if alone.expected else alone
+    if not form.is_valid(entries):
+        form = alone if alone.expected else alone.linked
+        if not form.is_valid(entries):
+            return False
     for entry in entries:
         resource = entry["resource"]
         if form.targets and not _led_right(resource, form.targets, urls):

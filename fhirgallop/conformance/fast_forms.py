@@ -47,35 +47,42 @@ class Ready:
 
 
 class Entries:
-    """How entries under UUIDs are judged, each with a plain resource of one kind; built at first use.
+    """How entries under UUIDs are judged, each with a plain resource of one kind; compiled at first use.
 
     Attributes:
+        expected: whether the profiles ask for a reference to findings, which are mostly sent beside it.
         targets: where references to other entries may stand, and the types they may lead to; none where
             the schema takes no such references, so that nothing is left to be looked at.
         checks: keys whose values are looked at apart, with the check.
     """
 
-    def __init__(self, known: Registry, what: What, *, asks: bool, linked: bool) -> None:
-        self._made_of = known, what, asks, linked
+    def __init__(self, known: Registry, what: What, *, asks: bool, linked: bool = False) -> None:
+        self._made_of = known, what, asks
+        self._builder = SchemaBuilder(known, urn=linked)
+        found = fast_profiles.form(self._builder, *what)
+        resource = None if found is None else plain(found, what[0], known.edition)
+        self._entry = None
+        self.expected = False
         self.targets: Mapping[str, Any] = {}
         self.checks: tuple[tuple[str, Check], ...] = ()
+        if found is not None and resource is not None:
+            self._entry = _entry(_UUID_URL, resource, _request(what[0]) if asks else None)
+            self.expected = any("Observation" in found.targets.get(k, ()) for k in resource["required"])
+            self.targets = found.targets if linked else {}
+            self.checks = tuple(item for item in found.checks.items() if item[0] in resource["properties"])
 
     @cached_property
     def is_valid(self) -> Valid:
-        """The validator."""
-        known, what, asks, linked = self._made_of
-        builder = SchemaBuilder(known, urn=linked)
-        found = fast_profiles.form(builder, *what)
-        schema = None if found is None else plain(found, what[0], known.edition)
-        if found is None or schema is None:
+        """The validator of a list of entries."""
+        if self._entry is None:
             return _never
-        if linked:
-            self.targets = found.targets
-        self.checks = tuple(
-            (key, check) for key, check in found.checks.items() if key in schema["properties"]
-        )
-        entry = _entry(_UUID_URL, schema, _request(what[0]) if asks else None)
-        return _closed({"type": "array", "items": entry}, builder).is_valid
+        return _closed({"type": "array", "items": self._entry}, self._builder).is_valid
+
+    @cached_property
+    def linked(self) -> Entries:
+        """The same where the resources may refer to other entries."""
+        known, what, asks = self._made_of
+        return Entries(known, what, asks=asks, linked=True)
 
 
 def _never(_value: object) -> bool:
@@ -83,17 +90,12 @@ def _never(_value: object) -> bool:
 
 
 @lru_cache(maxsize=512)
-def plain_entries(known: Registry, what: What, asks: bool) -> tuple[Entries, ...]:
-    """How lists of entries with plain resources of one kind are judged: the likelier way comes first.
+def plain_entries(known: Registry, what: What, asks: bool) -> Entries:
+    """How entries with plain resources of one kind are judged, if they refer to no others.
 
     `asks`: each carries a request, which creates the resource or searches for the one to update.
     """
-    found = fast_profiles.form(SchemaBuilder(known), *what)
-    if found is None:
-        return ()
-    # what a profile asks to refer to findings is mostly sent beside them
-    links = any("Observation" in found.targets.get(key, ()) for key in found.presence.get("required", ()))
-    return tuple(Entries(known, what, asks=asks, linked=linked) for linked in (links, not links))
+    return Entries(known, what, asks=asks)
 
 
 @lru_cache(maxsize=2)

@@ -11,8 +11,10 @@ from __future__ import annotations
 from collections.abc import Iterable, Mapping
 from copy import deepcopy
 from dataclasses import dataclass, field
+from functools import lru_cache
 from typing import Any
 
+from fhirgallop.conformance.editions import Edition
 from fhirgallop.conformance.editions.model import Binding, Child, Element, TypeDef
 from fhirgallop.conformance.fast_formats import ID, UUID, text
 from fhirgallop.conformance.fast_invariants import REFUSED, fragment
@@ -119,9 +121,7 @@ class SchemaBuilder:
 
     def kinds(self, targets: Iterable[str]) -> list[str]:
         """The resource types that references to these targets may lead to."""
-        wanted = tuple(targets)
-        edition = self.edition
-        return sorted(r for r in edition.resources if not wanted or any(edition.is_a(r, t) for t in wanted))
+        return list(_kinds(self.edition, tuple(targets)))
 
     def reference(self, targets: tuple[str, ...], *, urn: bool) -> Schema:
         """A Reference to one of these types, as far as the text of the reference says it."""
@@ -279,6 +279,13 @@ class SchemaBuilder:
         if definition.json == "decimal":
             return {"type": "number", "minimum": -_LIMIT, "maximum": _LIMIT}
         return text(name)
+
+
+@lru_cache(maxsize=4096)
+def _kinds(edition: Edition, targets: tuple[str, ...]) -> tuple[str, ...]:
+    return tuple(
+        sorted(r for r in edition.resources if not targets or any(edition.is_a(r, t) for t in targets))
+    )
 
 
 def _apart(child: Child) -> bool:
