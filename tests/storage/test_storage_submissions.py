@@ -2,13 +2,7 @@
 
 from __future__ import annotations
 
-import hashlib
-import os
-import random
-import signal
 import sqlite3
-import subprocess
-import sys
 from concurrent.futures import ThreadPoolExecutor
 from pathlib import Path
 from typing import Any
@@ -20,20 +14,6 @@ from fhirgallop.errors import SettingsError
 from fhirgallop.storage.engine import open_database
 from fhirgallop.storage.submissions import StorageError, Submissions
 from fhirgallop.storage.tables import SCHEMA_VERSION, schema_version, submissions
-
-# A program that stores one examination after the other and says each number once it is stored.
-WRITER = """
-import hashlib, sys
-from fhirgallop.storage.engine import open_database
-from fhirgallop.storage.submissions import Submission, Submissions
-store = Submissions(open_database(sys.argv[1]))
-for number in range(int(sys.argv[2]), 10**9):
-    bundle = str(number).encode() * 9000
-    digest = hashlib.sha256(bundle).hexdigest()
-    one = Submission(f"urn:{number}", "R4", True, 1, "m", "1", digest, "p", "2026-12-01T08:30:00Z", bundle)
-    assert store.add(one)
-    print(number, flush=True)
-"""
 
 
 def rows(engine: Engine) -> int:
@@ -91,37 +71,6 @@ def test_a_full_disk_keeps_nothing_and_is_got_over(tmp_path: Path, submission: A
     assert store.add(submission("urn:next"))
     assert rows(engine) == 2
     engine.dispose()
-
-
-@pytest.mark.parametrize("seed", range(4))
-def test_sudden_death_loses_nothing_that_was_said_to_be_stored(tmp_path: Path, seed: int) -> None:
-    path = tmp_path / "killed.sqlite3"
-    chance = random.Random(seed)
-    said: list[int] = []
-    for _ in range(2):
-        writer = subprocess.Popen(
-            [sys.executable, "-c", WRITER, f"sqlite:///{path}", str(len(said) + 1)],
-            stdout=subprocess.PIPE,
-            text=True,
-        )
-        assert writer.stdout
-        said += [int(writer.stdout.readline()) for _ in range(chance.randrange(1, 40))]
-        os.kill(writer.pid, signal.SIGKILL)
-        said += [int(line) for line in writer.stdout.read().split()]
-        writer.wait()
-        writer.stdout.close()
-        engine = open_database(f"sqlite:///{path}")
-        with engine.connect() as connection:
-            assert connection.exec_driver_sql("PRAGMA integrity_check").scalar() == "ok"
-            kept = connection.execute(
-                select(submissions.c.exam, submissions.c.record_hash, submissions.c.bundle)
-            ).all()
-        engine.dispose()
-        assert all(hashlib.sha256(bundle).hexdigest() == digest for _, digest, bundle in kept)
-        # the last one may be stored without the writer having had the time to say so
-        assert {f"urn:{number}" for number in said} <= {row.exam for row in kept}
-        assert len(said) <= len(kept) <= len(said) + 1
-        said = [int(row.exam.removeprefix("urn:")) for row in kept]
 
 
 def test_a_database_of_another_form_is_refused(tmp_path: Path) -> None:
