@@ -119,6 +119,52 @@ def test_forms(still: TestClient) -> None:
     assert {200, 400, 422} <= statuses
 
 
+def test_forms_with_templates_and_definitions(still: TestClient) -> None:
+    value = {"extension": [{"url": SDC + "templateExtractValue", "valueString": "%resource.authored"}]}
+    template = {
+        "resourceType": "Observation", "id": "t", "status": "final", "code": {"text": "x"},
+        "_effectiveDateTime": value,
+        "note": [{"extension": [{"url": SDC + "templateExtractContext", "valueString": "answer"}],
+                  "_text": {"extension": [{"url": SDC + "templateExtractValue", "valueString": "value"}]}}],
+    }  # fmt: skip
+    observation = "http://hl7.org/fhir/StructureDefinition/Observation"
+    parts = [
+        {"url": "template", "valueReference": {"reference": "#t"}},
+        {"url": "fullUrl", "valueString": "%a"},
+    ]
+    fixed = [{"url": "definition", "valueUri": f"{observation}#Observation.status"},
+             {"url": "fixed-value", "valueCode": "final"}]  # fmt: skip
+    computed = [{"url": "definition", "valueUri": f"{observation}#Observation.code.text"},
+                {"url": "expression", "valueExpression": {"expression": "'x'"}}]  # fmt: skip
+    form = {
+        "resourceType": "Questionnaire", "status": "active", "contained": [template],
+        "extension": [
+            {"url": SDC + "extractAllocateId", "valueString": "a"},
+            {"url": SDC + "definitionExtract",
+             "extension": [{"url": "definition", "valueCanonical": observation}]},
+            {"url": SDC + "definitionExtractValue", "extension": fixed},
+            {"url": SDC + "definitionExtractValue", "extension": computed},
+        ],
+        "item": [{"linkId": "n", "type": "string", "definition": f"{observation}#Observation.value[x]",
+                  "extension": [{"url": SDC + "templateExtract", "extension": parts}]}],
+    }  # fmt: skip
+    response = {
+        "resourceType": "QuestionnaireResponse", "id": "r", "status": "completed",
+        "subject": {"reference": "Patient/1"}, "authored": "2026-03-14",
+        "item": [{"linkId": "n", "answer": [{"valueString": "soft"}]}],
+    }  # fmt: skip
+    body = {
+        "resourceType": "Parameters",
+        "parameter": [
+            {"name": "questionnaire-response", "resource": response},
+            {"name": "questionnaire", "resource": form},
+        ],
+    }
+    assert told(still, "/fhir/r4/QuestionnaireResponse/$extract", body) == 200
+    statuses = {told(still, "/fhir/r4/QuestionnaireResponse/$extract", one) for one in spoilt(body)}
+    assert {200, 400, 422} <= statuses
+
+
 def test_questions_to_the_judge(still: TestClient, observation: dict[str, Any]) -> None:
     parameters = [
         {

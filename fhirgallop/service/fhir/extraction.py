@@ -21,12 +21,14 @@ from fhirgallop.observations.identity import identity_of
 from fhirgallop.observations.provenance import CONVERSION_TAG
 from fhirgallop.outcome import has_errors, operation_outcome, ordered
 from fhirgallop.service.answers import RefusalError, refusal
-from fhirgallop.service.fhir import parameters
-from fhirgallop.service.fhir.form_templates import WAYS, from_templates
+from fhirgallop.service.fhir import form_definitions, form_templates, parameters
+from fhirgallop.service.fhir.form_definitions import from_definitions
+from fhirgallop.service.fhir.form_templates import from_templates
 from fhirgallop.service.fhir.parameters import Given, Part, one
 from fhirgallop.version import VERSION
 
 KNOWN: Final = {"questionnaire-response": "Resource", "questionnaire": "Resource"}
+_BESIDE: Final = (*form_definitions.WAYS, *form_templates.WAYS)
 _NAMESPACE: Final = uuid.uuid5(uuid.NAMESPACE_URL, systems.BASE + "/extract-provenance")
 _ASSEMBLER: Final = {
     "coding": [{"system": systems.PROVENANCE_AGENT, "code": "assembler", "display": "Assembler"}]
@@ -46,11 +48,13 @@ def extracted(given: Given, edition: Edition, now: datetime) -> bytes:
         said = "Send the response as the parameter questionnaire-response."
         raise refusal(400, "required", "extract-response", said)
     questionnaire = one(given, "questionnaire") or _contained(response)
-    observations, issues = extract(response, questionnaire, edition=edition, beside=WAYS)
+    observations, issues = extract(response, questionnaire, edition=edition, beside=_BESIDE)
     entries: list[dict[str, Any]] = []
     if not has_errors(issues):
-        entries, more = from_templates(response, questionnaire, edition)
-        issues += more
+        for way in (from_definitions, from_templates):
+            made, more = way(response, questionnaire, edition)
+            entries += made
+            issues += more
     if entries and not observations:
         issues = [issue for issue in issues if issue.rule != "sdc-nothing-to-extract"]
     bundle = None

@@ -92,4 +92,4 @@ def _named(expression: str, names: Mapping[str, str]) -> str:
     return _PIECE.sub(replaced, expression) if names else expression
 
 
-__all__ = ["Answers", "CannotJudge", "ExpressionError", "written"]
+__all__ = ["Answers", "CannotJudge", "ExpressionError", "Item", "written"]

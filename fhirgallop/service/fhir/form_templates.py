@@ -7,28 +7,23 @@ Names given to contexts are not served; that is an error, not passed over.
 
 from __future__ import annotations
 
-import uuid
 from collections.abc import Iterator, Mapping
 from dataclasses import dataclass
 from typing import Any, Final
 
-from fhirgallop.codes import systems
 from fhirgallop.observations.editions import Edition
-from fhirgallop.observations.extract_plan import DEEPEST, mappings, values
+from fhirgallop.observations.extract_plan import DEEPEST, mappings
 from fhirgallop.outcome import Issue
 from fhirgallop.service.fhir.form_expressions import Answers, CannotJudge, ExpressionError, written
+from fhirgallop.service.fhir.form_walk import REQUEST, SDC, Ids, answered, iterations, parts, value
 
 WAYS: Final = ("templateExtract", "templateExtractBundle")
 MOST_RESOURCES: Final = 1000
 MOST_ELEMENTS: Final = 50_000
 
-_SDC: Final = "http://hl7.org/fhir/uv/sdc/StructureDefinition/sdc-questionnaire-"
-_EXTRACT, _BUNDLE = (_SDC + way for way in WAYS)
-_CONTEXT: Final = _SDC + "templateExtractContext"
-_VALUE: Final = _SDC + "templateExtractValue"
-_ALLOCATE: Final = _SDC + "extractAllocateId"
-_REQUEST: Final = ("ifNoneMatch", "ifModifiedSince", "ifMatch", "ifNoneExist")
-_NAMESPACE: Final = uuid.uuid5(uuid.NAMESPACE_URL, systems.BASE + "/extract-template")
+_EXTRACT, _BUNDLE = (SDC + way for way in WAYS)
+_CONTEXT: Final = SDC + "templateExtractContext"
+_VALUE: Final = SDC + "templateExtractValue"
 
 Object = dict[str, Any]
 
@@ -41,7 +36,7 @@ def from_templates(
     An error among the issues means that what came out is not to be used.
     """
     making = _Making(response, questionnaire, edition)
-    names = making.allocated(questionnaire, "", {})
+    names = making.ids.named(questionnaire, "", {})
     making.extracted(questionnaire, "Questionnaire", making.answers.whole, names, "")
     making.level(mappings(questionnaire.get("item")), response, names, "", 1)
     return making.entries, making.issues
@@ -66,7 +61,7 @@ class _Making:
             for held in mappings(questionnaire.get("contained"))
             if isinstance(held.get("id"), str) and isinstance(held.get("resourceType"), str)
         }
-        self._base = repr((response.get("id"), response.get("identifier"), response.get("authored")))
+        self.ids = Ids(response)
         self._elements = 0
 
     def level(
@@ -78,19 +73,12 @@ class _Making:
             return
         for item in items:
             link = str(item.get("linkId", ""))
-            for number, answered in enumerate(_answered(within, link)):
+            for number, one_item in enumerate(answered(within, link)):
                 here = f"{path}/{link}[{number}]"
-                own = self.allocated(item, here, names)
-                for part, one in enumerate(_iterations(answered)):
+                own = self.ids.named(item, here, names)
+                for part, one in enumerate(iterations(one_item)):
                     self.extracted(item, link, self.answers.item(one), own, f"{here}({part})")
-                self.level(mappings(item.get("item")), answered, own, here, depth + 1)
-
-    def allocated(self, element: Mapping[str, Any], path: str, names: Mapping[str, str]) -> dict[str, str]:
-        """The names in force, with those that the element gives to new ids."""
-        found = dict(names)
-        for name in values(element, _ALLOCATE, "valueString"):
-            found[str(name)] = f"urn:uuid:{uuid.uuid5(_NAMESPACE, f'{self._base}{path}%{name}')}"
-        return found
+                self.level(mappings(item.get("item")), one_item, own, here, depth + 1)
 
     def extracted(
         self, element: Mapping[str, Any], link: str, focus: Any, names: Mapping[str, str], path: str
@@ -102,11 +90,11 @@ class _Making:
                 for filled in self._filled(self._template(extension.get("valueReference"), link), place):
                     self.entries += [dict(entry) for entry in mappings(filled.get("entry"))]
             elif extension.get("url") == _EXTRACT:
-                parts = {str(p.get("url")): _value(p) for p in mappings(extension.get("extension"))}
+                given = parts(extension)
                 for copy, filled in enumerate(
-                    self._filled(self._template(parts.get("template"), link), place)
+                    self._filled(self._template(given.get("template"), link), place)
                 ):
-                    self._entry(filled, parts, place, f"{path}#{number}.{copy}")
+                    self._entry(filled, given, place, f"{path}#{number}.{copy}")
         if len(self.entries) > MOST_RESOURCES:
             self.entries = []
             self._note(
@@ -128,19 +116,19 @@ class _Making:
             if isinstance(filled, dict) and filled.keys() - {"resourceType"}:
                 yield filled
 
-    def _entry(self, resource: Object, parts: Mapping[str, Any], place: _Place, path: str) -> None:
+    def _entry(self, resource: Object, given: Mapping[str, Any], place: _Place, path: str) -> None:
         """One entry of the transaction: PUT where the resource has an id, else POST."""
         type_ = resource["resourceType"]
-        own = self._word(parts.get("resourceId"), place)
+        own = self._word(given.get("resourceId"), place)
         if own:
             resource = {"resourceType": type_, "id": own, **resource}
         url = f"{type_}/{own}" if own else type_
         request: Object = {"method": "PUT" if own else "POST", "url": url}
-        for name in _REQUEST:
-            if word := self._word(parts.get(name), place):
+        for name in REQUEST:
+            if word := self._word(given.get(name), place):
                 request[name] = word
-        full_url = self._word(parts.get("fullUrl"), place)
-        full_url = full_url or f"urn:uuid:{uuid.uuid5(_NAMESPACE, self._base + path)}"
+        full_url = self._word(given.get("fullUrl"), place)
+        full_url = full_url or self.ids.of(path)
         self.entries.append({"fullUrl": full_url, "resource": resource, "request": request})
 
     def _word(self, expression: Any, place: _Place) -> str:
@@ -257,7 +245,7 @@ def _split(template: Mapping[str, Any]) -> tuple[Object, list[str], str | None]:
     replacing: str | None = None
     kept: list[Any] = []
     for extension in mappings(template.get("extension")):
-        expression = _value(extension)
+        expression = value(extension)
         if isinstance(expression, Mapping):  # R4 allows an Expression here; its name is not served
             expression = "%unsupported" if "name" in expression else expression.get("expression")
         if extension.get("url") == _CONTEXT:
@@ -270,28 +258,3 @@ def _split(template: Mapping[str, Any]) -> tuple[Object, list[str], str | None]:
     if kept:
         rest = {"extension": kept, **rest}
     return rest, contexts, replacing
-
-
-def _value(extension: Mapping[str, Any]) -> Any:
-    return next((value for key, value in extension.items() if key.startswith("value")), None)
-
-
-def _answered(within: Any, link: str) -> Iterator[Object]:
-    """The items of a response, or of an item of it, that answer one item of the form."""
-    if not isinstance(within, Mapping):
-        return
-    groups = [within, *mappings(within.get("answer"))]
-    for group in groups:
-        for item in mappings(group.get("item")):
-            if item.get("linkId") == link:
-                yield dict(item)
-
-
-def _iterations(item: Object) -> Iterator[Object]:
-    """A group once; a question once for each of its answers."""
-    answers = mappings(item.get("answer"))
-    if not answers:
-        if mappings(item.get("item")):
-            yield item
-        return
-    yield from ({**item, "answer": [answer]} for answer in answers)
