@@ -155,7 +155,9 @@ def forget(
     patient: Annotated[
         list[str] | None,
         typer.Option(
-            metavar="SYSTEM|VALUE", help="An identifier of the patient; may be given several times."
+            metavar="SYSTEM|VALUE",
+            help="An identifier of the patient; may be given several times. |ID means resources "
+            "that were put here with a bare reference Patient/ID.",
         ),
     ] = None,
     chart_id: Annotated[str, typer.Option(help="The patient's id in the record system, for cards.")] = "",
@@ -208,6 +210,7 @@ def digests_of(patients: list[str], chart_id: str, server: str) -> list[str]:
         # the address as it was given, and with and without the last stroke, as calls may have had it
         bare = server.rstrip("/")
         found += [digest("patient", one, chart_id) for one in (server, bare, bare + "/")]
+        found.append(patient_key("", f"{bare}/Patient/{chart_id}"))
     return found
 
 

@@ -104,6 +104,24 @@ def test_who_is_to_be_forgotten_must_be_said_and_confirmed(
     engine.dispose()
 
 
+def test_resources_that_name_a_patient_by_address_are_found_too(
+    hooked_with: Callable[..., TestClient], call: Callable[..., Any], tmp_path: Path
+) -> None:
+    speaking = hooked_with()
+    base = {"resourceType": "Observation", "status": "final", "effectiveDateTime": "2026-03-14",
+            "code": {"text": "fourth heart sound"}}  # fmt: skip
+    for reference in (f"{SERVER}/Patient/p-20417", "Patient/p-20417", "Patient/p-2"):
+        sent = {**base, "subject": {"reference": reference}}
+        headers = {"Content-Type": "application/fhir+json"}
+        answer = speaking.post("/fhir/r4/Observation", content=json.dumps(sent), headers=headers)
+        assert answer.status_code == 201, answer.text
+    address = f"sqlite:///{tmp_path / 'hooks.sqlite3'}"
+    words = ("database", "forget", "--yes", "--database", address)
+    for more, left in ((("--chart-id", "p-20417", "--server", SERVER), 2), (("--patient", "|p-20417"), 1)):
+        assert call(*words, *more).code == 0
+        assert len(speaking.get("/fhir/r4/Observation").json()["entry"]) == left
+
+
 def test_the_service_prunes_by_itself(tmp_path: Path) -> None:
     engine = open_database(f"sqlite:///{tmp_path / 'some.sqlite3'}")
     store = Submissions(engine)
