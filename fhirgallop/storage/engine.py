@@ -2,11 +2,13 @@
 
 from __future__ import annotations
 
+import os
 import sqlite3
 import time
 from collections.abc import Iterator
-from contextlib import contextmanager
+from contextlib import contextmanager, suppress
 from functools import partial
+from pathlib import Path
 from typing import Any, Final
 
 from sqlalchemy import URL, Connection, Engine, create_engine, event, insert, inspect, make_url, select
@@ -60,6 +62,7 @@ def connect(address: str, *, durable: bool = True) -> Engine:
             if url.database in (None, "", ":memory:"):
                 raise SettingsError("database names no file; what is kept in memory is gone with the program")
             engine = create_engine(url, connect_args={"timeout": _BUSY_SECONDS}, hide_parameters=True)
+            event.listen(engine, "do_connect", _private)
             event.listen(engine, "connect", partial(_set_up_sqlite, "FULL" if durable else "NORMAL"))
             return engine
         # each connection is tried before it is used: after a restart of the server the next request goes well
@@ -155,6 +158,15 @@ def _manners(url: URL, durable: bool) -> dict[str, Any]:
         "connect_timeout": _BUSY_SECONDS, "application_name": "fhirgallop", "keepalives_idle": 30,
         "keepalives_interval": 10, "keepalives_count": 3, "tcp_user_timeout": 30_000,
     }  # fmt: skip
+
+
+def _private(_dialect: Any, _entry: Any, arguments: list[Any], _named: dict[str, Any]) -> None:
+    """A new file is for its owner alone; SQLite gives the files beside it the same rights."""
+    path = Path(arguments[0])
+    # never opened where it exists: to close it again would take away the locks that this process has on it
+    if not path.exists():
+        with suppress(OSError):  # SQLite will say what is wrong, or another made it at the same moment
+            os.close(os.open(path, os.O_CREAT | os.O_EXCL | os.O_WRONLY, 0o600))
 
 
 def _set_up_sqlite(synchronous: str, connection: Any, _entry: ConnectionPoolEntry) -> None:

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import threading
-from dataclasses import replace
+from typing import Any
 
 import pytest
 from sqlalchemy import Engine, func, select
@@ -12,6 +12,11 @@ from sqlalchemy.exc import IntegrityError
 from fhirgallop.storage.resource_search import Name, Place, Resources, Span, Wanted
 from fhirgallop.storage.resources import ChangedMeanwhileError, NewVersion, add_versions
 from fhirgallop.storage.tables import resource_identifiers, resources
+
+
+def replace(version: NewVersion, **changed: Any) -> NewVersion:
+    return version._replace(**changed)
+
 
 ONE = NewVersion("R4", "Observation", "a", "patient-1", "visit-1", "heart-sound.s4", 100, 199, b"1")
 

@@ -120,6 +120,15 @@ def test_the_journal_survives_the_program_and_if_wished_the_power(tmp_path: Path
     engine.dispose()
 
 
+def test_a_new_file_is_for_its_owner_alone(tmp_path: Path, submission: Any) -> None:
+    engine = open_database(f"sqlite:///{tmp_path / 'store.sqlite3'}")
+    assert Submissions(engine).add(submission())
+    files = list(tmp_path.iterdir())
+    assert {file.name for file in files} >= {"store.sqlite3", "store.sqlite3-wal"}
+    assert {file.stat().st_mode & 0o777 for file in files} == {0o600}
+    engine.dispose()
+
+
 @pytest.mark.parametrize("durable", [True, False])
 def test_postgres_waits_for_the_disk_if_wished(postgres: str, durable: bool) -> None:
     engine = open_database(postgres, durable=durable)
