@@ -304,7 +304,11 @@ class Settings(BaseSettings):
         "refused.",
     )
     coded_at_once: int = Field(
-        4, ge=1, le=64, description="Of these, requests with examinations that compute at once; others queue."
+        2,
+        ge=1,
+        le=64,
+        description="Of these, examinations and cards that are computed at once; the others wait their turn. "
+        "More only lets all wait for the slowest.",
     )
     header_seconds: float = Field(
         10, gt=0, le=600, description="How long the head of a request may take to arrive."

@@ -58,7 +58,7 @@ class Limits:
     """The rate of each address and of each caller, and how many requests are worked on at once."""
 
     def __init__(
-        self, *, rate: float, at_once: int, clock: Callable[[], float], coded_at_once: int = 4
+        self, *, rate: float, at_once: int, clock: Callable[[], float], coded_at_once: int = 2
     ) -> None:
         self.turns: Final = CapacityLimiter(coded_at_once)
         self._addresses = Rate(rate, clock)
