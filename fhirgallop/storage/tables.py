@@ -338,3 +338,15 @@ publications = Table(
     Column("at", String(35), nullable=False),
     Index("publications_name", "name", "state"),
 )
+
+# How often each rule was raised in a month, and what became of it; no patient's data.
+rule_months = Table(
+    "rule_months",
+    metadata,
+    # 2026-12
+    Column("month", String(7), primary_key=True),
+    Column("rule", String(200), primary_key=True),
+    # shown, or why not
+    Column("fate", String(32), primary_key=True),
+    Column("count", Integer, nullable=False),
+)

@@ -195,6 +195,7 @@ Table(
     Column("changed", BigInteger, nullable=False),
     Column("dictionary", LargeBinary, nullable=False),
 )
+
 Table(
     "draft_steps",
     _metadata,
@@ -203,6 +204,7 @@ Table(
     Column("did", String(200), nullable=False),
     Column("text", LargeBinary, nullable=False),
 )
+
 Table(
     "draft_samples",
     _metadata,
@@ -214,6 +216,7 @@ Table(
     Index("draft_samples_draft", "draft"),
     Index("draft_samples_at", "at"),
 )
+
 Table(
     "publications",
     _metadata,
@@ -229,6 +232,25 @@ Table(
     Column("checked", LargeBinary, nullable=False),
     Column("at", String(35), nullable=False),
     Index("publications_name", "name", "state"),
+)
+
+
+Table(
+    "rule_months",
+    _metadata,
+    Column("month", String(7), primary_key=True),
+    Column("rule", String(200), primary_key=True),
+    Column("fate", String(32), primary_key=True),
+    Column("count", Integer, nullable=False),
+)
+
+Table(
+    "rule_months",
+    _metadata,
+    Column("month", String(7), primary_key=True),
+    Column("rule", String(200), primary_key=True),
+    Column("fate", String(32), primary_key=True),
+    Column("count", Integer, nullable=False),
 )
 
 
