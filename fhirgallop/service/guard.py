@@ -142,7 +142,7 @@ class _Visit:
         if caller:
             said["caller"] = caller.kind
             if caller.name:
-                said["name"] = hashlib.sha256(caller.name.encode("utf-8", "replace")).hexdigest()[:12]
+                said["who"] = hashlib.sha256(caller.name.encode("utf-8", "replace")).hexdigest()[:12]
         log.info("%s %s", method, route, extra=said)
 
 

@@ -200,4 +200,6 @@ def test_after_everything_the_log_holds_no_token_and_no_patient(service: Service
     for token in service.tokens:
         for part in token.split("."):
             assert part not in log
-    assert "Traceback" not in log
+    assert "caller=system" in log
+    for broken in ("Traceback", "Exception in", "[error"):
+        assert broken not in log, log
