@@ -43,15 +43,16 @@ def interleaved(
     was_enabled = gc.isenabled()
     gc.disable()
     try:
-        for _ in range(rounds):
+        for number in range(rounds):
             for name, candidate in candidates.items():
-                for _ in range(1 + calls // 10):  # the collector has emptied the caches
+                for _ in range(1 + calls // 10):  # the others, and the collector, have emptied the caches
                     candidate()
                 start = time.perf_counter()
                 for _ in range(calls):
                     candidate()
                 times[name].append((time.perf_counter() - start) / calls)
-            gc.collect()
+            if number % 10 == 0:
+                gc.collect()
     finally:
         if was_enabled:
             gc.enable()
