@@ -24,6 +24,7 @@ _ABOUT: Final = {
     "host": "Service, storage and limits",
     "pages": "Cards",
     "keep_exams": "How long what is kept",
+    "second_person": "Maps",
     "address": "Who may ask",
     "deliver_to": "Delivery to the record system",
     "certificate": "TLS and proxy",
@@ -137,7 +138,17 @@ class Settings(BaseSettings):
     keep_batches: int = Field(
         7, ge=0, description="Days that a finished batch and its results are kept; 0: for ever."
     )
+    keep_samples: int = Field(
+        30, ge=0, description="Days that sample records beside a draft of a map are kept; 0: for ever."
+    )
     keep_audit: int = Field(0, ge=0, description="Days that the audit trail is kept; 0: for ever.")
+
+    # the informatician's desk (service/desk)
+    second_person: bool = Field(
+        default=False,
+        description="A map is used only when a second person has approved it; needs sign-in, so that two "
+        "persons can be told apart.",
+    )
 
     # who may ask (service/auth)
     address: str = Field(

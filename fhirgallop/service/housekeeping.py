@@ -31,6 +31,7 @@ def keeping(settings: Settings) -> Keeping:
         settings.keep_batches,
         settings.keep_audit,
         settings.idempotency_hours,
+        settings.keep_samples,
     )
 
 

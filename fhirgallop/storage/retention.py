@@ -26,6 +26,7 @@ from sqlalchemy import (
     func,
     or_,
     select,
+    true,
     tuple_,
 )
 
@@ -34,6 +35,7 @@ from fhirgallop.storage.tables import (
     audit,
     batch_results,
     batches,
+    draft_samples,
     hook_cards,
     hook_feedback,
     hook_instances,
@@ -63,6 +65,7 @@ class Keeping:
         batches: finished batches.
         audit: the audit trail.
         answers: answers by the sender's own key.
+        samples: records that were brought in beside a draft of a map.
     """
 
     exams: int = 0
@@ -70,6 +73,7 @@ class Keeping:
     batches: int = 0
     audit: int = 0
     answers: int = 0
+    samples: int = 0
 
 
 def prune(engine: Engine, keeping: Keeping, now: datetime) -> Mapping[str, int]:
@@ -99,6 +103,8 @@ def prune(engine: Engine, keeping: Keeping, now: datetime) -> Mapping[str, int]:
     if keeping.batches:
         before = _ms(now - timedelta(days=keeping.batches))
         old.append((batches, and_(batches.c.state.in_(_FINISHED), batches.c.created < before)))
+    if keeping.samples:
+        old.append((draft_samples, draft_samples.c.at < _ms(now - timedelta(days=keeping.samples))))
     if keeping.audit:
         old.append((audit, audit.c.at < _ms(now - timedelta(days=keeping.audit))))
     for table, condition in old:
@@ -109,8 +115,9 @@ def prune(engine: Engine, keeping: Keeping, now: datetime) -> Mapping[str, int]:
 def forget(engine: Engine, patients: Collection[str], *also: Also) -> Mapping[str, int]:
     """Deletes all that is kept of a patient, in one transaction; also what still waits to be delivered.
 
-    Answers by key that tell of several patients are deleted too: sent again, such a request is coded again,
-    with the same result. The audit trail stays.
+    What cannot be told apart by patient goes as a whole: answers by key that tell of several patients (sent
+    again, such a request is coded again, with the same result), and the sample records beside drafts of maps,
+    which the clinic has itself. The audit trail stays.
 
     Args:
         engine: of the database.
@@ -135,6 +142,7 @@ def forget(engine: Engine, patients: Collection[str], *also: Also) -> Mapping[st
         (batch_results, batch_results.c.patient.in_(known)),
         (submissions, theirs),
         (idempotent_answers, idempotent_answers.c.patient.in_([*known, ""])),
+        (draft_samples, true()),
         (hook_feedback, hook_feedback.c.card.in_(cards)),
         (hook_cards, hook_cards.c.patient.in_(known)),
         (hook_instances, hook_instances.c.patient.in_(known)),

@@ -22,6 +22,8 @@ from fhirgallop.storage.tables import (
     audit,
     batch_results,
     batches,
+    draft_samples,
+    drafts,
     hook_cards,
     hook_feedback,
     hook_instances,
@@ -37,6 +39,8 @@ from fhirgallop.storage.tables import (
 
 NOW = datetime(2026, 12, 1, 12, tzinfo=UTC)
 DAY = timedelta(days=1)
+DRAFT = {"title": "", "address": "", "zone": "", "step": 0, "changed": 0, "dictionary": b""}
+SAMPLE = {"media_type": "", "content": b"records"}
 
 
 def ms(moment: datetime) -> int:
@@ -177,6 +181,8 @@ def test_what_has_an_end_of_its_own_goes_then(engine: Engine) -> None:
             connection.execute(insert(used_tokens).values(token=name, until=ms(until)))
             connection.execute(insert(sessions).values(session=name, subject="s", roles="", until=ms(until)))
             connection.execute(insert(audit).values(at=ms(at), patient="", event=b"{}"))
+            connection.execute(insert(drafts).values(id=name, **DRAFT))
+            connection.execute(insert(draft_samples).values(draft=name, at=ms(at), **SAMPLE))
             answer = {"request": "r", "status": 200, "media_type": "", "headers": b"{}", "answer": b"",
                       "patient": ""}  # fmt: skip
             connection.execute(insert(idempotent_answers).values(key=name, at=ms(at), **answer))
@@ -186,8 +192,9 @@ def test_what_has_an_end_of_its_own_goes_then(engine: Engine) -> None:
                 connection.execute(insert(batches).values(**batch))
                 result = {"position": 0, "patient": "", "status": "coded", "submission": None, "result": b""}
                 connection.execute(insert(batch_results).values(batch=name + state, **result))
-    assert prune(engine, Keeping(batches=7, audit=7, answers=7 * 24), NOW) == {
-        "used_tokens": 1, "sessions": 1, "idempotent_answers": 1, "batches": 2, "audit": 1,
+    assert prune(engine, Keeping(batches=7, audit=7, answers=7 * 24, samples=7), NOW) == {
+        "used_tokens": 1, "sessions": 1, "idempotent_answers": 1, "batches": 2, "draft_samples": 1,
+        "audit": 1,
     }  # fmt: skip
     with engine.connect() as connection:
         for table in (used_tokens, sessions, idempotent_answers):
@@ -243,6 +250,8 @@ def test_one_patients_data_go_from_every_table(engine: Engine, keep: Callable[..
             connection.execute(insert(batch_results).values(batch=patient, **result))
             connection.execute(insert(audit).values(at=0, patient=patient, event=b"{}"))
     with engine.begin() as connection:
+        connection.execute(insert(drafts).values(id="a", **DRAFT))
+        connection.execute(insert(draft_samples).values(draft="a", at=0, **SAMPLE))
         connection.execute(insert(idempotent_answers).values(key="list", patient="", **answer))
     before = counts(engine)
 
@@ -252,10 +261,14 @@ def test_one_patients_data_go_from_every_table(engine: Engine, keep: Callable[..
     gone = forget(engine, ["mine", "chartmine"], note)
     assert gone == {
         "submissions": 2, "resources": 3, "resource_identifiers": 3, "outbox": 2, "batch_results": 1,
-        "idempotent_answers": 2, "hook_memories": 1, "hook_instances": 1, "hook_cards": 1, "hook_feedback": 1,
+        "idempotent_answers": 2, "draft_samples": 1, "hook_memories": 1, "hook_instances": 1, "hook_cards": 1,
+        "hook_feedback": 1,
     }  # fmt: skip
     after = counts(engine)
-    assert {n: before[n] - after[n] for n in before if before[n] != after[n]} == {**gone, "audit": -1}
+    assert {n: m - after.get(n, 0) for n, m in before.items() if m != after.get(n, 0)} == {
+        **gone,
+        "audit": -1,
+    }
     # nothing of the other one went, and nothing of this one is left but the trail
     with engine.connect() as connection:
         for table in metadata.sorted_tables:

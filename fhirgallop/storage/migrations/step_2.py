@@ -234,16 +234,6 @@ Table(
     Index("publications_name", "name", "state"),
 )
 
-
-Table(
-    "rule_months",
-    _metadata,
-    Column("month", String(7), primary_key=True),
-    Column("rule", String(200), primary_key=True),
-    Column("fate", String(32), primary_key=True),
-    Column("count", Integer, nullable=False),
-)
-
 Table(
     "rule_months",
     _metadata,
