@@ -157,6 +157,27 @@ class HookStore:
             return False
         return True
 
+    def keep_cards(self, cards: Sequence[KeptCard], *also: Also) -> bool:
+        """Keeps cards that were given out without a memory; those that are known stay as they were.
+
+        False when another request kept one of them at the same moment; it is then kept.
+        """
+        try:
+            with told(), self._engine.begin() as connection:
+                _add_cards(connection, cards)
+                for one in also:
+                    one(connection, 0)
+        except IntegrityError:
+            return False
+        return True
+
+    def feedback_to(self, cards: Sequence[str]) -> Sequence[KeptFeedback]:
+        """What was reported of these cards, the earliest first."""
+        columns = [hook_feedback.c[name] for name in _FEEDBACK]
+        query = select(*columns).where(hook_feedback.c.card.in_(cards)).order_by(hook_feedback.c.id)
+        with told(), self._engine.connect() as connection:
+            return [KeptFeedback(*row) for row in connection.execute(query)]
+
     def tallies(self) -> Iterator[Tally]:
         """Every report, one by one, the earliest first."""
         same = (hook_cards.c.card == hook_feedback.c.card, hook_cards.c.service == hook_feedback.c.service)

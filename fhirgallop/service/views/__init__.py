@@ -1,0 +1,1 @@
+"""What the pages for clinicians, operators and reviewers show, apart from how it is laid out."""
