@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import logging
 import re
 from collections.abc import Callable, Iterator
 from typing import Any
@@ -89,8 +90,14 @@ def test_a_need_that_makes_no_sense_is_refused(given: Any) -> None:
         needs(**given)
 
 
-def test_without_authorisation_this_machine_may_everything(serving: Callable[..., TestClient]) -> None:
-    client = serving()
+def test_without_authorisation_this_machine_may_everything(
+    serving: Callable[..., TestClient], caplog: pytest.LogCaptureFixture
+) -> None:
+    with caplog.at_level(logging.INFO):
+        serving(admin_token="0" * 64)
+        assert "authorisation is off" not in caplog.text
+        client = serving()
+    assert "authorisation is off" in caplog.text
     for path in ("/maps", "/cds-services", "/cds-feedback", "/metrics"):
         assert client.get(path).status_code == 200
 

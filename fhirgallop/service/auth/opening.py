@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import logging
 import time
 from collections.abc import Callable, Iterable
 from dataclasses import dataclass
@@ -24,6 +25,8 @@ from fhirgallop.service.auth.openid import Provider, SignIn
 from fhirgallop.service.auth.people import People
 from fhirgallop.settings import Settings
 from fhirgallop.storage.tokens import Sessions, UsedTokens
+
+log: Final = logging.getLogger("fhirgallop.service")
 
 _SECONDS: Final = 3.0
 _MOST_BYTES: Final = 256 * 1024
@@ -67,6 +70,8 @@ def open_gate(settings: Settings, engine: Engine, clock: Callable[[], datetime])
     Raises:
         SettingsError: a file with keys or a secret cannot be used.
     """
+    if not settings.authorised:
+        log.info("authorisation is off: every program of this machine may ask everything")
     site = _Site(settings, engine, lambda: clock().timestamp(), [])
     address = settings.address.rstrip("/")
     people = People(Sessions(engine), site.clock, settings.session_minutes * 60)
