@@ -26,6 +26,8 @@ def faults(settings: Settings) -> Iterator[str]:
     yield from _authority(settings)
     yield from _people(settings)
     yield from _deliveries(settings)
+    if settings.second_person and not settings.sign_in:
+        yield f"{_P}SECOND_PERSON: set {_P}SIGN_IN, so that two persons can be told apart"
     if "" in settings.cds_system_actions:
         yield f"{_P}CDS_SYSTEM_ACTIONS: name each client by its `iss`"
     yield from _secure(

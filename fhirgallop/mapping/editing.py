@@ -68,6 +68,16 @@ def entries(text: str, key: str = "lines") -> list[Block]:
     ]
 
 
+def part(text: str, key: str) -> Any:
+    """A key of the map as texts, lists and dictionaries; None where it is not there, or empty.
+
+    Raises:
+        MapError: the text cannot be read.
+    """
+    node = _root(text).get(key)
+    return None if node is None else _plain(node)
+
+
 def put_entry(text: str, value: Mapping[str, Any], at: int | None = None, key: str = "lines") -> str:
     """The text with an entry of a list changed, or added at its end where `at` is None.
 

@@ -23,6 +23,7 @@ from fhirgallop.service.auth.opening import open_gate, public_keys
 from fhirgallop.service.batch_desk import BatchDesk
 from fhirgallop.service.batch_work import BatchWork, batches_coded
 from fhirgallop.service.delivering import delivering, delivery_trail, readings
+from fhirgallop.service.desk.desk import Desk
 from fhirgallop.service.exam_desk import ExamDesk
 from fhirgallop.service.examinations import Examinations
 from fhirgallop.service.fetching import open_fetcher
@@ -31,12 +32,16 @@ from fhirgallop.service.hook_desk import HookDesk, Manner
 from fhirgallop.service.housekeeping import house_kept, keeping
 from fhirgallop.service.keyed import KeyDesk
 from fhirgallop.service.operation import new_id, watch_over
+from fhirgallop.service.pages.rendering import fault_page
 from fhirgallop.service.routes import (
     about,
     batches,
     exams,
     hooks,
     maps,
+    pages_desk,
+    pages_desk_draft,
+    pages_desk_publish,
     sign_in,
     static,
     validation,
@@ -106,6 +111,8 @@ def create_app(settings: Settings, clock: Callable[[], datetime] = now) -> FastA
     policy = Policy(shadow=settings.cards_shadow)
     keys = KeyDesk(Answers(engine), clock, settings.idempotency_hours)
     app.state.clock = clock
+    app.state.policy = policy
+    app.state.desk = Desk(engine, app.state.shelf, clock, new_id, second_person=settings.second_person)
     app.state.fetcher = fetcher
     for router in (
         exams.router,
@@ -118,6 +125,9 @@ def create_app(settings: Settings, clock: Callable[[], datetime] = now) -> FastA
         watching.router,
         well_known.router,
         sign_in.router,
+        pages_desk.router,
+        pages_desk_draft.router,
+        pages_desk_publish.router,
     ):
         app.include_router(router)
     open_fhir(app, engine, app.state.shelf, clock)
@@ -176,4 +186,6 @@ def _told(
     request: Request, status: int, issues: Sequence[Issue], headers: Mapping[str, str] | None = None
 ) -> Response:
     request.state.issues = issues  # the audit trail holds them too
+    if request.method in ("GET", "POST") and "text/html" in request.headers.get("accept", ""):
+        return fault_page(request, status, issues, headers)
     return answers.outcome_answer(status, issues, headers)

@@ -127,6 +127,12 @@ class Drafts:
         with told(), self._engine.connect() as connection:
             return [Sample(*row) for row in connection.execute(query)]
 
+    def sample_ids(self, id_: str) -> tuple[int, ...]:
+        """Which sample records a draft has."""
+        query = select(draft_samples.c.id).where(draft_samples.c.draft == id_).order_by(draft_samples.c.id)
+        with told(), self._engine.connect() as connection:
+            return tuple(connection.scalars(query))
+
     def add_sample(self, id_: str, media_type: str, content: bytes, *, at: int) -> None:
         """Keeps further sample records."""
         row = {"draft": id_, "media_type": media_type, "content": content, "at": at}

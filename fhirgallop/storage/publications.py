@@ -80,13 +80,13 @@ class Publications:
         """Every decision about a map, the newest first."""
         query = select(publications).where(publications.c.name == name).order_by(publications.c.id.desc())
         with told(), self._engine.connect() as connection:
-            return [_publication(row._mapping) for row in connection.execute(query)]
+            return [_publication(row) for row in connection.execute(query).mappings()]
 
     def waiting(self) -> list[Publication]:
         """What waits for a second person, the oldest first."""
         query = select(publications).where(publications.c.state == WAITING).order_by(publications.c.id)
         with told(), self._engine.connect() as connection:
-            return [_publication(row._mapping) for row in connection.execute(query)]
+            return [_publication(row) for row in connection.execute(query).mappings()]
 
     def newest(self) -> int:
         """The id of the newest decision that counts; cheap enough to ask often."""

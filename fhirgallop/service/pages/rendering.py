@@ -2,13 +2,15 @@
 
 from __future__ import annotations
 
+from collections.abc import Mapping, Sequence
 from typing import Any, Final
 
 from fastapi import Request
 from jinja2 import Environment, PackageLoader, StrictUndefined
 from starlette.responses import HTMLResponse
 
-from fhirgallop.service.auth.caller import Caller
+from fhirgallop.outcome import Issue
+from fhirgallop.service.auth.caller import STRANGER, Caller
 from fhirgallop.service.auth.people import FORM_FIELD
 from fhirgallop.version import VERSION
 
@@ -44,6 +46,17 @@ def page(request: Request, template: str, *, status: int = 200, **values: Any) -
         values: what the template needs; one that is missing is an error.
     """
     return HTMLResponse(render(request, template, **values), status, {"Content-Security-Policy": POLICY})
+
+
+def fault_page(
+    request: Request, status: int, issues: Sequence[Issue], headers: Mapping[str, str] | None = None
+) -> HTMLResponse:
+    """What went wrong, and what to do, for a person; with the status and headers of the refusal."""
+    if not hasattr(request.state, "caller"):
+        request.state.caller = STRANGER
+    answer = page(request, "fault.html", status=status, code=status, issues=issues)
+    answer.headers.update(headers or {})
+    return answer
 
 
 def render(request: Request, template: str, **values: Any) -> str:

@@ -1,0 +1,306 @@
+"""Changes that the desk makes to the text of a map: a field is mapped, described, ignored, taken back."""
+
+from __future__ import annotations
+
+import re
+from collections.abc import Iterable, Mapping
+from typing import Any, Final
+
+from fhirgallop.codes import units
+from fhirgallop.exam import catalogue
+from fhirgallop.mapping.editing import drop_entry, entries, part, put_entry, put_part
+from fhirgallop.mapping.suggest import RECORD
+from fhirgallop.mapping.suggest_values import Target, suggest_values
+from fhirgallop.service.desk.brought import FieldSeen
+from fhirgallop.service.desk.uses import Uses, axis_label, label, uses
+
+# what a wording may mean besides a finding's own answers
+PRESENCES: Final = ("present", "absent", "uncertain", "not-examined", "not-examinable", "not-recorded")
+_SYSTEMS: Final = {
+    "patient": "patients",
+    "identifier": "examinations",
+    "encounter": "visits",
+    "examiner": "staff",
+}
+_STATUSES: Final = ("final", "preliminary", "amended", "corrected", "entered-in-error")
+_MOST_WORDINGS: Final = 60
+_PAIR: Final = re.compile(r"\s*[0-9]{2,3}\s*/\s*[0-9]{2,3}\s*")
+_PAIRED: Final = {"pressure.systolic": 1, "pressure.diastolic": 2}
+_DATES: Final = (
+    (r"[0-9]{1,2}\.[0-9]{1,2}\.[0-9]{4}", "DD.MM.YYYY"),
+    (r"[0-9]{4}/[0-9]{1,2}/[0-9]{1,2}", "YYYY/MM/DD"),
+    (r"[0-9]{1,2}-[0-9]{1,2}-[0-9]{4}", "DD-MM-YYYY"),
+    (r"[0-9]{8}", "YYYYMMDD"),
+)
+
+
+def put_finding(text: str, field: FieldSeen, finding: str, side: str = "") -> str:
+    """The text with a line that reads a field as a finding, the meanings of its known values put in.
+
+    Raises:
+        MapError: the text cannot be read.
+    """
+    return put_entry(text, _entry(field, finding, side))
+
+
+def _entry(field: FieldSeen, finding: str, side: str) -> dict[str, Any]:
+    definition = catalogue.load().findings[finding]
+    entry: dict[str, Any] = {"finding": finding}
+    if side:
+        entry["instance"] = side
+    entry["field"] = field.name
+    if definition.kind == "quantity":
+        entry["number"] = _number(field, finding)
+        if words := _meanings(field, Target(finding), [v for v in field.values if not _has_digit(v)]):
+            entry["choice"] = words
+    elif definition.kind == "text":
+        entry["text"] = "true"
+    else:
+        entry["choice"] = _meanings(field, Target(finding), field.values)
+    if side and "side" in definition.qualifiers:
+        entry["qualifiers"] = {"side": {"constant": side}}
+    return {key: value for key, value in entry.items() if value != {}}
+
+
+def _number(field: FieldSeen, finding: str) -> dict[str, str]:
+    known = units.table().by_code
+    number = {"unit": field.unit if field.unit in known else catalogue.load().findings[finding].unit}
+    values = [value for value in field.values if _has_digit(value)]
+    if finding in _PAIRED and values and all(_PAIR.fullmatch(value) for value in values):
+        number |= {"split": "/", "part": str(_PAIRED[finding])}
+    if any(re.fullmatch(r"-?[0-9]+,[0-9]+", value.strip()) for value in values):
+        number["decimal"] = ","
+    return number
+
+
+def _has_digit(value: str) -> bool:
+    return any(sign.isdigit() for sign in value)
+
+
+def _meanings(field: FieldSeen, target: Target, values: Iterable[str]) -> dict[str, str]:
+    """What of these values is understood; the others stay open."""
+    values = list(values)
+    by_label = suggest_values(target, [field.labels.get(value, value) for value in values])
+    by_value = suggest_values(target, values)
+    found = {value: by_label.get(field.labels.get(value, value)) or by_value.get(value) for value in values}
+    return {value: meaning for value, meaning in found.items() if meaning}
+
+
+def describe(text: str, field: FieldSeen, axis: str, at: int | None, finding: str = "murmur") -> str:
+    """The text with a field that describes a finding: by a line that is there, or by a new one.
+
+    A new line says that the finding is there whenever the field is filled.
+
+    Raises:
+        MapError: the text cannot be read.
+        IndexError: there is no such line.
+    """
+    source: dict[str, Any] = {"field": field.name}
+    known = catalogue.load().axes[axis]
+    if axis == "grade":
+        highest = "4" if any("/4" in value.replace(" ", "") for value in field.values) else "6"
+        source["grade"] = {"of": highest}
+    elif not known.values:
+        source["text"] = "true"
+    else:
+        values = _meanings(field, Target(finding, axis), field.values)
+        source["choice"] = {
+            value: meaning for value, meaning in values.items() if meaning not in PRESENCES
+        } | {value: "not-recorded" for value, meaning in values.items() if meaning in PRESENCES}
+        if not source["choice"]:
+            source = {"field": field.name, "text": "true"}
+    if at is None:
+        entry: dict[str, Any] = {"finding": finding, "when": {"field": field.name, "blank": "false"}}
+        return put_entry(text, {**entry, "presence": "present", "qualifiers": {axis: source}})
+    entry = dict(entries(text)[at].value)
+    entry["qualifiers"] = {**(entry.get("qualifiers") or {}), axis: source}
+    return put_entry(text, entry, at)
+
+
+def remark(text: str, field: FieldSeen, at: int | None) -> str:
+    """The text with a field whose words travel with a line's finding, or with the examination."""
+    if at is None:
+        return put_entry(text, {"note": field.name})
+    return put_entry(text, {**entries(text)[at].value, "note": field.name}, at)
+
+
+def ignore(text: str, name: str, reason: str) -> str:
+    """The text with a field that is left out for a stated reason."""
+    return put_entry(text, {"field": name, "reason": reason}, key="ignore")
+
+
+def put_record(text: str, field: FieldSeen, what: str, *, address: str, zone: str) -> str:
+    """The text with a field as a part of the record; a second one of time or number joins the first.
+
+    Args:
+        text: the map.
+        field: the field.
+        what: patient, identifier, time, encounter, examiner or status.
+        address: where the clinic's numbers belong.
+        zone: zone of times without one.
+    """
+    held = part(text, "record")
+    old = held.get(what) if isinstance(held, Mapping) else None
+    old = dict(old) if isinstance(old, Mapping) else {}
+    joined = [*(old.get("fields") or ([old["field"]] if old.get("field") else [])), field.name]
+    if what == "status":
+        choice = {v: s for v in field.values for s in [_status(field.labels.get(v, v))] if s}
+        made: dict[str, Any] = {"field": field.name, "choice": choice}
+    elif what == "time":
+        made = _time(old, joined, field, zone)
+    elif what == "identifier":
+        named = {"field": joined[0]} if len(joined) == 1 else {"fields": list(dict.fromkeys(joined))}
+        made = {**named, "system": old.get("system") or f"{address}/{_SYSTEMS[what]}"}
+    else:
+        made = {"field": field.name, "system": old.get("system") or f"{address}/{_SYSTEMS[what]}"}
+    return put_part(text, what, made, within="record")
+
+
+def _time(old: Mapping[str, Any], joined: list[str], field: FieldSeen, zone: str) -> dict[str, Any]:
+    made: dict[str, Any] = (
+        {"field": joined[0]} if len(joined) == 1 else {"fields": list(dict.fromkeys(joined))}
+    )
+    form = old.get("format") or _written_form(field.values)
+    if form:
+        made["format"] = form
+    if zone:
+        made["zone"] = old.get("zone") or zone
+    return made
+
+
+def _written_form(values: Iterable[str]) -> str:
+    """The written form that all values share; empty for ISO 8601, and where they share none."""
+    seen = [value.strip() for value in values]
+    for pattern, form in _DATES:
+        for clock, more in (
+            ("", ""),
+            (r" [0-9]{1,2}:[0-9]{2}", " hh:mm"),
+            (r" [0-9]{1,2}:[0-9]{2}:[0-9]{2}", " hh:mm:ss"),
+        ):
+            if seen and all(re.fullmatch(pattern + clock, value) for value in seen):
+                return form + more
+    return ""
+
+
+def _status(value: str) -> str:
+    words = value.strip().casefold()
+    if words in _STATUSES:
+        return words
+    if words in {"signed", "complete", "completed", "done"}:
+        return "final"
+    return "preliminary" if words in {"draft", "open", "unsigned", "in progress"} else ""
+
+
+def put_meanings(text: str, at: int, meanings: Mapping[str, str], told: Mapping[str, str]) -> str:
+    """The text with what the wordings of a line's box mean, its unit, and what a blank box means.
+
+    Args:
+        text: the map.
+        at: place of the line.
+        meanings: wording -> presence or answer; an empty meaning takes the wording out.
+        told: `unit`, `decimal`, `blank-means`, `separator`; an empty one takes the key out.
+    """
+    entry = dict(entries(text)[at].value)
+    held = entry.get("choices") if isinstance(entry.get("choices"), Mapping) else None
+    choice = dict((held or {}).get("values") or entry.get("choice") or {})
+    choice = _changed(choice, meanings)
+    separator = told.get("separator", (held or {}).get("separator") or "")
+    entry.pop("choice", None), entry.pop("choices", None)
+    if choice and separator:
+        entry["choices"] = {"separator": separator, "values": choice}
+    elif choice:
+        entry["choice"] = choice
+    number = entry.get("number")
+    if isinstance(number, Mapping):
+        number = {**number, **{k: told[k] for k in ("unit", "decimal") if told.get(k)}}
+        entry["number"] = {k: v for k, v in number.items() if not (k == "decimal" and told.get(k) == "")}
+    if "blank-means" in told:
+        entry.pop("blank-means", None)
+        if told["blank-means"]:
+            entry["blank-means"] = told["blank-means"]
+    return put_entry(text, _in_order(entry), at)
+
+
+def put_qualifier_meanings(text: str, at: int, axis: str, meanings: Mapping[str, str]) -> str:
+    """The text with what the wordings of a describing box mean."""
+    entry = dict(entries(text)[at].value)
+    qualifiers = dict(entry["qualifiers"])
+    source = dict(qualifiers[axis])
+    choice = _changed(dict(source.get("choice") or {}), meanings)
+    source.pop("choice", None), source.pop("text", None)
+    source |= {"choice": choice} if choice else {"text": "true"}
+    qualifiers[axis] = source
+    return put_entry(text, {**entry, "qualifiers": qualifiers}, at)
+
+
+def _changed(held: dict[str, Any], meanings: Mapping[str, str]) -> dict[str, Any]:
+    for wording, meaning in meanings.items():
+        if not meaning:
+            held.pop(wording, None)
+        elif not isinstance(held.get(wording), Mapping):  # a longer meaning is changed in the text
+            held[wording] = meaning
+    return held
+
+
+_ORDER: Final = ("finding", "instance", "section", "when", "field", "presence", "choice", "choices", "number",
+                 "text", "findings", "qualifiers", "note", "time", "blank-means")  # fmt: skip
+
+
+def _in_order(entry: Mapping[str, Any]) -> dict[str, Any]:
+    return {key: entry[key] for key in _ORDER if key in entry}
+
+
+def take_back(text: str, name: str) -> str:
+    """The text without everything that a field is used for."""
+    found: Uses = uses(text)
+    for use in sorted(found.by_field.get(name, ()), key=lambda one: -(one.at or 0)):
+        if use.kind == "ignored" and use.at is not None:
+            text = drop_entry(text, use.at, "ignore")
+        elif use.kind == "record":
+            text = _out_of_record(text, use.says, name)
+    lines = {use.at for use in found.by_field.get(name, ()) if use.at is not None and use.kind != "ignored"}
+    for at in sorted(lines, reverse=True):
+        text = _out_of_line(text, at, name)
+    return text
+
+
+def _out_of_record(text: str, what: str, name: str) -> str:
+    held = dict(part(text, "record")[what])
+    rest = [one for one in held.pop("fields", None) or [] if one != name]
+    held.pop("field", None)
+    if not rest:
+        return put_part(text, what, None, within="record")
+    named: dict[str, Any] = {"field": rest[0]} if len(rest) == 1 else {"fields": rest}
+    return put_part(text, what, {**named, **held}, within="record")
+
+
+def _out_of_line(text: str, at: int, name: str) -> str:
+    """A line goes when the field is its box, or decides whether it is read; else only what the field says."""
+    entry = dict(entries(text)[at].value)
+    if entry.get("note") == name:
+        del entry["note"]
+    qualifiers = {
+        axis: source
+        for axis, source in (entry.get("qualifiers") or {}).items()
+        if source.get("field") != name
+    }
+    entry["qualifiers"] = qualifiers
+    if isinstance(entry.get("time"), Mapping) and name in (
+        entry["time"].get("field"), *(entry["time"].get("fields") or ())
+    ):  # fmt: skip
+        del entry["time"]
+    if not qualifiers:
+        del entry["qualifiers"]
+    decides = isinstance(entry.get("when"), Mapping) and entry["when"].get("field") == name
+    if entry.get("field") == name or decides or not entry.keys() - {"finding", "instance"}:
+        return drop_entry(text, at)
+    return put_entry(text, entry, at)
+
+
+def target_words(target: Target) -> str:
+    """What a field may mean, in words."""
+    if target.finding == RECORD:
+        return f"the record's {target.axis}"
+    if target.axis:
+        return f"{label(target.finding)}: {axis_label(target.axis).lower()}"
+    return label(target.finding)
