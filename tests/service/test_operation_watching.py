@@ -4,7 +4,9 @@ from __future__ import annotations
 
 import asyncio
 import gc
+import hashlib
 import json
+import logging
 import re
 from collections.abc import Callable
 from pathlib import Path
@@ -14,8 +16,11 @@ import pytest
 from fastapi import FastAPI
 from prometheus_client.parser import text_string_to_metric_families
 from sqlalchemy import text
+from starlette.testclient import TestClient
 
+from fhirgallop import settings
 from fhirgallop.outcome import Issue
+from fhirgallop.service.app import create_app
 from fhirgallop.service.server import Server
 
 WHERE = "/exams?map=fernwood-heart-form"
@@ -194,3 +199,24 @@ def test_what_was_loaded_is_laid_aside_when_the_server_has_started(
         assert gc.get_freeze_count() > before + 50_000
     finally:
         gc.unfreeze()
+
+
+def test_figures_are_for_operators_and_a_caller_is_logged_by_a_digest(
+    tmp_path: Path, root: Path, caplog: pytest.LogCaptureFixture
+) -> None:
+    token = "of-the-administrators-of-fernwood"
+    chosen = settings.load(
+        maps=root / "examples/informatician", database=f"sqlite:///{tmp_path / 'a.sqlite3'}",
+        admin_token=hashlib.sha256(token.encode()).hexdigest(), address="http://localhost:8470",
+    )  # fmt: skip
+    with TestClient(create_app(chosen), base_url="http://localhost:8470") as client:
+        assert client.get("/metrics").status_code == 401
+        for path in ("/health", "/ready"):
+            assert client.get(path).status_code == 200
+        with caplog.at_level(logging.INFO, "fhirgallop.service"):
+            told = client.get("/metrics", headers={"Authorization": f"Bearer {token}"})
+        assert told.status_code == 200
+        assert b"fhirgallop_ready" in told.content
+    (line,) = [record for record in caplog.records if record.getMessage() == "GET /metrics"]
+    assert (line.caller, len(line.who)) == ("administrator", 12)  # type: ignore[attr-defined]
+    assert token not in caplog.text
