@@ -9,6 +9,7 @@ import signal
 import subprocess
 import sys
 import threading
+import time
 from collections.abc import Callable, Iterator
 from pathlib import Path
 from typing import Any
@@ -97,6 +98,15 @@ def test_sudden_death_leaves_whole_examinations_and_all_that_were_told(address: 
         engine.dispose()
 
 
+def until(true: Callable[[], bool]) -> None:
+    """Waits for something that comes soon; a minute is too long."""
+    for _ in range(6000):
+        if true():
+            return
+        time.sleep(0.01)
+    raise AssertionError("it did not come")
+
+
 def no_large_files() -> None:
     """For this process alone every file is full at a megabyte."""
     signal.signal(signal.SIGXFSZ, signal.SIG_IGN)
@@ -162,18 +172,17 @@ def test_a_restart_of_postgres_in_the_middle_is_told_and_got_over(
     writers = [threading.Thread(target=write, args=(n,)) for n in range(3)]
     for writer in writers:
         writer.start()
-    while len(told) < 30:
-        stop.wait(0.01)
-    postgres_server.stop(how)
-    while len(failed) < 6:
-        stop.wait(0.01)
-    postgres_server.start()
-    before = len(told)
-    while len(told) < before + 30:
-        stop.wait(0.01)
-    stop.set()
-    for writer in writers:
-        writer.join()
+    try:
+        until(lambda: len(told) >= 30)
+        postgres_server.stop(how)
+        until(lambda: len(failed) >= 6)
+        postgres_server.start()
+        before = len(told)
+        until(lambda: len(told) >= before + 30)
+    finally:
+        stop.set()
+        for writer in writers:
+            writer.join()
     found = kept(engine)
     assert told <= found
     # of the transactions that failed only those may be there that were under way when the answer was lost
