@@ -16,7 +16,7 @@ from fhirgallop.service.auth.needs import Need, needs
 FILLED = {"edition": "r4", "resource_type": "Observation"}
 # addresses that hold no patient's data, and are meant to be read by anybody
 OPEN = {
-    "/", "/health", "/ready", "/docs", "/style.css", "/static/{name:path}", "/rules/{rule_id}", "/sign-in",
+    "/health", "/ready", "/docs", "/style.css", "/static/{name:path}", "/rules/{rule_id}", "/sign-in",
     "/sign-in/start", "/sign-in/answer", "/hooks/org.fhirgallop.exam-draft", "/.well-known/jwks.json",
     "/fhir/{edition}/.well-known/smart-configuration", "/fhir/{edition}/metadata",
 }  # fmt: skip
