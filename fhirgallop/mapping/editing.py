@@ -41,7 +41,7 @@ def new_map(name: str, title: str) -> str:
     """The text of a map that reads nothing yet; it has faults until the record's parts are told."""
     return (
         f"template-map: {FORMAT_VERSION}\nname: {_scalar(name)}\nversion: {_scalar('1')}\n"
-        f"title: {_scalar(title)}\n\nrecord:\n\nlines:\n\nignore:\n"
+        f"title: {_scalar(title)}\n\nrecord: {{}}\n\nlines:\n"
     )
 
 
@@ -86,6 +86,8 @@ def put_entry(text: str, value: Mapping[str, Any], at: int | None = None, key: s
         IndexError: there is no such entry.
     """
     found = entries(text, key)
+    if at is None and all(name.text != key for name, _ in _root(text).items):
+        text = f"{text.rstrip()}\n\n{key}:\n"
     rows = text.splitlines()
     if at is not None:
         block = found[at]
@@ -127,7 +129,7 @@ def _key_set(rows: list[str], text: str, key: str, value: Any) -> list[str]:
         first, end = _block(text, key)
         end = _trimmed(rows, first, end)
         old = _loaded("\n".join(rows[first:end]) + "\n")
-    if isinstance(value, Mapping) and isinstance(old.get(key), CommentedMap):
+    if isinstance(value, Mapping) and isinstance(old.get(key), CommentedMap) and old[key]:
         _merge(old[key], value)
     else:
         old[key] = _quoted(value)

@@ -88,7 +88,10 @@ def _target(bench: Bench, field: FieldSeen, target: str, side: str) -> Done:
         if axis not in PARTS:
             raise AskedError("Choose a part of the record from the list.")
         draft = bench.draft
-        made = changes.put_record(text, field, axis, address=draft.address, zone=draft.zone)
+        try:
+            made = changes.put_record(text, field, axis, address=draft.address, zone=draft.zone)
+        except changes.TakenError:
+            raise AskedError(f"Another field is {PARTS[axis]} already; take that one back first.") from None
         return Done(made, f"{name}: {PARTS[axis]}", go_on=True)
     known = catalogue.load()
     if finding not in known.findings:

@@ -15,7 +15,8 @@ from fhirgallop.service.desk.brought import FieldSeen
 from fhirgallop.service.desk.uses import Uses, axis_label, label, uses
 
 # what a wording may mean besides a finding's own answers
-PRESENCES: Final = ("present", "absent", "uncertain", "not-examined", "not-examinable", "not-recorded")
+_PRESENCES: Final = ("present", "absent", "uncertain")
+_WHY_MISSING: Final = ("not-examined", "not-examinable", "not-recorded")
 _SYSTEMS: Final = {
     "patient": "patients",
     "identifier": "examinations",
@@ -32,6 +33,10 @@ _DATES: Final = (
     (r"[0-9]{1,2}-[0-9]{1,2}-[0-9]{4}", "DD-MM-YYYY"),
     (r"[0-9]{8}", "YYYYMMDD"),
 )
+
+
+class TakenError(Exception):
+    """Another field is this part of the record already; the text is the part."""
 
 
 def put_finding(text: str, field: FieldSeen, finding: str, side: str = "") -> str:
@@ -83,7 +88,21 @@ def _meanings(field: FieldSeen, target: Target, values: Iterable[str]) -> dict[s
     by_label = suggest_values(target, [field.labels.get(value, value) for value in values])
     by_value = suggest_values(target, values)
     found = {value: by_label.get(field.labels.get(value, value)) or by_value.get(value) for value in values}
-    return {value: meaning for value, meaning in found.items() if meaning}
+    known = dict(meanings_of(target))
+    return {value: meaning for value, meaning in found.items() if meaning in known}
+
+
+def meanings_of(target: Target) -> list[tuple[str, str]]:
+    """(id, words) of everything that a wording may mean in a box of this finding, or property."""
+    known = catalogue.load()
+    definition = known.findings.get(target.finding)
+    axis = target.axis or (definition.answers if definition else "")
+    own = [(one.id, one.label) for one in known.axes[axis].values.values()] if axis in known.axes else []
+    if target.axis:
+        return [*own, ("not-recorded", "says nothing")]
+    words = (*_PRESENCES, *_WHY_MISSING) if definition and definition.kind == "sign" else _WHY_MISSING
+    ids = {id_ for id_, _ in own}
+    return [*own, *((word, word.replace("-", " ")) for word in words if word not in ids)]
 
 
 def describe(text: str, field: FieldSeen, axis: str, at: int | None, finding: str = "murmur") -> str:
@@ -103,10 +122,7 @@ def describe(text: str, field: FieldSeen, axis: str, at: int | None, finding: st
     elif not known.values:
         source["text"] = "true"
     else:
-        values = _meanings(field, Target(finding, axis), field.values)
-        source["choice"] = {
-            value: meaning for value, meaning in values.items() if meaning not in PRESENCES
-        } | {value: "not-recorded" for value, meaning in values.items() if meaning in PRESENCES}
+        source["choice"] = _meanings(field, Target(finding, axis), field.values)
         if not source["choice"]:
             source = {"field": field.name, "text": "true"}
     if at is None:
@@ -138,8 +154,14 @@ def put_record(text: str, field: FieldSeen, what: str, *, address: str, zone: st
         what: patient, identifier, time, encounter, examiner or status.
         address: where the clinic's numbers belong.
         zone: zone of times without one.
+
+    Raises:
+        MapError: the text cannot be read.
+        TakenError: another field is this part already.
     """
     held = part(text, "record")
+    if what not in ("time", "identifier") and isinstance(held, Mapping) and "field" in (held.get(what) or ()):
+        raise TakenError(what)
     old = held.get(what) if isinstance(held, Mapping) else None
     old = dict(old) if isinstance(old, Mapping) else {}
     joined = [*(old.get("fields") or ([old["field"]] if old.get("field") else [])), field.name]

@@ -8,12 +8,12 @@ from typing import Any, Final
 
 from fhirgallop.exam import catalogue
 from fhirgallop.mapping.reading import read_map
-from fhirgallop.mapping.suggest import Suggestion, suggest
-from fhirgallop.mapping.suggest_values import suggest_values
+from fhirgallop.mapping.suggest import RECORD, Suggestion, suggest
+from fhirgallop.mapping.suggest_values import Target, suggest_values
 from fhirgallop.mapping.template_map import TemplateMap
 from fhirgallop.outcome import Issue, has_errors
 from fhirgallop.service.desk.brought import Brought, FieldSeen
-from fhirgallop.service.desk.changes import PRESENCES, target_words
+from fhirgallop.service.desk.changes import meanings_of, target_words
 from fhirgallop.service.desk.uses import Use, Uses, axis_label, label, uses
 from fhirgallop.storage.drafts import Draft
 
@@ -159,8 +159,9 @@ def _fits(one: Suggestion) -> bool:
 def _offer(one: Suggestion, seen: FieldSeen) -> Offer:
     words = target_words(one.target) + (f", {one.side}" if one.side else "")
     said = {seen.labels.get(value, value): value for value in list(seen.values)[:_WORDINGS]}
-    found = suggest_values(one.target, said)
-    pairs = tuple((said[wording], meaning) for wording, meaning in found.items())
+    known = dict(meanings_of(one.target)) if one.target.finding != RECORD else {}
+    found = suggest_values(one.target, said) if known else {}
+    pairs = tuple((said[wording], known[meaning]) for wording, meaning in found.items() if meaning in known)
     return Offer(str(one.target), words, one.reasons, pairs, one.side)
 
 
@@ -170,11 +171,10 @@ def _meant(use: Use, seen: FieldSeen) -> list[Meant]:
         choices = value.get("choices") if isinstance(value.get("choices"), Mapping) else {}
         held = value.get("choice") or (choices or {}).get("values") or {}
         number = value.get("number") if isinstance(value.get("number"), Mapping) else None
-        definition = catalogue.load().findings.get(str(value["finding"]))
         return [
             Meant(
                 use, "", _rows(held, seen, numbers=number is not None or bool(value.get("text"))),
-                _options(definition.answers if definition else ""),
+                tuple(meanings_of(Target(str(value["finding"])))),
                 str(number.get("unit", "")) if number else None,
                 str(number.get("decimal", "")) if number else "",
                 str(value.get("blank-means") or ""), str((choices or {}).get("separator") or ""),
@@ -183,7 +183,10 @@ def _meant(use: Use, seen: FieldSeen) -> list[Meant]:
     if use.kind == "qualifier":
         return [
             Meant(
-                use, axis, _rows(source.get("choice") or {}, seen, numbers="grade" in source), _options(axis)
+                use,
+                axis,
+                _rows(source.get("choice") or {}, seen, numbers="grade" in source),
+                tuple(meanings_of(Target(str(value.get("finding") or ""), axis))),
             )
             for axis, source in (value.get("qualifiers") or {}).items()
             if isinstance(source, Mapping) and source.get("field") == seen.name
@@ -203,20 +206,6 @@ def _rows(held: Any, seen: FieldSeen, *, numbers: bool) -> tuple[tuple[str, int,
         )
         for name in names[:_WORDINGS]
     )  # fmt: skip
-
-
-def _options(axis: str) -> tuple[tuple[str, str], ...]:
-    known = catalogue.load().axes.get(axis)
-    own = [(value.id, value.label) for value in known.values.values()] if known else []
-    words = [(presence, presence.replace("-", " ")) for presence in PRESENCES]
-    return (
-        (*own, *words) if not known or axis not in _described() else (*own, ("not-recorded", "says nothing"))
-    )
-
-
-def _described() -> frozenset[str]:
-    """Axes that describe findings, and are no answers."""
-    return frozenset(axis for one in catalogue.load().findings.values() for axis in one.qualifiers)
 
 
 def properties(finding: str) -> list[tuple[str, str]]:
