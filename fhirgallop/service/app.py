@@ -39,23 +39,32 @@ from fhirgallop.service.routes import (
     exams,
     hooks,
     maps,
+    pages_deliveries,
     pages_desk,
     pages_desk_draft,
     pages_desk_publish,
+    pages_exams,
+    pages_home,
+    pages_knowledge,
     sign_in,
     static,
     validation,
     watching,
     well_known,
 )
+from fhirgallop.service.rule_tally import RuleTally, rules_counted
 from fhirgallop.service.shelf import Shelf, keep_versions, load_shelf
+from fhirgallop.service.views.answering import Answers as CardAnswers
 from fhirgallop.settings import Settings
 from fhirgallop.storage.batches import Batches
 from fhirgallop.storage.engine import open_database
+from fhirgallop.storage.exam_search import ExamSearch
 from fhirgallop.storage.hooks import HookStore
 from fhirgallop.storage.idempotency import Answers
 from fhirgallop.storage.maps import MapStore
+from fhirgallop.storage.outbox import Outbox
 from fhirgallop.storage.publications import Publications
+from fhirgallop.storage.rule_counts import RuleCounts
 from fhirgallop.storage.submissions import Submissions
 from fhirgallop.version import VERSION
 
@@ -87,6 +96,7 @@ def create_app(settings: Settings, clock: Callable[[], datetime] = now) -> FastA
         _app.state.readiness.try_out()
         async with (
             house_kept(engine, keeping(settings), clock),
+            rules_counted(_app.state.rule_tally),
             delivering(dispatch, settings.finish_seconds),
             batches_coded(_app.state.batch_work, settings.finish_seconds),
         ):
@@ -128,6 +138,10 @@ def create_app(settings: Settings, clock: Callable[[], datetime] = now) -> FastA
         pages_desk.router,
         pages_desk_draft.router,
         pages_desk_publish.router,
+        pages_home.router,
+        pages_exams.router,
+        pages_knowledge.router,
+        pages_deliveries.router,
     ):
         app.include_router(router)
     open_fhir(app, engine, app.state.shelf, clock)
@@ -140,7 +154,14 @@ def create_app(settings: Settings, clock: Callable[[], datetime] = now) -> FastA
     if dispatch:
         app.state.metrics.watch(partial(readings, dispatch))
     manner = Manner(policy, settings.cards_critical, settings.pages.rstrip("/"), settings.cds_system_actions)
-    app.state.hooks = HookDesk(HookStore(engine), clock, rulebook.load(), manner, app.state.metrics)
+    app.state.rule_counts = RuleCounts(engine)
+    app.state.rule_tally = RuleTally(app.state.rule_counts, clock)
+    app.state.hooks = HookDesk(
+        HookStore(engine), clock, rulebook.load(), manner, app.state.metrics, app.state.rule_tally.raised
+    )
+    app.state.exam_search = ExamSearch(engine)
+    app.state.card_answers = CardAnswers(HookStore(engine), clock)
+    app.state.outbox = Outbox(engine)
     app.state.exams = ExamDesk(
         Examinations(
             Submissions(engine), clock, delivered=(settings.edition, settings.snomed) if dispatch else None

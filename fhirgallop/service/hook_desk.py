@@ -80,12 +80,15 @@ class HookDesk:
         rules: Rulebook,
         manner: Manner,
         metrics: Metrics,
+        tally: Callable[[Mapping[tuple[str, str], int]], None] = lambda _: None,
     ) -> None:
+        """`tally` is told what the rules raised, by rule and fate, as the metrics are."""
         self._store = store
         self._clock = clock
         self.rules: Final = rules
         self._manner = manner
         self._metrics = metrics
+        self._tally = tally
 
     def answer(
         self, service: Service, call: Call, draft: Mapping[str, Any] | None, client: str, *also: Also
@@ -207,6 +210,7 @@ class HookDesk:
         """What became of each rule: ids and fates, no patient's data."""
         fates: Counter[tuple[str, str]] = Counter((line.rule, line.fate) for line in decision.log)
         self._metrics.raised(fates)
+        self._tally(fates)
         said = ", ".join(f"{rule}={fate}" for rule, fate in sorted(fates))
         log.info("hook %s: %s", service.id, said or "nothing raised")
 

@@ -267,9 +267,10 @@ class Outbox:
         with told(), self._engine.begin() as connection:
             return connection.execute(rested.values(open_until=now)).rowcount == 1
 
-    def drop(self, numbers: Sequence[int]) -> int:
-        """Gives deliveries up that failed or wait; how many there were."""
-        return self._change(numbers, ("failed", "waiting"), {"state": "dropped"})
+    def drop(self, numbers: Sequence[int], reason: str = "") -> int:
+        """Gives deliveries up that failed or wait, for a reason, if one is said; how many there were."""
+        values = {"reason": reason[:_REASON_LENGTH]} if reason else {}
+        return self._change(numbers, ("failed", "waiting"), {"state": "dropped", **values})
 
     def _change(self, numbers: Sequence[int] | None, states: Sequence[str], values: dict[str, Any]) -> int:
         where = [outbox.c.destination == self._destination, outbox.c.state.in_(states)]

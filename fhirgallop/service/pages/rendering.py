@@ -36,6 +36,16 @@ _templates: Final = Environment(
 )
 
 
+def moment(written: str) -> str:
+    """A FHIR dateTime as a person reads it: day, time of day and offset, as they were written."""
+    day, _, clock = written.partition("T")
+    zone = "UTC" if clock.endswith("Z") else clock[-6:] if "+" in clock or "-" in clock else ""
+    return " ".join(filter(None, (day, clock[:5], zone)))
+
+
+_templates.filters["moment"] = moment
+
+
 def page(request: Request, template: str, *, status: int = 200, **values: Any) -> HTMLResponse:
     """A page for whoever asks.
 

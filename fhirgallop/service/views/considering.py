@@ -149,11 +149,6 @@ def consider(exam: Exam, chart: Any, now: datetime, *, rules: Rulebook, policy: 
     )
 
 
-def card_of(considered: Considered, key: str) -> ShownCard | None:
-    """The card with this key, in view or folded."""
-    return next((one for one in (*considered.cards, *considered.folded) if one.card.key == key), None)
-
-
 def _ask(decision: Decision) -> str:
     return decision.ask.text if decision.ask else ""
 
