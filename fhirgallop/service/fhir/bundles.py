@@ -30,7 +30,7 @@ from fhirgallop.service.fhir.query import parse
 from fhirgallop.service.fhir.rewriting import Rewriter
 from fhirgallop.service.fhir.search import run, searchset
 from fhirgallop.service.fhir.steps import Step, at_entry, located, placed, step_of
-from fhirgallop.service.fhir.writing import Saved, as_refusal, condition, judged
+from fhirgallop.service.fhir.writing import Saved, anew, as_refusal, condition, judged
 from fhirgallop.storage.resources import NewVersion
 
 MOST_ENTRIES: Final = 1000
@@ -47,11 +47,14 @@ def answered(request: Request, wish: Wish, base: Base, bundle: dict[str, Any]) -
         text = f"A Bundle may have {MOST_ENTRIES} entries; send fewer at a time."
         raise refusal(413, "too-costly", "bundle-too-many", text)
     if bundle["type"] == "batch":
-        told = _batch(request, wish, base, entries, _batched(bundle, base))
-    else:
-        judged(bundle, base.edition)
-        told = _transaction(request, wish, base, entries)
-    response: dict[str, Any] = {"resourceType": "Bundle", "type": f"{bundle['type']}-response"}
+        wrong = _batched(bundle, base)
+        return _response(wish, "batch", _batch(request, wish, base, entries, wrong))
+    judged(bundle, base.edition)
+    return anew(lambda: _response(wish, "transaction", _transaction(request, wish, base, entries)))
+
+
+def _response(wish: Wish, kind: str, told: list[dict[str, Any]]) -> Response:
+    response: dict[str, Any] = {"resourceType": "Bundle", "type": f"{kind}-response"}
     if told:
         response["entry"] = told
     return answer(wish, fhirjson.write(response))

@@ -22,7 +22,7 @@ from fhirgallop.service.fhir.conditions import expected_version, stale, version_
 from fhirgallop.service.fhir.interactions import answer, desk, seen
 from fhirgallop.service.fhir.negotiation import Wish
 from fhirgallop.service.fhir.query import Parameters
-from fhirgallop.service.fhir.writing import Resource, Saved, condition, judged, of_type
+from fhirgallop.service.fhir.writing import Resource, Saved, anew, condition, judged, of_type
 from fhirgallop.storage.resource_search import Kept
 
 _NO_UPSERT: Final = (
@@ -48,6 +48,10 @@ class Sent:
 
 def create(request: Request, wish: Wish, sent: Sent, unless: str | None) -> Response:
     """A new resource; nothing where the condition (If-None-Exist) is met by one already."""
+    return anew(lambda: _create(request, wish, sent, unless))
+
+
+def _create(request: Request, wish: Wish, sent: Sent, unless: str | None) -> Response:
     existing = met(request, sent, condition(unless) if unless is not None else None)
     if existing is None:
         return _save(request, wish, sent, None)
@@ -58,12 +62,14 @@ def create(request: Request, wish: Wish, sent: Sent, unless: str | None) -> Resp
 
 def update(request: Request, wish: Wish, sent: Sent, fhir_id: str) -> Response:
     """The next version of a resource."""
-    return _save(request, wish, sent, known(request, sent, fhir_id, request.headers.get("if-match")))
+    wanted = request.headers.get("if-match")
+    return anew(lambda: _save(request, wish, sent, known(request, sent, fhir_id, wanted)))
 
 
 def update_found(request: Request, wish: Wish, sent: Sent, parameters: Parameters) -> Response:
     """The next version of the one resource that fits; a new one where none does."""
-    return _save(request, wish, sent, fitting(request, sent, parameters, request.headers.get("if-match")))
+    wanted = request.headers.get("if-match")
+    return anew(lambda: _save(request, wish, sent, fitting(request, sent, parameters, wanted)))
 
 
 def met(request: Request, sent: Sent, parameters: Parameters | None) -> Kept | None:

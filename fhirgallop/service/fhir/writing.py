@@ -15,6 +15,7 @@ from urllib.parse import parse_qsl
 
 from sqlalchemy import Connection
 from sqlalchemy.exc import IntegrityError
+from starlette.responses import Response
 
 from fhirgallop.codes import fhirjson
 from fhirgallop.conformance.validator import validate
@@ -46,10 +47,19 @@ _OF_NOTHING: Final = Issue(
     expression="Provenance.target",
 )  # fmt: skip
 _MOST_TARGETS: Final = 20  # that are looked for
+_RACED: Final = Issue(
+    "error", "conflict", "resource-raced",
+    "Another request changed the same resource at this moment; read it again, then send yours.",
+)  # fmt: skip
+_TRIES: Final = 4
 _DUPLICATE: Final = Issue(
     "error", "duplicate", "resource-duplicate",
     "There is a resource with this identity already; update it, or create with If-None-Exist.",
 )  # fmt: skip
+
+
+class RacedError(RefusalError):
+    """Another request was first; the same may be worked out anew from what is there now."""
 
 
 @dataclass(frozen=True, slots=True)
@@ -162,7 +172,7 @@ class Desk:
         """Keeps them all, or none.
 
         Raises:
-            RefusalError: 409 or 412 where another request was first.
+            RacedError: another request was first.
             StorageError: the database failed.
         """
         at = dates.ms(self.clock())
@@ -170,13 +180,22 @@ class Desk:
             written = self.store.write(versions, at=at, also=tuple(also))
         except (IntegrityError, ChangedMeanwhileError):
             if all(new.follows == 0 for new in versions):
-                raise RefusalError(409, [_DUPLICATE]) from None
-            text = "Another request changed the same resource at this moment; read it again, then send yours."
-            raise refusal(412, "conflict", "resource-raced", text) from None
+                raise RacedError(409, [_DUPLICATE]) from None
+            raise RacedError(412, [_RACED]) from None
         return [
             Saved(new.fhir_id, now.version, now.updated, new.body, created=new.follows == 0)
             for new, now in zip(versions, written, strict=True)
         ]
+
+
+def anew(act: Callable[[], Response]) -> Response:
+    """What `act` answers; while others are first it looks again at what is there, a few times."""
+    for _ in range(_TRIES - 1):
+        try:
+            return act()
+        except RacedError:
+            continue
+    return act()
 
 
 def condition(text: str) -> Parameters:
