@@ -137,7 +137,8 @@ def test_a_database_that_restarts_is_waited_for(
     for number in range(many):
         text = json.dumps(small).replace(small["entry"][0]["fullUrl"], f"urn:uuid:{number:036}")
         put(engine, f"e{number}", patient=f"p{number}", bundle=text.encode())
-    deliver(engine, 3, deliver_to=peer.base)
+    # what was in hand when it crashed comes back when its lease, some seconds of a short timeout, is over
+    deliver(engine, 3, deliver_to=peer.base, delivery_timeout=1)
     until(engine, lambda tally: tally.counts["delivered"] >= 3)
     postgres_server.stop(signal.SIGQUIT)
     time.sleep(0.3)
