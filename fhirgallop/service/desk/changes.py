@@ -42,10 +42,20 @@ class TakenError(Exception):
 def put_finding(text: str, field: FieldSeen, finding: str, side: str = "") -> str:
     """The text with a line that reads a field as a finding, the meanings of its known values put in.
 
+    Of a blood pressure in one box both numbers are read, each by a line of its own.
+
     Raises:
         MapError: the text cannot be read.
     """
-    return put_entry(text, _entry(field, finding, side))
+    for one in _PAIRED if finding in _PAIRED and is_pair(field) else (finding,):
+        text = put_entry(text, _entry(field, one, side))
+    return text
+
+
+def is_pair(field: FieldSeen) -> bool:
+    """Whether every number in the box is two, as a blood pressure is written: 152/84."""
+    values = [value for value in field.values if _has_digit(value)]
+    return bool(values) and all(_PAIR.fullmatch(value) for value in values)
 
 
 def _entry(field: FieldSeen, finding: str, side: str) -> dict[str, Any]:
@@ -71,7 +81,7 @@ def _number(field: FieldSeen, finding: str) -> dict[str, str]:
     known = units.table().by_code
     number = {"unit": field.unit if field.unit in known else catalogue.load().findings[finding].unit}
     values = [value for value in field.values if _has_digit(value)]
-    if finding in _PAIRED and values and all(_PAIR.fullmatch(value) for value in values):
+    if finding in _PAIRED and is_pair(field):
         number |= {"split": "/", "part": str(_PAIRED[finding])}
     if any(re.fullmatch(r"-?[0-9]+,[0-9]+", value.strip()) for value in values):
         number["decimal"] = ","

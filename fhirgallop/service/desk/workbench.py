@@ -13,7 +13,7 @@ from fhirgallop.mapping.suggest_values import Target, suggest_values
 from fhirgallop.mapping.template_map import TemplateMap
 from fhirgallop.outcome import Issue, has_errors
 from fhirgallop.service.desk.brought import Brought, FieldSeen
-from fhirgallop.service.desk.changes import meanings_of, target_words
+from fhirgallop.service.desk.changes import is_pair, meanings_of, target_words
 from fhirgallop.service.desk.uses import Use, Uses, axis_label, label, uses
 from fhirgallop.storage.drafts import Draft
 
@@ -148,6 +148,9 @@ def bench(draft: Draft, brought: Brought, name: str) -> Bench:
 def _suggestions(seen: FieldSeen) -> list[Suggestion]:
     name = seen.label or seen.name
     found = suggest(name, values=seen.wordings, section=seen.section, unit=seen.unit)
+    if is_pair(seen):
+        pair = Suggestion(Target("pressure.systolic"), 1.0, ("two numbers, written as a blood pressure is",))
+        found = [pair, *(one for one in found if not one.target.finding.startswith("pressure."))][:3]
     return [one for one in found if _fits(one)]
 
 

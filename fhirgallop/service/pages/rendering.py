@@ -55,7 +55,9 @@ def page(request: Request, template: str, *, status: int = 200, **values: Any) -
         status: HTTP status.
         values: what the template needs; one that is missing is an error.
     """
-    return HTMLResponse(render(request, template, **values), status, {"Content-Security-Policy": POLICY})
+    # with no referrer at all a browser would not say either that a form comes from here
+    headers = {"Content-Security-Policy": POLICY, "Referrer-Policy": "same-origin"}
+    return HTMLResponse(render(request, template, **values), status, headers)
 
 
 def fault_page(
