@@ -207,6 +207,7 @@ def _told(
     request: Request, status: int, issues: Sequence[Issue], headers: Mapping[str, str] | None = None
 ) -> Response:
     request.state.issues = issues  # the audit trail holds them too
-    if request.method in ("GET", "POST") and "text/html" in request.headers.get("accept", ""):
+    page = request.method in ("GET", "POST") and "text/html" in request.headers.get("accept", "")
+    if page and not request.url.path.startswith("/fhir/"):  # there every error is an OperationOutcome
         return fault_page(request, status, issues, headers)
     return answers.outcome_answer(status, issues, headers)
