@@ -19,7 +19,7 @@ from fhirgallop.exam.entry import Entry
 from fhirgallop.exam.exam import Exam, Party
 from fhirgallop.exam.moment import Moment
 from fhirgallop.exam.presence import Presence
-from fhirgallop.service.views.wording import SECTIONS, said
+from fhirgallop.service.views.wording import SECTIONS, properties, said
 
 _WITHDRAWN: Final = frozenset({"cancelled", "entered-in-error"})
 
@@ -32,7 +32,8 @@ class Line:
         finding: catalogue id.
         label: its clinical name.
         presence: what was said of it; decides how it is shown.
-        words: the answer, number or presence, with its properties.
+        words: the answer, number or presence.
+        properties: what else was said of it.
         notes: remarks of the examiner, as written.
         local: the form's own wording, where the map keeps it.
         time: moment of its own; empty for the examination's.
@@ -42,6 +43,7 @@ class Line:
     label: str
     presence: Presence
     words: str
+    properties: tuple[str, ...]
     notes: tuple[str, ...]
     local: str
     time: str
@@ -184,6 +186,7 @@ def _lines(found: Found, head: Head, log: Log) -> Iterator[tuple[str, Line]]:
                 definition.label,
                 entry.presence,
                 said(entry) + _reason(resource),
+            properties(entry),
                 notes,
                 _local(element(resource.get("valueCodeableConcept"))),
                 written if written != head.time else "",

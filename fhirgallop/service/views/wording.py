@@ -38,17 +38,20 @@ SAID: Final[Mapping[Presence, str]] = MappingProxyType(
 
 
 def said(entry: Entry) -> str:
-    """What an entry says of its finding: `present: grade 3/6, aortic area`."""
-    value = SAID[entry.presence]
+    """What an entry says of its finding, without its properties: `present`, `152 mmHg`, `Regular`."""
     if entry.presence is Presence.PRESENT:
         if entry.measure is not None:
-            value = words.number(entry.measure)
-        elif entry.answers:
-            value = ", ".join(words.answer(entry.finding, answer) for answer in entry.answers)
-        elif entry.text:
-            value = entry.text
-    described = ", ".join(filter(None, (_property(one) for one in entry.qualifiers)))
-    return f"{value} ({described})" if described else value
+            return words.number(entry.measure)
+        if entry.answers:
+            return ", ".join(words.answer(entry.finding, answer) for answer in entry.answers)
+        if entry.text:
+            return entry.text
+    return SAID[entry.presence]
+
+
+def properties(entry: Entry) -> tuple[str, ...]:
+    """What else was said of it: grade, place, timing, manoeuvres, each in words."""
+    return tuple(filter(None, (_property(one) for one in entry.qualifiers)))
 
 
 def _property(qualifier: Qualifier) -> str:
