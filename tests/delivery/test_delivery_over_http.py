@@ -138,7 +138,7 @@ def test_a_database_that_restarts_is_waited_for(
         text = json.dumps(small).replace(small["entry"][0]["fullUrl"], f"urn:uuid:{number:036}")
         put(engine, f"e{number}", patient=f"p{number}", bundle=text.encode())
     # what was in hand when it crashed comes back when its lease, some seconds of a short timeout, is over
-    deliver(engine, 3, deliver_to=peer.base, delivery_timeout=1)
+    dispatch = deliver(engine, 3, deliver_to=peer.base, delivery_timeout=1)
     until(engine, lambda tally: tally.counts["delivered"] >= 3)
     postgres_server.stop(signal.SIGQUIT)
     time.sleep(0.3)
@@ -146,6 +146,7 @@ def test_a_database_that_restarts_is_waited_for(
     until(engine, lambda tally: tally.counts["delivered"] == many, seconds=90)
     assert peer.rows("SELECT count(*) FROM resources WHERE type = 'DiagnosticReport'") == [(many,)]
     assert peer.rows("SELECT count(*) FROM resources WHERE version > 1") == [(0,)]
+    assert dispatch.stop(20)
     engine.dispose()
 
 
