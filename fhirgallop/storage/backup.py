@@ -19,7 +19,7 @@ from dataclasses import dataclass
 from pathlib import Path
 from typing import IO, Any, Final
 
-from sqlalchemy import Column, Connection, Engine, LargeBinary, Table, func, insert, select
+from sqlalchemy import Column, Connection, Engine, Table, func, insert, select
 from sqlalchemy.exc import SQLAlchemyError
 
 from fhirgallop.errors import BackupError
@@ -161,7 +161,7 @@ def _count(connection: Connection) -> Mapping[str, int]:
 
 
 def _rows(connection: Connection, table: Table) -> Iterator[list[Any]]:
-    kept = [isinstance(column.type, LargeBinary) for column in table.columns]
+    kept = [column.type.python_type is bytes for column in table.columns]
     query = select(*table.columns).order_by(*table.primary_key.columns)
     for row in connection.execution_options(yield_per=_AT_ONCE).execute(query):
         yield [
@@ -220,7 +220,7 @@ def _fill(connection: Connection, path: Path, progress: Progress) -> None:
 
 def _values(columns: list[Column[Any]], row: list[Any]) -> dict[str, Any]:
     return {
-        column.name: b64decode(value) if isinstance(column.type, LargeBinary) and value is not None else value
+        column.name: b64decode(value) if column.type.python_type is bytes and value is not None else value
         for column, value in zip(columns, row, strict=True)
     }
 

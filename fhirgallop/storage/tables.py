@@ -22,6 +22,8 @@ from sqlalchemy import (
     UniqueConstraint,
 )
 
+from fhirgallop.storage.packing import Packed
+
 SCHEMA_VERSION: Final = 2
 
 metadata = MetaData()
@@ -47,7 +49,7 @@ submissions = Table(
     # digest of the sender's number of the examination: to notice the same number under another patient
     Column("number", String(64), nullable=False),
     Column("received", String(35), nullable=False),
-    Column("bundle", LargeBinary, nullable=False),
+    Column("bundle", Packed, nullable=False),
     Index("submissions_patient", "patient"),
     Index("submissions_number", "number"),
     UniqueConstraint("exam", "edition", "snomed", "version", name="submissions_exam_version"),
@@ -226,7 +228,7 @@ idempotent_answers = Table(
     Column("status", Integer, nullable=False),
     Column("media_type", String(100), nullable=False),
     Column("headers", LargeBinary, nullable=False),
-    Column("answer", LargeBinary, nullable=False),
+    Column("answer", Packed, nullable=False),
     Column("patient", String(64), nullable=False),
     Index("idempotent_answers_at", "at"),
     Index("idempotent_answers_patient", "patient"),
@@ -244,7 +246,7 @@ batches = Table(
     Column("worker", String(64), nullable=False),
     Column("lease", BigInteger, nullable=False),
     Column("wish", LargeBinary, nullable=False),
-    Column("request", LargeBinary, nullable=False),
+    Column("request", Packed, nullable=False),
     Column("total", Integer, nullable=False),
     Column("done", Integer, nullable=False),
     Index("batches_state", "state", "lease"),

@@ -10,7 +10,7 @@ from pathlib import Path
 from typing import Any
 
 import pytest
-from sqlalchemy import Engine, LargeBinary, insert, select, update
+from sqlalchemy import Engine, insert, select, update
 
 from fhirgallop.errors import BackupError
 from fhirgallop.storage.backup import check_backup, count, read_backup, write_backup
@@ -31,9 +31,9 @@ def value(column: Any, number: int) -> Any:
     if column.foreign_keys:
         (key,) = column.foreign_keys
         return value(key.column, number)
-    if isinstance(column.type, LargeBinary):
-        return bytes([number, 0, 255, 10]) * number
     kind = column.type.python_type
+    if kind is bytes:
+        return bytes([number, 0, 255, 10]) * number
     if kind is bool:
         return number % 2 == 0
     if kind is int:

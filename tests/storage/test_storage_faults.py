@@ -35,7 +35,7 @@ store = Submissions(open_database(sys.argv[1]))
 for number in range(int(sys.argv[2]), int(sys.argv[3])):
     exam = f"urn:{number}"
     one = Submission(exam, "R4", True, 1, "m", "1", "h", "p", "2026-12-01T08:30:00Z", b"x" * 20000)
-    new = NewVersion("R4", "Observation", str(number), "p", "", "", None, None, b"y" * 2000)
+    new = NewVersion("R4", "Observation", str(number), "p", "", "", None, None, b"y" * 20000)
     def also(connection, row):
         add_versions(connection, [new], at=1, submission=row)
         outbox.enqueue(connection, destination="d", submission=row, exam=exam, patient="p", at=1)
@@ -48,7 +48,7 @@ for number in range(int(sys.argv[2]), int(sys.argv[3])):
 """
 
 
-RESOURCE = b"y" * 2000
+RESOURCE = b"y" * 20000
 
 
 def kept(engine: Engine) -> set[str]:

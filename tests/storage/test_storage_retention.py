@@ -311,8 +311,13 @@ def test_deleted_bytes_are_gone_from_sqlites_files(
     engine = open_database(f"sqlite:///{path}")
     store, secret = Submissions(engine), b"Evergreen-4711"
     for number in range(40):
-        text = secret if number == 20 else b"Juniper-0815"
-        assert store.add(submission(f"urn:{number}", patient=f"p{number}", bundle=text * 900))
+        body = (secret if number == 20 else b"Juniper-0815") * 900
+        new = NewVersion("R4", "Observation", str(number), f"p{number}", "", "", None, None, body)
+
+        def also(connection: Any, row: int, new: NewVersion = new) -> None:
+            add_versions(connection, [new], at=0, submission=row)
+
+        assert store.add(submission(f"urn:{number}", patient=f"p{number}"), also)
 
     def found() -> bool:
         return any(secret in file.read_bytes() for file in tmp_path.iterdir())
@@ -321,7 +326,7 @@ def test_deleted_bytes_are_gone_from_sqlites_files(
     with engine.connect() as reader:  # somebody who still sees what was there before
         reader.exec_driver_sql("BEGIN")
         reader.execute(select(func.count()).select_from(submissions))
-        assert forget(engine, ["p20"]) == {"submissions": 1}
+        assert forget(engine, ["p20"]) == {"submissions": 1, "resources": 1}
         reader.rollback()
     assert clear_away(engine)
     assert not found()

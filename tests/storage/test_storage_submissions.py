@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import random
 import sqlite3
 from concurrent.futures import ThreadPoolExecutor
 from pathlib import Path
@@ -30,6 +31,29 @@ def test_the_newest_version_counts_and_comes_back_whole(engine: Engine, submissi
     assert store.add(second)
     assert store.latest("urn:a", "R4", snomed=True) == second
     assert store.latest("urn:b", "R4", snomed=True) is None
+
+
+def test_large_bundles_take_little_room_and_come_back_as_they_were(engine: Engine, submission: Any) -> None:
+    store = Submissions(engine)
+    texts = [
+        b"",
+        b"{}",
+        b"x" * 511,
+        b"x" * 512,
+        b'{"a":1.20}' * 9000,
+        b"\0z",
+        b"\0zx" * 400,
+        bytes(range(256)),
+    ]
+    for number, text in enumerate(texts):
+        assert store.add(submission(f"urn:{number}", bundle=text))
+        found = store.latest(f"urn:{number}", "R4", snomed=True)
+        assert found
+        assert found.bundle == text
+    with engine.connect() as connection:
+        kept = connection.scalars(select(func.length(submissions.c.bundle)).order_by(submissions.c.id)).all()
+    assert kept[4] < 90_000 / 8
+    assert kept[:3] == [0, 2, 511]
 
 
 def test_each_way_of_writing_has_versions_of_its_own(engine: Engine, submission: Any) -> None:
@@ -65,7 +89,7 @@ def test_a_full_disk_keeps_nothing_and_is_got_over(tmp_path: Path, submission: A
     store = Submissions(engine)
     assert store.add(submission("urn:small"))
     with pytest.raises(StorageError, match=r"^OperationalError$"):
-        store.add(submission("urn:large", bundle=b"x" * 400_000))
+        store.add(submission("urn:large", bundle=random.Random(1).randbytes(400_000)))
     assert store.latest("urn:large", "R4", snomed=True) is None
     assert store.latest("urn:small", "R4", snomed=True) == submission("urn:small")
     assert store.add(submission("urn:next"))
