@@ -19,13 +19,17 @@ from fhirgallop.drawing.wording import description, site_name
 from fhirgallop.exam import catalogue
 from fhirgallop.exam.presence import Presence
 
-_LEFT, _WIDTH, _RIGHT = 150, 760, 30
+_LEFT, _WIDTH, _RIGHT = 150, 670, 20
 _BEGIN, _END = -220, CYCLE + 60
 _TOP, _STRIP, _ROW = 34, 98, 74
 _AXIS = 60  # base line of a strip
 _LINE = 14
 _CHAR = 6.4  # width of an average letter at 11 px
 INK, GREY, PALE, HEARD, VEIN = "#1b2733", "#5b6875", "#c9d1d8", "#8a2b3f", "#27548a"
+# what a name stands on is left white around it
+_HALO: Final[dict[str, str | float]] = {
+    "paint_order": "stroke", "stroke": "#ffffff", "stroke_width": 3, "stroke_linejoin": "round",
+}  # fmt: skip
 _KEY: Final = (
     (Presence.PRESENT, "present"),
     (Presence.ABSENT, "absent"),
@@ -43,7 +47,7 @@ def draw(cycle: HeartCycle, title: str = "Heart cycle") -> str:
         y += height
     grid = _grid(y - 6)
     rows.append(element("g", _key(), transform=f"translate(0 {number(y + 10)})"))
-    width, height = _LEFT + _WIDTH + _RIGHT, y + 40
+    width, height = _LEFT + _WIDTH + _RIGHT, y + 56
     told = escape(" ".join(description(cycle)))
     return element(
         "svg",
@@ -156,20 +160,32 @@ def _strip(strip: Strip, marks: _Marks) -> str:
     shapes: list[str] = []
     for noise in strip.noises:
         shapes.append(_noise(noise))
-        places = noise.spans or ((0, CYCLE),)
-        middle = sum(places[0]) / 2
-        labels.append((_x(middle), _told(noise.label, noise.presence, noise.remark, noise.spans)))
+        labels.append((_x(_middle(noise)), _told(noise.label, noise.presence, noise.remark, noise.spans)))
     for beat in strip.beats:
         shapes += [_beat(beat, at) for at in _twice(beat.at)]
         if beat.label:
             labels.append((_x(beat.at), _told(beat.label, beat.presence, beat.remark)))
     placed = [(marks.place(x, text), text) for x, text in sorted(labels)]
     lift = max(marks.levels - 1, 0) * _LINE
-    names = [words(x, 10 + lift - level * _LINE, text, text_anchor="middle") for (x, level), text in placed]
+    names = [
+        words(x, 10 + lift - level * _LINE, text, text_anchor="middle", **_HALO)
+        for (x, level), text in placed
+    ]
+    leads = [
+        _lead(x, lift - level * _LINE, lift)
+        for (x, _), ((_, level), _) in zip(sorted(labels), placed, strict=True)
+    ]
     axis = element("line", x1=_LEFT, x2=_LEFT + _WIDTH, y1=_AXIS, y2=_AXIS, stroke=PALE)
     drawn = element("g", axis, *shapes, transform=f"translate(0 {number(lift)})")
     label = element("g", _name(*site_name(strip.site)), transform=f"translate(0 {number(lift + 20)})")
-    return label + drawn + "".join(names)
+    return label + "".join(leads) + drawn + "".join(names)
+
+
+def _lead(x: float, top: float, lift: float) -> str:
+    """A thin line from a name that had to move up down to what it names."""
+    if top >= lift:
+        return ""
+    return element("line", x1=x, x2=x, y1=top + 13, y2=lift + 34, stroke=GREY, stroke_width=0.6)
 
 
 def _twice(at: int) -> Iterable[int]:
@@ -177,7 +193,7 @@ def _twice(at: int) -> Iterable[int]:
     yield at
     if at + CYCLE <= _END - 20 and at <= 40:
         yield at + CYCLE
-    if at - CYCLE >= _BEGIN:
+    if at - CYCLE >= _BEGIN + 20:
         yield at - CYCLE
 
 
@@ -216,6 +232,8 @@ def _beat(beat: Beat, at: int) -> str:
 
 
 def _noise(noise: Noise) -> str:
+    if noise.presence is Presence.ABSENT:
+        return _no_noise(noise)
     if noise.presence in (Presence.NOT_EXAMINED, Presence.NOT_EXAMINABLE):
         places = noise.spans or ((10, A2),)
         return "".join(_bracket(begin, end, _AXIS + 14, "") for begin, end in places)
@@ -224,33 +242,29 @@ def _noise(noise: Noise) -> str:
         look["fill"] = f"url(#pitch-{noise.pitch or 'unstated'})"
     else:
         look |= {"fill": "none", "stroke_dasharray": "4 3"}
-    if noise.presence is Presence.ABSENT:
-        look |= {"stroke": GREY, "stroke_dasharray": "none"}
-    parts = []
-    for begin, end in noise.spans or ((10, CYCLE - 10),):
-        outline = _outline(noise, begin, end)
-        parts.append(path(outline, closed=True, **look))
-        if noise.presence is Presence.ABSENT:
-            middle = _x((begin + end) / 2)
-            parts.append(
-                element(
-                    "line",
-                    x1=middle - 14,
-                    x2=middle + 14,
-                    y1=_AXIS + 10,
-                    y2=_AXIS - 10,
-                    stroke=GREY,
-                    stroke_width=1.4,
-                )
-            )
-    return "".join(parts)
+    return "".join(
+        path(_outline(noise, begin, end), closed=True, **look)
+        for begin, end in noise.spans or ((10, CYCLE - 10),)
+    )
+
+
+def _no_noise(noise: Noise) -> str:
+    """A murmur that was looked for and is not there: a small empty band, struck through, under its name."""
+    x = _x(_middle(noise))
+    band = element("rect", x=x - 17, y=_AXIS - 4, width=34, height=8, fill="#ffffff", stroke=GREY)
+    stroke = element("line", x1=x - 12, x2=x + 12, y1=_AXIS + 9, y2=_AXIS - 9, stroke=GREY, stroke_width=1.4)
+    return band + stroke
+
+
+def _middle(noise: Noise) -> float:
+    """Where the name of a murmur stands."""
+    begin, end = noise.spans[0] if noise.spans else (0, CYCLE)
+    return (begin + end) / 2
 
 
 def _outline(noise: Noise, begin: int, end: int) -> list[tuple[float, float]]:
     """Both edges of a murmur; one whose shape was not stated is a plain band."""
     tall = 6 + 20 * (noise.loudness if noise.loudness is not None else 0.4)
-    if noise.presence is Presence.ABSENT:
-        tall = 4
     if noise.label == "rub":
         step = (end - begin) / 14
         return [(_x(begin + step * i), _AXIS - (tall if i % 2 else -tall)) for i in range(15)]
@@ -309,7 +323,8 @@ def _vein(vein: Vein, cycle: HeartCycle) -> str:
 
 
 def _label(axis: str, value: str) -> str:
-    return catalogue.load().axes[axis].values[value].label.lower()
+    label = catalogue.load().axes[axis].values[value].label
+    return label[:1].lower() + label[1:]
 
 
 def _pressure(pressure: Pressure, cycle: HeartCycle) -> str:
@@ -373,10 +388,11 @@ def _key() -> str:
         )
         parts += [shape, words(x + 34, 10, text)]
         x += 54 + len(text) * _CHAR
+    x = float(_LEFT)
     for pitch in ("low", "medium", "high"):
         parts.append(
-            element("rect", x=x, y=1, width=22, height=11, fill=f"url(#pitch-{pitch})", stroke=HEARD)
+            element("rect", x=x, y=19, width=22, height=11, fill=f"url(#pitch-{pitch})", stroke=HEARD)
         )
-        parts.append(words(x + 28, 10, f"{pitch} pitch"))
-        x += 44 + (len(pitch) + 6) * _CHAR
+        parts.append(words(x + 34, 28, f"{pitch} pitch"))
+        x += 54 + (len(pitch) + 6) * _CHAR
     return "".join(parts)
