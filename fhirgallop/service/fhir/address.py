@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import re
 from dataclasses import dataclass
-from typing import Any, Final, Literal
+from typing import Final, Literal
 
 from fastapi import Request
 
@@ -74,7 +74,7 @@ def version_number(text: str) -> int | None:
     return int(text) if _VERSION.fullmatch(text) else None
 
 
-def not_found(_what: Any = None) -> answers.RefusalError:
+def not_found() -> answers.RefusalError:
     """404, the same for what is not there and for what may not be seen."""
     text = "There is no such resource here, or it may not be seen with this token."
     return answers.refusal(404, "not-found", "http-unknown-resource", text)

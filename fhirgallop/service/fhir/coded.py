@@ -7,7 +7,7 @@ Bundle's own names (`urn:uuid:...`) to addresses (`Observation/...`).
 from __future__ import annotations
 
 import re
-from collections.abc import Mapping
+from collections.abc import Callable, Mapping
 from dataclasses import dataclass
 from typing import Any, Final
 
@@ -84,7 +84,7 @@ def finding_of(resource: dict[str, Any]) -> str:
     return ""
 
 
-def party_key(reference: Any, digest: Any) -> str:
+def party_key(reference: Any, digest: Callable[[str, str], str]) -> str:
     """Digest of whom a reference means: by business identifier where it has one, else by its address.
 
     `Patient/7` is known by "7" alone, an address on another server by the whole of it.
@@ -93,8 +93,8 @@ def party_key(reference: Any, digest: Any) -> str:
         return ""
     identifier = reference.get("identifier")
     if isinstance(identifier, Mapping) and identifier.get("value"):
-        return str(digest(str(identifier.get("system", "")), str(identifier["value"])))
+        return digest(str(identifier.get("system", "")), str(identifier["value"]))
     address = reference.get("reference")
     if not isinstance(address, str) or not address:
         return ""
-    return str(digest("", address.rpartition("/")[2] if address.count("/") == 1 else address))
+    return digest("", address.rpartition("/")[2] if address.count("/") == 1 else address)

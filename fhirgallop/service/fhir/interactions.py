@@ -89,8 +89,8 @@ def history(request: Request, wish: Wish, base: Base, type_: str, fhir_id: str) 
         cursor = base64.urlsafe_b64encode(str(found[count - 1].version).encode()).decode().rstrip("=")
         links.append({"relation": "next", "url": page_address(home, asked, cursor)})
     bundle: dict[str, Any] = {"resourceType": "Bundle", "type": "history"}
-    if since is None and reach.everything:
-        bundle["total"] = newest.version
+    if since is None and reach.everything and below is None and len(found) <= count:
+        bundle["total"] = len(found)  # the oldest versions may have been kept long enough
     bundle["link"] = links
     if page:
         bundle["entry"] = [_version_entry(kept, base) for kept in page]

@@ -69,8 +69,8 @@ def run(store: Resources, query: Query, admits: Callable[[Mapping[str, Any]], bo
     return Found(tuple(found), total, after if query.count else None)
 
 
-def matches(store: Resources, query: Query, most: int = 2) -> list[Kept]:
-    """The first resources that are looked for, for conditions that allow one match only.
+def matches(store: Resources, query: Query) -> list[Kept]:
+    """The resources that are looked for, two at most, for conditions that allow one match only.
 
     Raises:
         RefusalError: 412 where too many would have to be looked at.
@@ -80,8 +80,8 @@ def matches(store: Resources, query: Query, most: int = 2) -> list[Kept]:
     for _ in range(MOST_LOOKED_AT // _SLICE):
         some = store.find(query.wanted, order="changed", after=after, limit=_SLICE)
         found += [kept for kept in some if _fits(kept, query.checks)]
-        if len(found) >= most or len(some) < _SLICE:
-            return found[:most]
+        if len(found) > 1 or len(some) < _SLICE:
+            return found[:2]
         after = some[-1].place("changed")
     text = "The condition leaves too much open to be worked out; name an identifier."
     raise refusal(412, "too-costly", "condition-too-open", text)

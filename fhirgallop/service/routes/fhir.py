@@ -20,7 +20,6 @@ from fhirgallop.service.fhir.bundles import MOST_ENTRIES, answered
 from fhirgallop.service.fhir.changes import Sent
 from fhirgallop.service.fhir.described import (
     CHANGED,
-    FORM,
     FORM_BODY,
     RESOURCE_BODY,
     STATUSES,
@@ -64,7 +63,7 @@ async def search_by_form(request: Request, edition: EditionName, resource_type: 
     here = base(request, edition)
     wanted = wish(request, here.edition)
     known_type(here.edition, resource_type, among=KEPT)
-    parameters = [*request.query_params.multi_items(), *await form(request, FORM)]
+    parameters = [*request.query_params.multi_items(), *await form(request)]
     return await run_in_threadpool(interactions.search, request, wanted, here, resource_type, parameters)
 
 

@@ -16,7 +16,6 @@ from fhirgallop.service.fhir import capabilities, definitions, parameters
 from fhirgallop.service.fhir.address import PUBLISHED, base, not_found
 from fhirgallop.service.fhir.conditions import etag, unchanged
 from fhirgallop.service.fhir.described import (
-    FORM,
     FORM_BODY,
     RESOURCE_BODY,
     STATUSES,
@@ -84,7 +83,7 @@ def _definitions(type_: str) -> None:
     async def search_by_form(request: Request, edition: EditionName) -> Response:
         here = base(request, edition)
         wanted = wish(request, here.edition)
-        pairs = [*request.query_params.multi_items(), *await form(request, FORM)]
+        pairs = [*request.query_params.multi_items(), *await form(request)]
         return await run_in_threadpool(definitions.search, request, wanted, here, type_, pairs)
 
 
