@@ -12,6 +12,7 @@ from typing import Any, BinaryIO, Final, Literal
 from fhirgallop.codes import fhirjson
 from fhirgallop.intake.hl7v2 import read_hl7
 from fhirgallop.intake.limits import DEFAULT, Limits
+from fhirgallop.intake.midway import START, Midway
 from fhirgallop.intake.questionnaire import read_response
 from fhirgallop.intake.reading import Read, Reading, refused, remarked
 from fhirgallop.intake.record import LocalRecord
@@ -66,6 +67,7 @@ def open_records(
     sheet: str = "",
     questionnaire: Mapping[str, Any] | None = None,
     limits: Limits = DEFAULT,
+    since: Midway | None = None,
 ) -> Iterator[Read]:
     """Every record of a file, a body or a stream, with a warning on one that comes twice.
 
@@ -76,6 +78,8 @@ def open_records(
         sheet: name of the sheet to read of a spreadsheet.
         questionnaire: the form that QuestionnaireResponses are judged by.
         limits: bounds.
+        since: the place in the file that a stream starts at, where the file is read in parts
+            (`fhirgallop.intake.cutting`); what comes twice is then for whoever sees all of them.
 
     Raises:
         OSError: the path cannot be opened.
@@ -90,7 +94,8 @@ def open_records(
     stream = content.open("rb") if isinstance(content, Path) else content
     stream = io.BytesIO(stream) if isinstance(stream, bytes) else stream
     try:
-        yield from flag_repeats(_read(kind, stream, name, sheet, questionnaire, limits), limits=limits)
+        reads = _read(kind, stream, name, sheet, questionnaire, limits, since or START)
+        yield from reads if since else flag_repeats(reads, limits=limits)
     finally:
         if isinstance(content, Path):
             stream.close()
@@ -129,6 +134,7 @@ def _read(
     sheet: str,
     questionnaire: Mapping[str, Any] | None,
     limits: Limits,
+    since: Midway,
 ) -> Iterator[Read]:
     def convert(value: Any, source: str, bounds: Limits) -> Reading:
         if isinstance(value, Mapping) and value.get("resourceType") == "QuestionnaireResponse":
@@ -145,12 +151,12 @@ def _read(
                 return remarked(issues, _each(value, name, limits, convert), name)
             return remarked(issues, convert(value, name, limits).stream(name), name)
         case "ndjson":
-            return read_ndjson(stream, source=name, limits=limits, convert=convert)
+            return read_ndjson(stream, source=name, limits=limits, convert=convert, since=since)
         case "csv":
-            return read_csv(stream, source=name, limits=limits)
+            return read_csv(stream, source=name, limits=limits, since=since)
         case "tsv":
-            return read_csv(stream, delimiter="\t", source=name, limits=limits)
+            return read_csv(stream, delimiter="\t", source=name, limits=limits, since=since)
         case "workbook":
             return read_workbook(stream, sheet=sheet, source=name, limits=limits)
         case "hl7":
-            return read_hl7(stream, source=name, limits=limits)
+            return read_hl7(stream, source=name, limits=limits, since=since)

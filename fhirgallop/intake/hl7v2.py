@@ -15,6 +15,7 @@ from fhirgallop.intake import hl7_values
 from fhirgallop.intake.hl7_syntax import Message, Segment, parse
 from fhirgallop.intake.limits import DEFAULT, Limits
 from fhirgallop.intake.lines import numbered
+from fhirgallop.intake.midway import START, Midway
 from fhirgallop.intake.reading import Read, Reading, refused
 from fhirgallop.intake.record import Field, Header, LocalRecord, Status, Value
 from fhirgallop.outcome import Issue, Severity, has_errors
@@ -44,6 +45,7 @@ _NO_COUNTERPART: Final = frozenset("BIORSUV")
 _NO_REPORT_COUNTERPART: Final = frozenset("OISAMN")
 _READ_OBX: Final = frozenset((1, 2, 3, 4, 5, 6, 11, 14, 16, 17, 20))
 _WITHOUT_CONTENT: Final = frozenset(("MSH", "SFT", "UAC", "EVN", "PID", "PV1", "OBR", "OBX", "NTE"))
+_FRAMING: Final = b"\x0b\x1c"
 _BATCH: Final = (b"FHS", b"BHS", b"BTS", b"FTS")
 
 
@@ -77,10 +79,15 @@ def read_message(data: bytes | str, *, line: int = 1, source: str = "", limits: 
     return Reading((first, *records[1:]))
 
 
-def read_hl7(stream: BinaryIO, *, source: str = "", limits: Limits = DEFAULT) -> Iterator[Read]:
-    """Every message of a file or a batch (FHS/BHS ... BTS/FTS); a bad one is rejected, the next is read."""
-    count = 0
-    for line, data in _messages(stream, limits):
+def read_hl7(
+    stream: BinaryIO, *, source: str = "", limits: Limits = DEFAULT, since: Midway = START
+) -> Iterator[Read]:
+    """Every message of a file or a batch (FHS/BHS ... BTS/FTS); a bad one is rejected, the next is read.
+
+    `since` is the place in the file that the stream starts at.
+    """
+    count = since.count
+    for line, data in _messages(stream, limits, since.line):
         if data[:3] in _BATCH:
             if data.startswith(b"BTS") and not _agrees(data, count):
                 text = f"BTS-1 does not agree with the {count:,} messages read; send the whole batch again."
@@ -100,20 +107,25 @@ def read_hl7(stream: BinaryIO, *, source: str = "", limits: Limits = DEFAULT) ->
         yield refused(source, 0, "error", "hl7-no-msh", "The file holds no MSH segment; send whole messages.")
 
 
+def opens_message(line: bytes) -> bool:
+    """Whether a line is the first of a message."""
+    return line.lstrip(_FRAMING).startswith(b"MSH")
+
+
 def _agrees(trailer: bytes, count: int) -> bool:
     """Whether BTS-1, where it states a number, is the number of messages."""
     stated = [*trailer.split(trailer[3:4] or b"|"), b""][1].strip()
     return not (stated.isdigit() and len(stated) < 10) or int(stated) == count
 
 
-def _messages(stream: BinaryIO, limits: Limits) -> Iterator[tuple[int, bytes]]:
+def _messages(stream: BinaryIO, limits: Limits, first: int) -> Iterator[tuple[int, bytes]]:
     """Each message, and each line of a batch's frame, with its first line.
 
     One that is too large comes cut, and still longer than it may be.
     """
     start, parts, size = 0, list[bytes](), 0
-    for number, line in numbered(stream, limits.record_bytes):
-        content = b" " * (limits.record_bytes + 1) if line is None else line.lstrip(b"\x0b\x1c")
+    for number, line in numbered(stream, limits.record_bytes, first):
+        content = b" " * (limits.record_bytes + 1) if line is None else line.lstrip(_FRAMING)
         opens, frame = content.startswith(b"MSH"), content[:3] in _BATCH
         if (opens or frame) and parts:
             yield start, b"".join(parts)

@@ -14,6 +14,7 @@ from typing import Any, BinaryIO, Final
 from fhirgallop.codes import fhirjson
 from fhirgallop.intake.limits import DEFAULT, Limits
 from fhirgallop.intake.lines import numbered
+from fhirgallop.intake.midway import START, Midway
 from fhirgallop.intake.reading import Read, Reading, refused
 from fhirgallop.intake.record import Field, LocalRecord, Value
 from fhirgallop.outcome import Issue, has_errors
@@ -41,7 +42,12 @@ def read_json(
 
 
 def read_ndjson(
-    stream: BinaryIO, *, source: str = "", limits: Limits = DEFAULT, convert: Convert | None = None
+    stream: BinaryIO,
+    *,
+    source: str = "",
+    limits: Limits = DEFAULT,
+    convert: Convert | None = None,
+    since: Midway = START,
 ) -> Iterator[Read]:
     """One JSON text a line; a bad line is rejected and the next one is read.
 
@@ -50,9 +56,10 @@ def read_ndjson(
         source: file name, for issues.
         limits: bounds.
         convert: makes records of a JSON value; plain local records by default.
+        since: the place in the file that the stream starts at.
     """
     make = convert or records_of
-    for number, line in numbered(stream, limits.record_bytes):
+    for number, line in numbered(stream, limits.record_bytes, since.line):
         if number > limits.rows:
             yield refused(source, number, "fatal", "file-too-many-rows",
                           f"The file has more than {limits.rows:,} lines; send it in parts.")  # fmt: skip

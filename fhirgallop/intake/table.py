@@ -12,7 +12,8 @@ from dataclasses import replace
 from typing import BinaryIO, Final
 
 from fhirgallop.intake.limits import DEFAULT, Limits
-from fhirgallop.intake.lines import numbered
+from fhirgallop.intake.lines import spans
+from fhirgallop.intake.midway import START, Midway
 from fhirgallop.intake.reading import Read, Rejected, refused
 from fhirgallop.intake.record import Field, LocalRecord, Value
 from fhirgallop.outcome import Issue, Severity, has_errors
@@ -23,7 +24,12 @@ _WIDE_BOMS: Final = (b"\xff\xfe", b"\xfe\xff")
 
 
 def read_csv(
-    stream: BinaryIO, *, delimiter: str = "", source: str = "", limits: Limits = DEFAULT
+    stream: BinaryIO,
+    *,
+    delimiter: str = "",
+    source: str = "",
+    limits: Limits = DEFAULT,
+    since: Midway = START,
 ) -> Iterator[Read]:
     """Every row of a delimited text as a record; a bad row is rejected and the next one is read.
 
@@ -32,20 +38,49 @@ def read_csv(
         delimiter: one of comma, semicolon, tab, bar; by default the one that the header holds most often.
         source: file name, for issues.
         limits: bounds.
+        since: the place in the file that the stream starts at, as `cuts_of_csv` gave it.
     """
-    text = _Text(stream, limits, source)
+    text = _Text(stream, limits, source, since)
     try:
-        first = _first_filled(text)
-        if first.startswith("sep=") and len(first.rstrip("\r\n")) == 5 and first[4] in DELIMITERS:
-            delimiter, first = first[4], _first_filled(text)
+        delimiter = since.delimiter or _begin(text, delimiter)
     except _RefusedError as refusal:
         yield refusal.rejected
         return
-    delimiter = delimiter or _most_frequent(first)
-    text.push_back(first)
+    rows = _rows(text, delimiter)
     yield from read_rows(
-        _rows(text, delimiter), source=source, limits=limits, prefix="csv", remarks=text.remarks
+        rows, source=source, limits=limits, prefix="csv", remarks=text.remarks, names=since.names
     )
+
+
+def cuts_of_csv(
+    stream: BinaryIO, each: int, *, delimiter: str = "", limits: Limits = DEFAULT
+) -> Iterator[Midway]:
+    """The places after every `each` rows of a table, from which `read_csv` can go on.
+
+    Read from one place to the next, all parts together give what the whole gives. The first part is longer
+    where its first rows cannot be read, so that it has one.
+    """
+    text, table = _Text(stream, limits, "", START), _Table("", limits, "csv")
+    try:
+        delimiter = _begin(text, delimiter)
+    except _RefusedError:
+        return
+    count, place, some = 0, START, False
+    for line, row in _rows(text, delimiter):
+        if not isinstance(row, Rejected):
+            if all(_is_blank(cell) for cell in row):
+                continue
+            if not table.names:
+                if has_errors(table.header(row, line)):
+                    return
+                continue
+        if count >= each and some:
+            yield place
+            count = 0
+        count += 1
+        some = some or not isinstance(row, Rejected)
+        if count >= each:
+            place = text.midway(table.names, delimiter)
 
 
 def read_rows(
@@ -55,13 +90,15 @@ def read_rows(
     limits: Limits,
     prefix: str,
     remarks: list[Issue],
+    names: tuple[str, ...] = (),
 ) -> Iterator[Read]:
-    """Records of numbered rows, the first non-empty one being the header.
+    """Records of numbered rows, the first non-empty one being the header where no `names` are known.
 
     `prefix` starts the issue rules. `remarks` is a list that may grow while rows are read: what concerns the
     whole file goes with the next record that comes out.
     """
     table = _Table(source, limits, prefix)
+    table.names = names
     records = 0
     for line, row in rows:
         if isinstance(row, Rejected):
@@ -84,7 +121,7 @@ def read_rows(
             read = replace(read, issues=(*remarks, *read.issues))
             remarks.clear()
         yield read
-    if not records and not has_errors(remarks):
+    if not records and not names and not has_errors(remarks):
         text = "The table has no row below its header." if table.names else "The table is empty."
         remarks.append(Issue("warning", "not-found", f"{prefix}-no-record", text, source=source))
     if remarks:
@@ -178,25 +215,36 @@ class _RefusedError(Exception):
 class _Text(Iterator[str]):
     """Lines of a byte stream as text: UTF-8, or Windows-1252 from the first line that is not UTF-8."""
 
-    def __init__(self, stream: BinaryIO, limits: Limits, source: str) -> None:
-        self._lines = numbered(stream, limits.record_bytes)
+    def __init__(self, stream: BinaryIO, limits: Limits, source: str, since: Midway) -> None:
+        self._lines = spans(stream, limits.record_bytes, since.line)
         self._limits = limits
         self.source = source
-        self._encoding = "utf-8"
-        self._seen_utf8 = False
+        self._encoding = since.encoding or "utf-8"
+        self._seen_utf8 = since.encoding == "utf-8"
         self._returned = ""
-        self.line = 0
+        self._end = 0
+        self.line = since.line - 1
         self.remarks: list[Issue] = []
 
     def push_back(self, line: str) -> None:
         """Gives a line back, to be read again."""
         self._returned = line
 
+    def midway(self, names: tuple[str, ...], delimiter: str) -> Midway:
+        """The place after the line read last."""
+        encoding = "utf-8" if self._seen_utf8 else self._encoding.removeprefix("utf-8")
+        return Midway(self._end, self.line + 1, 0, names, delimiter, encoding)
+
+    @property
+    def next_line(self) -> int:
+        """Number of the line that comes next."""
+        return self.line + (not self._returned)
+
     def __next__(self) -> str:
         if self._returned:
             line, self._returned = self._returned, ""
             return line
-        self.line, data = next(self._lines)
+        self.line, data, self._end = next(self._lines)
         if data is None:
             raise self._refusal("csv-line-too-long",
                                 f"The line is longer than {self._limits.record_bytes:,} bytes; "
@@ -258,7 +306,7 @@ class _Text(Iterator[str]):
 def _rows(text: _Text, delimiter: str) -> Iterator[tuple[int, list[Value] | Rejected]]:
     """Rows with the number of the line each starts on."""
     reader = csv.reader(text, delimiter=delimiter, strict=True)
-    start = text.line
+    start = text.next_line
     while True:
         try:
             row = next(reader)
@@ -273,6 +321,19 @@ def _rows(text: _Text, delimiter: str) -> Iterator[tuple[int, list[Value] | Reje
         else:
             yield start, list(row)
         start = text.line + 1
+
+
+def _begin(text: _Text, delimiter: str) -> str:
+    """Goes to the header; gives the delimiter, which a line `sep=;` or the header may tell.
+
+    Raises:
+        _RefusedError: a line before or of the header cannot be read.
+    """
+    first = _first_filled(text)
+    if first.startswith("sep=") and len(first.rstrip("\r\n")) == 5 and first[4] in DELIMITERS:
+        delimiter, first = first[4], _first_filled(text)
+    text.push_back(first)
+    return delimiter or _most_frequent(first)
 
 
 def _first_filled(text: Iterator[str]) -> str:
