@@ -48,7 +48,7 @@ def test_health(client: Any) -> None:
         ("GET", "/nowhere", (404, "not-found", "http-404")),
         ("GET", "/maps/nowhere", (404, "not-found", "http-unknown-map")),
         ("GET", "/maps?page=2", (400, "not-supported", "http-unknown-parameter")),
-        ("GET", "/exams", (405, "not-supported", "http-405")),
+        ("PUT", "/exams", (405, "not-supported", "http-405")),
         ("DELETE", "/maps/circor-2022", (405, "not-supported", "http-405")),
         ("PUT", "/health", (405, "not-supported", "http-405")),
     ],

@@ -26,13 +26,16 @@ router = APIRouter(
 )
 
 _MOST_TYPED: Final = 200
+_AT_ONCE: Final = 50
 
 
 @router.get("")
 async def list_rules(request: Request) -> Response:
     """All rules, or those in which some words stand."""
     query, tier = (word(request.query_params, name, _MOST_TYPED) for name in ("words", "shown"))
-    return await run_in_threadpool(_rules, request, query, tier)
+    typed = request.query_params.get("from", "0")
+    start = int(typed) if typed.isascii() and typed.isdecimal() and len(typed) < 7 else 0
+    return await run_in_threadpool(_rules, request, query, tier, start)
 
 
 @router.get("/{rule}")
@@ -41,7 +44,7 @@ async def one_rule(request: Request, rule: str) -> Response:
     return await run_in_threadpool(_rule, request, rule)
 
 
-def _rules(request: Request, query: str, tier: str) -> Response:
+def _rules(request: Request, query: str, tier: str, start: int) -> Response:
     book: Rulebook = request.app.state.hooks.rules
     found = list(knowledge.found(book, query, tier if tier in TIERS.values() else ""))
     fared = _fares(request)
@@ -49,13 +52,16 @@ def _rules(request: Request, query: str, tier: str) -> Response:
     return page(
         request,
         "knowledge.html",
-        found=found,
+        found=found[start : start + _AT_ONCE],
+        number=len(found),
+        start=start,
+        following=start + _AT_ONCE if len(found) > start + _AT_ONCE else 0,
         query=query,
         tier=tier,
         tiers=tuple(TIERS.values()),
         total=len(book.rules),
         rules_version=book.version,
-        fared={one.id: fared.total(one.id) for one in found},
+        fared={one.id: fared.total(one.id) for one in found[start : start + _AT_ONCE]},
         every=every,
         drawn=months(every, "All rules by month"),
     )

@@ -29,7 +29,8 @@ from fhirgallop.storage.submissions import Also
 PAGE: Final = "exam-page"
 MOST_REASON: Final = 1000
 _MOST: Final = 200
-_DIGEST: Final = re.compile(r"[0-9a-f]{64}", re.ASCII)
+# of cards.card.digest
+_DIGEST: Final = re.compile(r"[0-9a-f]{24}", re.ASCII)
 LABELS: Final = {
     Answer.LOOKED_AGAIN: "Seen: I looked or listened again, and the entries stand",
     Answer.WILL_CORRECT: "An entry is wrong; its author will correct it",

@@ -175,7 +175,7 @@ def _lines(found: Found, head: Head, log: Log) -> Iterator[tuple[str, Line]]:
     resource = found.resource
     written = _time(resource) or head.time
     alone = read_own_exam(Gathered(written, "", ((found, written),)), head.patient, log)
-    notes = tuple(words for note in elements(resource.get("note")) if (words := text(note.get("text"))))
+    notes = tuple(words for note in elements(resource.get("note")) if (words := _whole(note.get("text"))))
     entries = alone.exam.entries or tuple(_unread(resource))
     for entry in entries:
         definition = catalogue.load().findings[entry.finding]
@@ -186,7 +186,7 @@ def _lines(found: Found, head: Head, log: Log) -> Iterator[tuple[str, Line]]:
                 definition.label,
                 entry.presence,
                 said(entry) + _reason(resource),
-            properties(entry),
+                properties(entry),
                 notes,
                 _local(element(resource.get("valueCodeableConcept"))),
                 written if written != head.time else "",
@@ -198,11 +198,16 @@ def _unread(resource: Element) -> Iterator[Entry]:
     """A finding whose value is in the clinician's own words only, which no rule uses."""
     known = catalogue.load().findings
     value = resource.get("valueCodeableConcept")
-    words = text(element(value).get("text")) or text(resource.get("valueString"))
+    words = _whole(element(value).get("text")) or _whole(resource.get("valueString"))
     for coding in elements(element(resource.get("code")).get("coding")):
         finding = text(coding.get("code"))
         if coding.get("system") == systems.FINDINGS and finding in known and words:
             yield Entry(finding, text=words)
+
+
+def _whole(value: object) -> str:
+    """A text of any length: what a clinician wrote is shown whole."""
+    return value.strip() if isinstance(value, str) else ""
 
 
 def _reason(resource: Element) -> str:
@@ -221,7 +226,7 @@ def _notes(chart: Sequence[Found]) -> Iterator[str]:
     """Remarks on the whole: they stand in the report's narrative, after the list of what was found."""
     for found in chart:
         if found.type == "DiagnosticReport":
-            _, _, after = text(element(found.resource.get("text")).get("div")).rpartition("</ul>")
+            _, _, after = _whole(element(found.resource.get("text")).get("div")).rpartition("</ul>")
             for note in after.split("<p>")[1:]:
                 yield unescape(note.partition("</p>")[0])
 
