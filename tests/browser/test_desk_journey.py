@@ -72,7 +72,7 @@ WORDINGS = {
     "axilla": "axilla",
     "carotids": "carotids",
     "yes": "lateral",
-    "no": "not-displaced",
+    "no": "none",
 }
 
 
@@ -165,12 +165,32 @@ def post(address: str, name: str, row: dict[str, str]) -> dict[str, Any]:
     return found
 
 
+def with_chart(address: str, name: str, row: dict[str, str], root: Path) -> dict[str, Any]:
+    """The same with the chart of an example patient, who is made the patient of the record."""
+    chart = (root / "examples/clinician/atrial-fibrillation-today.chart.json").read_text("utf-8")
+    chart = chart.replace("https://fernwood.example/patients", "https://holmby.example/patients")
+    chart = chart.replace("F-20417", row["pt_no"])
+    record = json.dumps({**row, "seen_on": "14.03.2026", "seen_at": "12:00", "form_serial": "S-6001"})
+    parts = "".join(
+        f'--parted\r\nContent-Disposition: form-data; name="{part}"; filename="a.json"\r\n\r\n{text}\r\n'
+        for part, text in (("record", record), ("chart", chart))
+    )
+    request = urllib.request.Request(
+        f"{address}/exams?map={name}",
+        f"{parts}--parted--\r\n".encode(),
+        {"Content-Type": "multipart/form-data; boundary=parted"},
+    )
+    with urllib.request.urlopen(request, timeout=30) as answer:
+        found: dict[str, Any] = json.load(answer)
+    return found
+
+
 def rows() -> list[dict[str, str]]:
     with FORM.open(encoding="utf-8", newline="") as file:
         return list(csv.DictReader(file, delimiter=";"))
 
 
-def test_from_a_foreign_form_to_cards(visit: Any, site: Any, accessible: Any) -> None:
+def test_from_a_foreign_form_to_cards(visit: Any, site: Any, accessible: Any, root: Path) -> None:
     page: Page = visit("/desk")
     bring_in(page, "holmby")
     assert accessible(page) == []
@@ -188,19 +208,113 @@ def test_from_a_foreign_form_to_cards(visit: Any, site: Any, accessible: Any) ->
     assert "Third heart sound: Present" in tried
     assert "SNOMED CT" in tried
     assert accessible(page) == []
-    page.get_by_role("link", name="Coverage").click()
+    page.get_by_role("link", name="Coverage", exact=True).click()
     assert "12 coded" in page.locator("main").inner_text()
     assert accessible(page) == []
-    page.get_by_role("link", name="Publish").click()
+    page.get_by_role("link", name="Publish", exact=True).click()
     assert accessible(page) == []
     page.get_by_label("Your name").fill("R. Example")
     page.get_by_label("What is new, or why").fill("First map of the new sheet")
-    page.get_by_role("button", name="Publish").click()
+    page.get_by_role("button", name="Publish", exact=True).click()
     expect(page.locator("main")).to_contain_text("Version 1 is in use")
     assert accessible(page) == []
     # in use at once: the record is coded, and its cards come with the answer
     answer = post(site.address, "holmby", rows()[10])
     kinds = [entry["resource"]["resourceType"] for entry in answer["bundle"]["entry"]]
     assert kinds.count("Observation") > 20
-    urgent = post(site.address, "holmby", {**rows()[1], "form_serial": "S-6001", "tone4": "yes"})
-    assert urgent["review"]["cards"]
+    review = with_chart(site.address, "holmby", rows()[0], root)["review"]
+    assert review["cards"][0]["title"] == "Entries that need the atria to contract"
+    assert any("Fourth heart sound: present" in entry for entry in review["cards"][0]["entries"])
+
+
+def press(page: Page, *keys: str) -> None:
+    for key in keys:
+        page.keyboard.press(key)
+
+
+def tab_to(page: Page, selector: str) -> None:
+    """Tabs on until something has the focus; nothing may hold the focus back."""
+    for _ in range(400):
+        if page.evaluate("wanted => document.activeElement.matches(wanted)", selector):
+            return
+        page.keyboard.press("Tab")
+    raise AssertionError(f"the keyboard does not reach {selector}")
+
+
+def map_by_keys(page: Page, name: str) -> None:
+    """The same with the keyboard alone: the focus stands on the field's heading."""
+    meant = MEANT[name]
+    kind, _, rest = meant.partition(":")
+    for place, offer in enumerate(page.locator("form:has(button.offer) input[name=target]").all(), 1):
+        if offer.input_value() in (meant, f"record#{rest}"):
+            after(page, lambda: press(page, str(place)))
+            return
+    if kind == "ignore":
+        press(page, "i")
+        page.keyboard.type(rest)
+    elif kind == "part":
+        tab_to(page, "#part")
+        page.keyboard.type(page.locator(f"#part option[value='record#{rest}']").inner_text())
+        press(page, "Tab")
+    elif kind == "remark":
+        tab_to(page, "#of")
+        press(page, "Tab")
+    elif "#" in meant:
+        tab_to(page, "#property")
+        words = page.locator(f"#property option[value$='|{meant.partition('#')[2]}']").last.inner_text()
+        page.keyboard.type(words)
+        press(page, "Tab")
+    else:
+        press(page, "f")
+        page.keyboard.type(page.locator(f"#findings option[value$='· {meant}']").get_attribute("value") or "")
+        press(page, "Escape", "f")  # shuts the browser's list of findings
+    after(page, lambda: press(page, "Enter"))
+
+
+def settle_by_keys(page: Page, name: str) -> None:
+    if heading(page) != name:
+        return
+    for row in page.locator("table.meanings tbody tr").all():
+        box = row.locator("select")
+        if box.count() and not box.input_value():
+            wording = WORDINGS[row.locator("input[name^=wording]").input_value()]
+            words = box.locator(f"option[value='{wording}']").inner_text()
+            tab_to(page, f"select[name='{box.get_attribute('name')}']")
+            page.keyboard.type(words)
+    press(page, "Tab")
+    tab_to(page, "button[data-key=s]")
+    after(page, lambda: press(page, "Enter"))
+
+
+def test_the_same_with_the_keyboard_alone(visit: Any, site: Any) -> None:
+    page: Page = visit("/desk")
+    tab_to(page, "#title")
+    for words in ("Holmby ward, heart sheet", "holmby-keys"):
+        page.keyboard.type(words)
+        press(page, "Tab")
+    with page.expect_file_chooser() as chooser:
+        press(page, "Space")
+    chooser.value.set_files(FORM)
+    tab_to(page, "#address")
+    page.keyboard.type("https://holmby.example")
+    press(page, "Tab")
+    page.keyboard.type("Europe/Vienna")
+    press(page, "Enter")
+    expect(page.locator("#chosen")).to_be_focused()
+    for name in MEANT:
+        expect(page.locator("#chosen")).to_have_text(name)
+        expect(page.locator("#chosen")).to_be_focused()
+        map_by_keys(page, name)
+        settle_by_keys(page, name)
+    assert page.locator(".key").first.inner_text().split()[:5] == ["38", "mapped", "2", "ignored", "0"]
+    tab_to(page, ".way a[href$='/publish']")
+    press(page, "Enter")
+    page.wait_for_url("**/publish")
+    tab_to(page, "#author")
+    page.keyboard.type("R. Example")
+    press(page, "Tab")
+    page.keyboard.type("By the keyboard")
+    press(page, "Enter")
+    expect(page.locator("main")).to_contain_text("Version 1 is in use")
+    row = {**rows()[2], "form_serial": "S-7001"}
+    assert post(site.address, "holmby-keys", row)["outcome"]["issue"][0]["severity"] == "information"

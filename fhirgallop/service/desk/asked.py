@@ -104,8 +104,10 @@ def _target(bench: Bench, field: FieldSeen, target: str, side: str) -> Done:
     if axis:
         if axis not in known.axes:
             raise AskedError("Choose a property from the list.")
-        line = next((at for at, _, of in bench.lines() if axis in known.findings[of].qualifiers), None)
-        of = next((one for at, _, one in bench.lines() if at == line), finding)
+        # a line of the finding itself, or of a kind of it; where there is none, a new one
+        kinds = [(at, of) for at, _, of in bench.lines() if f"{of}.".startswith(f"{finding}.")]
+        fits = [(at, of) for at, of in kinds if axis in known.findings[of].qualifiers]
+        line, of = fits[0] if fits else (None, finding)
         did = f"{name}: {axis_label(axis).lower()} of {label(of)}"
         return Done(changes.describe(text, field, axis, line, of), did, go_on=True)
     return Done(changes.put_finding(text, field, finding, side), f"{name}: {label(finding)}", go_on=True)
