@@ -1,4 +1,4 @@
-"""The pages of clinicians, operators and reviewers in a real browser: found, read, answered, printed, judged."""
+"""The pages of clinicians, operators and reviewers in a real browser: read, answered, printed, judged."""
 
 from __future__ import annotations
 
