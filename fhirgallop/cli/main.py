@@ -11,6 +11,7 @@ import typer
 
 from fhirgallop.cli import (
     audit,
+    backfill,
     code,
     database,
     deliveries,
@@ -37,6 +38,7 @@ app = typer.Typer(
     "setting has faults; 4 a file or an address could not be used.",
 )
 app.command("code")(code.command)
+app.command("backfill")(backfill.command)
 app.command("extract")(extract.command)
 app.command("validate")(validate.command)
 app.command("review")(review.command)
