@@ -134,7 +134,8 @@ def accessible() -> Callable[[Page], list[str]]:
         page.evaluate(AXE.read_text(encoding="utf-8"))
         found = page.evaluate(
             "rules => axe.run(document, {runOnly: {type: 'tag', values: rules}})"
-            ".then(found => found.violations.map(one => one.id + ': ' + one.nodes.map(n => n.target).join(' ')))",
+            ".then(found => found.violations.map("
+            "one => one.id + ': ' + one.nodes.map(n => n.target).join(' ')))",
             RULES,
         )
         return [str(one) for one in found]

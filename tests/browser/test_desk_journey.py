@@ -9,6 +9,7 @@ import csv
 import json
 import urllib.request
 from collections.abc import Callable
+from functools import partial
 from pathlib import Path
 from typing import Any
 
@@ -119,7 +120,7 @@ def map_one(page: Page, name: str) -> int:
             after(page, offer.first.click)
             return 1
         if "#" in meant:
-            finding, _, axis = meant.partition("#")
+            axis = meant.partition("#")[2]
             option = page.locator(f"#property option[value$='|{axis}']").evaluate_all(
                 "(all, finding) => all.find(one => one.parentElement.label.startsWith(finding)).value",
                 "Heart murmur",
@@ -241,28 +242,39 @@ def tab_to(page: Page, selector: str) -> None:
     raise AssertionError(f"the keyboard does not reach {selector}")
 
 
+def choose(page: Page, selector: str, option: str) -> None:
+    """Tabs to a list of choices and goes down to one of them."""
+    tab_to(page, selector)
+    all_ = page.locator(f"{selector} option").all()
+    wanted = page.locator(f"{selector} option{option}").first.get_attribute("value")
+    place = [one.get_attribute("value") for one in all_].index(wanted)
+    press(page, *["Home"], *["ArrowDown"] * place)
+    assert page.locator(selector).input_value() == wanted
+
+
 def map_by_keys(page: Page, name: str) -> None:
     """The same with the keyboard alone: the focus stands on the field's heading."""
     meant = MEANT[name]
     kind, _, rest = meant.partition(":")
     for place, offer in enumerate(page.locator("form:has(button.offer) input[name=target]").all(), 1):
         if offer.input_value() in (meant, f"record#{rest}"):
-            after(page, lambda: press(page, str(place)))
+            after(page, partial(press, page, str(place)))
             return
     if kind == "ignore":
         press(page, "i")
         page.keyboard.type(rest)
     elif kind == "part":
-        tab_to(page, "#part")
-        page.keyboard.type(page.locator(f"#part option[value='record#{rest}']").inner_text())
+        choose(page, "#part", f"[value='record#{rest}']")
         press(page, "Tab")
     elif kind == "remark":
         tab_to(page, "#of")
         press(page, "Tab")
     elif "#" in meant:
-        tab_to(page, "#property")
-        words = page.locator(f"#property option[value$='|{meant.partition('#')[2]}']").last.inner_text()
-        page.keyboard.type(words)
+        at = (
+            page.locator("#property optgroup[label^='Heart murmur'] option").first.get_attribute("value")
+            or ""
+        )
+        choose(page, "#property", f"[value='{at.partition('|')[0]}|{meant.partition('#')[2]}']")
         press(page, "Tab")
     else:
         press(page, "f")
@@ -272,15 +284,16 @@ def map_by_keys(page: Page, name: str) -> None:
 
 
 def settle_by_keys(page: Page, name: str) -> None:
-    if heading(page) != name:
+    open_rows = page.locator("table.meanings select").evaluate_all(
+        "all => all.filter(one => !one.value).length"
+    )
+    if heading(page) != name or not open_rows:
         return
     for row in page.locator("table.meanings tbody tr").all():
         box = row.locator("select")
         if box.count() and not box.input_value():
             wording = WORDINGS[row.locator("input[name^=wording]").input_value()]
-            words = box.locator(f"option[value='{wording}']").inner_text()
-            tab_to(page, f"select[name='{box.get_attribute('name')}']")
-            page.keyboard.type(words)
+            choose(page, f"select[name='{box.get_attribute('name')}']", f"[value='{wording}']")
     press(page, "Tab")
     tab_to(page, "button[data-key=s]")
     after(page, lambda: press(page, "Enter"))

@@ -27,11 +27,10 @@ _SYSTEMS: Final = {systems.SNOMED: "SNOMED CT", systems.LOINC: "LOINC", systems.
 
 @dataclass(frozen=True, slots=True)
 class Said:
-    """One coded Observation: in plain words, its codes as (system, code, display), and its parts in words."""
+    """One coded Observation: in plain words, and its codes as (system, code, display)."""
 
     words: str
     codes: tuple[tuple[str, str, str], ...]
-    parts: tuple[str, ...]
 
 
 @dataclass(frozen=True, slots=True)
@@ -97,19 +96,7 @@ def _said(bundle: Mapping[str, Any] | None) -> Iterator[Said]:
                 for one in codes
                 if one.get("system") in _SYSTEMS
             ),
-            tuple(_parts(resource)),
         )
-
-
-def _parts(resource: Mapping[str, Any]) -> Iterator[str]:
-    for component in resource.get("component", ()):
-        said = component.get("valueCodeableConcept") or {}
-        amount = component.get("valueQuantity") or {}
-        value = said.get("text") or component.get("valueString") or (
-            f"{amount['value']} {amount.get('unit', '')}".strip() if "value" in amount else ""
-        )  # fmt: skip
-        if value:
-            yield f"{component['code'].get('text', '')}: {value}"
 
 
 def _words(div: str) -> str:
