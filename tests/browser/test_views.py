@@ -91,8 +91,8 @@ def test_from_the_start_page_to_a_card_its_grounds_and_literature_by_keyboard_al
     expect(page.get_by_text("McGee, Evidence-Based Physical Diagnosis").first).to_be_visible()
 
 
-def test_an_answer_stands_there_at_once_and_the_chart_stays(
-    visit: Callable[..., Page], exam: str, root: Path
+def test_an_answer_stands_there_at_once_and_is_counted_and_the_chart_stays(
+    visit: Callable[..., Page], accessible: Callable[[Page], list[str]], exam: str, root: Path
 ) -> None:
     page = visit(f"/exams/{exam}")
     _with_chart(page, root, "atrial-fibrillation-today")
@@ -102,6 +102,9 @@ def test_an_answer_stands_there_at_once_and_the_chart_stays(
     said = card.get_by_role("status").get_by_text("Heard again in the left lateral position")
     expect(said).to_be_visible()
     expect(page.get_by_text("Held against the chart that was handed in")).to_be_visible()
+    page.goto("/knowledge/s4.in-atrial-fibrillation")
+    expect(page.get_by_role("img", name="The rule s4.in-atrial-fibrillation by month")).to_be_visible()
+    assert accessible(page) == []
 
 
 def test_everything_works_without_script(visit: Callable[..., Page], exam: str, root: Path) -> None:
@@ -143,4 +146,3 @@ def test_rules_are_searched(visit: Callable[..., Page]) -> None:
     page.get_by_label("Words").fill("fourth fibrillation")
     page.get_by_role("button", name="Search").click()
     expect(page.get_by_role("link", name="Fourth heart sound").first).to_be_visible()
-    expect(page.get_by_role("img", name="All rules by month")).to_be_visible()

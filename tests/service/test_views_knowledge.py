@@ -79,12 +79,17 @@ def test_counts_come_together_by_rule_and_month() -> None:
     assert [one.overridden for _, one in fared.all()] == [0, 6]
 
 
-@pytest.mark.parametrize("most", [0, 1, 4, 7, 99, 12345])
+@pytest.mark.parametrize("most", [1, 4, 7, 99, 12345])
 def test_the_scale_of_the_drawing_holds_every_bar_in_few_lines(most: int) -> None:
     drawn = months([("2026-12", Fared(raised=most, shown=most // 2))], "x")
     heights = [float(one) for one in re.findall(r'height="([\d.]+)" class="count', drawn)][3:]
     assert max(heights, default=0.0) <= 140
     assert 2 <= drawn.count('class="scale"') <= 6
+
+
+def test_where_nothing_was_counted_there_is_no_empty_drawing(client: TestClient) -> None:
+    assert months([("2026-11", Fared()), ("2026-12", Fared())], "x") == ""
+    assert "Nothing was raised or answered" in client.get("/knowledge").text
 
 
 def test_counts_are_added_up_and_kept_by_month(tmp_path: Any) -> None:

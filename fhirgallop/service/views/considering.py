@@ -13,6 +13,7 @@ from typing import Any, Final
 
 from fhirgallop.cards import words
 from fhirgallop.cards.card import Card
+from fhirgallop.cards.conditions import in_words
 from fhirgallop.cards.memory import Memory
 from fhirgallop.cards.opinion import left_out, limits
 from fhirgallop.cards.policy import Decision, Policy, decide
@@ -23,7 +24,7 @@ from fhirgallop.reasoning.conclusion import Conclusion, Outcome, cutoffs_of
 from fhirgallop.reasoning.conflicts import ConflictSet
 from fhirgallop.reasoning.review import Review, review
 from fhirgallop.reasoning.rulebook import Rulebook
-from fhirgallop.reasoning.vocabulary import Tier
+from fhirgallop.reasoning.vocabulary import Relation, Tier
 
 # how a need stands, in words; the order is that of the page
 STANDS: Final = {
@@ -41,6 +42,13 @@ _LEVELS: Final = {
     "urgent": "Now",
     "interruptive": "One question",
     "advisory": "To consider",
+}
+_SILENT: Final = frozenset({Outcome.MET, Outcome.CONFIRMED, Outcome.OPEN, Outcome.NOT_LOOKED_FOR})
+_LOOKED_FOR: Final = {
+    Relation.REQUIRES: "Needs",
+    Relation.EXPECTS: "Often comes with",
+    Relation.CONTRADICTS: "Does not usually go with",
+    Relation.CHECK: "Is asked about when",
 }
 _SEEN: Final = {
     "excerpt": "abstract or excerpt read",
@@ -191,7 +199,7 @@ def _basis(conclusion: Conclusion) -> Basis:
         conclusion.outcome.value,
         STANDS[conclusion.outcome],
         words.said(conclusion.subject[0].item) if conclusion.subject else "",
-        conclusion.text,
+        _sentence(conclusion),
         tuple(grounds),
         tuple(dict.fromkeys(words.label(id_) for id_ in conclusion.unknown)),
         tuple(words.cutoff(one) for one in cutoffs_of(rule)),
@@ -200,6 +208,14 @@ def _basis(conclusion: Conclusion) -> Basis:
         conclusion.strength.value,
         rule.mechanism,
     )
+
+
+def _sentence(conclusion: Conclusion) -> str:
+    """What fired says its own sentence; of what did not, the page says what was looked for, and why."""
+    rule = conclusion.rule
+    if conclusion.outcome not in _SILENT or rule.other is None or rule.relation not in _LOOKED_FOR:
+        return conclusion.text
+    return f"{_LOOKED_FOR[rule.relation]} {in_words(rule.other)}. {rule.mechanism}"
 
 
 def _conflict(conflict: ConflictSet) -> tuple[tuple[str, ...], tuple[str, ...]]:

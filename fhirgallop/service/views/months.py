@@ -14,13 +14,15 @@ _STEPS: Final = (1, 2, 5)
 
 
 def months(fared: Sequence[tuple[str, Fared]], title: str) -> str:
-    """The drawing as one SVG element; the numbers stand in the table beside it.
+    """The drawing as one SVG element, empty where nothing was counted; the numbers stand beside it.
 
     Args:
         fared: each month (`2026-12`) with its counts.
         title: its name for those who do not see it.
     """
     most = max((max(one.raised, one.shown, one.overridden) for _, one in fared), default=0)
+    if not any(one != Fared() for _, one in fared):
+        return ""
     step = _step(most)
     top = max(step, -(-most // step) * step)
     room = (_WIDTH - _LEFT) / max(len(fared), 1)
