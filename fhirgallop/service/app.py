@@ -55,6 +55,7 @@ from fhirgallop.service.routes import (
 from fhirgallop.service.rule_tally import RuleTally, rules_counted
 from fhirgallop.service.shelf import Shelf, keep_versions, load_shelf
 from fhirgallop.service.views.answering import Answers as CardAnswers
+from fhirgallop.service.views.record_system import record_system
 from fhirgallop.settings import Settings
 from fhirgallop.storage.batches import Batches
 from fhirgallop.storage.engine import open_database
@@ -162,6 +163,7 @@ def create_app(settings: Settings, clock: Callable[[], datetime] = now) -> FastA
     app.state.exam_search = ExamSearch(engine)
     app.state.card_answers = CardAnswers(HookStore(engine), clock)
     app.state.outbox = Outbox(engine)
+    app.state.record_system = record_system(settings, fetcher)
     app.state.exams = ExamDesk(
         Examinations(
             Submissions(engine), clock, delivered=(settings.edition, settings.snomed) if dispatch else None

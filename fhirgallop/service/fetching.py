@@ -13,7 +13,7 @@ from collections.abc import Mapping, Sequence
 from concurrent.futures import ThreadPoolExecutor, wait
 from dataclasses import dataclass, field, replace
 from typing import Any, Final
-from urllib.parse import urljoin
+from urllib.parse import quote, urljoin
 
 from fhirgallop.cards.discovery import Service, Wanted
 from fhirgallop.cards.hooks import Authorisation, Call
@@ -135,6 +135,28 @@ class Fetcher:
         _log(service, going, lacks)
         return replace(kept, prefetch=call.prefetch.knowing(found, lacks))
 
+    def patient_id(self, base: str, system: str, value: str) -> str | None:
+        """The FHIR id of the one Patient with this identifier; None where there is none, or not just one.
+
+        Args:
+            base: of a listed server, in its one spelling.
+            system: of the identifier; may be empty.
+            value: of the identifier.
+        """
+        asked = quote(f"{system}|{value}" if system else value, safe="")
+        headers = {"Accept": "application/fhir+json"}
+        try:
+            answer = self._client.send(
+                "GET", f"{base}/Patient?identifier={asked}&_count=2", headers=headers, timeout=self._seconds
+            )
+        except ClientError:
+            return None
+        bundle, _ = fhirjson.read(answer.body) if answer.status == 200 else (None, [])
+        entries = bundle.get("entry") if isinstance(bundle, dict) else None
+        resources: list[Any] = [e.get("resource") for e in entries or () if isinstance(e, dict)]
+        ids: set[str] = {one["id"] for one in resources if _is_named(one, system, value)}
+        return ids.pop() if len(ids) == 1 else None
+
     def _read(self, readings: Mapping[str, _Reading], way: _Way) -> None:
         started = [self._threads.submit(self._pages, reading, way) for reading in readings.values()]
         done, late = wait(started, timeout=max(0.0, way.until - time.monotonic()))
@@ -180,6 +202,16 @@ class Fetcher:
         """Ends what is on its way."""
         self._threads.shutdown(wait=False, cancel_futures=True)
         self._client.close()
+
+
+def _is_named(resource: Any, system: str, value: str) -> bool:
+    """Whether it is a Patient with an id and this identifier, whatever the server took the search for."""
+    if not isinstance(resource, dict) or resource.get("resourceType") != "Patient":
+        return False
+    given = resource.get("identifier")
+    named = [one for one in given if isinstance(one, dict)] if isinstance(given, list) else []
+    fits = any(one.get("value") == value and one.get("system", "") == system for one in named)
+    return fits and isinstance(resource.get("id"), str)
 
 
 def open_fetcher(settings: Settings, resolve: Resolve | None = None) -> Fetcher | None:

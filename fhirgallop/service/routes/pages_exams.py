@@ -25,8 +25,9 @@ from fhirgallop.service.desk.forms import files, form, word
 from fhirgallop.service.pages.rendering import page, render
 from fhirgallop.service.views.answering import LABELS, MOST_REASON, Answers, carried, read_carried
 from fhirgallop.service.views.considering import Considered, consider
-from fhirgallop.service.views.examination import Examination, counted, read_examination
+from fhirgallop.service.views.examination import Examination, counted, read_examination, read_head
 from fhirgallop.service.views.looking_up import look_up
+from fhirgallop.service.views.record_system import RecordSystem
 from fhirgallop.service.views.remarks import remarks
 from fhirgallop.service.views.wording import SAID
 from fhirgallop.storage.exam_search import ExamSearch
@@ -83,6 +84,8 @@ async def with_chart(request: Request, exam: str) -> Response:
     sent = await form(request)
     given = await files(sent, "chart")
     await sent.close()
+    if word(sent, "from") == "record-system":
+        return await run_in_threadpool(_with_fetched, request, exam)
     return await run_in_threadpool(_with_chart, request, exam, given)
 
 
@@ -110,6 +113,18 @@ def _with_chart(request: Request, exam: str, given: list[tuple[str, bytes]]) -> 
     return _page(request, opened, chart_issues=issues, status=422 if has_errors(issues) else 200)
 
 
+def _with_fetched(request: Request, exam: str) -> Response:
+    source: RecordSystem | None = request.app.state.record_system
+    if source is None:
+        text = "No record system is set to be read from here; hand the chart in as a file."
+        raise answers.refusal(404, "not-found", "page-record-system", text)
+    fetched = source.read(read_head(_row(request, exam).bundle).patient)
+    issues = [
+        Issue("warning", "incomplete", "page-record-system", f"Unknown: {gap}.") for gap in fetched.gaps
+    ]
+    return _page(request, _open(request, exam, fetched.chart), chart_issues=issues)
+
+
 def _chart(given: list[tuple[str, bytes]]) -> tuple[Any, list[Issue]]:
     if not given:
         words = "No file was handed in; choose a FHIR Bundle (JSON) of this patient's resources."
@@ -128,7 +143,7 @@ def _open(request: Request, exam: str, chart: Any) -> Opened:
     state = request.app.state
     now = state.clock()
     read = read_examination(row.bundle, now)
-    considered = consider(read.own.exam, chart, now, rules=state.hooks.rules, policy=state.policy)
+    considered = consider(read, chart, now, rules=state.hooks.rules, policy=state.policy)
     return Opened(row, read, considered, chart is not None)
 
 
@@ -178,6 +193,7 @@ def _page(
         Presence=Presence,
         considered=opened.considered,
         chart=opened.chart,
+        record_system=request.app.state.record_system is not None,
         chart_issues=chart_issues or [],
         given=desk.given(opened.row.exam, cards),
         labels=LABELS,

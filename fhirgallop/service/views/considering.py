@@ -17,14 +17,17 @@ from fhirgallop.cards.conditions import in_words
 from fhirgallop.cards.memory import Memory
 from fhirgallop.cards.opinion import left_out, limits
 from fhirgallop.cards.policy import Decision, Policy, decide
-from fhirgallop.chart.read import Chart, read_chart
+from fhirgallop.chart.elements import identifiers
+from fhirgallop.chart.gather import gather
+from fhirgallop.chart.log import Log
+from fhirgallop.chart.read import Chart, read_gathered
 from fhirgallop.exam.context import Context
-from fhirgallop.exam.exam import Exam
 from fhirgallop.reasoning.conclusion import Conclusion, Outcome, cutoffs_of
 from fhirgallop.reasoning.conflicts import ConflictSet
 from fhirgallop.reasoning.review import Review, review
 from fhirgallop.reasoning.rulebook import Rulebook
 from fhirgallop.reasoning.vocabulary import Relation, Tier
+from fhirgallop.service.views.examination import Examination
 
 # how a need stands, in words; the order is that of the page
 STANDS: Final = {
@@ -125,17 +128,20 @@ class Considered:
     rules_version: str
 
 
-def consider(exam: Exam, chart: Any, now: datetime, *, rules: Rulebook, policy: Policy) -> Considered:
+def consider(
+    examination: Examination, chart: Any, now: datetime, *, rules: Rulebook, policy: Policy
+) -> Considered:
     """The page's content.
 
     Args:
-        exam: the examination, as read back.
+        examination: as read back. What a chart holds of it, by the same identifiers, is no second witness.
         chart: the patient's FHIR resources (see chart.read); None where there are none.
         now: the moment, with a zone.
         rules: the rules in force.
         policy: the site's alert policy.
     """
-    read: Chart | None = read_chart(chart, exam, now) if chart is not None else None
+    exam = examination.own.exam
+    read = _read(chart, examination, now) if chart is not None else None
     context = read.context if read else Context(now, (), exam.patient)
     found = review(exam, context, rules=rules)
     encounter = exam.encounter.value if exam.encounter else exam.identifier
@@ -155,6 +161,16 @@ def consider(exam: Exam, chart: Any, now: datetime, *, rules: Rulebook, policy: 
         tuple(left_out(read.issues)) if read else (),
         found.rules_version,
     )
+
+
+def _read(chart: Any, examination: Examination, now: datetime) -> Chart:
+    log = Log()
+    others = [
+        found
+        for found in gather(chart, log)
+        if not identifiers(found.resource.get("identifier")) & examination.names
+    ]
+    return read_gathered(others, examination.own.exam, now, log)
 
 
 def _ask(decision: Decision) -> str:

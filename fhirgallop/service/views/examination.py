@@ -8,7 +8,7 @@ from datetime import datetime
 from html import unescape
 from typing import Final
 
-from fhirgallop.chart.elements import Element, element, elements, text
+from fhirgallop.chart.elements import Element, element, elements, identifiers, text
 from fhirgallop.chart.gather import Found, gather
 from fhirgallop.chart.log import Log
 from fhirgallop.chart.own_exam import Gathered, OwnExam, gather_own_exams, read_own_exam
@@ -84,6 +84,7 @@ class Examination:
         parts: everything that was said, in the order of the examination.
         taken_back: findings that the sender took back.
         notes: remarks on the whole.
+        names: identifiers (system, value) of its resources, by which they are known again in a chart.
     """
 
     head: Head
@@ -91,6 +92,7 @@ class Examination:
     parts: tuple[Part, ...]
     taken_back: tuple[str, ...]
     notes: tuple[str, ...]
+    names: frozenset[tuple[str, str]]
 
 
 def read_head(bundle: bytes) -> Head:
@@ -116,7 +118,8 @@ def read_examination(bundle: bytes, now: datetime) -> Examination:
         for section, line in _lines(found, head, log):
             lines.setdefault(section, []).append(line)
     parts = tuple(Part(title, tuple(lines[id_])) for id_, title in SECTIONS.items() if id_ in lines)
-    return Examination(head, own, parts, tuple(filter(None, taken_back)), tuple(_notes(chart)))
+    names = frozenset(name for found in chart for name in identifiers(found.resource.get("identifier")))
+    return Examination(head, own, parts, tuple(filter(None, taken_back)), tuple(_notes(chart)), names)
 
 
 def _resources(bundle: Element) -> list[Element]:
