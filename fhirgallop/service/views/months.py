@@ -1,4 +1,4 @@
-"""Counts by month as a drawing: raised, shown and overridden, as bars beside each other."""
+"""Counts by month as a drawing: raised, shown and answered, as bars beside each other."""
 
 from __future__ import annotations
 
@@ -9,7 +9,7 @@ from fhirgallop.drawing.svg import element, words
 from fhirgallop.service.views.knowledge import Fared
 
 _WIDTH, _HEIGHT, _LEFT, _TOP, _FOOT = 720, 190, 46, 26, 24
-_KINDS: Final = (("raised", "raised"), ("shown", "shown"), ("overridden", "answered, not followed"))
+_KINDS: Final = (("raised", "raised"), ("shown", "shown"), ("overridden", "answered with a reason"))
 _STEPS: Final = (1, 2, 5)
 
 
