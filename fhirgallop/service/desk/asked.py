@@ -5,13 +5,11 @@ from __future__ import annotations
 from dataclasses import dataclass
 from typing import Final
 
-from starlette.datastructures import FormData
-
 from fhirgallop.exam import catalogue
 from fhirgallop.mapping.suggest import RECORD
 from fhirgallop.service.desk import changes
 from fhirgallop.service.desk.brought import FieldSeen
-from fhirgallop.service.desk.forms import word
+from fhirgallop.service.desk.forms import Form, word
 from fhirgallop.service.desk.uses import axis_label, label
 from fhirgallop.service.desk.workbench import PARTS, Bench
 
@@ -32,7 +30,7 @@ class Done:
     go_on: bool = False
 
 
-def done(bench: Bench, sent: FormData) -> Done:
+def done(bench: Bench, sent: Form) -> Done:
     """The change that a form asks for.
 
     Raises:
@@ -42,7 +40,7 @@ def done(bench: Bench, sent: FormData) -> Done:
     what = word(sent, "do", 20)
     if what == "text":
         text = sent.get("text", "")
-        if not isinstance(text, str) or len(text) > _MOST_TEXT:
+        if len(text) > _MOST_TEXT:
             raise AskedError("The text of the map is too long.")
         return Done(text.replace("\r\n", "\n"), "text changed by hand")
     field = bench.brought.fields.get(word(sent, "field"))
@@ -51,7 +49,7 @@ def done(bench: Bench, sent: FormData) -> Done:
     return _of_field(bench, field, what, sent)
 
 
-def _of_field(bench: Bench, field: FieldSeen, what: str, sent: FormData) -> Done:
+def _of_field(bench: Bench, field: FieldSeen, what: str, sent: Form) -> Done:
     text, name = bench.draft.text, field.name
     match what:
         case "offer" | "pick":
@@ -113,14 +111,14 @@ def _target(bench: Bench, field: FieldSeen, target: str, side: str) -> Done:
     return Done(changes.put_finding(text, field, finding, side), f"{name}: {label(finding)}", go_on=True)
 
 
-def _meanings(bench: Bench, field: FieldSeen, sent: FormData) -> Done:
+def _meanings(bench: Bench, field: FieldSeen, sent: Form) -> Done:
     """Wordings come as pairs of fields, `wording-0` and `meaning-0`: a wording may hold any sign."""
     at = _line(bench, word(sent, "at"))
     axis = word(sent, "axis")
     meanings = {}
     for place in range(200):
         wording = sent.get(f"wording-{place}")
-        if not isinstance(wording, str):
+        if wording is None:
             break
         meanings[wording] = word(sent, f"meaning-{place}", 80)
     if (added := word(sent, "wording-new")) and (meaning := word(sent, "meaning-new", 80)):

@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import AsyncIterator
+from collections.abc import AsyncGenerator, Iterable
 from typing import Final
 
 from fastapi import Request
@@ -20,7 +20,15 @@ _MOST_FIELDS: Final = 1000
 _MOST_FILES: Final = 8
 
 
-async def form(request: Request) -> FormData:
+class Form(dict[str, str]):
+    """The fields of a form by name, and its files as (name of the field, name of the file, content)."""
+
+    def __init__(self, fields: Iterable[tuple[str, str]], uploads: Iterable[tuple[str, str, bytes]]) -> None:
+        super().__init__(fields)
+        self.uploads = tuple(uploads)
+
+
+async def form(request: Request) -> Form:
     """The fields and files of a form.
 
     Raises:
@@ -30,7 +38,7 @@ async def form(request: Request) -> FormData:
     kind = request.headers.get("content-type", "").partition(";")[0].strip().lower()
     content = await requests.body(request, settings.max_body)
 
-    async def whole() -> AsyncIterator[bytes]:
+    async def whole() -> AsyncGenerator[bytes, None]:
         yield content
 
     try:
@@ -41,15 +49,28 @@ async def form(request: Request) -> FormData:
             )  # fmt: skip
             # what was sent is in memory already: nothing of it goes to a disk
             parser.spool_max_size = settings.max_body
-            return await parser.parse()
+            return await _read_out(await parser.parse())
         if kind == _URLENCODED:
-            return await FormParser(request.headers, whole()).parse()
+            return await _read_out(await FormParser(request.headers, whole()).parse())
     except MultiPartException:
         raise refusal(400, "structure", "http-form", "The form cannot be read; send it again.") from None
     raise refusal(415, "not-supported", "http-content-type", "Send this as a form of the desk's pages.")
 
 
-Sent = FormData | QueryParams
+async def _read_out(parsed: FormData) -> Form:
+    fields, uploads = [], []
+    try:
+        for name, value in parsed.multi_items():
+            if isinstance(value, UploadFile):
+                uploads.append((name, value.filename or "", await value.read()))
+            else:
+                fields.append((name, value))
+    finally:
+        await parsed.close()
+    return Form(fields, uploads)
+
+
+Sent = Form | QueryParams
 
 
 def word(sent: Sent, name: str, most: int = 400) -> str:
@@ -58,28 +79,25 @@ def word(sent: Sent, name: str, most: int = 400) -> str:
     Raises:
         RefusalError: 422, it is longer than it may be.
     """
-    value = sent.get(name, "")
-    text = value.strip() if isinstance(value, str) else ""
+    text = (sent.get(name) or "").strip()
     if len(text) > most:
         raise refusal(422, "too-long", "http-form", f"{name} is longer than {most} characters.")
     return text
 
 
-async def files(sent: FormData, name: str) -> list[tuple[str, bytes]]:
+def files(sent: Form, name: str) -> list[tuple[str, bytes]]:
     """The files of a form's field, by what their names end in; those without content are left out.
 
     Raises:
         RefusalError: 415, there is no reader for one.
     """
     found = []
-    for value in sent.getlist(name):
-        if not isinstance(value, UploadFile) or not value.filename:
+    for field, file, content in sent.uploads:
+        if field != name or not file or not content:
             continue
-        kind = kind_of(name=value.filename)
+        kind = kind_of(name=file)
         if kind is None:
             text = "One file is of a kind that is not read here; JSON, NDJSON, CSV, Excel and HL7 v2 are."
             raise refusal(415, "not-supported", "http-content-type", text)
-        media_type = next(media for media, one in BY_CONTENT_TYPE.items() if one == kind)
-        if content := await value.read():
-            found.append((media_type, content))
+        found.append((next(media for media, one in BY_CONTENT_TYPE.items() if one == kind), content))
     return found

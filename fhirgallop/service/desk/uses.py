@@ -70,8 +70,8 @@ def uses(text: str) -> Uses:
     for at, block in enumerate(ignored):
         reason = str(block.value.get("reason") or "")
         use = Use("ignored", reason, at, block.first, block.end, block.value)
-        if name := block.value.get("field"):
-            by_field.setdefault(str(name), []).append(use)
+        if block.value.get("field"):
+            by_field.setdefault(str(block.value["field"]), []).append(use)
         elif block.value.get("fields"):
             pattern = str(block.value["fields"])
             patterns.append((Ignored(pattern, reason), use))

@@ -40,7 +40,7 @@ async def begin(request: Request) -> Response:
     """Makes a draft of what was brought in."""
     sent = await form(request)
     told = {name: word(sent, name, 200) for name in ("name", "title", "address", "zone")}
-    samples, described, issues = await _brought(await files(sent, "records"), await files(sent, "dictionary"))
+    samples, described, issues = await _brought(files(sent, "records"), files(sent, "dictionary"))
     issues += _faults(told, found=bool(samples or described))
     if has_errors(issues):
         return await run_in_threadpool(_page, request, told=told, issues=issues, status=422)

@@ -7,7 +7,6 @@ from urllib.parse import urlencode
 
 from fastapi import APIRouter, Depends, Request
 from starlette.concurrency import run_in_threadpool
-from starlette.datastructures import FormData
 from starlette.responses import RedirectResponse, Response
 
 from fhirgallop.errors import MapError
@@ -19,7 +18,7 @@ from fhirgallop.service.auth.needs import needs
 from fhirgallop.service.desk import asked
 from fhirgallop.service.desk.checking import check
 from fhirgallop.service.desk.desk import Desk
-from fhirgallop.service.desk.forms import Sent, files, form, word
+from fhirgallop.service.desk.forms import Form, Sent, files, form, word
 from fhirgallop.service.desk.trial import Tried, held, tried
 from fhirgallop.service.desk.workbench import PAGE, PARTS, Bench, properties
 from fhirgallop.service.pages.rendering import page
@@ -115,7 +114,7 @@ async def change(request: Request, id_: str) -> Response:
     return await run_in_threadpool(_changed, request, id_, sent)
 
 
-def _changed(request: Request, id_: str, sent: FormData) -> Response:
+def _changed(request: Request, id_: str, sent: Form) -> Response:
     desk: Desk = request.app.state.desk
     draft = found(request, id_)
     audit.about(request, action="U", interaction="update")
@@ -146,9 +145,8 @@ def _next(desk: Desk, id_: str, name: str) -> str:
     return now.after(name) or name
 
 
-def _text(sent: FormData) -> str | None:
-    text = sent.get("text")
-    return text if isinstance(text, str) else None
+def _text(sent: Form) -> str | None:
+    return sent.get("text")
 
 
 def _where(sent: Sent) -> dict[str, Any]:
@@ -185,7 +183,7 @@ async def undo(request: Request, id_: str) -> Response:
 async def samples(request: Request, id_: str) -> Response:
     """Adds sample records, or deletes them all."""
     sent = await form(request)
-    added = await files(sent, "records")
+    added = files(sent, "records")
 
     def act() -> None:
         desk: Desk = request.app.state.desk

@@ -8,7 +8,6 @@ from urllib.parse import quote
 
 from fastapi import APIRouter, Depends, Request
 from starlette.concurrency import run_in_threadpool
-from starlette.datastructures import FormData
 from starlette.responses import RedirectResponse, Response
 
 from fhirgallop.codes import fhirjson
@@ -22,7 +21,7 @@ from fhirgallop.service.auth.needs import needs
 from fhirgallop.service.desk.blank_form import blank_form
 from fhirgallop.service.desk.checking import check
 from fhirgallop.service.desk.desk import Desk, digest
-from fhirgallop.service.desk.forms import form, word
+from fhirgallop.service.desk.forms import Form, form, word
 from fhirgallop.service.desk.workbench import Bench
 from fhirgallop.service.fhir.map_concepts import concept_map
 from fhirgallop.service.pages.rendering import page
@@ -83,7 +82,7 @@ async def publish(request: Request, id_: str) -> Response:
     return await run_in_threadpool(_published, request, id_, sent)
 
 
-def _published(request: Request, id_: str, sent: FormData) -> Response:
+def _published(request: Request, id_: str, sent: Form) -> Response:
     desk: Desk = request.app.state.desk
     draft = found(request, id_)
     told = {"version": word(sent, "version", 40), "author": word(sent, "author", 200),
