@@ -5,6 +5,7 @@ from __future__ import annotations
 import csv
 from pathlib import Path
 
+import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
 
@@ -12,17 +13,20 @@ from fhirgallop.exam import catalogue
 from fhirgallop.mapping.suggest import suggest
 from fhirgallop.mapping.suggest_values import Target, suggest_values
 
-CASES = Path(__file__).parents[1] / "cases/mapping/suggest/labels.csv"
+CASES = Path(__file__).parents[1] / "cases/mapping/suggest"
+# the second list was made when the first had been looked at, by somebody who had not seen it
+FILES = {"labels.csv": 120, "labels-2.csv": 60}
 
 
-def _rows() -> list[dict[str, str]]:
-    with CASES.open(encoding="utf-8", newline="") as file:
+def _rows(name: str) -> list[dict[str, str]]:
+    with (CASES / name).open(encoding="utf-8", newline="") as file:
         return list(csv.DictReader(file))
 
 
-def test_the_right_one_is_first_in_80_and_among_three_in_95_of_100() -> None:
-    rows = _rows()
-    assert len(rows) >= 120
+@pytest.mark.parametrize("name", FILES)
+def test_the_right_one_is_first_in_80_and_among_three_in_95_of_100(name: str) -> None:
+    rows = _rows(name)
+    assert len(rows) >= FILES[name]
     found = [
         [
             str(one.target)
@@ -36,10 +40,11 @@ def test_the_right_one_is_first_in_80_and_among_three_in_95_of_100() -> None:
     assert among >= 0.95 * len(rows)
 
 
-def test_the_labels_are_none_of_the_catalogues_own_wordings() -> None:
+@pytest.mark.parametrize("name", FILES)
+def test_the_labels_are_none_of_the_catalogues_own_wordings(name: str) -> None:
     known = catalogue.load()
     own = {one.wording.lower() for one in known.synonyms} | {f.label.lower() for f in known.findings.values()}
-    assert not [row["label"] for row in _rows() if row["label"].lower() in own]
+    assert not [row["label"] for row in _rows(name) if row["label"].lower() in own]
 
 
 def test_every_suggestion_says_why() -> None:

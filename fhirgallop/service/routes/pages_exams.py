@@ -82,8 +82,7 @@ async def one_exam(request: Request, exam: str) -> Response:
 async def with_chart(request: Request, exam: str) -> Response:
     """The same, held against a chart that is handed in; nothing of the chart is kept."""
     sent = await form(request)
-    given = await files(sent, "chart")
-    await sent.close()
+    given = files(sent, "chart")
     if word(sent, "from") == "record-system":
         return await run_in_threadpool(_with_fetched, request, exam)
     return await run_in_threadpool(_with_chart, request, exam, given)
