@@ -1,4 +1,4 @@
-"""What is put together when all parts are done: manifest, error file, what comes twice, and the counts.
+"""What is put together when all parts are done: manifest, error file, what comes twice, and the report.
 
 Sources: HL7 Bulk Data Access 2.0 and 4.0.0-ballot (manifest of a kick-off's result and of `$bulk-submit`);
 RFC 4180 (error file).
@@ -17,8 +17,10 @@ from typing import IO, Any, Final, cast
 
 import msgspec
 
-from fhirgallop.bulk.folder import ERRORS, OUTCOME, ErrorRow, Folder, whole
+from fhirgallop.bulk.folder import ERRORS, OUTCOME, ErrorRow, Folder, whole, write_json
 from fhirgallop.bulk.repeats import repeats
+from fhirgallop.bulk.report import report
+from fhirgallop.bulk.report_page import page
 from fhirgallop.bulk.tally import Tally
 from fhirgallop.bulk.wish import Source, Wish
 from fhirgallop.codes import fhirjson
@@ -51,6 +53,11 @@ def finish(wish: Wish, inputs: Sequence[Source], out: Path, *, base: str = "") -
         _write_errors(folder, file)
     with whole(out / MANIFEST) as file:
         _write_manifest(folder, file, wish, base, found)
+    told = report(tally, wish)
+    write_json(out / "report.json", told.as_dict())
+    for name, text in (("report.txt", told.as_text()), ("report.html", page(told))):
+        with whole(out / name) as file:
+            file.write(text.encode("utf-8", "replace"))
     return tally
 
 

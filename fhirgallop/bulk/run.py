@@ -71,7 +71,6 @@ def run(
     out.mkdir(parents=True, exist_ok=True)
     with _alone(out):
         _agree(wish, inputs, out)
-        folder.prepare()
         crew = _Crew(wish, out, workers, progress or (lambda _exams, _bytes: None))
         crew.work(_jobs(wish, inputs, folder))
         for source in inputs:
@@ -138,6 +137,7 @@ class _Crew:
         again: list[Job] = []
         failed = 0
         while True:
+            Folder(self._out).prepare()
             pool = self._pool()
             try:
                 left = self._through(pool, again, jobs)
