@@ -1,0 +1,411 @@
+"""Phrases to findings: which finding, which answer, qualifiers and number; and what may be coded of it."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass, replace
+from typing import Final
+
+from fhirgallop.codes import units
+from fhirgallop.exam.catalogue import Catalogue, FindingDefinition
+from fhirgallop.exam.checks import ALSO_OF_ABSENT
+from fhirgallop.exam.entry import Entry, Measure, Qualifier
+from fhirgallop.exam.presence import Presence
+from fhirgallop.phrases.clauses import Phrase
+from fhirgallop.phrases.items import Item
+from fhirgallop.phrases.vocabulary import Vocabulary
+
+PRESENCE: Final = {
+    "": Presence.PRESENT,
+    "yes": Presence.PRESENT,
+    "no": Presence.ABSENT,
+    "maybe": Presence.UNCERTAIN,
+    "not-examined": Presence.NOT_EXAMINED,
+    "not-examinable": Presence.NOT_EXAMINABLE,
+}
+# Dimensions with one customary unit, which a line may leave out.
+_CUSTOMARY: Final = frozenset({"mm[Hg]", "/min", "%", "{ratio}", "{score}", "1"})
+_PRESSURES: Final = ("pressure.systolic", "pressure.diastolic")
+_TIMED: Final = (("systolic", "systolic"), ("diastolic", "diastolic"))
+
+
+@dataclass(slots=True)
+class Built:
+    """What one phrase says."""
+
+    entries: list[Entry]
+    rule: str
+    issue: str = ""
+
+
+class Builder:
+    """Builds the entries of phrases in one language."""
+
+    def __init__(self, catalogue: Catalogue, vocabulary: Vocabulary) -> None:
+        self._known = catalogue
+        self._opposites = vocabulary.opposites
+
+    def build(self, phrase: Phrase) -> Built:
+        """The entries of a phrase; items that went into them are marked as used."""
+        if phrase.head is None or phrase.anchor is None:
+            return Built([], "")
+        findings = self._refined(phrase)
+        number = self._number(phrase)
+        if number is not None:
+            return number
+        answers, qualifiers = self._described(phrase, findings)
+        if answers:
+            return self._answered(phrase, findings, answers, qualifiers)
+        return self._signed(phrase, findings, qualifiers)
+
+    # Which finding: murmur + systolic is murmur.systolic.
+
+    def _refined(self, phrase: Phrase) -> list[FindingDefinition]:
+        head = phrase.head
+        assert head is not None  # noqa: S101 - build() asks first
+        findings = list(head.findings)
+        kinds = [item for item in (*phrase.items, *phrase.extra) if "kind" in item.sense.plain]
+        found: list[FindingDefinition] = []
+        for item in kinds:
+            for one in findings:
+                found += self._kind(item, one)
+        if found:
+            return list(dict.fromkeys(found))
+        timings = [value for axis, value in head.qualifiers if axis == "timing"]
+        for item in (*phrase.items, *phrase.extra):
+            timings += [value for axis, value in item.sense.values if axis == "timing"]
+        for one in findings[:1]:
+            for timing in timings:
+                for part, kind in _TIMED:
+                    child = self._known.findings.get(f"{one.id}.{kind}")
+                    if child is not None and (timing.endswith(f"-{part}") or timing == f"holo{part}"):
+                        return [child]
+        return findings
+
+    def _kind(self, item: Item, one: FindingDefinition) -> list[FindingDefinition]:
+        """`systolic` + murmur; `systolic or` + diastolic murmur are both."""
+        kind = item.plain("kind")
+        child = self._known.findings.get(f"{one.id}.{kind}")
+        beside = self._known.findings.get(f"{one.parent}.{kind}") if one.parent else None
+        if child is None and beside is None:
+            return []
+        item.used = True
+        return [child] if child is not None else [beside, one] if beside is not None else []
+
+    # Numbers.
+
+    def _number(self, phrase: Phrase) -> Built | None:
+        anchor, head = phrase.anchor, phrase.head
+        assert anchor is not None  # noqa: S101 - build() asks first
+        assert head is not None  # noqa: S101
+        item = next(
+            (i for i in phrase.items if i.first > anchor.first and (i.number is not None or i.fraction)), None
+        )
+        pair = any(one.id == "vital.blood-pressure" for one in head.findings)
+        quantities = [one for one in head.findings if one.kind == "quantity"]
+        if item is None or not (pair or quantities):
+            if item is not None and item.number is not None:
+                return self._class(phrase, item)
+            return None
+        if pair:
+            return self._pressures(phrase, item)
+        if item.number is None:
+            return (
+                Built([], "", "phrase-number-implausible") if len(quantities) == len(head.findings) else None
+            )
+        measures = [(one, measure) for one in quantities if (measure := _measure(item, one))]
+        if not measures:
+            lone = len(quantities) == len(head.findings)
+            if item.unit is None and item.number is not None and (lone or not self._other(phrase)):
+                return Built([], "", "phrase-unit-missing")
+            return Built([], "", "phrase-number-implausible")
+        finding, measure = measures[0]
+        if not _plausible(measure, finding):
+            return Built([], "", "phrase-number-implausible")
+        return self._measured(phrase, item, [Entry(finding.id, measure=measure)], [finding])
+
+    def _other(self, phrase: Phrase) -> bool:
+        head = phrase.head
+        return head is not None and any(
+            one.answers == axis
+            for one in head.findings
+            for item in phrase.items
+            for axis, _ in item.sense.values
+        )
+
+    def _class(self, phrase: Phrase, item: Item) -> Built | None:
+        """NYHA III: an answer that is a number."""
+        head = phrase.head
+        for one in head.findings if head else ():
+            value = str(item.number)
+            if item.high is None and not item.unit and value in self._known.answers(one):
+                if phrase.said not in ("", "yes"):
+                    return Built([], "", "phrase-denied-answer")
+                item.used = True
+                _take(phrase)
+                return Built([Entry(one.id, answers=(value,))], "answer")
+        return None
+
+    def _pressures(self, phrase: Phrase, item: Item) -> Built:
+        findings = [self._known.findings[one] for one in _PRESSURES]
+        if item.fraction is None:
+            return Built([], "", "phrase-number-implausible")
+        parts = []
+        for finding, value in zip(findings, item.fraction, strict=True):
+            one = Item(item.first, item.last)
+            one.number, one.unit = value, item.unit
+            parts.append(_measure(one, finding))
+        upper, lower = parts
+        if upper is None or lower is None or upper.value <= lower.value:
+            return Built([], "", "phrase-number-implausible")
+        if not (_plausible(upper, findings[0]) and _plausible(lower, findings[1])):
+            return Built([], "", "phrase-number-implausible")
+        entries = [Entry(f.id, measure=m) for f, m in zip(findings, (upper, lower), strict=True)]
+        return self._measured(phrase, item, entries, findings)
+
+    def _measured(
+        self, phrase: Phrase, item: Item, entries: list[Entry], findings: list[FindingDefinition]
+    ) -> Built:
+        if phrase.said not in ("", "yes"):
+            return Built([], "", "phrase-denied-answer")
+        item.used = True
+        _, qualifiers = self._described(phrase, findings)
+        _take(phrase)
+        return Built([replace(entry, qualifiers=_in_order(qualifiers)) for entry in entries], "number")
+
+    # Answers and qualifiers.
+
+    def _described(
+        self, phrase: Phrase, findings: list[FindingDefinition]
+    ) -> tuple[dict[str, list[str]], list[Qualifier]]:
+        """Answers by finding, and qualifiers that at least one of the findings takes."""
+        head = phrase.head
+        assert head is not None  # noqa: S101 - build() asks first
+        answers: dict[str, list[str]] = {}
+        if head.answers:
+            answers[findings[0].id] = list(head.answers)
+        qualifiers = [Qualifier(axis, value) for axis, value in head.qualifiers]
+        scan = _Scan(findings, answers, qualifiers)
+        for item in (*phrase.items, *phrase.extra):
+            if item is not phrase.anchor:
+                scan.item(item)
+        scan.end()
+        return answers, qualifiers
+
+    def _answered(
+        self,
+        phrase: Phrase,
+        findings: list[FindingDefinition],
+        answers: dict[str, list[str]],
+        qualifiers: list[Qualifier],
+    ) -> Built:
+        said = phrase.said
+        if said not in ("", "yes"):
+            if said != "no":
+                return self._unsure(phrase, answers)
+            turned = {
+                finding: [self._opposites.get((finding, value), "") for value in values]
+                for finding, values in answers.items()
+            }
+            if not all(all(values) for values in turned.values()):
+                return Built([], "", "phrase-denied-answer")
+            answers = turned
+        _take(phrase)
+        by_id = {one.id: one for one in findings}
+        entries = []
+        for finding, values in answers.items():
+            own = [q for q in qualifiers if q.axis in by_id[finding].qualifiers]
+            entries.append(Entry(finding, answers=tuple(dict.fromkeys(values)), qualifiers=_in_order(own)))
+        return Built(entries, "answer")
+
+    def _unsure(self, phrase: Phrase, answers: dict[str, list[str]]) -> Built:
+        """`possibly loud P2`: that it is uncertain is kept, the answer is not."""
+        presence = PRESENCE[phrase.said]
+        _take(phrase)
+        return Built(
+            [Entry(finding, presence) for finding in answers], phrase.rule, "phrase-uncertain-answer"
+        )
+
+    # Signs.
+
+    def _signed(
+        self, phrase: Phrase, findings: list[FindingDefinition], qualifiers: list[Qualifier]
+    ) -> Built:
+        head, said = phrase.head, phrase.said
+        assert head is not None  # noqa: S101 - build() asks first
+        signs = [one for one in findings if one.kind == "sign"]
+        if said in ("not-examined", "not-examinable"):
+            _take(phrase)
+            chosen = signs[:1] if findings[0].kind == "sign" else findings[:1]
+            return Built([Entry(one.id, PRESENCE[said]) for one in chosen], said)
+        if not signs or findings[0].kind != "sign":
+            return self._missing(phrase, findings)
+        if head.denied == "all":
+            signs = _one_of(signs, qualifiers, said)
+            if not signs:
+                return Built([], "", "phrase-which")
+        elif len(head.findings) > 1:
+            signs = signs[:1]
+        presence, rule, issue = PRESENCE[said], phrase.rule or "said", ""
+        if head.presence:
+            if said not in ("", "yes"):
+                return Built([], "", "phrase-denied-answer")
+            presence = Presence(head.presence)
+        if rule == "scope-doubtful":
+            issue = "phrase-scope-doubtful"
+        if presence is Presence.ABSENT and any(q.axis not in ALSO_OF_ABSENT for q in qualifiers):
+            implied = {Qualifier(axis, value) for axis, value in head.qualifiers}
+            if head.denied == "absent":
+                qualifiers = [q for q in qualifiers if q not in implied]
+            if any(q.axis not in ALSO_OF_ABSENT for q in qualifiers):
+                presence, rule, issue = Presence.UNCERTAIN, "scope-doubtful", "phrase-denied-detail"
+        if len(signs) > 1 and presence is Presence.PRESENT and _either(phrase):
+            presence, rule = Presence.UNCERTAIN, "doubted"
+        _take(phrase)
+        entries = [
+            Entry(one.id, presence, qualifiers=_in_order([q for q in qualifiers if q.axis in one.qualifiers]))
+            for one in signs
+        ]
+        return Built(entries, rule, issue)
+
+    def _missing(self, phrase: Phrase, findings: list[FindingDefinition]) -> Built:
+        """`P2 absent`, `no a wave`: an answer of its own."""
+        if phrase.said == "no":
+            for one in findings:
+                if "absent" in self._known.answers(one):
+                    _take(phrase)
+                    return Built([Entry(one.id, answers=("absent",))], "answer")
+        if phrase.said == "maybe" and findings[0].kind == "choice":
+            return Built([], "", "phrase-uncertain-answer")
+        return Built([], "")
+
+
+class _Scan:
+    """Reads the values beside a name from left to right."""
+
+    def __init__(
+        self, findings: list[FindingDefinition], answers: dict[str, list[str]], qualifiers: list[Qualifier]
+    ) -> None:
+        self._findings = findings
+        self._answers = answers
+        self._qualifiers = qualifiers
+        self._where: Item | None = None
+        self._way: Item | None = None
+        self._way_used = False
+
+    def item(self, item: Item) -> None:
+        """Takes one item, if one of the findings has a place for it."""
+        plain = item.sense.plain
+        if item.grade is not None:
+            if self._takes("grade"):
+                self._qualifiers.append(Qualifier("grade", grade=item.grade))
+                item.used = True
+            return
+        if "manoeuvre" in plain and self._way is not None:
+            self._response(item)
+            return
+        if "way" in plain:
+            self.end()
+            self._way, self._way_used, self._where = item, False, None
+            return
+        if "where" in plain:
+            self._where = item
+            return
+        if item.sense.values:
+            self._value(item)
+
+    def end(self) -> None:
+        """A way without a manoeuvre: `unchanged` says something by itself."""
+        if self._way is not None and not self._way_used and self._way.plain("way") == "unchanged":
+            if self._takes("change"):
+                self._qualifiers.append(Qualifier("change", "unchanged"))
+                self._way.used = True
+        self._way = None
+
+    def _response(self, item: Item) -> None:
+        assert self._way is not None  # noqa: S101 - item() asks first
+        way = self._way.plain("way")
+        kind = "movement" if way in ("earlier", "later") else "response"
+        axis = f"{kind}.{item.plain('manoeuvre')}"
+        if self._takes(axis):
+            self._qualifiers.append(Qualifier(axis, way))
+            item.used = self._way.used = self._way_used = True
+
+    def _value(self, item: Item) -> None:
+        where = self._where.plain("where") if self._where is not None else ""
+        for axis, value in item.sense.values:
+            if where and axis == where and self._takes(axis):
+                self._qualifiers.append(Qualifier(axis, value))
+                item.used = True
+                if self._where is not None:
+                    self._where.used = True
+                return
+        if where:
+            self._where = None
+        for axis, value in item.sense.values:
+            owner = next((one for one in self._findings if one.answers == axis), None)
+            if owner is not None:
+                self._answers.setdefault(owner.id, []).append(value)
+                item.used = True
+                return
+        for axis, value in item.sense.values:
+            if self._is_plain(axis, value) and self._takes(axis):
+                self._qualifiers.append(Qualifier(axis, value))
+                item.used = True
+                return
+
+    def _is_plain(self, axis: str, value: str) -> bool:
+        """Radiation, the loudest place and a suspected lesion are only said after words that say so."""
+        return axis not in ("radiation", "loudest-site", "suspected-lesion") or value == "none"
+
+    def _takes(self, axis: str) -> bool:
+        return any(axis in one.qualifiers for one in self._findings)
+
+
+def _one_of(
+    signs: list[FindingDefinition], qualifiers: list[Qualifier], said: str
+) -> list[FindingDefinition]:
+    """`no click` denies every kind of click; a click that is there must be said to be of one kind."""
+    if said == "no" and not qualifiers:
+        return signs
+    fitting = [one for one in signs if {q.axis for q in qualifiers} <= one.qualifiers]
+    return fitting if len(fitting) == 1 else []
+
+
+def _take(phrase: Phrase) -> None:
+    """Marks the name and the cues as read."""
+    if phrase.anchor is not None:
+        phrase.anchor.used = True
+    dated = any(means in ("today", "no-today") for _, means, _ in phrase.cues())
+    for _, means, item in phrase.cues():
+        item.used = item.used or not (dated and means == "past")
+
+
+def _either(phrase: Phrase) -> bool:
+    return any(item.plain("link") in ("or", "vs", "slash") for item in phrase.items)
+
+
+def _measure(item: Item, finding: FindingDefinition) -> Measure | None:
+    """The number in the finding's unit; None where the unit is another's, or is missing and not customary."""
+    target = units.table().by_code[finding.unit]
+    if item.number is None:
+        return None
+    if item.unit is None:
+        if finding.unit not in _CUSTOMARY:
+            return None
+        return Measure(item.number, finding.unit, item.sign, item.high)
+    if item.unit.dimension != target.dimension:
+        return None
+    high = units.convert(item.high, item.unit, target) if item.high is not None else None
+    original = f"{item.number} {item.unit.printed}" if item.unit != target else ""
+    return Measure(units.convert(item.number, item.unit, target), finding.unit, item.sign, high, original)
+
+
+def _plausible(measure: Measure, finding: FindingDefinition) -> bool:
+    top = measure.high if measure.high is not None else measure.value
+    return (finding.low is None or measure.value >= finding.low) and (
+        finding.high is None or top <= finding.high
+    )
+
+
+def _in_order(qualifiers: list[Qualifier]) -> tuple[Qualifier, ...]:
+    return tuple(sorted(dict.fromkeys(qualifiers), key=lambda q: (q.axis, q.value)))
