@@ -57,8 +57,13 @@ def _wait(address: str, process: subprocess.Popen[bytes]) -> None:
 
 
 @pytest.fixture(scope="module")
-def site(root: Path, tmp_path_factory: pytest.TempPathFactory) -> Iterator[Site]:
-    """The service on a port of its own, with the example maps and an embedded database."""
+def site(
+    request: pytest.FixtureRequest, root: Path, tmp_path_factory: pytest.TempPathFactory
+) -> Iterator[Site]:
+    """The service on a port of its own, with the example maps and an embedded database.
+
+    A module may name further settings in `SETTINGS`.
+    """
     folder = tmp_path_factory.mktemp("site")
     shutil.copytree(root / "examples" / "informatician", folder / "maps")
     address = f"http://127.0.0.1:{(port := _free_port())}"
@@ -67,6 +72,7 @@ def site(root: Path, tmp_path_factory: pytest.TempPathFactory) -> Iterator[Site]
         "BATCH_WORKERS": "0", "DURABLE": "false",
     }  # fmt: skip
     environment = {k: v for k, v in os.environ.items() if not k.startswith("FHIRGALLOP_")}
+    settings |= getattr(request.module, "SETTINGS", {})
     environment |= {f"FHIRGALLOP_{name}": value for name, value in settings.items()}
     with (folder / "log.txt").open("wb") as log:
         process = subprocess.Popen(
