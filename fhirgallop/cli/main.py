@@ -19,6 +19,7 @@ from fhirgallop.cli import (
     draw,
     extract,
     maps,
+    read,
     review,
     rules,
     serve,
@@ -41,6 +42,7 @@ app.command("code")(code.command)
 app.command("backfill")(backfill.command)
 app.command("extract")(extract.command)
 app.command("validate")(validate.command)
+app.command("read")(read.command)
 app.command("review")(review.command)
 app.command("heart-cycle")(draw.command)
 app.command("demo")(demo.command)
