@@ -12,6 +12,7 @@ from fastapi import FastAPI, Request
 from fastapi.exceptions import RequestValidationError
 from starlette.exceptions import HTTPException
 from starlette.responses import Response
+from starlette.routing import Match
 
 from fhirgallop.cards.policy import Policy
 from fhirgallop.delivery.dispatch import open_dispatch
@@ -73,6 +74,7 @@ _ABOUT: Final = (
     "Turns a clinic's heart examinations into coded FHIR Observations by template maps. Support for clinical "
     "judgement, not a replacement for it. Every error is answered with an OperationOutcome."
 )
+_METHODS: Final = ("DELETE", "GET", "HEAD", "OPTIONS", "PATCH", "POST", "PUT")
 _CODES: Final = {404: "not-found", 405: "not-supported", 413: "too-long"}
 
 
@@ -202,7 +204,20 @@ async def _plain(request: Request, error: Exception) -> Response:
     said = text.get(error.status_code, "The request cannot be served.")
     code = _CODES.get(error.status_code, "processing")
     issue = Issue("error", code, f"http-{error.status_code}", said)
-    return _told(request, error.status_code, [issue], error.headers)
+    headers = {"Allow": _methods(request)} if error.status_code == 405 else error.headers
+    return _told(request, error.status_code, [issue], headers)
+
+
+def _methods(request: Request) -> str:
+    """What the address takes, by all of its routes (RFC 9110, 10.2.1); the framework looks at the first only."""
+    return ", ".join(
+        method
+        for method in _METHODS
+        if any(
+            route.matches({**request.scope, "method": method})[0] is Match.FULL
+            for route in request.app.routes
+        )
+    )
 
 
 def _told(
