@@ -42,7 +42,6 @@ def ack(message: bytes | str, issues: Sequence[Issue], *, control_id: str, now: 
     """
     parsed, _ = parse(message)
     marks = parsed.delimiters if parsed else STANDARD
-    encoding = marks.component + marks.repetition + marks.escape + marks.subcomponent + marks.truncation
     if has_errors(issues):
         refused = any(issue.rule.startswith(_REFUSED) for issue in issues if issue.is_error)
         code = "AR" if refused else "AE"
@@ -50,9 +49,14 @@ def ack(message: bytes | str, issues: Sequence[Issue], *, control_id: str, now: 
         code = "AA"
     header = parsed.segments[0] if parsed else None
     there = [header.field(number) if header else "" for number in range(19)]
+    encoding = marks.component + marks.repetition + marks.escape + marks.subcomponent
+    if parsed:
+        encoding += marks.truncation  # only what the sender declared: before 2.7 there is no such mark
+    trigger = parsed.component(there[9], 2) if parsed else ""
+    kind = ("ACK", escaped(trigger, marks), "ACK") if trigger else ("ACK",)
     lines = [
         ["MSH", encoding, there[5], there[6], there[3], there[4], now.strftime("%Y%m%d%H%M%S%z"), "",
-         marks.component.join(("ACK", "R01", "ACK")), escaped(control_id, marks), there[11] or "P",
+         marks.component.join(kind), escaped(control_id, marks), there[11] or "P",
          there[12] or "2.5.1", "", "", "", "", "", "UNICODE UTF-8"],
         ["MSA", code, there[10]],
         *(_error(issue, marks) for issue in ordered(issues)),

@@ -24,6 +24,17 @@ def test_a_good_message_is_accepted_and_sender_and_receiver_change_places(oru, m
     assert msa == ["MSA", "AA", "M-1"]
 
 
+def test_the_answer_names_the_event_that_it_answers(oru, moment):
+    other = answered(oru(MSH="MSH|^~\\&|||||20260314||ADT^A01^ADT_A01|M-1|P|2.5.1"), moment)
+    assert other[0][8] == "ACK^A01^ACK"
+
+
+def test_what_is_no_message_is_answered_without_event_and_with_the_marks_of_the_version_named(moment):
+    msh, msa, *_ = answered("hello", moment)
+    assert (msh[1], msh[8], msh[11]) == ("^~\\&", "ACK", "2.5.1")
+    assert msa == ["MSA", "AR", ""]
+
+
 def test_faults_in_the_data_are_an_application_error(oru, moment):
     segments = answered(oru("OBX|9|QQ|X||1||||||F"), moment)
     assert segments[1] == ["MSA", "AE", "M-1"]
