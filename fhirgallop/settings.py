@@ -4,10 +4,11 @@ from __future__ import annotations
 
 import json
 import os
-from collections.abc import Mapping
+import re
+from collections.abc import Iterator, Mapping
 from difflib import get_close_matches
 from pathlib import Path
-from typing import Final, Literal, Self
+from typing import Final, Literal, Self, get_origin
 from urllib.parse import urlsplit
 
 from pydantic import Field, ValidationError, ValidationInfo, field_validator, model_validator
@@ -19,6 +20,7 @@ from fhirgallop.errors import SettingsError
 
 PREFIX: Final = "FHIRGALLOP_"
 _FILE: Final = "_FILE"
+_DIGEST: Final = re.compile("[0-9a-f]{64}")
 # what settings are about, by the first of them
 _ABOUT: Final = {
     "host": "Service, storage and limits",
@@ -197,7 +199,6 @@ class Settings(BaseSettings):
     )
     admin_token: str = Field(
         "",
-        pattern=r"^([0-9a-f]{64})?$",
         description="SHA-256 (hexadecimal) of a token that opens what operators and informaticians use; "
         "`fhirgallop token` makes both.",
     )
@@ -345,6 +346,15 @@ class Settings(BaseSettings):
         "ready.",
     )
 
+    @field_validator("admin_token")
+    @classmethod
+    def _is_a_digest(cls, given: str) -> str:
+        if given and not _DIGEST.fullmatch(given):
+            raise ValueError(
+                "give the SHA-256 of the token, 64 hexadecimal digits; `fhirgallop token` makes both"
+            )
+        return given
+
     @field_validator("pages")
     @classmethod
     def _links_home(cls, pages: str, info: ValidationInfo) -> str:
@@ -391,8 +401,8 @@ def load(**given: object) -> Settings:
     chosen = {name: value for name, value in {**texts, **given}.items() if value is not None}
     try:
         settings = Settings(**chosen)  # type: ignore[arg-type]
-    except SourceError as error:
-        faults.append(str(error))
+    except SourceError:
+        faults += _no_json()
     except ValidationError as error:
         faults += [
             _fault(fault["loc"], fault["msg"])
@@ -401,6 +411,20 @@ def load(**given: object) -> Settings:
     if faults:
         raise SettingsError("; ".join(faults))
     return settings
+
+
+def _no_json() -> Iterator[str]:
+    """The lists and tables in the environment that are no JSON; the library names one, and no cure."""
+    for name, field in Settings.model_fields.items():
+        given = os.environ.get(f"{PREFIX}{name}".upper())
+        if given is None or get_origin(field.annotation) is None:
+            continue
+        try:
+            json.loads(given)
+        except ValueError:
+            yield f"{PREFIX}{name.upper()}: this is no JSON; write it like " + (
+                '{"name": ["value"]}' if get_origin(field.annotation) is Mapping else '["one", "another"]'
+            )
 
 
 def _texts() -> list[str]:

@@ -75,6 +75,21 @@ def test_a_secret_may_stand_in_a_file(monkeypatch: pytest.MonkeyPatch, tmp_path:
     assert "s3cret" not in repr(found) + str(found)
 
 
+@pytest.mark.parametrize(
+    ("name", "value", "cure"),
+    [("NAMES", "gallop.hush", r'write it like \["one", "another"\]'),
+     ("CDS_CLIENTS", "https://hush", r'write it like \{"name": \["value"\]\}'),
+     ("ADMIN_TOKEN", "hush", "fhirgallop token")],
+)  # fmt: skip
+def test_a_list_that_is_none_and_a_digest_that_is_none_are_told_with_their_cure(
+    monkeypatch: pytest.MonkeyPatch, name: str, value: str, cure: str
+) -> None:
+    monkeypatch.setenv(PREFIX + name, value)
+    with pytest.raises(SettingsError, match=f"^{PREFIX}{name}: .*{cure}") as caught:
+        load()
+    assert "hush" not in str(caught.value)
+
+
 def test_every_fault_is_told_at_once_and_no_value(monkeypatch: pytest.MonkeyPatch, tmp_path: Path) -> None:
     for name, value in {"PORT": "70000-hush", "EDITION": "R3-hush", "DATABSE": "hush", "MAX_BODY": "hush",
                         "ADDRESS_FILE": str(tmp_path / "nowhere"), "PAGES": "hush",
