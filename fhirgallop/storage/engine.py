@@ -23,6 +23,18 @@ _BUSY_SECONDS: Final = 10
 _TABLES_BUSY_SECONDS: Final = 3600
 # any number, the same in every version: who changes the tables of a PostgreSQL database holds this lock
 _TABLES_LOCK: Final = 7_401_962_538
+# what to do, by words of the drivers (PostgreSQL's library and SQLite, in English; else a general word)
+_CURES: Final = (
+    ("Connection refused", "nothing listens at that host and port: is the server up?"),
+    ("resolve host", "its host name is not known"),
+    ("authentication failed", "the server refuses that user or password"),
+    ("no password supplied", "the server wants a password in the address (see FHIRGALLOP_DATABASE_FILE)"),
+    ("pg_hba.conf", "the server's pg_hba.conf lets that user not in from here, or not without TLS"),
+    ('role "', "the server knows no such user, or does not permit it"),
+    ('database "', "the server has no such database: create it empty (createdb)"),
+    ("unable to open database file", "its folder is not there, or not writable for this user"),
+    ("file is not a database", "the file is something else; name another"),
+)
 
 
 def open_database(address: str, *, durable: bool = True) -> Engine:
@@ -202,7 +214,7 @@ def opening() -> Iterator[None]:
     except ModuleNotFoundError as error:
         raise SettingsError(f"that kind of database needs {error.name}, which is not installed") from None
     except SQLAlchemyError as error:
-        reason = type(getattr(error, "orig", None) or error).__name__
-        raise SettingsError(
-            f"the database cannot be opened ({reason}); check its address and rights"
-        ) from None
+        cause = getattr(error, "orig", None) or error
+        # never the driver's own words: parts of a misread address, and so of its password, may be among them
+        cure = next((cure for words, cure in _CURES if words in str(cause)), "check its address and rights")
+        raise SettingsError(f"the database cannot be opened ({type(cause).__name__}); {cure}") from None
