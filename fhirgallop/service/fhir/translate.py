@@ -88,24 +88,24 @@ def sources(given: Given, edition: Edition) -> list[Mapping[str, Any]]:
 
 def translate(
     maps: Sequence[Mapping[str, Any]], codings: Iterable[Mapping[str, Any]], given: Given
-) -> tuple[list[Match], bool]:
-    """The matches, and whether some were left out because of what they depend on."""
+) -> tuple[list[Match], list[str]]:
+    """The matches, and what those left out depend on: the element (R4) or attribute (R5) to send."""
     met = dict(_dependencies(given))
     wanted = text(given, "targetsystem", "targetSystem")
     found: list[Match] = []
-    left_out = False
+    left_out: dict[str, None] = {}
     for coding in codings:
         for concept_map in maps:
             for group in _objects(concept_map.get("group")):
                 if group.get("source") != coding["system"] or (wanted and group.get("target") != wanted):
                     continue
                 targets, unmet = _of_group(group, str(coding["code"]), met)
-                left_out = left_out or unmet
+                left_out.update(dict.fromkeys(unmet))
                 found += [Match(concept_map, group, target) for target in targets]
-    return found[:_MOST], left_out
+    return found[:_MOST], list(left_out)
 
 
-def told(matches: Sequence[Match], edition: Edition, *, left_out: bool) -> list[Part]:
+def told(matches: Sequence[Match], edition: Edition, *, left_out: Sequence[str]) -> list[Part]:
     """The answer: result, message, and every match with what it hangs on and says beside."""
     usable = any(match.relation not in MATCHLESS and "code" in match.target for match in matches)
     parts: list[Part] = [("result", "boolean", usable)]
@@ -114,28 +114,30 @@ def told(matches: Sequence[Match], edition: Edition, *, left_out: bool) -> list[
         if matches:
             said = "The map says that there is no match."
         if left_out:
-            said = "The meaning hangs on more than the code; send it as dependency."
+            form = "attribute and value" if edition == "R5" else "element and concept"
+            said = "The meaning hangs on more than the code; send it as dependency "
+            said += f"({form}): {', '.join(left_out)}."
         parts.append(("message", "string", said))
     return [*parts, *(("match", "part", list(_match(match, edition))) for match in matches)]
 
 
 def _of_group(
     group: Mapping[str, Any], code: str, met: Mapping[str, set[str]]
-) -> tuple[list[Mapping[str, Any]], bool]:
+) -> tuple[list[Mapping[str, Any]], list[str]]:
     """The targets of a code; the group's rule for what is not mapped only where the code is not in it."""
     elements = [e for e in _objects(group.get("element")) if e.get("code") == code]
     if not elements:
-        return list(_unmapped(group, code)), False
+        return list(_unmapped(group, code)), []
     found: list[Mapping[str, Any]] = []
-    unmet = False
+    unmet: list[str] = []
     for element in elements:
         if element.get("noMap"):
             found.append({"relationship": "not-related-to"})
         for target in _objects(element.get("target")):
-            if all(_holds(depends, met) for depends in _objects(target.get("dependsOn"))):
+            missing = [_named(one) for one in _objects(target.get("dependsOn")) if not _holds(one, met)]
+            unmet += missing
+            if not missing:
                 found.append(target)
-            else:
-                unmet = True
     return found, unmet
 
 
@@ -152,13 +154,16 @@ def _unmapped(group: Mapping[str, Any], code: str) -> Iterator[Mapping[str, Any]
 
 
 def _holds(depends: Mapping[str, Any], met: Mapping[str, set[str]]) -> bool:
-    name = str(depends.get("property") or depends.get("attribute") or "")
     value = depends.get("value")
     if value is None:
         value = next((v for key, v in depends.items() if key.startswith("value")), None)
     if isinstance(value, dict):
         value = value.get("code")
-    return value in met.get(name, ())
+    return value in met.get(_named(depends), ())
+
+
+def _named(depends: Mapping[str, Any]) -> str:
+    return str(depends.get("property") or depends.get("attribute") or "")
 
 
 def _dependencies(given: Given) -> Iterator[tuple[str, set[str]]]:
