@@ -9,6 +9,7 @@ from __future__ import annotations
 from collections.abc import Iterator, Sequence
 from dataclasses import dataclass
 from functools import lru_cache
+from itertools import chain
 from typing import Any, Final, NamedTuple, TypeVar
 
 from sqlalchemy import Connection, Dialect, and_, insert, or_, select, update
@@ -123,8 +124,13 @@ def add_versions(
 def _insert(connection: Connection, rows: list[tuple[Any, ...]]) -> None:
     """Adds rows, past what prepares each value for the driver: ours are plain, and there are many."""
     statement, named = _statement(connection.dialect)
-    sent = [dict(zip(_WRITTEN, row, strict=True)) for row in rows] if named else rows
-    connection.exec_driver_sql(statement, sent)
+    if named:
+        connection.exec_driver_sql(statement, [dict(zip(_WRITTEN, row, strict=True)) for row in rows])
+        return
+    # all in one statement: after each, SQLite's driver has to wait for the interpreter that others compute in
+    one_more = f", ({', '.join('?' * len(_WRITTEN))})"
+    for some in _slices(rows):
+        connection.exec_driver_sql(statement + one_more * (len(some) - 1), tuple(chain.from_iterable(some)))
 
 
 @lru_cache(maxsize=8)

@@ -11,6 +11,7 @@ from sqlalchemy import Connection, Engine, bindparam, insert, select, union_all
 from sqlalchemy.exc import IntegrityError, SQLAlchemyError
 
 from fhirgallop.storage.tables import submissions
+from fhirgallop.storage.writing import Act, Writer
 
 
 class StorageError(Exception):
@@ -90,6 +91,7 @@ class Submissions:
 
     def __init__(self, engine: Engine) -> None:
         self._engine = engine
+        self._writer = Writer(engine)
 
     def latest(self, exam: str, edition: str, *, snomed: bool) -> Submission | None:
         """The newest version of an examination, as it is written in that edition.
@@ -138,7 +140,8 @@ class Submissions:
         Args:
             submission: the version.
             also: called in order after the submission's row is written, on the same connection, each with
-                the row's id: coded resources, deliveries, the answer by the sender's key, the audit record.
+                the row's id: coded resources, deliveries, the answer by the sender's key, the audit record;
+                perhaps by another thread, and once more (see Writer.keep).
 
         Returns:
             False when another request was first, with this version or with anything that `also` adds;
@@ -148,14 +151,13 @@ class Submissions:
             StorageError: the database failed; nothing was kept.
         """
         values = {name: getattr(submission, name) for name in _NAMES if name != "id"}
-        try:
-            with told(), self._engine.begin() as connection:
-                row = connection.execute(_ADD, values).inserted_primary_key
-                for keep in also:
-                    keep(connection, row[0] if row else 0)
-        except IntegrityError:
-            return False
-        return True
+
+        def act(connection: Connection) -> None:
+            row = connection.execute(_ADD, values).inserted_primary_key
+            for keep in also:
+                keep(connection, row[0] if row else 0)
+
+        return self._kept(act)
 
     def beside(self, row: int, *also: Also) -> bool:
         """Keeps what belongs to a version that is stored already, or to none (0), in one transaction.
@@ -166,10 +168,17 @@ class Submissions:
         Raises:
             StorageError: the database failed; nothing was kept.
         """
+
+        def act(connection: Connection) -> None:
+            for keep in also:
+                keep(connection, row)
+
+        return self._kept(act)
+
+    def _kept(self, act: Act) -> bool:
         try:
-            with told(), self._engine.begin() as connection:
-                for keep in also:
-                    keep(connection, row)
+            with told():
+                self._writer.keep(act)
         except IntegrityError:
             return False
         return True
