@@ -7,7 +7,7 @@ from typing import Final
 
 from fhirgallop.exam import catalogue
 from fhirgallop.mapping.suggest import RECORD
-from fhirgallop.service.desk import changes
+from fhirgallop.service.desk import changes, record_changes
 from fhirgallop.service.desk.brought import FieldSeen
 from fhirgallop.service.desk.forms import Form, word
 from fhirgallop.service.desk.uses import axis_label, label
@@ -87,8 +87,8 @@ def _target(bench: Bench, field: FieldSeen, target: str, side: str) -> Done:
             raise AskedError("Choose a part of the record from the list.")
         draft = bench.draft
         try:
-            made = changes.put_record(text, field, axis, address=draft.address, zone=draft.zone)
-        except changes.TakenError:
+            made = record_changes.put_record(text, field, axis, address=draft.address, zone=draft.zone)
+        except record_changes.TakenError:
             raise AskedError(f"Another field is {PARTS[axis]} already; take that one back first.") from None
         return Done(made, f"{name}: {PARTS[axis]}", go_on=True)
     known = catalogue.load()

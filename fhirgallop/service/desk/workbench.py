@@ -17,7 +17,7 @@ from fhirgallop.service.desk.changes import is_pair, meanings_of, target_words
 from fhirgallop.service.desk.uses import Use, Uses, axis_label, label, uses
 from fhirgallop.storage.drafts import Draft
 
-PAGE: Final = 200  # fields shown at once
+PAGE: Final = 100  # fields shown at once
 _WORDINGS: Final = 60
 PARTS: Final[Mapping[str, str]] = {
     "patient": "the patient's number",
