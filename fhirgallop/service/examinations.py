@@ -6,6 +6,7 @@ import hashlib
 from collections.abc import Callable, Sequence
 from dataclasses import dataclass, replace
 from datetime import datetime
+from functools import partial
 from typing import Any, Final
 
 from sqlalchemy import Connection
@@ -39,6 +40,13 @@ _OTHER_PATIENT: Final = Issue(
     "exam-number-other-patient",
     "An examination of this number stands under another patient, and stays as it is. If the patient was "
     "corrected, send the earlier one again, under its own patient, as entered in error.",
+)
+_CHANGED_ALONE: Final = Issue(
+    "warning",
+    "conflict",
+    "exam-replaces-other-change",
+    "Something of this examination was changed here over FHIR since it was sent, and what is sent now takes "
+    "its place. Look at the histories of its resources; enter the change in the record too if it is to stay.",
 )
 
 
@@ -146,6 +154,8 @@ class Examinations:
             if meant in hashes:
                 result = _with(result, _SEEN_BEFORE)
             written = coded(bundle, wish.edition)
+            if before and self._store.ask(partial(resources.changed_alone, versions=written.versions)):
+                result = _with(result, _CHANGED_ALONE)
             row = Submission(
                 identity, wish.edition, wish.snomed, before.version + 1 if before else 1,
                 wish.template.name, wish.template.version, meant, patient, instant(now), written.text, number,

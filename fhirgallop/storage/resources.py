@@ -121,6 +121,13 @@ def add_versions(
     return written
 
 
+def changed_alone(connection: Connection, versions: Sequence[NewVersion]) -> bool:
+    """Whether these versions take the place of one that came by itself, and not with its examination."""
+    before = _current(connection, versions)
+    olds = ((before.get((new.edition, new.type, new.fhir_id)), new) for new in versions)
+    return any(old is not None and old.submission is None and old.body != new.body for old, new in olds)
+
+
 def _insert(connection: Connection, rows: list[tuple[Any, ...]]) -> None:
     """Adds rows, past what prepares each value for the driver: ours are plain, and there are many."""
     statement, named = _statement(connection.dialect)
@@ -142,7 +149,7 @@ def _statement(dialect: Dialect) -> tuple[str, bool]:
 
 def _current(connection: Connection, versions: Sequence[NewVersion]) -> dict[tuple[str, str, str], Any]:
     columns = (resources.c[name] for name in
-               ("id", "edition", "type", "fhir_id", "version", "updated", "body"))  # fmt: skip
+               ("id", "edition", "type", "fhir_id", "version", "updated", "submission", "body"))  # fmt: skip
     query = select(*columns).where(resources.c.current)
     by_kind: dict[tuple[str, str], list[str]] = {}
     for new in versions:

@@ -134,6 +134,15 @@ class Submissions:
             found: bytes | None = connection.scalar(query)
         return found
 
+    def ask(self, question: Callable[[Connection], bool]) -> bool:
+        """What the database says to a question about what is kept beside the versions.
+
+        Raises:
+            StorageError: the database failed.
+        """
+        with told(), self._engine.connect() as connection:
+            return question(connection)
+
     def add(self, submission: Submission, *also: Also) -> bool:
         """Stores one version, and what is to be kept with it, in one transaction.
 

@@ -236,3 +236,19 @@ def test_the_audit_trail_says_what_was_done(application: FastAPI, client: Any, e
     told = [(event["action"], event["outcome"]) for event in events]
     assert told == [("C", "0"), ("R", "0"), ("U", "0"), ("C", "4"), ("U", "0"), ("C", "4")]
     assert all("urn:uuid:" in json.dumps(event["entity"]) for event in (events[0], events[2]))
+
+
+def test_a_change_over_fhir_that_a_later_record_replaces_is_told(client: Any, example: Any) -> None:
+    record = example()
+    address = named(client.post(WHERE, json=record).json()["bundle"], "Heart rate")
+    pulse = client.get(address).json()
+    pulse["status"], pulse["valueQuantity"]["value"] = "corrected", 99
+    fhir = {"Content-Type": "application/fhir+json"}
+    assert client.put(address, json=pulse, headers=fhir).status_code == 200
+    assert "exam-replaces-other-change" not in rules(client.post(WHERE, json=record))  # nothing was replaced
+    assert client.get(address).json()["valueQuantity"]["value"] == 99
+    record["vitals"]["temp"] = "37,1"
+    assert "exam-replaces-other-change" in rules(client.post(WHERE, json=record))
+    assert [version for version, _ in history(client, address)] == ["3", "2", "1"]
+    record["vitals"]["temp"] = "37,2"
+    assert "exam-replaces-other-change" not in rules(client.post(WHERE, json=record))
