@@ -137,7 +137,7 @@ def _read(
     since: Midway,
 ) -> Iterator[Read]:
     def convert(value: Any, source: str, bounds: Limits) -> Reading:
-        if isinstance(value, Mapping) and value.get("resourceType") == "QuestionnaireResponse":
+        if isinstance(value, Mapping) and isinstance(value.get("resourceType"), str):
             return read_response(value, questionnaire=questionnaire, source=source, limits=bounds)
         return records_of(value, source, bounds)
 

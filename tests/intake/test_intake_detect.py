@@ -136,3 +136,10 @@ def test_a_json_list_may_be_larger_than_one_record():
 def test_a_record_of_a_json_list_knows_its_place():
     reads = open_records(b'[{"a": 1}, 5, {"a": 2}]', name="e.json")
     assert [read.source for read in reads] == ["e.json[0]", "e.json", "e.json[2]"]
+
+
+def test_another_fhir_resource_is_told_once_instead_of_read_as_a_form():
+    patient = b'{"resourceType": "Patient", "name": [{"family": "Example"}]}'
+    for kind in ("application/fhir+json", "application/json"):
+        (read,) = open_records(patient, content_type=kind)
+        assert [issue.rule for issue in read.issues] == ["form-not-a-response"]
