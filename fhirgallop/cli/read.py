@@ -32,9 +32,9 @@ def command(
 ) -> None:
     """Read one line of a cardiovascular examination into findings.
 
-    Words that went into a finding are underlined; the rest is listed. A reading is a suggestion for a person to
-    check. Exit codes: 0 all words understood; 1 words left over, or doubt; 2 the call was wrong; 4 no such
-    language.
+    Words that went into a finding are underlined; the rest is listed. A reading is a suggestion for a person
+    to check. Exit codes: 0 all words understood; 1 words left over, or doubt; 2 the call was wrong; 4 no
+    such language.
     """
     from fhirgallop.exam import catalogue  # noqa: PLC0415 - heavy; --help stays quick
     from fhirgallop.phrases import reader  # noqa: PLC0415

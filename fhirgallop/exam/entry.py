@@ -64,6 +64,8 @@ class Entry:
         said: the local wording that was chosen, where the map names a local code system.
         apart: of a box that may hold several answers, each answer as an entry of its own; it is coded and
             known again by its answer, also where there is only one.
+        words: the words of a line of text that it was read from; empty for a box.
+        preliminary: read from a line of text, and the map says that such a reading waits for a person.
     """
 
     finding: str
@@ -80,6 +82,8 @@ class Entry:
     fields: tuple[str, ...] = ()
     said: str = ""
     apart: tuple[Entry, ...] = ()
+    words: str = ""
+    preliminary: bool = False
 
     def by_answer(self) -> tuple[Entry, ...]:
         """What is coded: each of several answers by itself (FHIR: one value, one Observation)."""

@@ -12,6 +12,7 @@ from fhirgallop.exam.exam import Exam
 from fhirgallop.intake.record import LocalRecord
 from fhirgallop.mapping.compiled import reading_of
 from fhirgallop.mapping.conditions import only_tested
+from fhirgallop.mapping.line_and_boxes import side_by_side
 from fhirgallop.mapping.marks import own_notes
 from fhirgallop.mapping.preparation import Tools
 from fhirgallop.mapping.run import Run, UnknownValue, is_plain
@@ -52,6 +53,7 @@ class CompiledMap:
 
     def __init__(self, template: TemplateMap, catalogue: Catalogue) -> None:
         self.template = template
+        self._catalogue = catalogue
         tools = Tools.of(template, catalogue, units.table())
         self.blanks = tools.blanks
         self._record = tools.record
@@ -88,6 +90,7 @@ class CompiledMap:
         status, encounter, examiner = reader.status(run), reader.encounter(run), reader.examiner(run)
         for reading in self._readings:
             reading(run)
+        side_by_side(run, self._catalogue)
         self._only_tested(run)
         unread = self._unread(run, strangers)
         exam = None

@@ -18,6 +18,7 @@ from fhirgallop.mapping.preparation import TAKEN_OUT, Tools, when_blank
 from fhirgallop.mapping.run import LineReading, Run, Test, is_plain
 from fhirgallop.mapping.template_map import Line
 from fhirgallop.mapping.wordings import words_of
+from fhirgallop.mapping.words_line import WordsLine
 
 
 def reading_of(line: Line, tools: Tools) -> LineReading:
@@ -25,6 +26,8 @@ def reading_of(line: Line, tools: Tools) -> LineReading:
     test = test_of(line.when, tools.blanks) if line.when else None
     if line.named:
         return _guarded(NamingLine(line, tools).read, test)
+    if line.words:
+        return _guarded(WordsLine(line, line.words, tools).read, test)
     if not line.finding:
         return _guarded(_remark(line, tools), test)
     return _guarded(_FindingLine(line, tools).reading(), test)

@@ -190,6 +190,20 @@ _NAMED = Group(
         ),
     ),
 )
+_WORDS = Group(
+    "words",
+    "A box that holds a line of text, such as 'RRR, no m/r/g': its findings are read from the words.",
+    (
+        Key("language", Word("Language of the wordings, such as en.", pattern="^[a-z]{2}$"), required=True),
+        Key(
+            "status",
+            Word(
+                "How far a finding that was read has got; as the examination's where left out.",
+                words=("preliminary",),
+            ),
+        ),
+    ),
+)
 _ZONE = Key("zone", Word("Z, an offset such as +01:00, or a name such as Europe/Vienna."))
 _FORMAT = Key("format", Word("Written form such as DD.MM.YYYY hh:mm; ISO 8601 where left out."))
 _LINE_TIME = Group(
@@ -200,7 +214,8 @@ _LINE_TIME = Group(
 )
 LINE: Final = Group(
     "line",
-    "What one box, or one constant, says of one finding; or a box that names several; or a remark.",
+    "What one box, or one constant, says of one finding; or a box that names several; or a line of "
+    "text; or a remark.",
     (
         Key("finding", Word("Finding id of the catalogue, such as heart-sound.s4.")),
         Key(
@@ -221,12 +236,13 @@ LINE: Final = Group(
         Key("number", _NUMBER),
         Key("text", _YES),
         Key("findings", _NAMED),
+        Key("words", _WORDS),
         Key("qualifiers", TableOf(_QUALIFIER, "Qualifiers by axis.")),
         Key("note", Word("Field whose words travel with the finding; alone, with the whole examination.")),
         Key("time", _LINE_TIME),
         Key("blank-means", _BLANK),
     ),
-    one_of=("finding", "findings", "note"),
+    one_of=("finding", "findings", "words", "note"),
 )
 
 _PARTY = Group(

@@ -6,6 +6,7 @@ from collections.abc import Mapping
 from dataclasses import dataclass
 from typing import Final
 
+from fhirgallop import phrases
 from fhirgallop.codes.units import UnitTable
 from fhirgallop.exam.catalogue import Catalogue, FindingDefinition
 from fhirgallop.mapping.document import Items, Node, Pairs, Scalar, clip
@@ -24,6 +25,7 @@ from fhirgallop.mapping.template_map import (
     Not,
     NumberForm,
     QualifierSource,
+    WordsForm,
 )
 
 IN_VALUE: Final = "in-value"
@@ -79,6 +81,8 @@ class LineReader:
         """One line, or None where too much of it is wrong."""
         if node.get("findings"):
             return self._naming(node)
+        if node.get("words"):
+            return self._in_words(node)
         if node.get("finding"):
             return self._about_finding(node)
         return self._remark(node) if node.get("note") else None
@@ -86,6 +90,24 @@ class LineReader:
     def _remark(self, node: Pairs) -> Line:
         self._only(node, "a remark of the whole examination", {"note", "when", "section"})
         return Line(node.line, note=text(node, "note"), section=self._section(node), when=self._when(node))
+
+    def _in_words(self, node: Pairs) -> Line | None:
+        self._only(node, "a box that holds a line of text", {"field", "words", "section", "when"})
+        group, field = node.get("words"), text(node, "field")
+        if not isinstance(group, Pairs) or node.refused:
+            return None
+        if not field:
+            self._missing(node, "field", "a line of text needs the field that holds it")
+        language = text(group, "language")
+        if language not in phrases.languages():
+            known = ", ".join(phrases.languages())
+            self._faults.add(
+                group.line,
+                "map-unknown-language",
+                f"There are no wordings in this language; write one of {known}.",
+            )
+        form = WordsForm(language, text(group, "status") == "preliminary")
+        return Line(node.line, section=self._section(node), field=field, when=self._when(node), words=form)
 
     def _naming(self, node: Pairs) -> Line | None:
         self._only(

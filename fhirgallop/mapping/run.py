@@ -27,6 +27,7 @@ class Run:
         "entries",
         "fields",
         "issues",
+        "lines",
         "moment",
         "noted",
         "notes",
@@ -44,6 +45,8 @@ class Run:
         self.issues: list[Issue] = []
         self.unknown: list[UnknownValue] = []
         self.notes: list[str] = []
+        # Entries read from lines of text, until they have been held against the boxes.
+        self.lines: list[Entry] = []
         self.moment: Moment | None = None
         # Whether fields that the map does not know are filled in: a missing box may be one of them.
         self.strangers = False
@@ -81,6 +84,11 @@ class Run:
         """Notes a value that no line knows."""
         self.issue(severity, "code-invalid", "map-value-unknown", text, name)
         self.unknown.append(UnknownValue(name, words_of(value)))
+
+    def unread_words(self, text: str, name: str, words: str) -> None:
+        """Notes words of a line of text from which nothing was read."""
+        self.issue("warning", "incomplete", "map-words-unread", text, name)
+        self.unknown.append(UnknownValue(name, words))
 
 
 LineReading = Callable[[Run], None]

@@ -120,6 +120,14 @@ class QualifierSource:
 
 
 @dataclass(frozen=True, slots=True)
+class WordsForm:
+    """How a line of text is read: language of its wordings, and whether what is read stays preliminary."""
+
+    language: str
+    preliminary: bool = False
+
+
+@dataclass(frozen=True, slots=True)
 class Line:
     """One line of the map: what one box, or one constant, says of one finding.
 
@@ -132,6 +140,7 @@ class Line:
         named: the findings that one box may name (`choice` meanings with `finding`), and `unlisted` what a
             filled box says of those it does not name.
         blank_means: what a blank box means here, worked out from line, section and template.
+        words: the box holds a line of text; its findings are read from the words.
         note: field whose words travel with the finding, or, without a finding, with the examination.
         time: where the moment stands to which the box refers, if it is not the examination's.
     """
@@ -152,6 +161,7 @@ class Line:
     when: Condition | None = None
     blank_means: BlankMeans = "not-recorded"
     time: TimeSource | None = None
+    words: WordsForm | None = None
 
     def describing(self) -> Iterator[str]:
         """Fields that describe the finding but do not say whether it is there."""

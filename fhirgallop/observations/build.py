@@ -7,10 +7,11 @@ or a number is the value of what was asked. What means nothing alone (a murmur's
 from __future__ import annotations
 
 from collections.abc import Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from functools import cache
-from typing import Any
+from typing import Any, Final
 
+from fhirgallop.codes import systems
 from fhirgallop.exam.catalogue import Catalogue, load
 from fhirgallop.exam.entry import Entry, Measure, Qualifier
 from fhirgallop.exam.exam import Exam, Party
@@ -19,6 +20,12 @@ from fhirgallop.exam.presence import Presence
 from fhirgallop.observations import absence, text
 from fhirgallop.observations.fragments import SITE_AXIS, Fragments, Frame
 from fhirgallop.observations.identity import Identities, identifier
+
+# How the entry came to be known: read from a line of text, where others come from a box.
+CAPTURE: Final = systems.BASE + "/CodeSystem/capture"
+_READ_FROM_WORDS: Final = {
+    "system": CAPTURE, "code": "read-from-words", "display": "Read from a line of text",
+}  # fmt: skip
 
 
 def reference(resource_type: str, party: Party) -> dict[str, Any]:
@@ -128,12 +135,13 @@ class ObservationBuilder:
         if shared.local_system and entry.fields:
             local = {"system": shared.local_system, "code": text.code(entry.fields[0])}
             code = {"coding": [*code["coding"], local], "text": code["text"]}
+        status = "preliminary" if entry.preliminary and shared.status == "final" else shared.status
         resource: dict[str, Any] = {
             "resourceType": "Observation",
-            "meta": frame.meta,
+            "meta": {**frame.meta, "tag": [_READ_FROM_WORDS]} if entry.words else frame.meta,
             "text": None,
             "identifier": identifier(urn),
-            "status": "entered-in-error" if entry.withdrawn else shared.status,
+            "status": "entered-in-error" if entry.withdrawn else status,
             "category": frame.category,
             "code": code,
             "subject": shared.subject,
@@ -183,7 +191,7 @@ class ObservationBuilder:
         """One Observation whose components are the parts of a panel (blood pressure)."""
         # A part that was taken back alone leaves the panel; the panel is taken back with its last part.
         entries = [entry for entry in entries if not entry.withdrawn] or entries
-        resource = self._head(frame, entries[0], shared, urn)
+        resource = self._head(frame, _whole(entries), shared, urn)
         components: list[dict[str, Any]] = []
         words: list[str] = []
         notes: list[dict[str, str]] = []
@@ -203,13 +211,19 @@ class ObservationBuilder:
             components.append(component)
             words.append(said)
         if notes:
-            resource["note"] = notes
+            resource["note"] = [note for n, note in enumerate(notes) if note not in notes[:n]]
         if frame.method:
             resource["method"] = frame.method
         resource["component"] = components
         withdrawn = resource["status"] == "entered-in-error"
         resource["text"] = text.narrative(f"{frame.label} ({'; '.join(words)})", withdrawn=withdrawn)
         return resource
+
+
+def _whole(entries: Sequence[Entry]) -> Entry:
+    """What holds of a panel as a whole: it was read from words as soon as one part was."""
+    read = next((entry for entry in entries if entry.words), None)
+    return replace(entries[0], words=read.words, preliminary=read.preliminary) if read else entries[0]
 
 
 def _site_apart(entry: Entry, frame: Frame) -> tuple[Sequence[Qualifier], str]:

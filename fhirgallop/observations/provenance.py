@@ -51,6 +51,10 @@ def provenance(
             "display": f"template map {exam.map.name}, version {exam.map.version}",
         }
         entities.append({"role": "source", "what": what})
+    if any(entry.words for entry in exam.entries):
+        entities.append(
+            {"role": "source", "what": {"display": "line of text in that record, read by wordings"}}
+        )
     found: dict[str, Any] = {
         "resourceType": "Provenance",
         "meta": {

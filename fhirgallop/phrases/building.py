@@ -12,7 +12,7 @@ from fhirgallop.exam.entry import Entry, Measure, Qualifier
 from fhirgallop.exam.presence import Presence
 from fhirgallop.phrases.clauses import Phrase
 from fhirgallop.phrases.items import Item
-from fhirgallop.phrases.vocabulary import Vocabulary
+from fhirgallop.phrases.vocabulary import Head, Vocabulary
 
 PRESENCE: Final = {
     "": Presence.PRESENT,
@@ -245,18 +245,15 @@ class Builder:
                 return Built([], "", "phrase-which")
         elif len(head.findings) > 1:
             signs = signs[:1]
-        presence, rule, issue = PRESENCE[said], phrase.rule or "said", ""
-        if head.presence:
-            if said not in ("", "yes"):
-                return Built([], "", "phrase-denied-answer")
-            presence = Presence(head.presence)
+        if head.presence and said not in ("", "yes"):
+            return Built([], "", "phrase-denied-answer")
+        presence = Presence(head.presence) if head.presence else PRESENCE[said]
+        rule, issue = phrase.rule or "said", ""
         if rule == "scope-doubtful":
             issue = "phrase-scope-doubtful"
-        if presence is Presence.ABSENT and any(q.axis not in ALSO_OF_ABSENT for q in qualifiers):
-            implied = {Qualifier(axis, value) for axis, value in head.qualifiers}
-            if head.denied == "absent":
-                qualifiers = [q for q in qualifiers if q not in implied]
-            if any(q.axis not in ALSO_OF_ABSENT for q in qualifiers):
+        if presence is Presence.ABSENT:
+            qualifiers = _of_absent(head, qualifiers)
+            if _detailed(qualifiers):
                 presence, rule, issue = Presence.UNCERTAIN, "scope-doubtful", "phrase-denied-detail"
         if len(signs) > 1 and presence is Presence.PRESENT and _either(phrase):
             presence, rule = Presence.UNCERTAIN, "doubted"
@@ -315,11 +312,12 @@ class _Scan:
 
     def end(self) -> None:
         """A way without a manoeuvre: `unchanged` says something by itself."""
-        if self._way is not None and not self._way_used and self._way.plain("way") == "unchanged":
-            if self._takes("change"):
-                self._qualifiers.append(Qualifier("change", "unchanged"))
-                self._way.used = True
+        way = self._way
         self._way = None
+        if way is None or self._way_used or way.plain("way") != "unchanged" or not self._takes("change"):
+            return
+        self._qualifiers.append(Qualifier("change", "unchanged"))
+        way.used = True
 
     def _response(self, item: Item) -> None:
         assert self._way is not None  # noqa: S101 - item() asks first
@@ -359,6 +357,18 @@ class _Scan:
 
     def _takes(self, axis: str) -> bool:
         return any(axis in one.qualifiers for one in self._findings)
+
+
+def _of_absent(head: Head, qualifiers: list[Qualifier]) -> list[Qualifier]:
+    """`no ankle oedema` denies oedema there: what the wording implies is then not a detail."""
+    if head.denied != "absent":
+        return qualifiers
+    implied = {Qualifier(axis, value) for axis, value in head.qualifiers}
+    return [qualifier for qualifier in qualifiers if qualifier not in implied]
+
+
+def _detailed(qualifiers: list[Qualifier]) -> bool:
+    return any(qualifier.axis not in ALSO_OF_ABSENT for qualifier in qualifiers)
 
 
 def _one_of(

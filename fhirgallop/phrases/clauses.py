@@ -1,12 +1,13 @@
 """Items to phrases: a phrase is one finding's name with what stands beside it.
 
-A line falls into clauses (full stop, semicolon, `but`), a clause into segments (comma), a segment into phrases:
-where two names stand in one segment, it is cut at the link between them, or, without one, where the words of the
-first end and those of the second begin.
+A line falls into clauses (full stop, semicolon, `but`), a clause into segments (comma), a segment into
+phrases: where two names stand in one segment, it is cut at the link between them, or, without one, where the
+words of the first end and those of the second begin.
 """
 
 from __future__ import annotations
 
+import itertools
 from collections.abc import Iterable
 from typing import Final
 
@@ -45,7 +46,7 @@ def clauses(found: list[Item], cut: list[Token]) -> list[list[Phrase]]:
     clause: list[list[Item]] = [[]]
     for item in found:
         sign = cut[item.first].word
-        if sign in _STOPS and item.first == item.last or item.plain("stop"):
+        if (sign in _STOPS and item.first == item.last) or item.plain("stop"):
             split.append(_phrases(clause))
             clause = [[]]
         elif sign == "," and item.first == item.last:
@@ -136,7 +137,7 @@ def _carry_over(split: list[list[Phrase]]) -> None:
 
 
 def _heads(segment: list[Item], before: list[Phrase]) -> list[int]:
-    """Places of the names in a segment; words that may also be values are names only where no name takes them."""
+    """Places of the names in a segment; what may also be a value is a name only where no name takes it."""
     pure = [place for place, item in enumerate(segment) if item.sense.heads and not item.sense.values]
     named = [segment[place].sense.heads[0] for place in pure]
     places = list(pure)
@@ -173,7 +174,7 @@ def _is_value(item: Item, segment: list[Item], named: list[Head], before: list[P
 def _cut(segment: list[Item], heads: list[int]) -> list[Phrase]:
     found: list[Phrase] = []
     start, link = 0, ""
-    for here, following in zip(heads, heads[1:], strict=False):
+    for here, following in itertools.pairwise(heads):
         end, begin, next_link = _border(segment, start, here, following)
         found.append(Phrase(link, segment[start:end], segment[here]))
         start, link = begin, next_link

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import itertools
 from decimal import Decimal
 from typing import Final
 
@@ -9,7 +10,7 @@ from fhirgallop.codes import units
 from fhirgallop.codes.units import Unit
 from fhirgallop.exam.entry import Grade
 from fhirgallop.phrases.tokens import Token, is_hyphen
-from fhirgallop.phrases.vocabulary import Head, Sense, Vocabulary
+from fhirgallop.phrases.vocabulary import Entries, Head, Sense, Vocabulary
 
 _ROMAN: Final = {"i": 1, "ii": 2, "iii": 3, "iv": 4, "v": 5, "vi": 6}
 _SCALES: Final = {"6": 6, "vi": 6, "4": 4, "iv": 4}
@@ -56,17 +57,9 @@ def items(text: str, cut: list[Token], vocabulary: Vocabulary) -> list[Item]:
     cut[:] = kept
     while place < count:
         word = kept[place].word
-        best = -1
-        for rest, sense in entries.get(word, ()):
-            size = len(rest)
-            if not size:
-                best = 0
-                break
-            if all(place + 1 + n < count and kept[place + 1 + n].word == one for n, one in enumerate(rest)):
-                best = size
-                break
-        if best < 1 and (word[0].isdigit() or word in _ROMAN or word in _COMPARATORS or best == 0):
-            number = _number(kept, place, vocabulary, sense if best == 0 else _UNKNOWN, glued)
+        best, sense = _longest(entries, kept, place)
+        if best < 1 and (best == 0 or word[0].isdigit() or word in _ROMAN or word in _COMPARATORS):
+            number = _number(kept, place, vocabulary, sense, glued)
             if number is not None:
                 if number.grade is None:
                     _unit(text, kept, number, vocabulary)
@@ -83,6 +76,17 @@ def items(text: str, cut: list[Token], vocabulary: Vocabulary) -> list[Item]:
     return found
 
 
+def _longest(entries: Entries, kept: list[Token], place: int) -> tuple[int, Sense]:
+    """The longest wording that begins at a place: how many words it has after the first; -1 for none."""
+    for rest, sense in entries.get(kept[place].word, ()):
+        size = len(rest)
+        if not size:
+            return 0, sense
+        if place + size < len(kept) and all(kept[place + 1 + n].word == one for n, one in enumerate(rest)):
+            return size, sense
+    return -1, _UNKNOWN
+
+
 def _glued(cut: list[Token]) -> frozenset[int]:
     """Starts of tokens that a hyphen ties to the token before."""
     return frozenset(cut[place + 1].start for place in range(1, len(cut) - 1) if is_hyphen(cut, place))
@@ -92,7 +96,7 @@ def _strangers(found: list[Item], kept: list[Token], glued: frozenset[int]) -> N
     """A word tied to an unknown one (L4-S1) is not what it seems."""
     if not glued:
         return
-    for before, after in zip(found, found[1:], strict=False):
+    for before, after in itertools.pairwise(found):
         if kept[after.first].start in glued and before.unknown != after.unknown:
             for item in (before, after):
                 item.sense, item.unknown = _UNKNOWN, True

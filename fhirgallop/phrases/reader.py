@@ -25,37 +25,50 @@ MAX_CHARACTERS: Final = 1_000_000
 _TEXTS: Final[dict[str, tuple[Severity, str]]] = {
     "phrase-scope-doubtful": (
         "warning",
-        "It is doubtful whether the denial reaches this finding; it is kept as uncertain. Repeat the denial, or "
-        "join the list with 'or'.",
+        (
+            "It is doubtful how far a denial or doubt reaches; this finding is kept as uncertain. Repeat "
+            "the word, or join the list with 'or'."
+        ),
     ),
     "phrase-denied-detail": (
         "warning",
-        "A described kind of this finding is denied, which does not deny the finding; it is kept as uncertain.",
+        (
+            "A described kind of this finding is denied, which does not deny the finding; it is kept as "
+            "uncertain."
+        ),
     ),
     "phrase-denied-answer": (
         "warning",
-        "An answer or number is denied, doubted or not of today, and what is so instead is not said; the words "
-        "were not read.",
+        (
+            "An answer or number is denied or doubted, and what is so instead is not said; the words were "
+            "not read."
+        ),
     ),
     "phrase-uncertain-answer": (
-        "warning", "What is said of this finding is uncertain; no answer was taken from it.",
+        "warning",
+        "What is said of this finding is uncertain; no answer was taken from it.",
     ),
     "phrase-number-implausible": (
-        "warning", "The number is outside what is plausible, or its unit does not fit; it was not read. Check it.",
+        "warning",
+        "The number is outside what is plausible, or its unit does not fit; it was not read. Check it.",
     ),
     "phrase-unit-missing": (
-        "warning", "The number has no unit, and this finding has no customary one; it was not read. Add the unit.",
+        "warning",
+        "The number has no unit, and there is no customary one; it was not read. Add the unit.",
     ),
     "phrase-which": (
-        "warning", "Several findings have this name, and it is not said which is meant; it was not read.",
+        "warning",
+        "Several findings have this name, and it is not said which is meant; it was not read.",
     ),
     "phrase-contradiction": (
-        "error", "The line says of one finding that it is present and that it is absent; keep what is true.",
+        "error",
+        "The line says of one finding that it is present and that it is absent; keep what is true.",
     ),
     "phrase-too-long": (
-        "error", "The text is longer than a line of an examination can be; it was not read. Shorten it.",
+        "error",
+        "The text is longer than a line of an examination can be; it was not read. Shorten it.",
     ),
-}  # fmt: skip
+}
 
 
 class LineReader:

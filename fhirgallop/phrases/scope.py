@@ -1,12 +1,13 @@
 """Whose words are denied, doubted, not of today, or not of this patient.
 
-After NegEx (Chapman et al. 2001: a denying phrase before or after a finding, phrases that end its reach, phrases
-that only look like denials) and ConText (Harkema et al. 2009: the same for doubt, past, other persons and
-conditions). Where it is doubtful how far a phrase reaches, the finding is uncertain, never present or absent.
+After NegEx (Chapman et al. 2001: a denying phrase before or after a finding, phrases that end its reach,
+phrases that only look like denials) and ConText (Harkema et al. 2009: the same for doubt, past, other
+persons and conditions). Where it is doubtful how far a phrase reaches, the finding is uncertain, never present or absent.
 """
 
 from __future__ import annotations
 
+import itertools
 from typing import Final
 
 from fhirgallop.exam.checks import ALSO_OF_ABSENT
@@ -24,7 +25,7 @@ def settle(clause: list[Phrase]) -> None:
         _own(phrase)
     _forward(clause, named)
     _backward(named)
-    for before, phrase in zip(named, named[1:], strict=False):
+    for before, phrase in itertools.pairwise(named):
         if phrase.link == "except":
             for one in (before, phrase):
                 one.said, one.rule = "maybe", "scope-doubtful"
@@ -40,7 +41,7 @@ def settle(clause: list[Phrase]) -> None:
 
 
 def strong(phrase: Phrase) -> bool:
-    """Whether a phrase describes what only something present can have: a grade, a number, an answer, a quality."""
+    """Whether a phrase describes what only something present has: a grade, a number, an answer, a quality."""
     head = phrase.head
     if head is None:
         return True
@@ -114,7 +115,7 @@ def _forward(clause: list[Phrase], named: list[Phrase]) -> None:
 
 def _led_by_another(clause: list[Phrase]) -> None:
     """A segment without a name that speaks of kin or of a condition covers what follows it."""
-    for before, phrase in zip(clause, clause[1:], strict=False):
+    for before, phrase in itertools.pairwise(clause):
         if before.head is None and any(means == "family" for _, means, _ in before.cues()):
             phrase.said = phrase.rule = "family"
 
@@ -132,7 +133,7 @@ def _reached(phrase: Phrase) -> str:
 
 
 def _chains(named: list[Phrase]) -> tuple[list[int], list[bool]]:
-    """For each phrase: how many bare ones follow in one list from it on, and whether or/and closes that list."""
+    """For each phrase: how many bare ones follow in one list from it on, and whether or/and closes it."""
     lengths, listed = [0] * len(named), [False] * len(named)
     for place in range(len(named) - 1, -1, -1):
         phrase = named[place]

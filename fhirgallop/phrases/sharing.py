@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import itertools
 from typing import Final
 
 from fhirgallop.phrases.clauses import Phrase
@@ -11,7 +12,7 @@ _TIES: Final = frozenset({"and", "slash", "next"})
 
 
 def share(clause: list[Phrase]) -> None:
-    """Gives an answer that stands after the last, or `normal` before the first, of tied names to each of them."""
+    """Gives an answer after the last, or `normal` before the first, of tied names to each of them."""
     for place in range(len(clause) - 1, 0, -1):
         before, phrase = clause[place - 1], clause[place]
         if not _bare(before) or phrase.anchor is None:
@@ -20,7 +21,7 @@ def share(clause: list[Phrase]) -> None:
             tied = phrase.link in _TIES or (phrase.link == "comma" and _is_normal(item))
             if tied and item.first > phrase.anchor.first and _answers_of(before, item):
                 before.extra.append(item)
-    for before, phrase in zip(clause, clause[1:], strict=False):
+    for before, phrase in itertools.pairwise(clause):
         if not _bare(phrase) or before.anchor is None or phrase.link not in _TIES:
             continue
         for item in _answers(before):

@@ -14,9 +14,11 @@ class Token(NamedTuple):
     end: int
 
 
-# A number with its decimals; a word, which may hold digits and an apostrophe (S3, Erb's, e'); an arrow; any
-# one other sign. The alternatives begin with different characters, so nothing is ever tried twice.
-_TOKEN: Final = re.compile(r"\d+(?:[.,]\d+)?|[^\W\d_][^\W_]*(?:'[^\W_]*)?|-+>|\([-+]\)|[^\w\s]|_|\n")
+# A number with its decimals; an elided word (d'); a word, which may hold digits and an apostrophe (S3, Erb's,
+# e'); an arrow of bounded length, so that a row of hyphens costs no more than its length; any one other sign.
+_TOKEN: Final = re.compile(
+    r"\d+(?:[.,]\d+)?|[A-Za-z]'(?=[^\W\d_])|[^\W\d_][^\W_]*(?:'[^\W_]*)?|-{1,3}>|\([-+]\)|[^\w\s]|_|\n"
+)
 
 
 def tokens(text: str) -> list[Token]:

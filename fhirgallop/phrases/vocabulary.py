@@ -1,6 +1,6 @@
 """The wordings of one language: terminology/phrases/<language>.csv, and for English the catalogue's own.
 
-Columns of the file: `use`, `wording`, `means`, `denied`; terminology/phrases/README.md tells what each use means.
+Columns of the file: `use`, `wording`, `means`, `denied`; terminology/phrases/README.md tells of each use.
 """
 
 from __future__ import annotations
@@ -74,12 +74,15 @@ class Sense:
         return Sense(heads, values, {**self.plain, **other.plain}, cues)
 
 
+Entries = Mapping[str, tuple[tuple[tuple[str, ...], Sense], ...]]
+
+
 @dataclass(frozen=True)
 class Vocabulary:
     """One language. `entries`: first word -> (further words, sense), longest first."""
 
     language: str
-    entries: Mapping[str, tuple[tuple[tuple[str, ...], Sense], ...]]
+    entries: Entries
     opposites: Mapping[Pair, str]
     decimal: str
 
