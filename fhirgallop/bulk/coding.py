@@ -11,10 +11,13 @@ from collections.abc import Iterator
 from dataclasses import dataclass, replace
 from typing import Any, Final, Literal
 
+import msgspec
+
 from fhirgallop import pipeline
 from fhirgallop.bulk.wish import Wish
 from fhirgallop.codes import fhirjson
 from fhirgallop.errors import MapError
+from fhirgallop.exam.exam import Exam
 from fhirgallop.intake.reading import Read
 from fhirgallop.intake.record import LocalRecord
 from fhirgallop.mapping.reading import read_map
@@ -24,6 +27,9 @@ from fhirgallop.pipeline import Result
 
 Became = Literal["coded", "refused", "unreadable", "remark"]
 
+OUTCOME: Final = "OperationOutcome"
+ERRORS: Final = "errors"
+
 _URN: Final = "urn:uuid:"
 # Only a member's name stands between quotation marks and a colon: text that looks like it is escaped.
 _REFERENCE: Final = re.compile(rb'"reference":"urn:uuid:([0-9a-f-]{36})"')
@@ -31,6 +37,22 @@ _BROKE: Final = Issue(
     "fatal", "exception", "record-broke",
     "Something broke at this record, which is a fault of the program; nothing of it was written. Report it.",
 )  # fmt: skip
+
+
+@dataclass(frozen=True, slots=True)
+class ErrorRow:
+    """Why something was not coded: a row of the error file."""
+
+    file: str
+    line: int
+    field: str
+    rule: str
+    reason: str
+
+    @classmethod
+    def of(cls, issue: Issue) -> ErrorRow:
+        """The row of one issue."""
+        return cls(issue.source, issue.line, issue.field, issue.rule, issue.text)
 
 
 @dataclass(frozen=True, slots=True)
@@ -50,9 +72,19 @@ class Coded:
     issues: tuple[Issue, ...]
     result: Result | None
 
-    def outcome(self) -> bytes | None:
-        """The OperationOutcome of all issues; None where there are none."""
-        return fhirjson.write(operation_outcome(self.issues)) if self.issues else None
+    @property
+    def exam(self) -> Exam | None:
+        """The examination, where it was coded."""
+        return self.result.exam if self.result and self.result.ok else None
+
+    def written(self) -> Iterator[tuple[str, bytes]]:
+        """Everything that is written for it, each a line of one kind: resources, outcome, errors."""
+        yield from self.lines
+        if self.issues:
+            yield OUTCOME, fhirjson.write(operation_outcome(self.issues))
+        for issue in self.issues:
+            if issue.is_error:
+                yield ERRORS, msgspec.json.encode(ErrorRow.of(issue))
 
 
 def template_of(wish: Wish) -> TemplateMap:

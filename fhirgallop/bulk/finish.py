@@ -17,7 +17,9 @@ from typing import IO, Any, Final, cast
 
 import msgspec
 
-from fhirgallop.bulk.folder import ERRORS, OUTCOME, ErrorRow, Folder, whole, write_json
+from fhirgallop.bulk.coding import ERRORS, OUTCOME, ErrorRow
+from fhirgallop.bulk.findings import FINDINGS
+from fhirgallop.bulk.folder import Folder, whole, write_json
 from fhirgallop.bulk.repeats import repeats
 from fhirgallop.bulk.report import report
 from fhirgallop.bulk.report_page import page
@@ -30,7 +32,6 @@ from fhirgallop.outcome import Issue, operation_outcome
 MANIFEST: Final = "manifest.json"
 ERROR_FILE: Final = "errors.csv"
 REPEATS: Final = "repeats"
-FINDINGS: Final = "findings"
 _NOT_FHIR: Final = (ERRORS, FINDINGS)
 _FORMULA: Final = ("=", "+", "-", "@", "\t", "\r")
 

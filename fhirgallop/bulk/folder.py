@@ -17,11 +17,7 @@ from typing import IO, Any, Final, cast
 
 import msgspec
 
-from fhirgallop.outcome import Issue
-
 JOURNAL: Final = "journal"
-OUTCOME: Final = "OperationOutcome"
-ERRORS: Final = "errors"
 _TEMPORARY: Final = ".writing"
 _LEVEL: Final = 1  # gzip: output is most of the work of a fast run, and level 6 would double it for 15 % less
 
@@ -64,22 +60,6 @@ class Entry:
     files: tuple[tuple[str, str, int], ...]
     tally: dict[str, Any]
     last: bool
-
-
-@dataclass(frozen=True, slots=True)
-class ErrorRow:
-    """Why something was not coded: a row of the error file."""
-
-    file: str
-    line: int
-    field: str
-    rule: str
-    reason: str
-
-    @classmethod
-    def of(cls, issue: Issue) -> ErrorRow:
-        """The row of one issue."""
-        return cls(issue.source, issue.line, issue.field, issue.rule, issue.text)
 
 
 class Folder:

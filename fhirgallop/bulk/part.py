@@ -5,23 +5,22 @@ from __future__ import annotations
 import gzip
 import io
 import zlib
-from collections.abc import Callable, Iterator
-from contextlib import ExitStack
+from collections.abc import Callable, Generator, Iterator
+from contextlib import ExitStack, closing
 from dataclasses import dataclass
-from itertools import islice
+from itertools import chain, islice, pairwise
 from pathlib import Path
-from typing import BinaryIO, Final, cast
-
-import msgspec
+from typing import Any, BinaryIO, Final, cast
 
 from fhirgallop.bulk.coding import Coded, code, template_of
-from fhirgallop.bulk.folder import ERRORS, OUTCOME, Entry, ErrorRow, Folder, LineFiles, part_name, whole
+from fhirgallop.bulk.findings import FINDINGS, rows_of, write
+from fhirgallop.bulk.folder import Entry, Folder, LineFiles, part_name, whole
 from fhirgallop.bulk.repeats import FOLDER as KEYS
-from fhirgallop.bulk.repeats import Keys
+from fhirgallop.bulk.repeats import Keys, which
 from fhirgallop.bulk.tally import Tally
 from fhirgallop.bulk.wish import LIMITS, Source, Wish
 from fhirgallop.exam.context import Context
-from fhirgallop.exam.exam import Exam
+from fhirgallop.intake.cutting import cuts
 from fhirgallop.intake.detect import BY_CONTENT_TYPE, open_records
 from fhirgallop.intake.midway import START, Midway
 from fhirgallop.intake.reading import Read, refused
@@ -62,13 +61,13 @@ class Job:
 
 
 class Range(io.RawIOBase):
-    """The bytes of a file between two offsets."""
+    """The bytes of a file that a job is about."""
 
-    def __init__(self, file: BinaryIO, start: int, end: int | None) -> None:
+    def __init__(self, file: BinaryIO, job: Job) -> None:
         super().__init__()
-        file.seek(start)
+        file.seek(job.start.offset)
         self._file = file
-        self._left = end - start if end is not None else None
+        self._left = None if job.end is None else job.end - job.start.offset
 
     def read(self, size: int = -1) -> bytes:
         """The next `size` bytes at most."""
@@ -77,6 +76,44 @@ class Range(io.RawIOBase):
         data = self._file.read(min(size, self._left) if size >= 0 else self._left)
         self._left -= len(data)
         return data
+
+
+def jobs_of(file: int, source: Source, wish: Wish) -> Iterator[Job]:
+    """The jobs of one file, in order; found while the file is read through.
+
+    Raises:
+        OSError: the file cannot be read.
+    """
+    if not source.in_parts:
+        yield Job(source, file)
+        return
+    with source.path.open("rb") as stream:
+        places = chain([START], cuts(stream, source.kind, wish.each, LIMITS), [None])
+        for part, (start, end) in enumerate(pairwise(places)):
+            if start is not None:
+                yield Job(source, file, part, start, end.offset if end else None, end is None)
+
+
+def reads_of(job: Job) -> Generator[Read, None, None]:
+    """The records of a job.
+
+    Raises:
+        OSError: the file cannot be read.
+    """
+    source, line = job.source, job.start.line
+    kind = next(name for name, kind in BY_CONTENT_TYPE.items() if kind == source.kind)
+    name = str(source.path)
+    with source.path.open("rb") as file:
+        stream = cast("BinaryIO", gzip.GzipFile(fileobj=file) if source.packed else Range(file, job))
+        try:
+            for read in open_records(stream, content_type=kind, name=name, limits=LIMITS, since=job.start):
+                line = read.line
+                yield read
+        except (EOFError, gzip.BadGzipFile, zlib.error):
+            text = (
+                "The compressed file is broken from here on; pack it again, or send what follows by itself."
+            )
+            yield refused(name, line, "fatal", "gzip-broken", text)
 
 
 class Worker:
@@ -94,8 +131,7 @@ class Worker:
         Raises:
             OSError: a file cannot be read or written; what was begun is not there.
         """
-        with job.source.path.open("rb") as file:
-            reads = self._reads(job, file)
+        with closing(reads_of(job)) as reads:
             if job.in_parts:
                 self._part(job, job.part, reads, lambda: job.last)
             else:
@@ -117,35 +153,21 @@ class Worker:
             if chunk.next is None:
                 return
 
-    def _reads(self, job: Job, file: BinaryIO) -> Iterator[Read]:
-        source = job.source
-        kind = next(name for name, kind in BY_CONTENT_TYPE.items() if kind == source.kind)
-        name = str(source.path)
-        stream: BinaryIO = cast("BinaryIO", Range(file, job.start.offset, job.end))
-        if source.packed:
-            stream = cast("BinaryIO", gzip.GzipFile(fileobj=file, mode="rb"))
-        line = job.start.line
-        try:
-            for read in open_records(stream, content_type=kind, name=name, limits=LIMITS, since=job.start):
-                line = read.line
-                yield read
-        except (EOFError, gzip.BadGzipFile, zlib.error):
-            text = (
-                "The compressed file is broken from here on; pack it again, or send what follows by itself."
-            )
-            yield refused(name, line, "fatal", "gzip-broken", text)
-
     def _part(self, job: Job, part: int, reads: Iterator[Read], is_last: Callable[[], bool]) -> None:
         name = part_name(job.file, part)
-        tally, keys = Tally(), Keys(job.file)
+        tally, keys, findings = Tally(), Keys(job.file), list[dict[str, Any]]()
         with ExitStack() as stack:
             files = LineFiles(self._folder, name, stack, packed=self._wish.packed)
             said = 0
             for said, read in enumerate(reads, 1):
                 coded = code(read, self._template, self._wish)
-                self._keep(coded, files)
-                tally.add(coded, wordings=self._wish.wordings)
-                self._note(read, coded, keys, tally)
+                for kind, text in coded.written():
+                    files.add(kind, text)
+                count(coded, tally, self._wish)
+                if coded.exam:
+                    keys.add(coded.exam, read)
+                    if self._wish.findings:
+                        findings += rows_of(coded.exam)
                 if said % _SAY_EACH == 0:
                     self._say(_SAY_EACH)
             self._say(said % _SAY_EACH)
@@ -154,31 +176,23 @@ class Worker:
                 place.mkdir(exist_ok=True)
                 stack.enter_context(whole(place / name)).write(keys.as_bytes())
             written = files.written()
+            if findings:
+                place = self._folder.path / FINDINGS
+                place.mkdir(exist_ok=True)
+                write(findings, stack.enter_context(whole(place / f"{name}.parquet")))
+                written = (*written, (FINDINGS, f"{name}.parquet", len(findings)))
         self._folder.commit(name, Entry(written, tally.as_dict(), is_last()))
 
-    def _keep(self, coded: Coded, files: LineFiles) -> None:
-        for kind, text in coded.lines:
-            files.add(kind, text)
-        outcome = coded.outcome()
-        if outcome is not None:
-            files.add(OUTCOME, outcome)
-        for issue in coded.issues:
-            if issue.is_error:
-                files.add(ERRORS, msgspec.json.encode(ErrorRow.of(issue)))
 
-    def _note(self, read: Read, coded: Coded, keys: Keys, tally: Tally) -> None:
-        """Its keys, to find what comes twice; and what the rules would say, of one in so many."""
-        exam = coded.result.exam if coded.result else None
-        if exam is None or not coded.lines:
-            return
-        rank = keys.add(exam, read)
-        if self._wish.review_each and rank % self._wish.review_each == 0:
-            tally.add_review(review(exam, _nothing_known(exam, self._wish)))
+def count(coded: Coded, tally: Tally, wish: Wish) -> None:
+    """Counts a record, and of one examination in so many what the rules say, its chart not being at hand.
 
-
-def _nothing_known(exam: Exam, wish: Wish) -> Context:
-    """The context of a patient whose chart is not at hand."""
-    return Context(wish.recorded, patient=exam.patient)
+    Which ones is told by a digest, so that they are the same ones whatever the parts are.
+    """
+    tally.add(coded, wordings=wish.wordings)
+    exam = coded.exam
+    if exam and wish.review_each and int.from_bytes(which(exam)[:8]) % wish.review_each == 0:
+        tally.add_review(review(exam, Context(wish.recorded, patient=exam.patient)))
 
 
 class _Chunk:

@@ -54,16 +54,20 @@ class Keys:
         self._file = file
         self.rows: list[bytes] = []
 
-    def add(self, exam: Exam, read: Read) -> int:
-        """Takes in one examination; gives a number of it that is spread evenly, and the same ever after."""
-        whose = repr((exam.patient.system, exam.patient.value, exam.identifier_system, exam.identifier))
-        which = hashlib.blake2b(whose.encode("utf-8", "replace"), digest_size=16).digest()
-        self.rows.append(_ROW.pack(which, _content(read), self._file, read.line, len(self.rows)))
-        return int.from_bytes(which[:8])
+    def add(self, exam: Exam, read: Read) -> None:
+        """Takes in one examination."""
+        row = _ROW.pack(which(exam), _content(read), self._file, read.line, len(self.rows))
+        self.rows.append(row)
 
     def as_bytes(self) -> bytes:
         """All rows."""
         return b"".join(self.rows)
+
+
+def which(exam: Exam) -> bytes:
+    """Digest of what an examination is known by: patient, number, and the systems of both."""
+    whose = repr((exam.patient.system, exam.patient.value, exam.identifier_system, exam.identifier))
+    return hashlib.blake2b(whose.encode("utf-8", "replace"), digest_size=16).digest()
 
 
 def _content(read: Read) -> bytes:
@@ -99,9 +103,9 @@ def _deal(files: Sequence[Path], buckets: Sequence[Path]) -> None:
 
 def _in_bucket(data: bytes) -> Iterator[Repeat]:
     first: dict[bytes, tuple[bytes, int, int]] = {}
-    for which, content, file, line, _ in sorted(_ROW.iter_unpack(data), key=lambda row: row[2:]):
-        seen = first.get(which)
+    for exam, content, file, line, _ in sorted(_ROW.iter_unpack(data), key=lambda row: row[2:]):
+        seen = first.get(exam)
         if seen is None:
-            first[which] = (content, file, line)
+            first[exam] = (content, file, line)
         else:
             yield Repeat(file, line, seen[1], seen[2], seen[0] == content)

@@ -16,7 +16,6 @@ from concurrent.futures import FIRST_COMPLETED, Future, ProcessPoolExecutor, wai
 from concurrent.futures.process import BrokenProcessPool
 from contextlib import contextmanager
 from datetime import datetime
-from itertools import chain, pairwise
 from multiprocessing import connection
 from pathlib import Path
 from typing import Any, Final
@@ -24,11 +23,10 @@ from typing import Any, Final
 import msgspec
 
 from fhirgallop.bulk.coding import template_of
+from fhirgallop.bulk.findings import needed
 from fhirgallop.bulk.folder import Folder, part_name, write_json
-from fhirgallop.bulk.part import Job, Worker
-from fhirgallop.bulk.wish import LIMITS, BulkError, Source, Wish
-from fhirgallop.intake.cutting import cuts
-from fhirgallop.intake.midway import START
+from fhirgallop.bulk.part import Job, Worker, jobs_of
+from fhirgallop.bulk.wish import BulkError, Source, Wish
 
 DESCRIPTION: Final = "run.json"
 _LOCK: Final = "run.lock"
@@ -67,6 +65,8 @@ def run(
         OSError: a file cannot be read or written.
     """
     template_of(wish)
+    if wish.findings:
+        needed()
     folder = Folder(out)
     out.mkdir(parents=True, exist_ok=True)
     with _alone(out):
@@ -109,15 +109,8 @@ def _agree(wish: Wish, inputs: Sequence[Source], out: Path) -> None:
 def _jobs(wish: Wish, inputs: Sequence[Source], folder: Folder) -> Iterator[tuple[Job, bool]]:
     """Every job in the order of the input, and whether it is done already."""
     for file, source in enumerate(inputs):
-        if not source.in_parts:
-            yield Job(source, file), False
-            continue
-        with source.path.open("rb") as stream:
-            places = chain([START], cuts(stream, source.kind, wish.each, LIMITS), [None])
-            for part, (start, end) in enumerate(pairwise(places)):
-                if start is not None:
-                    job = Job(source, file, part, start, end.offset if end else None, end is None)
-                    yield job, folder.is_done(part_name(file, part))
+        for job in jobs_of(file, source, wish):
+            yield job, job.in_parts and folder.is_done(part_name(file, job.part))
 
 
 class _Crew:

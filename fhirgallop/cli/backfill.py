@@ -36,6 +36,9 @@ def command(  # noqa: PLR0913, PLR0917 - one argument an option
         bool, typer.Option("--bundles", help="Write transaction Bundles, in place of files by resource type.")
     ] = False,
     packed: Annotated[bool, typer.Option("--gzip", help="Pack what is written.")] = False,
+    findings: Annotated[
+        bool, typer.Option("--findings", help="Also write Parquet, a row a finding (extra [bulk]).")
+    ] = False,
     alerts: Annotated[
         int,
         typer.Option(
@@ -76,6 +79,7 @@ def command(  # noqa: PLR0913, PLR0917 - one argument an option
         snomed=snomed,
         bundles=bundles,
         packed=packed,
+        findings=findings,
         review_each=alerts,
         wordings=wordings,
         each=part,

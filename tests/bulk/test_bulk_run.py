@@ -115,7 +115,7 @@ def test_every_kind_of_file_gives_the_same_findings(
 
 
 def test_messages_of_a_batch(wish: Wish, backfill: Backfill, tmp_path: Path) -> None:
-    start = "MSH|^~\\&|A|B|C|D|20260101||ORU^R01|{0}|P|2.5.1\rPID|1||P{0}\rOBR|1||E{0}|X\r"
+    start = "MSH|^~\\&|A|B|C|D|20260101||ORU^R01|{0}|P|2.5.1\rPID|1||P{0}\rOBR|1||E{0}|X" + "|" * 21 + "F\r"
     answers = {"exam": "E{0}", "pid": "P{0}", "day": "2026-03-01", "murmur": "yes"}
     message = start + "".join(f"OBX|1|ST|{name}||{said}||||||F\r" for name, said in answers.items())
     source = tmp_path / "a.hl7"
