@@ -74,7 +74,7 @@ _ABOUT: Final = (
     "Turns a clinic's heart examinations into coded FHIR Observations by template maps. Support for clinical "
     "judgement, not a replacement for it. Every error is answered with an OperationOutcome."
 )
-_METHODS: Final = ("DELETE", "GET", "HEAD", "OPTIONS", "PATCH", "POST", "PUT")
+_METHODS: Final = ("DELETE", "GET", "OPTIONS", "PATCH", "POST", "PUT")
 _CODES: Final = {404: "not-found", 405: "not-supported", 413: "too-long"}
 
 
@@ -209,15 +209,14 @@ async def _plain(request: Request, error: Exception) -> Response:
 
 
 def _methods(request: Request) -> str:
-    """What the address takes, by all of its routes (RFC 9110, 10.2.1); the framework looks at the first only."""
-    return ", ".join(
+    """What the address takes, by all of its routes (RFC 9110, 10.2.1); the framework says one."""
+    scope, routes = request.scope, request.app.routes
+    found = [
         method
         for method in _METHODS
-        if any(
-            route.matches({**request.scope, "method": method})[0] is Match.FULL
-            for route in request.app.routes
-        )
-    )
+        if any(route.matches({**scope, "method": method})[0] is Match.FULL for route in routes)
+    ]
+    return ", ".join(found).replace("GET", "GET, HEAD")
 
 
 def _told(

@@ -38,6 +38,7 @@ REQUEST_ID: Final = b"x-request-id"
 # a UUID and nothing freer: what a sender writes there stands in log and audit trail, and a patient's number
 # must not
 _WELL_FORMED: Final = re.compile(r"[0-9a-fA-F]{8}(?:-?[0-9a-fA-F]{4}){3}-?[0-9a-fA-F]{12}")
+_BODY: Final = frozenset({b"content-length", b"transfer-encoding"})
 _METHODS: Final = frozenset({"GET", "HEAD", "POST", "PUT", "PATCH", "DELETE", "OPTIONS"})
 _WATCHING: Final = frozenset({"/health", "/ready", "/metrics"})
 _SAFE: Final = [(name.lower().encode(), value.encode()) for name, value in answers.SAFE_HEADERS.items()]
@@ -55,6 +56,9 @@ class Guard:
         if scope["type"] != "http":
             await self._app(scope, receive, send)
             return
+        if scope["method"] == "HEAD":
+            # what GET answers, without its content (RFC 9110, 9.3.2), which the server leaves out
+            scope = {**scope, "method": "GET"}
         visit = _Visit(Request(scope, receive), send, self._new_id)
         limits: Limits = scope["app"].state.limits
         with (
@@ -73,7 +77,7 @@ class Guard:
             await visit.say(refused)
             return
         try:
-            await self._app(request.scope, request.receive, visit.send)
+            await self._app(request.scope, visit.receive, visit.send)
         except Exception as error:  # noqa: BLE001 - the last line of defence: an answer, and no data in the log
             answer = _broken(error)
             if visit.status:
@@ -95,6 +99,7 @@ class _Visit:
         self._send = send
         self._start = time.perf_counter()
         self._withheld = False
+        self._unread = any(name in _BODY for name, _ in request.scope["headers"])
         given = next((value for name, value in request.scope["headers"] if name == REQUEST_ID), b"")
         text = given.decode("latin-1")
         self.id = text if _WELL_FORMED.fullmatch(text) else new_id()
@@ -103,6 +108,13 @@ class _Visit:
     async def say(self, answer: Response) -> None:
         """Sends an answer of the guard's own."""
         await answer(self.request.scope, self.request.receive, self.send)
+
+    async def receive(self) -> Message:
+        """The next part of the request."""
+        message = await self.request.receive()
+        if message["type"] != "http.request" or not message.get("more_body"):
+            self._unread = False
+        return message
 
     async def send(self, message: Message) -> None:
         """Passes a part of the answer on; nothing of it when its audit event could not be kept."""
@@ -125,6 +137,9 @@ class _Visit:
             headers += [pair for pair in _SAFE if pair[0] not in there]
             headers += origins.headers(self.request)
             headers.append((REQUEST_ID, self.id.encode()))
+            if self._unread:
+                # what is still to come of the request is not wanted: the server hangs up
+                headers.append((b"connection", b"close"))
         await self._send(message)
 
     def end(self) -> None:

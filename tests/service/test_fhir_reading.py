@@ -205,11 +205,19 @@ def test_laid_out_for_people(still: TestClient, one: dict[str, Any]) -> None:
     assert answer.json() == one
 
 
-@pytest.mark.parametrize("method", ["HEAD", "DELETE", "PATCH", "OPTIONS"])
+@pytest.mark.parametrize("method", ["DELETE", "PATCH", "OPTIONS"])
 def test_methods_that_are_not_offered(still: TestClient, one: dict[str, Any], method: str) -> None:
     answer = still.request(method, f"/fhir/r4/Observation/{one['id']}")
     assert answer.status_code == 405
-    assert answer.headers["allow"] == "GET, PUT"
+    assert answer.headers["allow"] == "GET, HEAD, PUT"
+
+
+def test_the_head_of_an_answer_can_be_asked_for_alone(still: TestClient, one: dict[str, Any]) -> None:
+    address = f"/fhir/r4/Observation/{one['id']}"
+    whole, head = still.get(address), still.head(address)
+    assert (head.status_code, head.content) == (200, b"")
+    for name in ("etag", "last-modified", "content-type", "content-length"):
+        assert head.headers[name] == whole.headers[name]
 
 
 def test_the_public_address_stands_in_every_link(
