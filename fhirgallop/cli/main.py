@@ -18,6 +18,7 @@ from fhirgallop.cli import (
     demo,
     draw,
     extract,
+    hand_over,
     maps,
     read,
     review,
@@ -40,6 +41,7 @@ app = typer.Typer(
 )
 app.command("code")(code.command)
 app.command("backfill")(backfill.command)
+app.command("hand-over")(hand_over.command)
 app.command("extract")(extract.command)
 app.command("validate")(validate.command)
 app.command("read")(read.command)

@@ -52,7 +52,8 @@ def cluster(tmp_path_factory: pytest.TempPathFactory) -> Iterator[Cluster]:
 
     home, folder, port = Path(pyspark.__file__).parent, tmp_path_factory.mktemp("spark"), free_port()
     env = {
-        **os.environ, "SPARK_HOME": str(home), "SPARK_LOCAL_IP": "127.0.0.1", "PYSPARK_PYTHON": sys.executable,
+        **os.environ, "SPARK_HOME": str(home), "SPARK_LOCAL_IP": "127.0.0.1",
+        "PYSPARK_PYTHON": sys.executable,
         "SPARK_WORKER_DIR": str(folder / "work"), "SPARK_LOCAL_DIRS": str(folder / "local"),
         "SPARK_DAEMON_MEMORY": "256m",
     }  # fmt: skip
