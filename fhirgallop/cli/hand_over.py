@@ -44,7 +44,8 @@ def command(  # noqa: PLR0913, PLR0917 - one argument an option
     system, _, value = submitter.rpartition("|")
     submission = Submission((system, value), number, status.value, manifest, base, replaces)
     secret = token.read_text(encoding="ascii").strip() if token else ""
-    client = Client([origin_of(receiver) or receiver], timeout=_SECONDS, most_bytes=_MOST_BYTES, private=private)
+    origin = origin_of(receiver) or receiver
+    client = Client([origin], timeout=_SECONDS, most_bytes=_MOST_BYTES, private=private)
     try:
         hand_over(client, receiver, submission, secret)
     finally:

@@ -1,7 +1,7 @@
 """Many examinations through `fhirgallop backfill`: memory, rate, processors, against the model library.
 
-The real table beside the checkout, repeated and varied. BENCH_EXAMS=1000000 for the full size (about 3 GB of packed
-output in the temporary folder); the ordinary size is 20,000.
+The real table beside the checkout, repeated and varied. BENCH_EXAMS=1000000 for the full size (about 3 GB of
+packed output in the temporary folder); the ordinary size is 20,000.
 """
 
 from __future__ import annotations
