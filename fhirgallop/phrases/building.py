@@ -12,6 +12,7 @@ from fhirgallop.exam.entry import Entry, Measure, Qualifier
 from fhirgallop.exam.presence import Presence
 from fhirgallop.phrases.clauses import Phrase
 from fhirgallop.phrases.items import Item
+from fhirgallop.phrases.scope import strong
 from fhirgallop.phrases.vocabulary import Head, Vocabulary
 
 PRESENCE: Final = {
@@ -25,6 +26,8 @@ PRESENCE: Final = {
 # Dimensions with one customary unit, which a line may leave out.
 _CUSTOMARY: Final = frozenset({"mm[Hg]", "/min", "%", "{ratio}", "{score}", "1"})
 _PRESSURES: Final = ("pressure.systolic", "pressure.diastolic")
+# `does not radiate to the axilla` says where not, which no qualifier can say.
+_NOWHERE: Final = "nowhere"
 _TIMED: Final = (("systolic", "systolic"), ("diastolic", "diastolic"))
 
 
@@ -167,10 +170,18 @@ class Builder:
     ) -> Built:
         if phrase.said not in ("", "yes"):
             return Built([], "", "phrase-denied-answer")
+        if _stranger(phrase, item.first):
+            return Built([], "", "phrase-unknown-word")
         item.used = True
-        _, qualifiers = self._described(phrase, findings)
+        answers, qualifiers = self._described(phrase, [*findings, *self._choices(phrase)])
         _take(phrase)
-        return Built([replace(entry, qualifiers=_in_order(qualifiers)) for entry in entries], "number")
+        said = {one.id: one for one in findings}
+        measured = [replace(e, qualifiers=_fitting(said[e.finding], qualifiers)) for e in entries]
+        return Built([*measured, *(Entry(one, answers=tuple(v)) for one, v in answers.items())], "number")
+
+    def _choices(self, phrase: Phrase) -> list[FindingDefinition]:
+        """`pulse 72 regular`: the same name with a number and with an answer."""
+        return [one for one in phrase.head.findings if one.kind == "choice"] if phrase.head else []
 
     # Answers and qualifiers.
 
@@ -209,21 +220,24 @@ class Builder:
             if not all(all(values) for values in turned.values()):
                 return Built([], "", "phrase-denied-answer")
             answers = turned
+        last = max((i.first for i in phrase.items if i.used and i.sense.values), default=-1)
+        if _stranger(phrase, last):
+            return self._unsure(phrase, answers, "phrase-unknown-word")
         _take(phrase)
         by_id = {one.id: one for one in findings}
         entries = []
         for finding, values in answers.items():
-            own = [q for q in qualifiers if q.axis in by_id[finding].qualifiers]
-            entries.append(Entry(finding, answers=tuple(dict.fromkeys(values)), qualifiers=_in_order(own)))
+            own = _fitting(by_id[finding], qualifiers)
+            entries.append(Entry(finding, answers=tuple(dict.fromkeys(values)), qualifiers=own))
         return Built(entries, "answer")
 
-    def _unsure(self, phrase: Phrase, answers: dict[str, list[str]]) -> Built:
+    def _unsure(
+        self, phrase: Phrase, answers: dict[str, list[str]], issue: str = "phrase-uncertain-answer"
+    ) -> Built:
         """`possibly loud P2`: that it is uncertain is kept, the answer is not."""
-        presence = PRESENCE[phrase.said]
+        presence = PRESENCE[phrase.said] if phrase.said not in ("", "yes", "no") else Presence.UNCERTAIN
         _take(phrase)
-        return Built(
-            [Entry(finding, presence) for finding in answers], phrase.rule, "phrase-uncertain-answer"
-        )
+        return Built([Entry(finding, presence) for finding in answers], phrase.rule or "doubted", issue)
 
     # Signs.
 
@@ -251,6 +265,9 @@ class Builder:
         rule, issue = phrase.rule or "said", ""
         if rule == "scope-doubtful":
             issue = "phrase-scope-doubtful"
+        sure = presence is Presence.ABSENT or (presence is Presence.PRESENT and not strong(phrase))
+        if sure and _stranger(phrase):
+            presence, rule, issue = Presence.UNCERTAIN, "scope-doubtful", "phrase-unknown-word"
         if presence is Presence.ABSENT:
             qualifiers = _of_absent(head, qualifiers)
             if _detailed(qualifiers):
@@ -258,10 +275,7 @@ class Builder:
         if len(signs) > 1 and presence is Presence.PRESENT and _either(phrase):
             presence, rule = Presence.UNCERTAIN, "doubted"
         _take(phrase)
-        entries = [
-            Entry(one.id, presence, qualifiers=_in_order([q for q in qualifiers if q.axis in one.qualifiers]))
-            for one in signs
-        ]
+        entries = [Entry(one.id, presence, qualifiers=_fitting(one, qualifiers)) for one in signs]
         return Built(entries, rule, issue)
 
     def _missing(self, phrase: Phrase, findings: list[FindingDefinition]) -> Built:
@@ -337,6 +351,8 @@ class _Scan:
                 if self._where is not None:
                     self._where.used = True
                 return
+        if where == _NOWHERE and any(axis == "radiation" for axis, _ in item.sense.values):
+            return
         if where:
             self._where = None
         for axis, value in item.sense.values:
@@ -388,6 +404,15 @@ def _take(phrase: Phrase) -> None:
     dated = any(means in ("today", "no-today") for _, means, _ in phrase.cues())
     for _, means, item in phrase.cues():
         item.used = item.used or not (dated and means == "past")
+
+
+def _stranger(phrase: Phrase, before: int | None = None) -> bool:
+    """Whether a word that the vocabulary lacks stands beside the name: it may turn the meaning round."""
+    return any(item.unknown and (before is None or item.first < before) for item in phrase.items)
+
+
+def _fitting(finding: FindingDefinition, qualifiers: list[Qualifier]) -> tuple[Qualifier, ...]:
+    return _in_order([one for one in qualifiers if one.axis in finding.qualifiers])
 
 
 def _either(phrase: Phrase) -> bool:

@@ -16,6 +16,7 @@ from fhirgallop.phrases.tokens import Token
 from fhirgallop.phrases.vocabulary import Head, Pair
 
 _STOPS: Final = frozenset(".;\n")
+_COMMAS: Final = frozenset(",()")
 
 
 class Phrase:
@@ -49,7 +50,7 @@ def clauses(found: list[Item], cut: list[Token]) -> list[list[Phrase]]:
         if (sign in _STOPS and item.first == item.last) or item.plain("stop"):
             split.append(_phrases(clause))
             clause = [[]]
-        elif sign == "," and item.first == item.last:
+        elif sign in _COMMAS and item.first == item.last:
             clause.append([])
         else:
             clause[-1].append(item)
@@ -74,7 +75,7 @@ def _phrases(segments: list[list[Item]]) -> list[Phrase]:
             continue
         for number, phrase in enumerate(_cut(segment, heads)):
             if number == 0 and found:
-                phrase.link = "comma"
+                phrase.link = segment[0].plain("link") or "comma"
             found += _each(phrase)
     return _joined(found)
 

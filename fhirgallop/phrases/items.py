@@ -16,6 +16,8 @@ _ROMAN: Final = {"i": 1, "ii": 2, "iii": 3, "iv": 4, "v": 5, "vi": 6}
 _SCALES: Final = {"6": 6, "vi": 6, "4": 4, "iv": 4}
 _COMPARATORS: Final = frozenset("<>≤≥")
 _UNKNOWN: Final = Sense()
+# `S3?`: a question mark that touches a word doubts that word.
+_AFTER: Final = Sense(cues=(("after", "maybe"),))
 _LONGEST_NUMBER: Final = 9
 _LONGEST_UNIT: Final = 4
 
@@ -67,10 +69,12 @@ def items(text: str, cut: list[Token], vocabulary: Vocabulary) -> list[Item]:
                 place = number.unit_last + 1
                 continue
         if best >= 0:
+            if word == "?" and place and kept[place - 1].end == kept[place].start:
+                sense = _AFTER
             found.append(Item(place, place + best, sense))
             place += best + 1
         else:
-            found.append(Item(place, place, unknown=word not in ",;."))
+            found.append(Item(place, place, unknown=word[0].isalpha()))
             place += 1
     _strangers(found, kept, glued)
     return found

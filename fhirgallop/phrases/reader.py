@@ -52,6 +52,10 @@ _TEXTS: Final[dict[str, tuple[Severity, str]]] = {
         "warning",
         "The number is outside what is plausible, or its unit does not fit; it was not read. Check it.",
     ),
+    "phrase-unknown-word": (
+        "warning",
+        "A word beside this finding is not known and may change what is meant; nothing certain was read.",
+    ),
     "phrase-unit-missing": (
         "warning",
         "The number has no unit, and there is no customary one; it was not read. Add the unit.",

@@ -2,7 +2,8 @@
 
 After NegEx (Chapman et al. 2001: a denying phrase before or after a finding, phrases that end its reach,
 phrases that only look like denials) and ConText (Harkema et al. 2009: the same for doubt, past, other
-persons and conditions). Where it is doubtful how far a phrase reaches, the finding is uncertain, never present or absent.
+persons and conditions). Where it is doubtful how far a phrase reaches, the finding is uncertain, never
+present or absent.
 """
 
 from __future__ import annotations
@@ -26,7 +27,7 @@ def settle(clause: list[Phrase]) -> None:
     _forward(clause, named)
     _backward(named)
     for before, phrase in itertools.pairwise(named):
-        if phrase.link == "except":
+        if phrase.link == "except" or _either_way(before, phrase):
             for one in (before, phrase):
                 one.said, one.rule = "maybe", "scope-doubtful"
         elif phrase.link in ("or", "vs") and phrase.said == before.said == "":
@@ -38,6 +39,17 @@ def settle(clause: list[Phrase]) -> None:
             phrase.said, phrase.rule = "maybe", "doubted"
             if before.said != "maybe" and not strong(before):
                 before.said, before.rule = "maybe", "doubted"
+
+
+def _either_way(before: Phrase, phrase: Phrase) -> bool:
+    """`S3 no S4 yes`: a cue between two names, and another one after the second, may belong to either."""
+    anchor = phrase.anchor
+    if phrase.link != "next" or before.said or anchor is None:
+        return False
+    places = [
+        item.first < anchor.first for _, means, item in phrase.cues() if means in ("no", "maybe", "yes")
+    ]
+    return True in places and False in places
 
 
 def strong(phrase: Phrase) -> bool:
@@ -61,21 +73,34 @@ def strong(phrase: Phrase) -> bool:
 
 def _own(phrase: Phrase) -> None:
     """What the cues beside the name itself say."""
-    means: list[str] = [means for _, means, _ in phrase.cues()]
-    if not means:
+    cues = _of_today([(item.first, use, means) for use, means, item in phrase.cues()])
+    if not cues:
         return
-    if "no-today" in means:
-        means = ["no"]
-    elif "today" in means:
-        means = [one for one in means if one not in ("past", "today")]
-        if not means:
-            means = ["yes"]
-    if means.count("no") > 1:
+    means = [one for _, _, one in cues]
+    against = any(use == "beside" for _, use, one in cues if one == "no") and "yes" in means
+    if means.count("no") > 1 or against:
         phrase.said, phrase.rule = "maybe", "scope-doubtful"
         return
     said = next((one for one in _RANK if one in means), "yes" if "yes" in means else "")
     phrase.said = said
     phrase.rule = {"no": "denied", "maybe": "doubted"}.get(said, "said" if said == "yes" else said)
+
+
+def _of_today(cues: list[tuple[int, str, str]]) -> list[tuple[int, str, str]]:
+    """Of `previously absent, now present` only what is said of now."""
+    means = {one: place for place, _, one in cues}
+    if "no-today" in means:
+        return [(means["no-today"], "before", "no")]
+    if "today" not in means:
+        return cues
+    now, past = means["today"], means.get("past", -1)
+    kept = [cue for cue in cues if cue[2] not in ("today", "past")]
+    if past > now:
+        kept = [cue for cue in kept if cue[0] < past]
+    elif past >= 0:
+        after = [cue for cue in kept if cue[0] > now]
+        kept = after or [cue for cue in kept if cue[0] > past]
+    return kept or [(now, "after", "yes")]
 
 
 def _opens(phrase: Phrase) -> bool:

@@ -38,7 +38,11 @@ def is_hyphen(cut: list[Token], place: int) -> bool:
     if cut[place].word != "-" or not 0 < place < len(cut) - 1:
         return False
     before, after = cut[place - 1], cut[place + 1]
-    return before.end == cut[place].start and cut[place].end == after.start and before.word[-1].isalnum()
+    return before.end == cut[place].start and cut[place].end == after.start and _joined(before, after)
+
+
+def _joined(before: Token, after: Token) -> bool:
+    return before.word[-1].isalnum() and after.word[0].isalnum()
 
 
 # One character for one character, so that places stay true.
