@@ -316,10 +316,17 @@ class Settings(BaseSettings):
         "refused.",
     )
     coded_at_once: int = Field(
+        8,
+        ge=1,
+        le=64,
+        description="Of these, examinations that are coded at once; the others wait their turn. Those that "
+        "reach the database together share a transaction.",
+    )
+    cards_at_once: int = Field(
         2,
         ge=1,
         le=64,
-        description="Of these, examinations and cards that are computed at once; the others wait their turn. "
+        description="Of these, calls of CDS Hooks that are computed at once; the others wait their turn. "
         "More only lets all wait for the slowest.",
     )
     header_seconds: float = Field(
@@ -398,7 +405,8 @@ def load(**given: object) -> Settings:
         if name.upper().startswith(PREFIX) and name.upper() not in known | files:
             near = get_close_matches(name.upper(), known, 1, 0.0)
             faults.append(f"{name}: no such setting; did you mean {near[0]}?")
-    chosen = {name: value for name, value in {**texts, **given}.items() if value is not None}
+    # an option that is not given (None) leaves the file's text in force
+    chosen = texts | {name: value for name, value in given.items() if value is not None}
     try:
         settings = Settings(**chosen)  # type: ignore[arg-type]
     except SourceError:

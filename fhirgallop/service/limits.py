@@ -8,10 +8,10 @@ from __future__ import annotations
 
 import math
 from collections import Counter, OrderedDict
-from collections.abc import Callable, Iterator
+from collections.abc import Callable, Iterator, Mapping
 from contextlib import contextmanager
 from functools import partial
-from typing import Any, Final, TypeVar
+from typing import Any, Final, Literal, TypeVar
 
 from anyio import CapacityLimiter, to_thread
 from starlette.requests import Request
@@ -20,6 +20,7 @@ from fhirgallop.outcome import Issue
 from fhirgallop.service import answers
 
 T = TypeVar("T")
+Work = Literal["examination", "cards"]
 
 _MOST_CLIENTS: Final = 20_000
 _BURST: Final = 2.0  # seconds of the permitted rate that may come at once
@@ -58,9 +59,18 @@ class Limits:
     """The rate of each address and of each caller, and how many requests are worked on at once."""
 
     def __init__(
-        self, *, rate: float, at_once: int, clock: Callable[[], float], coded_at_once: int = 2
+        self,
+        *,
+        rate: float,
+        at_once: int,
+        clock: Callable[[], float],
+        coded_at_once: int = 8,
+        cards_at_once: int = 2,
     ) -> None:
-        self.turns: Final = CapacityLimiter(coded_at_once)
+        self.turns: Final[Mapping[Work, CapacityLimiter]] = {
+            "examination": CapacityLimiter(coded_at_once),
+            "cards": CapacityLimiter(cards_at_once),
+        }
         self._addresses = Rate(rate, clock)
         self._callers = Rate(rate, clock)
         self._at_once = at_once
@@ -111,14 +121,14 @@ def admit_caller(request: Request, name: str) -> None:
     limits.admit_caller(name)
 
 
-async def in_turn(request: Request, act: Callable[..., T], *given: Any) -> T:
+async def in_turn(request: Request, work: Work, act: Callable[..., T], *given: Any) -> T:
     """What `act` gives, called in a thread, one after the other as the requests came.
 
-    Threads that all compute share one interpreter: with many at once everybody waits for the slowest, and an
-    embedded database has one writer.
+    Threads that all compute share one interpreter: with many at once everybody waits for the slowest. An
+    examination waits for the database for much of its time, and better together with others.
     """
     limits: Limits = request.app.state.limits
-    return await to_thread.run_sync(partial(act, *given), limiter=limits.turns)
+    return await to_thread.run_sync(partial(act, *given), limiter=limits.turns[work])
 
 
 def _too_many(wait: float) -> answers.RefusalError:

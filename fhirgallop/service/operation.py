@@ -32,6 +32,7 @@ def watch_over(app: FastAPI, engine: Engine, settings: Settings, clock: Callable
         at_once=settings.at_once,
         clock=time.monotonic,
         coded_at_once=settings.coded_at_once,
+        cards_at_once=settings.cards_at_once,
     )
     app.state.readiness = Readiness(engine, settings, clock, app.state.audit)
     app.state.metrics = Metrics()

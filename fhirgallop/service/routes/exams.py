@@ -139,7 +139,7 @@ async def post_exams(
         raise answers.refusal(406, "not-supported", "http-accept-hl7", text)
     ask = Ask(wish, answer, review, sent.chart, key, _watch(request))
     try:
-        reply = await in_turn(request, _answer, request.app.state.exams, sent, ask, settings)
+        reply = await in_turn(request, "examination", _answer, request.app.state.exams, sent, ask, settings)
     except BusyError:
         raise answers.RefusalError(409, [BUSY], {"Retry-After": "1"}) from None
     if reply.repeated:

@@ -84,14 +84,14 @@ async def call_service(request: Request, service_id: ServiceId) -> Response:
     """Holds today's examination against what was sent, and what could be read of the rest."""
     service = _service(service_id)
     body = await _json_body(request)
-    call, draft = await in_turn(request, _prepared, request, service, body)
+    call, draft = await in_turn(request, "cards", _prepared, request, service, body)
     if not call.by_clinician:
         return answers.json_answer({"cards": []})
     fetcher: Fetcher | None = request.app.state.fetcher
     if fetcher and (call.prefetch.absent or call.prefetch.paged):
         # waits for another server: out of turn
         call = await run_in_threadpool(fetcher.complete, call, service, request.state.caller.name)
-    return await in_turn(request, _cards, request, service, call, draft)
+    return await in_turn(request, "cards", _cards, request, service, call, draft)
 
 
 @router.post(
@@ -106,7 +106,7 @@ async def take_feedback(request: Request, service_id: ServiceId) -> Response:
     """Keeps feedback, all of it or none."""
     service = _service(service_id)
     body = await _json_body(request)
-    return await in_turn(request, _feedback, request, service, body)
+    return await in_turn(request, "cards", _feedback, request, service, body)
 
 
 @router.get(
