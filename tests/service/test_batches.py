@@ -298,7 +298,7 @@ def test_a_database_that_fails_is_waited_for(
 def test_a_map_that_is_gone_is_said_of_each_record(batching: Any, example: Any) -> None:
     client = batching(batch_workers=0)
     sent = client.post(WHERE, json=[example(), example()], headers=LATER)
-    client.app.state.shelf.clear()
+    client.app.state.batch_work._shelf = {}
     _work(client.app.state, settings.load(batch_workers=1))
     found = results(client, end(client, sent))
     assert [one["status"] for one in found] == ["refused"] * 2
@@ -308,8 +308,8 @@ def test_a_map_that_is_gone_is_said_of_each_record(batching: Any, example: Any) 
 def test_a_map_that_was_changed_is_said_of_each_record(batching: Any, example: Any) -> None:
     client = batching(batch_workers=0)
     sent = client.post(WHERE, json=[example()], headers=LATER)
-    shelf = client.app.state.shelf
-    shelf["fernwood-heart-form"] = replace(shelf["fernwood-heart-form"], version="2027.1")
+    changed = replace(client.app.state.shelf["fernwood-heart-form"], version="2027.1")
+    client.app.state.batch_work._shelf = {"fernwood-heart-form": changed}
     _work(client.app.state, settings.load(batch_workers=1))
     (found,) = results(client, end(client, sent))
     assert found["status"] == "coded"
