@@ -98,3 +98,16 @@ def test_a_password_is_never_shown(call: Call) -> None:
     assert "cannot be opened" in done.err
     assert "nothing listens" in done.err
     assert "Evergreen" not in done.err
+
+
+def test_the_commands_use_the_database_that_a_file_names(
+    call: Call, tmp_path: Path, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    address = f"sqlite:///{tmp_path / 'named.sqlite3'}"
+    open_database(address).dispose()
+    (tmp_path / "secret").write_text(address, "utf-8")
+    monkeypatch.setenv("FHIRGALLOP_DATABASE_FILE", str(tmp_path / "secret"))
+    monkeypatch.chdir(tmp_path)
+    done = call("database", "status")
+    assert (done.code, done.err) == (0, ""), done
+    assert not (tmp_path / "fhirgallop.sqlite3").exists()
