@@ -35,7 +35,8 @@ def draft(visit: Any) -> str:
 @pytest.mark.parametrize(("width", "dark"), [(1280, False), (1280, True), (360, False), (360, True)])
 def test_every_page_is_accessible(visit: Any, accessible: Any, draft: str, width: int, dark: bool) -> None:
     for path in (
-        "/desk", draft, f"{draft}?pane=text", f"{draft}?field=tone3&show=all", f"{draft}?field=mm_when&show=all",
+        "/desk", draft, f"{draft}?pane=text", f"{draft}?field=tone3&show=all",
+        f"{draft}?field=mm_when&show=all",
         f"{draft}/coverage", f"{draft}/publish", "/desk/maps/fernwood-heart-form", "/desk/drafts/none",
     ):  # fmt: skip
         page: Page = visit(path, width=width, dark=dark)
