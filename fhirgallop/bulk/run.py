@@ -200,7 +200,6 @@ def _begin(wish: Wish, out: Path, counted: Any) -> None:
             counted.value += count
 
     _worker.append(Worker(wish, out, say))
-    gc.freeze()
 
 
 def _end_with_parent() -> None:
@@ -212,3 +211,6 @@ def _end_with_parent() -> None:
 
 def _do(job: Job) -> None:
     _worker[0].do(job)
+    if not gc.get_freeze_count():  # what the first part has loaded stays; the collector need not look at it
+        gc.collect()
+        gc.freeze()

@@ -85,8 +85,9 @@ def cluster(tmp_path_factory: pytest.TempPathFactory) -> Iterator[Cluster]:
         yield Cluster(address, workers)
     finally:
         for process in running:
-            os.killpg(process.pid, signal.SIGKILL)
-            process.wait()
+            if process.poll() is None:
+                os.killpg(process.pid, signal.SIGKILL)
+                process.wait()
 
 
 def text_of(path: Path) -> str:
