@@ -16,6 +16,7 @@ from fhirgallop.phrases.tokens import Token
 from fhirgallop.phrases.vocabulary import Head, Pair
 
 _STOPS: Final = frozenset(".;\n")
+_SPEAKING: Final = frozenset({"grade", "way", "kind", "where", "since"})
 _COMMAS: Final = frozenset(",()")
 
 
@@ -50,13 +51,20 @@ def clauses(found: list[Item], cut: list[Token]) -> list[list[Phrase]]:
         if (sign in _STOPS and item.first == item.last) or item.plain("stop"):
             split.append(_phrases(clause))
             clause = [[]]
-        elif sign in _COMMAS and item.first == item.last:
+        elif item.first == item.last and (sign in _COMMAS or (sign == ":" and _is_title(clause[-1]))):
             clause.append([])
         else:
             clause[-1].append(item)
     split.append(_phrases(clause))
     _carry_over(split)
     return [clause for clause in split if clause]
+
+
+def _is_title(segment: list[Item]) -> bool:
+    """`Extremities:` heads what follows, and is no part of it."""
+    return not any(
+        item.sense.heads or item.sense.cues or item.sense.plain.keys() & _SPEAKING for item in segment
+    )
 
 
 def accepts(head: Head, pair: Pair) -> bool:
@@ -218,9 +226,7 @@ def _each(phrase: Phrase) -> list[Phrase]:
         return [phrase]
     found = []
     for number, head in enumerate(anchor.sense.heads):
-        one = Phrase(
-            phrase.link if number == 0 else "slash", phrase.items if number == 0 else [anchor], anchor
-        )
+        one = Phrase(phrase.link if number == 0 else "slash", phrase.items, anchor)
         one.head = head
         found.append(one)
     return found

@@ -82,13 +82,19 @@ def items(text: str, cut: list[Token], vocabulary: Vocabulary) -> list[Item]:
 
 def _longest(entries: Entries, kept: list[Token], place: int) -> tuple[int, Sense]:
     """The longest wording that begins at a place: how many words it has after the first; -1 for none."""
-    for rest, sense in entries.get(kept[place].word, ()):
-        size = len(rest)
-        if not size:
-            return 0, sense
-        if place + size < len(kept) and all(kept[place + 1 + n].word == one for n, one in enumerate(rest)):
-            return size, sense
-    return -1, _UNKNOWN
+    by_second = entries.get(kept[place].word)
+    if by_second is None:
+        return -1, _UNKNOWN
+    left = len(kept) - place - 1
+    if left:
+        for rest, sense in by_second.get(kept[place + 1].word, ()):
+            size = len(rest)
+            if size == 0 or (
+                size < left and all(kept[place + 2 + n].word == one for n, one in enumerate(rest))
+            ):
+                return size + 1, sense
+    alone = by_second.get("")
+    return (0, alone[0][1]) if alone else (-1, _UNKNOWN)
 
 
 def _glued(cut: list[Token]) -> frozenset[int]:
@@ -156,7 +162,8 @@ def _unit(text: str, kept: list[Token], item: Item, vocabulary: Vocabulary) -> N
 
 
 def _is_word(word: str, vocabulary: Vocabulary) -> bool:
-    return any(not rest and sense.plain for rest, sense in vocabulary.entries.get(word, ()))
+    alone = vocabulary.entries.get(word, {}).get("")
+    return alone is not None and bool(alone[0][1].plain)
 
 
 def _over(

@@ -205,7 +205,7 @@ def _unread(found: list[Item], cut: list[Token], why: dict[int, str]) -> tuple[U
     for item in found:
         outside = why.get(item.first, "")
         idle = _silent(item) and outside not in OUTSIDE.values()
-        if item.used or cut[item.first].word in ",;.\n":
+        if item.used or cut[item.first].word in ",;.\n()":
             close()
             if item.used and item.unit_last > _last(item):
                 start, end, filled = _last(item) + 1, item.unit_last, True

@@ -43,8 +43,12 @@ def settle(clause: list[Phrase]) -> None:
 
 def _either_way(before: Phrase, phrase: Phrase) -> bool:
     """`S3 no S4 yes`: a cue between two names, and another one after the second, may belong to either."""
-    anchor = phrase.anchor
-    if phrase.link != "next" or before.said or anchor is None:
+    anchor, first = phrase.anchor, before.anchor
+    if phrase.link != "next" or anchor is None or first is None:
+        return False
+    if before.said == "no" and phrase.rule in ("", "scope-doubtful", "denied-list"):
+        return all(item.first > first.first for _, means, item in before.cues() if means == "no")
+    if before.said:
         return False
     places = [
         item.first < anchor.first for _, means, item in phrase.cues() if means in ("no", "maybe", "yes")

@@ -74,12 +74,13 @@ class Sense:
         return Sense(heads, values, {**self.plain, **other.plain}, cues)
 
 
-Entries = Mapping[str, tuple[tuple[tuple[str, ...], Sense], ...]]
+# First word -> second word (empty for none) -> further words and sense, longest first.
+Entries = Mapping[str, Mapping[str, tuple[tuple[tuple[str, ...], Sense], ...]]]
 
 
 @dataclass(frozen=True)
 class Vocabulary:
-    """One language. `entries`: first word -> (further words, sense), longest first."""
+    """One language. `entries` finds the longest wording at a place."""
 
     language: str
     entries: Entries
@@ -120,17 +121,21 @@ def load(language: str) -> Vocabulary:
         elif use not in ("drop", "plural"):
             sense, key = _sense(row, known, f"phrases/{language}.csv"), words(row["wording"])
             found[key] = found[key].also(sense) if key in found else sense
-    return Vocabulary(language, _by_first_word(found), opposites, decimal)
+    return Vocabulary(language, _by_first_words(found), opposites, decimal)
 
 
-def _by_first_word(
-    found: Mapping[tuple[str, ...], Sense],
-) -> dict[str, tuple[tuple[tuple[str, ...], Sense], ...]]:
-    grouped: dict[str, list[tuple[tuple[str, ...], Sense]]] = {}
+def _by_first_words(found: Mapping[tuple[str, ...], Sense]) -> Entries:
+    grouped: dict[str, dict[str, list[tuple[tuple[str, ...], Sense]]]] = {}
     for key, sense in found.items():
         if key:
-            grouped.setdefault(key[0], []).append((key[1:], sense))
-    return {first: tuple(sorted(rest, key=lambda r: -len(r[0]))) for first, rest in grouped.items()}
+            second = key[1] if len(key) > 1 else ""
+            grouped.setdefault(key[0], {}).setdefault(second, []).append((key[2:], sense))
+    return {
+        first: {
+            second: tuple(sorted(rest, key=lambda one: -len(one[0]))) for second, rest in by_second.items()
+        }
+        for first, by_second in grouped.items()
+    }
 
 
 def _of_catalogue(known: Catalogue, plural: str) -> Iterator[tuple[str, Sense]]:

@@ -11,24 +11,24 @@ from fhirgallop.exam.presence import Presence
 from fhirgallop.phrases import MAX_CHARACTERS, ReadLine, reader
 
 FINDINGS = (
-    "S3", "S4", "pericardial rub", "opening snap", "systolic murmur", "diastolic murmur", "thrill",
-    "carotid bruit",
-    "parasternal heave", "pulsus alternans", "HJR", "JVD", "edema", "clubbing", "crackles", "ascites", "gallop",
+    "S3", "S4", "pericardial rub", "opening snap", "systolic murmur", "diastolic murmur", "carotid bruit",
+    "thrill", "parasternal heave", "pulsus alternans", "HJR", "JVD", "edema", "clubbing", "crackles",
+    "ascites", "gallop",
 )  # fmt: skip
 CLAUSES = (
-    "no S3", "S4 present", "3/6 holosystolic murmur at apex -> axilla", "loud P2", "JVP 8 cm",
-    "BP 138/82",
+    "no S3", "S4 present", "3/6 holosystolic murmur at apex -> axilla", "loud P2", "JVP 8 cm", "BP 138/82",
     "no carotid bruits", "?opening snap", "clubbing not assessed", "h/o AF", "HR 76", "possible thrill",
     "father had ascites", "edema to the knees", "purple elephants",
 )  # fmt: skip
 WORDS = st.sampled_from(
     (
-        "no", "S3", "S4", "murmur", "or", "and", ",", ";", ".", "/", "3/6", "III/VI", "at", "apex", "->", "axilla",
-        "?", "not", "heard", "present", "absent", "JVP", "8", "cm",
-        "BP", "138/82", "h/o", "father", "if", "but", 
-        "normal", "S1", "loud", "louder", "with", "Valsalva", "today", "-", "+", "(", ")", "systolic", "m/r/g", 
-        "due to",
-        "unable to assess", "grade", "except", "zebra", "S1-L5", "'", "no-", "%", "<", "\n",
+        "no", "S3", "S4", "murmur", "or", "and", ",", ";", ".", "/", "3/6", "III/VI", "at", "apex",
+        "->", "axilla",
+        "?", "not", "heard", "present", "absent", "JVP", "8", "cm", "BP", "138/82", "h/o", "father",
+        "if", "but",
+        "normal", "S1", "loud", "louder", "with", "Valsalva", "today", "-", "+", "(", ")", "systolic",
+        "m/r/g",
+        "due to", "unable to assess", "grade", "except", "zebra", "S1-L5", "'", "no-", "%", "<", ":", "\n",
     )
 )  # fmt: skip
 LINES = st.one_of(
