@@ -99,7 +99,7 @@ class _Visit:
         self._send = send
         self._start = time.perf_counter()
         self._withheld = False
-        self._unread = any(name in _BODY for name, _ in request.scope["headers"])
+        self._unread = any(name in _BODY and value != b"0" for name, value in request.scope["headers"])
         given = next((value for name, value in request.scope["headers"] if name == REQUEST_ID), b"")
         text = given.decode("latin-1")
         self.id = text if _WELL_FORMED.fullmatch(text) else new_id()

@@ -67,6 +67,7 @@ def service(started: Callable[..., Any], ehr: Any, authority: Any, tmp_path: Pat
         ADMIN_TOKEN=hashlib.sha256(ADMIN.encode()).hexdigest(),
         MAX_BODY="262144",
         HEADER_SECONDS="2",
+        AT_ONCE="1000",  # all of these come from one address
         LOG_LEVEL="debug",
     )
     found = Service(running, ehr, authority)
