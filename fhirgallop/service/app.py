@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import logging
 from collections.abc import AsyncIterator, Callable, Mapping, Sequence
 from contextlib import asynccontextmanager
 from datetime import UTC, datetime
@@ -75,6 +76,7 @@ _ABOUT: Final = (
     "judgement, not a replacement for it. Every error is answered with an OperationOutcome."
 )
 _METHODS: Final = ("DELETE", "GET", "OPTIONS", "PATCH", "POST", "PUT")
+log: Final = logging.getLogger("fhirgallop.service")
 _CODES: Final = {404: "not-found", 405: "not-supported", 413: "too-long"}
 
 
@@ -92,6 +94,8 @@ def create_app(settings: Settings, clock: Callable[[], datetime] = now) -> FastA
     shelf = load_shelf(settings.maps)  # before the database: what cannot start leaves nothing behind
     fetcher = open_fetcher(settings)
     engine = open_database(settings.database, durable=settings.durable)
+    # the kind alone: an address may hold a password; a file where a server was meant is seen at once
+    log.info("the database is %s", "an embedded file" if engine.dialect.name == "sqlite" else "PostgreSQL")
     keep_versions(shelf, MapStore(engine), at=instant(clock()))
 
     @asynccontextmanager

@@ -26,7 +26,7 @@ def test_own_addresses_may_be_listened_on(host: str) -> None:
 
 @pytest.mark.parametrize("host", ["0.0.0.0", "::", "192.168.1.20", "gallop.example", "", "127.0.0.1.example"])
 def test_no_other_address_without_authorisation_and_tls(host: str) -> None:
-    with pytest.raises(SettingsError, match="without authorisation.*without TLS"):
+    with pytest.raises(SettingsError, match=r"without authorisation.*without TLS"):
         load(host=host)
 
 

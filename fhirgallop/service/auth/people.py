@@ -134,7 +134,7 @@ async def small_form(request: Request) -> FormData:
 
 async def _sent(request: Request) -> bytes:
     """The proof that a request carries, in its form or in a header."""
-    value = request.headers.get(FORM_HEADER)
+    value: object = request.headers.get(FORM_HEADER)
     if value is None and _kind(request) == _WITH_FILES:
         value = await _in_multipart(request)
     if value is None:
