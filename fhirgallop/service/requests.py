@@ -10,7 +10,7 @@ from typing import Final
 from starlette.requests import ClientDisconnect, Request
 
 from fhirgallop.intake.detect import BY_CONTENT_TYPE
-from fhirgallop.service.answers import FHIR_JSON, PLAIN_JSON, refusal
+from fhirgallop.service.answers import refusal
 from fhirgallop.settings import Settings
 
 _ANY: Final = ("*/*", "application/*")
