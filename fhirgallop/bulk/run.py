@@ -10,6 +10,7 @@ import fcntl
 import gc
 import multiprocessing
 import os
+import signal
 import threading
 from collections.abc import Callable, Iterator, Sequence
 from concurrent.futures import FIRST_COMPLETED, Future, ProcessPoolExecutor, wait
@@ -68,7 +69,7 @@ def run(
     if wish.findings:
         needed()
     folder = Folder(out)
-    out.mkdir(parents=True, exist_ok=True)
+    out.mkdir(0o750, parents=True, exist_ok=True)  # patients' data
     with _alone(out):
         _agree(wish, inputs, out)
         crew = _Crew(wish, out, workers, progress or (lambda _exams, _bytes: None))
@@ -194,6 +195,7 @@ _worker: list[Worker] = []
 def _begin(wish: Wish, out: Path, counted: Any) -> None:
     """Makes this process a worker, which ends when the process that started it does."""
     threading.Thread(target=_end_with_parent, daemon=True).start()
+    signal.signal(signal.SIGINT, signal.SIG_IGN)  # a key pressed at the terminal is for the first process
 
     def say(count: int) -> None:
         with counted.get_lock():

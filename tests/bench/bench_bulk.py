@@ -1,7 +1,7 @@
 """Many examinations through `fhirgallop backfill`: memory, rate, processors, against the model library.
 
 The real table beside the checkout, repeated and varied. BENCH_EXAMS=1000000 for the full size (about 3 GB of
-packed output in the temporary folder); the ordinary size is 20,000.
+packed output in the temporary folder); the ordinary size is 20,000. Spark is measured where it is installed.
 """
 
 from __future__ import annotations
@@ -16,6 +16,7 @@ import time
 from collections.abc import Iterator, Sequence
 from dataclasses import dataclass
 from datetime import UTC, datetime
+from importlib.util import find_spec
 from itertools import islice
 from pathlib import Path
 
@@ -23,6 +24,8 @@ from fhir.resources.R4B.bundle import Bundle as ModelBundle
 from measuring import Row, at_least, at_most
 
 from fhirgallop import api
+from fhirgallop.bulk.spark import code_files
+from fhirgallop.bulk.wish import Wish, sources
 from fhirgallop.codes import fhirjson
 from fhirgallop.intake.record import LocalRecord
 
@@ -77,6 +80,26 @@ def backfill(table: Path, out: Path, workers: int) -> Ran:
     return Ran(time.perf_counter() - start, peak / 1024)
 
 
+def on_spark(table: Path, out: Path) -> float:
+    """Seconds of the same on Spark with two processes, its start included."""
+    command = [sys.executable, str(Path(__file__).resolve()), str(table), str(out)]
+    start = time.perf_counter()
+    subprocess.run(command, check=True, capture_output=True)
+    return time.perf_counter() - start
+
+
+def _spark(table: Path, out: Path) -> None:
+    from pyspark.sql import SparkSession  # noqa: PLC0415 - of an extra
+
+    os.environ["PYSPARK_PYTHON"] = sys.executable
+    config = {"spark.driver.host": "127.0.0.1", "spark.ui.enabled": "false"}
+    session = SparkSession.builder.master("local[2]").config(map=config).getOrCreate()
+    wish = Wish(MAP.read_bytes(), MAP.name, datetime(2026, 12, 1, 8, 30, tzinfo=UTC))
+    coded = code_files(session, sources([table]), wish)
+    coded.write.partitionBy("kind").option("compression", "gzip").text(out.as_uri())
+    session.stop()
+
+
 def _family(process: int) -> Sequence[int]:
     """A process and its children."""
     try:
@@ -128,3 +151,10 @@ def rows() -> Iterator[Row]:
             _modelled(small) / each, 60,
         )  # fmt: skip
         yield at_least(f"examinations a second, two workers, {much}", EXAMS / two.seconds, 0, "/s")
+        if find_spec("pyspark"):
+            seconds = on_spark(large, folder / "spark")
+            yield at_most(f"Spark with two processes / two workers, {much}", seconds / two.seconds, 2)
+
+
+if __name__ == "__main__":
+    _spark(Path(sys.argv[1]), Path(sys.argv[2]))

@@ -14,11 +14,14 @@ from typing import Any
 import openpyxl
 import pytest
 
-from fhirgallop import api
+from fhirgallop import api, pipeline
+from fhirgallop.bulk.coding import code, template_of
 from fhirgallop.bulk.run import recorded_before, run
 from fhirgallop.bulk.tally import Tally
 from fhirgallop.bulk.wish import BulkError, Wish, sources
 from fhirgallop.conformance.validator import validate
+from fhirgallop.intake.record import LocalRecord
+from fhirgallop.pipeline import Result
 
 Backfill = Callable[..., tuple[Path, Tally]]
 Table = Callable[[int], Path]
@@ -262,3 +265,45 @@ def test_inputs_that_cannot_be(tmp_path: Path, table: Table) -> None:
     (tmp_path / "empty").mkdir()
     with pytest.raises(BulkError, match="no record file"):
         sources([tmp_path / "empty"])
+
+
+def test_a_fault_of_the_program_costs_one_record(
+    wish: Wish, table: Table, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    template, calls = template_of(wish), []
+    process = pipeline.process
+
+    def sometimes(record: LocalRecord, *rest: Any, **more: Any) -> Result:
+        calls.append(record.line)
+        if len(calls) == 2:
+            raise ValueError("E1 of P1")
+        return process(record, *rest, **more)
+
+    monkeypatch.setattr(pipeline, "process", sometimes)
+    became = [code(read, template, wish) for read in api.read_records(table(3))]
+    assert [one.became for one in became] == ["coded", "refused", "coded"]
+    assert [(issue.rule, issue.line) for issue in became[1].issues] == [("record-broke", 3)]
+    assert "P1" not in became[1].issues[0].text
+
+
+def test_a_folder_of_patients_data_is_not_for_everybody(wish: Wish, table: Table, backfill: Backfill) -> None:
+    out, _ = backfill(wish, table(3))
+    assert not out.stat().st_mode & 0o007
+
+
+def test_a_folder_that_cannot_be_written_ends_the_run_and_it_goes_on_later(
+    wish: Wish, table: Table, backfill: Backfill, tmp_path: Path, content: Content
+) -> None:
+    source = table(60)
+    quiet, _ = backfill(wish, source, name="quiet")
+    out = tmp_path / "out"
+    out.mkdir(0o750)
+    run_json = (quiet / "run.json").read_bytes()
+    (out / "run.json").write_bytes(run_json)
+    (out / "Observation").write_text("in the way")
+    with pytest.raises(OSError, match="Observation"):
+        backfill(wish, source)
+    assert not [path for path in (out / "journal").iterdir() if not path.name.startswith(".")]
+    (out / "Observation").unlink()
+    backfill(wish, source)
+    assert content(out) == content(quiet)
