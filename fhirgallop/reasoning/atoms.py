@@ -153,10 +153,11 @@ class Atom:
         return self._said_by(item)
 
     def _said_by(self, item: Item) -> Truth:
-        elsewhere = _METHOD if item.state is State.ABSENT else IDENTITY
-        if any(h.axis in elsewhere and h.holds(item) is Truth.UNKNOWN for h in self.having):
-            # It may be about another valve, side or site.
-            return Truth.UNKNOWN
+        if self.having:
+            elsewhere = _METHOD if item.state is State.ABSENT else IDENTITY
+            if any(h.axis in elsewhere and h.holds(item) is Truth.UNKNOWN for h in self.having):
+                # It may be about another valve, side or site.
+                return Truth.UNKNOWN
         if self.want == "ever":
             if item.state not in (State.PRESENT, State.HISTORY):
                 return Truth.FALSE if item.state is State.ABSENT else Truth.UNKNOWN
