@@ -30,6 +30,21 @@ def both(postgres: str, hooked: TestClient, root: Path) -> Iterator[tuple[TestCl
         yield hooked, speaking
 
 
+def test_the_log_says_which_kind_of_database_it_is(
+    postgres: str, root: Path, tmp_path: Path, caplog: pytest.LogCaptureFixture
+) -> None:
+    for address, kind in (
+        (postgres, "PostgreSQL"),
+        (f"sqlite:///{tmp_path / 'x.sqlite3'}", "an embedded file"),
+    ):
+        caplog.clear()
+        caplog.set_level("INFO")
+        app = create_app(settings.load(maps=root / "examples/informatician", database=address))
+        with TestClient(app):  # which closes the database in the end
+            pass
+        assert f"the database is {kind}" in caplog.text
+
+
 def test_the_answers_are_the_same(
     both: tuple[TestClient, TestClient], example: Callable[..., Any], hook_call: Callable[..., Any]
 ) -> None:
