@@ -351,6 +351,8 @@ class _Scan:
                 if self._where is not None:
                     self._where.used = True
                 return
+        if where and not self._takes(where) and any(axis == where for axis, _ in item.sense.values):
+            return
         if where == _NOWHERE and any(axis == "radiation" for axis, _ in item.sense.values):
             return
         if where:
@@ -407,8 +409,17 @@ def _take(phrase: Phrase) -> None:
 
 
 def _stranger(phrase: Phrase, before: int | None = None) -> bool:
-    """Whether a word that the vocabulary lacks stands beside the name: it may turn the meaning round."""
-    return any(item.unknown and (before is None or item.first < before) for item in phrase.items)
+    """Whether an unknown word, or a bare number (`oedema 0`, `murmur 0/6`), may turn the meaning round."""
+    return any(
+        (item.unknown or (before is None and (item.number is not None or _is_nought(item))))
+        and (before is None or item.first < before)
+        for item in phrase.items
+        if not item.used
+    )
+
+
+def _is_nought(item: Item) -> bool:
+    return item.fraction is not None and item.fraction[0] == 0
 
 
 def _fitting(finding: FindingDefinition, qualifiers: list[Qualifier]) -> tuple[Qualifier, ...]:

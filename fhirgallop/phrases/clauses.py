@@ -48,6 +48,8 @@ def clauses(found: list[Item], cut: list[Token]) -> list[list[Phrase]]:
     clause: list[list[Item]] = [[]]
     for item in found:
         sign = cut[item.first].word
+        if sign == "." and _is_ordinal(clause[-1]):
+            continue
         if (sign in _STOPS and item.first == item.last) or item.plain("stop"):
             split.append(_phrases(clause))
             clause = [[]]
@@ -58,6 +60,16 @@ def clauses(found: list[Item], cut: list[Token]) -> list[list[Phrase]]:
     split.append(_phrases(clause))
     _carry_over(split)
     return [clause for clause in split if clause]
+
+
+def _is_ordinal(segment: list[Item]) -> bool:
+    """`weder 3. noch 4. Herzton`: a full stop after a number whose denial has not met a name yet."""
+    return (
+        bool(segment)
+        and segment[-1].number is not None
+        and any(use == "before" for item in segment for use, _ in item.sense.cues)
+        and not any(item.sense.heads for item in segment)
+    )
 
 
 def _is_title(segment: list[Item]) -> bool:
@@ -113,7 +125,9 @@ def _silent(item: Item) -> bool:
 def _describes(item: Item, head: Head) -> bool:
     if item.grade is not None:
         return any("grade" in one.qualifiers for one in head.findings)
-    if item.sense.plain.keys() & {"way", "where", "manoeuvre"}:
+    if where := item.plain("where"):
+        return any(where in one.qualifiers for one in head.findings)
+    if item.sense.plain.keys() & {"way", "manoeuvre"}:
         return any("timing" in one.qualifiers or "movement.stand" in one.qualifiers for one in head.findings)
     return any(accepts(head, pair) for pair in item.sense.values) or (
         "kind" in item.sense.plain and not item.sense.cues
@@ -196,6 +210,9 @@ def _border(segment: list[Item], start: int, here: int, following: int) -> tuple
     for place in range(following - 1, here, -1):
         if link := segment[place].plain("link"):
             return place, place + 1, link
+    for place in range(here + 1, following):
+        if segment[place].sense.cues and all(use == "before" for use, _ in segment[place].sense.cues):
+            return place, place, "next"
     led_by_name = all(_silent(item) for item in segment[start:here])
     border = following
     while border - 1 > here and _leads(

@@ -139,7 +139,6 @@ def _number(
         return _over(item, low, high, over, vocabulary, named or roman)
     if named:
         item.grade = _grade(low, high, 6)
-        item.unknown = item.grade is None
         return item
     if roman:
         return None if word in ("i", "v") else _plain(item, low, high, sign)
@@ -180,7 +179,6 @@ def _over(
     item.grade = _grade(low, high, scale) if scale else None
     if item.grade is None:
         item.fraction = (low, below)
-        item.unknown = named
     return item
 
 

@@ -63,8 +63,9 @@ def strong(phrase: Phrase) -> bool:
         return True
     if head.answers or head.presence:
         return True
+    counted = any(one.kind in ("quantity", "panel") for one in head.findings)
     for item in (*phrase.items, *phrase.extra):
-        if item.grade is not None or item.number is not None or item.fraction is not None:
+        if item.grade is not None or (counted and (item.number is not None or item.fraction is not None)):
             return True
         if item.sense.plain.keys() & {"way", "where"}:
             return True

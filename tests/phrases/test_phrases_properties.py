@@ -118,3 +118,43 @@ def test_every_doubt_is_told_without_the_words_of_the_record(line: str) -> None:
 def test_a_contradiction_in_one_line_is_an_error() -> None:
     read = reader().read("S3 present. No S3.")
     assert [(i.severity, i.rule) for i in read.issues] == [("error", "phrase-contradiction")]
+
+
+PAIRS = (
+    ("no {}, {} present", "absent", "present"),
+    ("no {} but {}", "absent", "present"),
+    ("{} but no {}", "present", "absent"),
+    ("{}, no {}", "present", "absent"),
+    ("{} no {}", "present", "absent"),
+    ("no {} or {}", "absent", "absent"),
+    ("no {}/{}", "absent", "absent"),
+    ("neither {} nor {}", "absent", "absent"),
+    ("{} and {} absent", "absent", "absent"),
+    ("{} or {} not heard", "absent", "absent"),
+    ("no {}; {}", "absent", "present"),
+    ("No {}. {} heard.", "absent", "present"),
+    ("{} absent, {} present", "absent", "present"),
+    ("{}: yes, {}: no", "present", "absent"),
+    ("{} +, {} -", "present", "absent"),
+    ("{} and {}", "present", "present"),
+    ("{} with {}", "present", "present"),
+    ("no {}, {}", "absent", "uncertain"),
+    ("{} or {}", "uncertain", "uncertain"),
+    ("possible {} or {}", "uncertain", "uncertain"),
+    ("possible {}, no {}", "uncertain", "absent"),
+    ("{}? {}", "uncertain", "present"),
+    ("{} absent {} present", "absent", "present"),
+    ("no {} (but {})", "absent", "present"),
+    ("{} not heard but {} heard", "absent", "present"),
+)
+
+
+@pytest.mark.parametrize(("form", "first", "second"), PAIRS)
+def test_two_findings_in_one_line_keep_their_polarity(form: str, first: str, second: str) -> None:
+    for one in FINDINGS:
+        for other in FINDINGS:
+            if one == other:
+                continue
+            line = form.format(one, other)
+            found = [str(f.entry.presence) for f in reader().read(line).findings]
+            assert found == [first, second], line
