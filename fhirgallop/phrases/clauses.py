@@ -110,16 +110,12 @@ def _headless(segment: list[Item], found: list[Phrase]) -> None:
 
 
 def _attaches(segment: list[Item], head: Head) -> bool:
-    telling = [item for item in segment if not _silent(item)]
+    telling = [item for item in segment if not item.sense.silent]
     if not telling or any(item.unknown for item in telling):
         return False
     if all(item.sense.cues for item in telling):
         return True
     return all(_describes(item, head) for item in telling)
-
-
-def _silent(item: Item) -> bool:
-    return "idle" in item.sense.plain or "link" in item.sense.plain
 
 
 def _describes(item: Item, head: Head) -> bool:
@@ -138,7 +134,7 @@ def _joined(found: list[Phrase]) -> list[Phrase]:
     """A description at the start of a clause goes to the name that follows it."""
     if len(found) > 1 and found[0].head is None and found[1].head is not None:
         first, second = found[0], found[1]
-        if second.head and all(_silent(i) or _describes(i, second.head) for i in first.items):
+        if second.head and all(i.sense.silent or _describes(i, second.head) for i in first.items):
             second.items = [*first.items, *second.items]
             second.link = ""
             return found[1:]
@@ -150,7 +146,7 @@ def _carry_over(split: list[list[Phrase]]) -> None:
     last: Phrase | None = None
     for clause in split:
         if len(clause) == 1 and clause[0].head is None and last is not None and last.head is not None:
-            telling = [item for item in clause[0].items if not _silent(item)]
+            telling = [item for item in clause[0].items if not item.sense.silent]
             leads = bool(telling) and bool(telling[0].sense.plain.keys() & {"way", "where"})
             if leads and all(not i.sense.cues and _describes(i, last.head) for i in telling):
                 last.extra += clause[0].items
@@ -213,7 +209,7 @@ def _border(segment: list[Item], start: int, here: int, following: int) -> tuple
     for place in range(here + 1, following):
         if segment[place].sense.cues and all(use == "before" for use, _ in segment[place].sense.cues):
             return place, place, "next"
-    led_by_name = all(_silent(item) for item in segment[start:here])
+    led_by_name = all(item.sense.silent for item in segment[start:here])
     border = following
     while border - 1 > here and _leads(
         segment[border - 1], segment, here, following, led_by_name=led_by_name

@@ -204,7 +204,7 @@ def _unread(found: list[Item], cut: list[Token], why: dict[int, str]) -> tuple[U
 
     for item in found:
         outside = why.get(item.first, "")
-        idle = _silent(item) and outside not in OUTSIDE.values()
+        idle = item.sense.silent and not item.sense.heads and outside not in OUTSIDE.values()
         if item.used or cut[item.first].word in ",;.\n()":
             close()
             if item.used and item.unit_last > _last(item):
@@ -217,7 +217,3 @@ def _unread(found: list[Item], cut: list[Token], why: dict[int, str]) -> tuple[U
         reason = outside or reason
     close()
     return tuple(runs)
-
-
-def _silent(item: Item) -> bool:
-    return bool(item.sense.plain.keys() & {"idle", "link", "stop"}) and not item.sense.heads

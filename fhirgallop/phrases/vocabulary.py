@@ -36,6 +36,7 @@ _POLARITIES: Final = frozenset(
     }
 )
 _PLAIN_USES: Final = ("kind", "where", "way", "manoeuvre", "link", "stop", "idle", "grade", "not", "since")
+_SILENT: Final = frozenset({"idle", "link", "stop"})
 _CUES: Final = ("before", "after", "beside")
 # What an examination line does not state: complaints, and diagnoses made elsewhere.
 _ELSEWHERE: Final = ("symptom.", "lesion.", "device.", "patient.", "exam.")
@@ -54,12 +55,16 @@ class Head:
 
 @dataclass(frozen=True, slots=True)
 class Sense:
-    """Everything that one wording can mean."""
+    """Everything that one wording can mean; `silent` when it says nothing by itself."""
 
     heads: tuple[Head, ...] = ()
     values: tuple[Pair, ...] = ()
     plain: Mapping[str, str] = field(default_factory=dict)
     cues: tuple[Pair, ...] = ()
+    silent: bool = field(init=False, default=False)
+
+    def __post_init__(self) -> None:
+        object.__setattr__(self, "silent", not self.plain.keys().isdisjoint(_SILENT))
 
     def also(self, other: Sense) -> Sense:
         """Both senses of one wording."""
