@@ -16,6 +16,9 @@ _ROMAN: Final = {"i": 1, "ii": 2, "iii": 3, "iv": 4, "v": 5, "vi": 6}
 _SCALES: Final = {"6": 6, "vi": 6, "4": 4, "iv": 4}
 _COMPARATORS: Final = frozenset("<>≤≥")
 _UNKNOWN: Final = Sense()
+# `- S4`: an item of a list, or a minus? Where several lines begin so, an item; else it is in doubt.
+_BULLET: Final = Sense(plain={"idle": "idle"})
+_LEADING_DASH: Final = Sense(cues=(("before", "maybe"),))
 # `S3?`: a question mark that touches a word doubts that word.
 _AFTER: Final = Sense(cues=(("after", "maybe"),))
 _LONGEST_NUMBER: Final = 9
@@ -71,6 +74,8 @@ def items(text: str, cut: list[Token], vocabulary: Vocabulary) -> list[Item]:
         if best >= 0:
             if word == "?" and place and kept[place - 1].end == kept[place].start:
                 sense = _AFTER
+            elif word == "-" and _leads_line(kept, place):
+                sense = _BULLET if "\n- " in text else _LEADING_DASH
             found.append(Item(place, place + best, sense))
             place += best + 1
         else:
@@ -78,6 +83,12 @@ def items(text: str, cut: list[Token], vocabulary: Vocabulary) -> list[Item]:
             place += 1
     _strangers(found, kept, glued)
     return found
+
+
+def _leads_line(kept: list[Token], place: int) -> bool:
+    """A dash that begins a line and stands apart from its first word."""
+    first = place == 0 or kept[place - 1].word == "\n"
+    return first and place + 1 < len(kept) and kept[place + 1].start > kept[place].end
 
 
 def _longest(entries: Entries, kept: list[Token], place: int) -> tuple[int, Sense]:
