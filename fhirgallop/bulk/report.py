@@ -11,7 +11,7 @@ from collections.abc import Iterator, Sequence
 from dataclasses import dataclass
 from typing import Any, Final
 
-from fhirgallop.bulk.tally import Tally
+from fhirgallop.bulk.tally import OUTSIDE, Tally
 from fhirgallop.bulk.wish import Wish
 from fhirgallop.exam import catalogue
 from fhirgallop.exam.presence import Presence
@@ -22,10 +22,11 @@ Rows = tuple[tuple[Cell, ...], ...]
 
 _IMPLAUSIBLE: Final = ("exam-implausible-value", "exam-in-the-future", "exam-before-1900")
 _TIERS: Final = {
-    "U": "urgent phrase",
-    "T1": "asked at entry, may interrupt",
-    "T2": "in the margin",
-    "T3": "detail panel only",
+    "U": "U: urgent phrase",
+    "T1": "T1: asked at entry, may interrupt",
+    "T2": "T2: in the margin",
+    "T3": "T3: detail panel only",
+    OUTSIDE: "most rules are not for them",
 }
 _THOUSAND: Final = 1000
 
@@ -102,8 +103,8 @@ def report(tally: Tally, wish: Wish) -> Report:
 def _records(tally: Tally) -> Section:
     words = {
         "coded": "coded, checked and written",
-        "refused": "refused: an error in the record, see errors.csv",
-        "unreadable": "unreadable: no record could be made out, see errors.csv",
+        "refused": "refused (see errors.csv)",
+        "unreadable": "unreadable (see errors.csv)",
     }
     rows = [(text, tally.became[name,]) for name, text in words.items()]
     return Section("records", "Records", "", ("", "records"), (*rows, ("all", tally.records())), 1)
@@ -170,16 +171,17 @@ def _repeats(tally: Tally) -> Section:
 
 def _tiers(tally: Tally, wish: Wish) -> Section:
     reviewed = tally.reviewed[()]
+    each = wish.review_each
+    every = "Every coded examination" if each == 1 else f"One in {each} coded examinations"
     note = (
-        f"One coded examination in {wish.review_each} was held against the rules ({reviewed:,}); without the "
-        "patients' charts, so what only a chart settles stays open and is not counted; before repeats are "
-        "held back."
-        if wish.review_each
+        f"{every} was held against the rules ({reviewed:,}); without the patients' charts, so what only "
+        "a chart settles stays open and is not counted; before repeats are held back. That nothing is raised is "
+        "no reassurance."
+        if each
         else "No examination was held against the rules."
     )
     rows = tuple(
-        (f"{tier}: {words}", tally.tiers[tier,], _rate(tally.tiers[tier,], reviewed))
-        for tier, words in _TIERS.items()
+        (words, tally.tiers[tier,], _rate(tally.tiers[tier,], reviewed)) for tier, words in _TIERS.items()
     )
     columns = ("tier", "examinations", "per thousand")
     return Section("tiers", "What the rules would have raised, by tier", note, columns, rows, 2)

@@ -88,7 +88,7 @@ def _bars(section: Section) -> str:
     for place, (name, value) in enumerate(values):
         y = place * _ROW + 4
         long = (_WIDTH - _LEFT - 90) * value / largest
-        short = name if len(name) <= 44 else f"{name[:43]}\N{HORIZONTAL ELLIPSIS}"
+        short = name if len(name) <= 40 else f"{name[:39]}\N{HORIZONTAL ELLIPSIS}"
         figure = shown(int(value)) if value.is_integer() else shown(value)
         lines.append(
             f'<text x="{_LEFT - 8}" y="{y + 13}" text-anchor="end">{escape(short)}</text>'

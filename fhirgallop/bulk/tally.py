@@ -15,7 +15,7 @@ from fhirgallop.reasoning.review import Review
 MOST_KINDS: Final = 5_000
 OTHERS: Final = "(others)"
 UNKNOWN_YEAR: Final = "unknown"
-_RAISED: Final = ("U", "T1", "T2", "T3")
+OUTSIDE: Final = "outside"
 
 
 @dataclass
@@ -33,7 +33,8 @@ class Tally:
         repeats: examinations that came before, by whether they are the "same" or "differs".
         reviewed: examinations that were held against the rules.
         rules: (tier, rule) that spoke, once an examination.
-        tiers: examinations in which a rule of the tier spoke.
+        tiers: examinations in which a rule of the tier spoke; or of patients that most rules are not for (a
+            child, pregnancy).
     """
 
     became: Counter[tuple[str]] = field(default_factory=Counter)
@@ -79,6 +80,8 @@ class Tally:
         spoke = {(c.tier.value, c.rule.id) for c in (*review.raised, *review.panel)}
         self.rules.update(spoke)
         self.tiers.update({(tier,) for tier, _ in spoke})
+        if review.limits:
+            self.tiers[OUTSIDE,] += 1
 
     def merge(self, other: Self) -> None:
         """Takes in the counts of another part."""

@@ -54,6 +54,7 @@ def test_every_section_by_hand(wish: Wish, small: Path, backfill: Backfill) -> N
     assert table(out, "repeats")[0][1] == 1
     assert [row[0] for row in table(out, "tiers")] == [
         "U: urgent phrase", "T1: asked at entry, may interrupt", "T2: in the margin", "T3: detail panel only",
+        "most rules are not for them",
     ]  # fmt: skip
 
 
@@ -71,9 +72,17 @@ def test_an_examination_that_contradicts_itself_is_counted(
     wish: Wish, backfill: Backfill, tmp_path: Path
 ) -> None:
     source = tmp_path / "rounds.csv"
-    source.write_text("exam,pid,day,murmur,rate,s4\nE1,P1,2020-01-01,yes,70,yes\nE2,P2,2020-01-01,,,\n")
-    _, tally = backfill(wish, source)
+    rows = [
+        f"E{n},P{n},2020-01-01,yes,70,{s4},{rhythm}"
+        for n, (s4, rhythm) in enumerate([("yes", "AF"), ("no", "AF")])
+    ]
+    source.write_text("\n".join(["exam,pid,day,murmur,rate,s4,rhythm", *rows]))
+    line = b"  - finding: rhythm.diagnosis\n    field: rhythm\n    choice: {AF: atrial-fibrillation}\n"
+    out, tally = backfill(replace(wish, map_text=wish.map_text + line), source)
     assert tally.reviewed[()] == 2
+    raised = {rule: count for (_, rule), count in tally.rules.items()}
+    assert raised["s4.in-atrial-fibrillation"] == 1
+    assert next(row for row in table(out, "rules") if row[0] == "s4.in-atrial-fibrillation")[3] == 500.0
     _, none = backfill(replace(wish, review_each=0), source, name="none")
     assert none.reviewed[()] == 0
 
@@ -129,3 +138,16 @@ def test_hostile_names_do_not_grow_the_counts_without_end() -> None:
 def test_counts_come_back_as_they_were_written(wish: Wish, small: Path, backfill: Backfill) -> None:
     _, tally = backfill(wish, small)
     assert Tally.read(tally.as_dict()) == tally
+
+
+def test_patients_that_the_rules_are_not_for_are_told(
+    shared: Path, root: Path, wish: Wish, backfill: Backfill, tmp_path: Path
+) -> None:
+    """The first of that table are children (CirCor DigiScope 2022)."""
+    map_ = root / "examples" / "informatician" / "circor-2022.yaml"
+    text = (shared / "data" / "circor-2022" / "training_data.csv").read_bytes().splitlines(keepends=True)
+    source = tmp_path / "children.csv"
+    source.write_bytes(b"".join(text[:41]))
+    _, tally = backfill(replace(wish, map_text=map_.read_bytes()), source)
+    assert tally.reviewed[()] == 40
+    assert tally.tiers["outside",] == 40
