@@ -175,8 +175,8 @@ def _tiers(tally: Tally, wish: Wish) -> Section:
     every = "Every coded examination" if each == 1 else f"One in {each} coded examinations"
     note = (
         f"{every} was held against the rules ({reviewed:,}); without the patients' charts, so what only "
-        "a chart settles stays open and is not counted; before repeats are held back. That nothing is raised is "
-        "no reassurance."
+        "a chart settles stays open and is not counted; before repeats are held back. That nothing is raised "
+        "is no reassurance."
         if each
         else "No examination was held against the rules."
     )
