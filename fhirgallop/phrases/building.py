@@ -5,13 +5,14 @@ from __future__ import annotations
 from dataclasses import dataclass, replace
 from typing import Final
 
-from fhirgallop.codes import units
 from fhirgallop.exam.catalogue import Catalogue, FindingDefinition
 from fhirgallop.exam.checks import ALSO_OF_ABSENT
-from fhirgallop.exam.entry import Entry, Measure, Qualifier
+from fhirgallop.exam.entry import Entry, Qualifier
 from fhirgallop.exam.presence import Presence
+from fhirgallop.phrases import measures
 from fhirgallop.phrases.clauses import Phrase
 from fhirgallop.phrases.items import Item
+from fhirgallop.phrases.scan import Scan
 from fhirgallop.phrases.scope import strong
 from fhirgallop.phrases.vocabulary import Head, Vocabulary
 
@@ -23,11 +24,7 @@ PRESENCE: Final = {
     "not-examined": Presence.NOT_EXAMINED,
     "not-examinable": Presence.NOT_EXAMINABLE,
 }
-# Dimensions with one customary unit, which a line may leave out.
-_CUSTOMARY: Final = frozenset({"mm[Hg]", "/min", "%", "{ratio}", "{score}", "1"})
 _PRESSURES: Final = ("pressure.systolic", "pressure.diastolic")
-# `does not radiate to the axilla` says where not, which no qualifier can say.
-_NOWHERE: Final = "nowhere"
 _TIMED: Final = (("systolic", "systolic"), ("diastolic", "diastolic"))
 
 
@@ -115,14 +112,14 @@ class Builder:
             return (
                 Built([], "", "phrase-number-implausible") if len(quantities) == len(head.findings) else None
             )
-        measures = [(one, measure) for one in quantities if (measure := _measure(item, one))]
-        if not measures:
+        fitting = [(one, measure) for one in quantities if (measure := measures.measure(item, one))]
+        if not fitting:
             lone = len(quantities) == len(head.findings)
             if item.unit is None and item.number is not None and (lone or not self._other(phrase)):
                 return Built([], "", "phrase-unit-missing")
             return Built([], "", "phrase-number-implausible")
-        finding, measure = measures[0]
-        if not _plausible(measure, finding):
+        finding, measure = fitting[0]
+        if not measures.plausible(measure, finding):
             return Built([], "", "phrase-number-implausible")
         return self._measured(phrase, item, [Entry(finding.id, measure=measure)], [finding])
 
@@ -156,11 +153,11 @@ class Builder:
         for finding, value in zip(findings, item.fraction, strict=True):
             one = Item(item.first, item.last)
             one.number, one.unit = value, item.unit
-            parts.append(_measure(one, finding))
+            parts.append(measures.measure(one, finding))
         upper, lower = parts
         if upper is None or lower is None or upper.value <= lower.value:
             return Built([], "", "phrase-number-implausible")
-        if not (_plausible(upper, findings[0]) and _plausible(lower, findings[1])):
+        if not (measures.plausible(upper, findings[0]) and measures.plausible(lower, findings[1])):
             return Built([], "", "phrase-number-implausible")
         entries = [Entry(f.id, measure=m) for f, m in zip(findings, (upper, lower), strict=True)]
         return self._measured(phrase, item, entries, findings)
@@ -195,7 +192,7 @@ class Builder:
         if head.answers:
             answers[findings[0].id] = list(head.answers)
         qualifiers = [Qualifier(axis, value) for axis, value in head.qualifiers]
-        scan = _Scan(findings, answers, qualifiers)
+        scan = Scan(findings, answers, qualifiers)
         for item in (*phrase.items, *phrase.extra):
             if item is not phrase.anchor:
                 scan.item(item)
@@ -290,93 +287,6 @@ class Builder:
         return Built([], "")
 
 
-class _Scan:
-    """Reads the values beside a name from left to right."""
-
-    def __init__(
-        self, findings: list[FindingDefinition], answers: dict[str, list[str]], qualifiers: list[Qualifier]
-    ) -> None:
-        self._findings = findings
-        self._answers = answers
-        self._qualifiers = qualifiers
-        self._where: Item | None = None
-        self._way: Item | None = None
-        self._way_used = False
-
-    def item(self, item: Item) -> None:
-        """Takes one item, if one of the findings has a place for it."""
-        plain = item.sense.plain
-        if item.grade is not None:
-            if self._takes("grade"):
-                self._qualifiers.append(Qualifier("grade", grade=item.grade))
-                item.used = True
-            return
-        if "manoeuvre" in plain and self._way is not None:
-            self._response(item)
-            return
-        if "way" in plain:
-            self.end()
-            self._way, self._way_used, self._where = item, False, None
-            return
-        if "where" in plain:
-            self._where = item
-            return
-        if item.sense.values:
-            self._value(item)
-
-    def end(self) -> None:
-        """A way without a manoeuvre: `unchanged` says something by itself."""
-        way = self._way
-        self._way = None
-        if way is None or self._way_used or way.plain("way") != "unchanged" or not self._takes("change"):
-            return
-        self._qualifiers.append(Qualifier("change", "unchanged"))
-        way.used = True
-
-    def _response(self, item: Item) -> None:
-        assert self._way is not None  # noqa: S101 - item() asks first
-        way = self._way.plain("way")
-        kind = "movement" if way in ("earlier", "later") else "response"
-        axis = f"{kind}.{item.plain('manoeuvre')}"
-        if self._takes(axis):
-            self._qualifiers.append(Qualifier(axis, way))
-            item.used = self._way.used = self._way_used = True
-
-    def _value(self, item: Item) -> None:
-        where = self._where.plain("where") if self._where is not None else ""
-        for axis, value in item.sense.values:
-            if where and axis == where and self._takes(axis):
-                self._qualifiers.append(Qualifier(axis, value))
-                item.used = True
-                if self._where is not None:
-                    self._where.used = True
-                return
-        if where and not self._takes(where) and any(axis == where for axis, _ in item.sense.values):
-            return
-        if where == _NOWHERE and any(axis == "radiation" for axis, _ in item.sense.values):
-            return
-        if where:
-            self._where = None
-        for axis, value in item.sense.values:
-            owner = next((one for one in self._findings if one.answers == axis), None)
-            if owner is not None:
-                self._answers.setdefault(owner.id, []).append(value)
-                item.used = True
-                return
-        for axis, value in item.sense.values:
-            if self._is_plain(axis, value) and self._takes(axis):
-                self._qualifiers.append(Qualifier(axis, value))
-                item.used = True
-                return
-
-    def _is_plain(self, axis: str, value: str) -> bool:
-        """Radiation, the loudest place and a suspected lesion are only said after words that say so."""
-        return axis not in ("radiation", "loudest-site", "suspected-lesion") or value == "none"
-
-    def _takes(self, axis: str) -> bool:
-        return any(axis in one.qualifiers for one in self._findings)
-
-
 def _of_absent(head: Head, qualifiers: list[Qualifier]) -> list[Qualifier]:
     """`no ankle oedema` denies oedema there: what the wording implies is then not a detail."""
     if head.denied != "absent":
@@ -428,29 +338,6 @@ def _fitting(finding: FindingDefinition, qualifiers: list[Qualifier]) -> tuple[Q
 
 def _either(phrase: Phrase) -> bool:
     return any(item.plain("link") in ("or", "vs", "slash") for item in phrase.items)
-
-
-def _measure(item: Item, finding: FindingDefinition) -> Measure | None:
-    """The number in the finding's unit; None where the unit is another's, or is missing and not customary."""
-    target = units.table().by_code[finding.unit]
-    if item.number is None:
-        return None
-    if item.unit is None:
-        if finding.unit not in _CUSTOMARY:
-            return None
-        return Measure(item.number, finding.unit, item.sign, item.high)
-    if item.unit.dimension != target.dimension:
-        return None
-    high = units.convert(item.high, item.unit, target) if item.high is not None else None
-    original = f"{item.number} {item.unit.printed}" if item.unit != target else ""
-    return Measure(units.convert(item.number, item.unit, target), finding.unit, item.sign, high, original)
-
-
-def _plausible(measure: Measure, finding: FindingDefinition) -> bool:
-    top = measure.high if measure.high is not None else measure.value
-    return (finding.low is None or measure.value >= finding.low) and (
-        finding.high is None or top <= finding.high
-    )
 
 
 def _in_order(qualifiers: list[Qualifier]) -> tuple[Qualifier, ...]:
