@@ -53,7 +53,7 @@ def workers_of(process: subprocess.Popen[bytes]) -> list[int]:
 def test_killed_at_random_moments_gives_the_same_bytes(
     tmp_path: Path, table: Table, started: Started, content: Content
 ) -> None:
-    source, dice = table(100 * (KILLS + 3)), random.Random(11)
+    source, dice = table(300 * (KILLS + 3)), random.Random(11)
     assert started(source, tmp_path / "quiet").wait(PATIENCE) == 0
     killed = 0
     for number in range(KILLS):
