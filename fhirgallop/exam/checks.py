@@ -150,7 +150,7 @@ def vital_sign_without_its_number(exam: Exam, catalogue: Catalogue) -> Iterator[
 
 
 def implausible_value(exam: Exam, catalogue: Catalogue) -> Iterator[Issue]:
-    """A number outside what is plausible: flagged, and kept as it was entered."""
+    """A number outside what is plausible: kept as entered, and flagged; refused where it cannot be at all."""
     for entry in exam.entries:
         definition, measure = catalogue.findings[entry.finding], entry.measure
         if measure is None:
@@ -160,6 +160,9 @@ def implausible_value(exam: Exam, catalogue: Catalogue) -> Iterator[Issue]:
             yield _issue(
                 "error", "exam-range-reversed", f"{definition.label}: the range ends below its start.", entry
             )
+        elif definition.low is not None and lowest < 0 <= definition.low:
+            text = f"{definition.label} cannot be below zero; mend the number, or leave the box blank."
+            yield _issue("error", "exam-impossible-value", text, entry, code="value")
         elif (definition.low is not None and lowest < definition.low) or (
             definition.high is not None and highest > definition.high
         ):

@@ -28,7 +28,7 @@ log: Final = logging.getLogger("fhirgallop.service")
 
 STORAGE_FAILED: Final = Issue(
     "fatal", "transient", "storage-failed",
-    "The examination could not be stored, and nothing of it was kept; send it again later.",
+    "The database does not answer; nothing of this request was kept. Send it again later.",
 )  # fmt: skip
 AUDIT_FAILED: Final = Issue(
     "fatal", "transient", "audit-failed",

@@ -61,6 +61,7 @@ FAULTS = [
         ["exam-diastolic-above-systolic"],
     ),
     ((pressure("pressure.systolic", 1280),), ["exam-implausible-value"]),
+    ((pressure("pressure.systolic", -5),), ["exam-impossible-value"]),
     ((pressure("pressure.systolic", 120), pressure("pressure.systolic", 130)), ["exam-entered-twice"]),
     (
         (Entry("vital.heart-rate", measure=Measure(Decimal(70), "/min", high=Decimal(80))),),
