@@ -158,6 +158,16 @@ def test_what_cannot_be_brought_in_is_said_on_the_page(client: Any) -> None:
     assert client.get("/desk/drafts/none", headers=HTML).status_code == 404
 
 
+def test_a_line_of_text_is_tried_with_its_words_marked(client: Any) -> None:
+    sample = b"id;nr;when;heart\n1;11;2026-11-03T08:00:00Z;S4, no S3, purple <b>\n"
+    draft = drafted(client, ("a.csv", sample))
+    lines = "lines:\n  - field: heart\n    words: {language: en}\n"
+    change(client, draft, do="text", text=MAP[: MAP.index("lines:")] + lines)
+    page = client.get(f"{draft}?pane=try").text
+    assert "<u>S4</u>, <u>no S3</u>" in page
+    assert "<i>[purple &lt;b&gt;]</i>" in page
+
+
 def test_undo_and_redo_go_through_every_step(client: Any) -> None:
     draft = drafted(client)
     empty = text(client, draft)

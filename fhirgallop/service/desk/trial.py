@@ -18,6 +18,8 @@ from fhirgallop.mapping.template_map import TemplateMap
 from fhirgallop.mapping.wordings import words_of
 from fhirgallop.observations.editions import Edition
 from fhirgallop.outcome import Issue
+from fhirgallop.phrases import reader
+from fhirgallop.phrases.findings import ReadLine
 from fhirgallop.pipeline import process
 from fhirgallop.reasoning.rulebook import Rulebook
 
@@ -34,6 +36,14 @@ class Said:
 
 
 @dataclass(frozen=True, slots=True)
+class ReadWords:
+    """A box with a line of text, in parts: each with `found` (read), `left` (not read) or nothing."""
+
+    field: str
+    parts: tuple[tuple[str, str], ...]
+
+
+@dataclass(frozen=True, slots=True)
 class Tried:
     """What became of one record.
 
@@ -41,6 +51,7 @@ class Tried:
         fields: name and what it holds, in words; those without content too.
         said: the Observations; none where an issue is an error.
         issues: everything noticed.
+        lines: boxes whose words were read.
         unread: fields that no line read.
         unknown: values that no line knows.
         review: what the rules say of it, as JSON; None where there is no examination.
@@ -49,6 +60,7 @@ class Tried:
     fields: tuple[tuple[str, str], ...]
     said: tuple[Said, ...]
     issues: tuple[Issue, ...]
+    lines: tuple[ReadWords, ...]
     unread: tuple[str, ...]
     unknown: tuple[UnknownValue, ...]
     review: Mapping[str, Any] | None
@@ -70,7 +82,13 @@ def tried(
     if result.bundle is not None and result.exam is not None:
         review = opine(result.exam, None, now, rules=rules, policy=policy, full=False)[0]
     return Tried(
-        held(record), tuple(_said(result.bundle)), result.issues, result.unread, result.unknown, review
+        held(record),
+        tuple(_said(result.bundle)),
+        result.issues,
+        tuple(_read(record, template)),
+        result.unread,
+        result.unknown,
+        review,
     )
 
 
@@ -79,6 +97,30 @@ def held(record: LocalRecord) -> tuple[tuple[str, str], ...]:
     return tuple(
         (name, "; ".join(words_of(value) for value in field.values)) for name, field in record.fields.items()
     )
+
+
+def _read(record: LocalRecord, template: TemplateMap) -> Iterator[ReadWords]:
+    """Every box that the map reads as a line of text, with its words told apart."""
+    for line in template.lines:
+        field = record.fields.get(line.field)
+        for value in field.values if field and line.words else ():
+            read = reader(line.words.language).read(words_of(value)) if line.words else None
+            if read is not None and read.text.strip():
+                yield ReadWords(line.field, tuple(_parts(read)))
+
+
+def _parts(read: ReadLine) -> Iterator[tuple[str, str]]:
+    spans = [(one.start, one.end, "found") for one in read.findings]
+    spans += [(one.start, one.end, "left") for one in read.unread]
+    at = 0
+    for start, end, kind in sorted(spans):
+        if start > at:
+            yield read.text[at:start], ""
+        if end > at:
+            yield read.text[max(start, at) : end], kind
+        at = max(at, end)
+    if at < len(read.text):
+        yield read.text[at:], ""
 
 
 def _said(bundle: Mapping[str, Any] | None) -> Iterator[Said]:
