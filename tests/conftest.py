@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import logging
 import os
 import shutil
 import signal
@@ -29,6 +30,19 @@ class Done:
     code: int
     out: bytes
     err: str
+
+
+@pytest.fixture(autouse=True)
+def logging_as_before() -> Iterator[None]:
+    """What a test lets log, and where to, is its own affair."""
+    names = (None, "fhirgallop", "fhirgallop.service", "uvicorn", "uvicorn.error", "alembic")
+    before = [(logger, logger.level, logger.handlers[:]) for logger in map(logging.getLogger, names)]
+    yield
+    for logger, level, handlers in before:
+        logger.setLevel(level)
+        for handler in logger.handlers[:]:
+            if handler not in handlers and type(handler) is logging.StreamHandler:
+                logger.removeHandler(handler)
 
 
 @pytest.fixture(scope="session")

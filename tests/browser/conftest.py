@@ -86,7 +86,7 @@ def site(
             process.wait(30)
 
 
-@pytest.fixture(scope="session")
+@pytest.fixture(scope="module")  # its event loop must be gone before tests that run one of their own
 def chromium() -> Iterator[Browser]:
     """The browser."""
     if CHROMIUM is None:

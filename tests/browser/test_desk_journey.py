@@ -305,7 +305,9 @@ def test_the_same_with_the_keyboard_alone(visit: Any, site: Any) -> None:
     for words in ("Holmby ward, heart sheet", "holmby-keys"):
         page.keyboard.type(words)
         press(page, "Tab")
-    with page.expect_file_chooser() as chooser:
+    assert page.evaluate("document.activeElement.type") == "file"
+    page.wait_for_load_state("networkidle")  # a browser that is still busy opens no file dialogue
+    with page.expect_file_chooser(timeout=90_000) as chooser:
         press(page, "Space")
     chooser.value.set_files(FORM)
     tab_to(page, "#address")

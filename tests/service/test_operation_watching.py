@@ -213,6 +213,7 @@ def test_figures_are_for_operators_and_a_caller_is_logged_by_a_digest(
         assert client.get("/metrics").status_code == 401
         for path in ("/health", "/ready"):
             assert client.get(path).status_code == 200
+        caplog.clear()
         with caplog.at_level(logging.INFO, "fhirgallop.service"):
             told = client.get("/metrics", headers={"Authorization": f"Bearer {token}"})
         assert told.status_code == 200
