@@ -3,20 +3,12 @@
 from __future__ import annotations
 
 from collections.abc import Iterable
-from typing import Final, Literal
+from typing import Literal
 
 from fhirgallop.drawing.cycle import HeartCycle, Strip, value_of
 from fhirgallop.exam import catalogue
 from fhirgallop.exam.entry import Entry
 from fhirgallop.exam.presence import Presence
-
-_SAID: Final = {
-    Presence.PRESENT: "present",
-    Presence.ABSENT: "absent",
-    Presence.UNCERTAIN: "uncertain",
-    Presence.NOT_EXAMINED: "not examined",
-    Presence.NOT_EXAMINABLE: "could not be examined",
-}
 
 
 def description(cycle: HeartCycle, only: Literal["", "jvp"] = "") -> list[str]:
@@ -58,7 +50,7 @@ def _strip(strip: Strip) -> Iterable[str]:
             continue
         name = findings[beat.finding].label if beat.finding in findings else beat.label
         remark = f" ({beat.remark})" if beat.remark else ""
-        state = "absent" if not beat.height else _SAID[beat.presence]
+        state = "absent" if not beat.height else beat.presence.in_words
         parts.append(f"{name} {state}{remark}")
     for noise in strip.noises:
         words = [noise.remark, noise.shape and f"shape {noise.shape}", noise.pitch and f"{noise.pitch} pitch"]
@@ -66,7 +58,7 @@ def _strip(strip: Strip) -> Iterable[str]:
         placed = noise.spans or noise.presence is not Presence.PRESENT
         place = "" if placed else ", place in the cycle not stated"
         label = findings[noise.finding].label
-        parts.append(f"{label} {_SAID[noise.presence]}{f' ({said})' if said else ''}{place}")
+        parts.append(f"{label} {noise.presence.in_words}{f' ({said})' if said else ''}{place}")
     if parts:
         yield f"{site_name(strip.site)[0]}: {'; '.join(parts)}."
 
@@ -80,6 +72,6 @@ def _entry(entry: Entry) -> str:
         values = known.axes[finding.answers].values
         said = ", ".join(values[answer].label.lower() for answer in entry.answers)
     else:
-        said = _SAID[entry.presence]
+        said = entry.presence.in_words
     posture = known.axes["posture"].values.get(value_of(entry, "posture"))
     return f"{finding.label}: {said}{f', {posture.label.lower()}' if posture else ''}"

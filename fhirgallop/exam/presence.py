@@ -18,3 +18,8 @@ class Presence(StrEnum):
     def looked_for(self) -> bool:
         """True when the examiner looked and came to a view."""
         return self in (Presence.PRESENT, Presence.ABSENT, Presence.UNCERTAIN)
+
+    @property
+    def in_words(self) -> str:
+        """As it is said to a person, within a sentence."""
+        return "could not be examined" if self is Presence.NOT_EXAMINABLE else self.value.replace("-", " ")

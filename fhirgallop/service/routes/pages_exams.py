@@ -29,7 +29,6 @@ from fhirgallop.service.views.examination import Examination, counted, read_exam
 from fhirgallop.service.views.looking_up import look_up
 from fhirgallop.service.views.record_system import RecordSystem
 from fhirgallop.service.views.remarks import remarks
-from fhirgallop.service.views.wording import SAID
 from fhirgallop.storage.exam_search import ExamSearch
 from fhirgallop.storage.submissions import Submission
 
@@ -188,7 +187,6 @@ def _page(
         versions=versions,
         exam=opened.exam,
         counts=counted(opened.exam.parts),
-        said=SAID,
         Presence=Presence,
         considered=opened.considered,
         chart=opened.chart,

@@ -26,15 +26,6 @@ SECTIONS: Final[Mapping[str, str]] = MappingProxyType(
         "haemodynamic": "Measurements handed in with the examination",
     }
 )
-SAID: Final[Mapping[Presence, str]] = MappingProxyType(
-    {
-        Presence.PRESENT: "present",
-        Presence.ABSENT: "absent",
-        Presence.UNCERTAIN: "uncertain",
-        Presence.NOT_EXAMINED: "not examined",
-        Presence.NOT_EXAMINABLE: "could not be examined",
-    }
-)
 
 
 def said(entry: Entry) -> str:
@@ -46,7 +37,7 @@ def said(entry: Entry) -> str:
             return ", ".join(words.answer(entry.finding, answer) for answer in entry.answers)
         if entry.text:
             return entry.text
-    return SAID[entry.presence]
+    return entry.presence.in_words
 
 
 def properties(entry: Entry) -> tuple[str, ...]:
