@@ -7,7 +7,7 @@ from typing import TYPE_CHECKING, Annotated
 
 import typer
 
-from fhirgallop.cli.shared import moment, one_exam, refuse, whole_file
+from fhirgallop.cli.shared import chart_of, moment, one_exam, whole_file
 
 if TYPE_CHECKING:
     from fhirgallop.exam.context import Context
@@ -43,9 +43,5 @@ def command(
 
 def _context(chart: Path, exam: Exam) -> Context:
     from fhirgallop.chart.read import read_chart  # noqa: PLC0415
-    from fhirgallop.codes import fhirjson  # noqa: PLC0415
 
-    value, issues = fhirjson.read(chart.read_bytes(), source=str(chart))
-    if value is None:
-        refuse(issues)
-    return read_chart(value, exam, moment(None, "--now")).context
+    return read_chart(chart_of(chart), exam, moment(None, "--now")).context

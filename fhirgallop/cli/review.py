@@ -8,7 +8,7 @@ from typing import TYPE_CHECKING, Annotated, Any
 
 import typer
 
-from fhirgallop.cli.shared import Exit, complain, moment, one_exam, refuse
+from fhirgallop.cli.shared import Exit, chart_of, complain, moment, one_exam
 
 if TYPE_CHECKING:
     from fhirgallop.outcome import Issue
@@ -52,10 +52,7 @@ def command(  # noqa: PLR0913, PLR0917 - one argument an option
     book = _site_rules(rules) if rules else rulebook.load()
     exam = one_exam(record, map_)
     tables = _site_codes(codes) if codes else None
-    value, issues = fhirjson.read(chart.read_bytes(), source=str(chart))
-    if value is None:
-        refuse(issues)
-    read = read_chart(value, exam, at, base=server, tables=tables)
+    read = read_chart(chart_of(chart), exam, at, base=server, tables=tables)
     found = review(exam, read.context, rules=book)
     encounter = exam.encounter.value if exam.encounter else exam.identifier
     decision = decide(

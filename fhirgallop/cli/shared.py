@@ -125,6 +125,16 @@ def one_exam(record: Path, map_: Path) -> Exam:
     return result.exam
 
 
+def chart_of(path: Path) -> Any:
+    """The chart in a file, as JSON; what of it cannot be used is told by whoever reads it."""
+    from fhirgallop.codes import fhirjson  # noqa: PLC0415 - heavy; --help stays quick
+
+    value, issues = fhirjson.read(path.read_bytes(), source=str(path))
+    if value is None:
+        refuse(issues)
+    return value
+
+
 def refuse(issues: Iterable[Issue]) -> NoReturn:
     """Tells the issues and ends the command."""
     for issue in issues:
